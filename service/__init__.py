@@ -1,0 +1,1 @@
+"""Sequential probability ratio tests as a service: post observations, learn whether sampling may stop."""

@@ -1,0 +1,1 @@
+"""What a sequential test is: plans, observations, states, decisions. Pure; errors know nothing of HTTP."""

@@ -1,0 +1,47 @@
+"""
+The plan: what is promised before the first datum. Immutable, compared by its fingerprint.
+"""
+
+import hashlib
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from datetime import datetime
+from functools import lru_cache
+from typing import Any
+
+
+@dataclass(frozen=True)
+class Plan:
+    """
+    A stored plan.
+
+    `document` is its content in canonical JSON (see `canonical`), the name left out; `fingerprint` its SHA-256.
+    """
+
+    name: str
+    document: str
+    fingerprint: str
+    created_at: datetime
+    created_by: str
+
+    @property
+    def content(self) -> Mapping[str, Any]:
+        """The content as decoded JSON; treat it as read-only."""
+        return _decoded(self.document)
+
+
+def canonical(content: Mapping[str, Any]) -> str:
+    """The one JSON text that stands for this content: keys sorted, no spaces, numbers as Python prints them."""
+    return json.dumps(content, sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
+
+
+def fingerprint_of(document: str) -> str:
+    """SHA-256 of a canonical document, hexadecimal."""
+    return hashlib.sha256(document.encode()).hexdigest()
+
+
+@lru_cache(maxsize=1024)
+def _decoded(document: str) -> Mapping[str, Any]:
+    content: Mapping[str, Any] = json.loads(document)
+    return content

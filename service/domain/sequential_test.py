@@ -1,0 +1,73 @@
+"""One sequential test of one subject under one plan, and one entry of its log."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from datetime import datetime
+from enum import StrEnum
+
+from service.domain.state import State
+
+
+class SubjectKind(StrEnum):
+    """What may be tested."""
+
+    LOT = "lot"
+    EXPERIMENT = "experiment"
+
+
+class Status(StrEnum):
+    """Open tests take observations; a closed one takes none."""
+
+    OPEN = "open"
+    CLOSED = "closed"
+
+
+@dataclass(frozen=True)
+class Subject:
+    """A lot or an experiment, by name."""
+
+    kind: SubjectKind
+    name: str
+
+
+@dataclass(frozen=True)
+class SequentialTest:
+    """
+    A registered test and where it stands. `version` counts the writes to it, registration being the first.
+
+    The plan is named, not held: plans are immutable and shared.
+    """
+
+    key: str
+    plan: str
+    subject: Subject
+    labels: Mapping[str, str]
+    status: Status
+    version: int
+    registered_at: datetime
+    registered_by: str
+    updated_at: datetime
+    state: State
+
+
+@dataclass(frozen=True)
+class Submission:
+    """
+    One row of the log: what one POST brought, as received, and the test right after it.
+
+    Attributes:
+        body: The JSON text as posted.
+        body_digest: SHA-256 of the posted bytes, hexadecimal.
+        version: The version of the test after this submission.
+    """
+
+    test: str
+    first_sequence: int
+    last_sequence: int
+    body: str
+    body_digest: str
+    received_at: datetime
+    actor: str
+    idempotency_key: str | None
+    version: int
+    state: State
