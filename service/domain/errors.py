@@ -1,0 +1,188 @@
+"""
+What can go wrong, without a word of HTTP.
+
+    DomainError
+    ├── Invalid                  cannot be right: carries faults, each with a JSON pointer
+    │   ├── InvalidPlan
+    │   ├── InvalidTest
+    │   ├── InvalidObservations
+    │   ├── InvalidKey
+    │   └── IdempotencyKeyReused
+    ├── Unknown                  there is no such thing
+    │   ├── UnknownPlan, UnknownTest, UnknownKey
+    ├── Conflict                 not now, or not again
+    │   ├── PlanDiffers, TestDiffers, KeyNameTaken
+    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
+    ├── VersionMoved             the state is no longer the one the caller saw
+    └── Unavailable              try again later: carries when
+        ├── QueueFull, ShuttingDown, StorageFailed
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True)
+class Fault:
+    """One thing wrong: where (a JSON pointer into the body), and the rule with the value received."""
+
+    pointer: str
+    detail: str
+
+
+class DomainError(Exception):
+    """Something the caller can be told; the text is for people."""
+
+
+class Invalid(DomainError):
+    """The request cannot be right, now or later."""
+
+    def __init__(self, detail: str, faults: Sequence[Fault] = ()) -> None:
+        super().__init__(detail)
+        self.faults = tuple(faults)
+
+
+class InvalidPlan(Invalid):
+    """The plan contradicts itself or the theory."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The plan cannot be right; see errors.", faults)
+
+
+class InvalidTest(Invalid):
+    """The registration of a test cannot be right."""
+
+
+class InvalidObservations(Invalid):
+    """At least one observation cannot be right; none of the submission is stored."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The submission is refused as a whole and nothing of it is stored; see errors.", faults)
+
+
+class InvalidKey(Invalid):
+    """A key cannot be made as asked."""
+
+
+class IdempotencyKeyReused(Invalid):
+    """The idempotency key belongs to another submission of this test."""
+
+    def __init__(self, key: str, reason: str) -> None:
+        super().__init__(f"The idempotency key {key!r} {reason}; give each submission a key of its own.")
+
+
+class Unknown(DomainError):
+    """There is no such thing."""
+
+    thing = "thing"
+
+    def __init__(self, name: str) -> None:
+        super().__init__(f"There is no {self.thing} {name!r}.")
+        self.name = name
+
+
+class UnknownPlan(Unknown):
+    """No plan of this name."""
+
+    thing = "plan"
+
+
+class UnknownTest(Unknown):
+    """No test of this key."""
+
+    thing = "test"
+
+
+class UnknownKey(Unknown):
+    """No valid access key of this name."""
+
+    thing = "access key"
+
+
+class Conflict(DomainError):
+    """The request collides with what is stored."""
+
+
+class PlanDiffers(Conflict):
+    """A plan of this name exists with other content; plans never change."""
+
+    def __init__(self, name: str) -> None:
+        super().__init__(f"The plan {name!r} exists with other content, and plans never change; choose another name.")
+
+
+class TestDiffers(Conflict):
+    """A test of this key exists with another plan, subject or labels."""
+
+    __test__ = False
+
+    def __init__(self, key: str) -> None:
+        super().__init__(f"The test {key!r} exists with another plan, subject or labels; choose another key.")
+
+
+class KeyNameTaken(Conflict):
+    """A valid access key carries this name."""
+
+    def __init__(self, name: str) -> None:
+        super().__init__(f"A valid access key is already named {name!r}; revoke it first or choose another name.")
+
+
+class RepeatedUnits(Conflict):
+    """Units that this test has counted already, or that stand twice in the submission."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("A unit may be counted once in a test; nothing of the submission is stored; see errors.")
+        self.faults = tuple(faults)
+
+
+class TestIsClosed(Conflict):
+    """The test takes no further observations."""
+
+    __test__ = False
+
+    def __init__(self, key: str) -> None:
+        super().__init__(f"The test {key!r} is closed and takes no further observations.")
+
+
+class SubmissionInProgress(Conflict):
+    """The first submission with this idempotency key has not been answered yet."""
+
+    def __init__(self, key: str) -> None:
+        super().__init__(f"A submission with the idempotency key {key!r} is still in progress; try again shortly.")
+
+
+class VersionMoved(DomainError):
+    """The state is no longer the one the caller saw."""
+
+    def __init__(self, expected: str, current: int) -> None:
+        super().__init__(f"The test has moved on: If-Match gave {expected}, its version is now {current}.")
+
+
+class Unavailable(DomainError):
+    """Not at this moment; nothing was stored."""
+
+    retry_after_seconds = 1
+
+
+class QueueFull(Unavailable):
+    """More is waiting to be written than the service will hold."""
+
+    def __init__(self) -> None:
+        super().__init__("Too many submissions are waiting; nothing was stored, try again shortly.")
+
+
+class ShuttingDown(Unavailable):
+    """The service is stopping; it finishes what it accepted and takes nothing new."""
+
+    retry_after_seconds = 5
+
+    def __init__(self) -> None:
+        super().__init__("The service is stopping; nothing was stored, try again shortly.")
+
+
+class StorageFailed(Unavailable):
+    """The database refused; nothing was stored."""
+
+    retry_after_seconds = 5
+
+    def __init__(self) -> None:
+        super().__init__("The database did not take the write; nothing was stored, try again shortly.")

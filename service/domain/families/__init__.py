@@ -1,0 +1,11 @@
+"""The observation models: what a plan's numbers mean, what an observation may be, and the evidence in it."""
+
+from service.domain.families.base import Family, Increments
+from service.domain.families.bernoulli import Bernoulli
+from service.domain.families.exponential import Exponential
+from service.domain.families.normal import Normal
+from service.domain.families.poisson import Poisson
+
+FAMILIES: dict[str, Family] = {family.name: family for family in (Bernoulli(), Poisson(), Exponential(), Normal())}
+
+__all__ = ["FAMILIES", "Family", "Increments"]

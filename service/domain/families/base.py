@@ -1,0 +1,193 @@
+"""What every family answers, and the checks that they share."""
+
+import math
+from abc import ABC, abstractmethod
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any, ClassVar
+
+import numpy as np
+from numpy.typing import NDArray
+
+from service.domain.errors import Fault, InvalidObservations
+from service.sequential.double import FloatArray
+from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.region import Span
+
+# Magnitudes beyond these say that a field was misread; they also keep every product far from overflow.
+LARGEST_REAL = 1e100
+LARGEST_COUNT = 1_000_000_000
+
+MAXIMAL_FAULTS = 20
+
+Document = Mapping[str, Any]
+
+
+@dataclass(frozen=True)
+class Increments:
+    """
+    One submission in the plan's own terms; arrays of shape (observations,).
+
+    Attributes:
+        units: What each observation adds to the sample number.
+        progress: What it adds to the axis of the region: units or exposure.
+        total: What it adds to the sufficient statistic.
+    """
+
+    units: NDArray[np.int64]
+    progress: FloatArray
+    total: FloatArray
+
+
+@dataclass(frozen=True)
+class Column:
+    """One field of all observations of a submission, with the pointers to name an element by."""
+
+    values: FloatArray
+    pointer: Callable[[int], str]
+
+    def require(self, holds: NDArray[np.bool_], rule: str) -> list[Fault]:
+        """A fault for each element that breaks the rule, the first few of them."""
+        broken = np.flatnonzero(~holds)[:MAXIMAL_FAULTS]
+        return [Fault(self.pointer(int(i)), f"{rule}; received {_plain(self.values[i])}") for i in broken]
+
+
+class Family(ABC):
+    """
+    An observation model.
+
+    Attributes:
+        name: As a plan names it.
+        parameter: What h0 and h1 are.
+        value_field: The field of an observation that carries its result.
+        optional: Fields that an observation may carry beside it, with the value taken where one is absent.
+        required: Fields that an observation object must carry beside it.
+        in_values: What the required fields are for a bare number in `values`.
+        known: Names of what the family needs to know beforehand.
+        span: The totals it can show.
+        has_exposure: The region runs over exposure rather than units.
+        is_watched_in_time: The region is watched between reports, not only at their ends.
+    """
+
+    name: ClassVar[str]
+    parameter: ClassVar[str]
+    value_field: ClassVar[str] = "value"
+    optional: ClassVar[Mapping[str, float]] = {}
+    required: ClassVar[tuple[str, ...]] = ()
+    in_values: ClassVar[Mapping[str, float]] = {}
+    known: ClassVar[tuple[str, ...]] = ()
+    span: ClassVar[Span]
+    has_exposure: ClassVar[bool] = False
+    is_watched_in_time: ClassVar[bool] = False
+
+    @abstractmethod
+    def hypothesis_rule(self, value: float) -> str | None:
+        """The rule that a hypothesis breaks, or None where it lies strictly inside the family's range."""
+
+    @abstractmethod
+    def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
+        """
+        The evidence for h1 against h0.
+
+        Raises:
+            OutOfRange: Floating point cannot tell the hypotheses apart.
+        """
+
+    @abstractmethod
+    def increments(self, columns: Mapping[str, Column]) -> Increments:
+        """
+        Check the columns of a submission and turn them into increments.
+
+        Raises:
+            InvalidObservations: With a fault for each offending element.
+        """
+
+    @property
+    def fields(self) -> tuple[str, ...]:
+        """The numeric fields of an observation, its result first."""
+        return (self.value_field, *self.required, *self.optional)
+
+    def read(self, document: Document) -> Increments:
+        """
+        Decode a submission as posted: `{"values": [...]}` or `{"observations": [{...}]}`.
+
+        Raises:
+            InvalidObservations: With a fault for each offending element.
+        """
+        if "values" in document:
+            return self.increments(self._columns_of_values(document["values"]))
+        return self.increments(self._columns_of_objects(document["observations"]))
+
+    def _columns_of_values(self, values: Sequence[float]) -> dict[str, Column]:
+        count = len(values)
+        columns = {self.value_field: Column(_array(values), lambda i: f"/values/{i}")}
+        for field, value in {**self.optional, **self.in_values}.items():
+            columns[field] = Column(np.full(count, value), lambda i: f"/values/{i}")
+        return columns
+
+    def _columns_of_objects(self, observations: Sequence[Document]) -> dict[str, Column]:
+        self._check_fields(observations)
+        return {
+            field: Column(
+                _array([o.get(field, self.optional.get(field)) for o in observations]),
+                lambda i, field=field: f"/observations/{i}/{field}",  # type: ignore[misc]
+            )
+            for field in self.fields
+        }
+
+    def _check_fields(self, observations: Sequence[Document]) -> None:
+        """Every required field is there, and none that means nothing in this family."""
+        needed = {self.value_field, *self.required}
+        allowed = {*self.fields, "unit", "observed_at"}
+        faults = []
+        for i, observation in enumerate(observations):
+            if needed <= observation.keys() <= allowed:
+                continue
+            for field in sorted(needed - observation.keys()):
+                faults.append(Fault(f"/observations/{i}/{field}", f"is required for {self.name}"))
+            for field in sorted(observation.keys() - allowed):
+                faults.append(Fault(f"/observations/{i}/{field}", f"means nothing for {self.name}"))
+        if faults:
+            raise InvalidObservations(faults[:MAXIMAL_FAULTS])
+
+
+def whole_numbers(column: Column, smallest: int) -> list[Fault]:
+    """Faults where a column is not a whole number from `smallest` to the largest count."""
+    values = column.values
+    holds = (values == np.floor(values)) & (values >= smallest) & (values <= LARGEST_COUNT)
+    return column.require(holds, f"must be a whole number from {smallest} to {LARGEST_COUNT}")
+
+
+def reals(column: Column, rule: str, holds: NDArray[np.bool_]) -> list[Fault]:
+    """Faults where a column breaks the rule or is too large in magnitude."""
+    return column.require(holds & (np.abs(column.values) <= LARGEST_REAL), f"{rule}, at most 1e100 in magnitude")
+
+
+def refuse(faults: list[Fault]) -> None:
+    """Raise when there is a fault."""
+    if faults:
+        raise InvalidObservations(faults[:MAXIMAL_FAULTS])
+
+
+def positive_rule(value: float) -> str | None:
+    """For parameters on the positive half-line."""
+    return None if 1.0 / LARGEST_REAL <= value <= LARGEST_REAL else "must be above 0 (from 1e-100 to 1e100)"
+
+
+def _array(values: Sequence[float]) -> FloatArray:
+    try:
+        return np.asarray(values, dtype=np.float64)
+    except OverflowError:  # a whole number of more than 308 digits
+        return np.asarray([_float(value) for value in values])
+
+
+def _float(value: float) -> float:
+    try:
+        return float(value)
+    except OverflowError:
+        return math.inf
+
+
+def _plain(value: np.float64) -> str:
+    number = float(value)
+    return str(int(number)) if number.is_integer() and abs(number) < 1e15 else repr(number)  # noqa: PLR2004

@@ -1,0 +1,38 @@
+"""Pass/fail units: the proportion nonconforming, or a success rate."""
+
+from collections.abc import Mapping
+from typing import ClassVar
+
+import numpy as np
+
+from service.domain.families.base import Column, Family, Increments, refuse, whole_numbers
+from service.sequential import likelihood
+from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.region import PASS_FAIL, Span
+
+
+class Bernoulli(Family):
+    """One observation is 0 or 1, or a group: `value` of `size` units; a group is looked at only at its end."""
+
+    name: ClassVar[str] = "bernoulli"
+    parameter: ClassVar[str] = "proportion nonconforming"
+    optional: ClassVar[Mapping[str, float]] = {"size": 1.0}
+    span: ClassVar[Span] = PASS_FAIL
+
+    def hypothesis_rule(self, value: float) -> str | None:
+        """See `Family`."""
+        return None if 0.0 < value < 1.0 else "must lie strictly between 0 and 1"
+
+    def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
+        """See `Family`."""
+        return likelihood.bernoulli(h0, h1)
+
+    def increments(self, columns: Mapping[str, Column]) -> Increments:
+        """See `Family`."""
+        value, size = columns["value"], columns["size"]
+        refuse(whole_numbers(size, 1))
+        if np.all(size.values == 1.0):
+            refuse(value.require((value.values == 0.0) | (value.values == 1.0), "must be 0 or 1"))
+        refuse(whole_numbers(value, 0))
+        refuse(value.require(value.values <= size.values, "must not exceed the size of its group"))
+        return Increments(size.values.astype(np.int64), size.values, value.values)

@@ -1,0 +1,42 @@
+"""Lives with a constant failure rate, watched in continuous time."""
+
+from collections.abc import Mapping
+from typing import ClassVar
+
+import numpy as np
+
+from service.domain.families.base import Column, Family, Increments, positive_rule, reals, refuse
+from service.sequential import likelihood
+from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.region import COUNTS, Span
+
+
+class Exponential(Family):
+    """
+    One observation is the unit-time since the report before it, and whether a failure ended it.
+
+    A unit taken off test unfailed is a suspension: `"failed": false`. A bare number is a time to failure.
+    """
+
+    name: ClassVar[str] = "exponential"
+    parameter: ClassVar[str] = "mean life"
+    value_field: ClassVar[str] = "time"
+    required: ClassVar[tuple[str, ...]] = ("failed",)
+    in_values: ClassVar[Mapping[str, float]] = {"failed": 1.0}
+    span: ClassVar[Span] = COUNTS
+    has_exposure: ClassVar[bool] = True
+    is_watched_in_time: ClassVar[bool] = True
+
+    def hypothesis_rule(self, value: float) -> str | None:
+        """See `Family`."""
+        return positive_rule(value)
+
+    def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
+        """See `Family`."""
+        return likelihood.exponential(h0, h1)
+
+    def increments(self, columns: Mapping[str, Column]) -> Increments:
+        """See `Family`."""
+        time, failed = columns["time"], columns["failed"]
+        refuse(reals(time, "must be 0 or above", time.values >= 0.0))
+        return Increments(np.ones(len(time.values), np.int64), time.values, failed.values)

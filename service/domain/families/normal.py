@@ -1,0 +1,35 @@
+"""Measurements with a known standard deviation."""
+
+from collections.abc import Mapping
+from typing import ClassVar
+
+import numpy as np
+
+from service.domain.families.base import LARGEST_REAL, Column, Family, Increments, reals, refuse
+from service.sequential import likelihood
+from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.region import REALS, Span
+
+
+class Normal(Family):
+    """One observation is one measurement."""
+
+    name: ClassVar[str] = "normal"
+    parameter: ClassVar[str] = "mean"
+    known: ClassVar[tuple[str, ...]] = ("sigma",)
+    span: ClassVar[Span] = REALS
+
+    def hypothesis_rule(self, value: float) -> str | None:
+        """See `Family`."""
+        return None if abs(value) <= LARGEST_REAL else "must be at most 1e100 in magnitude"
+
+    def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
+        """See `Family`."""
+        return likelihood.normal(h0, h1, known["sigma"])
+
+    def increments(self, columns: Mapping[str, Column]) -> Increments:
+        """See `Family`."""
+        value = columns["value"]
+        refuse(reals(value, "must be a number", np.isfinite(value.values)))
+        count = len(value.values)
+        return Increments(np.ones(count, np.int64), np.ones(count), value.values)

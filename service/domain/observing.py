@@ -1,0 +1,129 @@
+"""
+The one heart: observations in, the next state out. Pure.
+
+The same function serves a live submission, a rehearsal of historical data and an audit of the log.
+"""
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from datetime import datetime
+from typing import Any
+
+import numpy as np
+
+from service.domain.errors import Fault, InvalidObservations
+from service.domain.families import Increments
+from service.domain.procedure import Procedure
+from service.domain.state import Cause, Decided, Decision, State, Sum
+from service.sequential.double import Double, FloatArray, running_sum
+from service.sequential.walk import Exit, first_exit_at_reports, first_exit_in_time
+
+# Whole numbers up to here are exact in a double.
+LARGEST_TOTAL = 2.0**53
+
+
+@dataclass(frozen=True)
+class Walk:
+    """The walk of one submission: running progress and total after each of its observations."""
+
+    progress: Double
+    total: Double
+
+
+def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at: datetime) -> State:
+    """
+    Take the observations of one submission one by one, and stop counting where they decide.
+
+    Args:
+        procedure: The plan, compiled.
+        state: The state before.
+        document: The submission as posted, `{"values": [...]}` or `{"observations": [{...}]}`, of sound form.
+        at: When it was received; it becomes the time of a decision that falls in it.
+
+    Raises:
+        InvalidObservations: An observation cannot be right; the fault names it.
+    """
+    increments = procedure.family.read(document)
+    count = len(increments.total)
+    if state.is_decided:
+        return replace(state, sequence=state.sequence + count, overrun=state.overrun + count)
+    walk = walk_from(procedure, state, increments)
+    exit_ = first_exit(procedure, walk, increments)
+    if exit_ is None:
+        last = count - 1
+        moved = _moved(procedure, state, increments, last, walk.progress.at(last), walk.total.at(last))
+        return replace(moved, sequence=state.sequence + count)
+    moved = _moved(procedure, state, increments, exit_.index, exit_.progress, exit_.total)
+    return replace(
+        moved,
+        sequence=state.sequence + count,
+        decision=exit_.decision,
+        decided=_decided(procedure, state, moved, exit_, at),
+        overrun=count - exit_.index - 1,
+    )
+
+
+def walk_from(procedure: Procedure, state: State, increments: Increments) -> Walk:
+    """
+    Running progress and total from where the state stands, as if nothing could stop the walk.
+
+    Raises:
+        InvalidObservations: The sums grow past what can be kept exactly.
+    """
+    start = state.exposure if procedure.family.has_exposure else Sum(float(state.sample_number))
+    progress = running_sum(_double(start), increments.progress)
+    total = running_sum(_double(state.total), increments.total)
+    _check_size(procedure, progress.value, total.value)
+    return Walk(progress, total)
+
+
+def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit | None:
+    """Where the walk leaves the region, watched as the family is."""
+    if procedure.family.is_watched_in_time:
+        return first_exit_in_time(procedure.region, walk.progress, walk.total, increments.total)
+    return first_exit_at_reports(procedure.region, walk.progress, walk.total)
+
+
+def _moved(
+    procedure: Procedure, state: State, increments: Increments, index: int, progress: Double, total: Double
+) -> State:
+    """The evidence after the observation at `index`, the walk standing at this progress and total."""
+    evidence = float(procedure.ratio.log(progress, total))
+    if not math.isfinite(evidence):
+        raise InvalidObservations([Fault("", "the sums are too large for the plan's likelihood ratio")])
+    return replace(
+        state,
+        sample_number=state.sample_number + int(np.sum(increments.units[: index + 1])),
+        exposure=_sum(progress) if procedure.family.has_exposure else state.exposure,
+        total=_sum(total),
+        log_likelihood_ratio=evidence + 0.0,  # a negative zero becomes a plain one
+    )
+
+
+def _decided(procedure: Procedure, before: State, moved: State, exit_: Exit, at: datetime) -> Decided:
+    return Decided(
+        sequence=before.sequence + exit_.index + 1,
+        sample_number=moved.sample_number,
+        exposure=moved.exposure.value if procedure.family.has_exposure else None,
+        at=at,
+        cause=exit_.cause,
+    )
+
+
+def _check_size(procedure: Procedure, progress: FloatArray, total: FloatArray) -> None:
+    family = procedure.family
+    too_large = not family.has_exposure and progress[-1] > LARGEST_TOTAL
+    if too_large or (family.span.is_integer and total[-1] > LARGEST_TOTAL):
+        raise InvalidObservations([Fault("", "the totals would pass 2**53 and no longer be exact")])
+
+
+def _double(number: Sum) -> Double:
+    return Double.of(number.high, number.low)
+
+
+def _sum(number: Double) -> Sum:
+    return Sum(float(number.high), float(number.low))
+
+
+__all__ = ["Cause", "Decision", "Walk", "first_exit", "observe", "walk_from"]
