@@ -116,12 +116,18 @@ def _faults_of(content: Content) -> list[Fault]:
         known = ", ".join(FAMILIES)
         return [Fault("/family", f"must be one of {known}; received {content['family']!r}")]
     return [
+        *_faults_of_statistic(content),
         *_faults_of_hypotheses(family, content),
         *_faults_of_risks(content),
         *_faults_of_boundaries(content),
         *_faults_of_known(family, content.get("known", {})),
         *_faults_of_truncation(family, content.get("truncation", {})),
     ]
+
+
+def _faults_of_statistic(content: Content) -> list[Fault]:
+    statistic = content["statistic"]
+    return [] if statistic == "simple" else [Fault("/statistic", f"must be simple; received {statistic!r}")]
 
 
 def _faults_of_hypotheses(family: Family, content: Content) -> list[Fault]:

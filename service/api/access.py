@@ -1,0 +1,75 @@
+"""
+Access: every call under /v1 needs a key, and each route says which role.
+
+The key is looked up before the body is read, and afresh for each request, so that a revoked key ends at once.
+"""
+
+from collections.abc import Awaitable, Callable
+from typing import Any, cast
+
+from fastapi import Depends, Request
+from fastapi.security.utils import get_authorization_scheme_param
+from starlette.types import ASGIApp, Receive, Scope, Send
+
+from service.api.parts import Parts, reading
+from service.api.problems import RequestProblem, response
+from service.domain.access import AccessKey, Role
+from service.ingest.performing import digest_of
+
+GUARDED = "/v1"
+LONGEST_SECRET = 200
+
+
+class AccessGuard:
+    """Middleware: finds the access key of a request, or answers 401."""
+
+    def __init__(self, app: ASGIApp) -> None:
+        self._app = app
+
+    async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
+        """Let through what carries a valid key, and what lies outside the guarded part."""
+        if scope["type"] != "http" or not _is_guarded(scope["path"]):
+            await self._app(scope, receive, send)
+            return
+        parts = cast("Parts", scope["app"].state.parts)
+        key = await _key_of(Request(scope), parts)
+        if key is None:
+            detail = "Send the header Authorization: Bearer <key> with a key that is neither revoked nor expired."
+            refusal = response("key-required", detail, headers={"WWW-Authenticate": "Bearer"})
+            await refusal(scope, receive, send)
+            return
+        scope.setdefault("state", {})["access_key"] = key
+        await self._app(scope, receive, send)
+
+
+def requires(role: Role) -> Any:  # noqa: ANN401 - what Depends returns is opaque
+    """
+    A dependency that lets only keys of this role or a wider one pass, and returns the key.
+
+    Raises:
+        RequestProblem: role-required.
+    """
+
+    async def check(request: Request) -> AccessKey:
+        key = cast("AccessKey", request.state.access_key)
+        if not key.role.includes(role):
+            raise RequestProblem("role-required", f"This needs the role {role}; the key {key.name!r} has {key.role}.")
+        return key
+
+    check.role = role  # type: ignore[attr-defined]
+    return Depends(check)
+
+
+def _is_guarded(path: str) -> bool:
+    return path == GUARDED or path.startswith(GUARDED + "/")
+
+
+async def _key_of(request: Request, parts: Parts) -> AccessKey | None:
+    scheme, secret = get_authorization_scheme_param(request.headers.get("authorization"))
+    if scheme.lower() != "bearer" or not secret or len(secret) > LONGEST_SECRET:
+        return None
+    key = await reading(lambda: parts.reader.key_with_digest(digest_of(secret)))
+    return key if key is not None and key.is_valid(parts.clock()) else None
+
+
+Guard = Callable[[Request], Awaitable[AccessKey]]

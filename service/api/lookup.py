@@ -1,0 +1,26 @@
+"""Reads that several routes share."""
+
+from service.api.parts import Parts, reading
+from service.domain.errors import UnknownPlan, UnknownTest
+from service.domain.plan import Plan
+from service.domain.sequential_test import SequentialTest
+
+
+async def known_test(parts: Parts, key: str) -> tuple[SequentialTest, Plan]:
+    """
+    A test with its plan.
+
+    Raises:
+        UnknownTest: There is none of this key.
+    """
+    return await reading(lambda: _test_with_plan(parts, key))
+
+
+def _test_with_plan(parts: Parts, key: str) -> tuple[SequentialTest, Plan]:
+    test = parts.reader.test(key)
+    if test is None:
+        raise UnknownTest(key)
+    plan = parts.reader.plan(test.plan)
+    if plan is None:
+        raise UnknownPlan(test.plan)
+    return test, plan

@@ -1,0 +1,37 @@
+"""What the routes need, built once by the application and handed to each request."""
+
+import asyncio
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Annotated, TypeVar, cast
+
+from fastapi import Depends, Request
+
+from service.ingest.road import Clock, Road
+from service.settings import Settings
+from service.storage.reader import Reader
+
+T = TypeVar("T")
+
+
+@dataclass(frozen=True)
+class Parts:
+    """The connected parts of a running service."""
+
+    settings: Settings
+    reader: Reader
+    road: Road
+    clock: Clock
+    check_ready: Callable[[], None]
+
+
+async def _parts(request: Request) -> Parts:
+    return cast("Parts", request.app.state.parts)
+
+
+PartsOf = Annotated[Parts, Depends(_parts)]
+
+
+async def reading(work: Callable[[], T]) -> T:
+    """Run a read of the database off the event loop."""
+    return await asyncio.to_thread(work)

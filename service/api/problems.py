@@ -1,0 +1,185 @@
+"""
+Every error as a problem document (RFC 9457): the one place that knows a status.
+
+`PROBLEMS` lists all types; `OF_ERRORS` translates the domain's errors. An unexpected error becomes a 500 without its
+text, which goes to the log with the request id.
+"""
+
+import logging
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+from fastapi import FastAPI, Request
+from fastapi.exceptions import RequestValidationError
+from fastapi.responses import JSONResponse
+from starlette.exceptions import HTTPException
+
+from service.domain import errors
+from service.domain.errors import DomainError, Fault
+
+logger = logging.getLogger(__name__)
+
+MEDIA_TYPE = "application/problem+json"
+TYPE_PREFIX = "urn:sprt-monitor:problem:"
+LONGEST_ECHO = 60
+
+
+@dataclass(frozen=True)
+class ProblemType:
+    """A stable type with its status and title, and an example of a detail for the API description."""
+
+    name: str
+    status: int
+    title: str
+    example: str
+    pointer: str | None = None
+
+    @property
+    def uri(self) -> str:
+        """The `type` member."""
+        return TYPE_PREFIX + self.name
+
+
+_TYPES = (
+    ProblemType("malformed-body", 400, "The body is not sound JSON", "The body is not JSON: Expecting value at line 1."),
+    ProblemType("key-required", 401, "A valid access key is required", "Send the header Authorization: Bearer <key>."),
+    ProblemType("role-required", 403, "The access key may not do this", "This needs the role engineer; the key has viewer."),
+    ProblemType("not-found", 404, "There is no such thing", "There is no test 'lot-7'."),
+    ProblemType("method-not-allowed", 405, "The address does not take this method", "Method Not Allowed"),
+    ProblemType("plan-differs", 409, "The plan exists with other content", "The plan 'seal-leak' exists with other content."),
+    ProblemType("test-differs", 409, "The test exists with other content", "The test 'lot-7' exists with another plan."),
+    ProblemType("key-name-taken", 409, "The name of the access key is taken", "A valid access key is named 'line-2'."),
+    ProblemType("unit-repeated", 409, "A unit was counted already", "A unit may be counted once in a test.", "/observations/0/unit"),
+    ProblemType("test-closed", 409, "The test is closed", "The test 'lot-7' is closed and takes no further observations."),
+    ProblemType("in-progress", 409, "The first submission is still in progress", "A submission with the key 'a1' is in progress."),
+    ProblemType("version-moved", 412, "The state has moved on", "If-Match gave 3, its version is now 4."),
+    ProblemType("body-too-large", 413, "The body is too large", "A body may have at most 8388608 bytes."),
+    ProblemType("media-type", 415, "The body must be JSON", "Send Content-Type: application/json; received text/plain."),
+    ProblemType("invalid-body", 422, "The body cannot be right", "The body does not have the form asked for; see errors.", "/values/17"),
+    ProblemType("invalid-parameter", 422, "A parameter cannot be right", "A parameter cannot be right; see errors.", "/limit"),
+    ProblemType("invalid-plan", 422, "The plan cannot be right", "The plan cannot be right; see errors.", "/h1"),
+    ProblemType("invalid-test", 422, "The test cannot be right", "The test names a plan that does not exist.", "/plan"),
+    ProblemType("invalid-observations", 422, "An observation cannot be right", "The submission is refused as a whole.", "/values/17"),
+    ProblemType("invalid-key", 422, "The access key cannot be made", "The expiry must lie in the future."),
+    ProblemType("idempotency-key-reused", 422, "The idempotency key was used for something else", "The idempotency key 'a1' came before with another body."),
+    ProblemType("internal-error", 500, "The service failed", "The log of the service has the reason, under this request id."),
+    ProblemType("overloaded", 503, "Not at this moment", "Too many submissions are waiting; try again shortly."),
+)
+
+PROBLEMS: Mapping[str, ProblemType] = {problem.name: problem for problem in _TYPES}
+
+OF_ERRORS: Mapping[type[DomainError], str] = {
+    errors.InvalidPlan: "invalid-plan",
+    errors.InvalidTest: "invalid-test",
+    errors.InvalidObservations: "invalid-observations",
+    errors.InvalidKey: "invalid-key",
+    errors.IdempotencyKeyReused: "idempotency-key-reused",
+    errors.UnknownPlan: "not-found",
+    errors.UnknownTest: "not-found",
+    errors.UnknownKey: "not-found",
+    errors.PlanDiffers: "plan-differs",
+    errors.TestDiffers: "test-differs",
+    errors.KeyNameTaken: "key-name-taken",
+    errors.RepeatedUnits: "unit-repeated",
+    errors.TestIsClosed: "test-closed",
+    errors.SubmissionInProgress: "in-progress",
+    errors.VersionMoved: "version-moved",
+    errors.QueueFull: "overloaded",
+    errors.ShuttingDown: "overloaded",
+    errors.StorageFailed: "overloaded",
+}
+
+
+class RequestProblem(Exception):  # noqa: N818 - it is a problem document on its way, not an error of the program
+    """A request that is refused before the domain sees it."""
+
+    def __init__(self, name: str, detail: str, faults: Sequence[Fault] = (), headers: Mapping[str, str] | None = None):
+        super().__init__(detail)
+        self.name = name
+        self.detail = detail
+        self.faults = tuple(faults)
+        self.headers = dict(headers or {})
+
+
+def document(name: str, detail: str, faults: Sequence[Fault] = ()) -> dict[str, Any]:
+    """The members of a problem document."""
+    problem = PROBLEMS[name]
+    members: dict[str, Any] = {
+        "type": problem.uri,
+        "title": problem.title,
+        "status": problem.status,
+        "detail": detail,
+    }
+    if faults:
+        members["errors"] = [{"pointer": fault.pointer, "detail": fault.detail} for fault in faults]
+    return members
+
+
+def response(
+    name: str, detail: str, faults: Sequence[Fault] = (), headers: Mapping[str, str] | None = None
+) -> JSONResponse:
+    """The answer that carries a problem document."""
+    return JSONResponse(
+        document(name, detail, faults), PROBLEMS[name].status, headers=dict(headers or {}), media_type=MEDIA_TYPE
+    )
+
+
+def install(app: FastAPI) -> None:
+    """Have every error answered by a problem document."""
+    app.add_exception_handler(DomainError, _on_domain_error)
+    app.add_exception_handler(RequestProblem, _on_request_problem)
+    app.add_exception_handler(RequestValidationError, _on_validation_error)
+    app.add_exception_handler(HTTPException, _on_http_exception)
+    app.add_exception_handler(Exception, _on_unexpected)
+
+
+async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
+    headers = {"Retry-After": str(error.retry_after_seconds)} if isinstance(error, errors.Unavailable) else None
+    faults = getattr(error, "faults", ())
+    return response(OF_ERRORS[type(error)], str(error), faults, headers)  # type: ignore[index]
+
+
+async def _on_request_problem(_request: Request, error: Exception) -> JSONResponse:
+    assert isinstance(error, RequestProblem)  # noqa: S101 - registered for this type alone
+    return response(error.name, error.detail, error.faults, error.headers)
+
+
+async def _on_validation_error(_request: Request, error: Exception) -> JSONResponse:
+    assert isinstance(error, RequestValidationError)  # noqa: S101 - registered for this type alone
+    items = error.errors()
+    is_body = all(item["loc"][:1] == ("body",) for item in items)
+    faults = [Fault(_pointer(item["loc"][1:]), _rule(item)) for item in items[:20]]
+    if is_body:
+        return response("invalid-body", "The body does not have the form asked for; see errors.", faults)
+    return response("invalid-parameter", "A parameter cannot be right; see errors.", faults)
+
+
+async def _on_http_exception(_request: Request, error: Exception) -> JSONResponse:
+    assert isinstance(error, HTTPException)  # noqa: S101 - registered for this type alone
+    name = {404: "not-found", 405: "method-not-allowed"}.get(error.status_code, "malformed-body")
+    detail = "There is nothing at this address." if name == "not-found" else str(error.detail)
+    return response(name, detail, headers=error.headers)
+
+
+async def _on_unexpected(request: Request, error: Exception) -> JSONResponse:
+    request_id = getattr(request.state, "request_id", "unknown")
+    logger.error("request %s failed", request_id, exc_info=error)
+    return response("internal-error", f"The log of the service has the reason, under the request id {request_id}.")
+
+
+def _pointer(location: Sequence[Any]) -> str:
+    """A JSON pointer (RFC 6901) to the offending element."""
+    parts = [str(part) for part in location if part != "[key]"]
+    return "".join("/" + part.replace("~", "~0").replace("/", "~1") for part in parts)
+
+
+def _rule(item: Mapping[str, Any]) -> str:
+    """The rule that was broken and, for plain values, what was received instead."""
+    received = item.get("input")
+    message = str(item["msg"]).removeprefix("Value error, ")
+    if item["type"] == "missing" or isinstance(received, dict | list):
+        return message
+    text = repr(received)
+    echo = text if len(text) <= LONGEST_ECHO else text[:LONGEST_ECHO] + "…"
+    return f"{message}; received {echo}"

@@ -1,0 +1,71 @@
+"""Access keys, for administrators, and the summary, for dashboards."""
+
+from collections import Counter, defaultdict
+from typing import Annotated, cast
+
+from fastapi import APIRouter, Response
+
+from service.api.access import requires
+from service.api.bodies import StrictRoute
+from service.api.description import answers_with
+from service.api.parts import PartsOf, reading
+from service.api.schemas.administration import IssuedKeyOut, KeyForm, KeyOut, KeysOut, SummaryOut
+from service.domain.access import AccessKey, Role
+from service.domain.errors import Fault, InvalidKey
+from service.domain.state import Decision
+from service.ingest.commands import CreateKey, IssuedKey, RevokeKey
+
+router = APIRouter(prefix="/v1", tags=["administration"], route_class=StrictRoute)
+
+
+@router.get("/summary", responses=answers_with(), summary="Counts of tests", dependencies=[requires(Role.VIEWER)])
+async def show_summary(parts: PartsOf) -> SummaryOut:
+    """How many tests there are, by decision, kind and status."""
+    by_decision = Counter({decision.value: 0 for decision in Decision})
+    by_kind: defaultdict[str, Counter[str]] = defaultdict(Counter)
+    by_status: Counter[str] = Counter()
+    for row in await reading(parts.reader.counts):
+        kind, status, decision, count = str(row[0]), str(row[1]), str(row[2]), row[3]
+        by_decision[decision] += count
+        by_kind[kind][decision] += count
+        by_status[status] += count
+    return SummaryOut(
+        tests=by_decision.total(),
+        by_decision=dict(by_decision),
+        by_kind={kind: dict(counts) for kind, counts in by_kind.items()},
+        by_status=dict(by_status),
+    )
+
+
+@router.get("/keys", responses=answers_with(), summary="List keys", dependencies=[requires(Role.ADMINISTRATOR)])
+async def list_keys(parts: PartsOf) -> KeysOut:
+    """Every key that was ever made; never a secret."""
+    keys = await reading(parts.reader.keys)
+    return KeysOut(items=[KeyOut.model_validate(key) for key in keys])
+
+
+@router.post(
+    "/keys",
+    status_code=201,
+    responses=answers_with("key-name-taken", "invalid-key", has_body=True),
+    summary="Make a key",
+    dependencies=[requires(Role.ADMINISTRATOR)],
+)
+async def create_key(form: KeyForm, response: Response, parts: PartsOf) -> IssuedKeyOut:
+    """The secret is in this answer and nowhere else."""
+    if form.expires_at is not None and form.expires_at <= parts.clock():
+        raise InvalidKey("The key cannot be made.", [Fault("/expires_at", "must lie in the future")])
+    issued = cast("IssuedKey", await parts.road.submit(CreateKey(form.name, form.role, form.expires_at)))
+    response.headers["Cache-Control"] = "no-store"
+    return IssuedKeyOut(**KeyOut.model_validate(issued.key).model_dump(), secret=issued.secret)
+
+
+@router.delete(
+    "/keys/{name}",
+    responses=answers_with("not-found"),
+    summary="Revoke a key",
+    dependencies=[requires(Role.ADMINISTRATOR)],
+)
+async def revoke_key(name: str, parts: PartsOf) -> KeyOut:
+    """The key of this name ends at once; the record of it stays."""
+    return KeyOut.model_validate(cast("AccessKey", await parts.road.submit(RevokeKey(name))))

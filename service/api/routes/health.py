@@ -1,0 +1,39 @@
+"""Is it alive, and is it ready? Open to all: they say nothing but that."""
+
+import logging
+from typing import Any
+
+from fastapi import APIRouter
+
+from service.api.parts import PartsOf, reading
+from service.api.problems import RequestProblem
+from service.api.schemas.administration import HealthOut
+
+logger = logging.getLogger(__name__)
+
+router = APIRouter(tags=["health"])
+
+NOT_READY: dict[int | str, dict[str, Any]] = {
+    503: {
+        "description": "Not ready",
+        "content": {"application/problem+json": {"schema": {"$ref": "#/components/schemas/ProblemOut"}}},
+    }
+}
+
+
+@router.get("/healthz", summary="Is the process alive?")
+async def health() -> HealthOut:
+    """Answers as long as the process can."""
+    return HealthOut(status="alive")
+
+
+@router.get("/readyz", summary="Can it take results?", responses=NOT_READY)
+async def readiness(parts: PartsOf) -> HealthOut:
+    """Checks that the database answers and has the schema this version knows."""
+    try:
+        await reading(parts.check_ready)
+    except Exception:
+        logger.exception("not ready")
+        detail = "The database does not answer, or its schema is another; see the log."
+        raise RequestProblem("overloaded", detail, headers={"Retry-After": "5"}) from None
+    return HealthOut(status="ready")

@@ -1,0 +1,116 @@
+"""Tests: register, list, show."""
+
+from typing import Annotated, cast
+
+from fastapi import APIRouter, Query, Request, Response
+from pydantic import AwareDatetime, BaseModel, ConfigDict, Field
+
+from service.api.access import requires
+from service.api.bodies import StrictRoute
+from service.api.conditional import etag, not_modified
+from service.api.description import answers_with
+from service.api.lookup import known_test
+from service.api.paging import Cursor, Limit, encoded, link_next, text_after
+from service.api.parts import Parts, PartsOf, reading
+from service.api.problems import RequestProblem
+from service.api.schemas.tests import TestForm, TestOut, TestsOut
+from service.domain.access import AccessKey, Role
+from service.domain.errors import Fault
+from service.domain.sequential_test import SubjectKind
+from service.domain.state import Decision
+from service.ingest.commands import RegisteredTest, RegisterTest
+from service.storage.reader import TestFilters
+
+router = APIRouter(prefix="/v1/tests", tags=["tests"], route_class=StrictRoute)
+
+
+class TestsQuery(BaseModel):
+    """The filters and the page of the list."""
+
+    __test__ = False
+    model_config = ConfigDict(extra="forbid")
+
+    decision: Decision | None = None
+    kind: SubjectKind | None = None
+    subject: Annotated[str | None, Field(max_length=200, description="Exact name of the subject.")] = None
+    plan: Annotated[str | None, Field(max_length=100)] = None
+    label: Annotated[list[str], Field(max_length=20, description="name:value; all of them must match.")] = []
+    updated_after: AwareDatetime | None = None
+    limit: Limit = 100
+    cursor: Cursor = None
+
+    def filters(self) -> TestFilters:
+        """For the reader."""
+        return TestFilters(
+            decision=self.decision,
+            kind=self.kind,
+            subject=self.subject,
+            plan=self.plan,
+            labels=tuple(_label(text, position) for position, text in enumerate(self.label)),
+            updated_after=self.updated_after,
+        )
+
+
+@router.post(
+    "",
+    status_code=201,
+    responses=answers_with("invalid-test", "test-differs", has_body=True),
+    summary="Register a test",
+)
+async def register_test(
+    form: TestForm,
+    response: Response,
+    parts: PartsOf,
+    key: Annotated[AccessKey, requires(Role.ENGINEER)],
+) -> TestOut:
+    """The same key with the same content answers 200 with the test as it stands; with other content, 409."""
+    command = RegisterTest(form.key, form.plan, form.subject.subject(), form.labels, key.name)
+    outcome = cast("RegisteredTest", await parts.road.submit(command))
+    response.status_code = 201 if outcome.is_new else 200
+    response.headers["Location"] = f"/v1/tests/{outcome.test.key}"
+    response.headers["ETag"] = etag(outcome.test.version)
+    return TestOut.of(outcome.test, outcome.plan)
+
+
+@router.get("", responses=answers_with(), summary="List tests by key", dependencies=[requires(Role.VIEWER)])
+async def list_tests(
+    request: Request, response: Response, parts: PartsOf, query: Annotated[TestsQuery, Query()]
+) -> TestsOut:
+    """A page of the tests that match every filter given."""
+    after, filters = text_after(query.cursor), query.filters()
+    items, next_cursor = await reading(lambda: _page(parts, filters, after, query.limit))
+    link_next(request, response, next_cursor)
+    return TestsOut(items=items, next_cursor=next_cursor)
+
+
+@router.get(
+    "/{key}",
+    responses=answers_with("not-found"),
+    response_model=TestOut,
+    summary="Show a test",
+    dependencies=[requires(Role.VIEWER)],
+)
+async def show_test(key: str, request: Request, response: Response, parts: PartsOf) -> TestOut | Response:
+    """Where a test stands: continue, accept or reject."""
+    test, plan = await known_test(parts, key)
+    tag = etag(test.version)
+    if (unchanged := not_modified(request, tag)) is not None:
+        return unchanged
+    response.headers["ETag"] = tag
+    return TestOut.of(test, plan)
+
+
+def _page(parts: Parts, filters: TestFilters, after: str | None, limit: int) -> tuple[list[TestOut], str | None]:
+    tests = parts.reader.tests(filters, after, limit + 1)
+    page = tests[:limit]
+    plans = {name: parts.reader.plan(name) for name in {test.plan for test in page}}
+    items = [TestOut.of(test, plan) for test in page if (plan := plans[test.plan]) is not None]
+    return items, encoded(page[-1].key) if len(tests) > len(page) else None
+
+
+def _label(text: str, position: int) -> tuple[str, str]:
+    name, colon, value = text.partition(":")
+    if not (name and colon and value):
+        fault = Fault(f"/label/{position}", f"must have the form name:value; received {text!r}")
+        raise RequestProblem("invalid-parameter", "A parameter cannot be right; see errors.", [fault])
+    return name, value

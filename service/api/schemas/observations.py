@@ -1,0 +1,126 @@
+"""Observations: as posted, as logged, and as a path to draw."""
+
+from datetime import datetime
+from typing import Annotated, Any, Self
+
+from pydantic import AwareDatetime, ConfigDict, Field, StrictBool, model_validator
+
+from service.api.schemas.common import Answer, Form, Number, Text
+from service.api.schemas.plans import ThresholdsOut
+from service.domain.families import Family
+from service.domain.log import LoggedObservation
+
+EXAMPLES: list[dict[str, Any]] = [
+    {"values": [0, 0, 1]},
+    {"observations": [{"value": 2, "size": 50, "unit": "tray-7", "observed_at": "2031-05-04T09:30:00Z"}]},
+    {"observations": [{"time": 41.5, "failed": True}, {"time": 200.0, "failed": False}]},
+]
+
+
+class ObservationForm(Form):
+    """
+    One observation. Which fields mean something depends on the family; absent ones are left out, not null.
+
+    The defaults here are never used: what counts is which fields were sent.
+    """
+
+    value: Number = Field(default_factory=float, description="Result: 0 or 1, a count, or a measurement.")
+    time: Number = Field(default_factory=float, description="Unit-time since the report before (exponential).")
+    exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
+    size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
+    failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
+    unit: Text = Field(default_factory=str, description="Serial number; may be counted once in a test.")
+    observed_at: AwareDatetime = Field(
+        default_factory=lambda: datetime.min, description="When it was observed, with its time zone (RFC 3339)."
+    )
+
+
+class ObservationsForm(Form):
+    """A submission: either bare `values` or `observations` with more to say about each; the order is theirs."""
+
+    model_config = ConfigDict(json_schema_extra={"examples": EXAMPLES})
+
+    values: Annotated[list[Number], Field(min_length=1)] = Field(default_factory=list)
+    observations: Annotated[list[ObservationForm], Field(min_length=1)] = Field(default_factory=list)
+
+    @model_validator(mode="after")
+    def _one_form(self) -> Self:
+        if len(self.model_fields_set) != 1:
+            raise ValueError('give either "values" or "observations"')  # noqa: TRY003 - pydantic passes the text on
+        return self
+
+    @property
+    def count(self) -> int:
+        """How many observations there are."""
+        return len(self.values) + len(self.observations)
+
+
+class LoggedOut(Answer):
+    """One observation of the log."""
+
+    sequence: int
+    value: float | None = None
+    time: float | None = None
+    exposure: float | None = None
+    size: int | None = None
+    failed: bool | None = None
+    unit: str | None
+    observed_at: str | None
+    received_at: datetime
+    submitted_by: str
+    counted: bool
+
+    @classmethod
+    def of(cls, entry: LoggedObservation) -> "LoggedOut":
+        """From the domain's entry."""
+        return cls(
+            sequence=entry.sequence,
+            unit=entry.unit,
+            observed_at=entry.observed_at,
+            received_at=entry.received_at,
+            submitted_by=entry.actor,
+            counted=entry.is_counted,
+            **entry.fields,  # type: ignore[arg-type]
+        )
+
+
+class LogOut(Answer):
+    """A page of the log, by sequence."""
+
+    items: list[LoggedOut]
+    next_cursor: str | None
+
+
+class PathPointOut(Answer):
+    """The walk after one observation."""
+
+    sequence: int
+    sample_number: int
+    exposure: float | None
+    total: int | float
+    log_likelihood_ratio: float
+
+
+class RegionPointOut(Answer):
+    """The totals that accept and reject at one sample number or exposure; null where none does."""
+
+    sample_number: int | None
+    exposure: float | None
+    accept: float | None
+    reject: float | None
+
+
+class PathOut(Answer):
+    """The walk of the evidence, thinned, and the region around it."""
+
+    key: str
+    decision: str
+    axis: str = Field(description="What the region runs over: sample_number or exposure.")
+    thresholds: ThresholdsOut
+    points: list[PathPointOut]
+    region: list[RegionPointOut]
+
+
+def csv_columns(family: Family) -> list[str]:
+    """The header of the log as CSV."""
+    return ["sequence", *family.fields, "unit", "observed_at", "received_at", "submitted_by", "counted"]

@@ -1,0 +1,145 @@
+"""Tests and their state."""
+
+from datetime import datetime
+from typing import Annotated, Any
+
+from pydantic import ConfigDict, Field
+
+from service.api.schemas.common import Answer, Form, Name, Text
+from service.api.schemas.plans import ThresholdsOut
+from service.domain.families import Family
+from service.domain.plan import Plan
+from service.domain.procedure import procedure_of
+from service.domain.sequential_test import SequentialTest, Subject, SubjectKind
+from service.domain.state import State
+from service.ingest.commands import Posted
+
+EXAMPLE: dict[str, Any] = {
+    "key": "lot-2041",
+    "plan": "seal-leak",
+    "subject": {"kind": "lot", "name": "2041/B"},
+    "labels": {"line": "3"},
+}
+
+
+class SubjectForm(Form):
+    """What is tested."""
+
+    kind: SubjectKind
+    name: Text
+
+    def subject(self) -> Subject:
+        """The domain's value."""
+        return Subject(self.kind, self.name)
+
+
+class TestForm(Form):
+    """The registration of a test."""
+
+    __test__ = False
+    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+
+    key: Name
+    plan: Name
+    subject: SubjectForm
+    labels: Annotated[dict[Name, Text], Field(max_length=20)] = Field(default_factory=dict)
+
+
+class SubjectOut(Answer):
+    """What is tested."""
+
+    kind: SubjectKind
+    name: str
+
+
+class DecidedOut(Answer):
+    """The moment of the decision."""
+
+    sample_number: int
+    exposure: float | None
+    at: datetime
+    cause: str
+
+
+class TestOut(Answer):
+    """A test and where it stands."""
+
+    __test__ = False
+
+    key: str
+    plan: str
+    subject: SubjectOut
+    labels: dict[str, str]
+    decision: str
+    log_likelihood_ratio: float
+    thresholds: ThresholdsOut
+    sample_number: int
+    exposure: float | None
+    total: int | float
+    decided: DecidedOut | None
+    overrun: int
+    status: str
+    version: int
+    registered_at: datetime
+    updated_at: datetime
+
+    @classmethod
+    def of(cls, test: SequentialTest, plan: Plan) -> "TestOut":
+        """From the domain's test and its plan."""
+        return cls(**_members(test, plan))
+
+
+class PostedOut(TestOut):
+    """The state right after a submission, with the sequences that its observations were given."""
+
+    first_sequence: int
+    last_sequence: int
+
+    @classmethod
+    def after(cls, posted: Posted) -> "PostedOut":
+        """From the outcome of a submission."""
+        return cls(
+            **_members(posted.test, posted.plan),
+            first_sequence=posted.first_sequence,
+            last_sequence=posted.last_sequence,
+        )
+
+
+class TestsOut(Answer):
+    """A page of tests, by key."""
+
+    __test__ = False
+
+    items: list[TestOut]
+    next_cursor: str | None
+
+
+def total_of(family: Family, value: float) -> int | float:
+    """A total in its natural unit: a whole number where the family counts."""
+    return int(value) if family.span.is_integer else value
+
+
+def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
+    procedure, state = procedure_of(plan), test.state
+    return {
+        "key": test.key,
+        "plan": test.plan,
+        "subject": SubjectOut.model_validate(test.subject),
+        "labels": dict(test.labels),
+        "decision": state.decision,
+        "log_likelihood_ratio": state.log_likelihood_ratio,
+        "thresholds": ThresholdsOut.model_validate(procedure.thresholds),
+        "sample_number": state.sample_number,
+        "exposure": state.exposure.value if procedure.family.has_exposure else None,
+        "total": total_of(procedure.family, state.total.value),
+        "decided": _decided(state),
+        "overrun": state.overrun,
+        "status": test.status,
+        "version": test.version,
+        "registered_at": test.registered_at,
+        "updated_at": test.updated_at,
+    }
+
+
+def _decided(state: State) -> DecidedOut | None:
+    return None if state.decided is None else DecidedOut.model_validate(state.decided)

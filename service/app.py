@@ -1,0 +1,66 @@
+"""Builds and connects everything; the only module that knows all parts."""
+
+import logging
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+
+from fastapi import FastAPI
+
+from service.api import problems
+from service.api.access import AccessGuard
+from service.api.description import describe
+from service.api.parts import Parts
+from service.api.requests import RequestId
+from service.api.routes import administration, health, observations, plans, tests
+from service.ingest.road import Clock, Road, utc_now
+from service.settings import Settings
+from service.storage.engine import create_engine_for
+from service.storage.migrate import check_schema
+from service.storage.reader import Reader
+
+VERSION = "0.1.0"
+
+DESCRIPTION = (
+    "Sequential probability ratio tests: register a lot or an experiment under a plan, post results as they come, "
+    "and learn after each whether to continue, accept or reject."
+)
+
+
+def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
+    """
+    The service as an ASGI application; it opens its database when it starts.
+
+    Raises:
+        SchemaMismatch: At start, when the database has another schema than this version knows.
+    """
+
+    @asynccontextmanager
+    async def lifespan(app: FastAPI) -> AsyncIterator[None]:
+        engine = create_engine_for(settings.database_url)
+        check_schema(engine)
+        road = Road(engine, clock, settings.queue_limit, settings.group_limit)
+        app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine))
+        road.start()
+        try:
+            yield
+        finally:
+            await road.stop()
+            engine.dispose()
+
+    logging.getLogger("service").setLevel(settings.log_level)
+    app = FastAPI(
+        title="SPRT Monitor",
+        version=VERSION,
+        description=DESCRIPTION,
+        docs_url=None,
+        redoc_url=None,
+        lifespan=lifespan,
+        separate_input_output_schemas=False,
+    )
+    problems.install(app)
+    app.add_middleware(AccessGuard)
+    app.add_middleware(RequestId)
+    for module in (plans, tests, observations, administration, health):
+        app.include_router(module.router)
+    app.openapi = describe(app)  # type: ignore[method-assign]
+    return app

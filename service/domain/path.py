@@ -1,0 +1,140 @@
+"""The walk of a test for drawing: evidence and totals against progress, thinned, with the region around it."""
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from service.domain.observing import first_exit, walk_from
+from service.domain.procedure import Procedure
+from service.domain.state import State, Sum
+from service.sequential.double import Double, FloatArray
+
+REGION_POINTS = 201
+
+
+@dataclass(frozen=True)
+class Path:
+    """
+    The counted observations of a test; arrays of shape (points,), the first point being the origin.
+
+    `sequence` is the observation after which each point was reached.
+    """
+
+    sequence: NDArray[np.int64]
+    sample_number: NDArray[np.int64]
+    progress: FloatArray
+    total: FloatArray
+    log_likelihood_ratio: FloatArray
+
+
+@dataclass(frozen=True)
+class RegionPoint:
+    """The limits of the total at one progress; None where no total of the family decides."""
+
+    progress: float
+    accept: float | None
+    reject: float | None
+
+
+def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: int) -> Path:
+    """
+    Walk the log once more and keep at most `points` of its points.
+
+    First, last and crossing stay, and so do the smallest and the largest evidence of each stretch left out.
+
+    Args:
+        procedure: The plan, compiled.
+        documents: The submissions of the test in order.
+        points: At least 4.
+    """
+    state, pieces = State(), [_origin(procedure)]
+    for document in documents:
+        increments = procedure.family.read(document)
+        walk = walk_from(procedure, state, increments)
+        exit_ = first_exit(procedure, walk, increments)
+        count = len(increments.total) if exit_ is None else exit_.index + 1
+        progress, total = _cut(walk.progress, count), _cut(walk.total, count)
+        if exit_ is not None:
+            progress, total = _ending_in(progress, exit_.progress), _ending_in(total, exit_.total)
+        units = state.sample_number + np.cumsum(increments.units[:count])
+        sequence = state.sequence + np.arange(1, count + 1)
+        evidence = procedure.ratio.log(progress, total)
+        pieces.append(Path(sequence, units, progress.value, total.value, evidence))
+        if exit_ is not None:
+            break
+        state = State(
+            sequence=int(sequence[-1]), sample_number=int(units[-1]), exposure=_last(progress), total=_last(total)
+        )
+    return _thinned(_joined(pieces), points)
+
+
+def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
+    """The region from the origin to its wall, or a little past what was reached where it has none."""
+    region = procedure.region
+    horizon = region.wall.progress if region.wall is not None else _open_horizon(procedure, reached)
+    progress = np.linspace(0.0, max(horizon, reached), REGION_POINTS)
+    if not procedure.family.has_exposure:
+        progress = np.unique(np.ceil(progress))
+    limits = region.limits(progress)
+    accept, reject = (limits.lower, limits.upper) if procedure.ratio.is_upward else (limits.upper, limits.lower)
+    return [
+        RegionPoint(float(at), _finite(low), _finite(high))
+        for at, low, high in zip(progress, accept, reject, strict=True)
+    ]
+
+
+def _open_horizon(procedure: Procedure, reached: float) -> float:
+    """Far enough to show both limits of an open region: a quarter past the walk, and past where the lines start."""
+    region = procedure.region
+    start = region.first_possible_decision() or abs(region.lower_intercept / (procedure.ratio.slope or 1.0))
+    return max(1.25 * reached, 3.0 * start, 10.0 if not procedure.family.has_exposure else 0.0)
+
+
+def _origin(procedure: Procedure) -> Path:
+    zero = np.zeros(1)
+    evidence = procedure.ratio.log(Double(zero, zero), Double(zero, zero)) + 0.0
+    return Path(np.zeros(1, np.int64), np.zeros(1, np.int64), zero, zero, evidence)
+
+
+def _joined(pieces: list[Path]) -> Path:
+    columns = ("sequence", "sample_number", "progress", "total", "log_likelihood_ratio")
+    return Path(**{name: np.concatenate([getattr(piece, name) for piece in pieces]) for name in columns})
+
+
+def _thinned(path: Path, points: int) -> Path:
+    """Keep the first and last point and each stretch's extremes of the evidence."""
+    count = len(path.sequence)
+    if count <= points:
+        return path
+    kept = {0, count - 1}
+    for stretch in np.array_split(np.arange(1, count - 1), max(1, (points - 2) // 2)):
+        evidence = path.log_likelihood_ratio[stretch]
+        kept.update((int(stretch[np.argmin(evidence)]), int(stretch[np.argmax(evidence)])))
+    index = np.array(sorted(kept))
+    return Path(
+        path.sequence[index],
+        path.sample_number[index],
+        path.progress[index],
+        path.total[index],
+        path.log_likelihood_ratio[index],
+    )
+
+
+def _cut(sums: Double, count: int) -> Double:
+    return Double(sums.high[:count], sums.low[:count])
+
+
+def _ending_in(sums: Double, last: Double) -> Double:
+    """The same sums with the last one replaced by where the walk really ended."""
+    return Double(np.append(sums.high[:-1], last.high), np.append(sums.low[:-1], last.low))
+
+
+def _last(sums: Double) -> Sum:
+    return Sum(float(sums.high[-1]), float(sums.low[-1]))
+
+
+def _finite(value: np.float64) -> float | None:
+    return float(value) if np.isfinite(value) else None

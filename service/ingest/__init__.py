@@ -1,0 +1,1 @@
+"""The one road for every write: commands in, committed outcomes out."""

@@ -1,0 +1,106 @@
+"""What may be asked to be written, and what comes back once it is."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any
+
+from service.domain.access import AccessKey, Role
+from service.domain.plan import Plan
+from service.domain.sequential_test import SequentialTest, Subject
+
+
+@dataclass(frozen=True)
+class CreatePlan:
+    """Store a plan; the same name with the same content is answered with the stored one."""
+
+    name: str
+    content: Mapping[str, Any]
+    actor: str
+
+
+@dataclass(frozen=True)
+class RegisterTest:
+    """Register a test; the same key with the same content is answered with the stored one."""
+
+    key: str
+    plan: str
+    subject: Subject
+    labels: Mapping[str, str]
+    actor: str
+
+
+@dataclass(frozen=True)
+class PostObservations:
+    """
+    Take the observations of one submission.
+
+    Attributes:
+        body: The JSON text as received; `document` is the same, decoded and of sound form.
+        body_digest: SHA-256 of the received bytes, hexadecimal.
+        expected_version: What If-Match names, if the caller sent one.
+    """
+
+    test: str
+    body: str
+    document: Mapping[str, Any]
+    body_digest: str
+    actor: str
+    idempotency_key: str | None = None
+    expected_version: str | None = None
+
+
+@dataclass(frozen=True)
+class CreateKey:
+    """Make a named access key."""
+
+    name: str
+    role: Role
+    expires_at: datetime | None = None
+
+
+@dataclass(frozen=True)
+class RevokeKey:
+    """End a valid access key, by name."""
+
+    name: str
+
+
+@dataclass(frozen=True)
+class StoredPlan:
+    """A plan as stored, and whether this command made it."""
+
+    plan: Plan
+    is_new: bool
+
+
+@dataclass(frozen=True)
+class RegisteredTest:
+    """A test as stored, its plan, and whether this command made it."""
+
+    test: SequentialTest
+    plan: Plan
+    is_new: bool
+
+
+@dataclass(frozen=True)
+class Posted:
+    """The test right after a submission; `is_replay` where an earlier answer was given again."""
+
+    test: SequentialTest
+    plan: Plan
+    first_sequence: int
+    last_sequence: int
+    is_replay: bool
+
+
+@dataclass(frozen=True)
+class IssuedKey:
+    """A new access key with its secret, which is shown this once and kept nowhere."""
+
+    key: AccessKey
+    secret: str
+
+
+Command = CreatePlan | RegisterTest | PostObservations | CreateKey | RevokeKey
+Outcome = StoredPlan | RegisteredTest | Posted | IssuedKey | AccessKey

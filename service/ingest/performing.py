@@ -1,0 +1,219 @@
+"""
+Each command, inside a transaction that the caller opened: load, one pure step, append.
+
+A refusal is raised before anything is written, so that it disturbs no other command of the same transaction.
+"""
+
+import hashlib
+import secrets
+from collections import Counter
+from collections.abc import Mapping
+from dataclasses import replace
+from datetime import datetime
+from functools import singledispatch
+from typing import Any
+
+from service.domain.access import AccessKey
+from service.domain.errors import (
+    Fault,
+    IdempotencyKeyReused,
+    InvalidTest,
+    KeyNameTaken,
+    PlanDiffers,
+    RepeatedUnits,
+    TestDiffers,
+    TestIsClosed,
+    UnknownKey,
+    UnknownPlan,
+    UnknownTest,
+    VersionMoved,
+)
+from service.domain.observing import observe
+from service.domain.plan import Plan, fingerprint_of
+from service.domain.procedure import checked_content, procedure_of
+from service.domain.sequential_test import SequentialTest, Status, Submission
+from service.domain.state import State
+from service.ingest.commands import (
+    Command,
+    CreateKey,
+    CreatePlan,
+    IssuedKey,
+    Outcome,
+    Posted,
+    PostObservations,
+    RegisteredTest,
+    RegisterTest,
+    RevokeKey,
+    StoredPlan,
+)
+from service.storage.writer import Writer
+
+SECRET_BYTES = 32
+
+
+@singledispatch
+def perform(command: Command, writer: Writer, now: datetime) -> Outcome:
+    """
+    Carry out one command at the time `now`.
+
+    Raises:
+        DomainError: The command is refused; nothing of it was written.
+    """
+    raise TypeError(f"no way to perform {type(command).__name__}")
+
+
+@perform.register
+def _(command: CreatePlan, writer: Writer, now: datetime) -> Outcome:
+    document = checked_content(command.content)
+    stored = writer.plan(command.name)
+    if stored is not None:
+        if stored.document != document:
+            raise PlanDiffers(command.name)
+        return StoredPlan(stored, is_new=False)
+    plan = Plan(command.name, document, fingerprint_of(document), now, command.actor)
+    writer.add_plan(plan)
+    return StoredPlan(plan, is_new=True)
+
+
+@perform.register
+def _(command: RegisterTest, writer: Writer, now: datetime) -> Outcome:
+    stored = writer.test(command.key)
+    if stored is not None:
+        if not _same_registration(stored, command):
+            raise TestDiffers(command.key)
+        return RegisteredTest(stored, _plan(writer, stored.plan), is_new=False)
+    plan = writer.plan(command.plan)
+    if plan is None:
+        raise InvalidTest("The test names a plan that does not exist.", [Fault("/plan", f"no plan {command.plan!r}")])
+    test = SequentialTest(
+        key=command.key,
+        plan=command.plan,
+        subject=command.subject,
+        labels=dict(command.labels),
+        status=Status.OPEN,
+        version=1,
+        registered_at=now,
+        registered_by=command.actor,
+        updated_at=now,
+        state=State(),
+    )
+    writer.add_test(test)
+    return RegisteredTest(test, plan, is_new=True)
+
+
+@perform.register
+def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
+    test = writer.test(command.test)
+    if test is None:
+        raise UnknownTest(command.test)
+    plan = _plan(writer, test.plan)
+    first = _first_answer(command, writer)
+    if first is not None:
+        then = replace(test, version=first.version, updated_at=first.received_at, state=first.state)
+        return Posted(then, plan, first.first_sequence, first.last_sequence, is_replay=True)
+    if command.expected_version not in {None, str(test.version)}:
+        raise VersionMoved(str(command.expected_version), test.version)
+    if test.status is Status.CLOSED:
+        raise TestIsClosed(test.key)
+    state = observe(procedure_of(plan), test.state, command.document, now)
+    first_sequence = test.state.sequence + 1
+    units = _new_units(command, writer, first_sequence)
+    moved = replace(test, version=test.version + 1, updated_at=now, state=state)
+    writer.append(_submission(command, moved, first_sequence), units)
+    writer.save(moved)
+    return Posted(moved, plan, first_sequence, state.sequence, is_replay=False)
+
+
+@perform.register
+def _(command: CreateKey, writer: Writer, now: datetime) -> Outcome:
+    taken = writer.key_named(command.name)
+    if taken is not None:
+        raise KeyNameTaken(command.name)
+    secret = secrets.token_urlsafe(SECRET_BYTES)
+    key = AccessKey(secrets.token_hex(8), command.name, command.role, digest_of(secret), now, command.expires_at)
+    writer.add_key(key)
+    return IssuedKey(key, secret)
+
+
+@perform.register
+def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
+    key = writer.key_named(command.name)
+    if key is None:
+        raise UnknownKey(command.name)
+    writer.revoke_key(key.id, now)
+    return replace(key, revoked_at=now)
+
+
+def digest_of(secret: str) -> str:
+    """
+    What is stored of a secret.
+
+    A plain SHA-256 suffices: the secrets are 256 random bits, which no search can reach.
+    """
+    return hashlib.sha256(secret.encode()).hexdigest()
+
+
+def _plan(writer: Writer, name: str) -> Plan:
+    plan = writer.plan(name)
+    if plan is None:
+        raise UnknownPlan(name)
+    return plan
+
+
+def _same_registration(test: SequentialTest, command: RegisterTest) -> bool:
+    return (test.plan, test.subject, dict(test.labels)) == (command.plan, command.subject, dict(command.labels))
+
+
+def _first_answer(command: PostObservations, writer: Writer) -> Submission | None:
+    """The submission that this one repeats, if its idempotency key has been used before."""
+    if command.idempotency_key is None:
+        return None
+    first = writer.submission_with_idempotency_key(command.test, command.idempotency_key)
+    if first is None:
+        return None
+    if first.body_digest != command.body_digest:
+        raise IdempotencyKeyReused(command.idempotency_key, "came before with another body")
+    if first.actor != command.actor:
+        # Two stations that number their submissions alike must not silently swallow each other's results.
+        raise IdempotencyKeyReused(command.idempotency_key, "was used by another access key")
+    return first
+
+
+def _new_units(command: PostObservations, writer: Writer, first_sequence: int) -> dict[str, int]:
+    """The units of a submission with their sequences, none of them counted before."""
+    positions = _positions_of_units(command.document)
+    counts = Counter(unit for unit, _ in positions)
+    units = {unit: first_sequence + position for unit, position in positions}
+    known = writer.known_units(command.test, units) if units else {}
+    faults = [
+        Fault(f"/observations/{position}/unit", f"unit {unit!r} {_reason(unit, known)}")
+        for unit, position in positions
+        if unit in known or counts[unit] > 1
+    ]
+    if faults:
+        raise RepeatedUnits(faults[:100])
+    return units
+
+
+def _positions_of_units(document: Mapping[str, Any]) -> list[tuple[str, int]]:
+    observations = document.get("observations", ())
+    return [(observation["unit"], i) for i, observation in enumerate(observations) if "unit" in observation]
+
+
+def _reason(unit: str, known: Mapping[str, int]) -> str:
+    return f"was reported as observation {known[unit]}" if unit in known else "stands more than once in this submission"
+
+
+def _submission(command: PostObservations, test: SequentialTest, first_sequence: int) -> Submission:
+    return Submission(
+        test=command.test,
+        first_sequence=first_sequence,
+        last_sequence=test.state.sequence,
+        body=command.body,
+        body_digest=command.body_digest,
+        received_at=test.updated_at,
+        actor=command.actor,
+        idempotency_key=command.idempotency_key,
+        version=test.version,
+        state=test.state,
+    )

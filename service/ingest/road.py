@@ -1,0 +1,165 @@
+"""
+The road itself: callers wait in a queue, one thread decides and commits what waits as one group.
+
+Nobody is answered before the commit. A refusal disturbs no other command of its group; any other error rolls the
+group back and its members are run one by one, so that only the one at fault fails. Stopping finishes what was
+accepted and takes nothing new.
+"""
+
+import asyncio
+import logging
+import queue
+import threading
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+from datetime import UTC, datetime
+
+from sqlalchemy import Engine
+from sqlalchemy.exc import SQLAlchemyError
+
+from service.domain.errors import DomainError, QueueFull, ShuttingDown, StorageFailed, SubmissionInProgress
+from service.ingest.commands import Command, Outcome, PostObservations
+from service.ingest.performing import perform
+from service.storage.writer import writing
+
+logger = logging.getLogger(__name__)
+
+Clock = Callable[[], datetime]
+
+
+def utc_now() -> datetime:
+    """The wall clock, in UTC."""
+    return datetime.now(UTC)
+
+
+def perform_now(engine: Engine, command: Command, clock: Clock = utc_now) -> Outcome:
+    """
+    Carry out one command in a transaction of its own, for callers without a running road.
+
+    Raises:
+        DomainError: The command is refused; nothing was written.
+    """
+    with writing(engine) as writer:
+        return perform(command, writer, clock())
+
+
+@dataclass(frozen=True)
+class _Waiting:
+    """A command and the caller who waits for it."""
+
+    command: Command
+    answer: asyncio.Future[Outcome] = field(compare=False)
+
+
+Answer = tuple[_Waiting, Outcome | BaseException]
+
+
+class Road:
+    """A bounded queue, one writer thread, one commit for a group. Start it in a running event loop; then submit."""
+
+    def __init__(self, engine: Engine, clock: Clock, queue_limit: int, group_limit: int) -> None:
+        self._engine = engine
+        self._clock = clock
+        self._group_limit = group_limit
+        self._waiting: queue.Queue[_Waiting | None] = queue.Queue(queue_limit)
+        self._in_progress: set[tuple[str, str]] = set()
+        self._thread = threading.Thread(target=self._run, name="writer", daemon=True)
+        self._is_open = False
+        self._loop: asyncio.AbstractEventLoop | None = None
+
+    def start(self) -> None:
+        """Begin to take commands; the callers' event loop must be running."""
+        self._loop = asyncio.get_running_loop()
+        self._is_open = True
+        self._thread.start()
+
+    async def stop(self) -> None:
+        """Refuse what comes from now on, and finish what was accepted."""
+        self._is_open = False
+        await asyncio.to_thread(self._waiting.put, None)
+        await asyncio.to_thread(self._thread.join)
+
+    async def submit(self, command: Command) -> Outcome:
+        """
+        Have a command carried out; the outcome is returned once it is committed.
+
+        Raises:
+            DomainError: The command is refused, or cannot be taken now; nothing of it is stored.
+        """
+        if not self._is_open:
+            raise ShuttingDown
+        mark = _mark(command)
+        if mark in self._in_progress:
+            raise SubmissionInProgress(mark[1])
+        if mark is not None:
+            self._in_progress.add(mark)
+        try:
+            answer: asyncio.Future[Outcome] = asyncio.get_running_loop().create_future()
+            self._waiting.put_nowait(_Waiting(command, answer))
+            return await answer
+        except queue.Full:
+            raise QueueFull from None
+        finally:
+            if mark is not None:
+                self._in_progress.discard(mark)
+
+    def _run(self) -> None:
+        """The writer thread: one group after another until told to stop."""
+        is_running = True
+        while is_running:
+            group, is_running = self._next_group()
+            if group and self._loop is not None:
+                self._loop.call_soon_threadsafe(_tell, self._carried_out(group))
+
+    def _next_group(self) -> tuple[list[_Waiting], bool]:
+        """Wait for one command, then take what else waits up to the limit; false once the end was called."""
+        item = self._waiting.get()
+        group: list[_Waiting] = []
+        while item is not None:
+            group.append(item)
+            if len(group) == self._group_limit:
+                return group, True
+            try:
+                item = self._waiting.get_nowait()
+            except queue.Empty:
+                return group, True
+        return group, False
+
+    def _carried_out(self, group: Sequence[_Waiting]) -> list[Answer]:
+        """Run a group in one transaction, or one by one where that fails."""
+        try:
+            return self._in_one_transaction(group)
+        except Exception as error:
+            if len(group) > 1:
+                return [answer for waiting in group for answer in self._carried_out([waiting])]
+            logger.exception("a command failed")
+            failure = StorageFailed() if isinstance(error, SQLAlchemyError) else error
+            return [(group[0], failure)]
+
+    def _in_one_transaction(self, group: Sequence[_Waiting]) -> list[Answer]:
+        answers: list[Answer] = []
+        with writing(self._engine) as writer:
+            for waiting in group:
+                try:
+                    answers.append((waiting, perform(waiting.command, writer, self._clock())))
+                except DomainError as refusal:
+                    answers.append((waiting, refusal))
+        return answers
+
+
+def _mark(command: Command) -> tuple[str, str] | None:
+    """What no two commands in progress may share."""
+    if isinstance(command, PostObservations) and command.idempotency_key is not None:
+        return command.test, command.idempotency_key
+    return None
+
+
+def _tell(answers: Sequence[Answer]) -> None:
+    """Answer the callers, in the event loop; one that left is no error."""
+    for waiting, outcome in answers:
+        if waiting.answer.done():
+            continue
+        if isinstance(outcome, BaseException):
+            waiting.answer.set_exception(outcome)
+        else:
+            waiting.answer.set_result(outcome)
