@@ -1,0 +1,106 @@
+"""Who may do what, asked of every route the service has."""
+
+from datetime import UTC, datetime, timedelta
+
+import httpx
+import pytest
+
+from service.app import create_app
+from service.domain.access import Role
+from service.settings import Settings
+from tests.api.examples import Namer
+from tests.running import Running, command
+
+ROLES = ["viewer", "collector", "engineer", "administrator"]
+
+LEAST_ROLE = {
+    ("POST", "/v1/plans"): "engineer",
+    ("GET", "/v1/plans"): "viewer",
+    ("GET", "/v1/plans/{name}"): "viewer",
+    ("POST", "/v1/tests"): "engineer",
+    ("GET", "/v1/tests"): "viewer",
+    ("GET", "/v1/tests/{key}"): "viewer",
+    ("POST", "/v1/tests/{key}/observations"): "collector",
+    ("GET", "/v1/tests/{key}/observations"): "viewer",
+    ("GET", "/v1/tests/{key}/path"): "viewer",
+    ("GET", "/v1/summary"): "viewer",
+    ("GET", "/v1/keys"): "administrator",
+    ("POST", "/v1/keys"): "administrator",
+    ("DELETE", "/v1/keys/{name}"): "administrator",
+}
+OPEN = {("GET", "/healthz"), ("GET", "/readyz"), ("GET", "/openapi.json")}
+
+
+def routes() -> set[tuple[str, str]]:
+    """Every route of the service itself."""
+    paths = create_app(Settings()).openapi()["paths"]
+    described = {(method.upper(), path) for path, operations in paths.items() for method in operations}
+    return described | {("GET", "/openapi.json")}
+
+
+def test_every_route_has_a_rule() -> None:
+    assert routes() == LEAST_ROLE.keys() | OPEN
+
+
+def request(client: httpx.Client, method: str, path: str) -> int:
+    body = {"json": {}} if method == "POST" else {}
+    return client.request(method, path.format(name="none", key="none"), **body).status_code  # type: ignore[arg-type]
+
+
+@pytest.mark.parametrize(("method", "path"), sorted(LEAST_ROLE))
+def test_each_role_reaches_what_it_may_and_nothing_else(service: Running, method: str, path: str) -> None:
+    least = Role(LEAST_ROLE[method, path])
+    for role in ROLES:
+        with service.client(role) as client:
+            status = request(client, method, path)
+            assert (status != 403) == Role(role).includes(least), (role, status)
+            assert status != 401
+    with service.client(None) as nobody:
+        assert request(nobody, method, path) == 401
+
+
+@pytest.mark.parametrize(("method", "path"), sorted(OPEN))
+def test_only_health_readiness_and_the_description_are_open(service: Running, method: str, path: str) -> None:
+    with service.client(None) as nobody:
+        assert request(nobody, method, path) == 200
+
+
+@pytest.mark.parametrize("header", ["", "Bearer", "Bearer ", "Bearer wrong", "Basic YTpi", "Bearer " + "x" * 5000])
+def test_a_wrong_key_is_401(service: Running, header: str) -> None:
+    answer = httpx.get(f"{service.url}/v1/tests", headers={"Authorization": header} if header else {})
+    assert answer.status_code == 401
+    assert answer.headers["WWW-Authenticate"] == "Bearer"
+    assert answer.headers["Content-Type"] == "application/problem+json"
+
+
+def test_a_revoked_key_ends_at_once(admin: httpx.Client, service: Running, new_name: Namer) -> None:
+    name = new_name("station")
+    made = admin.post("/v1/keys", json={"name": name, "role": "viewer"})
+    assert made.status_code == 201
+    headers = {"Authorization": f"Bearer {made.json()['secret']}"}
+    assert httpx.get(f"{service.url}/v1/tests", headers=headers).status_code == 200
+    assert admin.post("/v1/keys", json={"name": name, "role": "viewer"}).status_code == 409
+    assert command("keys", "revoke", name, database_url=service.database_url).returncode == 0
+    assert httpx.get(f"{service.url}/v1/tests", headers=headers).status_code == 401
+    assert admin.delete(f"/v1/keys/{name}").status_code == 404
+    assert admin.post("/v1/keys", json={"name": name, "role": "viewer"}).status_code == 201
+
+
+def test_an_expired_key_is_401(admin: httpx.Client, service: Running, new_name: Namer) -> None:
+    soon = (datetime.now(UTC) + timedelta(seconds=0.5)).isoformat()
+    made = admin.post("/v1/keys", json={"name": new_name("brief"), "role": "viewer", "expires_at": soon})
+    assert made.status_code == 201, made.text
+    headers = {"Authorization": f"Bearer {made.json()['secret']}"}
+    statuses = {httpx.get(f"{service.url}/v1/tests", headers=headers).status_code}
+    while datetime.now(UTC).isoformat() < soon:
+        pass
+    statuses.add(httpx.get(f"{service.url}/v1/tests", headers=headers).status_code)
+    assert 401 in statuses
+    past = admin.post("/v1/keys", json={"name": new_name("brief"), "role": "viewer", "expires_at": "2001-01-01T00:00:00Z"})
+    assert past.status_code == 422
+
+
+def test_no_secret_is_ever_shown_again(admin: httpx.Client, service: Running) -> None:
+    listed = admin.get("/v1/keys").text + command("keys", "list", database_url=service.database_url).stdout
+    assert "the-viewer" in listed
+    assert not any(secret in listed for secret in service.keys.values())

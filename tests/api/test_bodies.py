@@ -1,0 +1,64 @@
+"""Bodies that are not what a body may be."""
+
+import httpx
+import pytest
+
+from tests.api.examples import SEAL, Namer, with_test
+
+JSON = "application/json"
+
+
+@pytest.mark.parametrize(
+    ("content", "media_type", "status", "name"),
+    [
+        (b"{", JSON, 400, "malformed-body"),
+        (b"", JSON, 400, "malformed-body"),
+        (b"\xff\xfe", JSON, 400, "malformed-body"),
+        (b'{"values": [0], "values": [1]}', JSON, 400, "malformed-body"),
+        (b'{"observations": [{"value": 0, "value": 1}]}', JSON, 400, "malformed-body"),
+        (b"[" * 30 + b"]" * 30, JSON, 400, "malformed-body"),
+        (b"[" * 100_000, JSON, 400, "malformed-body"),
+        (b'{"observations": [{"value": 0, "unit": "\\ud800"}]}', JSON, 400, "malformed-body"),
+        (b'{"values": [0]}', "text/plain", 415, "media-type"),
+        (b'{"values": [0]}', None, 415, "media-type"),
+        (b'{"values": [' + b"0," * 100_000 + b"0]}", JSON, 413, "body-too-large"),
+        (b"[1]", JSON, 422, "invalid-body"),
+        (b"null", JSON, 422, "invalid-body"),
+        (b'"text"', JSON, 422, "invalid-body"),
+    ],
+)
+def test_a_body_that_is_not_sound_is_a_problem(
+    admin: httpx.Client, new_name: Namer, content: bytes, media_type: str | None, status: int, name: str
+) -> None:
+    key = with_test(admin, new_name, SEAL)
+    headers = {"Content-Type": media_type} if media_type else {}
+    answer = admin.post(f"/v1/tests/{key}/observations", content=content, headers=headers)
+    assert answer.status_code == status, answer.text
+    assert answer.headers["Content-Type"] == "application/problem+json"
+    problem = answer.json()
+    assert problem["type"] == f"urn:sprt-monitor:problem:{name}"
+    assert problem["status"] == status
+    assert admin.get(f"/v1/tests/{key}").json()["version"] == 1
+
+
+def test_a_doubled_key_is_named(admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    body = b'{"observations": [{"value": 0}, {"value": 0, "value": 1}]}'
+    answer = admin.post(f"/v1/tests/{key}/observations", content=body, headers={"Content-Type": JSON})
+    assert answer.json()["errors"][0]["pointer"] == "/observations/1/value"
+
+
+def test_a_body_too_large_is_refused_while_it_comes(admin: httpx.Client, new_name: Namer) -> None:
+    """Sent in chunks, so that no length announces it."""
+    key = with_test(admin, new_name, SEAL)
+    chunks = (b" " * 50_000 for _ in range(10))
+    answer = admin.post(f"/v1/tests/{key}/observations", content=chunks, headers={"Content-Type": JSON})
+    assert answer.status_code == 413
+
+
+def test_unknown_addresses_and_methods_are_problems(admin: httpx.Client) -> None:
+    assert admin.get("/v1/nothing").json()["type"].endswith(":not-found")
+    answer = admin.put("/v1/plans", json={})
+    assert answer.status_code == 405
+    assert answer.headers["Allow"]
+    assert answer.json()["type"].endswith(":method-not-allowed")

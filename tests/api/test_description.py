@@ -1,0 +1,61 @@
+"""The API description is complete: an example for every body and every problem."""
+
+import httpx
+import pytest
+
+from service.api import problems
+from service.domain import errors
+from service.domain.errors import DomainError
+
+
+@pytest.fixture(scope="module")
+def description(admin: httpx.Client) -> dict:  # type: ignore[type-arg]
+    return admin.get("/openapi.json").json()  # type: ignore[no-any-return]
+
+
+def operations(description: dict) -> list[tuple[str, dict]]:  # type: ignore[type-arg]
+    return [
+        (f"{method} {path}", operation)
+        for path, methods in description["paths"].items()
+        for method, operation in methods.items()
+    ]
+
+
+def test_every_error_of_the_domain_has_a_problem() -> None:
+    def leaves(kind: type[DomainError]) -> set[type[DomainError]]:
+        below = kind.__subclasses__()
+        return set().union(*(leaves(sub) for sub in below)) if below else {kind}
+
+    assert leaves(DomainError) == set(problems.OF_ERRORS)
+    assert set(problems.OF_ERRORS.values()) <= set(problems.PROBLEMS)
+
+
+def test_the_drawing_of_the_errors_names_them_all() -> None:
+    drawing = errors.__doc__ or ""
+    assert all(kind.__name__ in drawing for kind in problems.OF_ERRORS)
+
+
+def test_every_body_has_an_example(description: dict) -> None:  # type: ignore[type-arg]
+    schemas = description["components"]["schemas"]
+    for name, operation in operations(description):
+        if "requestBody" in operation:
+            reference = operation["requestBody"]["content"]["application/json"]["schema"]["$ref"]
+            assert schemas[reference.rpartition("/")[2]]["examples"], name
+
+
+def test_every_problem_has_an_example(description: dict) -> None:  # type: ignore[type-arg]
+    shown = {
+        example
+        for _, operation in operations(description)
+        for response in operation["responses"].values()
+        for example in response.get("content", {}).get(problems.MEDIA_TYPE, {}).get("examples", {})
+    }
+    assert set(problems.PROBLEMS) - shown <= {"method-not-allowed"}
+
+
+def test_no_operation_promises_the_frameworks_own_errors(description: dict) -> None:  # type: ignore[type-arg]
+    assert "HTTPValidationError" not in str(description)
+    for name, operation in operations(description):
+        for status, response in operation["responses"].items():
+            if int(status) >= 400:
+                assert list(response["content"]) == [problems.MEDIA_TYPE], (name, status)

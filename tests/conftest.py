@@ -1,0 +1,30 @@
+"""What all tests share."""
+
+import itertools
+from collections.abc import Callable, Iterator
+
+import httpx
+import pytest
+
+from tests.running import Running, running
+
+
+@pytest.fixture(scope="session")
+def service(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Running]:
+    """One running service for the whole session; tests keep apart by names of their own."""
+    with running(tmp_path_factory.mktemp("service"), SPRT_MAX_BATCH="2000", SPRT_MAX_BODY_BYTES="200000") as started:
+        yield started
+
+
+@pytest.fixture(scope="session")
+def admin(service: Running) -> Iterator[httpx.Client]:
+    """A client that may do everything."""
+    with service.client() as client:
+        yield client
+
+
+@pytest.fixture(scope="session")
+def new_name() -> Callable[[str], str]:
+    """Names that no other test uses."""
+    numbers = itertools.count(1)
+    return lambda prefix: f"{prefix}-{next(numbers)}"
