@@ -34,5 +34,7 @@ def expected_version(request: Request) -> str | None:
     tag = given.strip()
     version = tag[1:-1]
     if tag != f'"{version}"' or not version.isdigit():
-        raise RequestProblem("version-moved", f"If-Match takes the ETag of the test as it was read; received {given!r}.")
+        raise RequestProblem(
+            "version-moved", f"If-Match takes the ETag of the test as it was read; received {given!r}."
+        )
     return version

@@ -13,7 +13,9 @@ from service.api.problems import RequestProblem
 from service.domain.errors import Fault
 
 Limit = Annotated[int, Field(ge=1, le=500, description="Rows on a page, at most 500.")]
-Cursor = Annotated[str | None, Field(max_length=500, description="Where the page begins: `next_cursor` of the one before.")]
+Cursor = Annotated[
+    str | None, Field(max_length=500, description="Where the page begins: `next_cursor` of the one before.")
+]
 
 
 def encoded(after: str | int) -> str:

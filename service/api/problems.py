@@ -42,28 +42,72 @@ class ProblemType:
 
 
 _TYPES = (
-    ProblemType("malformed-body", 400, "The body is not sound JSON", "The body is not JSON: Expecting value at line 1."),
+    ProblemType(
+        "malformed-body", 400, "The body is not sound JSON", "The body is not JSON: Expecting value at line 1."
+    ),
     ProblemType("key-required", 401, "A valid access key is required", "Send the header Authorization: Bearer <key>."),
-    ProblemType("role-required", 403, "The access key may not do this", "This needs the role engineer; the key has viewer."),
+    ProblemType(
+        "role-required", 403, "The access key may not do this", "This needs the role engineer; the key has viewer."
+    ),
     ProblemType("not-found", 404, "There is no such thing", "There is no test 'lot-7'."),
     ProblemType("method-not-allowed", 405, "The address does not take this method", "Method Not Allowed"),
-    ProblemType("plan-differs", 409, "The plan exists with other content", "The plan 'seal-leak' exists with other content."),
-    ProblemType("test-differs", 409, "The test exists with other content", "The test 'lot-7' exists with another plan."),
+    ProblemType(
+        "plan-differs", 409, "The plan exists with other content", "The plan 'seal-leak' exists with other content."
+    ),
+    ProblemType(
+        "test-differs", 409, "The test exists with other content", "The test 'lot-7' exists with another plan."
+    ),
     ProblemType("key-name-taken", 409, "The name of the access key is taken", "A valid access key is named 'line-2'."),
-    ProblemType("unit-repeated", 409, "A unit was counted already", "A unit may be counted once in a test.", "/observations/0/unit"),
-    ProblemType("test-closed", 409, "The test is closed", "The test 'lot-7' is closed and takes no further observations."),
-    ProblemType("in-progress", 409, "The first submission is still in progress", "A submission with the key 'a1' is in progress."),
+    ProblemType(
+        "unit-repeated",
+        409,
+        "A unit was counted already",
+        "A unit may be counted once in a test.",
+        "/observations/0/unit",
+    ),
+    ProblemType(
+        "test-closed", 409, "The test is closed", "The test 'lot-7' is closed and takes no further observations."
+    ),
+    ProblemType(
+        "in-progress",
+        409,
+        "The first submission is still in progress",
+        "A submission with the key 'a1' is in progress.",
+    ),
     ProblemType("version-moved", 412, "The state has moved on", "If-Match gave 3, its version is now 4."),
     ProblemType("body-too-large", 413, "The body is too large", "A body may have at most 8388608 bytes."),
-    ProblemType("media-type", 415, "The body must be JSON", "Send Content-Type: application/json; received text/plain."),
-    ProblemType("invalid-body", 422, "The body cannot be right", "The body does not have the form asked for; see errors.", "/values/17"),
-    ProblemType("invalid-parameter", 422, "A parameter cannot be right", "A parameter cannot be right; see errors.", "/limit"),
+    ProblemType(
+        "media-type", 415, "The body must be JSON", "Send Content-Type: application/json; received text/plain."
+    ),
+    ProblemType(
+        "invalid-body",
+        422,
+        "The body cannot be right",
+        "The body does not have the form asked for; see errors.",
+        "/values/17",
+    ),
+    ProblemType(
+        "invalid-parameter", 422, "A parameter cannot be right", "A parameter cannot be right; see errors.", "/limit"
+    ),
     ProblemType("invalid-plan", 422, "The plan cannot be right", "The plan cannot be right; see errors.", "/h1"),
     ProblemType("invalid-test", 422, "The test cannot be right", "The test names a plan that does not exist.", "/plan"),
-    ProblemType("invalid-observations", 422, "An observation cannot be right", "The submission is refused as a whole.", "/values/17"),
+    ProblemType(
+        "invalid-observations",
+        422,
+        "An observation cannot be right",
+        "The submission is refused as a whole.",
+        "/values/17",
+    ),
     ProblemType("invalid-key", 422, "The access key cannot be made", "The expiry must lie in the future."),
-    ProblemType("idempotency-key-reused", 422, "The idempotency key was used for something else", "The idempotency key 'a1' came before with another body."),
-    ProblemType("internal-error", 500, "The service failed", "The log of the service has the reason, under this request id."),
+    ProblemType(
+        "idempotency-key-reused",
+        422,
+        "The idempotency key was used for something else",
+        "The idempotency key 'a1' came before with another body.",
+    ),
+    ProblemType(
+        "internal-error", 500, "The service failed", "The log of the service has the reason, under this request id."
+    ),
     ProblemType("overloaded", 503, "Not at this moment", "Too many submissions are waiting; try again shortly."),
 )
 

@@ -32,9 +32,7 @@ class LoggedObservation:
     is_counted: bool
 
 
-def expanded(
-    family: Family, test: SequentialTest, submissions: Iterable[Submission]
-) -> Iterator[LoggedObservation]:
+def expanded(family: Family, test: SequentialTest, submissions: Iterable[Submission]) -> Iterator[LoggedObservation]:
     """Every observation of these submissions in order."""
     last_counted = test.state.decided.sequence if test.state.decided else test.state.sequence
     for submission in submissions:

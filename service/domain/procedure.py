@@ -163,7 +163,9 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
         return [Fault("/thresholds", 'are required for "given" boundaries')]
     faults = []
     if not -1e6 <= thresholds["accept"] < 0.0:  # noqa: PLR2004
-        faults.append(Fault("/thresholds/accept", f"must lie below 0 (at least -1e6); received {thresholds['accept']!r}"))
+        faults.append(
+            Fault("/thresholds/accept", f"must lie below 0 (at least -1e6); received {thresholds['accept']!r}")
+        )
     if not 0.0 < thresholds["reject"] <= 1e6:  # noqa: PLR2004
         faults.append(Fault("/thresholds/reject", f"must lie above 0 (at most 1e6); received {thresholds['reject']!r}"))
     return faults

@@ -96,7 +96,9 @@ def test_an_expired_key_is_401(admin: httpx.Client, service: Running, new_name: 
         pass
     statuses.add(httpx.get(f"{service.url}/v1/tests", headers=headers).status_code)
     assert 401 in statuses
-    past = admin.post("/v1/keys", json={"name": new_name("brief"), "role": "viewer", "expires_at": "2001-01-01T00:00:00Z"})
+    past = admin.post(
+        "/v1/keys", json={"name": new_name("brief"), "role": "viewer", "expires_at": "2001-01-01T00:00:00Z"}
+    )
     assert past.status_code == 422
 
 

@@ -109,7 +109,9 @@ def test_a_plan_that_cannot_be_right_names_the_field(
 def test_a_number_that_is_not_finite_is_refused_where_it_stands(
     admin: httpx.Client, new_name: Namer, number: str
 ) -> None:
-    body = f'{{"name": "{new_name("bad")}", "family": "bernoulli", "h0": {number}, "h1": 0.1, "alpha": 0.1, "beta": 0.1}}'
+    body = (
+        f'{{"name": "{new_name("bad")}", "family": "bernoulli", "h0": {number}, "h1": 0.1, "alpha": 0.1, "beta": 0.1}}'
+    )
     answer = admin.post("/v1/plans", content=body, headers={"Content-Type": "application/json"})
     assert answer.status_code == 422, answer.text
     assert pointers(answer) == ["/h0"]

@@ -79,7 +79,16 @@ def test_lists_filter_by_everything_at_once(admin: httpx.Client, new_name: Namer
 
 @pytest.mark.parametrize(
     "query",
-    ["limit=0", "limit=501", "cursor=!!", "cursor=WzFd", "decision=maybe", "label=x", "updated_after=noon", "colour=red"],
+    [
+        "limit=0",
+        "limit=501",
+        "cursor=!!",
+        "cursor=WzFd",
+        "decision=maybe",
+        "label=x",
+        "updated_after=noon",
+        "colour=red",
+    ],
 )
 def test_a_bad_filter_is_refused(admin: httpx.Client, query: str) -> None:
     answer = admin.get(f"/v1/tests?{query}")

@@ -157,9 +157,7 @@ def _check_batch(form: ObservationsForm, limit: int) -> None:
         raise RequestProblem("invalid-body", "The submission is too long; split it.", [fault])
 
 
-async def _command(
-    key: str, request: Request, access_key: AccessKey, idempotency_key: str | None
-) -> PostObservations:
+async def _command(key: str, request: Request, access_key: AccessKey, idempotency_key: str | None) -> PostObservations:
     strict = cast("StrictRequest", request)
     body = await request.body()
     return PostObservations(

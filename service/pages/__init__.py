@@ -1,0 +1,1 @@
+"""People look here: server-rendered pages. Nothing yet; the house keeps the room."""

@@ -1,0 +1,24 @@
+"""Settings: the environment, read into one frozen value."""
+
+from typing import Literal
+
+from pydantic import Field
+from pydantic_settings import BaseSettings, SettingsConfigDict
+
+
+class Settings(BaseSettings):
+    """Each field is the environment variable of the same name with the prefix SPRT_."""
+
+    model_config = SettingsConfigDict(env_prefix="SPRT_", frozen=True)
+
+    database_url: str = Field("sqlite:///sprt-monitor.sqlite3", description="SQLite file or PostgreSQL server.")
+    max_body_bytes: int = Field(8 * 1024 * 1024, ge=1024, description="Largest body of a request.")
+    max_batch: int = Field(100_000, ge=1, description="Most observations in one submission.")
+    queue_limit: int = Field(1000, ge=1, description="Submissions that may wait to be written.")
+    group_limit: int = Field(256, ge=1, description="Submissions committed together.")
+    log_level: Literal["DEBUG", "INFO", "WARNING", "ERROR"] = Field("INFO", description="Level of the log.")
+
+
+def read_settings() -> Settings:
+    """Read the environment now."""
+    return Settings()

@@ -1,0 +1,1 @@
+"""Rows and nothing else, on SQLite and PostgreSQL."""

@@ -1,0 +1,40 @@
+"""
+Connections.
+
+SQLite: write-ahead log, every commit on disk before it returns, foreign keys on. Transactions are begun by ourselves: a
+writing one says BEGIN IMMEDIATE, so that it waits for the lock at once instead of failing half-way.
+"""
+
+from sqlite3 import Connection as SqliteConnection
+
+from sqlalchemy import Connection, Engine, create_engine, event
+from sqlalchemy.engine import make_url
+
+LOCK_WAIT_SECONDS = 30.0
+WRITES = "sprt_writes"
+
+
+def create_engine_for(url: str) -> Engine:
+    """An engine for `sqlite:///file` or `postgresql://…`; nothing is opened yet."""
+    target = make_url(url)
+    if target.get_backend_name() == "sqlite":
+        engine = create_engine(target, connect_args={"timeout": LOCK_WAIT_SECONDS, "isolation_level": None})
+        event.listen(engine, "connect", _prepare_sqlite)
+        event.listen(engine, "begin", _begin_sqlite)
+        return engine
+    return create_engine(target.set(drivername="postgresql+psycopg"), pool_pre_ping=True)
+
+
+def is_sqlite(engine: Engine) -> bool:
+    """True for SQLite."""
+    return engine.dialect.name == "sqlite"
+
+
+def _prepare_sqlite(connection: SqliteConnection, _record: object) -> None:
+    for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON"):
+        connection.execute(f"PRAGMA {pragma}")
+
+
+def _begin_sqlite(connection: Connection) -> None:
+    writes = connection.get_execution_options().get(WRITES, False)
+    connection.exec_driver_sql("BEGIN IMMEDIATE" if writes else "BEGIN")

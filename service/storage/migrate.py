@@ -1,0 +1,93 @@
+"""The schema: which revision a database has, which this version knows, and how to get there."""
+
+import io
+from collections.abc import Callable
+from pathlib import Path
+
+from alembic import command
+from alembic.config import Config
+from alembic.runtime.migration import MigrationContext
+from alembic.script import ScriptDirectory
+from sqlalchemy import Connection, Engine, inspect, text
+
+from service.storage.engine import WRITES, is_sqlite
+
+# Any number that no other program on the same server locks by.
+ADVISORY_LOCK = 5_397_204_186
+
+
+class SchemaMismatch(Exception):  # noqa: N818 - named for what it says
+    """The database has another schema than this version knows; the text says what to do."""
+
+
+def head_revision() -> str:
+    """The newest revision that this version knows."""
+    return str(_scripts().get_current_head())
+
+
+def current_revision(engine: Engine) -> str | None:
+    """The revision of the database; None where it has none."""
+    with engine.connect() as connection:
+        return MigrationContext.configure(connection).get_current_revision()
+
+
+def is_empty(engine: Engine) -> bool:
+    """True for a database without a table."""
+    return not inspect(engine).get_table_names()
+
+
+def check_schema(engine: Engine) -> None:
+    """
+    Ask whether the database has the schema that this version knows.
+
+    Raises:
+        SchemaMismatch: It has none, an older or a newer one.
+    """
+    revision, head = current_revision(engine), head_revision()
+    if revision == head:
+        return
+    if revision is None:
+        raise SchemaMismatch(f"The database has no schema yet (wanted: {head}). Run: sprt-monitor migrate")
+    if revision in {script.revision for script in _scripts().walk_revisions()}:
+        raise SchemaMismatch(
+            f"The database has the older schema {revision} (wanted: {head}). Run: sprt-monitor migrate"
+        )
+    raise SchemaMismatch(
+        f"The database has the schema {revision}, which this version does not know (it knows {head}). "
+        "Install the newer version that migrated it: pip install --upgrade"
+    )
+
+
+def upgrade(engine: Engine, revision: str = "head") -> None:
+    """Bring the database up to a revision; processes that do so at once wait for each other."""
+    _move(engine, lambda config: command.upgrade(config, revision))
+
+
+def downgrade(engine: Engine, revision: str) -> None:
+    """Bring the database back to a revision."""
+    _move(engine, lambda config: command.downgrade(config, revision))
+
+
+def _move(engine: Engine, move: Callable[[Config], None]) -> None:
+    with engine.connect().execution_options(**{WRITES: True}) as connection, connection.begin():
+        if not is_sqlite(engine):
+            connection.execute(text("SELECT pg_advisory_xact_lock(:number)"), {"number": ADVISORY_LOCK})
+        move(_config(connection))
+
+
+def _scripts() -> ScriptDirectory:
+    return ScriptDirectory.from_config(_config())
+
+
+def _config(connection: Connection | None = None) -> Config:
+    config = Config(stdout=io.StringIO())
+    config.set_main_option("script_location", str(_location()).replace("%", "%%"))
+    config.attributes["connection"] = connection
+    return config
+
+
+def _location() -> Path:
+    """The scripts: beside the package in a checkout, inside it where it was installed from a wheel."""
+    package = Path(__file__).resolve().parents[1]
+    inside = package / "_migrations"
+    return inside if inside.is_dir() else package.parent / "migrations"

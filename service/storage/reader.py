@@ -1,0 +1,134 @@
+"""Reads, each in a transaction of its own."""
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any, NamedTuple
+
+from sqlalchemy import Engine, RowMapping, Select, exists, func, select
+
+from service.domain.access import AccessKey
+from service.domain.plan import Plan
+from service.domain.sequential_test import SequentialTest, SubjectKind, Submission
+from service.domain.state import Decision
+from service.storage import rows, tables
+
+# A page of the log is small enough to hold, whatever the submissions weigh.
+LOG_PAGE = 200
+
+
+@dataclass(frozen=True)
+class TestFilters:
+    """What a list of tests may be narrowed by; all that is given must match."""
+
+    __test__ = False
+
+    decision: Decision | None = None
+    kind: SubjectKind | None = None
+    subject: str | None = None
+    plan: str | None = None
+    labels: tuple[tuple[str, str], ...] = ()
+    updated_after: datetime | None = None
+
+
+class Count(NamedTuple):
+    """Tests of one kind, status and decision."""
+
+    kind: str
+    status: str
+    decision: str
+    count: int
+
+
+class Reader:
+    """Typed answers from the database; None says that there is no such row."""
+
+    def __init__(self, engine: Engine) -> None:
+        self._engine = engine
+
+    def key_with_digest(self, digest: str) -> AccessKey | None:
+        """The access key with this digest."""
+        row = self._first(select(tables.api_keys).where(tables.api_keys.c.digest == digest))
+        return rows.key_of(row) if row is not None else None
+
+    def keys(self) -> list[AccessKey]:
+        """Every key ever made, oldest first."""
+        order = (tables.api_keys.c.created_at, tables.api_keys.c.id)
+        return [rows.key_of(row) for row in self._all(select(tables.api_keys).order_by(*order))]
+
+    def plan(self, name: str) -> Plan | None:
+        """The plan of this name."""
+        row = self._first(select(tables.plans).where(tables.plans.c.name == name))
+        return rows.plan_of(row) if row is not None else None
+
+    def plans(self, after: str | None, limit: int) -> list[Plan]:
+        """Plans by name, those after `after`."""
+        found = select(tables.plans).order_by(tables.plans.c.name).limit(limit)
+        if after is not None:
+            found = found.where(tables.plans.c.name > after)
+        return [rows.plan_of(row) for row in self._all(found)]
+
+    def test(self, key: str) -> SequentialTest | None:
+        """The test of this key."""
+        row = self._first(select(tables.tests).where(tables.tests.c.key == key))
+        return rows.test_of(row) if row is not None else None
+
+    def tests(self, filters: TestFilters, after: str | None, limit: int) -> list[SequentialTest]:
+        """Tests by key that match the filters, those after `after`."""
+        found = _filtered(select(tables.tests), filters).order_by(tables.tests.c.key).limit(limit)
+        if after is not None:
+            found = found.where(tables.tests.c.key > after)
+        return [rows.test_of(row) for row in self._all(found)]
+
+    def submissions(self, test: str, after_sequence: int = 0) -> Iterator[Submission]:
+        """The log of a test in order, from the submission that holds the observation after `after_sequence`."""
+        log = tables.submissions.c
+        while True:
+            page = self._all(
+                select(tables.submissions)
+                .where(log.test == test, log.last_sequence > after_sequence)
+                .order_by(log.first_sequence)
+                .limit(LOG_PAGE)
+            )
+            for row in page:
+                yield rows.submission_of(row)
+            if len(page) < LOG_PAGE:
+                return
+            after_sequence = page[-1]["last_sequence"]
+
+    def counts(self) -> list[Count]:
+        """How many tests there are of each kind, status and decision."""
+        by = (tables.tests.c.subject_kind, tables.tests.c.status, tables.tests.c.decision)
+        with self._engine.connect() as connection:
+            return [Count(*row) for row in connection.execute(select(*by, func.count()).group_by(*by))]
+
+    def _first(self, found: Select[Any]) -> RowMapping | None:
+        with self._engine.connect() as connection:
+            return connection.execute(found).mappings().first()
+
+    def _all(self, found: Select[Any]) -> list[RowMapping]:
+        with self._engine.connect() as connection:
+            return list(connection.execute(found).mappings())
+
+
+def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
+    column, labels = tables.tests.c, tables.test_labels
+    equal = {
+        column.decision: filters.decision,
+        column.subject_kind: filters.kind,
+        column.subject_name: filters.subject,
+        column.plan: filters.plan,
+    }
+    for which, value in equal.items():
+        if value is not None:
+            found = found.where(which == str(value))
+    for name, value in filters.labels:
+        alias = labels.alias()
+        found = found.where(
+            exists()
+            .where(alias.c.test == column.key, alias.c.name == name, alias.c.value == value)
+            .correlate(tables.tests)
+        )
+    if filters.updated_after is not None:
+        found = found.where(column.updated_at > filters.updated_after)
+    return found

@@ -1,0 +1,159 @@
+"""Rows to domain values and back."""
+
+import json
+from typing import Any
+
+from sqlalchemy import RowMapping
+
+from service.domain.access import AccessKey, Role
+from service.domain.plan import Plan
+from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
+from service.domain.state import Cause, Decided, Decision, State, Sum
+
+Row = dict[str, Any]
+
+
+def row_of_state(state: State) -> Row:
+    """The columns that tests and submissions share."""
+    decided = state.decided
+    return {
+        "sequence": state.sequence,
+        "sample_number": state.sample_number,
+        "exposure": state.exposure.high,
+        "exposure_low": state.exposure.low,
+        "total": state.total.high,
+        "total_low": state.total.low,
+        "log_likelihood_ratio": state.log_likelihood_ratio,
+        "decision": state.decision.value,
+        "decided_sequence": decided.sequence if decided else None,
+        "decided_sample_number": decided.sample_number if decided else None,
+        "decided_exposure": decided.exposure if decided else None,
+        "decided_at": decided.at if decided else None,
+        "decided_cause": decided.cause.value if decided else None,
+        "overrun": state.overrun,
+    }
+
+
+def state_of(row: RowMapping) -> State:
+    """The state in a row of tests or submissions."""
+    return State(
+        sequence=row["sequence"],
+        sample_number=row["sample_number"],
+        exposure=Sum(row["exposure"], row["exposure_low"]),
+        total=Sum(row["total"], row["total_low"]),
+        log_likelihood_ratio=row["log_likelihood_ratio"],
+        decision=Decision(row["decision"]),
+        decided=_decided_of(row),
+        overrun=row["overrun"],
+    )
+
+
+def row_of_test(test: SequentialTest) -> Row:
+    """A row of tests."""
+    return {
+        "key": test.key,
+        "plan": test.plan,
+        "subject_kind": test.subject.kind.value,
+        "subject_name": test.subject.name,
+        "labels": json.dumps(dict(test.labels), ensure_ascii=False, sort_keys=True),
+        "status": test.status.value,
+        "version": test.version,
+        "registered_at": test.registered_at,
+        "registered_by": test.registered_by,
+        "updated_at": test.updated_at,
+        **row_of_state(test.state),
+    }
+
+
+def test_of(row: RowMapping) -> SequentialTest:
+    """The test in a row."""
+    return SequentialTest(
+        key=row["key"],
+        plan=row["plan"],
+        subject=Subject(SubjectKind(row["subject_kind"]), row["subject_name"]),
+        labels=json.loads(row["labels"]),
+        status=Status(row["status"]),
+        version=row["version"],
+        registered_at=row["registered_at"],
+        registered_by=row["registered_by"],
+        updated_at=row["updated_at"],
+        state=state_of(row),
+    )
+
+
+def row_of_submission(submission: Submission) -> Row:
+    """A row of submissions."""
+    return {
+        "test": submission.test,
+        "first_sequence": submission.first_sequence,
+        "last_sequence": submission.last_sequence,
+        "body": submission.body,
+        "body_digest": submission.body_digest,
+        "received_at": submission.received_at,
+        "actor": submission.actor,
+        "idempotency_key": submission.idempotency_key,
+        "version": submission.version,
+        **row_of_state(submission.state),
+    }
+
+
+def submission_of(row: RowMapping) -> Submission:
+    """The submission in a row."""
+    return Submission(
+        test=row["test"],
+        first_sequence=row["first_sequence"],
+        last_sequence=row["last_sequence"],
+        body=row["body"],
+        body_digest=row["body_digest"],
+        received_at=row["received_at"],
+        actor=row["actor"],
+        idempotency_key=row["idempotency_key"],
+        version=row["version"],
+        state=state_of(row),
+    )
+
+
+def row_of_plan(plan: Plan) -> Row:
+    """A row of plans."""
+    return {
+        "name": plan.name,
+        "document": plan.document,
+        "fingerprint": plan.fingerprint,
+        "created_at": plan.created_at,
+        "created_by": plan.created_by,
+    }
+
+
+def plan_of(row: RowMapping) -> Plan:
+    """The plan in a row."""
+    return Plan(**row)
+
+
+def row_of_key(key: AccessKey) -> Row:
+    """A row of api_keys."""
+    return {
+        "id": key.id,
+        "name": key.name,
+        "role": key.role.value,
+        "digest": key.digest,
+        "created_at": key.created_at,
+        "expires_at": key.expires_at,
+        "revoked_at": key.revoked_at,
+    }
+
+
+def key_of(row: RowMapping) -> AccessKey:
+    """The key in a row."""
+    return AccessKey(**{**row, "role": Role(row["role"])})
+
+
+def _decided_of(row: RowMapping) -> Decided | None:
+    if row["decided_sequence"] is None:
+        return None
+    return Decided(
+        sequence=row["decided_sequence"],
+        sample_number=row["decided_sample_number"],
+        exposure=row["decided_exposure"],
+        at=row["decided_at"],
+        cause=Cause(row["decided_cause"]),
+    )

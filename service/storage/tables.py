@@ -1,0 +1,192 @@
+"""
+The tables. Private to storage.
+
+Every key of a growing table begins with the test, so that the log can be partitioned by test.
+"""
+
+from datetime import UTC, datetime
+from typing import Any
+
+from sqlalchemy import (
+    BigInteger,
+    CheckConstraint,
+    Column,
+    DateTime,
+    Dialect,
+    Float,
+    ForeignKeyConstraint,
+    Index,
+    MetaData,
+    PrimaryKeyConstraint,
+    String,
+    Table,
+    Text,
+    TypeDecorator,
+    UniqueConstraint,
+    text,
+)
+from sqlalchemy.types import TypeEngine
+
+metadata = MetaData(
+    naming_convention={
+        "pk": "pk_%(table_name)s",
+        "fk": "fk_%(table_name)s_%(referred_table_name)s",
+        "uq": "uq_%(table_name)s_%(column_0_N_name)s",
+        "ck": "ck_%(table_name)s_%(constraint_name)s",
+        "ix": "ix_%(table_name)s_%(column_0_N_name)s",
+    }
+)
+
+
+# Names and keys sort by their code points on both databases.
+KEY = String(100).with_variant(String(100, collation="C"), "postgresql")
+
+
+class UtcTime(TypeDecorator[datetime]):
+    """A moment in UTC with microseconds: timestamptz on PostgreSQL, sortable ISO 8601 text ending in Z on SQLite."""
+
+    impl = DateTime(timezone=True)
+    cache_ok = True
+
+    def load_dialect_impl(self, dialect: Dialect) -> TypeEngine[Any]:
+        """Text on SQLite, which has no type for moments."""
+        return dialect.type_descriptor(String(27) if dialect.name == "sqlite" else DateTime(timezone=True))
+
+    def process_bind_param(self, value: datetime | None, dialect: Dialect) -> Any:  # noqa: ANN401 - as the driver takes it
+        """Refuse moments without a zone."""
+        if value is None:
+            return None
+        if value.tzinfo is None:
+            raise ValueError(f"a moment needs a time zone; received {value!r}")  # noqa: TRY003 - a fault of the program
+        moment = value.astimezone(UTC)
+        return moment.strftime("%Y-%m-%dT%H:%M:%S.%fZ") if dialect.name == "sqlite" else moment
+
+    def process_result_value(self, value: Any, dialect: Dialect) -> datetime | None:  # noqa: ANN401
+        """Always in UTC."""
+        if value is None:
+            return None
+        return datetime.fromisoformat(value) if isinstance(value, str) else value.astimezone(UTC)  # type: ignore[no-any-return]
+
+
+def _state_columns() -> list[Column[Any] | CheckConstraint]:
+    """What a test and each entry of its log share: the state after them."""
+    return [
+        Column("sequence", BigInteger, nullable=False),
+        Column("sample_number", BigInteger, nullable=False),
+        Column("exposure", Float(53), nullable=False),
+        Column("exposure_low", Float(53), nullable=False),
+        Column("total", Float(53), nullable=False),
+        Column("total_low", Float(53), nullable=False),
+        Column("log_likelihood_ratio", Float(53), nullable=False),
+        Column("decision", String(8), nullable=False),
+        Column("decided_sequence", BigInteger),
+        Column("decided_sample_number", BigInteger),
+        Column("decided_exposure", Float(53)),
+        Column("decided_at", UtcTime),
+        Column("decided_cause", String(10)),
+        Column("overrun", BigInteger, nullable=False),
+        CheckConstraint("decision IN ('continue', 'accept', 'reject')", name="decision"),
+        CheckConstraint("decided_cause IN ('boundary', 'truncation')", name="decided_cause"),
+    ]
+
+
+api_keys = Table(
+    "api_keys",
+    metadata,
+    Column("id", String(32), nullable=False),
+    Column("name", KEY, nullable=False),
+    Column("role", String(13), nullable=False),
+    Column("digest", String(64), nullable=False),
+    Column("created_at", UtcTime, nullable=False),
+    Column("expires_at", UtcTime),
+    Column("revoked_at", UtcTime),
+    PrimaryKeyConstraint("id"),
+    UniqueConstraint("digest"),
+    CheckConstraint("role IN ('viewer', 'collector', 'engineer', 'administrator')", name="role"),
+    Index(
+        "uq_api_keys_valid_name",
+        "name",
+        unique=True,
+        sqlite_where=text("revoked_at IS NULL"),
+        postgresql_where=text("revoked_at IS NULL"),
+    ),
+)
+
+plans = Table(
+    "plans",
+    metadata,
+    Column("name", KEY, nullable=False),
+    Column("document", Text, nullable=False),
+    Column("fingerprint", String(64), nullable=False),
+    Column("created_at", UtcTime, nullable=False),
+    Column("created_by", String(100), nullable=False),
+    PrimaryKeyConstraint("name"),
+)
+
+tests = Table(
+    "tests",
+    metadata,
+    Column("key", KEY, nullable=False),
+    Column("plan", KEY, nullable=False),
+    Column("subject_kind", String(10), nullable=False),
+    Column("subject_name", String(200), nullable=False),
+    Column("labels", Text, nullable=False),
+    Column("status", String(6), nullable=False),
+    Column("version", BigInteger, nullable=False),
+    Column("registered_at", UtcTime, nullable=False),
+    Column("registered_by", String(100), nullable=False),
+    Column("updated_at", UtcTime, nullable=False),
+    *_state_columns(),
+    PrimaryKeyConstraint("key"),
+    ForeignKeyConstraint(["plan"], ["plans.name"]),
+    CheckConstraint("subject_kind IN ('lot', 'experiment')", name="subject_kind"),
+    CheckConstraint("status IN ('open', 'closed')", name="status"),
+    Index(None, "decision", "key"),
+    Index(None, "plan", "key"),
+    Index(None, "subject_name", "key"),
+    Index(None, "updated_at"),
+    Index(None, "subject_kind", "status", "decision"),
+)
+
+test_labels = Table(
+    "test_labels",
+    metadata,
+    Column("test", KEY, nullable=False),
+    Column("name", KEY, nullable=False),
+    Column("value", String(200), nullable=False),
+    PrimaryKeyConstraint("test", "name"),
+    ForeignKeyConstraint(["test"], ["tests.key"]),
+    Index(None, "name", "value", "test"),
+    sqlite_with_rowid=False,
+)
+
+submissions = Table(
+    "submissions",
+    metadata,
+    Column("test", KEY, nullable=False),
+    Column("first_sequence", BigInteger, nullable=False),
+    Column("last_sequence", BigInteger, nullable=False),
+    Column("body", Text, nullable=False),
+    Column("body_digest", String(64), nullable=False),
+    Column("received_at", UtcTime, nullable=False),
+    Column("actor", String(100), nullable=False),
+    Column("idempotency_key", String(255)),
+    Column("version", BigInteger, nullable=False),
+    *_state_columns(),
+    PrimaryKeyConstraint("test", "first_sequence"),
+    ForeignKeyConstraint(["test"], ["tests.key"]),
+    UniqueConstraint("test", "idempotency_key"),
+    CheckConstraint("first_sequence BETWEEN 1 AND last_sequence", name="sequence_order"),
+    sqlite_with_rowid=False,
+)
+
+units = Table(
+    "units",
+    metadata,
+    Column("test", KEY, nullable=False),
+    Column("unit", String(200), nullable=False),
+    Column("sequence", BigInteger, nullable=False),
+    PrimaryKeyConstraint("test", "unit"),
+    ForeignKeyConstraint(["test"], ["tests.key"]),
+    sqlite_with_rowid=False,
+)

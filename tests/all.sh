@@ -1,0 +1,21 @@
+#!/usr/bin/env bash
+# Runs every check in a fresh environment, as continuous integration does. Needs Python 3.11 or newer and the network.
+# Further arguments go to pytest: `bash tests/all.sh -m benchmark` runs the benchmarks instead.
+set -euo pipefail
+cd "$(dirname "$0")/.."
+
+python3 -c 'import sys; sys.exit(sys.version_info < (3, 11))' || { echo "Python 3.11 or newer is needed" >&2; exit 1; }
+rm -rf .venv-tests
+python3 -m venv .venv-tests
+.venv-tests/bin/python -m pip install --quiet --disable-pip-version-check -c .ci/constraints.txt --editable '.[test]'
+export PATH="$PWD/.venv-tests/bin:$PATH"
+
+echo "== style"
+ruff check .
+ruff format --check .
+echo "== types"
+mypy
+echo "== imports keep to the house"
+lint-imports
+echo "== tests"
+python -m pytest "$@"
