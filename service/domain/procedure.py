@@ -121,7 +121,7 @@ def _faults_of(content: Content) -> list[Fault]:
         *_faults_of_risks(content),
         *_faults_of_boundaries(content),
         *_faults_of_known(family, content.get("known", {})),
-        *_faults_of_truncation(family, content.get("truncation", {})),
+        *_faults_of_truncation(family, content.get("truncation")),
     ]
 
 
@@ -181,8 +181,8 @@ def _faults_of_known(family: Family, known: Mapping[str, float]) -> list[Fault]:
     return faults
 
 
-def _faults_of_truncation(family: Family, truncation: Mapping[str, float]) -> list[Fault]:
-    if not truncation:
+def _faults_of_truncation(family: Family, truncation: Mapping[str, float] | None) -> list[Fault]:
+    if truncation is None:
         return []
     axis = "exposure" if family.has_exposure else "sample_number"
     allowed = {axis, "failures"} if family.is_watched_in_time else {axis}

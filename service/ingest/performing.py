@@ -184,7 +184,7 @@ def _new_units(command: PostObservations, writer: Writer, first_sequence: int) -
     positions = _positions_of_units(command.document)
     counts = Counter(unit for unit, _ in positions)
     units = {unit: first_sequence + position for unit, position in positions}
-    known = writer.known_units(command.test, units) if units else {}
+    known = writer.known_units(command.test, list(units)) if units else {}
     faults = [
         Fault(f"/observations/{position}/unit", f"unit {unit!r} {_reason(unit, known)}")
         for unit, position in positions

@@ -36,6 +36,21 @@ def is_empty(engine: Engine) -> bool:
     return not inspect(engine).get_table_names()
 
 
+def check_known(engine: Engine) -> None:
+    """
+    Ask whether the database has no schema yet or one that this version knows how to bring up to date.
+
+    Raises:
+        SchemaMismatch: It was migrated by a newer version.
+    """
+    revision, head = current_revision(engine), head_revision()
+    if revision is not None and revision not in {script.revision for script in _scripts().walk_revisions()}:
+        raise SchemaMismatch(
+            f"The database has the schema {revision}, which this version does not know (it knows {head}). "
+            "Install the version that migrated it, or a newer one."
+        )
+
+
 def check_schema(engine: Engine) -> None:
     """
     Ask whether the database has the schema that this version knows.
@@ -43,19 +58,11 @@ def check_schema(engine: Engine) -> None:
     Raises:
         SchemaMismatch: It has none, an older or a newer one.
     """
+    check_known(engine)
     revision, head = current_revision(engine), head_revision()
-    if revision == head:
-        return
-    if revision is None:
-        raise SchemaMismatch(f"The database has no schema yet (wanted: {head}). Run: sprt-monitor migrate")
-    if revision in {script.revision for script in _scripts().walk_revisions()}:
-        raise SchemaMismatch(
-            f"The database has the older schema {revision} (wanted: {head}). Run: sprt-monitor migrate"
-        )
-    raise SchemaMismatch(
-        f"The database has the schema {revision}, which this version does not know (it knows {head}). "
-        "Install the newer version that migrated it: pip install --upgrade"
-    )
+    if revision != head:
+        has = "no schema yet" if revision is None else f"the older schema {revision}"
+        raise SchemaMismatch(f"The database has {has} (wanted: {head}). Run: sprt-monitor migrate")
 
 
 def upgrade(engine: Engine, revision: str = "head") -> None:

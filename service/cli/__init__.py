@@ -1,0 +1,25 @@
+"""The command line, `sprt-monitor`. Each command imports only what it needs, so that all start quickly."""
+
+import sys
+
+import typer
+
+from service.cli import demo, keys, load, migrate, serve
+
+app = typer.Typer(
+    name="sprt-monitor",
+    help="Sequential probability ratio tests as a service: post results, learn whether sampling may stop.",
+    no_args_is_help=True,
+    pretty_exceptions_enable=False,
+)
+app.command("serve")(serve.serve)
+app.command("demo")(demo.demo)
+app.command("migrate")(migrate.migrate)
+app.command("load")(load.load)
+app.add_typer(keys.app, name="keys")
+
+
+def run() -> None:
+    """The entry point."""
+    sys.stdout.reconfigure(errors="replace")  # type: ignore[union-attr]
+    app()

@@ -1,0 +1,4 @@
+"""Placeholder."""
+
+def demo() -> None:
+    """x"""

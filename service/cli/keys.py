@@ -1,0 +1,84 @@
+"""Access keys: make, list, revoke."""
+
+from datetime import datetime, timedelta
+from typing import TYPE_CHECKING, Annotated, cast
+
+import typer
+
+from service.cli.failing import clear_failures, fail
+from service.domain.access import AccessKey, Role
+
+if TYPE_CHECKING:
+    from sqlalchemy import Engine
+
+    from service.ingest.commands import IssuedKey
+
+app = typer.Typer(help="Access keys: make, list, revoke.", no_args_is_help=True)
+
+LONGEST_NAME = 100
+
+
+@app.command()
+def create(
+    role: Annotated[Role, typer.Option(help="What the key may do; each role may do all that the ones before it may.")],
+    name: Annotated[str, typer.Option(help="Who or what carries it; it stands in the records.")],
+    expires_in_days: Annotated[float | None, typer.Option(min=0.0, help="Ends by itself after so many days.")] = None,
+) -> None:
+    """Make a key and print it, and nothing else, on standard output. It is shown this once."""
+    import re
+
+    from service.ingest.commands import CreateKey
+    from service.ingest.road import perform_now, utc_now
+
+    if not re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9._-]{0,99}", name):
+        raise fail(f"--name: letters, digits, '.', '_' and '-', at most {LONGEST_NAME}; received {name!r}")
+    expires_at = utc_now() + timedelta(days=expires_in_days) if expires_in_days is not None else None
+    with clear_failures():
+        issued = cast("IssuedKey", perform_now(_engine(), CreateKey(name, role, expires_at)))
+    typer.echo(issued.secret)
+
+
+@app.command("list")
+def list_keys() -> None:
+    """Every key that was ever made; never a secret."""
+    from rich.console import Console
+    from rich.table import Table
+
+    from service.ingest.road import utc_now
+    from service.storage.reader import Reader
+
+    with clear_failures():
+        keys = Reader(_engine()).keys()
+    table = Table("name", "role", "created", "expires", "state")
+    for key in keys:
+        table.add_row(key.name, key.role, _minute(key.created_at), _minute(key.expires_at), _state(key, utc_now()))
+    Console().print(table)
+
+
+@app.command()
+def revoke(name: Annotated[str, typer.Argument(help="Name of the key.")]) -> None:
+    """End a key at once; the record of it stays."""
+    from service.ingest.commands import RevokeKey
+    from service.ingest.road import perform_now
+
+    with clear_failures():
+        perform_now(_engine(), RevokeKey(name))
+    typer.echo(f"The key {name!r} is revoked.", err=True)
+
+
+def _engine() -> "Engine":
+    """The database, set up if it is a brand-new SQLite file."""
+    from service.cli.serve import prepared_engine
+    from service.settings import read_settings
+
+    return prepared_engine(read_settings().database_url)
+
+
+def _minute(moment: datetime | None) -> str:
+    return moment.strftime("%Y-%m-%d %H:%M UTC") if moment else ""
+
+
+def _state(key: AccessKey, now: datetime) -> str:
+    if key.revoked_at is not None:
+        return f"revoked {_minute(key.revoked_at)}"
+    return "valid" if key.is_valid(now) else "expired"

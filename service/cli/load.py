@@ -1,0 +1,4 @@
+"""Placeholder."""
+
+def load() -> None:
+    """x"""
