@@ -1,4 +1,239 @@
-"""Placeholder."""
+"""
+A factory of its own: the Brackwater pump works, one morning.
 
-def demo() -> None:
-    """x"""
+Four questions of four families are asked at once; their results are invented with a fixed seed and posted one small
+submission after another, as testers would.
+"""
+
+import os
+import random
+import socket
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from service.cli.failing import fail
+
+if TYPE_CHECKING:
+    from rich.console import Console
+
+    from service.cli.client import ServiceClient
+
+SEED = 20_413
+START_LIMIT_SECONDS = 30.0
+
+
+@dataclass(frozen=True)
+class Story:
+    """One question of the factory: its plan, its subject, and where its results come from."""
+
+    plan: dict[str, Any]
+    key: str
+    subject: dict[str, str]
+    labels: dict[str, str]
+    question: str
+    unit: str
+    results: Iterator[list[dict[str, Any]]]
+
+
+def demo(
+    port: Annotated[int, typer.Option(min=0, max=65535, help="Port to listen on; 0 finds a free one.")] = 0,
+    quick: Annotated[bool, typer.Option("--quick", help="No pauses, and stop after the decisions.")] = False,
+) -> None:
+    """Start the service on a temporary database, let an invented factory post its results, and watch it decide."""
+    from rich.console import Console
+
+    from service.cli.client import ServiceClient
+
+    console = Console()
+    with tempfile.TemporaryDirectory(prefix="sprt-demo-") as folder:
+        database_url = f"sqlite:///{Path(folder) / 'demo.sqlite3'}"
+        key = _make_key(database_url)
+        port = port or _free_port()
+        url = f"http://127.0.0.1:{port}"
+        with _serving(port, database_url) as process:
+            _wait(url, process)
+            client = ServiceClient(url, key)
+            _play(console, client, pause_seconds=0.0 if quick else 0.04)
+            if not quick:
+                _leave_up(console, url, key, process)
+
+
+def _play(console: "Console", client: "ServiceClient", pause_seconds: float) -> None:
+    """Register everything, then post in turn until all is decided."""
+    console.print("[bold]The Brackwater pump works, one morning.[/bold] Four questions, agreed risks, results as they come.\n")
+    running = _stories(random.Random(SEED))
+    for story in running:
+        client.post("/v1/plans", story.plan)
+        registration = {"key": story.key, "plan": story.plan["name"], "subject": story.subject, "labels": story.labels}
+        client.post("/v1/tests", registration)
+        console.print(f"  [cyan]{story.key}[/cyan]  {story.question}")
+    console.print()
+    while running:
+        for story in list(running):
+            state = client.post(f"/v1/tests/{story.key}/observations", {"observations": next(story.results)})
+            if state["decision"] != "continue":
+                running.remove(story)
+                _tell(console, story, state)
+        time.sleep(pause_seconds)
+
+
+def _tell(console: "Console", story: Story, state: dict[str, Any]) -> None:
+    """The decision in plain words."""
+    accepted = state["decision"] == "accept"
+    colour, word = ("green", "accepted") if accepted else ("red", "rejected")
+    family = story.plan["family"]
+    used = f"{state['sample_number']} {story.unit}"
+    seen = {
+        "bernoulli": f"{state['total']} of them leaking",
+        "poisson": f"{state['total']} voids in {state['exposure'] or 0:.1f} dm²",
+        "exponential": f"{state['total']} failures in {state['exposure'] or 0:.0f} h",
+        "normal": f"mean {state['total'] / state['sample_number']:.3f} mm",
+    }[family]
+    evidence = f"evidence {state['log_likelihood_ratio']:+.2f}"
+    console.print(f"[bold {colour}]{word:>9}[/bold {colour}]  {story.key}  after {used}: {seen}, {evidence}")
+
+
+def _stories(source: random.Random) -> list[Story]:
+    """Four questions; every stream of results is endless, the decision ends it."""
+    risks = {"alpha": 0.05, "beta": 0.10}
+    return [
+        Story(
+            plan={"name": "gland-leak", "family": "bernoulli", "h0": 0.02, "h1": 0.10, **risks},
+            key="glands-0713",
+            subject={"kind": "lot", "name": "Gland seals 0713"},
+            labels={"cell": "sealing"},
+            question="May lot 0713 of gland seals go out? Good at 2 % leaking, bad at 10 %.",
+            unit="seals",
+            results=_one_by_one({"value": int(source.random() < 0.012)} for _ in _for_ever()),  # noqa: PLR2004
+        ),
+        Story(
+            plan={"name": "casting-voids", "family": "poisson", "h0": 0.4, "h1": 1.2, **risks},
+            key="housings-88",
+            subject={"kind": "lot", "name": "Housings, melt 88"},
+            labels={"cell": "foundry"},
+            question="Are the housings of melt 88 sound? Good at 0.4 voids per dm², bad at 1.2.",
+            unit="housings",
+            results=_one_by_one(_void_count(source) for _ in _for_ever()),
+        ),
+        Story(
+            plan={"name": "motor-life", "family": "exponential", "h0": 900.0, "h1": 300.0, **risks},
+            key="motor-mk4",
+            subject={"kind": "experiment", "name": "Motor Mk 4, endurance bench"},
+            labels={"cell": "bench 2"},
+            question="Does the new motor live 900 h on average, or only 300 h?",
+            unit="reports",
+            results=_one_by_one(_bench_report(source) for _ in _for_ever()),
+        ),
+        Story(
+            plan={
+                "name": "shaft-length",
+                "family": "normal",
+                "h0": 240.0,
+                "h1": 240.15,
+                "known": {"sigma": 0.2},
+                **risks,
+            },
+            key="lathe-5",
+            subject={"kind": "experiment", "name": "Lathe 5 after the tool change"},
+            labels={"cell": "turning"},
+            question="Has lathe 5 drifted from 240.00 mm to 240.15 mm? Its spread is 0.2 mm.",
+            unit="shafts",
+            results=_one_by_one({"value": round(source.gauss(240.13, 0.2), 3)} for _ in _for_ever()),
+        ),
+    ]
+
+
+def _void_count(source: random.Random) -> dict[str, Any]:
+    """One housing: its inspected area, and voids at a rate of 1.1 per square decimetre."""
+    area = round(source.uniform(0.8, 1.6), 2)
+    count, reach = 0, source.expovariate(1.1)
+    while reach < area:
+        count += 1
+        reach += source.expovariate(1.1)
+    return {"value": count, "exposure": area}
+
+
+def _bench_report(source: random.Random) -> dict[str, Any]:
+    """One report of the bench: 24 h without a failure, or the hours until one."""
+    hours = source.expovariate(1 / 1100)
+    shift = 24.0
+    return {"time": round(min(hours, shift), 2), "failed": hours < shift}
+
+
+def _one_by_one(results: Iterator[dict[str, Any]]) -> Iterator[list[dict[str, Any]]]:
+    for result in results:
+        yield [result]
+
+
+def _for_ever() -> Iterator[None]:
+    while True:
+        yield None
+
+
+def _make_key(database_url: str) -> str:
+    """An engineer's key on the new database."""
+    made = subprocess.run(
+        [sys.executable, "-m", "service", "keys", "create", "--role", "engineer", "--name", "demo"],
+        env={**os.environ, "SPRT_DATABASE_URL": database_url},
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+    if made.returncode != 0:
+        raise fail(f"The demo could not make a key: {made.stderr.strip()}")
+    return made.stdout.strip()
+
+
+def _free_port() -> int:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        return int(probe.getsockname()[1])
+
+
+@contextmanager
+def _serving(port: int, database_url: str) -> Iterator["subprocess.Popen[bytes]"]:
+    process = subprocess.Popen(
+        [sys.executable, "-m", "service", "serve", "--port", str(port)],
+        env={**os.environ, "SPRT_DATABASE_URL": database_url},
+        stderr=subprocess.DEVNULL,
+    )
+    try:
+        yield process
+    finally:
+        process.terminate()
+        process.wait()
+
+
+def _wait(url: str, process: "subprocess.Popen[bytes]") -> None:
+    """Until the service is ready."""
+    import httpx
+
+    deadline = time.monotonic() + START_LIMIT_SECONDS
+    while time.monotonic() < deadline and process.poll() is None:
+        try:
+            if httpx.get(f"{url}/readyz", trust_env=False).status_code == httpx.codes.OK:
+                return
+        except httpx.TransportError:
+            time.sleep(0.05)
+    raise fail("The service did not start; is the port free?")
+
+
+def _leave_up(console: "Console", url: str, key: str, process: "subprocess.Popen[bytes]") -> None:
+    console.print("\nThe service stays up until Ctrl-C, with the key of an engineer. Look at:\n")
+    header = f'-H "Authorization: Bearer {key}"'
+    for path in ("/v1/tests", "/v1/tests/motor-mk4", "/v1/tests/glands-0713/path?points=20", "/v1/summary"):
+        console.print(f"  curl -s {header} '{url}{path}'", soft_wrap=True, highlight=False)
+    console.print(f"\nThe whole interface is described at {url}/openapi.json", highlight=False)
+    try:
+        process.wait()
+    except KeyboardInterrupt:
+        console.print("\nStopped; the temporary database is gone.")

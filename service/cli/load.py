@@ -1,4 +1,135 @@
-"""Placeholder."""
+"""Load a file of observations into a test."""
 
-def load() -> None:
-    """x"""
+import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
+from enum import StrEnum
+from pathlib import Path
+from typing import IO, TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from service.cli.failing import fail
+
+if TYPE_CHECKING:
+    from service.cli.client import Refused, ServiceClient
+    from service.cli.files import Chunk
+
+
+class Format(StrEnum):
+    """How a file is written."""
+
+    CSV = "csv"
+    NDJSON = "ndjson"
+
+
+SUFFIXES = {".csv": Format.CSV, ".ndjson": Format.NDJSON, ".jsonl": Format.NDJSON}
+
+
+def load(
+    file: Annotated[str, typer.Argument(help="CSV with a header, or NDJSON; - reads standard input.")],
+    test: Annotated[str, typer.Option(help="Key of the test.")],
+    key: Annotated[str, typer.Option(envvar="SPRT_KEY", help="Access key of a collector or wider.")],
+    url: Annotated[str, typer.Option(envvar="SPRT_URL", help="Address of the service.")] = "http://127.0.0.1:8000",
+    chunk: Annotated[int, typer.Option(min=1, help="Observations posted at once.")] = 500,
+    file_format: Annotated[Format | None, typer.Option("--format", help="Where the suffix does not say.")] = None,
+    go_on: Annotated[bool, typer.Option("--go-on", help="Load everything, past the decision as overrun.")] = False,
+) -> None:
+    """
+    Post a file of observations, chunk by chunk, and stop when the decision is reached.
+
+    An interrupted load can be run again with the same file and chunk size: nothing counts twice.
+    """
+    from service.cli.client import Refused, ServiceClient, Unreachable
+    from service.cli.files import BadLine, chunked, read_csv, read_ndjson
+
+    client = ServiceClient(url, key)
+    try:
+        bare = _bare_field(client, test)
+        with _opened(file) as lines:
+            is_csv = _format(file, file_format) is Format.CSV
+            rows = read_csv(lines) if is_csv else read_ndjson(lines, bare)
+            _post_all(client, test, chunked(rows, chunk, test), go_on=go_on)
+    except (BadLine, Unreachable) as error:
+        raise fail(f"{file}: {error}") from None
+    except Refused as refusal:
+        raise fail(f"{file}: {refusal}") from None
+    except UnicodeDecodeError as error:
+        raise fail(f"{file}: is not text in UTF-8: {error}") from None
+
+
+def _post_all(client: "ServiceClient", test: str, chunks: "Iterator[Chunk]", *, go_on: bool) -> None:
+    """Post each chunk; tell what came out."""
+    from rich.progress import MofNCompleteColumn, Progress, SpinnerColumn, TextColumn, TimeElapsedColumn
+
+    from service.cli.client import Refused
+
+    columns = (SpinnerColumn(), TextColumn("{task.description}"), MofNCompleteColumn(), TimeElapsedColumn())
+    state: dict[str, Any] = client.get(f"/v1/tests/{test}")
+    was_decided = state["decision"] != "continue"
+    posted = 0
+    with Progress(*columns, console=_error_console()) as progress:
+        task = progress.add_task("observations posted", total=None)
+        for piece in chunks:
+            try:
+                state = client.post(f"/v1/tests/{test}/observations", piece.body, piece.idempotency_key)
+            except Refused as refusal:
+                raise fail(_with_lines(refusal, piece)) from None
+            posted += len(piece.rows)
+            progress.update(task, completed=posted)
+            if state["decision"] != "continue" and not go_on:
+                break
+    typer.echo(_summary(state, posted, was_decided=was_decided, stopped=not go_on))
+
+
+def _summary(state: dict[str, Any], posted: int, *, was_decided: bool, stopped: bool) -> str:
+    if state["decision"] == "continue":
+        evidence = state["log_likelihood_ratio"]
+        return f"{state['key']}: continue sampling; {state['sample_number']} units so far, evidence {evidence:.4g}."
+    decided = state["decided"]
+    at = f"{decided['sample_number']} units" + (f", exposure {decided['exposure']:g}" if decided["exposure"] else "")
+    tail = f" Stopped after posting {posted}." if stopped else f" Posted {posted}; overrun {state['overrun']}."
+    before = " (before this load)" if was_decided else ""
+    return f"{state['key']}: {state['decision']}, decided at {at}{before}.{tail}"
+
+
+def _with_lines(refusal: "Refused", piece: "Chunk") -> str:
+    """The refusal with the lines of the file that it is about."""
+    lines = [str(refusal)]
+    for pointer, detail in refusal.faults:
+        parts = pointer.split("/")
+        is_row = len(parts) > 2 and parts[1] == "observations" and parts[2].isdigit()  # noqa: PLR2004
+        where = f"line {piece.rows[int(parts[2])].line}, {'/'.join(parts[3:])}" if is_row else pointer
+        lines.append(f"  {where}: {detail}")
+    return "\n".join(lines)
+
+
+def _bare_field(client: "ServiceClient", test: str) -> str:
+    """What a bare number is in the family of the test."""
+    plan = client.get(f"/v1/tests/{test}")["plan"]
+    return "time" if client.get(f"/v1/plans/{plan}")["family"] == "exponential" else "value"
+
+
+def _format(file: str, given: Format | None) -> Format:
+    found = given or SUFFIXES.get(Path(file).suffix.lower())
+    if found is None:
+        raise fail(f"{file}: say --format csv or --format ndjson")
+    return found
+
+
+@contextmanager
+def _opened(file: str) -> Iterator[IO[str]]:
+    if file == "-":
+        yield sys.stdin
+        return
+    try:
+        with Path(file).open(encoding="utf-8-sig", newline="") as lines:
+            yield lines
+    except OSError as error:
+        raise fail(f"{file}: {error.strerror}") from None
+
+
+def _error_console() -> Any:  # noqa: ANN401 - rich is imported late
+    from rich.console import Console
+
+    return Console(stderr=True)
