@@ -61,8 +61,9 @@ def bernoulli(p0: float, p1: float) -> LikelihoodRatio:
 
     Source: Wald (1945), section 5.2: ln(p1/p0) for a nonconforming unit, ln((1 - p1)/(1 - p0)) for another.
     """
-    cumulant = math.log1p((p1 - p0) / (1.0 - p1))
-    return _ratio(math.log1p((p1 - p0) / p0) + cumulant, cumulant)
+    is_close = 0.5 <= (1.0 - p0) / (1.0 - p1) <= 2.0
+    cumulant = math.log1p((p1 - p0) / (1.0 - p1)) if is_close else math.log1p(-p0) - math.log1p(-p1)
+    return _ratio(_log_quotient(p1, p0) + cumulant, cumulant)
 
 
 def poisson(rate0: float, rate1: float) -> LikelihoodRatio:
@@ -74,7 +75,7 @@ def poisson(rate0: float, rate1: float) -> LikelihoodRatio:
 
     Source: the Poisson density, rate**count * exp(-rate * exposure), at both rates.
     """
-    return _ratio(math.log1p((rate1 - rate0) / rate0), rate1 - rate0)
+    return _ratio(_log_quotient(rate1, rate0), rate1 - rate0)
 
 
 def exponential(mean0: float, mean1: float) -> LikelihoodRatio:
@@ -87,7 +88,7 @@ def exponential(mean0: float, mean1: float) -> LikelihoodRatio:
     Source: Epstein and Sobel (1955), Annals of Mathematical Statistics 26, 82-93: failures * ln(mean0/mean1)
     - (1/mean1 - 1/mean0) * time.
     """
-    return _ratio(math.log1p((mean0 - mean1) / mean1), (mean0 - mean1) / mean0 / mean1)
+    return _ratio(_log_quotient(mean0, mean1), (mean0 - mean1) / mean0 / mean1)
 
 
 def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
@@ -102,6 +103,14 @@ def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
     middle = two_sum(Double.of(mean0 / 2.0).high, Double.of(mean1 / 2.0).high)
     gain = (mean1 - mean0) / sigma / sigma
     return _checked(LikelihoodRatio(gain, float(middle.high), float(middle.low)))
+
+
+def _log_quotient(a: float, b: float) -> float:
+    """ln(a/b) of positive numbers; near one the difference a - b is exact, where the quotient has lost digits."""
+    quotient = a / b
+    if not 0.0 < quotient < math.inf:
+        return math.nan
+    return math.log1p((a - b) / b) if 0.5 <= quotient <= 2.0 else math.log(quotient)  # noqa: PLR2004
 
 
 def _ratio(natural: float, cumulant: float) -> LikelihoodRatio:

@@ -1,0 +1,1 @@
+"""Slow, plain second computations that share no code with the service."""
