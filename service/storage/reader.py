@@ -5,7 +5,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, NamedTuple
 
-from sqlalchemy import Engine, RowMapping, Select, exists, func, select
+from sqlalchemy import Engine, RowMapping, Select, func, select
 
 from service.domain.access import AccessKey
 from service.domain.plan import Plan
@@ -123,12 +123,8 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
         if value is not None:
             found = found.where(which == str(value))
     for name, value in filters.labels:
-        alias = labels.alias()
-        found = found.where(
-            exists()
-            .where(alias.c.test == column.key, alias.c.name == name, alias.c.value == value)
-            .correlate(tables.tests)
-        )
+        labelled = select(labels.c.test).where(labels.c.name == name, labels.c.value == value)
+        found = found.where(column.key.in_(labelled))
     if filters.updated_after is not None:
         found = found.where(column.updated_at > filters.updated_after)
     return found

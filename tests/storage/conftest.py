@@ -1,0 +1,39 @@
+"""Every test of storage runs on both databases."""
+
+from collections.abc import Iterator
+from pathlib import Path
+
+import pytest
+from sqlalchemy import Engine
+from sqlalchemy.engine import URL
+
+from service.storage.engine import create_engine_for
+from service.storage.migrate import upgrade
+from tests.postgres import fresh_database, postgres_server
+
+
+@pytest.fixture(scope="session")
+def server() -> Iterator[URL]:
+    with postgres_server() as url:
+        yield url
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def empty(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[Engine]:
+    """An empty database of each kind."""
+    if request.param == "sqlite":
+        engine = create_engine_for(f"sqlite:///{tmp_path / 'storage.sqlite3'}")
+        yield engine
+        engine.dispose()
+        return
+    with fresh_database(request.getfixturevalue("server")) as url:
+        engine = create_engine_for(url)
+        yield engine
+        engine.dispose()
+
+
+@pytest.fixture
+def engine(empty: Engine) -> Engine:
+    """A migrated database of each kind."""
+    upgrade(empty)
+    return empty
