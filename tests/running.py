@@ -50,14 +50,16 @@ def command(*arguments: str, database_url: str, **extra: str) -> subprocess.Comp
 
 
 @contextmanager
-def running(folder: Path, **settings: str) -> Iterator[Running]:
+def running(folder: Path, *, key_names: str = "the-{}", **settings: str) -> Iterator[Running]:
     """Start the service on a new SQLite file in `folder`; stop it at the end."""
     database_url = f"sqlite:///{folder / 'tests.sqlite3'}"
     migrated = command("migrate", database_url=database_url)
     assert migrated.returncode == 0, migrated.stderr
     keys = {}
-    for role in ("viewer", "collector", "engineer", "administrator"):
-        made = command("keys", "create", "--role", role, "--name", f"the-{role}", database_url=database_url)
+    roles = ("viewer", "collector", "engineer", "administrator") if "{}" in key_names else ("engineer",)
+    for role in roles:
+        name = key_names.format(role)
+        made = command("keys", "create", "--role", role, "--name", name, database_url=database_url)
         assert made.returncode == 0, made.stderr
         keys[role] = made.stdout.strip()
     port = free_port()

@@ -135,10 +135,12 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
 }
 
 
-class RequestProblem(Exception):  # noqa: N818 - it is a problem document on its way, not an error of the program
+class RequestProblem(Exception):
     """A request that is refused before the domain sees it."""
 
-    def __init__(self, name: str, detail: str, faults: Sequence[Fault] = (), headers: Mapping[str, str] | None = None):
+    def __init__(
+        self, name: str, detail: str, faults: Sequence[Fault] = (), headers: Mapping[str, str] | None = None
+    ) -> None:
         super().__init__(detail)
         self.name = name
         self.detail = detail
@@ -185,12 +187,12 @@ async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
 
 
 async def _on_request_problem(_request: Request, error: Exception) -> JSONResponse:
-    assert isinstance(error, RequestProblem)  # noqa: S101 - registered for this type alone
+    assert isinstance(error, RequestProblem)
     return response(error.name, error.detail, error.faults, error.headers)
 
 
 async def _on_validation_error(_request: Request, error: Exception) -> JSONResponse:
-    assert isinstance(error, RequestValidationError)  # noqa: S101 - registered for this type alone
+    assert isinstance(error, RequestValidationError)
     items = error.errors()
     is_body = all(item["loc"][:1] == ("body",) for item in items)
     faults = [Fault(_pointer(item["loc"][1:]), _rule(item)) for item in items[:20]]
@@ -200,7 +202,7 @@ async def _on_validation_error(_request: Request, error: Exception) -> JSONRespo
 
 
 async def _on_http_exception(_request: Request, error: Exception) -> JSONResponse:
-    assert isinstance(error, HTTPException)  # noqa: S101 - registered for this type alone
+    assert isinstance(error, HTTPException)
     name = {404: "not-found", 405: "method-not-allowed"}.get(error.status_code, "malformed-body")
     detail = "There is nothing at this address." if name == "not-found" else str(error.detail)
     return response(name, detail, headers=error.headers)

@@ -11,7 +11,7 @@ LONGEST_PAUSE_SECONDS = 10.0
 TIMEOUT_SECONDS = 60.0
 
 
-class Refused(Exception):  # noqa: N818 - it is what the service said
+class Refused(Exception):
     """The service answered with a problem; `faults` are pairs of a JSON pointer and a detail."""
 
     def __init__(self, status: int, problem: Mapping[str, Any]) -> None:
@@ -20,7 +20,7 @@ class Refused(Exception):  # noqa: N818 - it is what the service said
         self.faults = [(fault["pointer"], fault["detail"]) for fault in problem.get("errors", [])]
 
 
-class Unreachable(Exception):  # noqa: N818 - it says what is the case
+class Unreachable(Exception):
     """No answer came in all attempts."""
 
 

@@ -69,7 +69,9 @@ def demo(
 
 def _play(console: "Console", client: "ServiceClient", pause_seconds: float) -> None:
     """Register everything, then post in turn until all is decided."""
-    console.print("[bold]The Brackwater pump works, one morning.[/bold] Four questions, agreed risks, results as they come.\n")
+    console.print(
+        "[bold]The Brackwater pump works, one morning.[/bold] Four questions, agreed risks, results as they come.\n"
+    )
     running = _stories(random.Random(SEED))
     for story in running:
         client.post("/v1/plans", story.plan)

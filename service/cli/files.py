@@ -17,7 +17,7 @@ NUMBERS = ("value", "time", "exposure", "size")
 TRUTHS = {"true": True, "1": True, "false": False, "0": False}
 
 
-class BadLine(Exception):  # noqa: N818 - it says what is the case
+class BadLine(Exception):
     """A line that is no observation."""
 
     def __init__(self, line: int, reason: str) -> None:
@@ -61,7 +61,9 @@ def read_csv(lines: Iterable[str]) -> Iterator[Numbered]:
     header = [name.strip() for name in next(table, [])]
     unknown = [name for name in header if name not in FIELDS]
     if unknown or not header or len(set(header)) < len(header):
-        raise BadLine(1, f"the header must name fields among {', '.join(FIELDS)}; received {', '.join(header) or 'nothing'}")
+        raise BadLine(
+            1, f"the header must name fields among {', '.join(FIELDS)}; received {', '.join(header) or 'nothing'}"
+        )
     try:
         for cells in table:
             line = table.line_num

@@ -16,9 +16,7 @@ def serve(
     host: Annotated[str, typer.Option(help="Address to listen on.")] = "127.0.0.1",
     port: Annotated[int, typer.Option(min=1, max=65535, help="Port to listen on.")] = 8000,
 ) -> None:
-    """
-    Start the service. A new SQLite file sets itself up; any other schema than the one this version knows is refused.
-    """
+    """Start the service. A new SQLite file sets itself up; a schema that this version does not know is refused."""
     import logging
 
     import uvicorn

@@ -15,7 +15,7 @@ import numpy as np
 from service.domain.errors import Fault, InvalidObservations
 from service.domain.families import Increments
 from service.domain.procedure import Procedure
-from service.domain.state import Cause, Decided, Decision, State, Sum
+from service.domain.state import Decided, State, Sum
 from service.sequential.double import Double, FloatArray, running_sum
 from service.sequential.walk import Exit, first_exit_at_reports, first_exit_in_time
 
@@ -85,7 +85,7 @@ def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit
     return first_exit_at_reports(procedure.region, walk.progress, walk.total)
 
 
-def _moved(
+def _moved(  # noqa: PLR0913 - the six say where the walk stands
     procedure: Procedure, state: State, increments: Increments, index: int, progress: Double, total: Double
 ) -> State:
     """The evidence after the observation at `index`, the walk standing at this progress and total."""
@@ -124,6 +124,3 @@ def _double(number: Sum) -> Double:
 
 def _sum(number: Double) -> Sum:
     return Sum(float(number.high), float(number.low))
-
-
-__all__ = ["Cause", "Decision", "Walk", "first_exit", "observe", "walk_from"]

@@ -1,6 +1,4 @@
-"""
-The plan: what is promised before the first datum. Immutable, compared by its fingerprint.
-"""
+"""The plan: what is promised before the first datum. Immutable, compared by its fingerprint."""
 
 import hashlib
 import json

@@ -62,3 +62,6 @@ class State:
     def is_decided(self) -> bool:
         """True once sampling may stop."""
         return self.decision is not Decision.CONTINUE
+
+
+__all__ = ["Cause", "Decided", "Decision", "State", "Sum"]

@@ -52,7 +52,7 @@ SECRET_BYTES = 32
 
 
 @singledispatch
-def perform(command: Command, writer: Writer, now: datetime) -> Outcome:
+def perform(command: Command, writer: Writer, now: datetime) -> Outcome:  # noqa: ARG001 - the branches use them
     """
     Carry out one command at the time `now`.
 

@@ -44,14 +44,14 @@ class Double:
 
 
 def two_sum(a: FloatArray, b: FloatArray) -> Double:
-    """a + b without error, any order of magnitudes. Source: Knuth, theorem B."""
+    """A + b without error, any order of magnitudes. Source: Knuth, theorem B."""
     high = a + b
     virtual = high - a
     return Double(high, (a - (high - virtual)) + (b - virtual))
 
 
 def two_product(a: FloatArray, b: FloatArray) -> Double:
-    """a * b without error while nothing overflows (magnitudes below 1e140). Source: Dekker (1971)."""
+    """A * b without error while nothing overflows (magnitudes below 1e140). Source: Dekker (1971)."""
     high = a * b
     a_head, a_tail = _split(a)
     b_head, b_tail = _split(b)

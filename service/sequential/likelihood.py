@@ -110,7 +110,7 @@ def _log_quotient(a: float, b: float) -> float:
     quotient = a / b
     if not 0.0 < quotient < math.inf:
         return math.nan
-    return math.log1p((a - b) / b) if 0.5 <= quotient <= 2.0 else math.log(quotient)  # noqa: PLR2004
+    return math.log1p((a - b) / b) if 0.5 <= quotient <= 2.0 else math.log(quotient)
 
 
 def _ratio(natural: float, cumulant: float) -> LikelihoodRatio:

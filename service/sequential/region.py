@@ -82,7 +82,10 @@ class Limits:
 class Region(Protocol):
     """What deciding, drawing and every exact computation ask of a region, whatever its shape."""
 
-    wall: Wall | None
+    @property
+    def wall(self) -> Wall | None:
+        """Where a decision is forced, if anywhere."""
+        ...
 
     @property
     def below(self) -> Decision:
@@ -181,7 +184,7 @@ class StraightRegion:
             return 0.0
         to_lower = self.lower_intercept / self.ratio.slope
         to_upper = self.upper_intercept / (self.span.per_progress - self.ratio.slope)
-        return float(_ceil(np.float64(min(to_lower, to_upper)), np.float64(1.0)))
+        return float(_ceil(np.array([min(to_lower, to_upper)]), np.ones(1))[0])
 
     def _lines(self, progress: FloatArray) -> tuple[FloatArray, FloatArray]:
         """The two lines at each progress, as numbers a total can take."""

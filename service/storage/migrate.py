@@ -16,7 +16,7 @@ from service.storage.engine import WRITES, is_sqlite
 ADVISORY_LOCK = 5_397_204_186
 
 
-class SchemaMismatch(Exception):  # noqa: N818 - named for what it says
+class SchemaMismatch(Exception):
     """The database has another schema than this version knows; the text says what to do."""
 
 

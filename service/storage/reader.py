@@ -37,7 +37,7 @@ class Count(NamedTuple):
     kind: str
     status: str
     decision: str
-    count: int
+    tests: int
 
 
 class Reader:

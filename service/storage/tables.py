@@ -57,15 +57,15 @@ class UtcTime(TypeDecorator[datetime]):
         if value is None:
             return None
         if value.tzinfo is None:
-            raise ValueError(f"a moment needs a time zone; received {value!r}")  # noqa: TRY003 - a fault of the program
+            raise ValueError(f"a moment needs a time zone; received {value!r}")
         moment = value.astimezone(UTC)
         return moment.strftime("%Y-%m-%dT%H:%M:%S.%fZ") if dialect.name == "sqlite" else moment
 
-    def process_result_value(self, value: Any, dialect: Dialect) -> datetime | None:  # noqa: ANN401
+    def process_result_value(self, value: Any, dialect: Dialect) -> datetime | None:  # noqa: ANN401, ARG002
         """Always in UTC."""
         if value is None:
             return None
-        return datetime.fromisoformat(value) if isinstance(value, str) else value.astimezone(UTC)  # type: ignore[no-any-return]
+        return datetime.fromisoformat(value) if isinstance(value, str) else value.astimezone(UTC)
 
 
 def _state_columns() -> list[Column[Any] | CheckConstraint]:

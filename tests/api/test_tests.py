@@ -1,6 +1,7 @@
 """Registering, listing and showing tests over HTTP."""
 
 from datetime import UTC, datetime
+from typing import Any
 
 import httpx
 import pytest
@@ -63,7 +64,7 @@ def test_lists_filter_by_everything_at_once(admin: httpx.Client, new_name: Namer
     running = with_test(admin, new_name, SEAL, labels={"cell": value, "shift": "late"})
     admin.post(f"/v1/tests/{accepted}/observations", json={"values": [0] * 24}).raise_for_status()
 
-    def keys(**filters: object) -> list[str]:
+    def keys(**filters: Any) -> list[str]:
         answer = admin.get("/v1/tests", params={"label": f"cell:{value}", **filters})
         return [test["key"] for test in answer.raise_for_status().json()["items"]]
 

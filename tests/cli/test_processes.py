@@ -5,7 +5,7 @@ import signal
 import subprocess
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Callable
 from pathlib import Path
 
 import httpx
@@ -15,9 +15,11 @@ from sqlalchemy import create_engine, text
 from tests.api.examples import PUMP, SEAL, SHAFT, Namer, with_test
 from tests.running import Running, command, free_port
 
+Loader = Callable[..., subprocess.CompletedProcess[str]]
+
 
 @pytest.fixture
-def load(service: Running) -> Iterator[object]:
+def load(service: Running) -> Loader:
     def run(*arguments: str, stdin: str | None = None) -> subprocess.CompletedProcess[str]:
         return subprocess.run(
             [sys.executable, "-m", "service", "load", *arguments],
@@ -29,10 +31,12 @@ def load(service: Running) -> Iterator[object]:
             check=False,
         )
 
-    return run  # type: ignore[return-value]
+    return run
 
 
-def test_a_file_is_loaded_until_the_decision(load, admin: httpx.Client, new_name: Namer, tmp_path: Path) -> None:  # type: ignore[no-untyped-def]
+def test_a_file_is_loaded_until_the_decision(
+    load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path
+) -> None:
     key = with_test(admin, new_name, SEAL)
     file = tmp_path / "seals.csv"
     file.write_text("value,unit\n" + "".join(f"0,u{i}\n" for i in range(100)))
@@ -49,7 +53,9 @@ def test_a_file_is_loaded_until_the_decision(load, admin: httpx.Client, new_name
     assert admin.get(f"/v1/tests/{key}").json()["overrun"] == 76
 
 
-def test_a_bad_line_is_named_and_its_chunk_not_stored(load, admin: httpx.Client, new_name: Namer, tmp_path: Path) -> None:  # type: ignore[no-untyped-def]
+def test_a_bad_line_is_named_and_its_chunk_not_stored(
+    load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path
+) -> None:
     key = with_test(admin, new_name, SHAFT)
     file = tmp_path / "shafts.ndjson"
     file.write_text("10.1\n10.2\n10.3\n1e300\n")
@@ -62,8 +68,8 @@ def test_a_bad_line_is_named_and_its_chunk_not_stored(load, admin: httpx.Client,
     assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 4
 
 
-def test_an_interrupted_load_goes_on_without_counting_twice(  # type: ignore[no-untyped-def]
-    load, service: Running, admin: httpx.Client, new_name: Namer, tmp_path: Path
+def test_an_interrupted_load_goes_on_without_counting_twice(
+    load: Loader, service: Running, admin: httpx.Client, new_name: Namer, tmp_path: Path
 ) -> None:
     key = with_test(admin, new_name, {**SHAFT, "boundaries": "given", "thresholds": {"accept": -1e6, "reject": 1e6}})
     file = tmp_path / "shafts.csv"
@@ -88,7 +94,7 @@ def test_an_interrupted_load_goes_on_without_counting_twice(  # type: ignore[no-
     assert state["total"] == pytest.approx(sum(10 + (i % 7) / 100 for i in range(3000)), rel=1e-13)
 
 
-def test_times_come_through_standard_input(load, admin: httpx.Client, new_name: Namer) -> None:  # type: ignore[no-untyped-def]
+def test_times_come_through_standard_input(load: Loader, admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, PUMP)
     done = load("-", "--test", key, "--format", "ndjson", stdin='12.5\n{"time": 40, "failed": false}\n')
     assert "continue sampling; 2 units so far" in done.stdout, done.stderr
@@ -96,7 +102,7 @@ def test_times_come_through_standard_input(load, admin: httpx.Client, new_name: 
     assert (state["total"], state["exposure"]) == (1, 52.5)
 
 
-def test_load_says_clearly_what_is_wrong(load, admin: httpx.Client, new_name: Namer, tmp_path: Path) -> None:  # type: ignore[no-untyped-def]
+def test_load_says_clearly_what_is_wrong(load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path) -> None:
     assert "There is no test 'nowhere'" in load("-", "--test", "nowhere", "--format", "csv", stdin="").stderr
     key = with_test(admin, new_name, SEAL)
     assert "No such file" in load(str(tmp_path / "none.csv"), "--test", key).stderr

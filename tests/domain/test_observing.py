@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from mpmath import mpf
 
 from service.domain.observing import observe
 from service.domain.plan import Plan
@@ -103,7 +104,9 @@ def slow_answer(document: dict[str, Any], rows: list[dict[str, Any]]) -> slow.An
 
 @settings(max_examples=400, deadline=None)
 @given(plans(), st.data())
-def test_every_decision_agrees_with_the_slow_reference_in_any_split(document: dict[str, Any], data: st.DataObject) -> None:
+def test_every_decision_agrees_with_the_slow_reference_in_any_split(
+    document: dict[str, Any], data: st.DataObject
+) -> None:
     rows = data.draw(reports(document["family"], document["h0"], document["h1"]))
     compiled = procedure(document)
     whole = observe(compiled, State(), {"observations": rows}, NOW)
@@ -152,9 +155,9 @@ def test_a_million_measurements_give_one_answer_however_they_are_posted() -> Non
 
     one, thousand, many = posted_in(1), posted_in(1000), posted_in(100_000)
     assert one == thousand == many
-    exact = sum(map(slow.mpf, values.tolist()), slow.mpf(0))
-    deviation = exact - len(values) * (slow.mpf(1000.0) + slow.mpf(1000.0001)) / 2
-    evidence = (slow.mpf(1000.0001) - slow.mpf(1000.0)) / slow.mpf(0.01) ** 2 * deviation
+    exact = sum(map(mpf, values.tolist()), mpf(0))
+    deviation = exact - len(values) * (mpf(1000.0) + mpf(1000.0001)) / 2
+    evidence = (mpf(1000.0001) - mpf(1000.0)) / mpf(0.01) ** 2 * deviation
     assert one.log_likelihood_ratio == pytest.approx(float(evidence), rel=1e-12)
 
 

@@ -20,7 +20,7 @@ from service.domain.errors import (
     TestIsClosed,
 )
 from service.domain.sequential_test import Subject, SubjectKind
-from service.ingest.commands import CreatePlan, Outcome, Posted, PostObservations, RegisterTest
+from service.ingest.commands import CreatePlan, Posted, PostObservations, RegisterTest
 from service.ingest.road import Road, perform_now
 from service.storage.engine import create_engine_for
 from service.storage.migrate import upgrade
@@ -112,7 +112,7 @@ def test_what_waits_is_committed_together_and_in_order(engine: Engine) -> None:
 
 def test_a_refusal_disturbs_no_other(engine: Engine) -> None:
     async def work(road: Road) -> None:
-        results: list[Outcome | BaseException] = await asyncio.gather(
+        results = await asyncio.gather(
             road.submit(post("a")), road.submit(post("a", float("nan"))), road.submit(post("a")), return_exceptions=True
         )
         assert isinstance(results[1], InvalidObservations)

@@ -3,7 +3,7 @@
 from hypothesis import given
 from hypothesis import strategies as st
 from mpmath import log, mpf
-from pytest import approx
+from pytest import approx  # noqa: PT013 - reads as the formula does
 
 from service.sequential import boundaries
 

@@ -16,7 +16,7 @@ proportions = st.floats(1e-6, 1 - 1e-6)
 rates = st.floats(1e-6, 1e6)
 
 
-def agrees(ratio: LikelihoodRatio, plan: slow.Plan, weight: float, total: float, terms: int = 1) -> None:
+def agrees(ratio: LikelihoodRatio, plan: slow.Plan, weight: float, total: float) -> None:
     """Agreement to 1e-12, relative to the terms whose difference the evidence is."""
     evidence = float(ratio.log(Double.of(weight), Double.of(total)))
     exact = slow.step(plan, total, weight) if plan.family != "normal" else _normal(plan, weight, total)

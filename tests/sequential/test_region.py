@@ -136,7 +136,7 @@ def test_zero_evidence_at_the_wall_accepts_for_real_totals() -> None:
         region = straight_region(likelihood.normal(0.0, h1, 1.0), Thresholds(-9, 9), REALS, Wall(4.0))
         at = region.sides_at_wall(Double(np.array([4.0]), np.zeros(1)), Double(np.array([4.0 * h1 / 2]), np.zeros(1)))
         assert at.tolist() == [side]
-        assert Decision.ACCEPT == (region.below if side < 0 else region.above)
+        assert (region.below if side < 0 else region.above) == Decision.ACCEPT
 
 
 def test_a_cap_ends_sampling_at_that_failure() -> None:

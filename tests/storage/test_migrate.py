@@ -37,7 +37,7 @@ def test_down_and_up_again_with_rows_in_it(engine: Engine) -> None:
 
 def test_an_empty_database_says_what_to_run(empty: Engine) -> None:
     assert is_empty(empty)
-    with pytest.raises(SchemaMismatch, match="no schema yet.*sprt-monitor migrate"):
+    with pytest.raises(SchemaMismatch, match=r"no schema yet.*sprt-monitor migrate"):
         check_schema(empty)
 
 
@@ -45,7 +45,7 @@ def test_an_unknown_schema_is_named(engine: Engine) -> None:
     check_schema(engine)
     with engine.begin() as connection:
         connection.execute(text("UPDATE alembic_version SET version_num = '9999'"))
-    with pytest.raises(SchemaMismatch, match="9999.*does not know"):
+    with pytest.raises(SchemaMismatch, match=r"9999.*does not know"):
         check_schema(engine)
 
 

@@ -142,7 +142,7 @@ def test_each_filter_narrows(engine: Engine) -> None:
     assert found(labels=(("line", "3"),)) == {"one", "two"}
     assert found(labels=(("line", "3"), ("shift", "late"))) == {"one"}
     assert found(updated_after=NOW) == {"two"}
-    assert {(c.kind, c.decision, c.count) for c in reader.counts()} == {
+    assert {(c.kind, c.decision, c.tests) for c in reader.counts()} == {
         ("lot", "continue", 1),
         ("lot", "accept", 1),
         ("experiment", "continue", 1),

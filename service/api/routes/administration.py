@@ -1,7 +1,7 @@
 """Access keys, for administrators, and the summary, for dashboards."""
 
 from collections import Counter, defaultdict
-from typing import Annotated, cast
+from typing import cast
 
 from fastapi import APIRouter, Response
 
@@ -25,10 +25,9 @@ async def show_summary(parts: PartsOf) -> SummaryOut:
     by_kind: defaultdict[str, Counter[str]] = defaultdict(Counter)
     by_status: Counter[str] = Counter()
     for row in await reading(parts.reader.counts):
-        kind, status, decision, count = str(row[0]), str(row[1]), str(row[2]), row[3]
-        by_decision[decision] += count
-        by_kind[kind][decision] += count
-        by_status[status] += count
+        by_decision[row.decision] += row.tests
+        by_kind[row.kind][row.decision] += row.tests
+        by_status[row.status] += row.tests
     return SummaryOut(
         tests=by_decision.total(),
         by_decision=dict(by_decision),

@@ -1,6 +1,6 @@
 """Observations: as posted, as logged, and as a path to draw."""
 
-from datetime import datetime
+from datetime import UTC, datetime
 from typing import Annotated, Any, Self
 
 from pydantic import AwareDatetime, ConfigDict, Field, StrictBool, model_validator
@@ -31,14 +31,15 @@ class ObservationForm(Form):
     failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
     unit: Text = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: AwareDatetime = Field(
-        default_factory=lambda: datetime.min, description="When it was observed, with its time zone (RFC 3339)."
+        default_factory=lambda: datetime.min.replace(tzinfo=UTC),
+        description="When it was observed, with its time zone (RFC 3339).",
     )
 
 
 class ObservationsForm(Form):
     """A submission: either bare `values` or `observations` with more to say about each; the order is theirs."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": EXAMPLES})
+    model_config = ConfigDict(json_schema_extra={"examples": [*EXAMPLES]})
 
     values: Annotated[list[Number], Field(min_length=1)] = Field(default_factory=list)
     observations: Annotated[list[ObservationForm], Field(min_length=1)] = Field(default_factory=list)
@@ -46,7 +47,7 @@ class ObservationsForm(Form):
     @model_validator(mode="after")
     def _one_form(self) -> Self:
         if len(self.model_fields_set) != 1:
-            raise ValueError('give either "values" or "observations"')  # noqa: TRY003 - pydantic passes the text on
+            raise ValueError('give either "values" or "observations"')
         return self
 
     @property
@@ -80,7 +81,7 @@ class LoggedOut(Answer):
             received_at=entry.received_at,
             submitted_by=entry.actor,
             counted=entry.is_counted,
-            **entry.fields,  # type: ignore[arg-type]
+            **entry.fields,
         )
 
 

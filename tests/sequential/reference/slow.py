@@ -53,7 +53,7 @@ def density(plan: Plan, parameter: float, result: float, weight: float) -> mpf:
 
 
 def step(plan: Plan, result: float, weight: float) -> mpf:
-    """ln of the likelihood ratio of one observation."""
+    """Ln of the likelihood ratio of one observation."""
     return log(density(plan, plan.h1, result, weight)) - log(density(plan, plan.h0, result, weight))
 
 
