@@ -5,7 +5,9 @@ from collections.abc import Callable, Iterator
 
 import httpx
 import pytest
+from sqlalchemy.engine import URL
 
+from tests.postgres import postgres_server
 from tests.running import Running, running
 
 
@@ -28,3 +30,10 @@ def new_name() -> Callable[[str], str]:
     """Names that no other test uses."""
     numbers = itertools.count(1)
     return lambda prefix: f"{prefix}-{next(numbers)}"
+
+
+@pytest.fixture(scope="session")
+def server() -> Iterator[URL]:
+    """A real PostgreSQL server for the whole session."""
+    with postgres_server() as url:
+        yield url

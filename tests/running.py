@@ -50,9 +50,11 @@ def command(*arguments: str, database_url: str, **extra: str) -> subprocess.Comp
 
 
 @contextmanager
-def running(folder: Path, *, key_names: str = "the-{}", **settings: str) -> Iterator[Running]:
-    """Start the service on a new SQLite file in `folder`; stop it at the end."""
-    database_url = f"sqlite:///{folder / 'tests.sqlite3'}"
+def running(
+    folder: Path, *, key_names: str = "the-{}", database_url: str | None = None, **settings: str
+) -> Iterator[Running]:
+    """Start the service on a new SQLite file in `folder`, or on an empty database; stop it at the end."""
+    database_url = database_url or f"sqlite:///{folder / 'tests.sqlite3'}"
     migrated = command("migrate", database_url=database_url)
     assert migrated.returncode == 0, migrated.stderr
     keys = {}

@@ -77,7 +77,7 @@ def _play(console: "Console", client: "ServiceClient", pause_seconds: float) -> 
         client.post("/v1/plans", story.plan)
         registration = {"key": story.key, "plan": story.plan["name"], "subject": story.subject, "labels": story.labels}
         client.post("/v1/tests", registration)
-        console.print(f"  [cyan]{story.key}[/cyan]  {story.question}")
+        console.print(f"  [cyan]{story.key:<12}[/cyan] {story.question}")
     console.print()
     while running:
         for story in list(running):
@@ -113,7 +113,7 @@ def _stories(source: random.Random) -> list[Story]:
             key="glands-0713",
             subject={"kind": "lot", "name": "Gland seals 0713"},
             labels={"cell": "sealing"},
-            question="May lot 0713 of gland seals go out? Good at 2 % leaking, bad at 10 %.",
+            question="Gland seals 0713: 2 % leaking is good, 10 % bad.",
             unit="seals",
             results=_one_by_one({"value": int(source.random() < 0.012)} for _ in _for_ever()),  # noqa: PLR2004
         ),
@@ -122,7 +122,7 @@ def _stories(source: random.Random) -> list[Story]:
             key="housings-88",
             subject={"kind": "lot", "name": "Housings, melt 88"},
             labels={"cell": "foundry"},
-            question="Are the housings of melt 88 sound? Good at 0.4 voids per dm², bad at 1.2.",
+            question="Housings of melt 88: 0.4 voids per dm² is good, 1.2 bad.",
             unit="housings",
             results=_one_by_one(_void_count(source) for _ in _for_ever()),
         ),
@@ -131,7 +131,7 @@ def _stories(source: random.Random) -> list[Story]:
             key="motor-mk4",
             subject={"kind": "experiment", "name": "Motor Mk 4, endurance bench"},
             labels={"cell": "bench 2"},
-            question="Does the new motor live 900 h on average, or only 300 h?",
+            question="Motor Mk 4: does it live 900 h on average, or 300 h?",
             unit="reports",
             results=_one_by_one(_bench_report(source) for _ in _for_ever()),
         ),
@@ -147,7 +147,7 @@ def _stories(source: random.Random) -> list[Story]:
             key="lathe-5",
             subject={"kind": "experiment", "name": "Lathe 5 after the tool change"},
             labels={"cell": "turning"},
-            question="Has lathe 5 drifted from 240.00 mm to 240.15 mm? Its spread is 0.2 mm.",
+            question="Lathe 5: still at 240.00 mm, or drifted to 240.15 mm?",
             unit="shafts",
             results=_one_by_one({"value": round(source.gauss(240.13, 0.2), 3)} for _ in _for_ever()),
         ),

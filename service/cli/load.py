@@ -1,8 +1,10 @@
 """Load a file of observations into a test."""
 
+import io
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from dataclasses import dataclass
 from enum import StrEnum
 from pathlib import Path
 from typing import IO, TYPE_CHECKING, Annotated, Any
@@ -21,6 +23,15 @@ class Format(StrEnum):
 
     CSV = "csv"
     NDJSON = "ndjson"
+
+
+@dataclass(frozen=True)
+class Source:
+    """The lines to read, the bytes there are (None where that is not known), and how many have been read."""
+
+    lines: IO[str]
+    size: int | None
+    position: Callable[[], int]
 
 
 SUFFIXES = {".csv": Format.CSV, ".ndjson": Format.NDJSON, ".jsonl": Format.NDJSON}
@@ -46,10 +57,10 @@ def load(
     client = ServiceClient(url, key)
     try:
         bare = _bare_field(client, test)
-        with _opened(file) as lines:
+        with _opened(file) as source:
             is_csv = _format(file, file_format) is Format.CSV
-            rows = read_csv(lines) if is_csv else read_ndjson(lines, bare)
-            _post_all(client, test, chunked(rows, chunk, test), go_on=go_on)
+            rows = read_csv(source.lines) if is_csv else read_ndjson(source.lines, bare)
+            _post_all(client, test, chunked(rows, chunk, test), source, go_on=go_on)
     except (BadLine, Unreachable) as error:
         raise fail(f"{file}: {error}") from None
     except Refused as refusal:
@@ -58,25 +69,25 @@ def load(
         raise fail(f"{file}: is not text in UTF-8: {error}") from None
 
 
-def _post_all(client: "ServiceClient", test: str, chunks: "Iterator[Chunk]", *, go_on: bool) -> None:
+def _post_all(client: "ServiceClient", test: str, chunks: "Iterator[Chunk]", source: Source, *, go_on: bool) -> None:
     """Post each chunk; tell what came out."""
-    from rich.progress import MofNCompleteColumn, Progress, SpinnerColumn, TextColumn, TimeElapsedColumn
+    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn, TimeRemainingColumn
 
     from service.cli.client import Refused
 
-    columns = (SpinnerColumn(), TextColumn("{task.description}"), MofNCompleteColumn(), TimeElapsedColumn())
+    columns = (TextColumn("{task.fields[posted]} posted"), BarColumn(), TimeElapsedColumn(), TimeRemainingColumn())
     state: dict[str, Any] = client.get(f"/v1/tests/{test}")
     was_decided = state["decision"] != "continue"
     posted = 0
     with Progress(*columns, console=_error_console()) as progress:
-        task = progress.add_task("observations posted", total=None)
+        task = progress.add_task("load", total=source.size, posted=0)
         for piece in chunks:
             try:
                 state = client.post(f"/v1/tests/{test}/observations", piece.body, piece.idempotency_key)
             except Refused as refusal:
                 raise fail(_with_lines(refusal, piece)) from None
             posted += len(piece.rows)
-            progress.update(task, completed=posted)
+            progress.update(task, completed=source.position(), posted=posted)
             if state["decision"] != "continue" and not go_on:
                 break
     typer.echo(_summary(state, posted, was_decided=was_decided, stopped=not go_on))
@@ -118,13 +129,13 @@ def _format(file: str, given: Format | None) -> Format:
 
 
 @contextmanager
-def _opened(file: str) -> Iterator[IO[str]]:
+def _opened(file: str) -> Iterator[Source]:
     if file == "-":
-        yield sys.stdin
+        yield Source(sys.stdin, None, lambda: 0)
         return
     try:
-        with Path(file).open(encoding="utf-8-sig", newline="") as lines:
-            yield lines
+        with Path(file).open("rb") as binary, io.TextIOWrapper(binary, encoding="utf-8-sig", newline="") as lines:
+            yield Source(lines, Path(file).stat().st_size, binary.tell)
     except OSError as error:
         raise fail(f"{file}: {error.strerror}") from None
 

@@ -4,6 +4,8 @@ import httpx
 import pytest
 
 from service.api import problems
+from service.api.schemas import administration, observations, plans, tests
+from service.api.schemas.common import Answer
 from service.domain import errors
 from service.domain.errors import DomainError
 
@@ -51,6 +53,24 @@ def test_every_problem_has_an_example(description: dict) -> None:  # type: ignor
         for example in response.get("content", {}).get(problems.MEDIA_TYPE, {}).get("examples", {})
     }
     assert set(problems.PROBLEMS) - shown <= {"method-not-allowed"}
+    assert description["components"]["examples"].keys() == problems.PROBLEMS.keys()
+
+
+def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  # type: ignore[type-arg]
+    schemas = description["components"]["schemas"]
+    models = {
+        model.__name__: model
+        for module in (administration, observations, plans, tests)
+        for model in vars(module).values()
+        if isinstance(model, type) and issubclass(model, Answer)
+    }
+    for name, operation in operations(description):
+        for status, response in operation["responses"].items():
+            if int(status) < 300:
+                model = response["content"]["application/json"]["schema"]["$ref"].rpartition("/")[2]
+                (example,) = schemas[model]["examples"]
+                assert example.keys() <= schemas[model]["properties"].keys(), name
+                models[model].model_validate(example)
 
 
 def test_no_operation_promises_the_frameworks_own_errors(description: dict) -> None:  # type: ignore[type-arg]

@@ -5,17 +5,10 @@ from pathlib import Path
 
 import pytest
 from sqlalchemy import Engine
-from sqlalchemy.engine import URL
 
 from service.storage.engine import create_engine_for
 from service.storage.migrate import upgrade
-from tests.postgres import fresh_database, postgres_server
-
-
-@pytest.fixture(scope="session")
-def server() -> Iterator[URL]:
-    with postgres_server() as url:
-        yield url
+from tests.postgres import fresh_database
 
 
 @pytest.fixture(params=["sqlite", "postgresql"])

@@ -209,7 +209,7 @@ def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOu
         axis="exposure" if has_exposure else "sample_number",
         thresholds=ThresholdsOut.model_validate(procedure.thresholds),
         points=[_path_point(procedure, path, i) for i in range(len(path.sequence))],
-        region=[_region_point(point, has_exposure=has_exposure) for point in region],
+        region=[_region_point(procedure, point) for point in region],
     )
 
 
@@ -223,10 +223,15 @@ def _path_point(procedure: Procedure, path: Path, index: int) -> PathPointOut:
     )
 
 
-def _region_point(point: RegionPoint, *, has_exposure: bool) -> RegionPointOut:
+def _region_point(procedure: Procedure, point: RegionPoint) -> RegionPointOut:
+    has_exposure = procedure.family.has_exposure
     return RegionPointOut(
         sample_number=None if has_exposure else int(point.progress),
         exposure=point.progress if has_exposure else None,
-        accept=point.accept,
-        reject=point.reject,
+        accept=_limit(procedure, point.accept),
+        reject=_limit(procedure, point.reject),
     )
+
+
+def _limit(procedure: Procedure, total: float | None) -> int | float | None:
+    return None if total is None else total_of(procedure.family, total)

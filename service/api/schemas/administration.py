@@ -5,10 +5,25 @@ from typing import Annotated, Any
 
 from pydantic import AwareDatetime, ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name
+from service.api.schemas.common import Answer, Form, Name, shown_as
 from service.domain.access import Role
 
 EXAMPLE: dict[str, Any] = {"name": "line-2-tester", "role": "collector", "expires_at": "2031-12-31T00:00:00Z"}
+
+
+STORED: dict[str, Any] = {
+    "id": "7af39bf6c5180e89",
+    **EXAMPLE,
+    "created_at": "2031-05-04T09:00:00Z",
+    "revoked_at": None,
+}
+
+SUMMARY: dict[str, Any] = {
+    "tests": 4,
+    "by_decision": {"continue": 1, "accept": 2, "reject": 1},
+    "by_kind": {"lot": {"accept": 2, "reject": 1}, "experiment": {"continue": 1}},
+    "by_status": {"open": 4},
+}
 
 
 class KeyForm(Form):
@@ -24,6 +39,8 @@ class KeyForm(Form):
 class KeyOut(Answer):
     """A key as stored; its secret is not."""
 
+    model_config = shown_as(STORED)
+
     id: str
     name: str
     role: Role
@@ -35,17 +52,23 @@ class KeyOut(Answer):
 class IssuedKeyOut(KeyOut):
     """A new key with its secret, shown this once."""
 
+    model_config = shown_as({**STORED, "secret": "pX3…"})
+
     secret: str
 
 
 class KeysOut(Answer):
     """All keys."""
 
+    model_config = shown_as({"items": [STORED]})
+
     items: list[KeyOut]
 
 
 class SummaryOut(Answer):
     """Counts for dashboards."""
+
+    model_config = shown_as(SUMMARY)
 
     tests: int
     by_decision: Annotated[dict[str, int], Field(description="Tests by continue, accept and reject.")]
@@ -55,5 +78,7 @@ class SummaryOut(Answer):
 
 class HealthOut(Answer):
     """Alive, or ready."""
+
+    model_config = shown_as({"status": "ready"})
 
     status: str

@@ -1,6 +1,6 @@
 """Types that several schemas share."""
 
-from typing import Annotated
+from typing import Annotated, Any
 
 from pydantic import BaseModel, ConfigDict, Field, StringConstraints
 
@@ -21,6 +21,11 @@ class Answer(BaseModel):
     """An answer."""
 
     model_config = ConfigDict(from_attributes=True)
+
+
+def shown_as(example: dict[str, Any]) -> ConfigDict:
+    """The configuration of an answer that the API description shows by this example."""
+    return ConfigDict(from_attributes=True, json_schema_extra={"examples": [example]})
 
 
 class FaultOut(Answer):

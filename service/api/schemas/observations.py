@@ -5,7 +5,7 @@ from typing import Annotated, Any, Self
 
 from pydantic import AwareDatetime, ConfigDict, Field, StrictBool, model_validator
 
-from service.api.schemas.common import Answer, Form, Number, Text
+from service.api.schemas.common import Answer, Form, Number, Text, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.families import Family
 from service.domain.log import LoggedObservation
@@ -15,6 +15,33 @@ EXAMPLES: list[dict[str, Any]] = [
     {"observations": [{"value": 2, "size": 50, "unit": "tray-7", "observed_at": "2031-05-04T09:30:00Z"}]},
     {"observations": [{"time": 41.5, "failed": True}, {"time": 200.0, "failed": False}]},
 ]
+
+
+LOGGED: dict[str, Any] = {
+    "sequence": 24,
+    "value": 0,
+    "size": 1,
+    "unit": "seal-0024",
+    "observed_at": "2031-05-04T09:29:58Z",
+    "received_at": "2031-05-04T09:30:00Z",
+    "submitted_by": "line-2-tester",
+    "counted": True,
+}
+
+PATH: dict[str, Any] = {
+    "key": "lot-2041",
+    "decision": "continue",
+    "axis": "sample_number",
+    "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
+    "points": [
+        {"sequence": 0, "sample_number": 0, "exposure": None, "total": 0, "log_likelihood_ratio": 0.0},
+        {"sequence": 1, "sample_number": 1, "exposure": None, "total": 0, "log_likelihood_ratio": -0.0953101798043249},
+    ],
+    "region": [
+        {"sample_number": 1, "exposure": None, "accept": None, "reject": None},
+        {"sample_number": 24, "exposure": None, "accept": 0, "reject": 3},
+    ],
+}
 
 
 class ObservationForm(Form):
@@ -59,11 +86,13 @@ class ObservationsForm(Form):
 class LoggedOut(Answer):
     """One observation of the log."""
 
+    model_config = shown_as(LOGGED)
+
     sequence: int
-    value: float | None = None
-    time: float | None = None
-    exposure: float | None = None
-    size: int | None = None
+    value: int | float | None = None
+    time: int | float | None = None
+    exposure: int | float | None = None
+    size: int | float | None = None
     failed: bool | None = None
     unit: str | None
     observed_at: str | None
@@ -88,6 +117,8 @@ class LoggedOut(Answer):
 class LogOut(Answer):
     """A page of the log, by sequence."""
 
+    model_config = shown_as({"items": [LOGGED], "next_cursor": None})
+
     items: list[LoggedOut]
     next_cursor: str | None
 
@@ -107,12 +138,14 @@ class RegionPointOut(Answer):
 
     sample_number: int | None
     exposure: float | None
-    accept: float | None
-    reject: float | None
+    accept: int | float | None
+    reject: int | float | None
 
 
 class PathOut(Answer):
     """The walk of the evidence, thinned, and the region around it."""
+
+    model_config = shown_as(PATH)
 
     key: str
     decision: str

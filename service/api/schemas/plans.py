@@ -5,7 +5,7 @@ from typing import Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name, Number, Whole
+from service.api.schemas.common import Answer, Form, Name, Number, Whole, shown_as
 from service.domain.plan import Plan
 from service.domain.procedure import lines_of, procedure_of
 
@@ -18,6 +18,19 @@ EXAMPLE: dict[str, Any] = {
     "beta": 0.10,
     "boundaries": "wald",
     "truncation": {"sample_number": 200},
+}
+
+
+STORED: dict[str, Any] = {
+    **EXAMPLE,
+    "parameter": "proportion nonconforming",
+    "statistic": "simple",
+    "known": None,
+    "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
+    "lines": {"slope": 0.02499, "accept_intercept": 1.36382, "reject_intercept": 1.75096},
+    "fingerprint": "0d5f…",
+    "created_at": "2031-05-04T09:00:00Z",
+    "created_by": "me",
 }
 
 
@@ -76,6 +89,8 @@ class LinesOut(Answer):
 class PlanOut(Answer):
     """A stored plan."""
 
+    model_config = shown_as(STORED)
+
     name: str
     family: str
     parameter: str
@@ -112,6 +127,8 @@ class PlanOut(Answer):
 
 class PlansOut(Answer):
     """A page of plans, by name."""
+
+    model_config = shown_as({"items": [STORED], "next_cursor": None})
 
     items: list[PlanOut]
     next_cursor: str | None

@@ -5,7 +5,7 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name, Text
+from service.api.schemas.common import Answer, Form, Name, Text, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.families import Family
 from service.domain.plan import Plan
@@ -19,6 +19,23 @@ EXAMPLE: dict[str, Any] = {
     "plan": "seal-leak",
     "subject": {"kind": "lot", "name": "2041/B"},
     "labels": {"line": "3"},
+}
+
+
+STATE: dict[str, Any] = {
+    **EXAMPLE,
+    "decision": "accept",
+    "log_likelihood_ratio": -2.2874443153037967,
+    "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
+    "sample_number": 24,
+    "exposure": None,
+    "total": 0,
+    "decided": {"sample_number": 24, "exposure": None, "at": "2031-05-04T09:30:00Z", "cause": "boundary"},
+    "overrun": 1,
+    "status": "open",
+    "version": 2,
+    "registered_at": "2031-05-04T09:00:00Z",
+    "updated_at": "2031-05-04T09:30:00Z",
 }
 
 
@@ -65,6 +82,7 @@ class TestOut(Answer):
     """A test and where it stands."""
 
     __test__ = False
+    model_config = shown_as(STATE)
 
     key: str
     plan: str
@@ -92,6 +110,8 @@ class TestOut(Answer):
 class PostedOut(TestOut):
     """The state right after a submission, with the sequences that its observations were given."""
 
+    model_config = shown_as({**STATE, "first_sequence": 1, "last_sequence": 25})
+
     first_sequence: int
     last_sequence: int
 
@@ -109,6 +129,7 @@ class TestsOut(Answer):
     """A page of tests, by key."""
 
     __test__ = False
+    model_config = shown_as({"items": [STATE], "next_cursor": None})
 
     items: list[TestOut]
     next_cursor: str | None
