@@ -11,7 +11,7 @@ from service.api.schemas.common import Answer, FaultOut, ProblemOut
 from service.domain.errors import Fault
 
 EVERYWHERE = ("key-required", "role-required", "internal-error", "overloaded", "invalid-parameter")
-WITH_BODY = ("malformed-body", "body-too-large", "media-type", "invalid-body")
+WITH_BODY = ("outcome-unknown", "malformed-body", "body-too-large", "media-type", "invalid-body")
 
 
 def answers_with(*names: str, has_body: bool = False) -> dict[int | str, dict[str, Any]]:

@@ -108,6 +108,12 @@ _TYPES = (
     ProblemType(
         "internal-error", 500, "The service failed", "The log of the service has the reason, under this request id."
     ),
+    ProblemType(
+        "outcome-unknown",
+        503,
+        "The database did not confirm the write",
+        "It is not known whether the write is stored; send it again with the same idempotency key.",
+    ),
     ProblemType("overloaded", 503, "Not at this moment", "Too many submissions are waiting; try again shortly."),
 )
 
@@ -132,6 +138,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",
     errors.StorageFailed: "overloaded",
+    errors.OutcomeUnknown: "outcome-unknown",
 }
 
 

@@ -15,7 +15,7 @@ What can go wrong, without a word of HTTP.
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
-        ├── QueueFull, ShuttingDown, StorageFailed
+        ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown
 """
 
 from collections.abc import Sequence
@@ -158,7 +158,7 @@ class VersionMoved(DomainError):
 
 
 class Unavailable(DomainError):
-    """Not at this moment; nothing was stored."""
+    """Not at this moment."""
 
     retry_after_seconds = 1
 
@@ -186,3 +186,15 @@ class StorageFailed(Unavailable):
 
     def __init__(self) -> None:
         super().__init__("The database did not take the write; nothing was stored, try again shortly.")
+
+
+class OutcomeUnknown(Unavailable):
+    """The database was lost in the middle of a commit; whether it took the write will only show later."""
+
+    retry_after_seconds = 5
+
+    def __init__(self) -> None:
+        super().__init__(
+            "The database did not confirm the write, so it is not known whether it is stored; "
+            "send it again with the same idempotency key, or look at the log first."
+        )

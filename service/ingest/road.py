@@ -2,7 +2,8 @@
 The road itself: callers wait in a queue, one thread decides and commits what waits as one group.
 
 Nobody is answered before the commit. A refusal disturbs no other command of its group; any other error rolls the
-group back and its members are run one by one, so that only the one at fault fails. Stopping finishes what was
+group back and its members are run one by one, so that only the one at fault fails. A commit that the database does not
+confirm is never tried again, for it may have happened: its callers are told so. Stopping finishes what was
 accepted and takes nothing new.
 """
 
@@ -17,7 +18,14 @@ from datetime import UTC, datetime
 from sqlalchemy import Engine
 from sqlalchemy.exc import SQLAlchemyError
 
-from service.domain.errors import DomainError, QueueFull, ShuttingDown, StorageFailed, SubmissionInProgress
+from service.domain.errors import (
+    DomainError,
+    OutcomeUnknown,
+    QueueFull,
+    ShuttingDown,
+    StorageFailed,
+    SubmissionInProgress,
+)
 from service.ingest.commands import Command, Outcome, PostObservations
 from service.ingest.performing import perform
 from service.storage.writer import writing
@@ -49,6 +57,10 @@ class _Waiting:
 
     command: Command
     answer: asyncio.Future[Outcome] = field(compare=False)
+
+
+class _CommitFailed(Exception):
+    """Everything was performed, but the commit was not confirmed."""
 
 
 Answer = tuple[_Waiting, Outcome | BaseException]
@@ -129,6 +141,9 @@ class Road:
         """Run a group in one transaction, or one by one where that fails."""
         try:
             return self._in_one_transaction(group)
+        except _CommitFailed:
+            logger.exception("a commit was not confirmed")
+            return [(waiting, OutcomeUnknown()) for waiting in group]
         except Exception as error:
             if len(group) > 1:
                 return [answer for waiting in group for answer in self._carried_out([waiting])]
@@ -138,12 +153,19 @@ class Road:
 
     def _in_one_transaction(self, group: Sequence[_Waiting]) -> list[Answer]:
         answers: list[Answer] = []
-        with writing(self._engine) as writer:
-            for waiting in group:
-                try:
-                    answers.append((waiting, perform(waiting.command, writer, self._clock())))
-                except DomainError as refusal:
-                    answers.append((waiting, refusal))
+        is_performed = False
+        try:
+            with writing(self._engine) as writer:
+                for waiting in group:
+                    try:
+                        answers.append((waiting, perform(waiting.command, writer, self._clock())))
+                    except DomainError as refusal:
+                        answers.append((waiting, refusal))
+                is_performed = True
+        except SQLAlchemyError as error:
+            if is_performed:
+                raise _CommitFailed from error
+            raise
         return answers
 
 

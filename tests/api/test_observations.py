@@ -172,6 +172,7 @@ BAD_SUBMISSIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (SEAL, {"observations": [{"size": 2}]}, "/observations/0/value"),
     (SEAL, {"observations": [{"value": 0, "unit": ""}]}, "/observations/0/unit"),
     (SEAL, {"observations": [{"value": 0, "observed_at": "2031-05-04T09:30:00"}]}, "/observations/0/observed_at"),
+    (SEAL, {"observations": [{"value": 0, "observed_at": 1935653400}]}, "/observations/0/observed_at"),
     (WELD, {"values": [1, 1.5]}, "/values/1"),
     (WELD, {"observations": [{"value": 1, "exposure": 0.0}]}, "/observations/0/exposure"),
     (WELD, {"observations": [{"value": 1, "exposure": -2.0}]}, "/observations/0/exposure"),

@@ -8,11 +8,13 @@ from datetime import UTC, datetime
 from pathlib import Path
 
 import pytest
-from sqlalchemy import Engine, event, text
+from sqlalchemy import Connection, Engine, event, text
+from sqlalchemy.exc import OperationalError
 
 from service.domain.errors import (
     DomainError,
     InvalidObservations,
+    OutcomeUnknown,
     QueueFull,
     ShuttingDown,
     StorageFailed,
@@ -212,3 +214,26 @@ def test_a_closed_test_takes_nothing(engine: Engine) -> None:
 
 def test_every_refusal_is_an_error_of_the_domain() -> None:
     assert issubclass(QueueFull, DomainError)
+
+
+def test_a_commit_that_is_not_confirmed_is_never_tried_again(engine: Engine) -> None:
+    """The commit happens and the confirmation is lost, as when a connection breaks at that moment."""
+    has_failed = threading.Event()
+
+    def lose_the_confirmation(connection: Connection) -> None:
+        if not has_failed.is_set():
+            has_failed.set()
+            connection.exec_driver_sql("COMMIT")
+            raise OperationalError("COMMIT", {}, Exception("connection lost"))
+
+    event.listen(engine, "commit", lose_the_confirmation)
+
+    async def work(road: Road) -> None:
+        with pytest.raises(OutcomeUnknown):
+            await road.submit(post("a", key="k"))
+        again = await road.submit(post("a", key="k"))
+        assert isinstance(again, Posted)
+        assert again.is_replay
+
+    run(engine, work)
+    assert [s.last_sequence for s in Reader(engine).submissions("a")] == [1]

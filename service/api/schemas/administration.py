@@ -3,9 +3,9 @@
 from datetime import datetime
 from typing import Annotated, Any
 
-from pydantic import AwareDatetime, ConfigDict, Field
+from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name, shown_as
+from service.api.schemas.common import Answer, Form, Moment, Name, shown_as
 from service.domain.access import Role
 
 EXAMPLE: dict[str, Any] = {"name": "line-2-tester", "role": "collector", "expires_at": "2031-12-31T00:00:00Z"}
@@ -33,7 +33,7 @@ class KeyForm(Form):
 
     name: Name
     role: Role
-    expires_at: AwareDatetime | None = None
+    expires_at: Moment | None = None
 
 
 class KeyOut(Answer):

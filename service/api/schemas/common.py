@@ -1,14 +1,32 @@
 """Types that several schemas share."""
 
+from datetime import datetime
 from typing import Annotated, Any
 
-from pydantic import BaseModel, ConfigDict, Field, StringConstraints
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints
 
 Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
 Whole = Annotated[int, Field(strict=True)]
 Name = Annotated[str, StringConstraints(strict=True, pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]{0,99}$")]
 # Free text without control characters, which no log, table or page could show.
 Text = Annotated[str, StringConstraints(strict=True, min_length=1, max_length=200, pattern=r"^[^\x00-\x1f\x7f]+$")]
+
+
+def _moment(given: object) -> datetime:
+    """RFC 3339 text with its offset; numbers are no moments here."""
+    rule = "must be a date and time with its offset (RFC 3339)"
+    if not isinstance(given, str):
+        raise ValueError(rule)  # noqa: TRY004 - pydantic makes a fault of it
+    try:
+        moment = datetime.fromisoformat(given)
+    except ValueError:
+        raise ValueError(rule) from None
+    if moment.tzinfo is None:
+        raise ValueError(rule)
+    return moment
+
+
+Moment = Annotated[datetime, BeforeValidator(_moment, json_schema_input_type=str)]
 
 
 class Form(BaseModel):

@@ -3,9 +3,9 @@
 from datetime import UTC, datetime
 from typing import Annotated, Any, Self
 
-from pydantic import AwareDatetime, ConfigDict, Field, StrictBool, model_validator
+from pydantic import ConfigDict, Field, StrictBool, model_validator
 
-from service.api.schemas.common import Answer, Form, Number, Text, shown_as
+from service.api.schemas.common import Answer, Form, Moment, Number, Text, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.families import Family
 from service.domain.log import LoggedObservation
@@ -57,7 +57,7 @@ class ObservationForm(Form):
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
     failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
     unit: Text = Field(default_factory=str, description="Serial number; may be counted once in a test.")
-    observed_at: AwareDatetime = Field(
+    observed_at: Moment = Field(
         default_factory=lambda: datetime.min.replace(tzinfo=UTC),
         description="When it was observed, with its time zone (RFC 3339).",
     )
