@@ -2,6 +2,7 @@
 
 import logging
 from collections.abc import AsyncIterator
+from concurrent.futures import ThreadPoolExecutor
 from contextlib import asynccontextmanager
 
 from fastapi import FastAPI
@@ -11,12 +12,15 @@ from service.api.access import AccessGuard
 from service.api.description import describe
 from service.api.parts import Parts
 from service.api.requests import RequestId
-from service.api.routes import administration, health, observations, plans, tests
+from service.api.routes import administration, characteristics, health, observations, plans, tests
 from service.ingest.road import Clock, Road, utc_now
 from service.settings import Settings
 from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
 from service.storage.reader import Reader
+
+# Exact computations that run at once; more wait.
+COMPUTERS = 2
 
 VERSION = "0.1.0"
 
@@ -38,13 +42,15 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
         engine = create_engine_for(settings.database_url)
         check_schema(engine)
+        computers = ThreadPoolExecutor(COMPUTERS, thread_name_prefix="computer")
         road = Road(engine, clock, settings.queue_limit, settings.group_limit)
-        app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine))
+        app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine), computers)
         road.start()
         try:
             yield
         finally:
             await road.stop()
+            computers.shutdown(wait=False, cancel_futures=True)
             engine.dispose()
 
     logging.getLogger("service").setLevel(settings.log_level)
@@ -60,7 +66,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     problems.install(app)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, tests, observations, administration, health):
+    for module in (plans, characteristics, tests, observations, administration, health):
         app.include_router(module.router)
     app.openapi = describe(app)  # type: ignore[method-assign]
     return app

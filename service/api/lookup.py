@@ -16,6 +16,19 @@ async def known_test(parts: Parts, key: str) -> tuple[SequentialTest, Plan]:
     return await reading(lambda: _test_with_plan(parts, key))
 
 
+async def known_plan(parts: Parts, name: str) -> Plan:
+    """
+    A stored plan.
+
+    Raises:
+        UnknownPlan: There is none of this name.
+    """
+    plan = await reading(lambda: parts.reader.plan(name))
+    if plan is None:
+        raise UnknownPlan(name)
+    return plan
+
+
 def _test_with_plan(parts: Parts, key: str) -> tuple[SequentialTest, Plan]:
     test = parts.reader.test(key)
     if test is None:

@@ -2,6 +2,7 @@
 
 import asyncio
 from collections.abc import Callable
+from concurrent.futures import Executor
 from dataclasses import dataclass
 from typing import Annotated, TypeVar, cast
 
@@ -23,6 +24,7 @@ class Parts:
     road: Road
     clock: Clock
     check_ready: Callable[[], None]
+    computers: Executor
 
 
 async def _parts(request: Request) -> Parts:
@@ -35,3 +37,8 @@ PartsOf = Annotated[Parts, Depends(_parts)]
 async def reading(work: Callable[[], T]) -> T:
     """Run a read of the database off the event loop."""
     return await asyncio.to_thread(work)
+
+
+async def computing(parts: Parts, work: Callable[[], T]) -> T:
+    """Run a long computation on threads of its own, so that neither the event loop nor reads wait for it."""
+    return await asyncio.get_running_loop().run_in_executor(parts.computers, work)

@@ -100,6 +100,19 @@ _TYPES = (
     ),
     ProblemType("invalid-key", 422, "The access key cannot be made", "The expiry must lie in the future."),
     ProblemType(
+        "invalid-question",
+        422,
+        "The plan cannot answer this",
+        "A parameter lies outside the family's range; see errors.",
+        "/at/0",
+    ),
+    ProblemType(
+        "computation-too-large",
+        422,
+        "The exact computation would be too large",
+        "The exact computation would need more than 100000 steps.",
+    ),
+    ProblemType(
         "idempotency-key-reused",
         422,
         "The idempotency key was used for something else",
@@ -124,6 +137,8 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.InvalidTest: "invalid-test",
     errors.InvalidObservations: "invalid-observations",
     errors.InvalidKey: "invalid-key",
+    errors.InvalidQuestion: "invalid-question",
+    errors.ComputationTooLarge: "computation-too-large",
     errors.IdempotencyKeyReused: "idempotency-key-reused",
     errors.UnknownPlan: "not-found",
     errors.UnknownTest: "not-found",

@@ -7,6 +7,8 @@ What can go wrong, without a word of HTTP.
     │   ├── InvalidTest
     │   ├── InvalidObservations
     │   ├── InvalidKey
+    │   ├── InvalidQuestion
+    │   ├── ComputationTooLarge
     │   └── IdempotencyKeyReused
     ├── Unknown                  there is no such thing
     │   ├── UnknownPlan, UnknownTest, UnknownKey
@@ -62,6 +64,20 @@ class InvalidObservations(Invalid):
 
 class InvalidKey(Invalid):
     """A key cannot be made as asked."""
+
+
+class InvalidQuestion(Invalid):
+    """What is asked about a plan lies outside what it can answer."""
+
+
+class ComputationTooLarge(Invalid):
+    """The exact computation would need more work than the service does for one question."""
+
+    def __init__(self, limit: int) -> None:
+        super().__init__(
+            f"The exact computation would need more than {limit} steps. Truncate the plan, move the hypotheses apart, "
+            "or ask for less extreme parameters."
+        )
 
 
 class IdempotencyKeyReused(Invalid):

@@ -36,6 +36,8 @@ class Procedure:
     ratio: LikelihoodRatio
     thresholds: Thresholds
     region: StraightRegion
+    known: Mapping[str, float]
+    hypotheses: tuple[float, float]
 
 
 @dataclass(frozen=True)
@@ -72,6 +74,11 @@ def checked_content(given: Content) -> str:
     return document
 
 
+def procedure_of_document(document: str) -> Procedure:
+    """The procedure of a canonical document from `checked_content`, for plans that are not stored."""
+    return _compiled(document)
+
+
 def procedure_of(plan: Plan) -> Procedure:
     """The procedure of a stored plan; compiled once for each content."""
     return _compiled(plan.document)
@@ -92,7 +99,8 @@ def _compiled(document: str) -> Procedure:
     ratio = family.likelihood_ratio(content["h0"], content["h1"], content.get("known", {}))
     thresholds = _thresholds(content)
     region = straight_region(ratio, thresholds, family.span, _wall(content))
-    return Procedure(family, ratio, thresholds, region)
+    known = content.get("known", {})
+    return Procedure(family, ratio, thresholds, region, known, (content["h0"], content["h1"]))
 
 
 def _thresholds(content: Content) -> Thresholds:

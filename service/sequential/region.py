@@ -113,6 +113,10 @@ class Region(Protocol):
         """The progress at which the lower limit, wall left out, comes up to each total; array of shape (points,)."""
         ...
 
+    def upper_left_at(self, total: FloatArray) -> FloatArray:
+        """The progress until which each total is at or over the upper limit, wall left out; shape (points,)."""
+        ...
+
 
 @dataclass(frozen=True)
 class StraightRegion:
@@ -173,6 +177,10 @@ class StraightRegion:
     def lower_reached_at(self, total: FloatArray) -> FloatArray:
         """See `Region`."""
         return (total + self.lower_intercept) / self.ratio.slope
+
+    def upper_left_at(self, total: FloatArray) -> FloatArray:
+        """See `Region`."""
+        return (total - self.upper_intercept) / self.ratio.slope
 
     def first_possible_decision(self) -> float:
         """

@@ -17,6 +17,8 @@ LEAST_ROLE = {
     ("POST", "/v1/plans"): "engineer",
     ("GET", "/v1/plans"): "viewer",
     ("GET", "/v1/plans/{name}"): "viewer",
+    ("GET", "/v1/plans/{name}/characteristics"): "viewer",
+    ("POST", "/v1/characteristics"): "viewer",
     ("POST", "/v1/tests"): "engineer",
     ("GET", "/v1/tests"): "viewer",
     ("GET", "/v1/tests/{key}"): "viewer",

@@ -9,12 +9,11 @@ from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.conditional import etag, not_modified
 from service.api.description import answers_with
+from service.api.lookup import known_plan
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
-from service.api.parts import Parts, PartsOf, reading
+from service.api.parts import PartsOf, reading
 from service.api.schemas.plans import PlanForm, PlanOut, PlansOut
 from service.domain.access import AccessKey, Role
-from service.domain.errors import UnknownPlan
-from service.domain.plan import Plan
 from service.ingest.commands import CreatePlan, StoredPlan
 
 router = APIRouter(prefix="/v1/plans", tags=["plans"], route_class=StrictRoute)
@@ -68,16 +67,9 @@ async def list_plans(
 )
 async def show_plan(name: str, request: Request, response: Response, parts: PartsOf) -> PlanOut | Response:
     """A stored plan with its thresholds and lines."""
-    plan = await _known_plan(parts, name)
+    plan = await known_plan(parts, name)
     tag = etag(plan.fingerprint)
     if (unchanged := not_modified(request, tag)) is not None:
         return unchanged
     response.headers["ETag"] = tag
     return PlanOut.of(plan)
-
-
-async def _known_plan(parts: Parts, name: str) -> Plan:
-    plan = await reading(lambda: parts.reader.plan(name))
-    if plan is None:
-        raise UnknownPlan(name)
-    return plan

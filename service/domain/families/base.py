@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 
 from service.domain.errors import Fault, InvalidObservations
 from service.sequential.double import FloatArray
+from service.sequential.exact.characteristics import Characteristics
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import Span
+from service.sequential.region import Span, StraightRegion
 
 # Magnitudes beyond these say that a field was misread; they also keep every product far from overflow.
 LARGEST_REAL = 1e100
@@ -100,6 +101,19 @@ class Family(ABC):
 
         Raises:
             InvalidObservations: With a fault for each offending element.
+        """
+
+    def parameter_rule(self, value: float) -> str | None:
+        """The rule that a true parameter breaks; the ends of the range may be asked for where they mean something."""
+        return self.hypothesis_rule(value)
+
+    @abstractmethod
+    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+        """
+        Exact figures of a region at these true parameters; array of shape (points,).
+
+        Raises:
+            TooMuchWork: The computation would need more steps than are allowed.
         """
 
     @property

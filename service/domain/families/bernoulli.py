@@ -7,8 +7,11 @@ import numpy as np
 
 from service.domain.families.base import Column, Family, Increments, refuse, whole_numbers
 from service.sequential import likelihood
+from service.sequential.double import FloatArray
+from service.sequential.exact.characteristics import Characteristics
+from service.sequential.exact.counting import bernoulli_jumps, counting_characteristics
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import PASS_FAIL, Span
+from service.sequential.region import PASS_FAIL, Span, StraightRegion
 
 
 class Bernoulli(Family):
@@ -26,6 +29,14 @@ class Bernoulli(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.bernoulli(h0, h1)
+
+    def parameter_rule(self, value: float) -> str | None:
+        """See `Family`."""
+        return None if 0.0 <= value <= 1.0 else "must lie between 0 and 1"
+
+    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+        """See `Family`."""
+        return counting_characteristics(region, bernoulli_jumps(parameters), 1.0)
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

@@ -7,8 +7,11 @@ import numpy as np
 
 from service.domain.families.base import Column, Family, Increments, positive_rule, reals, refuse
 from service.sequential import likelihood
+from service.sequential.double import FloatArray
+from service.sequential.exact.characteristics import Characteristics
+from service.sequential.exact.in_time import characteristics_in_time
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import COUNTS, Span
+from service.sequential.region import COUNTS, Span, StraightRegion
 
 
 class Exponential(Family):
@@ -34,6 +37,10 @@ class Exponential(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.exponential(h0, h1)
+
+    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+        """See `Family`."""
+        return characteristics_in_time(region, 1.0 / parameters)
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

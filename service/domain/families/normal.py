@@ -7,8 +7,11 @@ import numpy as np
 
 from service.domain.families.base import LARGEST_REAL, Column, Family, Increments, reals, refuse
 from service.sequential import likelihood
+from service.sequential.double import FloatArray
+from service.sequential.exact.characteristics import Characteristics
+from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import REALS, Span
+from service.sequential.region import REALS, Span, StraightRegion
 
 
 class Normal(Family):
@@ -26,6 +29,10 @@ class Normal(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.normal(h0, h1, known["sigma"])
+
+    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+        """See `Family`."""
+        return gaussian_characteristics(region, parameters, known["sigma"])
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

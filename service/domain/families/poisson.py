@@ -1,5 +1,6 @@
 """Counts over an exposure: defects for an area, events for unit-hours."""
 
+import math
 from collections.abc import Mapping
 from typing import ClassVar
 
@@ -7,8 +8,14 @@ import numpy as np
 
 from service.domain.families.base import Column, Family, Increments, positive_rule, reals, refuse, whole_numbers
 from service.sequential import likelihood
+from service.sequential.double import FloatArray
+from service.sequential.exact.characteristics import Characteristics, TooMuchWork
+from service.sequential.exact.counting import counting_characteristics, poisson_jumps
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import COUNTS, Span
+from service.sequential.region import COUNTS, Span, StraightRegion
+
+# Totals that the exact computation follows at once.
+WIDEST = 2000
 
 
 class Poisson(Family):
@@ -27,6 +34,18 @@ class Poisson(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.poisson(h0, h1)
+
+    def parameter_rule(self, value: float) -> str | None:
+        """See `Family`."""
+        return None if value == 0.0 else positive_rule(value)
+
+    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+        """See `Family`."""
+        # One step is a report of exposure 1; no jump that stays inside is larger than the region is wide.
+        widest = region.lower_intercept + region.upper_intercept + region.ratio.slope
+        if widest > WIDEST:
+            raise TooMuchWork(WIDEST)
+        return counting_characteristics(region, poisson_jumps(parameters, math.ceil(widest) + 2), 1.0)
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

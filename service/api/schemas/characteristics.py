@@ -1,0 +1,103 @@
+"""What a plan promises."""
+
+from typing import Annotated, Any
+
+from pydantic import ConfigDict, Field
+
+from service.api.schemas.common import Answer, Number, shown_as
+from service.api.schemas.plans import EXAMPLE as PLAN
+from service.api.schemas.plans import PlanForm
+from service.domain.characteristics import Point, Promise, Spread
+
+PROMISE: dict[str, Any] = {
+    "method": "recursion",
+    "error_bound": 1.1e-13,
+    "attained": {"alpha": 0.0220, "beta": 0.0996},
+    "points": [
+        {
+            "parameter": 0.01,
+            "probability_of_acceptance": 0.97795,
+            "average_sample_number": 30.21273,
+            "standard_deviation": 12.2,
+            "quantiles": {"0.5": 24.0, "0.9": 50.0, "0.95": 50.0, "0.99": 75.0},
+            "average_exposure": None,
+            "exposure_standard_deviation": None,
+            "exposure_quantiles": None,
+            "average_failures": None,
+        }
+    ],
+}
+
+
+class CharacteristicsForm(PlanForm):
+    """A plan that is not stored, and the true parameters to ask about."""
+
+    model_config = ConfigDict(json_schema_extra={"examples": [{**PLAN, "at": [0.01, 0.05]}]})
+
+    at: Annotated[list[Number], Field(max_length=500)] = Field(default_factory=list)
+
+    def content(self) -> dict[str, Any]:
+        """The plan without its name and the parameters."""
+        return self.model_dump(exclude_none=True, exclude={"name", "at"})
+
+
+class AttainedOut(Answer):
+    """The exact risks: P(reject) at h0 and P(accept) at h1."""
+
+    alpha: float
+    beta: float
+
+
+class PointOut(Answer):
+    """The figures at one true parameter."""
+
+    parameter: float
+    probability_of_acceptance: float
+    average_sample_number: float | None = Field(description="None where reports have no fixed size.")
+    standard_deviation: float | None
+    quantiles: dict[str, float] | None
+    average_exposure: float | None
+    exposure_standard_deviation: float | None
+    exposure_quantiles: dict[str, float] | None
+    average_failures: float | None
+
+    @classmethod
+    def of(cls, point: Point) -> "PointOut":
+        """From the domain's point."""
+        number, exposure = _members(point.sample_number), _members(point.exposure)
+        return cls(
+            parameter=point.parameter,
+            probability_of_acceptance=point.probability_of_acceptance,
+            average_sample_number=number[0],
+            standard_deviation=number[1],
+            quantiles=number[2],
+            average_exposure=exposure[0],
+            exposure_standard_deviation=exposure[1],
+            exposure_quantiles=exposure[2],
+            average_failures=point.failures,
+        )
+
+
+class CharacteristicsOut(Answer):
+    """What a plan promises."""
+
+    model_config = shown_as(PROMISE)
+
+    method: str
+    error_bound: float
+    attained: AttainedOut
+    points: list[PointOut]
+
+    @classmethod
+    def of(cls, promise: Promise) -> "CharacteristicsOut":
+        """From the domain's promise."""
+        return cls(
+            method=promise.method,
+            error_bound=promise.error_bound,
+            attained=AttainedOut(alpha=promise.alpha, beta=promise.beta),
+            points=[PointOut.of(point) for point in promise.points],
+        )
+
+
+def _members(spread: Spread | None) -> tuple[float | None, float | None, dict[str, float] | None]:
+    return (None, None, None) if spread is None else (spread.mean, spread.standard_deviation, spread.quantiles)

@@ -1,0 +1,127 @@
+"""What a plan really promises: exact probabilities of acceptance and exact sample numbers."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+
+from service.domain.errors import ComputationTooLarge, Fault, InvalidQuestion
+from service.domain.procedure import Procedure, procedure_of_document
+from service.sequential.decision import Decision
+from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork
+
+GRID_POINTS = 51
+MOST_PARAMETERS = 500
+
+
+@dataclass(frozen=True)
+class Spread:
+    """Mean, standard deviation and quantiles of a number that ends with the decision."""
+
+    mean: float
+    standard_deviation: float
+    quantiles: dict[str, float]
+
+
+@dataclass(frozen=True)
+class Point:
+    """
+    The figures at one true parameter.
+
+    `sample_number` is None where reports have no fixed size (families watched in time); `exposure` is None for families
+    without exposure. `failures` is the mean number of failures for families watched in time.
+    """
+
+    parameter: float
+    probability_of_acceptance: float
+    sample_number: Spread | None
+    exposure: Spread | None
+    failures: float | None
+
+
+@dataclass(frozen=True)
+class Promise:
+    """The attained risks and the figures at each parameter asked for."""
+
+    method: str
+    error_bound: float
+    alpha: float
+    beta: float
+    points: tuple[Point, ...]
+
+
+def promise_of(document: str, at: Sequence[float]) -> Promise:
+    """
+    Exact figures of a plan at these parameters, or on a grid fit for plotting when none is given.
+
+    Args:
+        document: The plan's canonical document.
+        at: True parameters.
+
+    Raises:
+        InvalidQuestion: Too many parameters, or one outside the family's range.
+        ComputationTooLarge: The recursion would not end within its limit.
+    """
+    procedure = procedure_of_document(document)
+    if len(at) > MOST_PARAMETERS:
+        raise InvalidQuestion("Too many parameters.", [Fault("/at", f"at most {MOST_PARAMETERS}; received {len(at)}")])
+    faults = [
+        Fault(f"/at/{i}", f"{rule}: it is a {procedure.family.parameter}; received {value!r}")
+        for i, value in enumerate(at)
+        if (rule := procedure.family.parameter_rule(value)) is not None
+    ]
+    if faults:
+        raise InvalidQuestion("A parameter lies outside the family's range; see errors.", faults[:20])
+    return _promise(document, tuple(at) or _grid(procedure))
+
+
+@lru_cache(maxsize=256)
+def _promise(document: str, at: tuple[float, ...]) -> Promise:
+    procedure = procedure_of_document(document)
+    parameters = np.array([*procedure.hypotheses, *at])
+    try:
+        found = procedure.family.exact(procedure.region, parameters, procedure.known)
+    except TooMuchWork as error:
+        raise ComputationTooLarge(error.limit) from error
+    accepts = found.below if procedure.region.below is Decision.ACCEPT else found.above
+    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
+    return Promise(
+        method="recursion" if procedure.family.span.is_integer else "quadrature",
+        error_bound=found.error_bound,
+        alpha=float(rejects[0]),
+        beta=float(accepts[1]),
+        points=tuple(
+            _point(procedure, found, i, float(parameters[i]), float(accepts[i])) for i in range(2, len(parameters))
+        ),
+    )
+
+
+def _point(procedure: Procedure, found: Characteristics, i: int, parameter: float, accepts: float) -> Point:
+    family = procedure.family
+    ends = Spread(
+        float(found.mean[i]),
+        float(found.standard_deviation[i]),
+        {f"{q:g}": float(value) for q, value in zip(QUANTILES, found.quantiles[i], strict=True)},
+    )
+    return Point(
+        parameter=parameter,
+        probability_of_acceptance=min(1.0, max(0.0, accepts)),
+        sample_number=None if family.is_watched_in_time else ends,
+        exposure=ends if family.has_exposure else None,
+        failures=ends.mean / parameter if family.is_watched_in_time else None,
+    )
+
+
+def _grid(procedure: Procedure) -> tuple[float, ...]:
+    """Parameters around both hypotheses that show the whole curve."""
+    low, high = sorted(procedure.hypotheses)
+    family = procedure.family
+    if family.parameter_rule(-1.0) is None:
+        grid = np.linspace(low - (high - low), high + (high - low), GRID_POINTS)
+    elif family.parameter_rule(2.0) is None:
+        grid = np.geomspace(low / 2.0, high * 2.0, GRID_POINTS)
+    else:
+        margin = high - low
+        grid = np.linspace(max(0.0, low - margin), min(1.0, high + margin), GRID_POINTS)
+    return tuple(float(value) for value in grid)

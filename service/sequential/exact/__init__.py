@@ -1,0 +1,1 @@
+"""Exact operating characteristics and sample numbers: recursions and quadrature over the region."""

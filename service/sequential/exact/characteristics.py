@@ -1,0 +1,45 @@
+"""What a plan does at given parameters, as every exact computation answers it."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from service.sequential.double import FloatArray
+
+# Sampling that is still going on with less than this probability is no longer followed.
+NEGLIGIBLE = 1e-13
+
+QUANTILES = (0.5, 0.9, 0.95, 0.99)
+
+
+class TooMuchWork(Exception):
+    """The computation would need more steps than are allowed; `limit` says how many."""
+
+    def __init__(self, limit: int) -> None:
+        super().__init__(f"the exact computation would need more than {limit} steps")
+        self.limit = limit
+
+
+@dataclass(frozen=True)
+class Characteristics:
+    """
+    Exact figures at some parameters; arrays of shape (points,), quantiles of shape (points, 4).
+
+    `mean`, `standard_deviation` and `quantiles` are of the progress at the decision: units, or exposure.
+
+    Attributes:
+        error_bound: A bound of the absolute error of the probabilities, and of the relative error of the means.
+    """
+
+    below: FloatArray
+    above: FloatArray
+    mean: FloatArray
+    standard_deviation: FloatArray
+    quantiles: FloatArray
+    error_bound: float
+
+
+def spread(mean: FloatArray, second_moment: FloatArray) -> FloatArray:
+    """The standard deviation from two moments, never below zero."""
+    deviation: FloatArray = np.sqrt(np.maximum(0.0, second_moment - mean**2))
+    return deviation
