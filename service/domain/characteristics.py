@@ -8,6 +8,7 @@ import numpy as np
 
 from service.domain.errors import ComputationTooLarge, Fault, InvalidQuestion
 from service.domain.procedure import Procedure, procedure_of_document
+from service.sequential.approximations import OVERSHOOT, approximate
 from service.sequential.decision import Decision
 from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork
 
@@ -25,10 +26,40 @@ class Spread:
 
 
 @dataclass(frozen=True)
+class Approximate:
+    """An approximation beside the exact figures; `average` is of units, or of the exposure."""
+
+    probability_of_acceptance: float
+    average: float
+
+
+@dataclass(frozen=True)
+class Fixed:
+    """
+    The smallest fixed sample that keeps the plan's stated risks.
+
+    Attributes:
+        size: Units, or exposure.
+        acceptance_limit: The total that still accepts.
+        accepts_at_most: True where totals up to the limit accept, False where those from it on do.
+        saving_at_h0, saving_at_h1: The share of the size that sequential sampling saves on average.
+    """
+
+    size: float
+    acceptance_limit: float
+    accepts_at_most: bool
+    alpha: float
+    beta: float
+    saving_at_h0: float
+    saving_at_h1: float
+
+
+@dataclass(frozen=True)
 class Point:
     """
     The figures at one true parameter.
 
+    `wald` and `siegmund` are None where the plan is truncated; `siegmund` also where steps are not normal.
     `sample_number` is None where reports have no fixed size (families watched in time); `exposure` is None for families
     without exposure. `failures` is the mean number of failures for families watched in time.
     """
@@ -38,6 +69,8 @@ class Point:
     sample_number: Spread | None
     exposure: Spread | None
     failures: float | None
+    wald: Approximate | None
+    siegmund: Approximate | None
 
 
 @dataclass(frozen=True)
@@ -49,6 +82,7 @@ class Promise:
     alpha: float
     beta: float
     points: tuple[Point, ...]
+    fixed_sample: Fixed | None
 
 
 def promise_of(document: str, at: Sequence[float]) -> Promise:
@@ -94,6 +128,7 @@ def _promise(document: str, at: tuple[float, ...]) -> Promise:
         points=tuple(
             _point(procedure, found, i, float(parameters[i]), float(accepts[i])) for i in range(2, len(parameters))
         ),
+        fixed_sample=_fixed_sample(procedure, found),
     )
 
 
@@ -110,6 +145,42 @@ def _point(procedure: Procedure, found: Characteristics, i: int, parameter: floa
         sample_number=None if family.is_watched_in_time else ends,
         exposure=ends if family.has_exposure else None,
         failures=ends.mean / parameter if family.is_watched_in_time else None,
+        wald=_approximate(procedure, parameter, 0.0),
+        siegmund=None if family.span.is_integer else _approximate(procedure, parameter, OVERSHOOT),
+    )
+
+
+def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Approximate | None:
+    """Wald's approximation, with the overshoot in standard deviations added to both intercepts."""
+    region, family = procedure.region, procedure.family
+    if region.wall is not None:
+        return None
+    motion = family.motion(parameter, procedure.known)
+    more = overshoot * motion.variance**0.5
+    found = approximate(motion, procedure.ratio.slope, region.lower_intercept + more, region.upper_intercept + more)
+    if found is None:
+        return None
+    accepts = found.below if region.below is Decision.ACCEPT else 1.0 - found.below
+    return Approximate(accepts, found.progress)
+
+
+def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
+    h0, h1 = procedure.hypotheses
+    alpha, beta = procedure.risks
+    is_upward = procedure.ratio.is_upward
+    lower, upper, risks = (h0, h1, (alpha, beta)) if is_upward else (h1, h0, (beta, alpha))
+    sample = procedure.family.fixed_sample(lower, upper, risks, procedure.known)
+    if sample is None:
+        return None
+    next_total = sample.limit + (1.0 if procedure.family.span.is_integer else 0.0)
+    return Fixed(
+        size=sample.size,
+        acceptance_limit=sample.limit if is_upward else next_total,
+        accepts_at_most=is_upward,
+        alpha=sample.lower_risk if is_upward else sample.upper_risk,
+        beta=sample.upper_risk if is_upward else sample.lower_risk,
+        saving_at_h0=1.0 - float(found.mean[0]) / sample.size,
+        saving_at_h1=1.0 - float(found.mean[1]) / sample.size,
     )
 
 

@@ -38,6 +38,7 @@ class Procedure:
     region: StraightRegion
     known: Mapping[str, float]
     hypotheses: tuple[float, float]
+    risks: tuple[float, float]
 
 
 @dataclass(frozen=True)
@@ -100,7 +101,9 @@ def _compiled(document: str) -> Procedure:
     thresholds = _thresholds(content)
     region = straight_region(ratio, thresholds, family.span, _wall(content))
     known = content.get("known", {})
-    return Procedure(family, ratio, thresholds, region, known, (content["h0"], content["h1"]))
+    return Procedure(
+        family, ratio, thresholds, region, known, (content["h0"], content["h1"]), (content["alpha"], content["beta"])
+    )
 
 
 def _thresholds(content: Content) -> Thresholds:

@@ -19,6 +19,7 @@ LEAST_ROLE = {
     ("GET", "/v1/plans/{name}"): "viewer",
     ("GET", "/v1/plans/{name}/characteristics"): "viewer",
     ("POST", "/v1/characteristics"): "viewer",
+    ("POST", "/v1/plans/{name}/rehearsal"): "viewer",
     ("POST", "/v1/tests"): "engineer",
     ("GET", "/v1/tests"): "viewer",
     ("GET", "/v1/tests/{key}"): "viewer",

@@ -1,19 +1,23 @@
 """What plans really promise: exact risks and sample numbers, stored plans or not."""
 
-from typing import Annotated
+from typing import Annotated, cast
 
-from fastapi import APIRouter, Query
+from fastapi import APIRouter, Query, Request
 from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
-from service.api.bodies import StrictRoute
+from service.api.bodies import StrictRequest, StrictRoute
 from service.api.description import answers_with
 from service.api.lookup import known_plan
 from service.api.parts import PartsOf, computing
+from service.api.routes.observations import PathQuery, check_batch
 from service.api.schemas.characteristics import CharacteristicsForm, CharacteristicsOut
+from service.api.schemas.observations import ObservationsForm, RehearsalOut
 from service.domain.access import Role
 from service.domain.characteristics import promise_of
-from service.domain.procedure import checked_content
+from service.domain.observing import observe
+from service.domain.procedure import checked_content, procedure_of
+from service.domain.state import State
 
 router = APIRouter(prefix="/v1", tags=["characteristics"], route_class=StrictRoute)
 
@@ -50,3 +54,25 @@ async def design(form: CharacteristicsForm, parts: PartsOf) -> CharacteristicsOu
     """For designing: nothing is stored."""
     document = checked_content(form.content())
     return CharacteristicsOut.of(await computing(parts, lambda: promise_of(document, form.at)))
+
+
+@router.post(
+    "/plans/{name}/rehearsal",
+    responses=answers_with("not-found", "invalid-observations", has_body=True),
+    summary="Run historical observations through a stored plan",
+    dependencies=[requires(Role.VIEWER)],
+)
+async def rehearse(
+    name: str, form: ObservationsForm, request: Request, parts: PartsOf, query: Annotated[PathQuery, Query()]
+) -> RehearsalOut:
+    """What the plan would have answered, and the path to it; nothing is stored."""
+    check_batch(form, parts.settings.max_batch)
+    plan = await known_plan(parts, name)
+    document = cast("StrictRequest", request).document
+
+    def run() -> RehearsalOut:
+        procedure = procedure_of(plan)
+        state = observe(procedure, State(), document, parts.clock())
+        return RehearsalOut.of(procedure, state, document, query.points)
+
+    return await computing(parts, run)

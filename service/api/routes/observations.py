@@ -24,18 +24,15 @@ from service.api.schemas.observations import (
     LogOut,
     ObservationsForm,
     PathOut,
-    PathPointOut,
-    RegionPointOut,
     csv_columns,
+    drawn,
 )
-from service.api.schemas.plans import ThresholdsOut
-from service.api.schemas.tests import PostedOut, total_of
+from service.api.schemas.tests import PostedOut
 from service.domain.access import AccessKey, Role
 from service.domain.errors import Fault
 from service.domain.log import document_of, expanded
-from service.domain.path import Path, RegionPoint, path_of, region_points
 from service.domain.plan import Plan
-from service.domain.procedure import Procedure, procedure_of
+from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import Posted, PostObservations
 
@@ -90,7 +87,7 @@ async def post_observations(  # noqa: PLR0913 - each argument is a part of the r
 
     With an `Idempotency-Key`, a repeated submission is answered as the first one was and changes nothing.
     """
-    _check_batch(form, parts.settings.max_batch)
+    check_batch(form, parts.settings.max_batch)
     command = await _command(key, request, access_key, idempotency_key)
     outcome = cast("Posted", await parts.road.submit(command))
     response.headers["ETag"] = etag(outcome.test.version)
@@ -150,7 +147,13 @@ async def show_path(
     return await reading(lambda: _path(parts, test, plan, query.points))
 
 
-def _check_batch(form: ObservationsForm, limit: int) -> None:
+def check_batch(form: ObservationsForm, limit: int) -> None:
+    """
+    Refuse a submission of more observations than are taken at once.
+
+    Raises:
+        RequestProblem: invalid-body, with the limit.
+    """
     if form.count > limit:
         pointer = "/values" if form.values else "/observations"
         fault = Fault(pointer, f"may hold at most {limit} observations; received {form.count}")
@@ -200,38 +203,4 @@ def _cell(value: object) -> str:
 def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOut:
     procedure = procedure_of(plan)
     documents = (document_of(submission) for submission in parts.reader.submissions(test.key))
-    path = path_of(procedure, documents, points)
-    region = region_points(procedure, float(path.progress[-1]))
-    has_exposure = procedure.family.has_exposure
-    return PathOut(
-        key=test.key,
-        decision=test.state.decision,
-        axis="exposure" if has_exposure else "sample_number",
-        thresholds=ThresholdsOut.model_validate(procedure.thresholds),
-        points=[_path_point(procedure, path, i) for i in range(len(path.sequence))],
-        region=[_region_point(procedure, point) for point in region],
-    )
-
-
-def _path_point(procedure: Procedure, path: Path, index: int) -> PathPointOut:
-    return PathPointOut(
-        sequence=int(path.sequence[index]),
-        sample_number=int(path.sample_number[index]),
-        exposure=float(path.progress[index]) if procedure.family.has_exposure else None,
-        total=total_of(procedure.family, float(path.total[index])),
-        log_likelihood_ratio=float(path.log_likelihood_ratio[index]),
-    )
-
-
-def _region_point(procedure: Procedure, point: RegionPoint) -> RegionPointOut:
-    has_exposure = procedure.family.has_exposure
-    return RegionPointOut(
-        sample_number=None if has_exposure else int(point.progress),
-        exposure=point.progress if has_exposure else None,
-        accept=_limit(procedure, point.accept),
-        reject=_limit(procedure, point.reject),
-    )
-
-
-def _limit(procedure: Procedure, total: float | None) -> int | float | None:
-    return None if total is None else total_of(procedure.family, total)
+    return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, documents, points))

@@ -24,8 +24,19 @@ PROMISE: dict[str, Any] = {
             "exposure_standard_deviation": None,
             "exposure_quantiles": None,
             "average_failures": None,
+            "wald": {"probability_of_acceptance": 0.95, "average": 24.3},
+            "siegmund": None,
         }
     ],
+    "fixed_sample": {
+        "size": 52,
+        "acceptance_limit": 2,
+        "accepts_at_most": True,
+        "alpha": 0.0159,
+        "beta": 0.0966,
+        "saving_at_h0": 0.42,
+        "saving_at_h1": 0.57,
+    },
 }
 
 
@@ -48,6 +59,25 @@ class AttainedOut(Answer):
     beta: float
 
 
+class ApproximateOut(Answer):
+    """An approximation, named as one."""
+
+    probability_of_acceptance: float
+    average: float = Field(description="Mean sample number, or mean exposure for families with it.")
+
+
+class FixedSampleOut(Answer):
+    """The smallest fixed sample that keeps the stated risks, and what sequential sampling saves on average."""
+
+    size: int | float
+    acceptance_limit: int | float
+    accepts_at_most: bool
+    alpha: float
+    beta: float
+    saving_at_h0: float
+    saving_at_h1: float
+
+
 class PointOut(Answer):
     """The figures at one true parameter."""
 
@@ -60,6 +90,8 @@ class PointOut(Answer):
     exposure_standard_deviation: float | None
     exposure_quantiles: dict[str, float] | None
     average_failures: float | None
+    wald: ApproximateOut | None
+    siegmund: ApproximateOut | None
 
     @classmethod
     def of(cls, point: Point) -> "PointOut":
@@ -75,6 +107,8 @@ class PointOut(Answer):
             exposure_standard_deviation=exposure[1],
             exposure_quantiles=exposure[2],
             average_failures=point.failures,
+            wald=None if point.wald is None else ApproximateOut.model_validate(point.wald),
+            siegmund=None if point.siegmund is None else ApproximateOut.model_validate(point.siegmund),
         )
 
 
@@ -87,6 +121,7 @@ class CharacteristicsOut(Answer):
     error_bound: float
     attained: AttainedOut
     points: list[PointOut]
+    fixed_sample: FixedSampleOut | None
 
     @classmethod
     def of(cls, promise: Promise) -> "CharacteristicsOut":
@@ -96,6 +131,7 @@ class CharacteristicsOut(Answer):
             error_bound=promise.error_bound,
             attained=AttainedOut(alpha=promise.alpha, beta=promise.beta),
             points=[PointOut.of(point) for point in promise.points],
+            fixed_sample=None if promise.fixed_sample is None else FixedSampleOut.model_validate(promise.fixed_sample),
         )
 
 

@@ -1,5 +1,6 @@
 """Observations: as posted, as logged, and as a path to draw."""
 
+from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
 from typing import Annotated, Any, Self
 
@@ -7,8 +8,12 @@ from pydantic import ConfigDict, Field, StrictBool, model_validator
 
 from service.api.schemas.common import Answer, Form, Moment, Number, Text, shown_as
 from service.api.schemas.plans import ThresholdsOut
+from service.api.schemas.tests import total_of
 from service.domain.families import Family
 from service.domain.log import LoggedObservation
+from service.domain.path import Path, RegionPoint, path_of, region_points
+from service.domain.procedure import Procedure
+from service.domain.state import State
 
 EXAMPLES: list[dict[str, Any]] = [
     {"values": [0, 0, 1]},
@@ -41,6 +46,17 @@ PATH: dict[str, Any] = {
         {"sample_number": 1, "exposure": None, "accept": None, "reject": None},
         {"sample_number": 24, "exposure": None, "accept": 0, "reject": 3},
     ],
+}
+
+
+REHEARSAL: dict[str, Any] = {
+    "log_likelihood_ratio": -0.0953101798043249,
+    "sample_number": 1,
+    "exposure": None,
+    "total": 0,
+    "cause": None,
+    "overrun": 0,
+    **{name: value for name, value in PATH.items() if name != "key"},
 }
 
 
@@ -155,6 +171,74 @@ class PathOut(Answer):
     region: list[RegionPointOut]
 
 
+class RehearsalOut(Answer):
+    """What a plan would have answered to historical observations; nothing is stored."""
+
+    model_config = shown_as(REHEARSAL)
+
+    decision: str
+    log_likelihood_ratio: float
+    sample_number: int
+    exposure: float | None
+    total: int | float
+    cause: str | None
+    overrun: int
+    axis: str
+    thresholds: ThresholdsOut
+    points: list[PathPointOut]
+    region: list[RegionPointOut]
+
+    @classmethod
+    def of(cls, procedure: Procedure, state: State, document: Mapping[str, Any], points: int) -> "RehearsalOut":
+        """From the state at the end of the rehearsal."""
+        return cls(
+            decision=state.decision,
+            log_likelihood_ratio=state.log_likelihood_ratio,
+            sample_number=state.sample_number,
+            exposure=state.exposure.value if procedure.family.has_exposure else None,
+            total=total_of(procedure.family, state.total.value),
+            cause=state.decided.cause if state.decided else None,
+            overrun=state.overrun,
+            **drawn(procedure, [document], points),
+        )
+
+
+def drawn(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: int) -> dict[str, Any]:
+    """The members of an answer that draw a walk: its points, and the region around them."""
+    path = path_of(procedure, documents, points)
+    region = region_points(procedure, float(path.progress[-1]))
+    return {
+        "axis": "exposure" if procedure.family.has_exposure else "sample_number",
+        "thresholds": ThresholdsOut.model_validate(procedure.thresholds),
+        "points": [_path_point(procedure, path, i) for i in range(len(path.sequence))],
+        "region": [_region_point(procedure, point) for point in region],
+    }
+
+
 def csv_columns(family: Family) -> list[str]:
     """The header of the log as CSV."""
     return ["sequence", *family.fields, "unit", "observed_at", "received_at", "submitted_by", "counted"]
+
+
+def _path_point(procedure: Procedure, path: Path, index: int) -> PathPointOut:
+    return PathPointOut(
+        sequence=int(path.sequence[index]),
+        sample_number=int(path.sample_number[index]),
+        exposure=float(path.progress[index]) if procedure.family.has_exposure else None,
+        total=total_of(procedure.family, float(path.total[index])),
+        log_likelihood_ratio=float(path.log_likelihood_ratio[index]),
+    )
+
+
+def _region_point(procedure: Procedure, point: RegionPoint) -> RegionPointOut:
+    has_exposure = procedure.family.has_exposure
+    return RegionPointOut(
+        sample_number=None if has_exposure else int(point.progress),
+        exposure=point.progress if has_exposure else None,
+        accept=_limit(procedure, point.accept),
+        reject=_limit(procedure, point.reject),
+    )
+
+
+def _limit(procedure: Procedure, total: float | None) -> int | float | None:
+    return None if total is None else total_of(procedure.family, total)

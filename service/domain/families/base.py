@@ -10,14 +10,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from service.domain.errors import Fault, InvalidObservations
+from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics
+from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Span, StraightRegion
 
 # Magnitudes beyond these say that a field was misread; they also keep every product far from overflow.
 LARGEST_REAL = 1e100
 LARGEST_COUNT = 1_000_000_000
+
+# exp() of more overflows.
+LARGEST_EXPONENT = 700.0
 
 MAXIMAL_FAULTS = 20
 
@@ -116,6 +121,16 @@ class Family(ABC):
             TooMuchWork: The computation would need more steps than are allowed.
         """
 
+    @abstractmethod
+    def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
+        """How the total moves in one unit of progress under a true parameter."""
+
+    @abstractmethod
+    def fixed_sample(
+        self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
+    ) -> FixedSample | None:
+        """The smallest fixed sample; `lower` is the hypothesis of small totals, `risks` are in that order."""
+
     @property
     def fields(self) -> tuple[str, ...]:
         """The numeric fields of an observation, its result first."""
@@ -181,6 +196,11 @@ def refuse(faults: list[Fault]) -> None:
     """Raise when there is a fault."""
     if faults:
         raise InvalidObservations(faults[:MAXIMAL_FAULTS])
+
+
+def poisson_motion(rate: float) -> Motion:
+    """A count with this mean in one unit of exposure."""
+    return Motion(lambda t: rate * math.expm1(t) if t < LARGEST_EXPONENT else math.inf, rate, rate)
 
 
 def positive_rule(value: float) -> str | None:

@@ -1,15 +1,18 @@
 """Pass/fail units: the proportion nonconforming, or a success rate."""
 
+import math
 from collections.abc import Mapping
 from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import Column, Family, Increments, refuse, whole_numbers
-from service.sequential import likelihood
+from service.domain.families.base import LARGEST_EXPONENT, Column, Family, Increments, refuse, whole_numbers
+from service.sequential import fixed_sample, likelihood
+from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import bernoulli_jumps, counting_characteristics
+from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import PASS_FAIL, Span, StraightRegion
 
@@ -37,6 +40,21 @@ class Bernoulli(Family):
     def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
         """See `Family`."""
         return counting_characteristics(region, bernoulli_jumps(parameters), 1.0)
+
+    def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
+        """See `Family`."""
+
+        def cumulant(t: float) -> float:
+            odds = parameter * math.expm1(t) if t < LARGEST_EXPONENT else math.inf
+            return math.log1p(odds) if math.isfinite(odds) else math.log(parameter) + t
+
+        return Motion(cumulant, parameter, parameter * (1.0 - parameter))
+
+    def fixed_sample(
+        self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
+    ) -> FixedSample | None:
+        """See `Family`."""
+        return fixed_sample.binomial(lower, upper, *risks)
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

@@ -5,11 +5,13 @@ from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import Column, Family, Increments, positive_rule, reals, refuse
-from service.sequential import likelihood
+from service.domain.families.base import Column, Family, Increments, poisson_motion, positive_rule, reals, refuse
+from service.sequential import fixed_sample, likelihood
+from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.in_time import characteristics_in_time
+from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import COUNTS, Span, StraightRegion
 
@@ -41,6 +43,16 @@ class Exponential(Family):
     def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
         """See `Family`."""
         return characteristics_in_time(region, 1.0 / parameters)
+
+    def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
+        """See `Family`."""
+        return poisson_motion(1.0 / parameter)
+
+    def fixed_sample(
+        self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
+    ) -> FixedSample | None:
+        """See `Family`."""
+        return fixed_sample.poisson(1.0 / lower, 1.0 / upper, *risks)
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

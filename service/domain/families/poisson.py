@@ -6,11 +6,22 @@ from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import Column, Family, Increments, positive_rule, reals, refuse, whole_numbers
-from service.sequential import likelihood
+from service.domain.families.base import (
+    Column,
+    Family,
+    Increments,
+    poisson_motion,
+    positive_rule,
+    reals,
+    refuse,
+    whole_numbers,
+)
+from service.sequential import fixed_sample, likelihood
+from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics, TooMuchWork
 from service.sequential.exact.counting import counting_characteristics, poisson_jumps
+from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import COUNTS, Span, StraightRegion
 
@@ -46,6 +57,16 @@ class Poisson(Family):
         if widest > WIDEST:
             raise TooMuchWork(WIDEST)
         return counting_characteristics(region, poisson_jumps(parameters, math.ceil(widest) + 2), 1.0)
+
+    def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
+        """See `Family`."""
+        return poisson_motion(parameter)
+
+    def fixed_sample(
+        self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
+    ) -> FixedSample | None:
+        """See `Family`."""
+        return fixed_sample.poisson(lower, upper, *risks)
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""
