@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
+IndexArray = NDArray[np.intp]
 
 # 2**27 + 1 cuts a 53-bit significand into two halves whose products are exact (Dekker 1971).
 _SPLITTER = 134217729.0

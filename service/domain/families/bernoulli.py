@@ -11,7 +11,8 @@ from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics
-from service.sequential.exact.counting import bernoulli_jumps, counting_characteristics
+from service.sequential.exact.counting import counting_characteristics
+from service.sequential.exact.processes import Units
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import PASS_FAIL, Span, StraightRegion
@@ -39,7 +40,7 @@ class Bernoulli(Family):
 
     def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
         """See `Family`."""
-        return counting_characteristics(region, bernoulli_jumps(parameters), 1.0)
+        return counting_characteristics(region, Units(parameters))
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

@@ -10,7 +10,8 @@ from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics
-from service.sequential.exact.in_time import characteristics_in_time
+from service.sequential.exact.counting import counting_characteristics
+from service.sequential.exact.processes import Failures
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import COUNTS, Span, StraightRegion
@@ -42,7 +43,7 @@ class Exponential(Family):
 
     def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
         """See `Family`."""
-        return characteristics_in_time(region, 1.0 / parameters)
+        return counting_characteristics(region, Failures(1.0 / parameters))
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

@@ -1,6 +1,5 @@
 """Counts over an exposure: defects for an area, events for unit-hours."""
 
-import math
 from collections.abc import Mapping
 from typing import ClassVar
 
@@ -19,14 +18,12 @@ from service.domain.families.base import (
 from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
-from service.sequential.exact.characteristics import Characteristics, TooMuchWork
-from service.sequential.exact.counting import counting_characteristics, poisson_jumps
+from service.sequential.exact.characteristics import Characteristics
+from service.sequential.exact.counting import counting_characteristics
+from service.sequential.exact.processes import Reports
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import COUNTS, Span, StraightRegion
-
-# Totals that the exact computation follows at once.
-WIDEST = 2000
 
 
 class Poisson(Family):
@@ -52,11 +49,8 @@ class Poisson(Family):
 
     def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
         """See `Family`."""
-        # One step is a report of exposure 1; no jump that stays inside is larger than the region is wide.
-        widest = region.lower_intercept + region.upper_intercept + region.ratio.slope
-        if widest > WIDEST:
-            raise TooMuchWork(WIDEST)
-        return counting_characteristics(region, poisson_jumps(parameters, math.ceil(widest) + 2), 1.0)
+        # The reports to come are supposed to have exposure 1.
+        return counting_characteristics(region, Reports(parameters, 1.0))
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

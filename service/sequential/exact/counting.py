@@ -1,126 +1,251 @@
 """
-Exact figures of a test whose total is a whole number, looked at after each step.
+Exact figures of a test whose total is a whole number, looked at in steps or watched in time.
 
-Quantity: probabilities of both decisions, mean, standard deviation and quantiles of the sample number.
-Method: recursion over the totals between the limits, all parameters at once. Without a wall it runs until the
-probability of still sampling is below 1e-13; the rest is closed as a geometric tail, which it has become by then.
-Accuracy: rounding, about 1e-16 for each step, and the tail that is closed.
-Cost: steps times width of the region times longest jump, for each parameter.
-Source: Aroian (1968), Technometrics 10, 125-132 (direct method); Wald (1945), section 5.
+Quantity: probabilities of both decisions, mean, standard deviation and quantiles of the further progress.
+Method: between two changes of the limits the set of totals that go on is constant, and the probabilities of the totals
+move by one convolution, however long the stretch; all parameters at once. Totals only grow, so whatever is beyond the
+upper limit at the end of a stretch has left during it. Without a wall it runs until the probability of still sampling
+is below 1e-13.
+Accuracy: rounding, about 1e-15 for each stretch, and the probability that is no longer followed.
+Cost: stretches times the squared width of the region, for each parameter.
+Source: Aroian (1968), Technometrics 10, 125-132 (direct method); Dvoretzky, Kiefer and Wolfowitz (1953), Annals of
+Mathematical Statistics 24, 254-264; Epstein and Sobel (1955), Annals of Mathematical Statistics 26, 82-93.
 """
 
-import math
+from collections.abc import Iterator
+from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import gammaln, xlogy
 
-from service.sequential.double import Double, FloatArray
+from service.sequential.double import FloatArray, IndexArray
 from service.sequential.exact.characteristics import NEGLIGIBLE, QUANTILES, Characteristics, TooMuchWork, spread
-from service.sequential.region import BELOW, Region
+from service.sequential.exact.processes import Process
+from service.sequential.exact.stretches import NO_CUT, Stretch, stretches_of_looks, stretches_of_time
+from service.sequential.region import Region
 
-MOST_STEPS = 100_000
-# Limits are asked for so many steps at a time.
-BLOCK = 512
+# Multiplications of one computation, and totals that it follows at once.
+MOST_WORK = 1_000_000_000
+WIDEST = 4_000
+# Bisections of a stretch of time: enough for a double.
+BISECTIONS = 60
+# A convolution of at most so many products is done by a matrix; so many matrices are kept.
+SMALL, MOST_MATRICES = 500_000, 200
+# Stretches are gathered after so many of them, or so many numbers.
+BATCH_STRETCHES, BATCH = 64, 2_000_000
 
 
-def counting_characteristics(region: Region, jumps: FloatArray, step: float) -> Characteristics:
+def counting_characteristics(
+    region: Region, process: Process, progress: float = 0.0, total: int = 0
+) -> Characteristics:
     """
-    Follow the totals from 0 until everything is decided.
+    Follow the totals from one point of the region until everything is decided.
 
     Args:
         region: The continuation region, of whole totals.
-        jumps: Array of shape (points, jumps): the probability of each increase 0, 1, 2, … in one step; what a row lacks
-            to one is the probability of a jump beyond the last, which must lie beyond every upper limit.
-        step: Progress in one step: one unit, or the exposure of one report.
+        process: How totals grow under the true parameters.
+        progress, total: Where sampling stands, inside the region; the figures are of what is still to come.
 
     Raises:
-        TooMuchWork: More than 100,000 steps.
+        TooMuchWork: The region is too wide, or too long, to be followed.
     """
-    points, longest = jumps.shape
-    alive = np.ones((points, 1))
-    lowest = 0
-    below, above = np.zeros(points), np.zeros(points)
-    survival = [np.ones(points)]
-    last = _steps_to_wall(region, step)
-    for n in range(1, last + 1):
-        if n > MOST_STEPS:
-            raise TooMuchWork(MOST_STEPS)
-        if (n - 1) % BLOCK == 0:
-            lower, upper = _limits(region, step * np.arange(n, n + BLOCK, dtype=np.float64))
-        at = (n - 1) % BLOCK
-        highest = lowest + alive.shape[1] - 1 + longest - 1
-        width = int(min(highest, upper[at] - 1)) - lowest + 1
-        before = alive.sum(axis=1)
-        moved = _moved(alive, jumps, width)
-        above += before - moved.sum(axis=1)
-        cut = int(max(0, lower[at] - lowest + 1)) if lower[at] >= lowest else 0
-        below += moved[:, :cut].sum(axis=1)
-        alive, lowest = moved[:, cut:], lowest + cut
-        if n == last:
-            below, above = _forced(region, n * step, alive, lowest, below, above)
-            alive = alive[:, :0]
-        running = alive.sum(axis=1)
-        survival.append(running)
-        if alive.shape[1] == 0 or np.max(running) < NEGLIGIBLE:
+    course = _Course(process, total)
+    for stretch in _stretches(region, process, progress, total):
+        course.advance(stretch)
+        if course.is_over:
             break
-    return _summarised(np.array(survival), below, above, step)
+    return course.summary()
 
 
-def bernoulli_jumps(proportions: FloatArray) -> FloatArray:
-    """Jumps of one unit; array of shape (points, 2)."""
-    return np.stack([1.0 - proportions, proportions], axis=1)
+def _stretches(region: Region, process: Process, progress: float, total: int) -> Iterator[Stretch]:
+    if process.step > 0.0:
+        return stretches_of_looks(region, process.step, progress)
+    return stretches_of_time(region, progress, total)
 
 
-def poisson_jumps(means: FloatArray, largest: int) -> FloatArray:
-    """Jumps of one report with these means, up to `largest`; array of shape (points, largest + 1)."""
-    k = np.arange(largest + 1.0)
-    m = means[:, np.newaxis]
-    return np.exp(xlogy(k, m) - m - gammaln(k + 1.0))
+@dataclass(frozen=True)
+class _Piece:
+    """
+    One stretch gone through.
+
+    Attributes:
+        time: When it began.
+        duration: How long it was.
+        width: Places within its room, counted from the lowest total.
+        alive: Array of shape (points, 1, totals): the probabilities at its beginning.
+        below: Array of shape (points,): what ended below at its end.
+    """
+
+    time: float
+    duration: float
+    width: int
+    alive: FloatArray
+    below: FloatArray
 
 
-def _moved(alive: FloatArray, jumps: FloatArray, width: int) -> FloatArray:
-    """One step on; what passes `width` totals is left out."""
-    moved = np.zeros((alive.shape[0], max(0, width)))
-    for jump in range(min(jumps.shape[1], width)):
-        reach = min(alive.shape[1], width - jump)
-        moved[:, jump : jump + reach] += alive[:, :reach] * jumps[:, jump : jump + 1]
+class _Course:
+    """
+    The probabilities of the totals that go on, moved from stretch to stretch.
+
+    The loop does as little as it can for each stretch; sums over many stretches are made together, in `_gather`.
+    """
+
+    def __init__(self, process: Process, total: int) -> None:
+        points = process.points
+        self._process, self._lowest = process, total
+        self._alive, self._nothing = np.ones((points, 1, 1)), np.zeros(points)
+        self._time, self._stretches, self._work, self._is_over = 0.0, 0, 0, False
+        self._below, self._above = np.zeros(points), np.zeros(points)
+        self._mean, self._second = np.zeros(points), np.zeros(points)
+        self._quantiles = np.full((points, len(QUANTILES)), np.nan)
+        self._pieces: list[_Piece] = []
+        self._matrices: dict[tuple[float, int, int], FloatArray] = {}
+        self._stays: dict[float, tuple[FloatArray, FloatArray]] = {}
+
+    @property
+    def is_over(self) -> bool:
+        """True once nothing worth following is left."""
+        return self._is_over
+
+    def advance(self, stretch: Stretch) -> None:
+        """Move by one stretch: what passes its room ends above, what its cut reaches ends below."""
+        width = self._width(stretch)
+        moved = self._moved(stretch.duration, width)
+        below, cut = self._nothing, stretch.cut + 1 - self._lowest
+        if cut > 0 and stretch.cut > NO_CUT:
+            below = moved[:, 0, :cut].sum(axis=1)
+            self._lowest, moved_on = self._lowest + min(cut, width), moved[:, :, cut:]
+        else:
+            moved_on = moved
+        self._pieces.append(_Piece(self._time, stretch.duration, width, self._alive, below))
+        self._alive = moved_on[:, :, :0] if stretch.is_last else moved_on
+        self._time += stretch.duration
+        if stretch.is_last or self._alive.shape[2] == 0 or self._is_batch_full(width):
+            self._gather()
+
+    def summary(self) -> Characteristics:
+        """The figures once all is over."""
+        scale = self._process.step or 1.0
+        rest = float(np.max(self._alive.sum(axis=(1, 2))))
+        # What is no longer followed would still last about as long as it took to become negligible.
+        left_out = rest * (1.0 + self._time / max(float(np.min(self._mean)), 1e-300)) if rest else 0.0
+        bound = left_out + (self._stretches + 1) * 8.0 * float(np.finfo(float).eps)
+        deviation = scale * spread(self._mean, self._second)
+        return Characteristics(self._below, self._above, scale * self._mean, deviation, scale * self._quantiles, bound)
+
+    def _width(self, stretch: Stretch) -> int:
+        """The totals that can go on during a stretch, from the lowest; counts the work too."""
+        width = count = self._alive.shape[2]
+        if self._process.largest is not None:
+            width += self._process.largest * int(stretch.duration)
+        if stretch.room is not None:
+            room = max(0, stretch.room - self._lowest)
+            width = room if self._process.largest is None else min(width, room)
+        self._stretches += 1
+        self._work += self._process.points * width * count
+        if width > WIDEST:
+            raise TooMuchWork(WIDEST)
+        if self._work > MOST_WORK:
+            raise TooMuchWork(MOST_WORK)
+        return width
+
+    def _moved(self, duration: float, width: int) -> FloatArray:
+        """The totals after a stretch, those below `width` places; array of shape (points, 1, width)."""
+        points, _, count = self._alive.shape
+        if points * count * width > SMALL:
+            return _convolved(self._alive, self._process.increases(duration, width))
+        matrix = self._matrices.get((duration, count, width))
+        if matrix is None:
+            increases = self._process.increases(duration, max(count, width))
+            i, j = np.arange(count)[:, np.newaxis], np.arange(width)
+            padded = np.concatenate([increases, np.zeros((points, 1))], axis=1)
+            matrix = padded[:, np.where(j >= i, j - i, -1)]
+            if len(self._matrices) < MOST_MATRICES:
+                self._matrices[duration, count, width] = matrix
+        moved: FloatArray = self._alive @ matrix
+        return moved
+
+    def _is_batch_full(self, width: int) -> bool:
+        return len(self._pieces) * self._process.points * width >= BATCH or len(self._pieces) >= BATCH_STRETCHES
+
+    def _gather(self) -> None:
+        """Add up what the stretches since the last time contribute."""
+        pieces, widest = self._pieces, max(1, *(piece.width for piece in self._pieces))
+        # A total is placed by its reach: how far it may still rise within the room of its stretch.
+        reaches = np.zeros((len(pieces), self._process.points, widest))
+        beyond = np.zeros((len(pieces), self._process.points))
+        for k, piece in enumerate(pieces):
+            inside = piece.alive[:, 0, : piece.width]
+            reaches[k, :, piece.width - inside.shape[1] : piece.width] = inside[:, ::-1]
+            if piece.alive.shape[2] > piece.width:  # beyond the room already: still there until the next look
+                beyond[k] = piece.alive[:, 0, piece.width :].sum(axis=1)
+        self._gather_moments(reaches, beyond, widest)
+        below = np.array([piece.below for piece in pieces])
+        before = reaches.sum(axis=2) + beyond
+        last = self._alive.sum(axis=(1, 2))
+        rest = np.concatenate([before[1:], last[np.newaxis]])
+        ends_alone = self._alive.shape[2] == 0 and not np.any(last)
+        after = rest + below
+        self._below += below.sum(axis=0)
+        self._above += (before - after).sum(axis=0)
+        self._gather_quantiles(reaches, after, rest)
+        self._pieces = []
+        self._is_over = ends_alone or float(np.max(last)) < NEGLIGIBLE
+
+    def _gather_moments(self, reaches: FloatArray, beyond: FloatArray, widest: int) -> None:
+        """Add to the first two moments of the time sampled."""
+        times = np.array([[piece.time] for piece in self._pieces])
+        stays = [self._stay(piece.duration, widest) for piece in self._pieces]
+        stayed = np.einsum("kpr,kpr->kp", reaches, np.array([stay for stay, _ in stays])) + beyond
+        later = np.einsum("kpr,kpr->kp", reaches, np.array([moment for _, moment in stays]))
+        self._mean += stayed.sum(axis=0)
+        self._second += 2.0 * (times * stayed + later).sum(axis=0)
+        if self._process.step > 0.0:
+            self._second += stayed.sum(axis=0)
+
+    def _stay(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
+        """The stays of a stretch; stretches of equal length come again and again."""
+        known = self._stays.get(duration)
+        if known is None or known[0].shape[1] < width:
+            known = self._process.stays(duration, width)
+            self._stays[duration] = known
+        return known[0][:, :width], known[1][:, :width]
+
+    def _gather_quantiles(self, reaches: FloatArray, after: FloatArray, rest: FloatArray) -> None:
+        """Find the quantiles that fall into these stretches, or at their ends."""
+        starts = np.array([piece.time for piece in self._pieces])
+        durations = np.array([piece.duration for piece in self._pieces])
+        for column, q in enumerate(QUANTILES):
+            reached = rest <= 1.0 - q
+            points = np.flatnonzero(np.isnan(self._quantiles[:, column]) & reached.any(axis=0))
+            if not len(points):
+                continue
+            k = reached[:, points].argmax(axis=0)
+            at_end = after[k, points] > 1.0 - q
+            inside = self._moments_inside(points, reaches[k, points], durations[k], 1.0 - q)
+            self._quantiles[points, column] = starts[k] + np.where(at_end, durations[k], inside)
+
+    def _moments_inside(
+        self, points: IndexArray, reaches: FloatArray, durations: FloatArray, level: float
+    ) -> FloatArray:
+        """When, within its stretch, sampling first goes on with at most this probability; array of shape (points,)."""
+        process, width = self._process.only(points), reaches.shape[1]
+        is_stepwise = process.step > 0.0
+        low, high = np.zeros(len(points)), durations
+        for _ in range(BISECTIONS):
+            middle = np.floor(0.5 * (low + high)) if is_stepwise else 0.5 * (low + high)
+            if is_stepwise and np.all(high - low <= 1.0):
+                break
+            within = np.cumsum(process.increases(middle, width), axis=1)
+            is_early = (reaches * within).sum(axis=1) > level
+            low, high = np.where(is_early, middle, low), np.where(is_early, high, middle)
+        return high
+
+
+def _convolved(alive: FloatArray, increases: FloatArray) -> FloatArray:
+    """The convolution of wide rows, increase by increase, cut to the width of `increases`."""
+    (points, _, count), width = alive.shape, increases.shape[1]
+    moved = np.zeros((points, 1, width))
+    for increase in np.flatnonzero(increases.any(axis=0)):
+        reach = min(count, width - int(increase))
+        moved[:, 0, increase : increase + reach] += alive[:, 0, :reach] * increases[:, increase : increase + 1]
     return moved
-
-
-def _limits(region: Region, progress: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Limits with the wall's cap, but without its forced decision, which comes last."""
-    limits = region.limits(progress)
-    if region.wall is None:
-        return limits.lower, limits.upper
-    before = progress < region.wall.progress
-    return np.where(before, limits.lower, -np.inf), np.where(before, limits.upper, np.inf)
-
-
-def _steps_to_wall(region: Region, step: float) -> int:
-    if region.wall is None:
-        return MOST_STEPS + 1
-    return math.ceil(region.wall.progress / step * (1.0 - 1e-12))
-
-
-def _forced(  # noqa: PLR0913 - the parts of one recursion
-    region: Region, progress: float, alive: FloatArray, lowest: int, below: FloatArray, above: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    totals = lowest + np.arange(alive.shape[1], dtype=float)
-    where = Double(np.full_like(totals, progress), np.zeros_like(totals))
-    goes_below = region.sides_at_wall(where, Double(totals, np.zeros_like(totals))) == BELOW
-    return below + alive[:, goes_below].sum(axis=1), above + alive[:, ~goes_below].sum(axis=1)
-
-
-def _summarised(survival: FloatArray, below: FloatArray, above: FloatArray, step: float) -> Characteristics:
-    """Moments and quantiles from the probabilities of still sampling; survival of shape (steps + 1, points)."""
-    n = np.arange(len(survival), dtype=float)[:, np.newaxis]
-    mean = survival.sum(axis=0)
-    second = ((2.0 * n + 1.0) * survival).sum(axis=0)
-    rest = survival[-1]
-    tail = np.zeros_like(rest)
-    if len(survival) > 2 and np.any(rest > 0.0):
-        ratio = np.divide(rest, survival[-2], out=np.zeros_like(rest), where=survival[-2] > 0.0)
-        tail = rest * ratio / np.maximum(1.0 - ratio, 1e-12)
-    quantiles = np.array([np.argmax(survival <= 1.0 - q + 1e-15, axis=0) for q in QUANTILES], dtype=float).T
-    bound = float(np.max(rest)) + len(survival) * np.finfo(float).eps
-    return Characteristics(below, above, step * (mean + tail), step * spread(mean, second), step * quantiles, bound)

@@ -11,9 +11,9 @@ from service.sequential.boundaries import Thresholds
 from service.sequential.decision import Decision
 from service.sequential.double import Double
 from service.sequential.exact.characteristics import Characteristics
-from service.sequential.exact.counting import bernoulli_jumps, counting_characteristics, poisson_jumps
+from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
-from service.sequential.exact.in_time import characteristics_in_time
+from service.sequential.exact.processes import Failures, Reports, Units
 from service.sequential.region import COUNTS, PASS_FAIL, REALS, Limits, StraightRegion, Wall, straight_region
 
 Floats = NDArray[np.float64]
@@ -21,7 +21,7 @@ Floats = NDArray[np.float64]
 
 def pass_fail(p0: float, p1: float, alpha: float, beta: float, at: list[float]) -> Characteristics:
     region = straight_region(likelihood.bernoulli(p0, p1), boundaries.wald(alpha, beta), PASS_FAIL)
-    return counting_characteristics(region, bernoulli_jumps(np.array(at)), 1.0)
+    return counting_characteristics(region, Units(np.array(at)))
 
 
 def test_the_nist_plan() -> None:
@@ -59,7 +59,7 @@ def test_gamblers_ruin(p: float, z: int, a: int) -> None:
     step = math.log(0.6 / 0.4)
     # An accept limit of z steps is ruin where a unit moves up with probability p.
     region = straight_region(likelihood.bernoulli(0.4, 0.6), Thresholds(-z * step, (a - z) * step), PASS_FAIL)
-    found = counting_characteristics(region, bernoulli_jumps(np.array([p])), 1.0)
+    found = counting_characteristics(region, Units(np.array([p])))
     q, r = 1 - p, (1 - p) / p
     ruin = (r**a - r**z) / (r**a - 1)
     duration = z / (q - p) - a / (q - p) * (1 - r**z) / (1 - r**a)
@@ -74,17 +74,17 @@ def test_the_strength_of_repeated_looks_of_a_fair_coin() -> None:
     Exact quantiles 50, 90 and 99 %, and mean, by an independent computation.
     """
     region = straight_region(likelihood.bernoulli(0.5, 0.7), Thresholds(-1e9, math.log(10)), PASS_FAIL)
-    found = counting_characteristics(region, bernoulli_jumps(np.array([0.7])), 1.0)
+    found = counting_characteristics(region, Units(np.array([0.7])))
     assert found.quantiles[0, [0, 1, 3]].tolist() == [22, 60, 131]
     assert found.mean[0] == pytest.approx(29.57, abs=5e-3)
 
 
 def test_truncated_plans_decide_always_and_tend_to_the_open_one() -> None:
     ratio, limits = likelihood.bernoulli(0.05, 0.2), boundaries.wald(0.05, 0.1)
-    at = bernoulli_jumps(np.linspace(0.0, 1.0, 11))
-    whole = counting_characteristics(straight_region(ratio, limits, PASS_FAIL), at, 1.0)
+    at = Units(np.linspace(0.0, 1.0, 11))
+    whole = counting_characteristics(straight_region(ratio, limits, PASS_FAIL), at)
     for wall in (30.0, 60.0, 2000.0):
-        found = counting_characteristics(straight_region(ratio, limits, PASS_FAIL, Wall(wall)), at, 1.0)
+        found = counting_characteristics(straight_region(ratio, limits, PASS_FAIL, Wall(wall)), at)
         assert found.below + found.above == pytest.approx(np.ones(11), abs=1e-12)
         assert np.all(np.diff(found.below) <= 1e-12)
     assert found.below == pytest.approx(whole.below, abs=1e-11)
@@ -105,7 +105,7 @@ def test_a_recursion_equals_enumeration() -> None:
             mean += probability * n
             continue
         stack += [(n + 1, total, probability * (1 - p)), (n + 1, total + 1, probability * p)]
-    found = counting_characteristics(region, bernoulli_jumps(np.array([p])), 1.0)
+    found = counting_characteristics(region, Units(np.array([p])))
     assert found.below[0] == pytest.approx(below, abs=1e-14)
     assert found.mean[0] == pytest.approx(mean, rel=1e-14)
 
@@ -115,7 +115,7 @@ def test_counts_obey_walds_identity() -> None:
     ratio = likelihood.poisson(0.5, 1.5)
     region = straight_region(ratio, boundaries.wald(0.05, 0.1), COUNTS, Wall(40.0))
     rate = 0.9
-    found = counting_characteristics(region, poisson_jumps(np.array([rate]), 80), 1.0)
+    found = counting_characteristics(region, Reports(np.array([rate]), 1.0))
     source = np.random.default_rng(3)
     walks = np.cumsum(source.poisson(rate, (20_000, 40)), axis=1)
     n = np.arange(1.0, 41.0)
@@ -138,14 +138,20 @@ class FailureTable:
         self.below, self.above = Decision.ACCEPT, Decision.REJECT
 
     def lower_reached_at(self, total: Floats) -> Floats:
-        accept = self.rows[int(total[0])][1] if total[0] < len(self.rows) else None
-        return np.array([accept if accept is not None else self.rows[-2][1]])
+        return np.array([self._accept(int(k)) for k in total])
 
     def upper_left_at(self, total: Floats) -> Floats:
-        if total[0] >= len(self.rows):
-            return np.array([np.inf])
-        reject = self.rows[int(total[0])][0]
-        return np.array([reject if reject is not None else -1.0])
+        return np.array([self._reject(int(k)) for k in total])
+
+    def _accept(self, total: int) -> float:
+        accept = self.rows[total][1] if total < len(self.rows) else None
+        return accept if accept is not None else self.rows[-2][1] or 0.0
+
+    def _reject(self, total: int) -> float:
+        if total >= len(self.rows):
+            return math.inf
+        reject = self.rows[total][0]
+        return reject if reject is not None else -1.0
 
     def limits(self, progress: Floats) -> Limits:
         raise AssertionError(progress)
@@ -183,7 +189,7 @@ def test_the_true_risks_of_standard_reliability_plans(
     table: list[tuple[float | None, float | None]], d: float, alpha: float, beta: float, time0: float, time1: float
 ) -> None:
     """MIL-HDBK-781A, plans IV-D, VI-D, VIII-D: true risks printed to .1 %; exact by an independent computation."""
-    found = characteristics_in_time(FailureTable(table), np.array([1 / d, 1.0]))
+    found = counting_characteristics(FailureTable(table), Failures(np.array([1 / d, 1.0])))
     assert found.above[0] == pytest.approx(alpha, abs=5e-7)
     assert found.below[1] == pytest.approx(beta, abs=5e-7)
     assert found.mean == pytest.approx([time0, time1], abs=5e-5)
@@ -193,7 +199,7 @@ def test_the_true_risks_of_standard_reliability_plans(
 def test_time_agrees_with_simulation() -> None:
     for means, wall in (((200.0, 100.0), Wall(900.0)), ((100.0, 200.0), None), ((200.0, 100.0), Wall(600.0, cap=4))):
         region = straight_region(likelihood.exponential(*means), boundaries.wald(0.1, 0.1), COUNTS, wall)
-        found = characteristics_in_time(region, np.array([1 / 140.0]))
+        found = counting_characteristics(region, Failures(np.array([1 / 140.0])))
         accepted, times = simulate(region, 140.0)
         below = accepted if region.below is Decision.ACCEPT else ~accepted
         for exact, sample in ((found.below[0], below), (found.mean[0], times)):

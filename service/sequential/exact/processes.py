@@ -1,0 +1,183 @@
+"""
+How whole-number totals grow: the processes that the exact computations follow.
+
+Quantity: probabilities of each increase over a stretch, and sums (or integrals) of the probability that the increase
+has not passed a reach while the stretch lasts.
+Method: closed forms; the sums for units come from the negative binomial waiting time of the first increase beyond the
+reach, the integrals in time from the gamma waiting time, the sums for reports are added term by term.
+Accuracy: about 1e-15 relative for each unit of the logarithm of the smallest term.
+Cost: a few special functions for each reach and parameter; for reports as many again as the stretch has looks.
+Source: Johnson, Kemp and Kotz, Univariate Discrete Distributions, sections 3.4 and 5.1 (waiting times); Feller (1966),
+An Introduction to Probability Theory, vol. II, section I.3.
+"""
+
+from typing import Protocol
+
+import numpy as np
+from scipy.special import betainc, gammainc, gammaln, xlog1py, xlogy
+
+from service.sequential.double import IndexArray, FloatArray
+from service.sequential.exact.characteristics import TooMuchWork
+
+# Terms added for the reports of one stretch.
+MOST_TERMS = 20_000_000
+
+
+class Process(Protocol):
+    """
+    Totals under some true parameters, seen over a stretch of `duration`: looks, or time.
+
+    Arrays are of shape (points, width): a row for each parameter, a column for each increase or reach 0, 1, 2, …
+    """
+
+    @property
+    def points(self) -> int:
+        """The number of parameters."""
+        ...
+
+    @property
+    def step(self) -> float:
+        """Progress from one look to the next; 0 where the total is watched in time."""
+        ...
+
+    @property
+    def largest(self) -> int | None:
+        """The largest increase from one look to the next, None where there is none."""
+        ...
+
+    def increases(self, duration: float | FloatArray, width: int) -> FloatArray:
+        """Probabilities of the increases below `width`; a duration for all, or one for each parameter."""
+        ...
+
+    def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
+        """
+        For each reach, the sum over the stretch of P(increase so far <= reach), and of that times the time so far.
+
+        Looks are summed from the beginning of the stretch up to the one before its end; time is integrated.
+        """
+        ...
+
+    def only(self, chosen: IndexArray) -> "Process":
+        """The same for some of the parameters."""
+        ...
+
+
+class Units:
+    """Each look adds one with the given probability: array of shape (points,), from 0 to 1."""
+
+    step = 1.0
+    largest: int | None = 1
+
+    def __init__(self, proportions: FloatArray) -> None:
+        self._p = proportions[:, np.newaxis]
+
+    @property
+    def points(self) -> int:
+        """See `Process`."""
+        return len(self._p)
+
+    def increases(self, duration: float | FloatArray, width: int) -> FloatArray:
+        """See `Process`."""
+        units = np.reshape(np.asarray(duration, float), (-1, 1))
+        k = np.arange(width, dtype=float)
+        # ln C(units, k), built up factor by factor: differences of log-gammas lose digits where units are many.
+        factors = np.maximum(units - k[1:] + 1.0, 0.5) / k[1:]
+        choose = np.concatenate([np.zeros((len(units), 1)), np.cumsum(np.log(factors), axis=1)], axis=1)
+        chance = np.exp(choose + xlogy(k, self._p) + xlog1py(np.maximum(units - k, 0.0), -self._p))
+        probabilities: FloatArray = np.where(k <= units, chance, 0.0)
+        return probabilities
+
+    def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
+        """See `Process`."""
+        units, shape = float(duration), (self.points, width)
+        if units == 1.0:
+            return np.ones(shape), np.zeros(shape)
+        reach = np.broadcast_to(np.arange(width, dtype=float), shape)
+        p = np.broadcast_to(self._p, shape)
+        stay, moment = np.full(shape, units), np.full(shape, units * (units - 1.0) / 2.0)
+        # The unit T at which the reach is passed is negative binomial; wanted are E[min(T, units)] and its second kin.
+        passed = (reach < units) & (p > 0.0)
+        r, q = reach[passed], p[passed]
+        never = 1.0 - betainc(r + 1.0, units - r, q)
+        first = (r + 1.0) / q * betainc(r + 2.0, units - r, q) + units * never
+        second = (r + 1.0) * (r + 2.0) / q**2 * betainc(r + 3.0, units - r, q) + units * (units + 1.0) * never
+        stay[passed], moment[passed] = first, 0.5 * second - first
+        return stay, moment
+
+    def only(self, chosen: IndexArray) -> "Units":
+        """See `Process`."""
+        return Units(self._p[chosen, 0])
+
+
+class Reports:
+    """Each look adds a Poisson count with the given mean, array of shape (points,), and `step` of exposure."""
+
+    largest: int | None = None
+
+    def __init__(self, means: FloatArray, step: float) -> None:
+        self._means, self.step = means[:, np.newaxis], step
+
+    @property
+    def points(self) -> int:
+        """See `Process`."""
+        return len(self._means)
+
+    def increases(self, duration: float | FloatArray, width: int) -> FloatArray:
+        """See `Process`."""
+        return _poisson(self._means * np.reshape(np.asarray(duration, float), (-1, 1)), width)
+
+    def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
+        """See `Process`."""
+        looks = int(duration)
+        if looks * self.points * width > MOST_TERMS:
+            raise TooMuchWork(MOST_TERMS)
+        shape = (self.points, width)
+        stay, moment = np.ones(shape), np.zeros(shape)
+        for look in range(1, looks):
+            within = np.cumsum(self.increases(float(look), width), axis=1)
+            stay += within
+            moment += look * within
+        return stay, moment
+
+    def only(self, chosen: IndexArray) -> "Reports":
+        """See `Process`."""
+        return Reports(self._means[chosen, 0], self.step)
+
+
+class Failures:
+    """Failures come at these rates, array of shape (points,), and are watched in continuous time."""
+
+    step = 0.0
+    largest: int | None = None
+
+    def __init__(self, rates: FloatArray) -> None:
+        self._rates = rates[:, np.newaxis]
+
+    @property
+    def points(self) -> int:
+        """See `Process`."""
+        return len(self._rates)
+
+    def increases(self, duration: float | FloatArray, width: int) -> FloatArray:
+        """See `Process`."""
+        return _poisson(self._rates * np.reshape(np.asarray(duration, float), (-1, 1)), width)
+
+    def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
+        """See `Process`."""
+        k = np.arange(width, dtype=float)
+        expected = self._rates * duration
+        # The integral of a Poisson term is an incomplete gamma function; a reach is the sum of its terms.
+        stay = np.cumsum(gammainc(k + 1.0, expected) / self._rates, axis=1)
+        moment = np.cumsum((k + 1.0) * gammainc(k + 2.0, expected) / self._rates**2, axis=1)
+        return stay, moment
+
+    def only(self, chosen: IndexArray) -> "Failures":
+        """See `Process`."""
+        return Failures(self._rates[chosen, 0])
+
+
+def _poisson(means: FloatArray, width: int) -> FloatArray:
+    """Poisson probabilities of 0, 1, …, width - 1; array of shape (points, width)."""
+    k = np.arange(width, dtype=float)
+    probabilities: FloatArray = np.exp(xlogy(k, means) - means - gammaln(k + 1.0))
+    return probabilities
