@@ -68,5 +68,6 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     app.add_middleware(RequestId)
     for module in (plans, characteristics, tests, observations, administration, health):
         app.include_router(module.router)
+    app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]
     return app

@@ -6,11 +6,14 @@ from functools import lru_cache
 
 import numpy as np
 
-from service.domain.errors import ComputationTooLarge, Fault, InvalidQuestion
+from service.domain.calibrating import accepts_at, exact_figures, risks_of
+from service.domain.errors import Fault, InvalidQuestion
+from service.domain.families import Family
 from service.domain.procedure import Procedure, procedure_of_document
 from service.sequential.approximations import OVERSHOOT, approximate
 from service.sequential.decision import Decision
-from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork
+from service.sequential.exact.characteristics import QUANTILES, Characteristics
+from service.sequential.region import StraightRegion
 
 GRID_POINTS = 51
 MOST_PARAMETERS = 500
@@ -85,6 +88,15 @@ class Promise:
     fixed_sample: Fixed | None
 
 
+def spread_at(found: Characteristics, i: int) -> Spread:
+    """The figures of the progress at the i-th parameter."""
+    return Spread(
+        float(found.mean[i]),
+        float(found.standard_deviation[i]),
+        {f"{q:g}": float(value) for q, value in zip(QUANTILES, found.quantiles[i], strict=True)},
+    )
+
+
 def promise_of(document: str, at: Sequence[float]) -> Promise:
     """
     Exact figures of a plan at these parameters, or on a grid fit for plotting when none is given.
@@ -107,41 +119,29 @@ def promise_of(document: str, at: Sequence[float]) -> Promise:
     ]
     if faults:
         raise InvalidQuestion("A parameter lies outside the family's range; see errors.", faults[:20])
-    return _promise(document, tuple(at) or _grid(procedure))
+    return _promise(document, tuple(at) or common_grid([document]))
 
 
 @lru_cache(maxsize=256)
 def _promise(document: str, at: tuple[float, ...]) -> Promise:
     procedure = procedure_of_document(document)
-    parameters = np.array([*procedure.hypotheses, *at])
-    try:
-        found = procedure.family.exact(procedure.region, parameters, procedure.known)
-    except TooMuchWork as error:
-        raise ComputationTooLarge(error.limit) from error
-    accepts = found.below if procedure.region.below is Decision.ACCEPT else found.above
-    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
+    found = exact_figures(procedure, (*procedure.hypotheses, *at))
+    risks = risks_of(procedure, found)
     return Promise(
         method="recursion" if procedure.family.span.is_integer else "quadrature",
         error_bound=found.error_bound,
-        alpha=float(rejects[0]),
-        beta=float(accepts[1]),
-        points=tuple(
-            _point(procedure, found, i, float(parameters[i]), float(accepts[i])) for i in range(2, len(parameters))
-        ),
+        alpha=risks.alpha,
+        beta=risks.beta,
+        points=tuple(_point(procedure, found, i + 2, parameter) for i, parameter in enumerate(at)),
         fixed_sample=_fixed_sample(procedure, found),
     )
 
 
-def _point(procedure: Procedure, found: Characteristics, i: int, parameter: float, accepts: float) -> Point:
-    family = procedure.family
-    ends = Spread(
-        float(found.mean[i]),
-        float(found.standard_deviation[i]),
-        {f"{q:g}": float(value) for q, value in zip(QUANTILES, found.quantiles[i], strict=True)},
-    )
+def _point(procedure: Procedure, found: Characteristics, i: int, parameter: float) -> Point:
+    family, ends = procedure.family, spread_at(found, i)
     return Point(
         parameter=parameter,
-        probability_of_acceptance=min(1.0, max(0.0, accepts)),
+        probability_of_acceptance=accepts_at(procedure, found, i),
         sample_number=None if family.is_watched_in_time else ends,
         exposure=ends if family.has_exposure else None,
         failures=ends.mean / parameter if family.is_watched_in_time else None,
@@ -153,7 +153,7 @@ def _point(procedure: Procedure, found: Characteristics, i: int, parameter: floa
 def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Approximate | None:
     """Wald's approximation, with the overshoot in standard deviations added to both intercepts."""
     region, family = procedure.region, procedure.family
-    if region.wall is not None:
+    if region.wall is not None or not isinstance(region, StraightRegion):
         return None
     motion = family.motion(parameter, procedure.known)
     more = overshoot * motion.variance**0.5
@@ -184,15 +184,20 @@ def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
     )
 
 
-def _grid(procedure: Procedure) -> tuple[float, ...]:
+def common_grid(documents: Sequence[str]) -> tuple[float, ...]:
+    """Parameters around all hypotheses of plans of one family."""
+    procedures = [procedure_of_document(document) for document in documents]
+    hypotheses = [parameter for procedure in procedures for parameter in procedure.hypotheses]
+    return _grid(procedures[0].family, min(hypotheses), max(hypotheses))
+
+
+def _grid(family: Family, low: float, high: float) -> tuple[float, ...]:
     """Parameters around both hypotheses that show the whole curve."""
-    low, high = sorted(procedure.hypotheses)
-    family = procedure.family
+    margin = high - low
     if family.parameter_rule(-1.0) is None:
-        grid = np.linspace(low - (high - low), high + (high - low), GRID_POINTS)
+        grid = np.linspace(low - margin, high + margin, GRID_POINTS)
     elif family.parameter_rule(2.0) is None:
         grid = np.geomspace(low / 2.0, high * 2.0, GRID_POINTS)
     else:
-        margin = high - low
         grid = np.linspace(max(0.0, low - margin), min(1.0, high + margin), GRID_POINTS)
     return tuple(float(value) for value in grid)

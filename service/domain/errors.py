@@ -20,7 +20,8 @@ What can go wrong, without a word of HTTP.
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown
 """
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 
 
@@ -42,6 +43,16 @@ class Invalid(DomainError):
     def __init__(self, detail: str, faults: Sequence[Fault] = ()) -> None:
         super().__init__(detail)
         self.faults = tuple(faults)
+
+
+@contextmanager
+def located(pointer: str) -> Iterator[None]:
+    """Let the faults found inside point below this place of the body."""
+    try:
+        yield
+    except Invalid as error:
+        error.faults = tuple(Fault(pointer + fault.pointer, fault.detail) for fault in error.faults)
+        raise
 
 
 class InvalidPlan(Invalid):

@@ -11,6 +11,7 @@ from service.domain.observing import first_exit, walk_from
 from service.domain.procedure import Procedure
 from service.domain.state import State, Sum
 from service.sequential.double import Double, FloatArray
+from service.sequential.tables import UnitTable
 
 REGION_POINTS = 201
 
@@ -74,9 +75,11 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
 def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
     """The region from the origin to its wall, or a little past what was reached where it has none."""
     region = procedure.region
-    horizon = region.wall.progress if region.wall is not None else _open_horizon(procedure, reached)
+    horizon = region.wall.progress if region.wall is not None else region.open_horizon(reached)
     progress = np.linspace(0.0, max(horizon, reached), REGION_POINTS)
-    if not procedure.family.has_exposure:
+    if isinstance(region, UnitTable):
+        progress = np.array([0.0, *region.sample_numbers])
+    elif not procedure.family.has_exposure:
         progress = np.unique(np.ceil(progress))
     limits = region.limits(progress)
     accept, reject = (limits.lower, limits.upper) if procedure.ratio.is_upward else (limits.upper, limits.lower)
@@ -84,13 +87,6 @@ def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
         RegionPoint(float(at), _finite(low), _finite(high))
         for at, low, high in zip(progress, accept, reject, strict=True)
     ]
-
-
-def _open_horizon(procedure: Procedure, reached: float) -> float:
-    """Far enough to show both limits of an open region: a quarter past the walk, and past where the lines start."""
-    region = procedure.region
-    start = region.first_possible_decision() or abs(region.lower_intercept / (procedure.ratio.slope or 1.0))
-    return max(1.25 * reached, 3.0 * start, 10.0 if not procedure.family.has_exposure else 0.0)
 
 
 def _origin(procedure: Procedure) -> Path:

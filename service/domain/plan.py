@@ -34,6 +34,19 @@ def canonical(content: Mapping[str, Any]) -> str:
     return json.dumps(content, sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
 
 
+def stated(document: str) -> Mapping[str, Any]:
+    """
+    What the caller of a canonical document stated, without the figures that were computed from it.
+
+    Those may differ in their last digit where they are computed on another machine.
+    """
+    content = dict(_decoded(document))
+    content.pop("attained", None)
+    if content["boundaries"] == "calibrated":
+        content.pop("thresholds", None)
+    return content
+
+
 def fingerprint_of(document: str) -> str:
     """SHA-256 of a canonical document, hexadecimal."""
     return hashlib.sha256(document.encode()).hexdigest()

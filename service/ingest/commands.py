@@ -12,10 +12,14 @@ from service.domain.sequential_test import SequentialTest, Subject
 
 @dataclass(frozen=True)
 class CreatePlan:
-    """Store a plan; the same name with the same content is answered with the stored one."""
+    """
+    Store a plan; the same name with the same stated content is answered with the stored one.
+
+    `document` comes from `checked_content`: checking may compute for seconds, which the writer must not wait for.
+    """
 
     name: str
-    content: Mapping[str, Any]
+    document: str
     actor: str
 
 

@@ -29,8 +29,8 @@ from service.domain.errors import (
     VersionMoved,
 )
 from service.domain.observing import observe
-from service.domain.plan import Plan, fingerprint_of
-from service.domain.procedure import checked_content, procedure_of
+from service.domain.plan import Plan, fingerprint_of, stated
+from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
 from service.ingest.commands import (
@@ -64,13 +64,12 @@ def perform(command: Command, writer: Writer, now: datetime) -> Outcome:  # noqa
 
 @perform.register
 def _(command: CreatePlan, writer: Writer, now: datetime) -> Outcome:
-    document = checked_content(command.content)
     stored = writer.plan(command.name)
     if stored is not None:
-        if stored.document != document:
+        if stated(stored.document) != stated(command.document):
             raise PlanDiffers(command.name)
         return StoredPlan(stored, is_new=False)
-    plan = Plan(command.name, document, fingerprint_of(document), now, command.actor)
+    plan = Plan(command.name, command.document, fingerprint_of(command.document), now, command.actor)
     writer.add_plan(plan)
     return StoredPlan(plan, is_new=True)
 

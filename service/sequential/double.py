@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
 IndexArray = NDArray[np.intp]
+BoolArray = NDArray[np.bool_]
 
 # 2**27 + 1 cuts a 53-bit significand into two halves whose products are exact (Dekker 1971).
 _SPLITTER = 134217729.0

@@ -3,7 +3,8 @@ The continuation region: for each progress, the totals between which sampling go
 
 Quantity: a lower and an upper limit of the total for every progress (units or exposure). At or beyond a limit the
 test is decided: one side accepts H0, the other rejects it, depending on which of the two large totals speak for.
-Method: the two parallel lines of the likelihood ratio, closed by a wall where the plan is truncated.
+Method: a protocol for regions of any shape, and the one of the likelihood ratio: two parallel lines, closed by a wall
+where the plan is truncated.
 Accuracy: integer totals are compared with acceptance and rejection numbers whose ties are resolved at 1e-12
 relative; real totals with the deviation from the middle line, carried in two doubles.
 Cost: a few operations for each progress asked for.
@@ -19,15 +20,19 @@ from numpy.typing import NDArray
 
 from service.sequential.boundaries import Thresholds
 from service.sequential.decision import Decision
-from service.sequential.double import Double, FloatArray
+from service.sequential.double import BoolArray, Double, FloatArray
 from service.sequential.likelihood import LikelihoodRatio
 
 SideArray = NDArray[np.int8]
 
 BELOW, INSIDE, ABOVE = -1, 0, 1
 
-# Two sides of a comparison closer than this, relative to their terms, count as equal for integer totals.
+# Two sides of a comparison closer than this, relative to their terms, count as equal for integer totals and for
+# exposures that come to a limit or to the wall.
 TIE = 1e-12
+
+# A drawing over units shows at least so many.
+FEW_UNITS = 10.0
 
 
 @dataclass(frozen=True)
@@ -43,6 +48,10 @@ class Wall:
 
     progress: float
     cap: int | None = None
+
+    def is_reached(self, progress: FloatArray) -> BoolArray:
+        """Whether each progress has come to the wall; sums of decimal exposures may fall short of it by rounding."""
+        return progress >= self.progress * (1.0 - TIE)
 
 
 @dataclass(frozen=True)
@@ -117,6 +126,10 @@ class Region(Protocol):
         """The progress until which each total is at or over the upper limit, wall left out; shape (points,)."""
         ...
 
+    def open_horizon(self, reached: float) -> float:
+        """A progress far enough to draw to, where no wall ends the region: a good way past where decisions begin."""
+        ...
+
 
 @dataclass(frozen=True)
 class StraightRegion:
@@ -146,7 +159,7 @@ class StraightRegion:
         """See `Region`."""
         lower, upper = self._lines(progress)
         if self.wall is not None:
-            at_wall = progress >= self.wall.progress
+            at_wall = self.wall.is_reached(progress)
             cut_lower, cut_upper = self._cut(progress)
             lower = np.where(at_wall, cut_lower, lower)
             upper = np.where(at_wall, cut_upper, upper)
@@ -160,9 +173,9 @@ class StraightRegion:
         """See `Region`."""
         if self.span.is_integer:
             lower, upper = self._lines(progress.value)
-            return _side_of(total.value, lower, upper)
+            return side_of(total.value, lower, upper)
         deviation = self.ratio.deviation(progress, total)
-        return _side_of(deviation, -self.lower_intercept, self.upper_intercept)
+        return side_of(deviation, -self.lower_intercept, self.upper_intercept)
 
     def sides_at_wall(self, progress: Double, total: Double) -> SideArray:
         """See `Region`."""
@@ -181,6 +194,13 @@ class StraightRegion:
     def upper_left_at(self, total: FloatArray) -> FloatArray:
         """See `Region`."""
         return (total - self.upper_intercept) / self.ratio.slope
+
+    def open_horizon(self, reached: float) -> float:
+        """See `Region`."""
+        start = self.first_possible_decision()
+        if start == 0.0 and self.ratio.slope != 0.0:
+            start = abs(self.lower_intercept / self.ratio.slope)
+        return max(1.25 * reached, 3.0 * start, 0.0 if self.span is COUNTS else FEW_UNITS)
 
     def first_possible_decision(self) -> float:
         """
@@ -239,7 +259,7 @@ def straight_region(
     return StraightRegion(ratio, lower, upper, span, wall)
 
 
-def _side_of(value: FloatArray, lower: FloatArray | float, upper: FloatArray | float) -> SideArray:
+def side_of(value: FloatArray, lower: FloatArray | float, upper: FloatArray | float) -> SideArray:
     """Equality decides."""
     return np.where(value <= lower, BELOW, np.where(value >= upper, ABOVE, INSIDE)).astype(np.int8)
 

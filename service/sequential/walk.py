@@ -14,11 +14,10 @@ Mathematical Statistics 24, 254-264.
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from service.sequential.decision import Cause, Decision
-from service.sequential.double import Double, FloatArray
-from service.sequential.region import ABOVE, BELOW, INSIDE, Region, SideArray
+from service.sequential.double import BoolArray, Double, FloatArray
+from service.sequential.region import ABOVE, BELOW, INSIDE, TIE, Region, SideArray
 
 
 @dataclass(frozen=True)
@@ -43,7 +42,7 @@ def first_exit_at_reports(region: Region, progress: Double, total: Double) -> Ex
     sides = region.sides(progress, total)
     leaves = sides != INSIDE
     if region.wall is not None:
-        leaves = leaves | (progress.value >= region.wall.progress)
+        leaves = leaves | region.wall.is_reached(progress.value)
         if region.wall.cap is not None:
             leaves = leaves | (total.value >= region.wall.cap)
     index = _first(leaves)
@@ -68,7 +67,7 @@ def first_exit_in_time(region: Region, progress: Double, total: Double, steps: F
     before = total.value - steps
     lower_at = region.lower_reached_at(before)
     until = lower_at if region.wall is None else np.minimum(lower_at, region.wall.progress)
-    runs_out = progress.value >= until
+    runs_out = progress.value >= until * (1.0 - TIE)
     sides = region.sides(progress, total)
     jumps_out = sides == ABOVE
     if region.wall is not None and region.wall.cap is not None:
@@ -91,7 +90,7 @@ def _exit(region: Region, index: int, progress: Double, total: Double, side: int
     return Exit(index, progress, total, region.below if side == BELOW else region.above, cause)
 
 
-def _first(leaves: NDArray[np.bool_]) -> int | None:
+def _first(leaves: BoolArray) -> int | None:
     """The index of the first true element."""
     index = int(np.argmax(leaves))
     return index if leaves[index] else None

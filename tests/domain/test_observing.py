@@ -10,9 +10,10 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from mpmath import mpf
 
+from service.domain.checking import checked_content
 from service.domain.observing import observe
 from service.domain.plan import Plan
-from service.domain.procedure import Procedure, checked_content, procedure_of
+from service.domain.procedure import Procedure, procedure_of
 from service.domain.state import State
 from tests.sequential.reference import slow
 
@@ -88,6 +89,7 @@ def weighed(family: str, rows: list[dict[str, Any]]) -> list[tuple[float, float]
 
 def slow_answer(document: dict[str, Any], rows: list[dict[str, Any]]) -> slow.Answer:
     limits = procedure(document).thresholds
+    assert limits is not None
     truncation = document.get("truncation", {})
     plan = slow.Plan(
         document["family"],

@@ -11,6 +11,7 @@ import pytest
 from sqlalchemy import Connection, Engine, event, text
 from sqlalchemy.exc import OperationalError
 
+from service.domain.checking import checked_content
 from service.domain.errors import (
     DomainError,
     InvalidObservations,
@@ -45,7 +46,7 @@ PLAN = {
 def engine(tmp_path: Path) -> Iterator[Engine]:
     engine = create_engine_for(f"sqlite:///{tmp_path / 'road.sqlite3'}")
     upgrade(engine)
-    perform_now(engine, CreatePlan("p", PLAN, "me"))
+    perform_now(engine, CreatePlan("p", checked_content(PLAN), "me"))
     for key in ("a", "b"):
         perform_now(engine, RegisterTest(key, "p", Subject(SubjectKind.LOT, key), {}, "me"))
     yield engine

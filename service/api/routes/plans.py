@@ -11,12 +11,15 @@ from service.api.conditional import etag, not_modified
 from service.api.description import answers_with
 from service.api.lookup import known_plan
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
-from service.api.parts import PartsOf, reading
-from service.api.schemas.plans import PlanForm, PlanOut, PlansOut
+from service.api.parts import PartsOf, computing, reading
+from service.api.schemas.plans import PlanForm, PlanOut, PlansOut, StandardOut, StandardsOut
 from service.domain.access import AccessKey, Role
+from service.domain.checking import attained_by, checked_content
+from service.domain.standards import catalogue
 from service.ingest.commands import CreatePlan, StoredPlan
 
 router = APIRouter(prefix="/v1/plans", tags=["plans"], route_class=StrictRoute)
+standards_router = APIRouter(prefix="/v1/standard-plans", tags=["plans"], route_class=StrictRoute)
 
 
 class PlansQuery(BaseModel):
@@ -29,7 +32,10 @@ class PlansQuery(BaseModel):
 
 
 @router.post(
-    "", status_code=201, responses=answers_with("invalid-plan", "plan-differs", has_body=True), summary="Create a plan"
+    "",
+    status_code=201,
+    responses=answers_with("invalid-plan", "computation-too-large", "plan-differs", has_body=True),
+    summary="Create a plan",
 )
 async def create_plan(
     form: PlanForm,
@@ -38,7 +44,8 @@ async def create_plan(
     key: Annotated[AccessKey, requires(Role.ENGINEER)],
 ) -> PlanOut:
     """The same name with the same content answers 200 with the stored plan; with other content, 409."""
-    outcome = cast("StoredPlan", await parts.road.submit(CreatePlan(form.name, form.content(), key.name)))
+    document = await computing(parts, lambda: checked_content(form.content()))
+    outcome = cast("StoredPlan", await parts.road.submit(CreatePlan(form.name, document, key.name)))
     response.status_code = 201 if outcome.is_new else 200
     response.headers["Location"] = f"/v1/plans/{outcome.plan.name}"
     response.headers["ETag"] = etag(outcome.plan.fingerprint)
@@ -73,3 +80,12 @@ async def show_plan(name: str, request: Request, response: Response, parts: Part
         return unchanged
     response.headers["ETag"] = tag
     return PlanOut.of(plan)
+
+
+@standards_router.get(
+    "", responses=answers_with(), summary="List the standard plans", dependencies=[requires(Role.VIEWER)]
+)
+async def list_standards(parts: PartsOf) -> StandardsOut:
+    """Public-domain plans, ready to use, with their sources and the risks that they really attain."""
+    attained = await computing(parts, lambda: [(standard, attained_by(standard)) for standard in catalogue()])
+    return StandardsOut(items=[StandardOut.of(standard, risks) for standard, risks in attained])

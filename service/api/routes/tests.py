@@ -11,11 +11,14 @@ from service.api.conditional import etag, not_modified
 from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
-from service.api.parts import Parts, PartsOf, reading
+from service.api.parts import Parts, PartsOf, computing, reading
 from service.api.problems import RequestProblem
+from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
 from service.domain.errors import Fault
+from service.domain.outlook import outlook_of
+from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SubjectKind
 from service.domain.state import Decision
 from service.ingest.commands import RegisteredTest, RegisterTest
@@ -98,6 +101,24 @@ async def show_test(key: str, request: Request, response: Response, parts: Parts
         return unchanged
     response.headers["ETag"] = tag
     return TestOut.of(test, plan)
+
+
+@router.get(
+    "/{key}/outlook",
+    responses=answers_with("not-found", "computation-too-large"),
+    response_model=OutlookOut,
+    summary="What is still needed",
+    dependencies=[requires(Role.VIEWER)],
+)
+async def show_outlook(key: str, request: Request, response: Response, parts: PartsOf) -> OutlookOut | Response:
+    """The shortest ways to each decision, and exactly what is to be expected from here."""
+    test, plan = await known_test(parts, key)
+    tag = etag(test.version)
+    if (unchanged := not_modified(request, tag)) is not None:
+        return unchanged
+    response.headers["ETag"] = tag
+    outlook = await computing(parts, lambda: outlook_of(procedure_of(plan), test.state))
+    return OutlookOut.of(outlook, test.state)
 
 
 def _page(parts: Parts, filters: TestFilters, after: str | None, limit: int) -> tuple[list[TestOut], str | None]:

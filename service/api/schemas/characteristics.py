@@ -4,10 +4,12 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Number, shown_as
+from service.api.schemas.common import Answer, Form, Name, Number, optional, shown_as
 from service.api.schemas.plans import EXAMPLE as PLAN
-from service.api.schemas.plans import PlanForm
+from service.api.schemas.plans import AttainedOut, LinesOut, PlanContentForm, ThresholdsOut, TruncationForm
 from service.domain.characteristics import Point, Promise, Spread
+from service.domain.designing import Suggestion
+from service.domain.procedure import lines_of, procedure_of_document
 
 PROMISE: dict[str, Any] = {
     "method": "recursion",
@@ -37,26 +39,40 @@ PROMISE: dict[str, Any] = {
         "saving_at_h0": 0.42,
         "saving_at_h1": 0.57,
     },
+    "thresholds": {"accept": -2.2512917986, "reject": 2.8903717579},
+    "lines": {"slope": 0.0397, "accept_intercept": 0.9389, "reject_intercept": 1.2054},
+    "suggested_truncation": None,
 }
 
 
-class CharacteristicsForm(PlanForm):
-    """A plan that is not stored, and the true parameters to ask about."""
+class TruncationQuestionForm(Form):
+    """How much longer than without truncation sampling may become on average, as a share."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": [{**PLAN, "at": [0.01, 0.05]}]})
+    inflation: Number
 
+
+class CandidateForm(PlanContentForm):
+    """A plan to compare with others."""
+
+    name: Name | None = None
+
+
+class CharacteristicsForm(PlanContentForm):
+    """A plan that is not stored, or several to compare, and the true parameters to ask about."""
+
+    model_config = ConfigDict(
+        json_schema_extra={
+            "examples": [
+                {**PLAN, "at": [0.01, 0.05]},
+                {"candidates": [PLAN, {**PLAN, "name": "exact", "boundaries": "calibrated"}], "at": [0.01, 0.05]},
+            ]
+        }
+    )
+
+    name: Name | None = None
     at: Annotated[list[Number], Field(max_length=500)] = Field(default_factory=list)
-
-    def content(self) -> dict[str, Any]:
-        """The plan without its name and the parameters."""
-        return self.model_dump(exclude_none=True, exclude={"name", "at"})
-
-
-class AttainedOut(Answer):
-    """The exact risks: P(reject) at h0 and P(accept) at h1."""
-
-    alpha: float
-    beta: float
+    suggest_truncation: TruncationQuestionForm | None = Field(None, description="Ask for the smallest truncation.")
+    candidates: Annotated[list[CandidateForm], Field(min_length=1, max_length=8)] | None = None
 
 
 class ApproximateOut(Answer):
@@ -112,6 +128,30 @@ class PointOut(Answer):
         )
 
 
+class SuggestionOut(Answer):
+    """The smallest truncation found at which calibrated boundaries keep both risks within the inflation."""
+
+    truncation: TruncationForm
+    thresholds: ThresholdsOut
+    attained: AttainedOut
+    average_at_h0: float = Field(description="Mean sample number, or mean exposure for families with it.")
+    average_at_h1: float
+    inflation: float
+
+    @classmethod
+    def of(cls, suggestion: Suggestion) -> "SuggestionOut":
+        """From the domain's suggestion."""
+        at = suggestion.at if suggestion.axis == "exposure" else int(suggestion.at)
+        return cls(
+            truncation=TruncationForm.model_validate({suggestion.axis: at}),
+            thresholds=ThresholdsOut.model_validate(suggestion.thresholds),
+            attained=AttainedOut.model_validate(suggestion.attained),
+            average_at_h0=suggestion.average_at_h0,
+            average_at_h1=suggestion.average_at_h1,
+            inflation=suggestion.inflation,
+        )
+
+
 class CharacteristicsOut(Answer):
     """What a plan promises."""
 
@@ -122,17 +162,38 @@ class CharacteristicsOut(Answer):
     attained: AttainedOut
     points: list[PointOut]
     fixed_sample: FixedSampleOut | None
+    thresholds: ThresholdsOut | None
+    lines: LinesOut | None
+    suggested_truncation: SuggestionOut | None = Field(None, description="Where it was asked for.")
 
     @classmethod
-    def of(cls, promise: Promise) -> "CharacteristicsOut":
-        """From the domain's promise."""
+    def of(cls, promise: Promise, document: str, suggestion: Suggestion | None = None) -> "CharacteristicsOut":
+        """From the domain's promise of a plan's document."""
+        procedure = procedure_of_document(document)
         return cls(
+            thresholds=optional(ThresholdsOut, procedure.thresholds),
+            lines=optional(LinesOut, lines_of(procedure)),
+            suggested_truncation=None if suggestion is None else SuggestionOut.of(suggestion),
             method=promise.method,
             error_bound=promise.error_bound,
             attained=AttainedOut(alpha=promise.alpha, beta=promise.beta),
             points=[PointOut.of(point) for point in promise.points],
             fixed_sample=None if promise.fixed_sample is None else FixedSampleOut.model_validate(promise.fixed_sample),
         )
+
+
+class CandidateOut(CharacteristicsOut):
+    """One of the plans that are compared."""
+
+    name: str | None
+
+
+class ComparisonOut(Answer):
+    """Candidate plans side by side, at the same true parameters."""
+
+    model_config = shown_as({"candidates": [{"name": "seal-leak", **PROMISE}]})
+
+    candidates: list[CandidateOut]
 
 
 def _members(spread: Spread | None) -> tuple[float | None, float | None, dict[str, float] | None]:

@@ -1,7 +1,7 @@
 """Types that several schemas share."""
 
 from datetime import datetime
-from typing import Annotated, Any
+from typing import Annotated, Any, TypeVar
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints
 
@@ -39,6 +39,14 @@ class Answer(BaseModel):
     """An answer."""
 
     model_config = ConfigDict(from_attributes=True)
+
+
+A = TypeVar("A", bound=Answer)
+
+
+def optional(answer: type[A], value: object | None) -> A | None:
+    """The answer from a domain value, None for none."""
+    return None if value is None else answer.model_validate(value)
 
 
 def shown_as(example: dict[str, Any]) -> ConfigDict:

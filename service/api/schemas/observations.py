@@ -6,8 +6,9 @@ from typing import Annotated, Any, Self
 
 from pydantic import ConfigDict, Field, StrictBool, model_validator
 
-from service.api.schemas.common import Answer, Form, Moment, Number, Text, shown_as
-from service.api.schemas.plans import ThresholdsOut
+from service.api.schemas.common import Answer, Form, Moment, Number, Text, optional, shown_as
+from service.api.schemas.plans import CONTENT as PLAN
+from service.api.schemas.plans import PlanContentForm, ThresholdsOut
 from service.api.schemas.tests import total_of
 from service.domain.families import Family
 from service.domain.log import LoggedObservation
@@ -99,6 +100,15 @@ class ObservationsForm(Form):
         return len(self.values) + len(self.observations)
 
 
+class RehearsalForm(Form):
+    """Historical observations with a plan that is not stored."""
+
+    model_config = ConfigDict(json_schema_extra={"examples": [{"plan": PLAN, "submission": EXAMPLES[0]}]})
+
+    plan: PlanContentForm
+    submission: ObservationsForm
+
+
 class LoggedOut(Answer):
     """One observation of the log."""
 
@@ -166,7 +176,7 @@ class PathOut(Answer):
     key: str
     decision: str
     axis: str = Field(description="What the region runs over: sample_number or exposure.")
-    thresholds: ThresholdsOut
+    thresholds: ThresholdsOut | None
     points: list[PathPointOut]
     region: list[RegionPointOut]
 
@@ -184,7 +194,7 @@ class RehearsalOut(Answer):
     cause: str | None
     overrun: int
     axis: str
-    thresholds: ThresholdsOut
+    thresholds: ThresholdsOut | None
     points: list[PathPointOut]
     region: list[RegionPointOut]
 
@@ -209,7 +219,7 @@ def drawn(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: 
     region = region_points(procedure, float(path.progress[-1]))
     return {
         "axis": "exposure" if procedure.family.has_exposure else "sample_number",
-        "thresholds": ThresholdsOut.model_validate(procedure.thresholds),
+        "thresholds": optional(ThresholdsOut, procedure.thresholds),
         "points": [_path_point(procedure, path, i) for i in range(len(path.sequence))],
         "region": [_region_point(procedure, point) for point in region],
     }

@@ -1,16 +1,17 @@
 """Plans."""
 
 from datetime import datetime
-from typing import Any
+from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name, Number, Whole, shown_as
+from service.api.schemas.common import Answer, Form, Name, Number, Text, Whole, optional, shown_as
+from service.domain.calibrating import Risks
 from service.domain.plan import Plan
 from service.domain.procedure import lines_of, procedure_of
+from service.domain.standards import Standard, source_of
 
-EXAMPLE: dict[str, Any] = {
-    "name": "seal-leak",
+CONTENT: dict[str, Any] = {
     "family": "bernoulli",
     "h0": 0.01,
     "h1": 0.05,
@@ -20,6 +21,8 @@ EXAMPLE: dict[str, Any] = {
     "truncation": {"sample_number": 200},
 }
 
+EXAMPLE: dict[str, Any] = {"name": "seal-leak", **CONTENT}
+
 
 STORED: dict[str, Any] = {
     **EXAMPLE,
@@ -28,10 +31,18 @@ STORED: dict[str, Any] = {
     "known": None,
     "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
     "lines": {"slope": 0.02499, "accept_intercept": 1.36382, "reject_intercept": 1.75096},
+    "table": None,
+    "standard": None,
+    "scale": None,
+    "source": None,
+    "attained": None,
     "fingerprint": "0d5f…",
     "created_at": "2031-05-04T09:00:00Z",
     "created_by": "me",
 }
+
+# Members of a stored plan that not every plan has.
+OPTIONAL = ("truncation", "known", "table", "standard", "scale", "attained")
 
 
 class TruncationForm(Form):
@@ -49,18 +60,29 @@ class ThresholdsForm(Form):
     reject: Number
 
 
-class PlanForm(Form):
-    """A plan: what is promised before the first datum."""
+class RowForm(Form):
+    """A row of a table: a sample number with its numbers, or failures with their times."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+    sample_number: Whole | None = None
+    accept: Whole | None = Field(None, description="Accept at this total or on its side of it; null: not in this row.")
+    reject: Whole | None = None
+    failures: Whole | None = None
+    reject_at: Number | None = Field(None, description="Reject when this failure comes at or before this time.")
+    accept_at: Number | None = Field(None, description="Accept when the time reaches this with at most so many.")
 
-    name: Name
-    family: str = Field(description="bernoulli, poisson, exponential or normal.")
-    h0: Number = Field(description="Parameter under H0; see the family.")
-    h1: Number = Field(description="Parameter under H1.")
-    alpha: Number = Field(description="Producer's risk: P(reject) when H0 is true.")
-    beta: Number = Field(description="Consumer's risk: P(accept) when H1 is true.")
-    boundaries: str = Field("wald", description="wald, strict or given.")
+
+class PlanContentForm(Form):
+    """What a plan promises, its name left out. A standard brings its own family, hypotheses, risks and table."""
+
+    family: str | None = Field(None, description="bernoulli, poisson, exponential or normal. Required.")
+    h0: Number | None = Field(None, description="Parameter under H0; see the family. Required.")
+    h1: Number | None = Field(None, description="Parameter under H1. Required.")
+    alpha: Number | None = Field(None, description="Producer's risk: P(reject) when H0 is true. Required.")
+    beta: Number | None = Field(None, description="Consumer's risk: P(accept) when H1 is true. Required.")
+    boundaries: str = Field("wald", description="wald, strict, calibrated, given or table.")
+    table: Annotated[list[RowForm], Field(max_length=2000)] | None = Field(None, description='With "table" boundaries.')
+    standard: Text | None = Field(None, description="The name of a standard plan; see GET /v1/standard-plans.")
+    scale: Number | None = Field(None, description="With a reliability standard: the lower test mean life.")
     statistic: str = Field("simple", description="simple.")
     thresholds: ThresholdsForm | None = Field(None, description='With "given" boundaries.')
     truncation: TruncationForm | None = None
@@ -68,7 +90,15 @@ class PlanForm(Form):
 
     def content(self) -> dict[str, Any]:
         """The plan without its name, as the domain takes it."""
-        return self.model_dump(exclude_none=True, exclude={"name"})
+        return self.model_dump(exclude_none=True, include=set(PlanContentForm.model_fields))
+
+
+class PlanForm(PlanContentForm):
+    """A plan: what is promised before the first datum."""
+
+    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+
+    name: Name
 
 
 class ThresholdsOut(Answer):
@@ -84,6 +114,13 @@ class LinesOut(Answer):
     slope: float
     accept_intercept: float
     reject_intercept: float
+
+
+class AttainedOut(Answer):
+    """The exact risks: P(reject) at h0 and P(accept) at h1."""
+
+    alpha: float
+    beta: float
 
 
 class PlanOut(Answer):
@@ -102,8 +139,13 @@ class PlanOut(Answer):
     statistic: str
     truncation: dict[str, float] | None
     known: dict[str, float] | None
-    thresholds: ThresholdsOut
-    lines: LinesOut
+    thresholds: ThresholdsOut | None = Field(description="Null where the limits are a table's.")
+    lines: LinesOut | None = Field(description="Null where straight lines do not bound the region.")
+    table: list[RowForm] | None
+    standard: str | None
+    scale: float | None
+    source: str | None = Field(description="Where the standard stands.")
+    attained: AttainedOut | None = Field(description="Exact risks, for calibrated boundaries and tables.")
     fingerprint: str
     created_at: datetime
     created_by: str
@@ -112,12 +154,13 @@ class PlanOut(Answer):
     def of(cls, plan: Plan) -> "PlanOut":
         """From the domain's plan."""
         procedure = procedure_of(plan)
-        content = {"truncation": None, "known": None, **plan.content}
-        content["thresholds"] = ThresholdsOut.model_validate(procedure.thresholds)
+        content: dict[str, Any] = {**dict.fromkeys(OPTIONAL), **plan.content}
+        content["thresholds"] = optional(ThresholdsOut, procedure.thresholds)
         return cls(
             name=plan.name,
             parameter=procedure.family.parameter,
-            lines=LinesOut.model_validate(lines_of(procedure)),
+            lines=optional(LinesOut, lines_of(procedure)),
+            source=source_of(plan.content.get("standard")),
             fingerprint=plan.fingerprint,
             created_at=plan.created_at,
             created_by=plan.created_by,
@@ -132,3 +175,62 @@ class PlansOut(Answer):
 
     items: list[PlanOut]
     next_cursor: str | None
+
+
+class StandardOut(Answer):
+    """A standard plan: use it with `{"standard": name}`, and `"scale"` where it needs one."""
+
+    name: str
+    title: str
+    source: str
+    needs_scale: bool
+    family: str
+    h0: float
+    h1: float
+    alpha: float
+    beta: float
+    attained: AttainedOut
+    table: list[RowForm]
+
+    @classmethod
+    def of(cls, standard: Standard, attained: Risks) -> "StandardOut":
+        """From the catalogue's entry, at scale 1 where it has one."""
+        return cls(
+            name=standard.name,
+            title=standard.title,
+            source=standard.source,
+            needs_scale=standard.needs_scale,
+            attained=AttainedOut.model_validate(attained),
+            **standard.content,
+        )
+
+
+class StandardsOut(Answer):
+    """The catalogue."""
+
+    model_config = shown_as(
+        {
+            "items": [
+                {
+                    "name": "MIL-HDBK-781A/VI-D",
+                    "title": "Reliability test plan VI-D: discrimination ratio 3, nominal risks 20 %",
+                    "source": "MIL-HDBK-781A (1996), sequential test plans",
+                    "needs_scale": True,
+                    "family": "exponential",
+                    "h0": 3.0,
+                    "h1": 1.0,
+                    "alpha": 0.2,
+                    "beta": 0.2,
+                    "attained": {"alpha": 0.182492, "beta": 0.192581},
+                    "table": [
+                        {"failures": 0, "accept_at": 2.67},
+                        {"failures": 1, "accept_at": 4.32},
+                        {"failures": 2, "reject_at": 0.36, "accept_at": 4.5},
+                        {"failures": 3, "reject_at": 4.5},
+                    ],
+                }
+            ]
+        }
+    )
+
+    items: list[StandardOut]

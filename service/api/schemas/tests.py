@@ -5,9 +5,10 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name, Text, shown_as
+from service.api.schemas.common import Answer, Form, Name, Text, optional, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.families import Family
+from service.domain.outlook import Ways, ways_of
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest, Subject, SubjectKind
@@ -31,6 +32,7 @@ STATE: dict[str, Any] = {
     "exposure": None,
     "total": 0,
     "decided": {"sample_number": 24, "exposure": None, "at": "2031-05-04T09:30:00Z", "cause": "boundary"},
+    "outlook": None,
     "overrun": 1,
     "status": "open",
     "version": 2,
@@ -78,6 +80,19 @@ class DecidedOut(Answer):
     cause: str
 
 
+class WaysOut(Answer):
+    """The shortest way to each decision in words; null where there is none."""
+
+    accept: str | None
+    reject: str | None
+
+    @classmethod
+    def of(cls, ways: Ways) -> "WaysOut":
+        """From the domain's ways."""
+        accept, reject = ways.accept, ways.reject
+        return cls(accept=None if accept is None else accept.words, reject=None if reject is None else reject.words)
+
+
 class TestOut(Answer):
     """A test and where it stands."""
 
@@ -90,11 +105,12 @@ class TestOut(Answer):
     labels: dict[str, str]
     decision: str
     log_likelihood_ratio: float
-    thresholds: ThresholdsOut
+    thresholds: ThresholdsOut | None
     sample_number: int
     exposure: float | None
     total: int | float
     decided: DecidedOut | None
+    outlook: WaysOut | None = Field(description="The least that is still needed; null once decided.")
     overrun: int
     status: str
     version: int
@@ -149,11 +165,12 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "labels": dict(test.labels),
         "decision": state.decision,
         "log_likelihood_ratio": state.log_likelihood_ratio,
-        "thresholds": ThresholdsOut.model_validate(procedure.thresholds),
+        "thresholds": optional(ThresholdsOut, procedure.thresholds),
         "sample_number": state.sample_number,
         "exposure": state.exposure.value if procedure.family.has_exposure else None,
         "total": total_of(procedure.family, state.total.value),
         "decided": _decided(state),
+        "outlook": None if state.is_decided else WaysOut.of(ways_of(procedure, state)),
         "overrun": state.overrun,
         "status": test.status,
         "version": test.version,

@@ -4,6 +4,7 @@ import math
 from abc import ABC, abstractmethod
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from enum import StrEnum
 from typing import Any, ClassVar
 
 import numpy as np
@@ -15,7 +16,7 @@ from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import Span, StraightRegion
+from service.sequential.region import Region, Span
 
 # Magnitudes beyond these say that a field was misread; they also keep every product far from overflow.
 LARGEST_REAL = 1e100
@@ -27,6 +28,35 @@ LARGEST_EXPONENT = 700.0
 MAXIMAL_FAULTS = 20
 
 Document = Mapping[str, Any]
+
+
+@dataclass(frozen=True)
+class Start:
+    """A point of the region from which sampling goes on."""
+
+    progress: float = 0.0
+    total: float = 0.0
+
+
+ORIGIN = Start()
+
+
+@dataclass(frozen=True)
+class Way:
+    """
+    A shortest way to a decision.
+
+    Attributes:
+        observations: Units or reports that it takes, None where time alone does it.
+        exposure: Further exposure: as much as it takes, or as much as there may be at most.
+        total: By how much the total must change.
+        words: The same for people.
+    """
+
+    observations: int | None
+    exposure: float | None
+    total: float
+    words: str
 
 
 @dataclass(frozen=True)
@@ -58,6 +88,13 @@ class Column:
         return [Fault(self.pointer(int(i)), f"{rule}; received {_plain(self.values[i])}") for i in broken]
 
 
+class TableKind(StrEnum):
+    """What the rows of a table run over."""
+
+    UNITS = "units"
+    TIMES = "times"
+
+
 class Family(ABC):
     """
     An observation model.
@@ -73,6 +110,8 @@ class Family(ABC):
         span: The totals it can show.
         has_exposure: The region runs over exposure rather than units.
         is_watched_in_time: The region is watched between reports, not only at their ends.
+        parameter_lowers_total: Large parameters make small totals.
+        table: The rows of a table for this family, if a plan may be given as one.
     """
 
     name: ClassVar[str]
@@ -85,6 +124,8 @@ class Family(ABC):
     span: ClassVar[Span]
     has_exposure: ClassVar[bool] = False
     is_watched_in_time: ClassVar[bool] = False
+    parameter_lowers_total: ClassVar[bool] = False
+    table: ClassVar[TableKind | None] = None
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -113,13 +154,23 @@ class Family(ABC):
         return self.hypothesis_rule(value)
 
     @abstractmethod
-    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+    def exact(
+        self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN
+    ) -> Characteristics:
         """
-        Exact figures of a region at these true parameters; array of shape (points,).
+        Exact figures of a region at these true parameters, array of shape (points,), from one of its points on.
 
         Raises:
             TooMuchWork: The computation would need more steps than are allowed.
         """
+
+    @abstractmethod
+    def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
+        """The shortest ways from here to the lower and to the upper limit."""
+
+    def estimate(self, start: Start) -> float | None:
+        """The maximum-likelihood estimate of the parameter from the observations so far, None where there is none."""
+        return start.total / start.progress if start.progress > 0.0 else None
 
     @abstractmethod
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
@@ -130,6 +181,11 @@ class Family(ABC):
         self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
     ) -> FixedSample | None:
         """The smallest fixed sample; `lower` is the hypothesis of small totals, `risks` are in that order."""
+
+    @property
+    def has_stepwise_risks(self) -> bool:
+        """True where the risks move in steps as the limits move: whole-number totals looked at now and then."""
+        return self.span.is_integer and not self.is_watched_in_time
 
     @property
     def fields(self) -> tuple[str, ...]:
@@ -196,6 +252,11 @@ def refuse(faults: list[Fault]) -> None:
     """Raise when there is a fault."""
     if faults:
         raise InvalidObservations(faults[:MAXIMAL_FAULTS])
+
+
+def plural(count: int, singular: str, several: str | None = None) -> str:
+    """The number with its noun."""
+    return f"{count} {singular}" if count == 1 else f"{count} {several or singular + 's'}"
 
 
 def poisson_motion(rate: float) -> Motion:

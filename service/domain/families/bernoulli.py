@@ -6,7 +6,19 @@ from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import LARGEST_EXPONENT, Column, Family, Increments, refuse, whole_numbers
+from service.domain.families.base import (
+    LARGEST_EXPONENT,
+    ORIGIN,
+    Column,
+    Family,
+    Increments,
+    Start,
+    TableKind,
+    Way,
+    plural,
+    refuse,
+    whole_numbers,
+)
 from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
@@ -15,7 +27,8 @@ from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Units
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import PASS_FAIL, Span, StraightRegion
+from service.sequential.region import PASS_FAIL, Region, Span
+from service.sequential.ways import looks_to_lower, looks_to_upper
 
 
 class Bernoulli(Family):
@@ -25,6 +38,7 @@ class Bernoulli(Family):
     parameter: ClassVar[str] = "proportion nonconforming"
     optional: ClassVar[Mapping[str, float]] = {"size": 1.0}
     span: ClassVar[Span] = PASS_FAIL
+    table: ClassVar[TableKind | None] = TableKind.UNITS
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""
@@ -38,9 +52,20 @@ class Bernoulli(Family):
         """See `Family`."""
         return None if 0.0 <= value <= 1.0 else "must lie between 0 and 1"
 
-    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+    def exact(
+        self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN
+    ) -> Characteristics:
         """See `Family`."""
-        return counting_characteristics(region, Units(parameters))
+        return counting_characteristics(region, Units(parameters), start.progress, int(start.total))
+
+    def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
+        """See `Family`."""
+        down = looks_to_lower(region, start.progress, start.total, 1.0)
+        up = looks_to_upper(region, start.progress, start.total, 1.0)
+        return (
+            None if down is None else Way(down, None, 0.0, plural(down, "conforming unit")),
+            None if up is None else Way(up, None, float(up), plural(up, "nonconforming unit")),
+        )
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

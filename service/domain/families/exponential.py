@@ -5,7 +5,20 @@ from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import Column, Family, Increments, poisson_motion, positive_rule, reals, refuse
+from service.domain.families.base import (
+    ORIGIN,
+    Column,
+    Family,
+    Increments,
+    Start,
+    TableKind,
+    Way,
+    plural,
+    poisson_motion,
+    positive_rule,
+    reals,
+    refuse,
+)
 from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
@@ -14,7 +27,8 @@ from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Failures
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import COUNTS, Span, StraightRegion
+from service.sequential.region import COUNTS, Region, Span
+from service.sequential.ways import jump_to_upper, time_to_lower
 
 
 class Exponential(Family):
@@ -30,6 +44,8 @@ class Exponential(Family):
     required: ClassVar[tuple[str, ...]] = ("failed",)
     in_values: ClassVar[Mapping[str, float]] = {"failed": 1.0}
     span: ClassVar[Span] = COUNTS
+    parameter_lowers_total: ClassVar[bool] = True
+    table: ClassVar[TableKind | None] = TableKind.TIMES
     has_exposure: ClassVar[bool] = True
     is_watched_in_time: ClassVar[bool] = True
 
@@ -41,9 +57,24 @@ class Exponential(Family):
         """See `Family`."""
         return likelihood.exponential(h0, h1)
 
-    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+    def exact(
+        self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN
+    ) -> Characteristics:
         """See `Family`."""
-        return counting_characteristics(region, Failures(1.0 / parameters))
+        return counting_characteristics(region, Failures(1.0 / parameters), start.progress, int(start.total))
+
+    def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
+        """See `Family`."""
+        time = time_to_lower(region, start.progress, start.total)
+        failures, within = jump_to_upper(region, start.progress, start.total)
+        return (
+            None if time is None else Way(None, time, 0.0, f"a unit-time of {time:.6g} without failure"),
+            Way(failures, within, float(failures), f"{plural(failures, 'failure')} within a unit-time of {within:.6g}"),
+        )
+
+    def estimate(self, start: Start) -> float | None:
+        """See `Family`."""
+        return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

@@ -5,7 +5,7 @@ from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import LARGEST_REAL, Column, Family, Increments, reals, refuse
+from service.domain.families.base import LARGEST_REAL, ORIGIN, Column, Family, Increments, Start, Way, reals, refuse
 from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.double import FloatArray
@@ -13,7 +13,7 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import REALS, Span, StraightRegion
+from service.sequential.region import REALS, Region, Span, StraightRegion
 
 
 class Normal(Family):
@@ -32,9 +32,22 @@ class Normal(Family):
         """See `Family`."""
         return likelihood.normal(h0, h1, known["sigma"])
 
-    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+    def exact(
+        self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN
+    ) -> Characteristics:
         """See `Family`."""
-        return gaussian_characteristics(region, parameters, known["sigma"])
+        if not isinstance(region, StraightRegion):
+            raise TypeError(f"only straight regions of {self.name} are followed exactly")
+        return gaussian_characteristics(region, parameters, known["sigma"], start.progress, start.total)
+
+    def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
+        """See `Family`."""
+        limits = region.limits(np.array([start.progress + 1.0]))
+        low, high = float(limits.lower[0]) - start.total, float(limits.upper[0]) - start.total
+        return (
+            Way(1, None, low, f"a measurement of at most {low:.6g}"),
+            Way(1, None, high, f"a measurement of at least {high:.6g}"),
+        )
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

@@ -6,9 +6,13 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.families.base import (
+    ORIGIN,
     Column,
     Family,
     Increments,
+    Start,
+    Way,
+    plural,
     poisson_motion,
     positive_rule,
     reals,
@@ -23,7 +27,8 @@ from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Reports
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import COUNTS, Span, StraightRegion
+from service.sequential.region import COUNTS, Region, Span
+from service.sequential.ways import jump_to_upper, time_to_lower
 
 
 class Poisson(Family):
@@ -47,10 +52,21 @@ class Poisson(Family):
         """See `Family`."""
         return None if value == 0.0 else positive_rule(value)
 
-    def exact(self, region: StraightRegion, parameters: FloatArray, known: Mapping[str, float]) -> Characteristics:
+    def exact(
+        self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN
+    ) -> Characteristics:
         """See `Family`."""
         # The reports to come are supposed to have exposure 1.
-        return counting_characteristics(region, Reports(parameters, 1.0))
+        return counting_characteristics(region, Reports(parameters, 1.0), start.progress, int(start.total))
+
+    def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
+        """See `Family`."""
+        time = time_to_lower(region, start.progress, start.total)
+        count, within = jump_to_upper(region, start.progress, start.total)
+        return (
+            None if time is None else Way(1, time, 0.0, f"an exposure of {time:.6g} without a count"),
+            Way(1, within, float(count), f"{plural(count, 'count')} within an exposure of {within:.6g}"),
+        )
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

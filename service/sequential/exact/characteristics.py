@@ -29,6 +29,7 @@ class Characteristics:
 
     Attributes:
         error_bound: A bound of the absolute error of the probabilities, and of the relative error of the means.
+        work: About how many multiplications it took.
     """
 
     below: FloatArray
@@ -37,6 +38,7 @@ class Characteristics:
     standard_deviation: FloatArray
     quantiles: FloatArray
     error_bound: float
+    work: int
 
 
 def spread(mean: FloatArray, second_moment: FloatArray) -> FloatArray:

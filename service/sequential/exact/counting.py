@@ -26,6 +26,8 @@ from service.sequential.region import Region
 # Multiplications of one computation, and totals that it follows at once.
 MOST_WORK = 1_000_000_000
 WIDEST = 4_000
+# A stretch costs about as much as so many multiplications, however narrow it is.
+STRETCH_WORK = 2_000
 # Bisections of a stretch of time: enough for a double.
 BISECTIONS = 60
 # A convolution of at most so many products is done by a matrix; so many matrices are kept.
@@ -130,7 +132,9 @@ class _Course:
         left_out = rest * (1.0 + self._time / max(float(np.min(self._mean)), 1e-300)) if rest else 0.0
         bound = left_out + (self._stretches + 1) * 8.0 * float(np.finfo(float).eps)
         deviation = scale * spread(self._mean, self._second)
-        return Characteristics(self._below, self._above, scale * self._mean, deviation, scale * self._quantiles, bound)
+        work = self._work + STRETCH_WORK * self._stretches
+        quantiles = scale * self._quantiles
+        return Characteristics(self._below, self._above, scale * self._mean, deviation, quantiles, bound, work)
 
     def _width(self, stretch: Stretch) -> int:
         """The totals that can go on during a stretch, from the lowest; counts the work too."""

@@ -16,7 +16,7 @@ from typing import Protocol
 import numpy as np
 from scipy.special import betainc, gammainc, gammaln, xlog1py, xlogy
 
-from service.sequential.double import IndexArray, FloatArray
+from service.sequential.double import FloatArray, IndexArray
 from service.sequential.exact.characteristics import TooMuchWork
 
 # Terms added for the reports of one stretch.

@@ -9,12 +9,11 @@ from numpy.typing import NDArray
 from service.sequential import boundaries, likelihood
 from service.sequential.boundaries import Thresholds
 from service.sequential.decision import Decision
-from service.sequential.double import Double
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.exact.processes import Failures, Reports, Units
-from service.sequential.region import COUNTS, PASS_FAIL, REALS, Limits, StraightRegion, Wall, straight_region
+from service.sequential.region import COUNTS, PASS_FAIL, REALS, StraightRegion, Wall, straight_region
 
 Floats = NDArray[np.float64]
 
@@ -127,73 +126,6 @@ def test_counts_obey_walds_identity() -> None:
     for exact, sample in ((found.mean[0], stop + 1.0), (found.below[0], accepted), (found.mean[0] * rate, totals)):
         assert abs(np.mean(sample) - exact) < 4 * np.std(sample) / math.sqrt(len(sample))
     assert found.standard_deviation[0] == pytest.approx(np.std(stop + 1.0), rel=0.05)
-
-
-class FailureTable:
-    """A region given as failures with rejection and acceptance times, as the standards print it."""
-
-    def __init__(self, rows: list[tuple[float | None, float | None]]) -> None:
-        self.rows = rows
-        self.wall = None
-        self.below, self.above = Decision.ACCEPT, Decision.REJECT
-
-    def lower_reached_at(self, total: Floats) -> Floats:
-        return np.array([self._accept(int(k)) for k in total])
-
-    def upper_left_at(self, total: Floats) -> Floats:
-        return np.array([self._reject(int(k)) for k in total])
-
-    def _accept(self, total: int) -> float:
-        accept = self.rows[total][1] if total < len(self.rows) else None
-        return accept if accept is not None else self.rows[-2][1] or 0.0
-
-    def _reject(self, total: int) -> float:
-        if total >= len(self.rows):
-            return math.inf
-        reject = self.rows[total][0]
-        return reject if reject is not None else -1.0
-
-    def limits(self, progress: Floats) -> Limits:
-        raise AssertionError(progress)
-
-    def sides(self, progress: Double, total: Double) -> NDArray[np.int8]:
-        raise AssertionError(progress, total)
-
-    sides_at_wall = sides
-
-
-VI_D: list[tuple[float | None, float | None]] = [(None, 2.67), (None, 4.32), (0.36, 4.50), (4.50, None)]
-VIII_D: list[tuple[float | None, float | None]] = [(None, 1.72), (None, 3.10), (None, 4.50), (4.50, None)]
-IV_D: list[tuple[float | None, float | None]] = [
-    (None, 2.80),
-    (None, 4.18),
-    (0.70, 5.58),
-    (2.08, 6.96),
-    (3.46, 8.34),
-    (4.86, 9.74),
-    (6.24, 9.74),
-    (7.62, 9.74),
-    (9.74, None),
-]
-
-
-@pytest.mark.parametrize(
-    ("table", "d", "alpha", "beta", "time0", "time1"),
-    [
-        (IV_D, 2.0, 0.223103, 0.224965, 4.8222, 3.7205),
-        (VI_D, 3.0, 0.182492, 0.192581, 3.4310, 2.5822),
-        (VIII_D, 2.0, 0.292784, 0.299352, 2.5279, 2.2650),
-    ],
-)
-def test_the_true_risks_of_standard_reliability_plans(
-    table: list[tuple[float | None, float | None]], d: float, alpha: float, beta: float, time0: float, time1: float
-) -> None:
-    """MIL-HDBK-781A, plans IV-D, VI-D, VIII-D: true risks printed to .1 %; exact by an independent computation."""
-    found = counting_characteristics(FailureTable(table), Failures(np.array([1 / d, 1.0])))
-    assert found.above[0] == pytest.approx(alpha, abs=5e-7)
-    assert found.below[1] == pytest.approx(beta, abs=5e-7)
-    assert found.mean == pytest.approx([time0, time1], abs=5e-5)
-    assert found.below + found.above == pytest.approx([1.0, 1.0], abs=1e-12)
 
 
 def test_time_agrees_with_simulation() -> None:

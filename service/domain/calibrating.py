@@ -1,0 +1,86 @@
+"""Thresholds fitted so that a plan's exact risks are the stated ones, and the exact risks of any plan."""
+
+from collections.abc import Callable, Sequence
+
+import numpy as np
+
+from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan
+from service.domain.families.base import ORIGIN, Start
+from service.domain.procedure import Content, Procedure, with_thresholds
+from service.sequential import calibration
+from service.sequential.boundaries import Thresholds
+from service.sequential.calibration import Risks, RisksNotMet
+from service.sequential.decision import Decision
+from service.sequential.exact.characteristics import Characteristics, TooMuchWork
+
+# Steps that one calibration may take in all; a usual one takes a few million.
+MOST_WORK = 1_500_000_000
+
+
+def calibrated(content: Content) -> Thresholds:
+    """
+    Thresholds whose exact risks equal the stated ones, or for whole-number totals looked at in steps those of the
+    smallest region that exceeds neither.
+
+    Args:
+        content: A plan's content without faults.
+
+    Raises:
+        InvalidPlan: No thresholds keep the risks, most often because of the truncation.
+        ComputationTooLarge: It would take too long.
+    """
+    spent = 0
+
+    def risks_at(thresholds: Thresholds) -> Risks:
+        nonlocal spent
+        procedure = with_thresholds(content, thresholds)
+        found = exact_figures(procedure, procedure.hypotheses)
+        spent += found.work
+        if spent > MOST_WORK:
+            raise ComputationTooLarge(MOST_WORK)
+        return risks_of(procedure, found)
+
+    stated = Risks(content["alpha"], content["beta"])
+    procedure = with_thresholds(content, Thresholds(-1.0, 1.0))
+    find: Callable[[calibration.RisksAt, Risks], Thresholds] = (
+        calibration.smallest if procedure.family.has_stepwise_risks else calibration.matching
+    )
+    try:
+        return find(risks_at, stated)
+    except RisksNotMet as error:
+        where = "/truncation" if "truncation" in content else "/alpha"
+        rule = "leaves no calibrated boundaries that keep both risks" if "truncation" in content else "cannot be met"
+        detail = f"{rule}; the nearest attain alpha {error.least.alpha:.4g} and beta {error.least.beta:.4g}"
+        raise InvalidPlan([Fault(where, detail)]) from error
+
+
+def exact_figures(procedure: Procedure, parameters: Sequence[float], start: Start = ORIGIN) -> Characteristics:
+    """
+    Exact figures at these parameters, from a point of the region on.
+
+    Raises:
+        ComputationTooLarge: They need more steps than are allowed.
+    """
+    try:
+        return procedure.family.exact(procedure.region, np.array(parameters), procedure.known, start)
+    except TooMuchWork as error:
+        raise ComputationTooLarge(error.limit) from error
+
+
+def risks_of(procedure: Procedure, found: Characteristics) -> Risks:
+    """P(reject) at h0 and P(accept) at h1, from figures whose first two points are h0 and h1."""
+    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
+    return Risks(alpha=_clipped(rejects[0]), beta=accepts_at(procedure, found, 1))
+
+
+def accepts_at(procedure: Procedure, found: Characteristics, i: int) -> float:
+    """The probability of acceptance at the i-th parameter."""
+    accepts = found.below if procedure.region.below is Decision.ACCEPT else found.above
+    return _clipped(accepts[i])
+
+
+def _clipped(probability: float) -> float:
+    return min(1.0, max(0.0, float(probability)))
+
+
+__all__ = ["Risks", "accepts_at", "calibrated", "exact_figures", "risks_of"]

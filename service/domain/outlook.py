@@ -1,0 +1,118 @@
+"""What is still needed from where a test stands: the shortest ways to each decision, and what is to be expected."""
+
+from dataclasses import dataclass
+
+from service.domain.calibrating import accepts_at, exact_figures
+from service.domain.characteristics import Spread, spread_at
+from service.domain.families.base import Start, Way
+from service.domain.procedure import Procedure
+from service.domain.state import State
+from service.sequential.decision import Decision
+
+
+@dataclass(frozen=True)
+class Ways:
+    """The shortest way to each decision; None where the region has none, or the test is decided."""
+
+    accept: Way | None
+    reject: Way | None
+
+
+@dataclass(frozen=True)
+class Expected:
+    """
+    Exact figures of the rest of the test under one true parameter.
+
+    Attributes:
+        under: `h0`, `h1` or `estimate`.
+        further_sample_number, further_exposure: As for a plan's characteristics, counted from here.
+    """
+
+    under: str
+    parameter: float
+    probability_of_acceptance: float
+    probability_of_rejection: float
+    further_sample_number: Spread | None
+    further_exposure: Spread | None
+
+
+@dataclass(frozen=True)
+class Room:
+    """What is left before the truncation: units, or exposure, and failures where they end the test as well."""
+
+    sample_number: int | None
+    exposure: float | None
+    failures: int | None
+
+
+@dataclass(frozen=True)
+class Outlook:
+    """
+    Attributes:
+        estimate: Maximum likelihood from the observations so far, None where there is none.
+        room: None where the plan is not truncated, or the test is decided.
+        expected: Empty once the test is decided.
+    """
+
+    ways: Ways
+    estimate: float | None
+    room: Room | None
+    expected: tuple[Expected, ...]
+    error_bound: float
+
+
+NO_WAYS = Ways(None, None)
+
+
+def ways_of(procedure: Procedure, state: State) -> Ways:
+    """The shortest way to each decision from here."""
+    if state.is_decided:
+        return NO_WAYS
+    lower, upper = procedure.family.ways(procedure.region, _standing(procedure, state), procedure.known)
+    return Ways(lower, upper) if procedure.region.below is Decision.ACCEPT else Ways(upper, lower)
+
+
+def outlook_of(procedure: Procedure, state: State) -> Outlook:
+    """
+    All that can be said about the rest of a test.
+
+    Raises:
+        ComputationTooLarge: The exact figures need more steps than are allowed.
+    """
+    standing = _standing(procedure, state)
+    estimate = procedure.family.estimate(standing)
+    if state.is_decided:
+        return Outlook(NO_WAYS, estimate, None, (), 0.0)
+    asked = {"h0": procedure.hypotheses[0], "h1": procedure.hypotheses[1]}
+    if estimate is not None:
+        asked["estimate"] = estimate
+    found = exact_figures(procedure, tuple(asked.values()), standing)
+    expected = []
+    for i, (under, parameter) in enumerate(asked.items()):
+        accepts, spread = accepts_at(procedure, found, i), spread_at(found, i)
+        rejects = float((found.above if procedure.region.below is Decision.ACCEPT else found.below)[i])
+        expected.append(
+            Expected(
+                under=under,
+                parameter=parameter,
+                probability_of_acceptance=accepts,
+                probability_of_rejection=min(1.0, max(0.0, rejects)),
+                further_sample_number=None if procedure.family.is_watched_in_time else spread,
+                further_exposure=spread if procedure.family.has_exposure else None,
+            )
+        )
+    return Outlook(ways_of(procedure, state), estimate, _room(procedure, standing), tuple(expected), found.error_bound)
+
+
+def _standing(procedure: Procedure, state: State) -> Start:
+    progress = state.exposure.value if procedure.family.has_exposure else float(state.sample_number)
+    return Start(progress, state.total.value)
+
+
+def _room(procedure: Procedure, standing: Start) -> Room | None:
+    wall = procedure.region.wall
+    if wall is None:
+        return None
+    left = wall.progress - standing.progress
+    failures = None if wall.cap is None else wall.cap - int(standing.total)
+    return Room(None, left, failures) if procedure.family.has_exposure else Room(round(left), None, failures)
