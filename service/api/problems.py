@@ -110,7 +110,7 @@ _TYPES = (
         "computation-too-large",
         422,
         "The exact computation would be too large",
-        "The exact computation would need more than 100000 steps.",
+        "The exact computation would need more than 10000000 looks.",
     ),
     ProblemType(
         "idempotency-key-reused",

@@ -37,7 +37,7 @@ def calibrated(content: Content) -> Thresholds:
         found = exact_figures(procedure, procedure.hypotheses)
         spent += found.work
         if spent > MOST_WORK:
-            raise ComputationTooLarge(MOST_WORK)
+            raise ComputationTooLarge(f"{MOST_WORK} multiplications")
         return risks_of(procedure, found)
 
     stated = Risks(content["alpha"], content["beta"])

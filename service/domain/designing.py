@@ -123,7 +123,7 @@ class _Search:
         """Whether this truncation keeps both risks within the inflation."""
         if at not in self._tries:
             if len(self._tries) >= MOST_TRIES:
-                raise ComputationTooLarge(MOST_TRIES)
+                raise ComputationTooLarge(f"{MOST_TRIES} truncations")
             self._tries[at] = self._try(at)
         tried = self._tries[at]
         return tried is not None and tried.inflation <= self._inflation
@@ -139,7 +139,7 @@ class _Search:
 
     def _suggestion(self, tried: _Try | None) -> Suggestion:
         if tried is None or tried.procedure.thresholds is None:  # not reached: what is suggested was tried
-            raise ComputationTooLarge(MOST_TRIES)
+            raise ComputationTooLarge(f"{MOST_TRIES} truncations")
         return Suggestion(
             axis=self._axis,
             at=tried.at,

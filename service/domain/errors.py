@@ -84,9 +84,9 @@ class InvalidQuestion(Invalid):
 class ComputationTooLarge(Invalid):
     """The exact computation would need more work than the service does for one question."""
 
-    def __init__(self, limit: int) -> None:
+    def __init__(self, limit: str) -> None:
         super().__init__(
-            f"The exact computation would need more than {limit} steps. Truncate the plan, move the hypotheses apart, "
+            f"The exact computation would need more than {limit}. Truncate the plan, move the hypotheses apart, "
             "or ask for less extreme parameters."
         )
 

@@ -56,7 +56,7 @@ def test_too_much_is_refused_with_the_limit(admin: httpx.Client) -> None:
     answer = admin.post("/v1/characteristics", json=plan)
     assert answer.status_code == 422
     assert answer.json()["type"].endswith(":computation-too-large")
-    assert "100000 steps" in answer.json()["detail"]
+    assert "10000000 looks" in answer.json()["detail"]
     many = admin.post("/v1/characteristics", json={"name": "draft", **SEAL, "at": [0.1] * 501})
     assert pointers(many) == ["/at"]
 

@@ -5,6 +5,7 @@ from typing import Any
 from pydantic import Field
 
 from service.api.schemas.common import Answer, optional, shown_as
+from service.domain.characteristics import Spread
 from service.domain.outlook import Expected, Outlook
 from service.domain.state import State
 
@@ -52,9 +53,16 @@ class RoomOut(Answer):
 class FurtherOut(Answer):
     """Mean, standard deviation and quantiles of what is still to come."""
 
-    average: float = Field(validation_alias="mean")
+    average: float
     standard_deviation: float
     quantiles: dict[str, float]
+
+    @classmethod
+    def of(cls, spread: Spread | None) -> "FurtherOut | None":
+        """From the domain's spread, if there is one."""
+        if spread is None:
+            return None
+        return cls(average=spread.mean, standard_deviation=spread.standard_deviation, quantiles=spread.quantiles)
 
 
 class ExpectedOut(Answer):
@@ -75,8 +83,8 @@ class ExpectedOut(Answer):
             parameter=expected.parameter,
             probability_of_acceptance=expected.probability_of_acceptance,
             probability_of_rejection=expected.probability_of_rejection,
-            further_sample_number=optional(FurtherOut, expected.further_sample_number),
-            further_exposure=optional(FurtherOut, expected.further_exposure),
+            further_sample_number=FurtherOut.of(expected.further_sample_number),
+            further_exposure=FurtherOut.of(expected.further_exposure),
         )
 
 

@@ -13,11 +13,11 @@ QUANTILES = (0.5, 0.9, 0.95, 0.99)
 
 
 class TooMuchWork(Exception):
-    """The computation would need more steps than are allowed; `limit` says how many."""
+    """The computation would need more than it may; `limit` says of what."""
 
-    def __init__(self, limit: int) -> None:
-        super().__init__(f"the exact computation would need more than {limit} steps")
-        self.limit = limit
+    def __init__(self, most: int, unit: str) -> None:
+        super().__init__(f"the exact computation would need more than {most} {unit}")
+        self.limit = f"{most} {unit}"
 
 
 @dataclass(frozen=True)

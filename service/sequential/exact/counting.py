@@ -24,7 +24,7 @@ from service.sequential.exact.stretches import NO_CUT, Stretch, stretches_of_loo
 from service.sequential.region import Region
 
 # Multiplications of one computation, and totals that it follows at once.
-MOST_WORK = 1_000_000_000
+MOST_WORK = 2_000_000_000
 WIDEST = 4_000
 # A stretch costs about as much as so many multiplications, however narrow it is.
 STRETCH_WORK = 2_000
@@ -147,9 +147,9 @@ class _Course:
         self._stretches += 1
         self._work += self._process.points * width * count
         if width > WIDEST:
-            raise TooMuchWork(WIDEST)
+            raise TooMuchWork(WIDEST, "totals at once")
         if self._work > MOST_WORK:
-            raise TooMuchWork(MOST_WORK)
+            raise TooMuchWork(MOST_WORK, "multiplications")
         return width
 
     def _moved(self, duration: float, width: int) -> FloatArray:

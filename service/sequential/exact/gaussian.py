@@ -106,7 +106,7 @@ def _nodes(strip: _Strip) -> tuple[int, int]:
     coarse = 30 + math.ceil(3.5 * (strip.high - strip.low))
     fine = math.ceil(1.2 * coarse)
     if fine > MOST_POINTS:
-        raise TooMuchWork(MOST_POINTS)
+        raise TooMuchWork(MOST_POINTS, "quadrature points")
     return fine, coarse
 
 
@@ -244,7 +244,7 @@ def _directly_at(
         survival.append(rest)
         n += 1
         if n > MOST_STEPS_DIRECTLY:
-            raise TooMuchWork(MOST_STEPS_DIRECTLY)
+            raise TooMuchWork(MOST_STEPS_DIRECTLY, "steps")
         if n == last:
             below, above = below + float(alive @ ndtr(-x - drift)), above + float(alive @ ndtr(x + drift))
         else:

@@ -20,7 +20,7 @@ from service.sequential.double import FloatArray, IndexArray
 from service.sequential.exact.characteristics import TooMuchWork
 
 # Terms added for the reports of one stretch.
-MOST_TERMS = 20_000_000
+MOST_TERMS = 10_000_000
 
 
 class Process(Protocol):
@@ -130,7 +130,7 @@ class Reports:
         """See `Process`."""
         looks = int(duration)
         if looks * self.points * width > MOST_TERMS:
-            raise TooMuchWork(MOST_TERMS)
+            raise TooMuchWork(MOST_TERMS, "terms")
         shape = (self.points, width)
         stay, moment = np.ones(shape), np.zeros(shape)
         for look in range(1, looks):

@@ -57,7 +57,7 @@ def stretches_of_looks(region: Region, step: float, progress: float) -> Iterator
     begin, block, highest_cut = 1, SMALLEST_BLOCK, NO_CUT
     while begin <= last:
         if begin > MOST_LOOKS:
-            raise TooMuchWork(MOST_LOOKS)
+            raise TooMuchWork(MOST_LOOKS, "looks")
         looks = np.arange(begin, min(begin + block, last + 1), dtype=np.float64)
         limits = region.limits(progress + step * looks)
         cuts = np.maximum.accumulate(np.maximum(limits.lower, highest_cut))
