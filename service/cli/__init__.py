@@ -1,10 +1,11 @@
 """The command line, `sprt-monitor`. Each command imports only what it needs, so that all start quickly."""
 
+import os
 import sys
 
 import typer
 
-from service.cli import demo, keys, load, migrate, serve
+from service.cli import demo, design, keys, load, migrate, serve
 
 app = typer.Typer(
     name="sprt-monitor",
@@ -14,6 +15,7 @@ app = typer.Typer(
 )
 app.command("serve")(serve.serve)
 app.command("demo")(demo.demo)
+app.command("design")(design.design)
 app.command("migrate")(migrate.migrate)
 app.command("load")(load.load)
 app.add_typer(keys.app, name="keys")
@@ -21,5 +23,7 @@ app.add_typer(keys.app, name="keys")
 
 def run() -> None:
     """The entry point."""
+    # The matrices here are small: threads of the linear algebra would only wait for one another.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     sys.stdout.reconfigure(errors="replace")  # type: ignore[union-attr]
     app()

@@ -10,8 +10,9 @@ from hypothesis import strategies as st
 from service.sequential import boundaries, likelihood
 from service.sequential.boundaries import Thresholds
 from service.sequential.decision import Decision
-from service.sequential.double import Double
+from service.sequential.double import Double, running_sum
 from service.sequential.region import COUNTS, PASS_FAIL, REALS, StraightRegion, Wall, straight_region
+from service.sequential.walk import first_exit_at_reports, first_exit_in_time
 
 
 def pass_fail(p0: float, p1: float, alpha: float, beta: float, wall: Wall | None = None) -> StraightRegion:
@@ -145,3 +146,23 @@ def test_a_cap_ends_sampling_at_that_failure() -> None:
     limits = region.limits(np.array([0.0, 250.0, 500.0]))
     assert limits.upper.tolist() == [3, 3, 3]
     assert limits.lower[2] == 2
+
+
+@pytest.mark.parametrize(("exposure", "reports", "wall"), [(0.57, 100, 57.0), (0.29, 100, 29.0), (0.58, 50, 29.0)])
+def test_decimal_exposures_come_to_the_wall_that_they_add_up_to(exposure: float, reports: int, wall: float) -> None:
+    """In floating point these sums fall a little short of the wall."""
+    region = straight_region(likelihood.poisson(0.5, 0.6), Thresholds(-1e3, 1e3), COUNTS, Wall(wall))
+    progress = running_sum(Double.of(0.0), np.full(reports, exposure))
+    assert progress.value[-1] < wall
+    exit_ = first_exit_at_reports(region, progress, Double(np.zeros(reports), np.zeros(reports)))
+    assert exit_ is not None
+    assert exit_.index == reports - 1
+
+
+def test_a_time_within_rounding_of_the_accept_line_has_reached_it() -> None:
+    region = straight_region(likelihood.exponential(200.0, 100.0), Thresholds(-2.0, 2.0), COUNTS)
+    line = float(region.lower_reached_at(np.zeros(1))[0])
+    just_under = Double(np.array([np.nextafter(line, 0.0)]), np.zeros(1))
+    exit_ = first_exit_in_time(region, just_under, Double(np.zeros(1), np.zeros(1)), np.zeros(1))
+    assert exit_ is not None
+    assert exit_.decision is Decision.ACCEPT

@@ -1,0 +1,183 @@
+"""Choose a plan: candidates side by side, with what each really promises, without a service."""
+
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from service.cli.failing import fail
+
+if TYPE_CHECKING:
+    from rich.console import Console
+    from rich.table import Table
+
+    from service.domain.characteristics import Point, Promise
+    from service.domain.designing import Suggestion
+
+NONE = "none"
+
+
+def design(
+    family: Annotated[str, typer.Option(help="bernoulli, poisson, exponential or normal.")] = "bernoulli",
+    h0: Annotated[float | None, typer.Option(help="Parameter under H0.")] = None,
+    h1: Annotated[float | None, typer.Option(help="Parameter under H1.")] = None,
+    alpha: Annotated[float | None, typer.Option(help="Producer's risk: P(reject) when H0 is true.")] = None,
+    beta: Annotated[float | None, typer.Option(help="Consumer's risk: P(accept) when H1 is true.")] = None,
+    sigma: Annotated[float | None, typer.Option(help="Known standard deviation, for normal.")] = None,
+    boundaries: Annotated[
+        list[str] | None, typer.Option(help="wald, strict or calibrated; more than once to compare.")
+    ] = None,
+    truncation: Annotated[
+        list[str] | None, typer.Option(help='Units or exposure, or "none"; more than once to compare.')
+    ] = None,
+    standard: Annotated[str | None, typer.Option(help="A standard plan, such as MIL-HDBK-781A/III-D.")] = None,
+    scale: Annotated[float | None, typer.Option(help="Lower test mean life, for a reliability standard.")] = None,
+    suggest: Annotated[
+        float | None, typer.Option(help="Find the smallest truncation that lengthens tests by at most this share.")
+    ] = None,
+) -> None:
+    """Show exact risks and sample numbers of candidate plans side by side, with their curves."""
+    from rich.console import Console
+
+    from service.domain.designing import suggested_truncation
+    from service.domain.errors import Invalid
+
+    stated: dict[str, Any] = {"family": family, "h0": h0, "h1": h1, "alpha": alpha, "beta": beta}
+    if sigma is not None:
+        stated["known"] = {"sigma": sigma}
+    if standard is not None:
+        stated = {"standard": standard, "scale": scale}
+    stated = {name: value for name, value in stated.items() if value is not None}
+    console = Console(highlight=False)
+    try:
+        candidates = _candidates(stated, boundaries or ["wald"], truncation or [NONE])
+        _show(console, candidates)
+        if suggest is not None:
+            _show_suggestion(console, suggested_truncation(stated, suggest))
+    except Invalid as error:
+        faults = "".join(f"\n  {_option(fault.pointer)}: {fault.detail}" for fault in error.faults)
+        raise fail(f"{error}{faults}") from None
+
+
+def _candidates(stated: dict[str, Any], rules: list[str], truncations: list[str]) -> list[tuple[str, str]]:
+    """A name and a checked document for each combination of a boundary rule and a truncation."""
+    from service.cli.drawing import LETTERS
+    from service.domain.checking import checked_candidates
+
+    if "standard" in stated:
+        return [(stated["standard"], *checked_candidates([stated]))]
+    if len(rules) * len(truncations) > len(LETTERS):
+        raise fail(f"At most {len(LETTERS)} candidates; asked for {len(rules)} x {len(truncations)}.")
+    named = [(_name(rule, wall), _content(stated, rule, wall)) for rule in rules for wall in truncations]
+    documents = checked_candidates([content for _, content in named])
+    return [(name, document) for (name, _), document in zip(named, documents, strict=True)]
+
+
+def _name(rule: str, wall: str) -> str:
+    return rule if wall == NONE else f"{rule} to {wall}"
+
+
+def _content(stated: dict[str, Any], rule: str, wall: str) -> dict[str, Any]:
+    from service.domain.families import FAMILIES
+
+    content = {**stated, "boundaries": rule}
+    if wall != NONE:
+        has_exposure = stated["family"] in FAMILIES and FAMILIES[stated["family"]].has_exposure
+        try:
+            content["truncation"] = {"exposure": float(wall)} if has_exposure else {"sample_number": int(wall)}
+        except ValueError:
+            raise fail(f'--truncation must be a number or "none"; received {wall!r}') from None
+    return content
+
+
+def _show(console: "Console", candidates: list[tuple[str, str]]) -> None:
+    """The table, the fixed sample, and the two curves."""
+    from service.cli.drawing import drawn
+    from service.domain.characteristics import common_grid, promise_of
+    from service.domain.procedure import procedure_of_document
+
+    hypotheses = procedure_of_document(candidates[0][1]).hypotheses
+    promises = [(name, document, promise_of(document, hypotheses)) for name, document in candidates]
+    console.print(_table(promises))
+    fixed = promises[0][2].fixed_sample
+    if fixed is not None:
+        console.print(f"Smallest fixed sample with the same risks: {fixed.size:.6g}, accept {_limit(fixed)}.")
+    grid = common_grid([document for _, document in candidates])
+    curves = [promise_of(document, grid).points for _, document in candidates]
+    console.print("\nProbability of acceptance against the true parameter")
+    for line in drawn(grid, [[point.probability_of_acceptance for point in points] for points in curves], 1.0):
+        console.print(line)
+    averages = [[_progress(point) for point in points] for points in curves]
+    console.print("\nAverage sample number, or exposure, against the true parameter")
+    for line in drawn(grid, averages, max(map(max, averages))):
+        console.print(line)
+
+
+def _table(promises: "list[tuple[str, str, Promise]]") -> "Table":
+    """A column for each candidate."""
+    from rich.table import Table
+
+    from service.cli.drawing import LETTERS
+
+    table = Table(title="What the candidates really promise", title_justify="left")
+    table.add_column("exact figures")
+    for letter, (name, _, _) in zip(LETTERS, promises, strict=False):
+        table.add_column(f"{letter}: {name}", justify="right")
+    columns = [_column(document, promise) for _, document, promise in promises]
+    for heading in columns[0]:
+        table.add_row(heading, *(column[heading] for column in columns))
+    return table
+
+
+def _column(document: str, promise: "Promise") -> dict[str, str]:
+    """The figures of one candidate by their headings."""
+    from service.domain.procedure import lines_of, procedure_of_document
+
+    first, second = promise.points
+    figures = {
+        "alpha": f"{promise.alpha:.6f}",
+        "beta": f"{promise.beta:.6f}",
+        "average at h0": f"{_progress(first):.6g}",
+        "average at h1": f"{_progress(second):.6g}",
+        "95 % by, at h0": f"{_quantile(first):.6g}",
+        "95 % by, at h1": f"{_quantile(second):.6g}",
+    }
+    lines = lines_of(procedure_of_document(document))
+    if lines is None:
+        return {**figures, "limits": "by its table"}
+    return {
+        **figures,
+        "slope": f"{lines.slope:.6g}",
+        "accept intercept": f"{lines.accept_intercept:.5g}",
+        "reject intercept": f"{lines.reject_intercept:.5g}",
+    }
+
+
+def _show_suggestion(console: "Console", suggestion: "Suggestion") -> None:
+    unit = "units" if suggestion.axis == "sample_number" else "of exposure"
+    console.print(
+        f"\nSmallest truncation: {suggestion.at:.6g} {unit}, calibrated, lengthens tests by "
+        f"{100 * suggestion.inflation:.2f} % at most; average {suggestion.average_at_h0:.6g} at h0, "
+        f"{suggestion.average_at_h1:.6g} at h1; alpha {suggestion.attained.alpha:.5f}, "
+        f"beta {suggestion.attained.beta:.5f}."
+    )
+
+
+def _progress(point: "Point") -> float:
+    spread = point.exposure or point.sample_number
+    return 0.0 if spread is None else spread.mean
+
+
+def _quantile(point: "Point") -> float:
+    spread = point.exposure or point.sample_number
+    return 0.0 if spread is None else spread.quantiles["0.95"]
+
+
+def _limit(fixed: Any) -> str:  # noqa: ANN401 - a value of the domain, which is imported late
+    return f"{'at most' if fixed.accepts_at_most else 'at least'} {fixed.acceptance_limit:.6g}"
+
+
+def _option(pointer: str) -> str:
+    """The option that a pointer into a plan's body stands for."""
+    parts = [part for part in pointer.split("/") if part and not part.isdigit() and part != "candidates"]
+    names = {"known": "sigma", "suggest_truncation": "suggest"}
+    return f"--{names.get(parts[0], parts[0])}" if parts else "plan"
