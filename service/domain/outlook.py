@@ -1,11 +1,12 @@
 """What is still needed from where a test stands: the shortest ways to each decision, and what is to be expected."""
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 from service.domain.calibrating import accepts_at, exact_figures
 from service.domain.characteristics import Spread, spread_at
 from service.domain.families.base import Start, Way
-from service.domain.procedure import Procedure
+from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import State
 from service.sequential.decision import Decision
 
@@ -66,42 +67,53 @@ NO_WAYS = Ways(None, None)
 
 def ways_of(procedure: Procedure, state: State) -> Ways:
     """The shortest way to each decision from here."""
-    if state.is_decided:
-        return NO_WAYS
-    lower, upper = procedure.family.ways(procedure.region, _standing(procedure, state), procedure.known)
-    return Ways(lower, upper) if procedure.region.below is Decision.ACCEPT else Ways(upper, lower)
+    return NO_WAYS if state.is_decided else _ways(procedure, _standing(procedure, state))
 
 
-def outlook_of(procedure: Procedure, state: State) -> Outlook:
+def outlook_of(document: str, state: State) -> Outlook:
     """
-    All that can be said about the rest of a test.
+    All that can be said about the rest of a test; kept for a while, because dashboards ask again and again.
+
+    Args:
+        document: The plan's canonical document.
+        state: Where the test stands.
 
     Raises:
         ComputationTooLarge: The exact figures need more steps than are allowed.
     """
+    procedure = procedure_of_document(document)
     standing = _standing(procedure, state)
-    estimate = procedure.family.estimate(standing)
     if state.is_decided:
-        return Outlook(NO_WAYS, estimate, None, (), 0.0)
+        return Outlook(NO_WAYS, procedure.family.estimate(standing), None, (), 0.0)
+    return _outlook(document, standing)
+
+
+@lru_cache(maxsize=4096)
+def _outlook(document: str, standing: Start) -> Outlook:
+    procedure = procedure_of_document(document)
+    estimate = procedure.family.estimate(standing)
     asked = {"h0": procedure.hypotheses[0], "h1": procedure.hypotheses[1]}
     if estimate is not None:
         asked["estimate"] = estimate
     found = exact_figures(procedure, tuple(asked.values()), standing)
-    expected = []
-    for i, (under, parameter) in enumerate(asked.items()):
-        accepts, spread = accepts_at(procedure, found, i), spread_at(found, i)
-        rejects = float((found.above if procedure.region.below is Decision.ACCEPT else found.below)[i])
-        expected.append(
-            Expected(
-                under=under,
-                parameter=parameter,
-                probability_of_acceptance=accepts,
-                probability_of_rejection=min(1.0, max(0.0, rejects)),
-                further_sample_number=None if procedure.family.is_watched_in_time else spread,
-                further_exposure=spread if procedure.family.has_exposure else None,
-            )
+    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
+    expected = tuple(
+        Expected(
+            under=under,
+            parameter=parameter,
+            probability_of_acceptance=accepts_at(procedure, found, i),
+            probability_of_rejection=min(1.0, max(0.0, float(rejects[i]))),
+            further_sample_number=None if procedure.family.is_watched_in_time else spread_at(found, i),
+            further_exposure=spread_at(found, i) if procedure.family.has_exposure else None,
         )
-    return Outlook(ways_of(procedure, state), estimate, _room(procedure, standing), tuple(expected), found.error_bound)
+        for i, (under, parameter) in enumerate(asked.items())
+    )
+    return Outlook(_ways(procedure, standing), estimate, _room(procedure, standing), expected, found.error_bound)
+
+
+def _ways(procedure: Procedure, standing: Start) -> Ways:
+    lower, upper = procedure.family.ways(procedure.region, standing, procedure.known)
+    return Ways(lower, upper) if procedure.region.below is Decision.ACCEPT else Ways(upper, lower)
 
 
 def _standing(procedure: Procedure, state: State) -> Start:

@@ -18,7 +18,6 @@ from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
 from service.domain.errors import Fault
 from service.domain.outlook import outlook_of
-from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SubjectKind
 from service.domain.state import Decision
 from service.ingest.commands import RegisteredTest, RegisterTest
@@ -117,7 +116,7 @@ async def show_outlook(key: str, request: Request, response: Response, parts: Pa
     if (unchanged := not_modified(request, tag)) is not None:
         return unchanged
     response.headers["ETag"] = tag
-    outlook = await computing(parts, lambda: outlook_of(procedure_of(plan), test.state))
+    outlook = await computing(parts, lambda: outlook_of(plan.document, test.state))
     return OutlookOut.of(outlook, test.state)
 
 

@@ -13,7 +13,7 @@ Mathematical Statistics 24, 254-264; Epstein and Sobel (1955), Annals of Mathema
 """
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -28,12 +28,14 @@ MOST_WORK = 2_000_000_000
 WIDEST = 4_000
 # A stretch costs about as much as so many multiplications, however narrow it is.
 STRETCH_WORK = 2_000
-# Bisections of a stretch of time: enough for a double.
-BISECTIONS = 60
+# Bisections of a stretch of time: to thirteen digits of it.
+BISECTIONS = 44
 # A convolution of at most so many products is done by a matrix; so many matrices are kept.
 SMALL, MOST_MATRICES = 500_000, 200
 # Stretches are gathered after so many of them, or so many numbers.
 BATCH_STRETCHES, BATCH = 64, 2_000_000
+# Probabilities of still sampling that the quantiles stand for.
+LEVELS = 1.0 - np.array(QUANTILES)
 
 
 def counting_characteristics(
@@ -64,8 +66,7 @@ def _stretches(region: Region, process: Process, progress: float, total: int) ->
     return stretches_of_time(region, progress, total)
 
 
-@dataclass(frozen=True)
-class _Piece:
+class _Piece(NamedTuple):
     """
     One stretch gone through.
 
@@ -218,20 +219,19 @@ class _Course:
         """Find the quantiles that fall into these stretches, or at their ends."""
         starts = np.array([piece.time for piece in self._pieces])
         durations = np.array([piece.duration for piece in self._pieces])
-        for column, q in enumerate(QUANTILES):
-            reached = rest <= 1.0 - q
-            points = np.flatnonzero(np.isnan(self._quantiles[:, column]) & reached.any(axis=0))
-            if not len(points):
-                continue
-            k = reached[:, points].argmax(axis=0)
-            at_end = after[k, points] > 1.0 - q
-            inside = self._moments_inside(points, reaches[k, points], durations[k], 1.0 - q)
-            self._quantiles[points, column] = starts[k] + np.where(at_end, durations[k], inside)
+        reached = rest[:, :, np.newaxis] <= LEVELS
+        points, columns = np.nonzero(np.isnan(self._quantiles) & reached.any(axis=0))
+        if not len(points):
+            return
+        k, levels = reached.argmax(axis=0)[points, columns], LEVELS[columns]
+        at_end = after[k, points] > levels
+        inside = self._moments_inside(points, reaches[k, points], durations[k], levels)
+        self._quantiles[points, columns] = starts[k] + np.where(at_end, durations[k], inside)
 
     def _moments_inside(
-        self, points: IndexArray, reaches: FloatArray, durations: FloatArray, level: float
+        self, points: IndexArray, reaches: FloatArray, durations: FloatArray, levels: FloatArray
     ) -> FloatArray:
-        """When, within its stretch, sampling first goes on with at most this probability; array of shape (points,)."""
+        """When, within its stretch, sampling first goes on with at most its level; array of shape (points,)."""
         process, width = self._process.only(points), reaches.shape[1]
         is_stepwise = process.step > 0.0
         low, high = np.zeros(len(points)), durations
@@ -240,7 +240,8 @@ class _Course:
             if is_stepwise and np.all(high - low <= 1.0):
                 break
             within = np.cumsum(process.increases(middle, width), axis=1)
-            is_early = (reaches * within).sum(axis=1) > level
+            # At its beginning a stretch is never over, whatever lies beyond its room.
+            is_early = ((reaches * within).sum(axis=1) > levels) | (middle <= low)
             low, high = np.where(is_early, middle, low), np.where(is_early, high, middle)
         return high
 

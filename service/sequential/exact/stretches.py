@@ -12,7 +12,7 @@ Mathematical Statistics 24, 254-264.
 
 import math
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -25,11 +25,13 @@ SMALLEST_BLOCK, LARGEST_BLOCK = 256, 65_536
 # Totals whose moments are asked for at a time.
 TOTALS = 64
 
+# Rounding of a moment, relative, and the durations that are compared: two parallel lines make only a few.
+ROUNDING, FEW = 1e-15, 8
+
 NO_CUT = -1
 
 
-@dataclass(frozen=True)
-class Stretch:
+class Stretch(NamedTuple):
     """
     A piece of sampling between two changes of the region.
 
@@ -83,6 +85,7 @@ def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[S
     while room < cap and upper_at[room] <= progress:
         room += 1
     now, lowest = progress, total
+    durations = _Durations()
     while True:
         falls_at = lower_at[lowest]
         rises_at = upper_at[room] if room < cap else math.inf
@@ -91,7 +94,8 @@ def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[S
             cut = region.limits(np.array([wall])).lower[0]
             yield Stretch(wall - now, room, NO_CUT if math.isinf(cut) else int(cut), is_last=True)
             return
-        yield Stretch(moment - now, room, lowest if moment == falls_at else NO_CUT, is_last=False)
+        duration = durations.known_as(moment - now, moment)
+        yield Stretch(duration, room, lowest if moment == falls_at else NO_CUT, is_last=False)
         now = moment
         lowest += moment == falls_at
         room += moment == rises_at
@@ -110,6 +114,22 @@ class _Moments:
             totals = np.arange(block * TOTALS, (block + 1) * TOTALS, dtype=np.float64)
             self._blocks[block] = [float(moment) for moment in self._moments_of(totals)]
         return self._blocks[block][place]
+
+
+class _Durations:
+    """Durations that differ only by the rounding of the moments they lie between, made one, so as to be known again."""
+
+    def __init__(self) -> None:
+        self._seen: list[float] = []
+
+    def known_as(self, duration: float, moment: float) -> float:
+        """The duration already seen within rounding of the moment, or this one."""
+        for seen in self._seen:
+            if abs(seen - duration) <= ROUNDING * moment:
+                return seen
+        if len(self._seen) < FEW:
+            self._seen.append(duration)
+        return duration
 
 
 def _looks_to_wall(region: Region, step: float, progress: float) -> float:

@@ -12,11 +12,12 @@ from mpmath import erfc, exp, mp, mpf, pi, quad, sqrt
 from service.sequential import boundaries, likelihood
 from service.sequential.boundaries import Thresholds
 from service.sequential.decision import Decision
-from service.sequential.exact import gaussian
 from service.sequential.exact.characteristics import QUANTILES
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.exact.processes import Failures, Reports, Units
+from service.sequential.exact.steps import by_steps
+from service.sequential.exact.strip import Strip
 from service.sequential.region import COUNTS, PASS_FAIL, REALS, Region, Wall, straight_region
 from service.sequential.tables import UnitTable
 from tests.sequential.reference import paths
@@ -170,9 +171,9 @@ def test_modes_and_steps_agree(shift: float, limits: Thresholds, wall: int | Non
     line = region.ratio.slope * progress
     total = line + (1 - height) * -region.lower_intercept + height * region.upper_intercept
     by_modes = gaussian_characteristics(region, means, 1.0, progress, total)
-    strip = gaussian._Strip(-region.lower_intercept, region.upper_intercept)  # noqa: SLF001
+    strip = Strip(-region.lower_intercept, region.upper_intercept)
     nodes = 60 + math.ceil(4 * (strip.high - strip.low))
-    slow = gaussian._directly(strip, nodes, means - region.ratio.slope, total - line, wall)  # noqa: SLF001
+    slow = by_steps(strip, nodes, means - region.ratio.slope, total - line, wall)
     assert by_modes.below == pytest.approx(slow.below, abs=1e-11)
     assert by_modes.mean == pytest.approx(slow.mean, rel=1e-10)
     assert by_modes.standard_deviation**2 == pytest.approx(slow.second - slow.mean**2, rel=1e-7, abs=1e-9)
