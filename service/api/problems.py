@@ -193,6 +193,11 @@ def response(
     )
 
 
+def pointer_to(location: Sequence[str | int]) -> str:
+    """A JSON pointer (RFC 6901) to an element of a body."""
+    return "".join("/" + str(part).replace("~", "~0").replace("/", "~1") for part in location)
+
+
 def install(app: FastAPI) -> None:
     """Have every error answered by a problem document."""
     app.add_exception_handler(DomainError, _on_domain_error)
@@ -217,7 +222,9 @@ async def _on_validation_error(_request: Request, error: Exception) -> JSONRespo
     assert isinstance(error, RequestValidationError)
     items = error.errors()
     is_body = all(item["loc"][:1] == ("body",) for item in items)
-    faults = [Fault(_pointer(item["loc"][1:]), _rule(item)) for item in items[:20]]
+    faults = [
+        Fault(pointer_to([part for part in item["loc"][1:] if part != "[key]"]), _rule(item)) for item in items[:20]
+    ]
     if is_body:
         return response("invalid-body", "The body does not have the form asked for; see errors.", faults)
     return response("invalid-parameter", "A parameter cannot be right; see errors.", faults)
@@ -234,12 +241,6 @@ async def _on_unexpected(request: Request, error: Exception) -> JSONResponse:
     request_id = getattr(request.state, "request_id", "unknown")
     logger.error("request %s failed", request_id, exc_info=error)
     return response("internal-error", f"The log of the service has the reason, under the request id {request_id}.")
-
-
-def _pointer(location: Sequence[Any]) -> str:
-    """A JSON pointer (RFC 6901) to the offending element."""
-    parts = [str(part) for part in location if part != "[key]"]
-    return "".join("/" + part.replace("~", "~0").replace("/", "~1") for part in parts)
 
 
 def _rule(item: Mapping[str, Any]) -> str:

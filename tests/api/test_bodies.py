@@ -3,7 +3,7 @@
 import httpx
 import pytest
 
-from tests.api.examples import SEAL, Namer, with_test
+from tests.api.examples import SEAL, Namer, pointers, with_test
 
 JSON = "application/json"
 
@@ -54,6 +54,16 @@ def test_a_body_too_large_is_refused_while_it_comes(admin: httpx.Client, new_nam
     chunks = (b" " * 50_000 for _ in range(10))
     answer = admin.post(f"/v1/tests/{key}/observations", content=chunks, headers={"Content-Type": JSON})
     assert answer.status_code == 413
+
+
+def test_a_fault_of_a_large_body_is_named_as_in_a_small_one(admin: httpx.Client, new_name: Namer) -> None:
+    """Large bodies are checked apart, so that others need not wait for them."""
+    key = with_test(admin, new_name, SEAL)
+    observations: list[dict[str, object]] = [{"value": 0, "unit": f"unit-of-a-long-name-{i}"} for i in range(2000)]
+    answer = admin.post(f"/v1/tests/{key}/observations", json={"observations": [*observations[:-1], {"colour": 1}]})
+    assert (answer.status_code, pointers(answer)) == (422, ["/observations/1999/colour"])
+    accepted = admin.post(f"/v1/tests/{key}/observations", json={"observations": observations})
+    assert (accepted.status_code, accepted.json()["last_sequence"]) == (201, 2000)
 
 
 def test_unknown_addresses_and_methods_are_problems(admin: httpx.Client) -> None:

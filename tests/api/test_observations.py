@@ -173,6 +173,20 @@ BAD_SUBMISSIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (SEAL, {"observations": [{"value": 0, "unit": ""}]}, "/observations/0/unit"),
     (SEAL, {"observations": [{"value": 0, "observed_at": "2031-05-04T09:30:00"}]}, "/observations/0/observed_at"),
     (SEAL, {"observations": [{"value": 0, "observed_at": 1935653400}]}, "/observations/0/observed_at"),
+    *(
+        (SEAL, {"observations": [{"value": 0, "observed_at": moment}]}, "/observations/0/observed_at")
+        for moment in (
+            "2031-05-04\x0009:30:00+00:00",
+            "2031-05-04x09:30:00+00:00",
+            "2031-W18-7T09:30:00+00:00",
+            "20310504T093000Z",
+            "2031-05-04T09:30Z",
+            "2031-05-04T09:30:00+00:00:30",
+            "2031-02-30T09:30:00Z",
+            "0001-01-01T00:00:00+14:00",
+            "9999-12-31T23:59:59-14:00",
+        )
+    ),
     (WELD, {"values": [1, 1.5]}, "/values/1"),
     (WELD, {"observations": [{"value": 1, "exposure": 0.0}]}, "/observations/0/exposure"),
     (WELD, {"observations": [{"value": 1, "exposure": -2.0}]}, "/observations/0/exposure"),
@@ -196,7 +210,7 @@ def test_one_bad_value_rejects_the_whole_submission(
     assert admin.get(f"/v1/tests/{key}/observations").json()["items"] == []
 
 
-@pytest.mark.parametrize("number", ["NaN", "Infinity", "1e400", "1" + "0" * 400])
+@pytest.mark.parametrize("number", ["NaN", "Infinity", "1e400", "1e-400", "5e-324", "1" + "0" * 400])
 def test_a_value_that_is_not_finite_is_named(admin: httpx.Client, new_name: Namer, number: str) -> None:
     key = with_test(admin, new_name, SHAFT)
     answer = admin.post(

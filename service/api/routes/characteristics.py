@@ -10,7 +10,7 @@ from service.api.bodies import StrictRequest, StrictRoute
 from service.api.description import answers_with
 from service.api.lookup import known_plan
 from service.api.parts import PartsOf, computing
-from service.api.routes.observations import PathQuery, check_batch
+from service.api.routes.observations import PathQuery
 from service.api.schemas.characteristics import CharacteristicsForm, CharacteristicsOut
 from service.api.schemas.observations import ObservationsForm, RehearsalOut
 from service.domain.access import Role
@@ -63,10 +63,13 @@ async def design(form: CharacteristicsForm, parts: PartsOf) -> CharacteristicsOu
     dependencies=[requires(Role.VIEWER)],
 )
 async def rehearse(
-    name: str, form: ObservationsForm, request: Request, parts: PartsOf, query: Annotated[PathQuery, Query()]
+    name: str,
+    form: ObservationsForm,  # noqa: ARG001 - what is rehearsed is the body as received; this checked its form
+    request: Request,
+    parts: PartsOf,
+    query: Annotated[PathQuery, Query()],
 ) -> RehearsalOut:
     """What the plan would have answered, and the path to it; nothing is stored."""
-    check_batch(form, parts.settings.max_batch)
     plan = await known_plan(parts, name)
     document = cast("StrictRequest", request).document
 

@@ -18,7 +18,6 @@ from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, number_after
 from service.api.parts import Parts, PartsOf, reading
-from service.api.problems import RequestProblem
 from service.api.schemas.observations import (
     LoggedOut,
     LogOut,
@@ -29,7 +28,6 @@ from service.api.schemas.observations import (
 )
 from service.api.schemas.tests import PostedOut
 from service.domain.access import AccessKey, Role
-from service.domain.errors import Fault
 from service.domain.log import document_of, expanded
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
@@ -75,7 +73,7 @@ class PathQuery(BaseModel):
 )
 async def post_observations(  # noqa: PLR0913 - each argument is a part of the request
     key: str,
-    form: ObservationsForm,
+    form: ObservationsForm,  # noqa: ARG001 - what is stored is the body as received; this checked its form
     request: Request,
     response: Response,
     parts: PartsOf,
@@ -87,7 +85,6 @@ async def post_observations(  # noqa: PLR0913 - each argument is a part of the r
 
     With an `Idempotency-Key`, a repeated submission is answered as the first one was and changes nothing.
     """
-    check_batch(form, parts.settings.max_batch)
     command = await _command(key, request, access_key, idempotency_key)
     outcome = cast("Posted", await parts.road.submit(command))
     response.headers["ETag"] = etag(outcome.test.version)
@@ -145,19 +142,6 @@ async def show_path(
         return unchanged
     response.headers["ETag"] = tag
     return await reading(lambda: _path(parts, test, plan, query.points))
-
-
-def check_batch(form: ObservationsForm, limit: int) -> None:
-    """
-    Refuse a submission of more observations than are taken at once.
-
-    Raises:
-        RequestProblem: invalid-body, with the limit.
-    """
-    if form.count > limit:
-        pointer = "/values" if form.values else "/observations"
-        fault = Fault(pointer, f"may hold at most {limit} observations; received {form.count}")
-        raise RequestProblem("invalid-body", "The submission is too long; split it.", [fault])
 
 
 async def _command(key: str, request: Request, access_key: AccessKey, idempotency_key: str | None) -> PostObservations:

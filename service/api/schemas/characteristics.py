@@ -2,7 +2,7 @@
 
 from typing import Annotated, Any
 
-from pydantic import ConfigDict, Field
+from pydantic import ConfigDict, FailFast, Field
 
 from service.api.schemas.common import Answer, Number, shown_as
 from service.api.schemas.plans import EXAMPLE as PLAN
@@ -45,7 +45,7 @@ class CharacteristicsForm(PlanForm):
 
     model_config = ConfigDict(json_schema_extra={"examples": [{**PLAN, "at": [0.01, 0.05]}]})
 
-    at: Annotated[list[Number], Field(max_length=500)] = Field(default_factory=list)
+    at: Annotated[list[Number], FailFast(), Field(max_length=500)] = Field(default_factory=list)
 
     def content(self) -> dict[str, Any]:
         """The plan without its name and the parameters."""

@@ -4,7 +4,7 @@ from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
 from typing import Annotated, Any, Self
 
-from pydantic import ConfigDict, Field, StrictBool, model_validator
+from pydantic import ConfigDict, FailFast, Field, StrictBool, model_validator
 
 from service.api.schemas.common import Answer, Form, Moment, Number, Text, shown_as
 from service.api.schemas.plans import ThresholdsOut
@@ -84,19 +84,15 @@ class ObservationsForm(Form):
 
     model_config = ConfigDict(json_schema_extra={"examples": [*EXAMPLES]})
 
-    values: Annotated[list[Number], Field(min_length=1)] = Field(default_factory=list)
-    observations: Annotated[list[ObservationForm], Field(min_length=1)] = Field(default_factory=list)
+    # One fault is enough to refuse all; naming every bad element of a long list would take minutes.
+    values: Annotated[list[Number], FailFast(), Field(min_length=1)] = Field(default_factory=list)
+    observations: Annotated[list[ObservationForm], FailFast(), Field(min_length=1)] = Field(default_factory=list)
 
     @model_validator(mode="after")
     def _one_form(self) -> Self:
         if len(self.model_fields_set) != 1:
             raise ValueError('give either "values" or "observations"')
         return self
-
-    @property
-    def count(self) -> int:
-        """How many observations there are."""
-        return len(self.values) + len(self.observations)
 
 
 class LoggedOut(Answer):
