@@ -18,6 +18,7 @@ class Refused(Exception):
         super().__init__(f"{problem.get('title', 'Refused')}: {problem.get('detail', f'status {status}')}")
         self.status = status
         self.faults = [(fault["pointer"], fault["detail"]) for fault in problem.get("errors", [])]
+        self.is_of_reused_key = str(problem.get("type", "")).endswith(":idempotency-key-reused")
 
 
 class Unreachable(Exception):

@@ -94,6 +94,27 @@ def test_an_interrupted_load_goes_on_without_counting_twice(
     assert state["total"] == pytest.approx(sum(10 + (i % 7) / 100 for i in range(3000)), rel=1e-13)
 
 
+def test_a_file_that_has_grown_is_refused_and_its_rest_loaded(
+    load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path
+) -> None:
+    key = with_test(admin, new_name, {**SHAFT, "boundaries": "given", "thresholds": {"accept": -1e6, "reject": 1e6}})
+    file = tmp_path / "shafts.csv"
+    rows = [f"{10 + (i % 7) / 100}\n" for i in range(90)]
+    file.write_text("value\n" + "".join(rows[:75]))
+    assert "Posted 75." in load(str(file), "--test", key, "--chunk", "50").stdout
+    file.write_text("value\n" + "".join(rows))
+    refused = load(str(file), "--test", key, "--chunk", "50")
+    assert refused.returncode == 1
+    assert "lines 52 to 91: were loaded before with other content" in refused.stderr
+    assert "--skip" in refused.stderr
+    for _ in range(2):
+        assert load(str(file), "--test", key, "--chunk", "50", "--skip", "75").returncode == 0
+    assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 90
+    other = load(str(file), "--test", key, "--chunk", "50", "--source", "the next day")
+    assert other.returncode == 0, other.stderr
+    assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 180
+
+
 def test_times_come_through_standard_input(load: Loader, admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, PUMP)
     done = load("-", "--test", key, "--format", "ndjson", stdin='12.5\n{"time": 40, "failed": false}\n')
@@ -108,6 +129,11 @@ def test_load_says_clearly_what_is_wrong(load: Loader, admin: httpx.Client, new_
     assert "No such file" in load(str(tmp_path / "none.csv"), "--test", key).stderr
     (tmp_path / "x.txt").write_text("0")
     assert "--format" in load(str(tmp_path / "x.txt"), "--test", key).stderr
+    for content in ("value\nnan\n", "value\n1_0\n"):
+        (tmp_path / "bad.csv").write_text(content)
+        assert "bad.csv: line 2: value must be a number" in load(str(tmp_path / "bad.csv"), "--test", key).stderr
+    (tmp_path / "bad.ndjson").write_text('{"value": 0, "unit": "\\ud800"}\n')
+    assert "bad.ndjson: line 1: is not JSON" in load(str(tmp_path / "bad.ndjson"), "--test", key).stderr
     assert "A valid access key is required" in load("-", "--test", key, "--key", "wrong", stdin="").stderr
 
 
