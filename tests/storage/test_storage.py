@@ -5,14 +5,14 @@ from datetime import UTC, datetime, timedelta, timezone
 from typing import Any
 
 import pytest
-from sqlalchemy import Engine, text
+from sqlalchemy import Engine, event, text
 from sqlalchemy.exc import IntegrityError
 
 from service.domain.access import AccessKey, Role
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
-from service.storage.reader import Reader, TestFilters
+from service.storage.reader import PAGE_CHARACTERS, Reader, TestFilters
 from service.storage.writer import writing
 
 NOW = datetime(2031, 5, 4, 9, 30, 0, 123456, tzinfo=UTC)
@@ -157,6 +157,24 @@ def test_a_long_log_comes_in_order_from_any_place(engine: Engine) -> None:
     reader = Reader(engine)
     assert [s.first_sequence for s in reader.submissions("lot-1")] == list(range(1, 900, 2))
     assert [s.first_sequence for s in reader.submissions("lot-1", 501)] == list(range(501, 900, 2))
+    assert [s.first_sequence for s in reader.submissions("lot-1", 501, 510)] == [501, 503, 505, 507, 509]
+    assert list(reader.submissions("lot-1", 0, 0)) == []
+
+
+def test_few_heavy_submissions_are_held_at_once(engine: Engine) -> None:
+    add(engine, a_test("lot-1"))
+    with writing(engine) as writer:
+        for i in range(1, 13):
+            writer.append(a_submission("lot-1", i, i, " " * (PAGE_CHARACTERS // 3)), {})
+    held: list[int] = []
+
+    def count(_connection: object, _cursor: object, statement: str, *_rest: object) -> None:
+        if "length(" not in statement and "FROM submissions" in statement:
+            held.append(1)
+
+    event.listen(engine, "after_cursor_execute", count)
+    assert [s.first_sequence for s in Reader(engine).submissions("lot-1")] == list(range(1, 13))
+    assert len(held) >= 4
 
 
 def test_the_view_shows_each_observation_of_the_log(engine: Engine) -> None:

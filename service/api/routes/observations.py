@@ -31,7 +31,7 @@ from service.domain.access import AccessKey, Role
 from service.domain.log import document_of, expanded
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
-from service.domain.sequential_test import SequentialTest
+from service.domain.sequential_test import SequentialTest, Submission
 from service.ingest.commands import Posted, PostObservations
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["observations"], route_class=StrictRoute)
@@ -159,15 +159,20 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
 
 
 def _log_page(parts: Parts, test: SequentialTest, plan: Plan, after: int, limit: int) -> list[LoggedOut]:
-    entries = expanded(procedure_of(plan).family, test, parts.reader.submissions(test.key, after))
+    entries = expanded(procedure_of(plan).family, test, _submissions(parts, test, after))
     return [LoggedOut.of(entry) for entry in islice((e for e in entries if e.sequence > after), limit)]
+
+
+def _submissions(parts: Parts, test: SequentialTest, after: int = 0) -> Iterator[Submission]:
+    """The log as far as this test had come when it was read: what was posted since may have decided it."""
+    return parts.reader.submissions(test.key, after, test.state.sequence)
 
 
 def _csv(parts: Parts, test: SequentialTest, plan: Plan) -> Iterator[str]:
     family = procedure_of(plan).family
     columns = csv_columns(family)
     yield _csv_line(columns)
-    for entry in expanded(family, test, parts.reader.submissions(test.key)):
+    for entry in expanded(family, test, _submissions(parts, test)):
         row = LoggedOut.of(entry).model_dump(mode="json")
         yield _csv_line([_cell(row[column]) for column in columns])
 
@@ -186,5 +191,5 @@ def _cell(value: object) -> str:
 
 def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOut:
     procedure = procedure_of(plan)
-    documents = (document_of(submission) for submission in parts.reader.submissions(test.key))
+    documents = (document_of(submission) for submission in _submissions(parts, test))
     return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, documents, points))
