@@ -1,4 +1,4 @@
-"""Bodies, read strictly: of the right media type, bounded in size, and sound JSON (see `decoding`)."""
+"""Requests, read strictly: names that can be names; bodies of the right media type, bounded in size, sound JSON."""
 
 import asyncio
 from collections.abc import Callable, Coroutine
@@ -11,6 +11,7 @@ from fastapi.routing import APIRoute
 
 from service.api.decoding import decoded
 from service.api.problems import RequestProblem
+from service.domain.names import is_name
 from service.settings import Settings
 
 # What decodes within a millisecond is not worth a thread.
@@ -65,14 +66,15 @@ class StrictRequest(Request):
 
 
 class StrictRoute(APIRoute):
-    """A route whose body is read strictly."""
+    """A route whose address and body are read strictly."""
 
     def get_route_handler(self) -> Callable[[Request], Coroutine[Any, Any, Response]]:
-        """Read the body before the framework sees the request."""
+        """Check the names and read the body before the framework sees the request."""
         handle = super().get_route_handler()
         field = self.body_field
 
         async def handler(request: Request) -> Response:
+            _check_names(request)
             if field is None:
                 return await handle(request)
             strict = StrictRequest(request.scope, request.receive)
@@ -80,3 +82,10 @@ class StrictRoute(APIRoute):
             return await handle(strict)
 
         return handler
+
+
+def _check_names(request: Request) -> None:
+    """Whatever an address leaves open is a name, and nothing bears a name that cannot be one."""
+    for name in request.path_params.values():
+        if not is_name(name):
+            raise RequestProblem("not-found", f"There is nothing named {name!r}.")

@@ -3,7 +3,7 @@
 from typing import Annotated, cast
 
 from fastapi import APIRouter, Query, Request, Response
-from pydantic import AwareDatetime, BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
@@ -13,6 +13,7 @@ from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import Parts, PartsOf, reading
 from service.api.problems import RequestProblem
+from service.api.schemas.common import Label, Moment, Name, Text
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
 from service.domain.errors import Fault
@@ -32,10 +33,10 @@ class TestsQuery(BaseModel):
 
     decision: Decision | None = None
     kind: SubjectKind | None = None
-    subject: Annotated[str | None, Field(max_length=200, description="Exact name of the subject.")] = None
-    plan: Annotated[str | None, Field(max_length=100)] = None
-    label: Annotated[list[str], Field(max_length=20, description="name:value; all of them must match.")] = []
-    updated_after: AwareDatetime | None = None
+    subject: Annotated[Text | None, Field(description="Exact name of the subject.")] = None
+    plan: Name | None = None
+    label: Annotated[list[Label], Field(max_length=20, description="name:value; all of them must match.")] = []
+    updated_after: Moment | None = None
     limit: Limit = 100
     cursor: Cursor = None
 

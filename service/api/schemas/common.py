@@ -12,8 +12,10 @@ Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
 Whole = Annotated[int, Field(strict=True)]
 Name = Annotated[str, StringConstraints(strict=True, pattern=NAME_PATTERN)]
 # Free text without control characters, which no log, table or page could show.
-Text = Annotated[str, StringConstraints(strict=True, min_length=1, max_length=200, pattern=r"^[^\x00-\x1f\x7f]+$")]
-
+_SHOWN = r"^[^\x00-\x1f\x7f]+$"
+Text = Annotated[str, StringConstraints(strict=True, min_length=1, max_length=200, pattern=_SHOWN)]
+# A label's name, a colon and its value.
+Label = Annotated[str, StringConstraints(strict=True, max_length=301, pattern=_SHOWN)]
 
 # The whole of RFC 3339 and nothing else: parsers of dates take far more, and databases that read it later take less.
 _MOMENT = re.compile(r"\d{4}-\d\d-\d\d[Tt ]\d\d:\d\d:\d\d(\.\d{1,9})?([Zz]|[+-]\d\d:\d\d)", re.ASCII)
