@@ -65,6 +65,10 @@ class InvalidObservations(Invalid):
 class InvalidKey(Invalid):
     """A key cannot be made as asked."""
 
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        rules = "; ".join(f"{fault.pointer.removeprefix('/')} {fault.detail}" for fault in faults)
+        super().__init__(f"The key cannot be made: {rules}.", faults)
+
 
 class InvalidQuestion(Invalid):
     """What is asked about a plan lies outside what it can answer."""

@@ -4,7 +4,6 @@ Each command, inside a transaction that the caller opened: load, one pure step, 
 A refusal is raised before anything is written, so that it disturbs no other command of the same transaction.
 """
 
-import hashlib
 import secrets
 from collections import Counter
 from collections.abc import Mapping
@@ -13,7 +12,7 @@ from datetime import datetime
 from functools import singledispatch
 from typing import Any
 
-from service.domain.access import AccessKey
+from service.domain.access import AccessKey, check_new_key, digest_of
 from service.domain.errors import (
     Fault,
     IdempotencyKeyReused,
@@ -126,6 +125,7 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
 
 @perform.register
 def _(command: CreateKey, writer: Writer, now: datetime) -> Outcome:
+    check_new_key(command.name, command.expires_at, now)
     taken = writer.key_named(command.name)
     if taken is not None:
         raise KeyNameTaken(command.name)
@@ -142,15 +142,6 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
         raise UnknownKey(command.name)
     writer.revoke_key(key.id, now)
     return replace(key, revoked_at=now)
-
-
-def digest_of(secret: str) -> str:
-    """
-    What is stored of a secret.
-
-    A plain SHA-256 suffices: the secrets are 256 random bits, which no search can reach.
-    """
-    return hashlib.sha256(secret.encode()).hexdigest()
 
 
 def _plan(writer: Writer, name: str) -> Plan:

@@ -11,7 +11,6 @@ import pytest
 from sqlalchemy import Connection, Engine, event, text
 from sqlalchemy.exc import OperationalError, StatementError
 
-from service.domain.access import Role
 from service.domain.errors import (
     DomainError,
     InvalidObservations,
@@ -23,7 +22,7 @@ from service.domain.errors import (
     TestIsClosed,
 )
 from service.domain.sequential_test import Subject, SubjectKind
-from service.ingest.commands import CreateKey, CreatePlan, Posted, PostObservations, RegisterTest
+from service.ingest.commands import CreatePlan, Posted, PostObservations, RegisterTest
 from service.ingest.road import Road, perform_now
 from service.storage.engine import create_engine_for
 from service.storage.migrate import upgrade
@@ -198,13 +197,16 @@ def test_members_run_one_by_one_are_answered_as_they_are_done_until_no_transacti
 
 
 def test_a_value_that_no_database_takes_is_a_mistake_of_ours_and_not_of_the_database(engine: Engine) -> None:
-    naive = NOW.replace(tzinfo=None)
+    """A moment without its zone, here."""
 
-    async def work(road: Road) -> None:
-        with pytest.raises(StatementError):
-            await road.submit(CreateKey("k", Role.VIEWER, expires_at=naive))
+    async def main() -> None:
+        road = Road(engine, lambda: NOW.replace(tzinfo=None), 10, 5)
+        road.start()
+        with pytest.raises(StatementError, match="time zone"):
+            await road.submit(post("a"))
+        await road.stop()
 
-    run(engine, work)
+    asyncio.run(main())
 
 
 def test_a_full_queue_and_a_repeated_key_in_progress_are_refused_at_once(engine: Engine) -> None:
