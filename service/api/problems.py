@@ -1,11 +1,9 @@
 """
 Every error as a problem document (RFC 9457): the one place that knows a status.
 
-`PROBLEMS` lists all types; `OF_ERRORS` translates the domain's errors. An unexpected error becomes a 500 without its
-text, which goes to the log with the request id.
+`PROBLEMS` lists all types; `OF_ERRORS` translates the domain's errors. An unexpected error becomes a 500 in `requests`.
 """
 
-import logging
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -18,11 +16,11 @@ from starlette.exceptions import HTTPException
 from service.domain import errors
 from service.domain.errors import DomainError, Fault
 
-logger = logging.getLogger(__name__)
-
 MEDIA_TYPE = "application/problem+json"
 TYPE_PREFIX = "urn:sprt-monitor:problem:"
 LONGEST_ECHO = 60
+# What callers send comes back in these; an answer stays small whatever it was.
+LONGEST_TEXT = 1000
 
 
 @dataclass(frozen=True)
@@ -177,10 +175,10 @@ def document(name: str, detail: str, faults: Sequence[Fault] = ()) -> dict[str, 
         "type": problem.uri,
         "title": problem.title,
         "status": problem.status,
-        "detail": detail,
+        "detail": _cut(detail),
     }
     if faults:
-        members["errors"] = [{"pointer": fault.pointer, "detail": fault.detail} for fault in faults]
+        members["errors"] = [{"pointer": _cut(fault.pointer), "detail": _cut(fault.detail)} for fault in faults]
     return members
 
 
@@ -199,12 +197,11 @@ def pointer_to(location: Sequence[str | int]) -> str:
 
 
 def install(app: FastAPI) -> None:
-    """Have every error answered by a problem document."""
+    """Have every refusal answered by a problem document."""
     app.add_exception_handler(DomainError, _on_domain_error)
     app.add_exception_handler(RequestProblem, _on_request_problem)
     app.add_exception_handler(RequestValidationError, _on_validation_error)
     app.add_exception_handler(HTTPException, _on_http_exception)
-    app.add_exception_handler(Exception, _on_unexpected)
 
 
 async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
@@ -237,18 +234,14 @@ async def _on_http_exception(_request: Request, error: Exception) -> JSONRespons
     return response(name, detail, headers=error.headers)
 
 
-async def _on_unexpected(request: Request, error: Exception) -> JSONResponse:
-    request_id = getattr(request.state, "request_id", "unknown")
-    logger.error("request %s failed", request_id, exc_info=error)
-    return response("internal-error", f"The log of the service has the reason, under the request id {request_id}.")
-
-
 def _rule(item: Mapping[str, Any]) -> str:
     """The rule that was broken and, for plain values, what was received instead."""
     received = item.get("input")
     message = str(item["msg"]).removeprefix("Value error, ")
     if item["type"] == "missing" or isinstance(received, dict | list):
         return message
-    text = repr(received)
-    echo = text if len(text) <= LONGEST_ECHO else text[:LONGEST_ECHO] + "…"
-    return f"{message}; received {echo}"
+    return f"{message}; received {_cut(repr(received), LONGEST_ECHO)}"
+
+
+def _cut(text: str, longest: int = LONGEST_TEXT) -> str:
+    return text if len(text) <= longest else text[:longest] + "…"

@@ -1,5 +1,7 @@
 """Bodies that are not what a body may be."""
 
+import json
+
 import httpx
 import pytest
 
@@ -46,6 +48,23 @@ def test_a_doubled_key_is_named(admin: httpx.Client, new_name: Namer) -> None:
     body = b'{"observations": [{"value": 0}, {"value": 0, "value": 1}]}'
     answer = admin.post(f"/v1/tests/{key}/observations", content=body, headers={"Content-Type": JSON})
     assert answer.json()["errors"][0]["pointer"] == "/observations/1/value"
+
+
+def test_a_doubled_key_is_pointed_to_in_escapes(admin: httpx.Client) -> None:
+    answer = admin.post("/v1/plans", content=b'{"a/b~c": 1, "a/b~c": 2}', headers={"Content-Type": JSON})
+    assert answer.json()["errors"][0]["pointer"] == "/a~1b~0c"
+
+
+def test_an_answer_is_small_whatever_was_sent(admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    long = "k" * 60_000
+    plan = {"name": new_name("plan"), **SEAL}
+    bodies = [f'{{"{long}": 1}}', f'{{"{long}": 1, "{long}": 2}}', f'{{"observations": [{{"{long}": 1}}]}}']
+    for body in (*bodies, json.dumps({**plan, "family": long}), json.dumps({**plan, "known": {long: 1}})):
+        path = "/v1/plans" if "family" in body else f"/v1/tests/{key}/observations"
+        answer = admin.post(path, content=body, headers={"Content-Type": JSON})
+        assert answer.status_code in {400, 422}
+        assert len(answer.content) < 5000
 
 
 def test_a_body_too_large_is_refused_while_it_comes(admin: httpx.Client, new_name: Namer) -> None:
