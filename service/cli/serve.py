@@ -26,6 +26,7 @@ def serve(
 
     settings = read_settings()
     logging.basicConfig(level=settings.log_level, format="%(asctime)s %(levelname)s %(name)s %(message)s")
+    logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
     with clear_failures():
         prepared_engine(settings.database_url).dispose()
     typer.echo(f"Serving on http://{host}:{port} (description: /openapi.json). Stop with Ctrl-C.", err=True)

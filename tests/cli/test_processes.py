@@ -157,6 +157,7 @@ def test_a_new_file_sets_itself_up_and_serves(tmp_path: Path) -> None:
         process.send_signal(signal.SIGTERM)
         _, error = process.communicate(timeout=20)
     assert f"http://127.0.0.1:{port}" in error
+    assert "alembic" not in error
     assert process.returncode in {0, -signal.SIGTERM}
 
 
@@ -191,6 +192,9 @@ def test_keys_create_prints_the_key_and_nothing_else(tmp_path: Path) -> None:
     assert "already named 'wall-board'" in taken.stderr
     assert command("keys", "create", "--role", "king", "--name", "x", database_url=url).returncode == 2
     assert command("keys", "create", "--role", "viewer", "--name", "a b", database_url=url).returncode == 1
+    for days in ("0", "1e12"):
+        late = command("keys", "create", "--role", "viewer", "--name", "x", "--expires-in-days", days, database_url=url)
+        assert (late.returncode, late.stdout, late.stderr.count("\n")) == (1, "", 1), late.stderr
     assert command("keys", "revoke", "nobody", database_url=url).returncode == 1
 
 
