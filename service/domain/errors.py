@@ -20,7 +20,7 @@ What can go wrong, without a word of HTTP.
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown
 """
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 
@@ -173,8 +173,9 @@ class SubmissionInProgress(Conflict):
 class VersionMoved(DomainError):
     """The state is no longer the one the caller saw."""
 
-    def __init__(self, expected: str, current: int) -> None:
-        super().__init__(f"The test has moved on: If-Match gave {expected}, its version is now {current}.")
+    def __init__(self, expected: Iterable[str], current: int | None) -> None:
+        has = "there is no such test yet" if current is None else f"its version is now {current}"
+        super().__init__(f"The test is not as expected: If-Match gave {', '.join(sorted(expected)) or 'none'}; {has}.")
 
 
 class Unavailable(DomainError):

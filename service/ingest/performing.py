@@ -77,6 +77,7 @@ def _(command: CreatePlan, writer: Writer, now: datetime) -> Outcome:
 @perform.register
 def _(command: RegisterTest, writer: Writer, now: datetime) -> Outcome:
     stored = writer.test(command.key)
+    _check_version(command.expected_versions, stored)
     if stored is not None:
         if not _same_registration(stored, command):
             raise TestDiffers(command.key)
@@ -110,8 +111,7 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
     if first is not None:
         then = replace(test, version=first.version, updated_at=first.received_at, state=first.state)
         return Posted(then, plan, first.first_sequence, first.last_sequence, is_replay=True)
-    if command.expected_version not in {None, str(test.version)}:
-        raise VersionMoved(str(command.expected_version), test.version)
+    _check_version(command.expected_versions, test)
     if test.status is Status.CLOSED:
         raise TestIsClosed(test.key)
     state = observe(procedure_of(plan), test.state, command.document, now)
@@ -142,6 +142,13 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
         raise UnknownKey(command.name)
     writer.revoke_key(key.id, now)
     return replace(key, revoked_at=now)
+
+
+def _check_version(expected: frozenset[str] | None, test: SequentialTest | None) -> None:
+    """Refuse a write whose caller insists on another version than the one there is, or on one where there is none."""
+    if expected is None or (test is not None and not expected.isdisjoint({"*", str(test.version)})):
+        return
+    raise VersionMoved(expected, None if test is None else test.version)
 
 
 def _plan(writer: Writer, name: str) -> Plan:

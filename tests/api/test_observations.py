@@ -84,6 +84,14 @@ def test_the_log_is_paged_and_marks_overrun(admin: httpx.Client, new_name: Namer
     assert [item["counted"] for item in seen] == [True] * 24 + [False] * 6
 
 
+def test_an_unchanged_log_says_as_well_what_it_varies_by(admin: httpx.Client, new_name: Namer) -> None:
+    path = f"/v1/tests/{with_test(admin, new_name, SEAL)}/observations"
+    for accept in ("application/json", "text/csv"):
+        full = admin.get(path, headers={"Accept": accept})
+        unchanged = admin.get(path, headers={"Accept": accept, "If-None-Match": full.headers["ETag"]})
+        assert (unchanged.status_code, unchanged.headers["Vary"]) == (304, full.headers["Vary"])
+
+
 def test_a_repeated_submission_is_answered_as_before(admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, SEAL)
     first = post(admin, key, {"values": [0, 1]}, **{"Idempotency-Key": "a-1"})
@@ -145,9 +153,15 @@ def test_a_write_can_insist_on_the_state_it_saw(admin: httpx.Client, new_name: N
     assert accepted.status_code == 201
     refused = post(admin, key, {"values": [0]}, **{"If-Match": tag})
     assert refused.status_code == 412
-    assert post(admin, key, {"values": [0]}, **{"If-Match": "something"}).status_code == 412
+    for malformed in ("something", "1", '"1', '"1" "2"', "", '*, "1"'):
+        answer = post(admin, key, {"values": [0]}, **{"If-Match": malformed})
+        assert (answer.status_code, pointers(answer)) == (422, ["/If-Match"]), malformed
+    for stale in (tag, '"0"', 'W/"2"', '"two"', '"0", "1"'):
+        assert post(admin, key, {"values": [0]}, **{"If-Match": stale}).status_code == 412, stale
     assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 1
-    current = accepted.headers["ETag"]
+    assert post(admin, key, {"values": [0]}, **{"If-Match": '"1" ,, "2",'}).status_code == 201
+    assert post(admin, key, {"values": [0]}, **{"If-Match": "*"}).status_code == 201
+    current = admin.get(f"/v1/tests/{key}").headers["ETag"]
     assert admin.get(f"/v1/tests/{key}", headers={"If-None-Match": current}).status_code == 304
     assert admin.get(f"/v1/tests/{key}", headers={"If-None-Match": tag}).status_code == 200
 

@@ -28,6 +28,18 @@ def test_registering_again_changes_nothing(admin: httpx.Client, new_name: Namer)
     assert other.status_code == 409
 
 
+def test_a_registration_can_insist_on_the_state_it_saw(admin: httpx.Client, new_name: Namer) -> None:
+    body = {"key": new_name("lot"), "plan": with_plan(admin, new_name("plan"), SEAL)}
+    body["subject"] = {"kind": "lot", "name": "x"}  # type: ignore[assignment]
+
+    def register(tag: str) -> int:
+        return admin.post("/v1/tests", json=body, headers={"If-Match": tag}).status_code
+
+    assert (register("*"), register('"1"'), register("x")) == (412, 412, 422)
+    admin.post("/v1/tests", json=body).raise_for_status()
+    assert (register("*"), register('"1"'), register('"2"')) == (200, 200, 412)
+
+
 def test_a_test_needs_a_plan_that_exists(admin: httpx.Client, new_name: Namer) -> None:
     body = {"key": new_name("lot"), "plan": "nowhere", "subject": {"kind": "lot", "name": "x"}}
     answer = admin.post("/v1/tests", json=body)

@@ -13,7 +13,7 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRequest, StrictRoute
-from service.api.conditional import etag, expected_version, not_modified
+from service.api.conditional import etag, expected_versions, not_modified
 from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, number_after
@@ -112,7 +112,7 @@ async def read_log(
     wants_csv = CSV in request.headers.get("accept", "")
     tag = etag(test.version, ".csv" if wants_csv else "")
     headers = {"ETag": tag, "Vary": "Accept"}
-    if (unchanged := not_modified(request, tag)) is not None:
+    if (unchanged := not_modified(request, tag, headers)) is not None:
         return unchanged
     if wants_csv:
         return StreamingResponse(_csv(parts, test, plan), media_type=f"{CSV}; charset=utf-8", headers=headers)
@@ -154,7 +154,7 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
         body_digest=hashlib.sha256(body).hexdigest(),
         actor=access_key.name,
         idempotency_key=idempotency_key,
-        expected_version=expected_version(request),
+        expected_versions=expected_versions(request),
     )
 
 

@@ -7,7 +7,7 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
-from service.api.conditional import etag, not_modified
+from service.api.conditional import etag, expected_versions, not_modified
 from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
@@ -55,17 +55,20 @@ class TestsQuery(BaseModel):
 @router.post(
     "",
     status_code=201,
-    responses=answers_with("invalid-test", "test-differs", has_body=True),
+    responses=answers_with("invalid-test", "test-differs", "version-moved", has_body=True),
     summary="Register a test",
 )
 async def register_test(
     form: TestForm,
+    request: Request,
     response: Response,
     parts: PartsOf,
     key: Annotated[AccessKey, requires(Role.ENGINEER)],
 ) -> TestOut:
     """The same key with the same content answers 200 with the test as it stands; with other content, 409."""
-    command = RegisterTest(form.key, form.plan, form.subject.subject(), form.labels, key.name)
+    command = RegisterTest(
+        form.key, form.plan, form.subject.subject(), form.labels, key.name, expected_versions(request)
+    )
     outcome = cast("RegisteredTest", await parts.road.submit(command))
     response.status_code = 201 if outcome.is_new else 200
     response.headers["Location"] = f"/v1/tests/{outcome.test.key}"
