@@ -5,12 +5,9 @@ A refusal is raised before anything is written, so that it disturbs no other com
 """
 
 import secrets
-from collections import Counter
-from collections.abc import Mapping
 from dataclasses import replace
 from datetime import datetime
-from functools import singledispatch
-from typing import Any
+from functools import partial, singledispatch
 
 from service.domain.access import AccessKey, check_new_key, digest_of
 from service.domain.errors import (
@@ -19,7 +16,6 @@ from service.domain.errors import (
     InvalidTest,
     KeyNameTaken,
     PlanDiffers,
-    RepeatedUnits,
     TestDiffers,
     TestIsClosed,
     UnknownKey,
@@ -32,6 +28,7 @@ from service.domain.plan import Plan, fingerprint_of
 from service.domain.procedure import checked_content, procedure_of
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
+from service.domain.units import new_units
 from service.ingest.commands import (
     Command,
     CreateKey,
@@ -116,7 +113,7 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
         raise TestIsClosed(test.key)
     state = observe(procedure_of(plan), test.state, command.document, now)
     first_sequence = test.state.sequence + 1
-    units = _new_units(command, writer, first_sequence)
+    units = new_units(command.document, first_sequence, partial(writer.known_units, command.test))
     moved = replace(test, version=test.version + 1, updated_at=now, state=state)
     writer.append(_submission(command, moved, first_sequence), units)
     writer.save(moved)
@@ -175,31 +172,6 @@ def _first_answer(command: PostObservations, writer: Writer) -> Submission | Non
         # Two stations that number their submissions alike must not silently swallow each other's results.
         raise IdempotencyKeyReused(command.idempotency_key, "was used by another access key")
     return first
-
-
-def _new_units(command: PostObservations, writer: Writer, first_sequence: int) -> dict[str, int]:
-    """The units of a submission with their sequences, none of them counted before."""
-    positions = _positions_of_units(command.document)
-    counts = Counter(unit for unit, _ in positions)
-    units = {unit: first_sequence + position for unit, position in positions}
-    known = writer.known_units(command.test, list(units)) if units else {}
-    faults = [
-        Fault(f"/observations/{position}/unit", f"unit {unit!r} {_reason(unit, known)}")
-        for unit, position in positions
-        if unit in known or counts[unit] > 1
-    ]
-    if faults:
-        raise RepeatedUnits(faults[:100])
-    return units
-
-
-def _positions_of_units(document: Mapping[str, Any]) -> list[tuple[str, int]]:
-    observations = document.get("observations", ())
-    return [(observation["unit"], i) for i, observation in enumerate(observations) if "unit" in observation]
-
-
-def _reason(unit: str, known: Mapping[str, int]) -> str:
-    return f"was reported as observation {known[unit]}" if unit in known else "stands more than once in this submission"
 
 
 def _submission(command: PostObservations, test: SequentialTest, first_sequence: int) -> Submission:

@@ -9,7 +9,7 @@ import httpx
 import pytest
 from sqlalchemy import create_engine, text
 
-from tests.api.examples import PUMP, SEAL, SHAFT, WELD, Namer, pointers, with_test
+from tests.api.examples import PUMP, SEAL, SHAFT, WELD, Namer, pointers, with_plan, with_test
 from tests.running import Running
 
 
@@ -144,6 +144,14 @@ def test_a_unit_is_counted_once(admin: httpx.Client, new_name: Namer) -> None:
     assert "'u2' was reported as observation 2" in answer.text
     assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 2
     post(admin, key, {"observations": [{"value": 0, "unit": "u3"}]}).raise_for_status()
+    assert post(admin, key, {"observations": [{"value": 0, "unit": " u3 "}]}).status_code == 409
+
+
+def test_a_rehearsal_counts_a_unit_once_too(admin: httpx.Client, new_name: Namer) -> None:
+    plan = with_plan(admin, new_name("plan"), SEAL)
+    body = {"observations": [{"value": 0, "unit": "u1"}, {"value": 0, "unit": "u1 "}]}
+    answer = admin.post(f"/v1/plans/{plan}/rehearsal", json=body)
+    assert (answer.status_code, pointers(answer)) == (409, ["/observations/0/unit", "/observations/1/unit"])
 
 
 def test_a_write_can_insist_on_the_state_it_saw(admin: httpx.Client, new_name: Namer) -> None:
@@ -185,6 +193,7 @@ BAD_SUBMISSIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (SEAL, {"observations": [{"value": None}]}, "/observations/0/value"),
     (SEAL, {"observations": [{"size": 2}]}, "/observations/0/value"),
     (SEAL, {"observations": [{"value": 0, "unit": ""}]}, "/observations/0/unit"),
+    (SEAL, {"observations": [{"value": 0, "unit": "  "}]}, "/observations/0/unit"),
     (SEAL, {"observations": [{"value": 0, "observed_at": "2031-05-04T09:30:00"}]}, "/observations/0/observed_at"),
     (SEAL, {"observations": [{"value": 0, "observed_at": 1935653400}]}, "/observations/0/observed_at"),
     *(

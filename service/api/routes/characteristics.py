@@ -18,6 +18,7 @@ from service.domain.characteristics import promise_of
 from service.domain.observing import observe
 from service.domain.procedure import checked_content, procedure_of
 from service.domain.state import State
+from service.domain.units import new_units
 
 router = APIRouter(prefix="/v1", tags=["characteristics"], route_class=StrictRoute)
 
@@ -58,7 +59,7 @@ async def design(form: CharacteristicsForm, parts: PartsOf) -> CharacteristicsOu
 
 @router.post(
     "/plans/{name}/rehearsal",
-    responses=answers_with("not-found", "invalid-observations", has_body=True),
+    responses=answers_with("not-found", "invalid-observations", "unit-repeated", has_body=True),
     summary="Run historical observations through a stored plan",
     dependencies=[requires(Role.VIEWER)],
 )
@@ -76,6 +77,7 @@ async def rehearse(
     def run() -> RehearsalOut:
         procedure = procedure_of(plan)
         state = observe(procedure, State(), document, parts.clock())
+        new_units(document, first_sequence=1, find_known=lambda _: {})
         return RehearsalOut.of(procedure, state, document, query.points)
 
     return await computing(parts, run)

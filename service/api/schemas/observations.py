@@ -4,7 +4,7 @@ from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
 from typing import Annotated, Any, Self
 
-from pydantic import ConfigDict, FailFast, Field, StrictBool, model_validator
+from pydantic import ConfigDict, FailFast, Field, StrictBool, StringConstraints, model_validator
 
 from service.api.schemas.common import Answer, Form, Moment, Number, Text, shown_as
 from service.api.schemas.plans import ThresholdsOut
@@ -60,6 +60,10 @@ REHEARSAL: dict[str, Any] = {
 }
 
 
+# Blanks around a serial number say nothing, and blanks alone are none.
+Unit = Annotated[Text, StringConstraints(strip_whitespace=True)]
+
+
 class ObservationForm(Form):
     """
     One observation. Which fields mean something depends on the family; absent ones are left out, not null.
@@ -72,7 +76,7 @@ class ObservationForm(Form):
     exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
     failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
-    unit: Text = Field(default_factory=str, description="Serial number; may be counted once in a test.")
+    unit: Unit = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: Moment = Field(
         default_factory=lambda: datetime.min.replace(tzinfo=UTC),
         description="When it was observed, with its time zone (RFC 3339).",
