@@ -197,10 +197,8 @@ def test_members_run_one_by_one_are_answered_as_they_are_done_until_no_transacti
 
 
 def test_a_value_that_no_database_takes_is_a_mistake_of_ours_and_not_of_the_database(engine: Engine) -> None:
-    """A moment without its zone, here."""
-
     async def main() -> None:
-        road = Road(engine, lambda: NOW.replace(tzinfo=None), 10, 5)
+        road = Road(engine, lambda: NOW.replace(tzinfo=None), 10, 5)  # moments need a zone
         road.start()
         with pytest.raises(StatementError, match="time zone"):
             await road.submit(post("a"))

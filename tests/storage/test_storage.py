@@ -1,5 +1,6 @@
 """Rows go in and come out the same on both databases."""
 
+import sys
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta, timezone
 from typing import Any
@@ -8,6 +9,7 @@ import pytest
 from sqlalchemy import Engine, event, text
 from sqlalchemy.exc import IntegrityError
 
+from service.api.decoding import UnfitNumber, decoded
 from service.domain.access import AccessKey, Role
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
@@ -200,6 +202,19 @@ def test_the_view_shows_each_observation_of_the_log(engine: Engine) -> None:
         (4, 1.5, None, None, True, None, None, "me", False),
         (5, 0, 2.25, None, None, None, None, "me", False),
     ]
+
+
+def test_the_view_reads_every_number_that_the_interface_lets_in(engine: Engine) -> None:
+    smallest, largest = repr(sys.float_info.min), repr(sys.float_info.max)
+    numbers = ", ".join(["0e-400", "-0.0E+400", smallest, largest, "0." + "3" * 398])
+    body = f'{{"values": [{numbers}]}}'
+    assert not any(isinstance(value, UnfitNumber) for value in decoded(body.encode(), 10)["values"])
+    add(engine, a_test("lot-1"))
+    with writing(engine) as writer:
+        writer.append(a_submission("lot-1", 1, 5, body), {})
+    with engine.connect() as connection:
+        values = connection.execute(text("SELECT value FROM observations ORDER BY sequence")).scalars().all()
+    assert values == [0.0, 0.0, sys.float_info.min, sys.float_info.max, 1 / 3]
 
 
 def test_only_one_valid_key_bears_a_name(engine: Engine) -> None:
