@@ -1,4 +1,9 @@
-"""Runs the migrations on the connection that it is handed, or on the database that the settings name."""
+"""
+Runs the migrations on the connection that it is handed, or on the database that the settings name.
+
+`sprt-monitor migrate` hands over a connection that holds a lock, so that processes wait for each other. Alembic's own
+command line, which is for developers, takes no such lock on PostgreSQL: run it alone.
+"""
 
 from alembic import context
 from sqlalchemy import Connection

@@ -2,7 +2,7 @@
 
 from typing import Literal
 
-from pydantic import Field
+from pydantic import Field, ValidationError
 from pydantic_settings import BaseSettings, SettingsConfigDict
 
 
@@ -19,6 +19,21 @@ class Settings(BaseSettings):
     log_level: Literal["DEBUG", "INFO", "WARNING", "ERROR"] = Field("INFO", description="Level of the log.")
 
 
+class BadSettings(Exception):
+    """The environment says something that cannot be right; the text is for people."""
+
+
 def read_settings() -> Settings:
-    """Read the environment now."""
-    return Settings()
+    """
+    Read the environment now.
+
+    Raises:
+        BadSettings: A variable has a value that it cannot have.
+    """
+    try:
+        return Settings()
+    except ValidationError as error:
+        faults = [
+            f"SPRT_{str(item['loc'][0]).upper()}: {item['msg']}; received {item['input']!r}" for item in error.errors()
+        ]
+        raise BadSettings("\n".join(faults)) from None

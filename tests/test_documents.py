@@ -15,7 +15,7 @@ from typer.main import get_command
 from service.cli import app as command_line
 from service.settings import Settings
 from tests.documents import DEVELOPERS, README, TOP, blocks
-from tests.running import running
+from tests.running import command, running
 
 # These differ from run to run; the README shows those of one run.
 PASSING = {"created_at", "registered_at", "updated_at", "at"}
@@ -43,6 +43,16 @@ def test_the_three_requests_have_the_answers_that_the_readme_shows(tmp_path: Pat
                 check=True,
             )
             assert stable(json.loads(done.stdout)) == stable(answer)
+
+
+def test_the_design_that_the_readme_shows_is_what_the_command_prints(tmp_path: Path) -> None:
+    asked = next(block for block in blocks(README, "sh") if "sprt-monitor design" in block)
+    shown = README.split("What the candidates really promise")[1].split("```")[0].splitlines()
+    arguments = asked.replace("\\\n", " ").split()[1:]
+    done = command(*arguments, database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}", COLUMNS="80")
+    printed = [line.rstrip() for line in done.stdout.splitlines()]
+    assert all(line in printed for line in shown if line), done.stdout
+    assert "Smallest truncation: 201 units" in done.stdout
 
 
 def test_every_setting_is_in_the_readme_with_its_default() -> None:

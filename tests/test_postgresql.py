@@ -38,3 +38,8 @@ def test_the_main_job_on_postgresql(server: URL, tmp_path: Path) -> None:
         )
         assert client.get("/v1/tests?label=a:b&decision=reject").json()["items"][0]["key"] == "lot-1"
         assert client.get("/readyz").status_code == 200
+        for path in ("/v1/tests/a%00b", "/v1/plans/a%00b"):
+            assert client.get(path).status_code == 404
+        assert client.post("/v1/tests/a%00b/observations", json={"values": [1.0]}).status_code == 404
+        for query in ("subject=%00", "plan=%00", "label=a:%00", "cursor=WyJcdTAwMDAiXQ"):
+            assert client.get(f"/v1/tests?{query}").status_code == 422

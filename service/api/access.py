@@ -4,7 +4,6 @@ Access: every call under /v1 needs a key, and each route says which role.
 The key is looked up before the body is read, and afresh for each request, so that a revoked key ends at once.
 """
 
-from collections.abc import Awaitable, Callable
 from typing import Any, cast
 
 from fastapi import Depends, Request
@@ -13,8 +12,7 @@ from starlette.types import ASGIApp, Receive, Scope, Send
 
 from service.api.parts import Parts, reading
 from service.api.problems import RequestProblem, response
-from service.domain.access import AccessKey, Role
-from service.ingest.performing import digest_of
+from service.domain.access import AccessKey, Role, digest_of
 
 GUARDED = "/v1"
 LONGEST_SECRET = 200
@@ -70,6 +68,3 @@ async def _key_of(request: Request, parts: Parts) -> AccessKey | None:
         return None
     key = await reading(lambda: parts.reader.key_with_digest(digest_of(secret)))
     return key if key is not None and key.is_valid(parts.clock()) else None
-
-
-Guard = Callable[[Request], Awaitable[AccessKey]]

@@ -1,51 +1,55 @@
-"""
-Bodies, read strictly: JSON in UTF-8, bounded in size and depth, no key twice in one object.
+"""Requests, read strictly: names that can be names; bodies of the right media type, bounded in size, sound JSON."""
 
-Numbers that are not finite get through the parser on purpose, so that the schema can name where they stand.
-"""
-
-import json
+import asyncio
 from collections.abc import Callable, Coroutine
+from functools import partial
 from typing import Any
 
 from fastapi import Request, Response
+from fastapi.exceptions import RequestValidationError
 from fastapi.routing import APIRoute
 
+from service.api.decoding import decoded
 from service.api.problems import RequestProblem
-from service.domain.errors import Fault
+from service.domain.names import is_name
+from service.settings import Settings
 
-LARGEST_DEPTH = 20
+# What decodes within a millisecond is not worth a thread.
+LARGE_BODY_BYTES = 65_536
 
-
-class _DoubledKey(dict[str, Any]):
-    """An object in which a key stands twice."""
-
-    def __init__(self, pairs: list[tuple[str, Any]], key: str) -> None:
-        super().__init__(pairs)
-        self.key = key
+# A decoded body in; the form, or the framework's errors where it has another form.
+FormCheck = Callable[[Any], tuple[Any, list[dict[str, Any]]]]
 
 
 class StrictRequest(Request):
     """A request whose body has been read by `load`."""
 
     document: Any = None
+    _form: Any = None
 
     async def json(self) -> Any:  # noqa: ANN401 - JSON is anything
-        """The decoded body."""
-        return self.document
+        """What the framework validates: the decoded body, or the form where that was made already."""
+        return self.document if self._form is None else self._form
 
-    async def load(self, limit: int) -> None:
+    async def load(self, settings: Settings, check: FormCheck) -> None:
         """
-        Read and decode the body.
+        Read and decode the body; a large one is checked off the event loop too, which others wait for.
 
         Raises:
             RequestProblem: The body is too large, of another media type, or not sound JSON.
+            RequestValidationError: A large body does not have the form asked for.
         """
-        self._body = await self._read(limit)
+        self._body = await self._read(settings.max_body_bytes)
         media_type = self.headers.get("content-type", "")
         if media_type.partition(";")[0].strip().lower() != "application/json":
             raise RequestProblem("media-type", f"Send Content-Type: application/json; received {media_type!r}.")
-        self.document = decoded(self._body)
+        if len(self._body) > LARGE_BODY_BYTES:
+            self.document = await asyncio.to_thread(decoded, self._body, settings.max_batch)
+            self._form, faults = await asyncio.to_thread(check, self.document)
+            if faults:
+                raise RequestValidationError(faults)
+        else:
+            self.document = decoded(self._body, settings.max_batch)
 
     async def _read(self, limit: int) -> bytes:
         detail = f"A body may have at most {limit} bytes."
@@ -62,64 +66,26 @@ class StrictRequest(Request):
 
 
 class StrictRoute(APIRoute):
-    """A route whose body is read strictly."""
+    """A route whose address and body are read strictly."""
 
     def get_route_handler(self) -> Callable[[Request], Coroutine[Any, Any, Response]]:
-        """Read the body before the framework sees the request."""
+        """Check the names and read the body before the framework sees the request."""
         handle = super().get_route_handler()
-        has_body = self.body_field is not None
+        field = self.body_field
 
         async def handler(request: Request) -> Response:
-            if not has_body:
+            _check_names(request)
+            if field is None:
                 return await handle(request)
             strict = StrictRequest(request.scope, request.receive)
-            await strict.load(request.app.state.parts.settings.max_body_bytes)
+            await strict.load(request.app.state.parts.settings, partial(field.validate, loc=("body",)))
             return await handle(strict)
 
         return handler
 
 
-def decoded(body: bytes) -> Any:  # noqa: ANN401 - JSON is anything
-    """
-    Decode JSON.
-
-    Raises:
-        RequestProblem: It is not JSON in UTF-8, nests too deep, or gives a key twice.
-    """
-    try:
-        text = body.decode("utf-8")
-        document = json.loads(text, object_pairs_hook=_object)
-        if "\\u" in text:
-            json.dumps(document, ensure_ascii=False).encode("utf-8")  # finds half of a surrogate pair
-    except RecursionError:
-        raise RequestProblem("malformed-body", f"The body nests deeper than {LARGEST_DEPTH} levels.") from None
-    except UnicodeError:
-        raise RequestProblem("malformed-body", "The body is not text in UTF-8.") from None
-    except ValueError as error:
-        raise RequestProblem("malformed-body", f"The body is not JSON: {error}.") from None
-    _check_structure(document, "", 1)
-    return document
-
-
-def _object(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
-    result = dict(pairs)
-    if len(result) == len(pairs):
-        return result
-    seen: set[str] = set()
-    doubled = next(key for key, _ in pairs if key in seen or seen.add(key))  # type: ignore[func-returns-value]
-    return _DoubledKey(pairs, doubled)
-
-
-def _check_structure(node: Any, pointer: str, depth: int) -> None:  # noqa: ANN401 - JSON is anything
-    """Refuse doubled keys and deep nesting, naming the place."""
-    if not isinstance(node, dict | list):
-        return
-    if depth > LARGEST_DEPTH:
-        raise RequestProblem("malformed-body", f"The body nests deeper than {LARGEST_DEPTH} levels.")
-    if isinstance(node, _DoubledKey):
-        fault = Fault(f"{pointer}/{node.key}", "stands more than once in its object")
-        raise RequestProblem("malformed-body", f"The key {node.key!r} stands more than once in one object.", [fault])
-    items = node.items() if isinstance(node, dict) else enumerate(node)
-    for name, child in items:
-        if isinstance(child, dict | list):
-            _check_structure(child, f"{pointer}/{name}", depth + 1)
+def _check_names(request: Request) -> None:
+    """Whatever an address leaves open is a name, and nothing bears a name that cannot be one."""
+    for name in request.path_params.values():
+        if not is_name(name):
+            raise RequestProblem("not-found", f"There is nothing named {name!r}.")

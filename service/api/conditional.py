@@ -1,8 +1,16 @@
 """Conditional requests (RFC 9110, section 13): entity tags from versions."""
 
+import re
+from collections.abc import Mapping
+
 from fastapi import Request, Response
 
 from service.api.problems import RequestProblem
+from service.domain.errors import Fault
+
+# RFC 9110, sections 8.8.3 and 13.1.1; a tag holds no quote and no space.
+_TAG = re.compile(r'(?:W/)?"([\x21\x23-\x7e\x80-\xff]*)"')
+_TAGS = re.compile(rf"{_TAG.pattern}(?:(?:[ \t]*,)+[ \t]*{_TAG.pattern})*")
 
 
 def etag(version: int | str, variant: str = "") -> str:
@@ -10,31 +18,32 @@ def etag(version: int | str, variant: str = "") -> str:
     return f'"{version}{variant}"'
 
 
-def not_modified(request: Request, tag: str) -> Response | None:
-    """The 304 answer when the caller has this version already, else None."""
+def not_modified(request: Request, tag: str, headers: Mapping[str, str] | None = None) -> Response | None:
+    """The 304 answer when the caller has this version already, with the headers of the full one; else None."""
     given = request.headers.get("if-none-match")
     if given is None:
         return None
     candidates = {candidate.strip().removeprefix("W/") for candidate in given.split(",")}
     if tag in candidates or "*" in candidates:
-        return Response(status_code=304, headers={"ETag": tag})
+        return Response(status_code=304, headers={**(headers or {}), "ETag": tag})
     return None
 
 
-def expected_version(request: Request) -> str | None:
+def expected_versions(request: Request) -> frozenset[str] | None:
     """
-    The version that If-Match names; None without the header or for `*`.
+    The versions that If-Match allows, `*` for any; None without the header.
+
+    A weak tag is left out: it never matches where a write depends on it.
 
     Raises:
-        RequestProblem: The header is not one entity tag of ours.
+        RequestProblem: The header is no list of entity tags.
     """
-    given = request.headers.get("if-match")
-    if given is None or given.strip() == "*":
+    if "if-match" not in request.headers:
         return None
-    tag = given.strip()
-    version = tag[1:-1]
-    if tag != f'"{version}"' or not version.isdigit():
-        raise RequestProblem(
-            "version-moved", f"If-Match takes the ETag of the test as it was read; received {given!r}."
-        )
-    return version
+    given = ",".join(request.headers.getlist("if-match")).strip(" \t,")
+    if given == "*":
+        return frozenset("*")
+    if not _TAGS.fullmatch(given):
+        fault = Fault("/If-Match", f"must be * or ETags of the test as it was read; received {given!r}")
+        raise RequestProblem("invalid-parameter", "A parameter cannot be right; see errors.", [fault])
+    return frozenset(tag[1] for tag in _TAG.finditer(given) if not tag[0].startswith("W/"))

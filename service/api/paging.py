@@ -11,6 +11,7 @@ from pydantic import Field
 
 from service.api.problems import RequestProblem
 from service.domain.errors import Fault
+from service.domain.names import is_name
 
 Limit = Annotated[int, Field(ge=1, le=500, description="Rows on a page, at most 500.")]
 Cursor = Annotated[
@@ -25,13 +26,13 @@ def encoded(after: str | int) -> str:
 
 def text_after(cursor: str | None) -> str | None:
     """
-    The key after which the page begins.
+    The name after which the page begins.
 
     Raises:
         RequestProblem: The cursor is none of ours.
     """
     after = _decoded(cursor) if cursor is not None else None
-    if after is not None and not isinstance(after, str):
+    if after is not None and not (isinstance(after, str) and is_name(after)):
         raise _bad(cursor)
     return after
 

@@ -1,11 +1,10 @@
 """
 Every error as a problem document (RFC 9457): the one place that knows a status.
 
-`PROBLEMS` lists all types; `OF_ERRORS` translates the domain's errors. An unexpected error becomes a 500 without its
-text, which goes to the log with the request id.
+`PROBLEMS` lists all types; `OF_ERRORS` translates the domain's errors. An unexpected error becomes a 500 in `requests`.
 """
 
-import logging
+import json
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -18,11 +17,25 @@ from starlette.exceptions import HTTPException
 from service.domain import errors
 from service.domain.errors import DomainError, Fault
 
-logger = logging.getLogger(__name__)
-
 MEDIA_TYPE = "application/problem+json"
 TYPE_PREFIX = "urn:sprt-monitor:problem:"
 LONGEST_ECHO = 60
+
+# Rules in the words of this service where the validator has words of a programmer.
+RULES = {
+    "missing": "is required",
+    "extra_forbidden": "is not a field of this body or parameter of this address",
+    "dict_type": "must be an object",
+    "model_attributes_type": "must be an object",
+    "list_type": "must be an array",
+    "too_short": "must not be empty",
+    "float_type": "must be a number",
+    "int_type": "must be a whole number",
+    "string_type": "must be a text",
+    "bool_type": "must be true or false",
+}
+# What callers send comes back in these; an answer stays small whatever it was.
+LONGEST_TEXT = 1000
 
 
 @dataclass(frozen=True)
@@ -50,7 +63,7 @@ _TYPES = (
         "role-required", 403, "The access key may not do this", "This needs the role engineer; the key has viewer."
     ),
     ProblemType("not-found", 404, "There is no such thing", "There is no test 'lot-7'."),
-    ProblemType("method-not-allowed", 405, "The address does not take this method", "Method Not Allowed"),
+    ProblemType("method-not-allowed", 405, "The address does not take this method", "This address does not take PUT."),
     ProblemType(
         "plan-differs", 409, "The plan exists with other content", "The plan 'seal-leak' exists with other content."
     ),
@@ -177,10 +190,10 @@ def document(name: str, detail: str, faults: Sequence[Fault] = ()) -> dict[str, 
         "type": problem.uri,
         "title": problem.title,
         "status": problem.status,
-        "detail": detail,
+        "detail": _cut(detail),
     }
     if faults:
-        members["errors"] = [{"pointer": fault.pointer, "detail": fault.detail} for fault in faults]
+        members["errors"] = [{"pointer": _cut(fault.pointer), "detail": _cut(fault.detail)} for fault in faults]
     return members
 
 
@@ -193,13 +206,17 @@ def response(
     )
 
 
+def pointer_to(location: Sequence[str | int]) -> str:
+    """A JSON pointer (RFC 6901) to an element of a body."""
+    return "".join("/" + str(part).replace("~", "~0").replace("/", "~1") for part in location)
+
+
 def install(app: FastAPI) -> None:
-    """Have every error answered by a problem document."""
+    """Have every refusal answered by a problem document."""
     app.add_exception_handler(DomainError, _on_domain_error)
     app.add_exception_handler(RequestProblem, _on_request_problem)
     app.add_exception_handler(RequestValidationError, _on_validation_error)
     app.add_exception_handler(HTTPException, _on_http_exception)
-    app.add_exception_handler(Exception, _on_unexpected)
 
 
 async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
@@ -217,37 +234,39 @@ async def _on_validation_error(_request: Request, error: Exception) -> JSONRespo
     assert isinstance(error, RequestValidationError)
     items = error.errors()
     is_body = all(item["loc"][:1] == ("body",) for item in items)
-    faults = [Fault(_pointer(item["loc"][1:]), _rule(item)) for item in items[:20]]
+    faults = [
+        Fault(pointer_to([part for part in item["loc"][1:] if part != "[key]"]), _rule(item)) for item in items[:20]
+    ]
     if is_body:
         return response("invalid-body", "The body does not have the form asked for; see errors.", faults)
     return response("invalid-parameter", "A parameter cannot be right; see errors.", faults)
 
 
-async def _on_http_exception(_request: Request, error: Exception) -> JSONResponse:
+async def _on_http_exception(request: Request, error: Exception) -> JSONResponse:
     assert isinstance(error, HTTPException)
     name = {404: "not-found", 405: "method-not-allowed"}.get(error.status_code, "malformed-body")
-    detail = "There is nothing at this address." if name == "not-found" else str(error.detail)
+    details = {
+        "not-found": "There is nothing at this address.",
+        "method-not-allowed": f"This address does not take {request.method}.",
+    }
+    detail = details.get(name, str(error.detail))
     return response(name, detail, headers=error.headers)
-
-
-async def _on_unexpected(request: Request, error: Exception) -> JSONResponse:
-    request_id = getattr(request.state, "request_id", "unknown")
-    logger.error("request %s failed", request_id, exc_info=error)
-    return response("internal-error", f"The log of the service has the reason, under the request id {request_id}.")
-
-
-def _pointer(location: Sequence[Any]) -> str:
-    """A JSON pointer (RFC 6901) to the offending element."""
-    parts = [str(part) for part in location if part != "[key]"]
-    return "".join("/" + part.replace("~", "~0").replace("/", "~1") for part in parts)
 
 
 def _rule(item: Mapping[str, Any]) -> str:
     """The rule that was broken and, for plain values, what was received instead."""
     received = item.get("input")
-    message = str(item["msg"]).removeprefix("Value error, ")
-    if item["type"] == "missing" or isinstance(received, dict | list):
+    message = RULES.get(item["type"], str(item["msg"]).removeprefix("Value error, "))
+    if item["type"] in ("missing", "extra_forbidden") or isinstance(received, dict | list):
         return message
-    text = repr(received)
-    echo = text if len(text) <= LONGEST_ECHO else text[:LONGEST_ECHO] + "…"
-    return f"{message}; received {echo}"
+    return f"{message}; received {_cut(_as_json(received), LONGEST_ECHO)}"
+
+
+def _as_json(received: object) -> str:
+    """A plain value as the caller wrote it; others as they name themselves."""
+    is_plain = received is None or isinstance(received, bool | int | float | str)
+    return json.dumps(received, ensure_ascii=False) if is_plain else repr(received)
+
+
+def _cut(text: str, longest: int = LONGEST_TEXT) -> str:
+    return text if len(text) <= longest else text[:longest] + "…"

@@ -1,13 +1,23 @@
-"""Middleware: gives each request an id, for the answer's header and the log."""
+"""
+Middleware: gives each request an id, for the answer's header and the log.
 
+It stands outside of everything else, so that the answer to an unexpected error carries the id as well.
+"""
+
+import logging
 import uuid
 
 from starlette.datastructures import MutableHeaders
+from starlette.requests import ClientDisconnect
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
+
+from service.api.problems import response
+
+logger = logging.getLogger(__name__)
 
 
 class RequestId:
-    """Adds `X-Request-Id` to every answer."""
+    """Adds `X-Request-Id` to every answer, and answers what nothing else did."""
 
     def __init__(self, app: ASGIApp) -> None:
         self._app = app
@@ -19,10 +29,22 @@ class RequestId:
             return
         request_id = uuid.uuid4().hex
         scope.setdefault("state", {})["request_id"] = request_id
+        has_started = False
 
         async def send_with_id(message: Message) -> None:
+            nonlocal has_started
             if message["type"] == "http.response.start":
                 MutableHeaders(scope=message)["X-Request-Id"] = request_id
+                has_started = True
             await send(message)
 
-        await self._app(scope, receive, send_with_id)
+        try:
+            await self._app(scope, receive, send_with_id)
+        except ClientDisconnect:
+            logger.info("request %s: the caller left before its end", request_id)
+        except Exception:
+            if has_started:
+                raise  # half an answer can only be broken off, which is the server's part
+            logger.exception("request %s failed", request_id)
+            detail = f"The log of the service has the reason, under the request id {request_id}."
+            await response("internal-error", detail)(scope, receive, send_with_id)

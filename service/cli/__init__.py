@@ -2,6 +2,7 @@
 
 import os
 import sys
+from typing import Annotated
 
 import typer
 
@@ -9,10 +10,28 @@ from service.cli import demo, design, keys, load, migrate, serve
 
 app = typer.Typer(
     name="sprt-monitor",
-    help="Sequential probability ratio tests as a service: post results, learn whether sampling may stop.",
     no_args_is_help=True,
     pretty_exceptions_enable=False,
 )
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        from importlib.metadata import version
+
+        typer.echo(version("sprt-monitor"))
+        raise typer.Exit
+
+
+@app.callback()
+def main(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_show_version, is_eager=True, help="Print the version and stop.")
+    ] = False,
+) -> None:
+    """Sequential probability ratio tests as a service: post results, learn whether sampling may stop."""
+
+
 app.command("serve")(serve.serve)
 app.command("demo")(demo.demo)
 app.command("design")(design.design)

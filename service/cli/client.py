@@ -18,6 +18,7 @@ class Refused(Exception):
         super().__init__(f"{problem.get('title', 'Refused')}: {problem.get('detail', f'status {status}')}")
         self.status = status
         self.faults = [(fault["pointer"], fault["detail"]) for fault in problem.get("errors", [])]
+        self.is_of_reused_key = str(problem.get("type", "")).endswith(":idempotency-key-reused")
 
 
 class Unreachable(Exception):
@@ -31,6 +32,7 @@ class ServiceClient:
         self._http = httpx.Client(
             base_url=url, headers={"Authorization": f"Bearer {key}"}, timeout=TIMEOUT_SECONDS, trust_env=False
         )
+        self._was_replay = False
 
     def get(self, path: str) -> dict[str, Any]:
         """
@@ -41,6 +43,11 @@ class ServiceClient:
             Unreachable: No answer came.
         """
         return self._call("GET", path, None, {})
+
+    @property
+    def was_replay(self) -> bool:
+        """Whether the last answer repeated that of an earlier submission, and nothing new was stored."""
+        return self._was_replay
 
     def post(self, path: str, body: Mapping[str, Any], idempotency_key: str | None = None) -> dict[str, Any]:
         """
@@ -65,6 +72,7 @@ class ServiceClient:
                 time.sleep(_pause(attempt, None))
                 continue
             if not _may_pass(answer):
+                self._was_replay = answer.headers.get("Idempotent-Replayed") == "true"
                 return _document(answer)
             reason = _problem(answer).get("detail", f"status {answer.status_code}")
             time.sleep(_pause(attempt, answer.headers.get("Retry-After")))

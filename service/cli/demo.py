@@ -5,6 +5,7 @@ Four questions of four families are asked at once; their results are invented wi
 submission after another, as testers would.
 """
 
+import itertools
 import os
 import random
 import socket
@@ -79,12 +80,15 @@ def _play(console: "Console", client: "ServiceClient", pause_seconds: float) -> 
         client.post("/v1/tests", registration)
         console.print(f"  [cyan]{story.key:<12}[/cyan] {story.question}")
     console.print()
-    while running:
+    for turn in itertools.count(1):
         for story in list(running):
-            state = client.post(f"/v1/tests/{story.key}/observations", {"observations": next(story.results)})
+            body = {"observations": next(story.results)}
+            state = client.post(f"/v1/tests/{story.key}/observations", body, idempotency_key=f"turn-{turn}")
             if state["decision"] != "continue":
                 running.remove(story)
                 _tell(console, story, state)
+        if not running:
+            return
         time.sleep(pause_seconds)
 
 

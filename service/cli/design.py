@@ -141,14 +141,17 @@ def _column(document: str, promise: "Promise") -> dict[str, str]:
         "95 % by, at h0": f"{_quantile(first):.6g}",
         "95 % by, at h1": f"{_quantile(second):.6g}",
     }
-    lines = lines_of(procedure_of_document(document))
+    procedure = procedure_of_document(document)
+    lines = lines_of(procedure)
     if lines is None:
         return {**figures, "limits": "by its table"}
+    # The lines are slope * n with these added; where H1 lies below H0, acceptance is above.
+    down, up = ("-", "+") if procedure.ratio.is_upward else ("+", "-")
     return {
         **figures,
         "slope": f"{lines.slope:.6g}",
-        "accept intercept": f"{lines.accept_intercept:.5g}",
-        "reject intercept": f"{lines.reject_intercept:.5g}",
+        "accept line": f"{down}{lines.accept_intercept:.5g}",
+        "reject line": f"{up}{lines.reject_intercept:.5g}",
     }
 
 

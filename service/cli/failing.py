@@ -18,11 +18,12 @@ def clear_failures() -> Iterator[None]:
     from sqlalchemy.exc import ArgumentError, DBAPIError
 
     from service.domain.errors import DomainError
+    from service.settings import BadSettings
     from service.storage.migrate import SchemaMismatch
 
     try:
         yield
-    except (DomainError, SchemaMismatch) as refusal:
+    except (DomainError, SchemaMismatch, BadSettings) as refusal:
         raise fail(str(refusal)) from None
     except ArgumentError as error:
         raise fail(f"SPRT_DATABASE_URL: {error}") from None

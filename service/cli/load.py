@@ -44,12 +44,16 @@ def load(
     url: Annotated[str, typer.Option(envvar="SPRT_URL", help="Address of the service.")] = "http://127.0.0.1:8000",
     chunk: Annotated[int, typer.Option(min=1, help="Observations posted at once.")] = 500,
     file_format: Annotated[Format | None, typer.Option("--format", help="Where the suffix does not say.")] = None,
+    skip: Annotated[int, typer.Option(min=0, help="Leave out so many rows at the beginning.")] = 0,
+    source: Annotated[str | None, typer.Option(help="What the rows are known by; the file's name if left out.")] = None,
     go_on: Annotated[bool, typer.Option("--go-on", help="Load everything, past the decision as overrun.")] = False,
 ) -> None:
     """
     Post a file of observations, chunk by chunk, and stop when the decision is reached.
 
-    An interrupted load can be run again with the same file and chunk size: nothing counts twice.
+    An interrupted load can be run again with the same file and chunk size: nothing counts twice. A file that has
+    grown since is refused where it differs from what was loaded; load what is new with --skip. Another file of the
+    same name needs a --source of its own.
     """
     from service.cli.client import Refused, ServiceClient, Unreachable
     from service.cli.files import BadLine, chunked, read_csv, read_ndjson
@@ -57,10 +61,11 @@ def load(
     client = ServiceClient(url, key)
     try:
         bare = _bare_field(client, test)
-        with _opened(file) as source:
+        with _opened(file) as opened:
             is_csv = _format(file, file_format) is Format.CSV
-            rows = read_csv(source.lines) if is_csv else read_ndjson(source.lines, bare)
-            _post_all(client, test, chunked(rows, chunk, test), source, go_on=go_on)
+            rows = read_csv(opened.lines) if is_csv else read_ndjson(opened.lines, bare)
+            chunks = chunked(rows, chunk, source or Path(file).name, skip)
+            _post_all(client, test, chunks, opened, go_on=go_on)
     except (BadLine, Unreachable) as error:
         raise fail(f"{file}: {error}") from None
     except Refused as refusal:
@@ -78,7 +83,7 @@ def _post_all(client: "ServiceClient", test: str, chunks: "Iterator[Chunk]", sou
     columns = (TextColumn("{task.fields[posted]} posted"), BarColumn(), TimeElapsedColumn(), TimeRemainingColumn())
     state: dict[str, Any] = client.get(f"/v1/tests/{test}")
     was_decided = state["decision"] != "continue"
-    posted = 0
+    posted = known = 0
     with Progress(*columns, console=_error_console()) as progress:
         task = progress.add_task("load", total=source.size, posted=0)
         for piece in chunks:
@@ -86,17 +91,23 @@ def _post_all(client: "ServiceClient", test: str, chunks: "Iterator[Chunk]", sou
                 state = client.post(f"/v1/tests/{test}/observations", piece.body, piece.idempotency_key)
             except Refused as refusal:
                 raise fail(_with_lines(refusal, piece)) from None
-            posted += len(piece.rows)
+            if client.was_replay:
+                known += len(piece.rows)
+            else:
+                posted += len(piece.rows)
             progress.update(task, completed=source.position(), posted=posted)
             if state["decision"] != "continue" and not go_on:
                 break
     typer.echo(_summary(state, posted, was_decided=was_decided, stopped=not go_on))
+    if known:
+        typer.echo(f"{known} more were recorded by an earlier load and did not count again.")
 
 
 def _summary(state: dict[str, Any], posted: int, *, was_decided: bool, stopped: bool) -> str:
     if state["decision"] == "continue":
         evidence = state["log_likelihood_ratio"]
-        return f"{state['key']}: continue sampling; {state['sample_number']} units so far, evidence {evidence:.4g}."
+        units = f"{state['sample_number']} units so far"
+        return f"{state['key']}: continue sampling; {units}, evidence {evidence:.4g}. Posted {posted}."
     decided = state["decided"]
     at = f"{decided['sample_number']} units" + (f", exposure {decided['exposure']:g}" if decided["exposure"] else "")
     tail = f" Stopped after posting {posted}." if stopped else f" Posted {posted}; overrun {state['overrun']}."
@@ -106,6 +117,12 @@ def _summary(state: dict[str, Any], posted: int, *, was_decided: bool, stopped: 
 
 def _with_lines(refusal: "Refused", piece: "Chunk") -> str:
     """The refusal with the lines of the file that it is about."""
+    if refusal.is_of_reused_key:
+        return (
+            f"{refusal}\n  lines {piece.rows[0].line} to {piece.rows[-1].line}: were loaded before with other content. "
+            "Has the file changed or grown, or is it cut into other chunks? Load what is new with --skip; "
+            "give another file of the same name a --source of its own."
+        )
     lines = [str(refusal)]
     for pointer, detail in refusal.faults:
         parts = pointer.split("/")
@@ -131,6 +148,8 @@ def _format(file: str, given: Format | None) -> Format:
 @contextmanager
 def _opened(file: str) -> Iterator[Source]:
     if file == "-":
+        # As strict as a file: what is not UTF-8 must not get in by another way.
+        sys.stdin.reconfigure(encoding="utf-8-sig", errors="strict")  # type: ignore[union-attr]
         yield Source(sys.stdin, None, lambda: 0)
         return
     try:

@@ -24,12 +24,13 @@ def serve(
     from service.app import create_app
     from service.settings import read_settings
 
-    settings = read_settings()
+    with clear_failures():
+        settings = read_settings()
     logging.basicConfig(level=settings.log_level, format="%(asctime)s %(levelname)s %(name)s %(message)s")
+    logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
     with clear_failures():
         prepared_engine(settings.database_url).dispose()
-    typer.echo(f"Serving on http://{host}:{port} (description: /openapi.json). Stop with Ctrl-C.", err=True)
-    uvicorn.run(
+    config = uvicorn.Config(
         create_app(settings),
         host=host,
         port=port,
@@ -38,6 +39,9 @@ def serve(
         timeout_graceful_shutdown=SHUTDOWN_SECONDS,
         server_header=False,
     )
+    listening = config.bind_socket()  # ends here where the port is taken
+    typer.echo(f"Serving on http://{host}:{port} (description: /openapi.json). Stop with Ctrl-C.", err=True)
+    uvicorn.Server(config).run([listening])
 
 
 def prepared_engine(database_url: str) -> "Engine":

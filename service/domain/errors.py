@@ -20,7 +20,7 @@ What can go wrong, without a word of HTTP.
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown
 """
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 
@@ -45,16 +45,6 @@ class Invalid(DomainError):
         self.faults = tuple(faults)
 
 
-@contextmanager
-def located(pointer: str) -> Iterator[None]:
-    """Let the faults found inside point below this place of the body."""
-    try:
-        yield
-    except Invalid as error:
-        error.faults = tuple(Fault(pointer + fault.pointer, fault.detail) for fault in error.faults)
-        raise
-
-
 class InvalidPlan(Invalid):
     """The plan contradicts itself or the theory."""
 
@@ -75,6 +65,10 @@ class InvalidObservations(Invalid):
 
 class InvalidKey(Invalid):
     """A key cannot be made as asked."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        rules = "; ".join(f"{fault.pointer.removeprefix('/')} {fault.detail}" for fault in faults)
+        super().__init__(f"The key cannot be made: {rules}.", faults)
 
 
 class InvalidQuestion(Invalid):
@@ -180,8 +174,9 @@ class SubmissionInProgress(Conflict):
 class VersionMoved(DomainError):
     """The state is no longer the one the caller saw."""
 
-    def __init__(self, expected: str, current: int) -> None:
-        super().__init__(f"The test has moved on: If-Match gave {expected}, its version is now {current}.")
+    def __init__(self, expected: Iterable[str], current: int | None) -> None:
+        has = "there is no such test yet" if current is None else f"its version is now {current}"
+        super().__init__(f"The test is not as expected: If-Match gave {', '.join(sorted(expected)) or 'none'}; {has}.")
 
 
 class Unavailable(DomainError):
@@ -225,3 +220,13 @@ class OutcomeUnknown(Unavailable):
             "The database did not confirm the write, so it is not known whether it is stored; "
             "send it again with the same idempotency key, or look at the log first."
         )
+
+
+@contextmanager
+def located(pointer: str) -> Iterator[None]:
+    """Let the faults found inside point below this place of the body."""
+    try:
+        yield
+    except (Invalid, RepeatedUnits) as error:
+        error.faults = tuple(Fault(pointer + fault.pointer, fault.detail) for fault in error.faults)
+        raise

@@ -24,11 +24,26 @@ LARGEST_TOTAL = 2.0**53
 
 
 @dataclass(frozen=True)
+class Position:
+    """Where a walk stands: after, or within, the observation at `index` of its submission."""
+
+    index: int
+    progress: Double
+    total: Double
+
+
+@dataclass(frozen=True)
 class Walk:
     """The walk of one submission: running progress and total after each of its observations."""
 
     progress: Double
     total: Double
+
+    @property
+    def end(self) -> Position:
+        """After its last observation."""
+        last = len(self.total.value) - 1
+        return Position(last, self.progress.at(last), self.total.at(last))
 
 
 def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at: datetime) -> State:
@@ -51,10 +66,9 @@ def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at:
     walk = walk_from(procedure, state, increments)
     exit_ = first_exit(procedure, walk, increments)
     if exit_ is None:
-        last = count - 1
-        moved = _moved(procedure, state, increments, last, walk.progress.at(last), walk.total.at(last))
-        return replace(moved, sequence=state.sequence + count)
-    moved = _moved(procedure, state, increments, exit_.index, exit_.progress, exit_.total)
+        return replace(_moved(procedure, state, increments, walk.end), sequence=state.sequence + count)
+    position = Position(exit_.index, exit_.progress, exit_.total)
+    moved = _moved(procedure, state, increments, position)
     return replace(
         moved,
         sequence=state.sequence + count,
@@ -85,18 +99,16 @@ def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit
     return first_exit_at_reports(procedure.region, walk.progress, walk.total)
 
 
-def _moved(  # noqa: PLR0913 - the six say where the walk stands
-    procedure: Procedure, state: State, increments: Increments, index: int, progress: Double, total: Double
-) -> State:
-    """The evidence after the observation at `index`, the walk standing at this progress and total."""
-    evidence = float(procedure.ratio.log(progress, total))
+def _moved(procedure: Procedure, state: State, increments: Increments, position: Position) -> State:
+    """The state whose walk of this submission stands at this position."""
+    evidence = float(procedure.ratio.log(position.progress, position.total))
     if not math.isfinite(evidence):
         raise InvalidObservations([Fault("", "the sums are too large for the plan's likelihood ratio")])
     return replace(
         state,
-        sample_number=state.sample_number + int(np.sum(increments.units[: index + 1])),
-        exposure=_sum(progress) if procedure.family.has_exposure else state.exposure,
-        total=_sum(total),
+        sample_number=state.sample_number + int(np.sum(increments.units[: position.index + 1])),
+        exposure=_sum(position.progress) if procedure.family.has_exposure else state.exposure,
+        total=_sum(position.total),
         log_likelihood_ratio=evidence + 0.0,  # a negative zero becomes a plain one
     )
 

@@ -30,8 +30,18 @@ class Plan:
 
 
 def canonical(content: Mapping[str, Any]) -> str:
-    """The one JSON text that stands for this content: keys sorted, no spaces, numbers as Python prints them."""
-    return json.dumps(content, sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
+    """
+    The one JSON text that stands for this content: keys sorted, no spaces, numbers as Python prints them.
+
+    What says nothing must not tell two plans apart: empty members are left out, and a negative zero is a zero.
+    """
+    return json.dumps(_plain(content), sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
+
+
+def _plain(value: Any) -> Any:  # noqa: ANN401 - JSON is anything
+    if isinstance(value, Mapping):
+        return {name: _plain(member) for name, member in value.items() if member not in (None, {})}
+    return 0.0 if isinstance(value, float) and value == 0.0 else value
 
 
 def stated(document: str) -> Mapping[str, Any]:

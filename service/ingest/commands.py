@@ -25,13 +25,19 @@ class CreatePlan:
 
 @dataclass(frozen=True)
 class RegisterTest:
-    """Register a test; the same key with the same content is answered with the stored one."""
+    """
+    Register a test; the same key with the same content is answered with the stored one.
+
+    Attributes:
+        expected_versions: What If-Match allows, `*` for any, if the caller sent one.
+    """
 
     key: str
     plan: str
     subject: Subject
     labels: Mapping[str, str]
     actor: str
+    expected_versions: frozenset[str] | None = None
 
 
 @dataclass(frozen=True)
@@ -42,7 +48,7 @@ class PostObservations:
     Attributes:
         body: The JSON text as received; `document` is the same, decoded and of sound form.
         body_digest: SHA-256 of the received bytes, hexadecimal.
-        expected_version: What If-Match names, if the caller sent one.
+        expected_versions: What If-Match allows, `*` for any, if the caller sent one.
     """
 
     test: str
@@ -51,7 +57,7 @@ class PostObservations:
     body_digest: str
     actor: str
     idempotency_key: str | None = None
-    expected_version: str | None = None
+    expected_versions: frozenset[str] | None = None
 
 
 @dataclass(frozen=True)

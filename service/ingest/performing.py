@@ -4,23 +4,18 @@ Each command, inside a transaction that the caller opened: load, one pure step, 
 A refusal is raised before anything is written, so that it disturbs no other command of the same transaction.
 """
 
-import hashlib
 import secrets
-from collections import Counter
-from collections.abc import Mapping
 from dataclasses import replace
 from datetime import datetime
-from functools import singledispatch
-from typing import Any
+from functools import partial, singledispatch
 
-from service.domain.access import AccessKey
+from service.domain.access import AccessKey, check_new_key, digest_of
 from service.domain.errors import (
     Fault,
     IdempotencyKeyReused,
     InvalidTest,
     KeyNameTaken,
     PlanDiffers,
-    RepeatedUnits,
     TestDiffers,
     TestIsClosed,
     UnknownKey,
@@ -33,6 +28,7 @@ from service.domain.plan import Plan, fingerprint_of, stated
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
+from service.domain.units import new_units
 from service.ingest.commands import (
     Command,
     CreateKey,
@@ -77,6 +73,7 @@ def _(command: CreatePlan, writer: Writer, now: datetime) -> Outcome:
 @perform.register
 def _(command: RegisterTest, writer: Writer, now: datetime) -> Outcome:
     stored = writer.test(command.key)
+    _check_version(command.expected_versions, stored)
     if stored is not None:
         if not _same_registration(stored, command):
             raise TestDiffers(command.key)
@@ -110,13 +107,12 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
     if first is not None:
         then = replace(test, version=first.version, updated_at=first.received_at, state=first.state)
         return Posted(then, plan, first.first_sequence, first.last_sequence, is_replay=True)
-    if command.expected_version not in {None, str(test.version)}:
-        raise VersionMoved(str(command.expected_version), test.version)
+    _check_version(command.expected_versions, test)
     if test.status is Status.CLOSED:
         raise TestIsClosed(test.key)
     state = observe(procedure_of(plan), test.state, command.document, now)
     first_sequence = test.state.sequence + 1
-    units = _new_units(command, writer, first_sequence)
+    units = new_units(command.document, first_sequence, partial(writer.known_units, command.test))
     moved = replace(test, version=test.version + 1, updated_at=now, state=state)
     writer.append(_submission(command, moved, first_sequence), units)
     writer.save(moved)
@@ -125,6 +121,7 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
 
 @perform.register
 def _(command: CreateKey, writer: Writer, now: datetime) -> Outcome:
+    check_new_key(command.name, command.expires_at, now)
     taken = writer.key_named(command.name)
     if taken is not None:
         raise KeyNameTaken(command.name)
@@ -143,13 +140,11 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
     return replace(key, revoked_at=now)
 
 
-def digest_of(secret: str) -> str:
-    """
-    What is stored of a secret.
-
-    A plain SHA-256 suffices: the secrets are 256 random bits, which no search can reach.
-    """
-    return hashlib.sha256(secret.encode()).hexdigest()
+def _check_version(expected: frozenset[str] | None, test: SequentialTest | None) -> None:
+    """Refuse a write whose caller insists on another version than the one there is, or on one where there is none."""
+    if expected is None or (test is not None and not expected.isdisjoint({"*", str(test.version)})):
+        return
+    raise VersionMoved(expected, None if test is None else test.version)
 
 
 def _plan(writer: Writer, name: str) -> Plan:
@@ -176,31 +171,6 @@ def _first_answer(command: PostObservations, writer: Writer) -> Submission | Non
         # Two stations that number their submissions alike must not silently swallow each other's results.
         raise IdempotencyKeyReused(command.idempotency_key, "was used by another access key")
     return first
-
-
-def _new_units(command: PostObservations, writer: Writer, first_sequence: int) -> dict[str, int]:
-    """The units of a submission with their sequences, none of them counted before."""
-    positions = _positions_of_units(command.document)
-    counts = Counter(unit for unit, _ in positions)
-    units = {unit: first_sequence + position for unit, position in positions}
-    known = writer.known_units(command.test, list(units)) if units else {}
-    faults = [
-        Fault(f"/observations/{position}/unit", f"unit {unit!r} {_reason(unit, known)}")
-        for unit, position in positions
-        if unit in known or counts[unit] > 1
-    ]
-    if faults:
-        raise RepeatedUnits(faults[:100])
-    return units
-
-
-def _positions_of_units(document: Mapping[str, Any]) -> list[tuple[str, int]]:
-    observations = document.get("observations", ())
-    return [(observation["unit"], i) for i, observation in enumerate(observations) if "unit" in observation]
-
-
-def _reason(unit: str, known: Mapping[str, int]) -> str:
-    return f"was reported as observation {known[unit]}" if unit in known else "stands more than once in this submission"
 
 
 def _submission(command: PostObservations, test: SequentialTest, first_sequence: int) -> Submission:

@@ -2,9 +2,10 @@
 The road itself: callers wait in a queue, one thread decides and commits what waits as one group.
 
 Nobody is answered before the commit. A refusal disturbs no other command of its group; any other error rolls the
-group back and its members are run one by one, so that only the one at fault fails. A commit that the database does not
-confirm is never tried again, for it may have happened: its callers are told so. Stopping finishes what was
-accepted and takes nothing new.
+group back and its members are run one by one, so that only the one at fault fails. Where no transaction can be begun,
+all of them fail at once: each would only wait for the same lock again. A commit that the database does not confirm is
+never tried again, for it may have happened: its callers are told so. Stopping finishes what was accepted and takes
+nothing new.
 """
 
 import asyncio
@@ -16,7 +17,7 @@ from dataclasses import dataclass, field
 from datetime import UTC, datetime
 
 from sqlalchemy import Engine
-from sqlalchemy.exc import SQLAlchemyError
+from sqlalchemy.exc import DataError, DBAPIError, SQLAlchemyError, StatementError
 
 from service.domain.errors import (
     DomainError,
@@ -57,6 +58,10 @@ class _Waiting:
 
     command: Command
     answer: asyncio.Future[Outcome] = field(compare=False)
+
+
+class _NotBegun(Exception):
+    """No transaction could be begun: the database is busy or away."""
 
 
 class _CommitFailed(Exception):
@@ -120,8 +125,8 @@ class Road:
         is_running = True
         while is_running:
             group, is_running = self._next_group()
-            if group and self._loop is not None:
-                self._loop.call_soon_threadsafe(_tell, self._carried_out(group))
+            if group:
+                self._carry_out(group)
 
     def _next_group(self) -> tuple[list[_Waiting], bool]:
         """Wait for one command, then take what else waits up to the limit; false once the end was called."""
@@ -137,25 +142,47 @@ class Road:
                 return group, True
         return group, False
 
-    def _carried_out(self, group: Sequence[_Waiting]) -> list[Answer]:
-        """Run a group in one transaction, or one by one where that fails."""
+    def _carry_out(self, group: Sequence[_Waiting]) -> bool:
+        """
+        Run a group in one transaction, or one by one where a member fails it, and answer the callers.
+
+        False where no transaction could be begun, so that there is no use in trying more now.
+        """
         try:
-            return self._in_one_transaction(group)
+            answers = self._in_one_transaction(group)
+        except _NotBegun:
+            logger.exception("no transaction could be begun")
+            self._answer([(waiting, StorageFailed()) for waiting in group])
+            return False
         except _CommitFailed:
             logger.exception("a commit was not confirmed")
-            return [(waiting, OutcomeUnknown()) for waiting in group]
+            answers = [(waiting, OutcomeUnknown()) for waiting in group]
         except Exception as error:
             if len(group) > 1:
-                return [answer for waiting in group for answer in self._carried_out([waiting])]
+                return self._carry_out_one_by_one(group)
             logger.exception("a command failed")
-            failure = StorageFailed() if isinstance(error, SQLAlchemyError) else error
-            return [(group[0], failure)]
+            answers = [(group[0], _failure(error))]
+        self._answer(answers)
+        return True
+
+    def _carry_out_one_by_one(self, group: Sequence[_Waiting]) -> bool:
+        """Each member in a transaction of its own, answered when it is done; the rest fails once none can be begun."""
+        for position, waiting in enumerate(group, start=1):
+            if not self._carry_out([waiting]):
+                self._answer([(later, StorageFailed()) for later in group[position:]])
+                return False
+        return True
+
+    def _answer(self, answers: Sequence[Answer]) -> None:
+        assert self._loop is not None
+        self._loop.call_soon_threadsafe(_tell, answers)
 
     def _in_one_transaction(self, group: Sequence[_Waiting]) -> list[Answer]:
         answers: list[Answer] = []
-        is_performed = False
+        is_begun = is_performed = False
         try:
             with writing(self._engine) as writer:
+                is_begun = True
                 for waiting in group:
                     try:
                         answers.append((waiting, perform(waiting.command, writer, self._clock())))
@@ -163,10 +190,23 @@ class Road:
                         answers.append((waiting, refusal))
                 is_performed = True
         except SQLAlchemyError as error:
+            if not is_begun:
+                raise _NotBegun from error
             if is_performed:
                 raise _CommitFailed from error
             raise
         return answers
+
+
+def _failure(error: Exception) -> Exception:
+    """
+    What the caller is told of an error.
+
+    The database may take the write at another time; a value that it or its driver can never take is our own mistake.
+    """
+    is_passing = isinstance(error, SQLAlchemyError) and not isinstance(error, DataError)
+    is_of_the_value = isinstance(error, StatementError) and not isinstance(error, DBAPIError)
+    return StorageFailed() if is_passing and not is_of_the_value else error
 
 
 def _mark(command: Command) -> tuple[str, str] | None:

@@ -13,8 +13,12 @@ from service.domain.sequential_test import SequentialTest, SubjectKind, Submissi
 from service.domain.state import Decision
 from service.storage import rows, tables
 
-# A page of the log is small enough to hold, whatever the submissions weigh.
-LOG_PAGE = 200
+# A page of the log ends with whichever comes first; a single submission may be larger.
+PAGE_SUBMISSIONS = 200
+PAGE_CHARACTERS = 4_000_000
+
+# No test comes so far.
+NO_END = 2**62
 
 
 @dataclass(frozen=True)
@@ -80,21 +84,41 @@ class Reader:
             found = found.where(tables.tests.c.key > after)
         return [rows.test_of(row) for row in self._all(found)]
 
-    def submissions(self, test: str, after_sequence: int = 0) -> Iterator[Submission]:
-        """The log of a test in order, from the submission that holds the observation after `after_sequence`."""
+    def submissions(self, test: str, after: int = 0, through: int = NO_END) -> Iterator[Submission]:
+        """
+        The log of a test in order: the submissions that hold its observations after `after` and up to `through`.
+
+        Give as `through` the sequence of a test that was read before, for more may have been posted since.
+        """
         log = tables.submissions.c
-        while True:
-            page = self._all(
-                select(tables.submissions)
-                .where(log.test == test, log.last_sequence > after_sequence)
-                .order_by(log.first_sequence)
-                .limit(LOG_PAGE)
-            )
-            for row in page:
-                yield rows.submission_of(row)
-            if len(page) < LOG_PAGE:
-                return
-            after_sequence = page[-1]["last_sequence"]
+        first = self._first_around(test, after)
+        while (last := self._last_of_page(test, first, through)) is not None:
+            page = select(tables.submissions).where(log.test == test, log.first_sequence.between(first, last))
+            for row in self._all(page.order_by(log.first_sequence)):
+                if row["last_sequence"] > after:
+                    yield rows.submission_of(row)
+            first = last + 1
+
+    def _first_around(self, test: str, after: int) -> int:
+        """The first sequence of the submission that holds the observation after `after`, found by the index alone."""
+        log = tables.submissions.c
+        row = self._first(
+            select(func.max(log.first_sequence).label("first")).where(log.test == test, log.first_sequence <= after + 1)
+        )
+        return (row["first"] if row is not None else None) or 1
+
+    def _last_of_page(self, test: str, first: int, through: int) -> int | None:
+        """The last sequence of the next submissions that are together small enough to hold; None without any."""
+        log = tables.submissions.c
+        weighed = select(log.last_sequence, func.length(log.body).label("weight"))
+        within = weighed.where(log.test == test, log.first_sequence.between(first, through))
+        last, total = None, 0
+        for row in self._all(within.order_by(log.first_sequence).limit(PAGE_SUBMISSIONS)):
+            total += row["weight"]
+            if last is not None and total > PAGE_CHARACTERS:
+                break
+            last = row["last_sequence"]
+        return last
 
     def counts(self) -> list[Count]:
         """How many tests there are of each kind, status and decision."""

@@ -1,9 +1,11 @@
 """Bodies that are not what a body may be."""
 
+import json
+
 import httpx
 import pytest
 
-from tests.api.examples import SEAL, Namer, with_test
+from tests.api.examples import SEAL, Namer, pointers, with_test
 
 JSON = "application/json"
 
@@ -48,12 +50,39 @@ def test_a_doubled_key_is_named(admin: httpx.Client, new_name: Namer) -> None:
     assert answer.json()["errors"][0]["pointer"] == "/observations/1/value"
 
 
+def test_a_doubled_key_is_pointed_to_in_escapes(admin: httpx.Client) -> None:
+    answer = admin.post("/v1/plans", content=b'{"a/b~c": 1, "a/b~c": 2}', headers={"Content-Type": JSON})
+    assert answer.json()["errors"][0]["pointer"] == "/a~1b~0c"
+
+
+def test_an_answer_is_small_whatever_was_sent(admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    long = "k" * 60_000
+    plan = {"name": new_name("plan"), **SEAL}
+    bodies = [f'{{"{long}": 1}}', f'{{"{long}": 1, "{long}": 2}}', f'{{"observations": [{{"{long}": 1}}]}}']
+    for body in (*bodies, json.dumps({**plan, "family": long}), json.dumps({**plan, "known": {long: 1}})):
+        path = "/v1/plans" if "family" in body else f"/v1/tests/{key}/observations"
+        answer = admin.post(path, content=body, headers={"Content-Type": JSON})
+        assert answer.status_code in {400, 422}
+        assert len(answer.content) < 5000
+
+
 def test_a_body_too_large_is_refused_while_it_comes(admin: httpx.Client, new_name: Namer) -> None:
     """Sent in chunks, so that no length announces it."""
     key = with_test(admin, new_name, SEAL)
     chunks = (b" " * 50_000 for _ in range(10))
     answer = admin.post(f"/v1/tests/{key}/observations", content=chunks, headers={"Content-Type": JSON})
     assert answer.status_code == 413
+
+
+def test_a_fault_of_a_large_body_is_named_as_in_a_small_one(admin: httpx.Client, new_name: Namer) -> None:
+    """Large bodies are checked apart, so that others need not wait for them."""
+    key = with_test(admin, new_name, SEAL)
+    observations: list[dict[str, object]] = [{"value": 0, "unit": f"unit-of-a-long-name-{i}"} for i in range(2000)]
+    answer = admin.post(f"/v1/tests/{key}/observations", json={"observations": [*observations[:-1], {"colour": 1}]})
+    assert (answer.status_code, pointers(answer)) == (422, ["/observations/1999/colour"])
+    accepted = admin.post(f"/v1/tests/{key}/observations", json={"observations": observations})
+    assert (accepted.status_code, accepted.json()["last_sequence"]) == (201, 2000)
 
 
 def test_unknown_addresses_and_methods_are_problems(admin: httpx.Client) -> None:

@@ -9,7 +9,7 @@ import httpx
 import pytest
 from sqlalchemy import create_engine, text
 
-from tests.api.examples import PUMP, SEAL, SHAFT, WELD, Namer, pointers, with_test
+from tests.api.examples import PUMP, SEAL, SHAFT, WELD, Namer, pointers, with_plan, with_test
 from tests.running import Running
 
 
@@ -84,6 +84,14 @@ def test_the_log_is_paged_and_marks_overrun(admin: httpx.Client, new_name: Namer
     assert [item["counted"] for item in seen] == [True] * 24 + [False] * 6
 
 
+def test_an_unchanged_log_says_as_well_what_it_varies_by(admin: httpx.Client, new_name: Namer) -> None:
+    path = f"/v1/tests/{with_test(admin, new_name, SEAL)}/observations"
+    for accept in ("application/json", "text/csv"):
+        full = admin.get(path, headers={"Accept": accept})
+        unchanged = admin.get(path, headers={"Accept": accept, "If-None-Match": full.headers["ETag"]})
+        assert (unchanged.status_code, unchanged.headers["Vary"]) == (304, full.headers["Vary"])
+
+
 def test_a_repeated_submission_is_answered_as_before(admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, SEAL)
     first = post(admin, key, {"values": [0, 1]}, **{"Idempotency-Key": "a-1"})
@@ -136,6 +144,14 @@ def test_a_unit_is_counted_once(admin: httpx.Client, new_name: Namer) -> None:
     assert "'u2' was reported as observation 2" in answer.text
     assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 2
     post(admin, key, {"observations": [{"value": 0, "unit": "u3"}]}).raise_for_status()
+    assert post(admin, key, {"observations": [{"value": 0, "unit": " u3 "}]}).status_code == 409
+
+
+def test_a_rehearsal_counts_a_unit_once_too(admin: httpx.Client, new_name: Namer) -> None:
+    plan = with_plan(admin, new_name("plan"), SEAL)
+    body = {"observations": [{"value": 0, "unit": "u1"}, {"value": 0, "unit": "u1 "}]}
+    answer = admin.post(f"/v1/plans/{plan}/rehearsal", json=body)
+    assert (answer.status_code, pointers(answer)) == (409, ["/observations/0/unit", "/observations/1/unit"])
 
 
 def test_a_write_can_insist_on_the_state_it_saw(admin: httpx.Client, new_name: Namer) -> None:
@@ -145,9 +161,15 @@ def test_a_write_can_insist_on_the_state_it_saw(admin: httpx.Client, new_name: N
     assert accepted.status_code == 201
     refused = post(admin, key, {"values": [0]}, **{"If-Match": tag})
     assert refused.status_code == 412
-    assert post(admin, key, {"values": [0]}, **{"If-Match": "something"}).status_code == 412
+    for malformed in ("something", "1", '"1', '"1" "2"', "", '*, "1"'):
+        answer = post(admin, key, {"values": [0]}, **{"If-Match": malformed})
+        assert (answer.status_code, pointers(answer)) == (422, ["/If-Match"]), malformed
+    for stale in (tag, '"0"', 'W/"2"', '"two"', '"0", "1"'):
+        assert post(admin, key, {"values": [0]}, **{"If-Match": stale}).status_code == 412, stale
     assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 1
-    current = accepted.headers["ETag"]
+    assert post(admin, key, {"values": [0]}, **{"If-Match": '"1" ,, "2",'}).status_code == 201
+    assert post(admin, key, {"values": [0]}, **{"If-Match": "*"}).status_code == 201
+    current = admin.get(f"/v1/tests/{key}").headers["ETag"]
     assert admin.get(f"/v1/tests/{key}", headers={"If-None-Match": current}).status_code == 304
     assert admin.get(f"/v1/tests/{key}", headers={"If-None-Match": tag}).status_code == 200
 
@@ -171,8 +193,23 @@ BAD_SUBMISSIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (SEAL, {"observations": [{"value": None}]}, "/observations/0/value"),
     (SEAL, {"observations": [{"size": 2}]}, "/observations/0/value"),
     (SEAL, {"observations": [{"value": 0, "unit": ""}]}, "/observations/0/unit"),
+    (SEAL, {"observations": [{"value": 0, "unit": "  "}]}, "/observations/0/unit"),
     (SEAL, {"observations": [{"value": 0, "observed_at": "2031-05-04T09:30:00"}]}, "/observations/0/observed_at"),
     (SEAL, {"observations": [{"value": 0, "observed_at": 1935653400}]}, "/observations/0/observed_at"),
+    *(
+        (SEAL, {"observations": [{"value": 0, "observed_at": moment}]}, "/observations/0/observed_at")
+        for moment in (
+            "2031-05-04\x0009:30:00+00:00",
+            "2031-05-04x09:30:00+00:00",
+            "2031-W18-7T09:30:00+00:00",
+            "20310504T093000Z",
+            "2031-05-04T09:30Z",
+            "2031-05-04T09:30:00+00:00:30",
+            "2031-02-30T09:30:00Z",
+            "0001-01-01T00:00:00+14:00",
+            "9999-12-31T23:59:59-14:00",
+        )
+    ),
     (WELD, {"values": [1, 1.5]}, "/values/1"),
     (WELD, {"observations": [{"value": 1, "exposure": 0.0}]}, "/observations/0/exposure"),
     (WELD, {"observations": [{"value": 1, "exposure": -2.0}]}, "/observations/0/exposure"),
@@ -196,7 +233,7 @@ def test_one_bad_value_rejects_the_whole_submission(
     assert admin.get(f"/v1/tests/{key}/observations").json()["items"] == []
 
 
-@pytest.mark.parametrize("number", ["NaN", "Infinity", "1e400", "1" + "0" * 400])
+@pytest.mark.parametrize("number", ["NaN", "Infinity", "1e400", "1e-400", "5e-324", "1" + "0" * 400])
 def test_a_value_that_is_not_finite_is_named(admin: httpx.Client, new_name: Namer, number: str) -> None:
     key = with_test(admin, new_name, SHAFT)
     answer = admin.post(

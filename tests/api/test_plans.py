@@ -34,6 +34,16 @@ def test_the_same_plan_again_is_answered_with_the_stored_one(admin: httpx.Client
     assert again.json() == first.json()
 
 
+def test_what_says_nothing_does_not_tell_two_plans_apart(admin: httpx.Client, new_name: Namer) -> None:
+    seal, shaft = {"name": new_name("plan"), **SEAL}, {"name": new_name("plan"), **SHAFT, "h0": 0.0}
+    for body, same in ((seal, {**seal, "known": {}}), (shaft, {**shaft, "h0": -0.0})):
+        first = admin.post("/v1/plans", json=body)
+        again = admin.post("/v1/plans", json=same)
+        assert (first.status_code, again.status_code) == (201, 200)
+        assert again.json() == first.json()
+    assert admin.post("/v1/plans", json={**seal, "name": new_name("plan"), "truncation": {}}).status_code == 422
+
+
 def test_a_plan_never_changes(admin: httpx.Client, new_name: Namer) -> None:
     name = with_plan(admin, new_name("plan"), SEAL)
     other = admin.post("/v1/plans", json={"name": name, **SEAL, "beta": 0.2})

@@ -28,6 +28,18 @@ def test_registering_again_changes_nothing(admin: httpx.Client, new_name: Namer)
     assert other.status_code == 409
 
 
+def test_a_registration_can_insist_on_the_state_it_saw(admin: httpx.Client, new_name: Namer) -> None:
+    body = {"key": new_name("lot"), "plan": with_plan(admin, new_name("plan"), SEAL)}
+    body["subject"] = {"kind": "lot", "name": "x"}  # type: ignore[assignment]
+
+    def register(tag: str) -> int:
+        return admin.post("/v1/tests", json=body, headers={"If-Match": tag}).status_code
+
+    assert (register("*"), register('"1"'), register("x")) == (412, 412, 422)
+    admin.post("/v1/tests", json=body).raise_for_status()
+    assert (register("*"), register('"1"'), register('"2"')) == (200, 200, 412)
+
+
 def test_a_test_needs_a_plan_that_exists(admin: httpx.Client, new_name: Namer) -> None:
     body = {"key": new_name("lot"), "plan": "nowhere", "subject": {"kind": "lot", "name": "x"}}
     answer = admin.post("/v1/tests", json=body)
@@ -87,7 +99,15 @@ def test_lists_filter_by_everything_at_once(admin: httpx.Client, new_name: Namer
         "cursor=WzFd",
         "decision=maybe",
         "label=x",
+        "cursor=WyJcdWQ4MDAiXQ",
+        "cursor=WyJcdTAwMDAiXQ",
+        "subject=a%00b",
+        "plan=a%00b",
+        "label=a%00:b",
+        "label=a:b%00",
         "updated_after=noon",
+        "updated_after=9999-12-31T23:59:59-14:00",
+        "updated_after=0001-01-01T00:00:00%2B14:00",
         "colour=red",
     ],
 )
@@ -106,7 +126,10 @@ def test_the_summary_counts_every_test_once(admin: httpx.Client, new_name: Namer
     assert sum(after["by_decision"].values()) == sum(after["by_status"].values()) == after["tests"]
 
 
-def test_an_unknown_test_is_404_everywhere(admin: httpx.Client) -> None:
+@pytest.mark.parametrize("name", ["nowhere", "a%00b", "%ed%a0%80", "a%0a", "x" * 101, "%20"])
+def test_an_unknown_name_is_404_everywhere(admin: httpx.Client, name: str) -> None:
     for path in ("", "/observations", "/path"):
-        assert admin.get(f"/v1/tests/nowhere{path}").status_code == 404
-    assert admin.post("/v1/tests/nowhere/observations", json={"values": [0]}).status_code == 404
+        assert admin.get(f"/v1/tests/{name}{path}").status_code == 404
+    assert admin.get(f"/v1/plans/{name}").status_code == 404
+    assert admin.post(f"/v1/tests/{name}/observations", json={"values": [0]}).status_code == 404
+    assert admin.delete(f"/v1/keys/{name}").status_code == 404

@@ -13,6 +13,11 @@ def test_a_csv_row_becomes_an_observation() -> None:
     ]
 
 
+def test_numbers_of_csv_are_plain_ones() -> None:
+    rows = list(read_csv(["value\n", *(f"{cell}\n" for cell in ("7", "+7", "-7.5", ".5", "7.", "1e3"))]))
+    assert [row.observation["value"] for row in rows] == [7, 7, -7.5, 0.5, 7.0, 1000.0]
+
+
 def test_ndjson_takes_objects_and_bare_numbers() -> None:
     assert list(read_ndjson(['{"value": 1}\n', "\n", "0\n"], "value")) == [
         Numbered(1, {"value": 1}),
@@ -27,6 +32,9 @@ def test_ndjson_takes_objects_and_bare_numbers() -> None:
         (["value,colour\n", "1,red\n"], "line 1: the header must name fields"),
         ([], "line 1: the header"),
         (["value\n", "0\n", "x\n"], "line 3: value must be a number; received 'x'"),
+        (["value\n", "nan\n"], "line 2: value must be a number; received 'nan'"),
+        (["value\n", "1_0\n"], "line 2: value must be a number; received '1_0'"),
+        (["value\n", "1e999\n"], "line 2: value must be a number; received '1e999'"),
         (["value,size\n", "0\n"], "line 2: has 1 cells, the header 2"),
         (["time,failed\n", "1,perhaps\n"], "line 2: failed must be true or false"),
     ],
@@ -36,7 +44,7 @@ def test_a_bad_line_of_csv_is_named(lines: list[str], message: str) -> None:
         list(read_csv(lines))
 
 
-@pytest.mark.parametrize("text", ["{", "true", '"x"', "[1]"])
+@pytest.mark.parametrize("text", ["{", "true", '"x"', "[1]", "NaN", "1e999", '{"value": 1, "unit": "\\ud800"}'])
 def test_a_bad_line_of_ndjson_is_named(text: str) -> None:
     with pytest.raises(BadLine, match="line 2"):
         list(read_ndjson(["1\n", text], "value"))
@@ -44,10 +52,17 @@ def test_a_bad_line_of_ndjson_is_named(text: str) -> None:
 
 def test_chunks_have_keys_of_their_own_that_stay_the_same() -> None:
     rows = [Numbered(i, {"value": 0}) for i in range(1, 11)]
-    first, second = list(chunked(rows, 4, "lot")), list(chunked(rows, 4, "lot"))
+    first, second = list(chunked(rows, 4, "lot.csv")), list(chunked(rows, 4, "lot.csv"))
     assert [len(chunk.rows) for chunk in first] == [4, 4, 2]
     keys = [chunk.idempotency_key for chunk in first]
     assert keys == [chunk.idempotency_key for chunk in second]
     assert len(set(keys)) == 3
-    assert not set(keys) & {chunk.idempotency_key for chunk in chunked(rows, 4, "other")}
-    assert not set(keys) & {chunk.idempotency_key for chunk in chunked(rows, 5, "lot")}
+    assert not set(keys) & {chunk.idempotency_key for chunk in chunked(rows, 4, "other.csv")}
+
+
+def test_a_chunk_that_has_grown_keeps_its_key_and_what_is_skipped_still_counts_for_the_next() -> None:
+    rows = [Numbered(i, {"value": i}) for i in range(1, 11)]
+    short, grown = list(chunked(rows[:6], 4, "lot.csv")), list(chunked(rows, 4, "lot.csv"))
+    assert [chunk.idempotency_key for chunk in short] == [chunk.idempotency_key for chunk in grown][:2]
+    (rest,) = chunked(rows, 4, "lot.csv", skip=8)
+    assert rest == grown[2]

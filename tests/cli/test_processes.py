@@ -94,6 +94,27 @@ def test_an_interrupted_load_goes_on_without_counting_twice(
     assert state["total"] == pytest.approx(sum(10 + (i % 7) / 100 for i in range(3000)), rel=1e-13)
 
 
+def test_a_file_that_has_grown_is_refused_and_its_rest_loaded(
+    load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path
+) -> None:
+    key = with_test(admin, new_name, {**SHAFT, "boundaries": "given", "thresholds": {"accept": -1e6, "reject": 1e6}})
+    file = tmp_path / "shafts.csv"
+    rows = [f"{10 + (i % 7) / 100}\n" for i in range(90)]
+    file.write_text("value\n" + "".join(rows[:75]))
+    assert "Posted 75." in load(str(file), "--test", key, "--chunk", "50").stdout
+    file.write_text("value\n" + "".join(rows))
+    refused = load(str(file), "--test", key, "--chunk", "50")
+    assert refused.returncode == 1
+    assert "lines 52 to 91: were loaded before with other content" in refused.stderr
+    assert "--skip" in refused.stderr
+    for _ in range(2):
+        assert load(str(file), "--test", key, "--chunk", "50", "--skip", "75").returncode == 0
+    assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 90
+    other = load(str(file), "--test", key, "--chunk", "50", "--source", "the next day")
+    assert other.returncode == 0, other.stderr
+    assert admin.get(f"/v1/tests/{key}").json()["sample_number"] == 180
+
+
 def test_times_come_through_standard_input(load: Loader, admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, PUMP)
     done = load("-", "--test", key, "--format", "ndjson", stdin='12.5\n{"time": 40, "failed": false}\n')
@@ -108,6 +129,11 @@ def test_load_says_clearly_what_is_wrong(load: Loader, admin: httpx.Client, new_
     assert "No such file" in load(str(tmp_path / "none.csv"), "--test", key).stderr
     (tmp_path / "x.txt").write_text("0")
     assert "--format" in load(str(tmp_path / "x.txt"), "--test", key).stderr
+    for content in ("value\nnan\n", "value\n1_0\n"):
+        (tmp_path / "bad.csv").write_text(content)
+        assert "bad.csv: line 2: value must be a number" in load(str(tmp_path / "bad.csv"), "--test", key).stderr
+    (tmp_path / "bad.ndjson").write_text('{"value": 0, "unit": "\\ud800"}\n')
+    assert "bad.ndjson: line 1: is not JSON" in load(str(tmp_path / "bad.ndjson"), "--test", key).stderr
     assert "A valid access key is required" in load("-", "--test", key, "--key", "wrong", stdin="").stderr
 
 
@@ -131,6 +157,7 @@ def test_a_new_file_sets_itself_up_and_serves(tmp_path: Path) -> None:
         process.send_signal(signal.SIGTERM)
         _, error = process.communicate(timeout=20)
     assert f"http://127.0.0.1:{port}" in error
+    assert "alembic" not in error
     assert process.returncode in {0, -signal.SIGTERM}
 
 
@@ -165,6 +192,9 @@ def test_keys_create_prints_the_key_and_nothing_else(tmp_path: Path) -> None:
     assert "already named 'wall-board'" in taken.stderr
     assert command("keys", "create", "--role", "king", "--name", "x", database_url=url).returncode == 2
     assert command("keys", "create", "--role", "viewer", "--name", "a b", database_url=url).returncode == 1
+    for days in ("0", "1e12"):
+        late = command("keys", "create", "--role", "viewer", "--name", "x", "--expires-in-days", days, database_url=url)
+        assert (late.returncode, late.stdout, late.stderr.count("\n")) == (1, "", 1), late.stderr
     assert command("keys", "revoke", "nobody", database_url=url).returncode == 1
 
 
@@ -182,3 +212,39 @@ def test_the_demo_decides_all_four_and_cleans_up() -> None:
     assert done.stdout.count("rejected") >= 1
     assert done.stdout.count("accepted") + done.stdout.count("rejected") == 4
     assert not Path("never-used.sqlite3").exists()
+
+
+def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
+    """Twice the same plan, once by its standard: the printed figures are those of the interface."""
+    url = f"sqlite:///{tmp_path / 'none.sqlite3'}"
+    done = command("design", "--standard", "MIL-HDBK-781A/III-D", "--scale", "100", database_url=url)
+    assert done.returncode == 0, done.stderr
+    assert "0.128345" in done.stdout
+    assert "1023.53" in done.stdout
+    assert "Probability of acceptance against the true parameter" in done.stdout
+    assert not (tmp_path / "none.sqlite3").exists()
+
+
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        (["--h0", "0.1", "--h1", "0.1", "--alpha", "0.1", "--beta", "0.1"], "--h1: must differ from h0"),
+        (["--h0", "0.1", "--h1", "0.2", "--alpha", "0.1"], "--beta: is required"),
+        (["--standard", "MIL-HDBK-781A/III-D"], "--scale: is required"),
+        (["--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1", "--truncation", "x"], "--truncation"),
+        (["--family", "normal", "--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1"], "--sigma"),
+        (["--h0", "1e-6", "--h1", "1.1e-6", "--alpha", "0.1", "--beta", "0.1"], "would need more than"),
+    ],
+)
+def test_a_design_that_cannot_be_right_is_refused_in_a_line(tmp_path: Path, arguments: list[str], said: str) -> None:
+    done = command("design", *arguments, database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}")
+    assert done.returncode == 1
+    assert said in done.stderr
+    assert "Traceback" not in done.stderr
+
+
+def test_a_bad_setting_is_named_in_a_line(tmp_path: Path) -> None:
+    done = command("serve", database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}", SPRT_MAX_BATCH="many")
+    assert done.returncode == 1
+    assert "SPRT_MAX_BATCH" in done.stderr
+    assert "Traceback" not in done.stderr

@@ -9,7 +9,7 @@ from pathlib import Path
 
 import pytest
 from sqlalchemy import Connection, Engine, event, text
-from sqlalchemy.exc import OperationalError
+from sqlalchemy.exc import OperationalError, StatementError
 
 from service.domain.checking import checked_content
 from service.domain.errors import (
@@ -40,6 +40,11 @@ PLAN = {
     "statistic": "simple",
     "known": {"sigma": 1.0},
 }
+
+FAILING_B = (
+    "CREATE TRIGGER no_b BEFORE INSERT ON submissions WHEN new.test = 'b' "
+    "BEGIN SELECT RAISE(ABORT, 'disk on fire'); END"
+)
 
 
 @pytest.fixture
@@ -127,12 +132,7 @@ def test_a_refusal_disturbs_no_other(engine: Engine) -> None:
 
 def test_an_error_of_the_database_fails_only_its_own_command(engine: Engine) -> None:
     with engine.begin() as connection:
-        connection.execute(
-            text(
-                "CREATE TRIGGER no_b BEFORE INSERT ON submissions WHEN new.test = 'b' "
-                "BEGIN SELECT RAISE(ABORT, 'disk on fire'); END"
-            )
-        )
+        connection.execute(text(FAILING_B))
     gate = Gate(engine)
 
     async def work(road: Road) -> None:
@@ -147,6 +147,65 @@ def test_an_error_of_the_database_fails_only_its_own_command(engine: Engine) -> 
     run(engine, work)
     assert [s.last_sequence for s in Reader(engine).submissions("a")] == [1, 2, 3]
     assert list(Reader(engine).submissions("b")) == []
+
+
+def refusing_after(engine: Engine, count: int) -> list[int]:
+    """Have the database say that it is locked once so many transactions began; what is returned grows with each try."""
+    tries: list[int] = []
+
+    def begin(_connection: Connection) -> None:
+        tries.append(len(tries))
+        if len(tries) > count:
+            raise OperationalError("BEGIN IMMEDIATE", {}, Exception("database is locked"))
+
+    event.listen(engine, "begin", begin)
+    return tries
+
+
+def test_a_busy_database_is_waited_for_once_for_the_whole_group(engine: Engine) -> None:
+    gate, begun = Gate(engine), refusing_after(engine, 1)
+
+    async def work(road: Road) -> None:
+        first = asyncio.create_task(road.submit(post("a")))
+        await gate.entered()
+        rest = [asyncio.create_task(road.submit(post("a"))) for _ in range(20)]
+        await asyncio.sleep(0)
+        gate.open()
+        results = await asyncio.gather(first, *rest, return_exceptions=True)
+        assert [type(result) for result in results] == [Posted] + [StorageFailed] * 20
+
+    run(engine, work)
+    assert len(begun) == 2
+
+
+def test_members_run_one_by_one_are_answered_as_they_are_done_until_no_transaction_can_be_begun(engine: Engine) -> None:
+    with engine.begin() as connection:
+        connection.execute(text(FAILING_B))
+    # The one that holds the writer, the group, its first member and its second.
+    gate, begun = Gate(engine), refusing_after(engine, 4)
+
+    async def work(road: Road) -> None:
+        first = asyncio.create_task(road.submit(post("a")))
+        await gate.entered()
+        rest = [asyncio.create_task(road.submit(post(test))) for test in ("a", "b", "a", "a", "a")]
+        await asyncio.sleep(0)
+        gate.open()
+        results = await asyncio.gather(first, *rest, return_exceptions=True)
+        assert [type(result) for result in results] == [Posted, Posted] + [StorageFailed] * 4
+
+    run(engine, work)
+    assert len(begun) == 5
+
+
+def test_a_value_that_no_database_takes_is_a_mistake_of_ours_and_not_of_the_database(engine: Engine) -> None:
+    async def main() -> None:
+        road = Road(engine, lambda: NOW.replace(tzinfo=None), 10, 5)  # moments need a zone
+        road.start()
+        with pytest.raises(StatementError, match="time zone"):
+            await road.submit(post("a"))
+        await road.stop()
+
+    asyncio.run(main())
 
 
 def test_a_full_queue_and_a_repeated_key_in_progress_are_refused_at_once(engine: Engine) -> None:

@@ -1,18 +1,20 @@
 """Rows go in and come out the same on both databases."""
 
+import sys
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta, timezone
 from typing import Any
 
 import pytest
-from sqlalchemy import Engine, text
+from sqlalchemy import Engine, event, text
 from sqlalchemy.exc import IntegrityError
 
+from service.api.decoding import UnfitNumber, decoded
 from service.domain.access import AccessKey, Role
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
-from service.storage.reader import Reader, TestFilters
+from service.storage.reader import PAGE_CHARACTERS, Reader, TestFilters
 from service.storage.writer import writing
 
 NOW = datetime(2031, 5, 4, 9, 30, 0, 123456, tzinfo=UTC)
@@ -157,6 +159,24 @@ def test_a_long_log_comes_in_order_from_any_place(engine: Engine) -> None:
     reader = Reader(engine)
     assert [s.first_sequence for s in reader.submissions("lot-1")] == list(range(1, 900, 2))
     assert [s.first_sequence for s in reader.submissions("lot-1", 501)] == list(range(501, 900, 2))
+    assert [s.first_sequence for s in reader.submissions("lot-1", 501, 510)] == [501, 503, 505, 507, 509]
+    assert list(reader.submissions("lot-1", 0, 0)) == []
+
+
+def test_few_heavy_submissions_are_held_at_once(engine: Engine) -> None:
+    add(engine, a_test("lot-1"))
+    with writing(engine) as writer:
+        for i in range(1, 13):
+            writer.append(a_submission("lot-1", i, i, " " * (PAGE_CHARACTERS // 3)), {})
+    held: list[int] = []
+
+    def count(_connection: object, _cursor: object, statement: str, *_rest: object) -> None:
+        if "length(" not in statement and "FROM submissions" in statement:
+            held.append(1)
+
+    event.listen(engine, "after_cursor_execute", count)
+    assert [s.first_sequence for s in Reader(engine).submissions("lot-1")] == list(range(1, 13))
+    assert len(held) >= 4
 
 
 def test_the_view_shows_each_observation_of_the_log(engine: Engine) -> None:
@@ -182,6 +202,19 @@ def test_the_view_shows_each_observation_of_the_log(engine: Engine) -> None:
         (4, 1.5, None, None, True, None, None, "me", False),
         (5, 0, 2.25, None, None, None, None, "me", False),
     ]
+
+
+def test_the_view_reads_every_number_that_the_interface_lets_in(engine: Engine) -> None:
+    smallest, largest = repr(sys.float_info.min), repr(sys.float_info.max)
+    numbers = ", ".join(["0e-400", "-0.0E+400", smallest, largest, "0." + "3" * 398])
+    body = f'{{"values": [{numbers}]}}'
+    assert not any(isinstance(value, UnfitNumber) for value in decoded(body.encode(), 10)["values"])
+    add(engine, a_test("lot-1"))
+    with writing(engine) as writer:
+        writer.append(a_submission("lot-1", 1, 5, body), {})
+    with engine.connect() as connection:
+        values = connection.execute(text("SELECT value FROM observations ORDER BY sequence")).scalars().all()
+    assert values == [0.0, 0.0, sys.float_info.min, sys.float_info.max, 1 / 3]
 
 
 def test_only_one_valid_key_bears_a_name(engine: Engine) -> None:

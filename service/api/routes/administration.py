@@ -11,7 +11,6 @@ from service.api.description import answers_with
 from service.api.parts import PartsOf, reading
 from service.api.schemas.administration import IssuedKeyOut, KeyForm, KeyOut, KeysOut, SummaryOut
 from service.domain.access import AccessKey, Role
-from service.domain.errors import Fault, InvalidKey
 from service.domain.state import Decision
 from service.ingest.commands import CreateKey, IssuedKey, RevokeKey
 
@@ -52,8 +51,6 @@ async def list_keys(parts: PartsOf) -> KeysOut:
 )
 async def create_key(form: KeyForm, response: Response, parts: PartsOf) -> IssuedKeyOut:
     """The secret is in this answer and nowhere else."""
-    if form.expires_at is not None and form.expires_at <= parts.clock():
-        raise InvalidKey("The key cannot be made.", [Fault("/expires_at", "must lie in the future")])
     issued = cast("IssuedKey", await parts.road.submit(CreateKey(form.name, form.role, form.expires_at)))
     response.headers["Cache-Control"] = "no-store"
     return IssuedKeyOut(**KeyOut.model_validate(issued.key).model_dump(), secret=issued.secret)

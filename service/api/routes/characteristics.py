@@ -11,7 +11,7 @@ from service.api.bodies import StrictRequest, StrictRoute
 from service.api.description import answers_with
 from service.api.lookup import known_plan
 from service.api.parts import Parts, PartsOf, computing
-from service.api.routes.observations import PathQuery, check_batch
+from service.api.routes.observations import PathQuery
 from service.api.schemas.characteristics import CandidateOut, CharacteristicsForm, CharacteristicsOut, ComparisonOut
 from service.api.schemas.observations import ObservationsForm, RehearsalForm, RehearsalOut
 from service.domain.access import Role
@@ -22,6 +22,7 @@ from service.domain.errors import Fault, InvalidQuestion, located
 from service.domain.observing import observe
 from service.domain.procedure import Procedure, procedure_of, procedure_of_document
 from service.domain.state import State
+from service.domain.units import new_units
 
 router = APIRouter(prefix="/v1", tags=["characteristics"], route_class=StrictRoute)
 
@@ -85,15 +86,18 @@ def _comparison(form: CharacteristicsForm) -> ComparisonOut:
 
 @router.post(
     "/plans/{name}/rehearsal",
-    responses=answers_with("not-found", "invalid-observations", has_body=True),
+    responses=answers_with("not-found", "invalid-observations", "unit-repeated", has_body=True),
     summary="Run historical observations through a stored plan",
     dependencies=[requires(Role.VIEWER)],
 )
 async def rehearse(
-    name: str, form: ObservationsForm, request: Request, parts: PartsOf, query: Annotated[PathQuery, Query()]
+    name: str,
+    form: ObservationsForm,  # noqa: ARG001 - what is rehearsed is the body as received; this checked its form
+    request: Request,
+    parts: PartsOf,
+    query: Annotated[PathQuery, Query()],
 ) -> RehearsalOut:
     """What the plan would have answered, and the path to it; nothing is stored."""
-    check_batch(form, parts.settings.max_batch)
     plan = await known_plan(parts, name)
     submission = cast("StrictRequest", request).document
     return await computing(parts, lambda: _rehearsed(parts, procedure_of(plan), submission, query.points))
@@ -101,7 +105,9 @@ async def rehearse(
 
 @router.post(
     "/rehearsal",
-    responses=answers_with("invalid-plan", "computation-too-large", "invalid-observations", has_body=True),
+    responses=answers_with(
+        "invalid-plan", "computation-too-large", "invalid-observations", "unit-repeated", has_body=True
+    ),
     summary="Run historical observations through a plan in the body",
     dependencies=[requires(Role.VIEWER)],
 )
@@ -109,7 +115,6 @@ async def rehearse_inline(
     form: RehearsalForm, request: Request, parts: PartsOf, query: Annotated[PathQuery, Query()]
 ) -> RehearsalOut:
     """As with a stored plan; nothing is stored."""
-    check_batch(form.submission, parts.settings.max_batch)
     submission = cast("StrictRequest", request).document["submission"]
 
     def run() -> RehearsalOut:
@@ -123,4 +128,5 @@ async def rehearse_inline(
 
 def _rehearsed(parts: Parts, procedure: Procedure, submission: Mapping[str, Any], points: int) -> RehearsalOut:
     state = observe(procedure, State(), submission, parts.clock())
+    new_units(submission, first_sequence=1, find_known=lambda _: {})
     return RehearsalOut.of(procedure, state, submission, points)

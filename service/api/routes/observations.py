@@ -13,12 +13,11 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRequest, StrictRoute
-from service.api.conditional import etag, expected_version, not_modified
+from service.api.conditional import etag, expected_versions, not_modified
 from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, number_after
 from service.api.parts import Parts, PartsOf, reading
-from service.api.problems import RequestProblem
 from service.api.schemas.observations import (
     LoggedOut,
     LogOut,
@@ -29,11 +28,10 @@ from service.api.schemas.observations import (
 )
 from service.api.schemas.tests import PostedOut
 from service.domain.access import AccessKey, Role
-from service.domain.errors import Fault
 from service.domain.log import document_of, expanded
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
-from service.domain.sequential_test import SequentialTest
+from service.domain.sequential_test import SequentialTest, Submission
 from service.ingest.commands import Posted, PostObservations
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["observations"], route_class=StrictRoute)
@@ -75,7 +73,7 @@ class PathQuery(BaseModel):
 )
 async def post_observations(  # noqa: PLR0913 - each argument is a part of the request
     key: str,
-    form: ObservationsForm,
+    form: ObservationsForm,  # noqa: ARG001 - what is stored is the body as received; this checked its form
     request: Request,
     response: Response,
     parts: PartsOf,
@@ -87,7 +85,6 @@ async def post_observations(  # noqa: PLR0913 - each argument is a part of the r
 
     With an `Idempotency-Key`, a repeated submission is answered as the first one was and changes nothing.
     """
-    check_batch(form, parts.settings.max_batch)
     command = await _command(key, request, access_key, idempotency_key)
     outcome = cast("Posted", await parts.road.submit(command))
     response.headers["ETag"] = etag(outcome.test.version)
@@ -115,7 +112,7 @@ async def read_log(
     wants_csv = CSV in request.headers.get("accept", "")
     tag = etag(test.version, ".csv" if wants_csv else "")
     headers = {"ETag": tag, "Vary": "Accept"}
-    if (unchanged := not_modified(request, tag)) is not None:
+    if (unchanged := not_modified(request, tag, headers)) is not None:
         return unchanged
     if wants_csv:
         return StreamingResponse(_csv(parts, test, plan), media_type=f"{CSV}; charset=utf-8", headers=headers)
@@ -147,19 +144,6 @@ async def show_path(
     return await reading(lambda: _path(parts, test, plan, query.points))
 
 
-def check_batch(form: ObservationsForm, limit: int) -> None:
-    """
-    Refuse a submission of more observations than are taken at once.
-
-    Raises:
-        RequestProblem: invalid-body, with the limit.
-    """
-    if form.count > limit:
-        pointer = "/values" if form.values else "/observations"
-        fault = Fault(pointer, f"may hold at most {limit} observations; received {form.count}")
-        raise RequestProblem("invalid-body", "The submission is too long; split it.", [fault])
-
-
 async def _command(key: str, request: Request, access_key: AccessKey, idempotency_key: str | None) -> PostObservations:
     strict = cast("StrictRequest", request)
     body = await request.body()
@@ -170,20 +154,25 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
         body_digest=hashlib.sha256(body).hexdigest(),
         actor=access_key.name,
         idempotency_key=idempotency_key,
-        expected_version=expected_version(request),
+        expected_versions=expected_versions(request),
     )
 
 
 def _log_page(parts: Parts, test: SequentialTest, plan: Plan, after: int, limit: int) -> list[LoggedOut]:
-    entries = expanded(procedure_of(plan).family, test, parts.reader.submissions(test.key, after))
+    entries = expanded(procedure_of(plan).family, test, _submissions(parts, test, after))
     return [LoggedOut.of(entry) for entry in islice((e for e in entries if e.sequence > after), limit)]
+
+
+def _submissions(parts: Parts, test: SequentialTest, after: int = 0) -> Iterator[Submission]:
+    """The log as far as this test had come when it was read: what was posted since may have decided it."""
+    return parts.reader.submissions(test.key, after, test.state.sequence)
 
 
 def _csv(parts: Parts, test: SequentialTest, plan: Plan) -> Iterator[str]:
     family = procedure_of(plan).family
     columns = csv_columns(family)
     yield _csv_line(columns)
-    for entry in expanded(family, test, parts.reader.submissions(test.key)):
+    for entry in expanded(family, test, _submissions(parts, test)):
         row = LoggedOut.of(entry).model_dump(mode="json")
         yield _csv_line([_cell(row[column]) for column in columns])
 
@@ -202,5 +191,5 @@ def _cell(value: object) -> str:
 
 def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOut:
     procedure = procedure_of(plan)
-    documents = (document_of(submission) for submission in parts.reader.submissions(test.key))
+    documents = (document_of(submission) for submission in _submissions(parts, test))
     return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, documents, points))

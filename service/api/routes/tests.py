@@ -3,16 +3,17 @@
 from typing import Annotated, cast
 
 from fastapi import APIRouter, Query, Request, Response
-from pydantic import AwareDatetime, BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
-from service.api.conditional import etag, not_modified
+from service.api.conditional import etag, expected_versions, not_modified
 from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import Parts, PartsOf, computing, reading
 from service.api.problems import RequestProblem
+from service.api.schemas.common import Label, Moment, Name, Text
 from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
@@ -34,10 +35,10 @@ class TestsQuery(BaseModel):
 
     decision: Decision | None = None
     kind: SubjectKind | None = None
-    subject: Annotated[str | None, Field(max_length=200, description="Exact name of the subject.")] = None
-    plan: Annotated[str | None, Field(max_length=100)] = None
-    label: Annotated[list[str], Field(max_length=20, description="name:value; all of them must match.")] = []
-    updated_after: AwareDatetime | None = None
+    subject: Annotated[Text | None, Field(description="Exact name of the subject.")] = None
+    plan: Name | None = None
+    label: Annotated[list[Label], Field(max_length=20, description="name:value; all of them must match.")] = []
+    updated_after: Moment | None = None
     limit: Limit = 100
     cursor: Cursor = None
 
@@ -56,17 +57,20 @@ class TestsQuery(BaseModel):
 @router.post(
     "",
     status_code=201,
-    responses=answers_with("invalid-test", "test-differs", has_body=True),
+    responses=answers_with("invalid-test", "test-differs", "version-moved", has_body=True),
     summary="Register a test",
 )
 async def register_test(
     form: TestForm,
+    request: Request,
     response: Response,
     parts: PartsOf,
     key: Annotated[AccessKey, requires(Role.ENGINEER)],
 ) -> TestOut:
     """The same key with the same content answers 200 with the test as it stands; with other content, 409."""
-    command = RegisterTest(form.key, form.plan, form.subject.subject(), form.labels, key.name)
+    command = RegisterTest(
+        form.key, form.plan, form.subject.subject(), form.labels, key.name, expected_versions(request)
+    )
     outcome = cast("RegisteredTest", await parts.road.submit(command))
     response.status_code = 201 if outcome.is_new else 200
     response.headers["Location"] = f"/v1/tests/{outcome.test.key}"

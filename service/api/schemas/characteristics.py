@@ -2,7 +2,7 @@
 
 from typing import Annotated, Any
 
-from pydantic import ConfigDict, Field
+from pydantic import ConfigDict, FailFast, Field
 
 from service.api.schemas.common import Answer, Form, Name, Number, optional, shown_as
 from service.api.schemas.plans import EXAMPLE as PLAN
@@ -70,7 +70,7 @@ class CharacteristicsForm(PlanContentForm):
     )
 
     name: Name | None = None
-    at: Annotated[list[Number], Field(max_length=500)] = Field(default_factory=list)
+    at: Annotated[list[Number], FailFast(), Field(max_length=500)] = Field(default_factory=list)
     suggest_truncation: TruncationQuestionForm | None = Field(None, description="Ask for the smallest truncation.")
     candidates: Annotated[list[CandidateForm], Field(min_length=1, max_length=8)] | None = None
 

@@ -4,7 +4,7 @@ from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
 from typing import Annotated, Any, Self
 
-from pydantic import ConfigDict, Field, StrictBool, model_validator
+from pydantic import ConfigDict, FailFast, Field, StrictBool, StringConstraints, model_validator
 
 from service.api.schemas.common import Answer, Form, Moment, Number, Text, optional, shown_as
 from service.api.schemas.plans import CONTENT as PLAN
@@ -61,6 +61,10 @@ REHEARSAL: dict[str, Any] = {
 }
 
 
+# Blanks around a serial number say nothing, and blanks alone are none.
+Unit = Annotated[Text, StringConstraints(strip_whitespace=True)]
+
+
 class ObservationForm(Form):
     """
     One observation. Which fields mean something depends on the family; absent ones are left out, not null.
@@ -73,7 +77,7 @@ class ObservationForm(Form):
     exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
     failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
-    unit: Text = Field(default_factory=str, description="Serial number; may be counted once in a test.")
+    unit: Unit = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: Moment = Field(
         default_factory=lambda: datetime.min.replace(tzinfo=UTC),
         description="When it was observed, with its time zone (RFC 3339).",
@@ -85,19 +89,15 @@ class ObservationsForm(Form):
 
     model_config = ConfigDict(json_schema_extra={"examples": [*EXAMPLES]})
 
-    values: Annotated[list[Number], Field(min_length=1)] = Field(default_factory=list)
-    observations: Annotated[list[ObservationForm], Field(min_length=1)] = Field(default_factory=list)
+    # One fault is enough to refuse all; naming every bad element of a long list would take minutes.
+    values: Annotated[list[Number], FailFast(), Field(min_length=1)] = Field(default_factory=list)
+    observations: Annotated[list[ObservationForm], FailFast(), Field(min_length=1)] = Field(default_factory=list)
 
     @model_validator(mode="after")
     def _one_form(self) -> Self:
         if len(self.model_fields_set) != 1:
             raise ValueError('give either "values" or "observations"')
         return self
-
-    @property
-    def count(self) -> int:
-        """How many observations there are."""
-        return len(self.values) + len(self.observations)
 
 
 class RehearsalForm(Form):
