@@ -43,7 +43,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         engine = create_engine_for(settings.database_url)
         check_schema(engine)
         computers = ThreadPoolExecutor(COMPUTERS, thread_name_prefix="computer")
-        road = Road(engine, clock, settings.queue_limit, settings.group_limit)
+        road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes)
         app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine), computers)
         road.start()
         try:

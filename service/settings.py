@@ -15,6 +15,7 @@ class Settings(BaseSettings):
     max_body_bytes: int = Field(8 * 1024 * 1024, ge=1024, description="Largest body of a request.")
     max_batch: int = Field(100_000, ge=1, description="Most observations in one submission.")
     queue_limit: int = Field(1000, ge=1, description="Submissions that may wait to be written.")
+    queue_bytes: int = Field(256 * 1024 * 1024, ge=1024, description="Bytes of submissions that may wait.")
     group_limit: int = Field(256, ge=1, description="Submissions committed together.")
     log_level: Literal["DEBUG", "INFO", "WARNING", "ERROR"] = Field("INFO", description="Level of the log.")
 

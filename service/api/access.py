@@ -10,7 +10,7 @@ from fastapi import Depends, Request
 from fastapi.security.utils import get_authorization_scheme_param
 from starlette.types import ASGIApp, Receive, Scope, Send
 
-from service.api.parts import Parts, reading
+from service.api.parts import Parts, looking_up
 from service.api.problems import RequestProblem, response
 from service.domain.access import AccessKey, Role, digest_of
 
@@ -66,5 +66,5 @@ async def _key_of(request: Request, parts: Parts) -> AccessKey | None:
     scheme, secret = get_authorization_scheme_param(request.headers.get("authorization"))
     if scheme.lower() != "bearer" or not secret or len(secret) > LONGEST_SECRET:
         return None
-    key = await reading(lambda: parts.reader.key_with_digest(digest_of(secret)))
+    key = await looking_up(parts, lambda: parts.reader.key_with_digest(digest_of(secret)))
     return key if key is not None and key.is_valid(parts.clock()) else None

@@ -39,6 +39,11 @@ async def reading(work: Callable[[], T]) -> T:
     return await asyncio.to_thread(work)
 
 
+async def looking_up(parts: Parts, work: Callable[[], T]) -> T:
+    """Look up single rows: at once where the database is in this process, else off the event loop."""
+    return work() if parts.reader.looks_up_at_once else await reading(work)
+
+
 async def computing(parts: Parts, work: Callable[[], T]) -> T:
     """Run a long computation on threads of its own, so that neither the event loop nor reads wait for it."""
     return await asyncio.get_running_loop().run_in_executor(parts.computers, work)

@@ -2,7 +2,8 @@
 The road itself: callers wait in a queue, one thread decides and commits what waits as one group.
 
 Nobody is answered before the commit. A refusal disturbs no other command of its group; any other error rolls the
-group back and its members are run one by one, so that only the one at fault fails. Where no transaction can be begun,
+group back and its members are run one by one, so that only the one at fault fails; where another process was in the
+way they are tried again. Tests are locked in the order of their keys. Where no transaction can be begun,
 all of them fail at once: each would only wait for the same lock again. A commit that the database does not confirm is
 never tried again, for it may have happened: its callers are told so. Stopping finishes what was accepted and takes
 nothing new.
@@ -12,7 +13,7 @@ import asyncio
 import logging
 import queue
 import threading
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 
@@ -29,6 +30,7 @@ from service.domain.errors import (
 )
 from service.ingest.commands import Command, Outcome, PostObservations
 from service.ingest.performing import perform
+from service.storage.engine import is_passing
 from service.storage.writer import writing
 
 logger = logging.getLogger(__name__)
@@ -60,6 +62,12 @@ class _Waiting:
     answer: asyncio.Future[Outcome] = field(compare=False)
 
 
+# Bytes of bodies that are committed together; one body may be larger.
+GROUP_BYTES = 16 * 1024 * 1024
+# Times that a command is tried while other processes are in its way.
+MOST_TRIES = 5
+
+
 class _NotBegun(Exception):
     """No transaction could be begun: the database is busy or away."""
 
@@ -74,10 +82,13 @@ Answer = tuple[_Waiting, Outcome | BaseException]
 class Road:
     """A bounded queue, one writer thread, one commit for a group. Start it in a running event loop; then submit."""
 
-    def __init__(self, engine: Engine, clock: Clock, queue_limit: int, group_limit: int) -> None:
+    def __init__(
+        self, engine: Engine, clock: Clock, queue_limit: int, group_limit: int, queue_bytes: int = 2**28
+    ) -> None:
         self._engine = engine
         self._clock = clock
         self._group_limit = group_limit
+        self._queue_bytes, self._waiting_bytes = queue_bytes, 0
         self._waiting: queue.Queue[_Waiting | None] = queue.Queue(queue_limit)
         self._in_progress: set[tuple[str, str]] = set()
         self._thread = threading.Thread(target=self._run, name="writer", daemon=True)
@@ -108,8 +119,12 @@ class Road:
         mark = _mark(command)
         if mark in self._in_progress:
             raise SubmissionInProgress(mark[1])
+        weight = _weight(command)
+        if self._waiting_bytes and self._waiting_bytes + weight > self._queue_bytes:
+            raise QueueFull
         if mark is not None:
             self._in_progress.add(mark)
+        self._waiting_bytes += weight
         try:
             answer: asyncio.Future[Outcome] = asyncio.get_running_loop().create_future()
             self._waiting.put_nowait(_Waiting(command, answer))
@@ -117,6 +132,7 @@ class Road:
         except queue.Full:
             raise QueueFull from None
         finally:
+            self._waiting_bytes -= weight
             if mark is not None:
                 self._in_progress.discard(mark)
 
@@ -129,12 +145,14 @@ class Road:
                 self._carry_out(group)
 
     def _next_group(self) -> tuple[list[_Waiting], bool]:
-        """Wait for one command, then take what else waits up to the limit; false once the end was called."""
+        """Wait for one command, then take what else waits up to the limits; false once the end was called."""
         item = self._waiting.get()
         group: list[_Waiting] = []
+        weight = 0
         while item is not None:
             group.append(item)
-            if len(group) == self._group_limit:
+            weight += _weight(item.command)
+            if len(group) == self._group_limit or weight >= GROUP_BYTES:
                 return group, True
             try:
                 item = self._waiting.get_nowait()
@@ -142,7 +160,7 @@ class Road:
                 return group, True
         return group, False
 
-    def _carry_out(self, group: Sequence[_Waiting]) -> bool:
+    def _carry_out(self, group: Sequence[_Waiting], tries: int = MOST_TRIES) -> bool:
         """
         Run a group in one transaction, or one by one where a member fails it, and answer the callers.
 
@@ -160,6 +178,8 @@ class Road:
         except Exception as error:
             if len(group) > 1:
                 return self._carry_out_one_by_one(group)
+            if is_passing(error) and tries > 1:
+                return self._carry_out(group, tries - 1)
             logger.exception("a command failed")
             answers = [(group[0], _failure(error))]
         self._answer(answers)
@@ -183,11 +203,13 @@ class Road:
         try:
             with writing(self._engine) as writer:
                 is_begun = True
+                writer.expect(*_reads(waiting.command for waiting in group))
                 for waiting in group:
                     try:
                         answers.append((waiting, perform(waiting.command, writer, self._clock())))
                     except DomainError as refusal:
                         answers.append((waiting, refusal))
+                writer.flush()
                 is_performed = True
         except SQLAlchemyError as error:
             if not is_begun:
@@ -207,6 +229,18 @@ def _failure(error: Exception) -> Exception:
     is_passing = isinstance(error, SQLAlchemyError) and not isinstance(error, DataError)
     is_of_the_value = isinstance(error, StatementError) and not isinstance(error, DBAPIError)
     return StorageFailed() if is_passing and not is_of_the_value else error
+
+
+def _weight(command: Command) -> int:
+    """The bytes that a waiting command holds, about."""
+    return len(command.body) if isinstance(command, PostObservations) else 0
+
+
+def _reads(commands: Iterable[Command]) -> tuple[list[str], list[tuple[str, str]]]:
+    """The tests and idempotency keys that a group will ask for."""
+    posts = [command for command in commands if isinstance(command, PostObservations)]
+    keys = [(post.test, post.idempotency_key) for post in posts if post.idempotency_key is not None]
+    return [post.test for post in posts], keys
 
 
 def _mark(command: Command) -> tuple[str, str] | None:

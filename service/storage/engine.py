@@ -9,6 +9,7 @@ from sqlite3 import Connection as SqliteConnection
 
 from sqlalchemy import Connection, Engine, create_engine, event
 from sqlalchemy.engine import make_url
+from sqlalchemy.exc import DBAPIError
 
 LOCK_WAIT_SECONDS = 30.0
 WRITES = "sprt_writes"
@@ -25,6 +26,15 @@ def create_engine_for(url: str) -> Engine:
     return create_engine(target.set(drivername="postgresql+psycopg"), pool_pre_ping=True)
 
 
+# Another transaction was in the way: serialization failure, deadlock, a row that another process inserted just then.
+_PASSING = {"40001", "40P01", "23505"}
+
+
+def is_passing(error: Exception) -> bool:
+    """True where the same transaction may go through when it is tried again at once."""
+    return isinstance(error, DBAPIError) and getattr(error.orig, "sqlstate", None) in _PASSING
+
+
 def is_sqlite(engine: Engine) -> bool:
     """True for SQLite."""
     return engine.dialect.name == "sqlite"
@@ -36,5 +46,8 @@ def _prepare_sqlite(connection: SqliteConnection, _record: object) -> None:
 
 
 def _begin_sqlite(connection: Connection) -> None:
-    writes = connection.get_execution_options().get(WRITES, False)
+    options = connection.get_execution_options()
+    if options.get("isolation_level") == "AUTOCOMMIT":
+        return
+    writes = options.get(WRITES, False)
     connection.exec_driver_sql("BEGIN IMMEDIATE" if writes else "BEGIN")

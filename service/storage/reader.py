@@ -1,21 +1,30 @@
-"""Reads, each in a transaction of its own."""
+"""Reads, each in a transaction of its own; single rows through `lookups`."""
 
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, NamedTuple
 
-from sqlalchemy import Engine, RowMapping, Select, func, select
+from sqlalchemy import Engine, RowMapping, Select, bindparam, func, select
 
 from service.domain.access import AccessKey
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, SubjectKind, Submission
 from service.domain.state import Decision
 from service.storage import rows, tables
+from service.storage.lookups import Lookups
 
 # A page of the log ends with whichever comes first; a single submission may be larger.
 PAGE_SUBMISSIONS = 200
 PAGE_CHARACTERS = 4_000_000
+
+# Plans that are kept at most.
+MOST_PLANS = 1024
+
+_KEY = select(tables.api_keys).where(tables.api_keys.c.digest == bindparam("digest"))
+_PLAN = select(tables.plans).where(tables.plans.c.name == bindparam("name"))
+_TEST = select(tables.tests).where(tables.tests.c.key == bindparam("key"))
+_VERSION = select(tables.tests.c.version).where(tables.tests.c.key == bindparam("key"))
 
 # No test comes so far.
 NO_END = 2**62
@@ -49,10 +58,17 @@ class Reader:
 
     def __init__(self, engine: Engine) -> None:
         self._engine = engine
+        self._lookups = Lookups(engine)
+        self._plans: dict[str, Plan] = {}
+
+    @property
+    def looks_up_at_once(self) -> bool:
+        """True where a look-up is a few microseconds of work in this process, and no wait for another."""
+        return self._lookups.are_local
 
     def key_with_digest(self, digest: str) -> AccessKey | None:
         """The access key with this digest."""
-        row = self._first(select(tables.api_keys).where(tables.api_keys.c.digest == digest))
+        row = self._lookups.first(_KEY, digest=digest)
         return rows.key_of(row) if row is not None else None
 
     def keys(self) -> list[AccessKey]:
@@ -61,9 +77,17 @@ class Reader:
         return [rows.key_of(row) for row in self._all(select(tables.api_keys).order_by(*order))]
 
     def plan(self, name: str) -> Plan | None:
-        """The plan of this name."""
-        row = self._first(select(tables.plans).where(tables.plans.c.name == name))
-        return rows.plan_of(row) if row is not None else None
+        """The plan of this name; kept once read, for plans never change."""
+        plan = self._plans.get(name)
+        if plan is None:
+            row = self._lookups.first(_PLAN, name=name)
+            if row is None:
+                return None
+            plan = rows.plan_of(row)
+            if len(self._plans) >= MOST_PLANS:
+                self._plans.clear()
+            self._plans[name] = plan
+        return plan
 
     def plans(self, after: str | None, limit: int) -> list[Plan]:
         """Plans by name, those after `after`."""
@@ -74,8 +98,13 @@ class Reader:
 
     def test(self, key: str) -> SequentialTest | None:
         """The test of this key."""
-        row = self._first(select(tables.tests).where(tables.tests.c.key == key))
+        row = self._lookups.first(_TEST, key=key)
         return rows.test_of(row) if row is not None else None
+
+    def version(self, key: str) -> int | None:
+        """The version of the test of this key."""
+        row = self._lookups.first(_VERSION, key=key)
+        return None if row is None else int(row["version"])
 
     def tests(self, filters: TestFilters, after: str | None, limit: int) -> list[SequentialTest]:
         """Tests by key that match the filters, those after `after`."""

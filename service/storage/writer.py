@@ -1,11 +1,16 @@
-"""Writes, inside one transaction that `writing` opens and commits."""
+"""
+Writes, inside one transaction that `writing` opens and commits.
 
-from collections.abc import Iterator, Mapping, Sequence
+What a group of commands reads is fetched at once, and what they append to the log is written at once, before the
+commit; in between the group sees its own entries. So a group costs a few statements, however many commands it has.
+"""
+
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from datetime import datetime
-from typing import Any
+from typing import Any, TypeVar
 
-from sqlalchemy import Connection, Engine, RowMapping, Select, bindparam, insert, select, update
+from sqlalchemy import Connection, Engine, Executable, RowMapping, Select, bindparam, insert, select, tuple_, update
 
 from service.domain.access import AccessKey
 from service.domain.plan import Plan
@@ -14,20 +19,28 @@ from service.storage import rows, tables
 from service.storage.engine import WRITES
 
 # Values in one IN list; SQLite takes 999 parameters at the least.
-UNITS_AT_ONCE = 500
+MOST_AT_ONCE = 400
 
 _KEY_NAMED = select(tables.api_keys).where(
     tables.api_keys.c.name == bindparam("name"), tables.api_keys.c.revoked_at.is_(None)
 )
 _PLAN = select(tables.plans).where(tables.plans.c.name == bindparam("name"))
-_TEST = select(tables.tests).where(tables.tests.c.key == bindparam("key")).with_for_update()
+_TESTS = (
+    select(tables.tests)
+    .where(tables.tests.c.key.in_(bindparam("keys", expanding=True)))
+    .order_by(tables.tests.c.key)
+    .with_for_update()
+)
 _REPEATED = select(tables.submissions).where(
-    tables.submissions.c.test == bindparam("test"), tables.submissions.c.idempotency_key == bindparam("idempotency_key")
+    tuple_(tables.submissions.c.test, tables.submissions.c.idempotency_key).in_(bindparam("pairs", expanding=True))
 )
 _UNITS = select(tables.units.c.unit, tables.units.c.sequence).where(
     tables.units.c.test == bindparam("test"), tables.units.c.unit.in_(bindparam("units", expanding=True))
 )
 _SAVE = update(tables.tests).where(tables.tests.c.key == bindparam("which"))
+
+Pair = tuple[str, str]
+T = TypeVar("T")
 
 
 class Writer:
@@ -35,6 +48,25 @@ class Writer:
 
     def __init__(self, connection: Connection) -> None:
         self._connection = connection
+        self._tests: dict[str, SequentialTest] = {}
+        self._saved: set[str] = set()
+        self._repeated: dict[Pair, Submission | None] = {}
+        self._appended: list[Submission] = []
+        self._units: dict[str, dict[str, int]] = {}
+
+    def expect(self, tests: Iterable[str], idempotency_keys: Iterable[Pair]) -> None:
+        """
+        Fetch what the commands of a group will ask for, and lock its tests until the transaction ends.
+
+        Rows are locked in the order of their keys, so that no two processes wait for each other.
+        """
+        for keys in _portions(sorted(set(tests))):
+            found = self._connection.execute(_TESTS, {"keys": keys}).mappings()
+            self._tests.update((row["key"], rows.test_of(row)) for row in found)
+        for pairs in _portions(sorted(set(idempotency_keys))):
+            self._repeated.update(dict.fromkeys(pairs))
+            for row in self._connection.execute(_REPEATED, {"pairs": pairs}).mappings():
+                self._repeated[row["test"], row["idempotency_key"]] = rows.submission_of(row)
 
     def key_named(self, name: str) -> AccessKey | None:
         """The key of this name that is not revoked."""
@@ -60,8 +92,9 @@ class Writer:
 
     def test(self, key: str) -> SequentialTest | None:
         """The test of this key, locked until the transaction ends."""
-        row = self._first(_TEST, key=key)
-        return rows.test_of(row) if row is not None else None
+        if key not in self._tests:
+            self.expect([key], [])
+        return self._tests.get(key)
 
     def add_test(self, test: SequentialTest) -> None:
         """A new test with its labels."""
@@ -72,29 +105,61 @@ class Writer:
 
     def submission_with_idempotency_key(self, test: str, idempotency_key: str) -> Submission | None:
         """The submission that used this idempotency key."""
-        row = self._first(_REPEATED, test=test, idempotency_key=idempotency_key)
-        return rows.submission_of(row) if row is not None else None
+        pair = (test, idempotency_key)
+        if pair not in self._repeated:
+            self.expect([], [pair])
+        return self._repeated[pair]
 
     def known_units(self, test: str, units: Sequence[str]) -> dict[str, int]:
         """Those of the units that the test has, with their sequences."""
-        known: dict[str, int] = {}
-        for start in range(0, len(units), UNITS_AT_ONCE):
-            some = list(units[start : start + UNITS_AT_ONCE])
+        own = self._units.get(test, {})
+        known = {unit: own[unit] for unit in units if unit in own}
+        for some in _portions(units):
             found = self._connection.execute(_UNITS, {"test": test, "units": some})
             known.update((unit, sequence) for unit, sequence in found)
         return known
 
     def append(self, submission: Submission, units: Mapping[str, int]) -> None:
         """A new entry of the log, and its units with their sequences."""
-        self._connection.execute(insert(tables.submissions), rows.row_of_submission(submission))
+        self._appended.append(submission)
+        if submission.idempotency_key is not None:
+            self._repeated[submission.test, submission.idempotency_key] = submission
         if units:
-            new = [{"test": submission.test, "unit": unit, "sequence": at} for unit, at in units.items()]
-            self._connection.execute(insert(tables.units), new)
+            self._units.setdefault(submission.test, {}).update(units)
 
     def save(self, test: SequentialTest) -> None:
         """The test's status, version, time and state, as they are now."""
-        moved = {"status": test.status.value, "version": test.version, "updated_at": test.updated_at}
-        self._connection.execute(_SAVE, {"which": test.key, **moved, **rows.row_of_state(test.state)})
+        self._tests[test.key] = test
+        self._saved.add(test.key)
+
+    def flush(self) -> None:
+        """Write what was appended and saved."""
+        self._many(insert(tables.submissions), [rows.row_of_submission(entry) for entry in self._appended])
+        units = [
+            {"test": test, "unit": unit, "sequence": at}
+            for test, known in self._units.items()
+            for unit, at in known.items()
+        ]
+        self._many(insert(tables.units), units)
+        moved = [self._tests[key] for key in sorted(self._saved)]
+        self._many(
+            _SAVE,
+            [
+                {
+                    "which": test.key,
+                    "status": test.status.value,
+                    "version": test.version,
+                    "updated_at": test.updated_at,
+                    **rows.row_of_state(test.state),
+                }
+                for test in moved
+            ],
+        )
+        self._appended, self._saved, self._units = [], set(), {}
+
+    def _many(self, statement: Executable, parameters: list[dict[str, Any]]) -> None:
+        if parameters:
+            self._connection.execute(statement, parameters)
 
     def _first(self, found: Select[Any], **parameters: str) -> RowMapping | None:
         return self._connection.execute(found, parameters).mappings().first()
@@ -102,6 +167,14 @@ class Writer:
 
 @contextmanager
 def writing(engine: Engine) -> Iterator[Writer]:
-    """A transaction for writing: committed at the end, rolled back on any error."""
+    """A transaction for writing: flushed and committed at the end, rolled back on any error."""
     with engine.connect().execution_options(**{WRITES: True}) as connection, connection.begin():
-        yield Writer(connection)
+        writer = Writer(connection)
+        yield writer
+        writer.flush()
+
+
+def _portions(values: Sequence[T]) -> Iterator[list[T]]:
+    """A sequence in pieces small enough for one IN list."""
+    for start in range(0, len(values), MOST_AT_ONCE):
+        yield list(values[start : start + MOST_AT_ONCE])

@@ -7,9 +7,9 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
-from service.api.conditional import etag, expected_versions, not_modified
+from service.api.conditional import etag, expected_versions
 from service.api.description import answers_with
-from service.api.lookup import known_test
+from service.api.lookup import known_test, unchanged_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import Parts, PartsOf, computing, reading
 from service.api.problems import RequestProblem
@@ -98,11 +98,10 @@ async def list_tests(
 )
 async def show_test(key: str, request: Request, response: Response, parts: PartsOf) -> TestOut | Response:
     """Where a test stands: continue, accept or reject."""
-    test, plan = await known_test(parts, key)
-    tag = etag(test.version)
-    if (unchanged := not_modified(request, tag)) is not None:
+    if (unchanged := await unchanged_test(parts, key, request)) is not None:
         return unchanged
-    response.headers["ETag"] = tag
+    test, plan = await known_test(parts, key)
+    response.headers["ETag"] = etag(test.version)
     return TestOut.of(test, plan)
 
 
@@ -115,11 +114,10 @@ async def show_test(key: str, request: Request, response: Response, parts: Parts
 )
 async def show_outlook(key: str, request: Request, response: Response, parts: PartsOf) -> OutlookOut | Response:
     """The shortest ways to each decision, and exactly what is to be expected from here."""
-    test, plan = await known_test(parts, key)
-    tag = etag(test.version)
-    if (unchanged := not_modified(request, tag)) is not None:
+    if (unchanged := await unchanged_test(parts, key, request)) is not None:
         return unchanged
-    response.headers["ETag"] = tag
+    test, plan = await known_test(parts, key)
+    response.headers["ETag"] = etag(test.version)
     outlook = await computing(parts, lambda: outlook_of(plan.document, test.state))
     return OutlookOut.of(outlook, test.state)
 
