@@ -14,7 +14,7 @@ from service.api.parts import Parts
 from service.api.requests import RequestId
 from service.api.routes import administration, characteristics, health, observations, plans, tests
 from service.ingest.road import Clock, Road, utc_now
-from service.settings import Settings
+from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
 from service.storage.reader import Reader
@@ -28,6 +28,19 @@ DESCRIPTION = (
     "Sequential probability ratio tests: register a lot or an experiment under a plan, post results as they come, "
     "and learn after each whether to continue, accept or reject."
 )
+
+
+def create_served_app() -> FastAPI:
+    """The service as one of several processes builds it, from the environment that they share."""
+    settings = read_settings()
+    set_up_log(settings)
+    return create_app(settings)
+
+
+def set_up_log(settings: Settings) -> None:
+    """One line for each entry on standard error."""
+    logging.basicConfig(level=settings.log_level, format="%(asctime)s %(levelname)s %(name)s %(message)s")
+    logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
 
 
 def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:

@@ -12,6 +12,12 @@ from pathlib import Path
 
 import httpx
 
+from service.domain.access import Role
+from service.ingest.commands import CreateKey, IssuedKey
+from service.ingest.road import perform_now
+from service.storage.engine import create_engine_for
+from service.storage.migrate import upgrade
+
 START_LIMIT_SECONDS = 20.0
 
 
@@ -49,24 +55,35 @@ def command(*arguments: str, database_url: str, **extra: str) -> subprocess.Comp
     )
 
 
+def prepared(database_url: str, names: Mapping[Role, str]) -> dict[str, str]:
+    """Bring a database up to date and make a key for each role; the secrets."""
+    engine = create_engine_for(database_url)
+    upgrade(engine)
+    keys = {}
+    for role, name in names.items():
+        issued = perform_now(engine, CreateKey(name, role))
+        assert isinstance(issued, IssuedKey)
+        keys[role.value] = issued.secret
+    engine.dispose()
+    return keys
+
+
 @contextmanager
 def running(
-    folder: Path, *, key_names: str = "the-{}", database_url: str | None = None, **settings: str
+    folder: Path,
+    *,
+    key_names: str = "the-{}",
+    database_url: str | None = None,
+    arguments: tuple[str, ...] = (),
+    **settings: str,
 ) -> Iterator[Running]:
     """Start the service on a new SQLite file in `folder`, or on an empty database; stop it at the end."""
     database_url = database_url or f"sqlite:///{folder / 'tests.sqlite3'}"
-    migrated = command("migrate", database_url=database_url)
-    assert migrated.returncode == 0, migrated.stderr
-    keys = {}
-    roles = ("viewer", "collector", "engineer", "administrator") if "{}" in key_names else ("engineer",)
-    for role in roles:
-        name = key_names.format(role)
-        made = command("keys", "create", "--role", role, "--name", name, database_url=database_url)
-        assert made.returncode == 0, made.stderr
-        keys[role] = made.stdout.strip()
+    roles = tuple(Role) if "{}" in key_names else (Role.ENGINEER,)
+    keys = prepared(database_url, {role: key_names.format(role) for role in roles})
     port = free_port()
     process = subprocess.Popen(
-        [sys.executable, "-m", "service", "serve", "--port", str(port)],
+        [sys.executable, "-m", "service", "serve", "--port", str(port), *arguments],
         env={**os.environ, "SPRT_DATABASE_URL": database_url, **settings},
         stdout=subprocess.DEVNULL,
         stderr=subprocess.DEVNULL,

@@ -6,7 +6,7 @@ from typing import Annotated
 
 import typer
 
-from service.cli import demo, design, keys, load, migrate, serve
+from service.cli import copying, demo, design, keys, load, migrate, serve
 
 app = typer.Typer(
     name="sprt-monitor",
@@ -36,6 +36,8 @@ app.command("serve")(serve.serve)
 app.command("demo")(demo.demo)
 app.command("design")(design.design)
 app.command("migrate")(migrate.migrate)
+app.command("backup")(copying.backup)
+app.command("copy")(copying.copy)
 app.command("load")(load.load)
 app.add_typer(keys.app, name="keys")
 

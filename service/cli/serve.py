@@ -1,10 +1,10 @@
 """Serve over HTTP."""
 
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from service.cli.failing import clear_failures
+from service.cli.failing import clear_failures, fail
 
 if TYPE_CHECKING:
     from sqlalchemy import Engine
@@ -15,32 +15,42 @@ SHUTDOWN_SECONDS = 10
 def serve(
     host: Annotated[str, typer.Option(help="Address to listen on.")] = "127.0.0.1",
     port: Annotated[int, typer.Option(min=1, max=65535, help="Port to listen on.")] = 8000,
+    workers: Annotated[int, typer.Option(min=1, max=64, help="Processes; more than one needs PostgreSQL.")] = 1,
 ) -> None:
     """Start the service. A new SQLite file sets itself up; a schema that this version does not know is refused."""
-    import logging
-
     import uvicorn
 
-    from service.app import create_app
+    from service.app import create_app, set_up_log
     from service.settings import read_settings
+    from service.storage.engine import is_sqlite
 
     with clear_failures():
         settings = read_settings()
-    logging.basicConfig(level=settings.log_level, format="%(asctime)s %(levelname)s %(name)s %(message)s")
-    logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
+    set_up_log(settings)
     with clear_failures():
-        prepared_engine(settings.database_url).dispose()
-    config = uvicorn.Config(
-        create_app(settings),
-        host=host,
-        port=port,
-        access_log=False,
-        log_level="warning",
-        timeout_graceful_shutdown=SHUTDOWN_SECONDS,
-        server_header=False,
-    )
+        engine = prepared_engine(settings.database_url)
+        engine.dispose()
+    if workers > 1 and is_sqlite(engine):
+        raise fail(
+            "SQLite lets one process write at a time: serve it with one worker, or move to PostgreSQL "
+            "(sprt-monitor copy)."
+        )
+    options: dict[str, Any] = {
+        "host": host,
+        "port": port,
+        "access_log": False,
+        "log_level": "warning",
+        "timeout_graceful_shutdown": SHUTDOWN_SECONDS,
+        "server_header": False,
+    }
+    said = f"Serving on http://{host}:{port} (description: /openapi.json). Stop with Ctrl-C."
+    if workers > 1:
+        typer.echo(said, err=True)
+        uvicorn.run("service.app:create_served_app", factory=True, workers=workers, **options)
+        return
+    config = uvicorn.Config(create_app(settings), **options)
     listening = config.bind_socket()  # ends here where the port is taken
-    typer.echo(f"Serving on http://{host}:{port} (description: /openapi.json). Stop with Ctrl-C.", err=True)
+    typer.echo(said, err=True)
     uvicorn.Server(config).run([listening])
 
 
