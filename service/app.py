@@ -2,7 +2,6 @@
 
 import logging
 from collections.abc import AsyncIterator
-from concurrent.futures import ThreadPoolExecutor
 from contextlib import asynccontextmanager
 
 from fastapi import FastAPI
@@ -10,7 +9,7 @@ from fastapi import FastAPI
 from service.api import problems
 from service.api.access import AccessGuard
 from service.api.description import describe
-from service.api.parts import Parts
+from service.api.parts import Computers, Parts
 from service.api.requests import RequestId
 from service.api.routes import administration, characteristics, health, observations, plans, tests
 from service.ingest.road import Clock, Road, utc_now
@@ -20,7 +19,7 @@ from service.storage.migrate import check_schema
 from service.storage.reader import Reader
 
 # Exact computations that run at once; more wait.
-COMPUTERS = 2
+COMPUTERS, MOST_WAITING = 2, 8
 
 VERSION = "0.1.0"
 
@@ -55,7 +54,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
         engine = create_engine_for(settings.database_url)
         check_schema(engine)
-        computers = ThreadPoolExecutor(COMPUTERS, thread_name_prefix="computer")
+        computers = Computers(COMPUTERS, MOST_WAITING)
         road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes)
         app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine), computers)
         road.start()
@@ -63,7 +62,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
             yield
         finally:
             await road.stop()
-            computers.shutdown(wait=False, cancel_futures=True)
+            computers.stop()
             engine.dispose()
 
     logging.getLogger("service").setLevel(settings.log_level)

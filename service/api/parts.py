@@ -2,12 +2,13 @@
 
 import asyncio
 from collections.abc import Callable
-from concurrent.futures import Executor
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Annotated, TypeVar, cast
 
 from fastapi import Depends, Request
 
+from service.domain.errors import TooManyQuestions
 from service.ingest.road import Clock, Road
 from service.settings import Settings
 from service.storage.reader import Reader
@@ -24,7 +25,7 @@ class Parts:
     road: Road
     clock: Clock
     check_ready: Callable[[], None]
-    computers: Executor
+    computers: "Computers"
 
 
 async def _parts(request: Request) -> Parts:
@@ -44,6 +45,34 @@ async def looking_up(parts: Parts, work: Callable[[], T]) -> T:
     return work() if parts.reader.looks_up_at_once else await reading(work)
 
 
+class Computers:
+    """Threads for long computations, and a short queue before them."""
+
+    def __init__(self, threads: int, most_waiting: int) -> None:
+        self._executor = ThreadPoolExecutor(threads, thread_name_prefix="computer")
+        self._most = threads + most_waiting
+        self._asked = 0
+
+    async def run(self, work: Callable[[], T]) -> T:
+        """
+        Run a computation when its turn comes.
+
+        Raises:
+            TooManyQuestions: So many are waiting that this one would wait too long.
+        """
+        if self._asked >= self._most:
+            raise TooManyQuestions
+        self._asked += 1
+        try:
+            return await asyncio.get_running_loop().run_in_executor(self._executor, work)
+        finally:
+            self._asked -= 1
+
+    def stop(self) -> None:
+        """Drop what waits."""
+        self._executor.shutdown(wait=False, cancel_futures=True)
+
+
 async def computing(parts: Parts, work: Callable[[], T]) -> T:
     """Run a long computation on threads of its own, so that neither the event loop nor reads wait for it."""
-    return await asyncio.get_running_loop().run_in_executor(parts.computers, work)
+    return await parts.computers.run(work)

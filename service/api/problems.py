@@ -165,6 +165,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.VersionMoved: "version-moved",
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",
+    errors.TooManyQuestions: "overloaded",
     errors.StorageFailed: "overloaded",
     errors.OutcomeUnknown: "outcome-unknown",
 }

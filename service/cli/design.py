@@ -14,10 +14,14 @@ if TYPE_CHECKING:
     from service.domain.designing import Suggestion
 
 NONE = "none"
+# Candidates that stand side by side on 80 columns, and the figures that are shown of more.
+MOST_COLUMNS, SHOWN = 4, 6
 
 
 def design(
-    family: Annotated[str, typer.Option(help="bernoulli, poisson, exponential or normal.")] = "bernoulli",
+    family: Annotated[
+        str | None, typer.Option(help="bernoulli (where none is given), poisson, exponential or normal.")
+    ] = None,
     h0: Annotated[float | None, typer.Option(help="Parameter under H0.")] = None,
     h1: Annotated[float | None, typer.Option(help="Parameter under H1.")] = None,
     alpha: Annotated[float | None, typer.Option(help="Producer's risk: P(reject) when H0 is true.")] = None,
@@ -29,7 +33,9 @@ def design(
     truncation: Annotated[
         list[str] | None, typer.Option(help='Units or exposure, or "none"; more than once to compare.')
     ] = None,
-    standard: Annotated[str | None, typer.Option(help="A standard plan, such as MIL-HDBK-781A/III-D.")] = None,
+    standard: Annotated[
+        str | None, typer.Option(help="A standard plan, such as MIL-HDBK-781A/III-D, alone or beside your own.")
+    ] = None,
     scale: Annotated[float | None, typer.Option(help="Lower test mean life, for a reliability standard.")] = None,
     suggest: Annotated[
         float | None, typer.Option(help="Find the smallest truncation that lengthens tests by at most this share.")
@@ -41,33 +47,46 @@ def design(
     from service.domain.designing import suggested_truncation
     from service.domain.errors import Invalid
 
-    stated: dict[str, Any] = {"family": family, "h0": h0, "h1": h1, "alpha": alpha, "beta": beta}
-    if sigma is not None:
-        stated["known"] = {"sigma": sigma}
-    if standard is not None:
-        stated = {"standard": standard, "scale": scale}
-    stated = {name: value for name, value in stated.items() if value is not None}
+    own: dict[str, Any] = {"h0": h0, "h1": h1, "alpha": alpha, "beta": beta}
+    own["known"] = None if sigma is None else {"sigma": sigma}
+    own = {name: value for name, value in own.items() if value is not None}
+    asked_of_own = {"--family": family, "--boundaries": boundaries, "--truncation": truncation, "--suggest": suggest}
+    idle = [option for option, value in asked_of_own.items() if value is not None and standard and not own]
+    if idle:
+        raise fail(f"{', '.join(idle)}: say --h0, --h1, --alpha and --beta of a plan of your own to put beside it.")
+    if scale is not None and standard is None:
+        raise fail("--scale: means nothing without --standard.")
+    if standard is None or own:
+        own["family"] = family or "bernoulli"
     console = Console(highlight=False)
     try:
-        candidates = _candidates(stated, boundaries or ["wald"], truncation or [NONE])
+        candidates = _candidates(own, boundaries or ["wald"], truncation or [NONE], _standard(standard, scale))
+        suggestion = None if suggest is None else suggested_truncation(own, suggest)
         _show(console, candidates)
-        if suggest is not None:
-            _show_suggestion(console, suggested_truncation(stated, suggest))
+        if suggestion is not None:
+            _show_suggestion(console, suggestion)
     except Invalid as error:
         faults = "".join(f"\n  {_option(fault.pointer)}: {fault.detail}" for fault in error.faults)
         raise fail(f"{error}{faults}") from None
 
 
-def _candidates(stated: dict[str, Any], rules: list[str], truncations: list[str]) -> list[tuple[str, str]]:
-    """A name and a checked document for each combination of a boundary rule and a truncation."""
+def _standard(name: str | None, scale: float | None) -> dict[str, Any]:
+    """The content that stands for a standard; empty for none."""
+    given = {"standard": name, "scale": scale}
+    return {} if name is None else {key: value for key, value in given.items() if value is not None}
+
+
+def _candidates(
+    own: dict[str, Any], rules: list[str], truncations: list[str], standard: dict[str, Any]
+) -> list[tuple[str, str]]:
+    """A name and a checked document for each combination of a boundary rule and a truncation, and for the standard."""
     from service.cli.drawing import LETTERS
     from service.domain.checking import checked_candidates
 
-    if "standard" in stated:
-        return [(stated["standard"], *checked_candidates([stated]))]
-    if len(rules) * len(truncations) > len(LETTERS):
-        raise fail(f"At most {len(LETTERS)} candidates; asked for {len(rules)} x {len(truncations)}.")
-    named = [(_name(rule, wall), _content(stated, rule, wall)) for rule in rules for wall in truncations]
+    named = [(_name(rule, wall), _content(own, rule, wall)) for rule in rules for wall in truncations if own]
+    named += [(standard["standard"], standard)] if standard else []
+    if len(named) > len(LETTERS):
+        raise fail(f"At most {len(LETTERS)} candidates; asked for {len(named)}.")
     documents = checked_candidates([content for _, content in named])
     return [(name, document) for (name, _), document in zip(named, documents, strict=True)]
 
@@ -97,34 +116,45 @@ def _show(console: "Console", candidates: list[tuple[str, str]]) -> None:
 
     hypotheses = procedure_of_document(candidates[0][1]).hypotheses
     promises = [(name, document, promise_of(document, hypotheses)) for name, document in candidates]
+    console.print("What the candidates really promise")
     console.print(_table(promises))
     fixed = promises[0][2].fixed_sample
     if fixed is not None:
-        console.print(f"Smallest fixed sample with the same risks: {fixed.size:.6g}, accept {_limit(fixed)}.")
+        unit = "units" if promises[0][2].points[0].exposure is None else "of exposure"
+        console.print(f"Smallest fixed sample with the same risks: {fixed.size:.6g} {unit}, accept {_limit(fixed)}.")
     grid = common_grid([document for _, document in candidates])
     curves = [promise_of(document, grid).points for _, document in candidates]
-    console.print("\nProbability of acceptance against the true parameter")
+    h0, h1 = hypotheses
+    console.print(f"\nProbability of acceptance against the true parameter; h0 {h0:.10g}, h1 {h1:.10g}; * several")
     for line in drawn(grid, [[point.probability_of_acceptance for point in points] for points in curves], 1.0):
         console.print(line)
     averages = [[_progress(point) for point in points] for points in curves]
-    console.print("\nAverage sample number, or exposure, against the true parameter")
+    what = "sample number" if curves[0][0].exposure is None else "exposure"
+    console.print(f"\nAverage {what} against the true parameter")
     for line in drawn(grid, averages, max(map(max, averages))):
         console.print(line)
 
 
 def _table(promises: "list[tuple[str, str, Promise]]") -> "Table":
-    """A column for each candidate."""
+    """A column for each candidate; where they are many, a row for each."""
     from rich.table import Table
 
     from service.cli.drawing import LETTERS
 
-    table = Table(title="What the candidates really promise", title_justify="left")
+    table = Table()
+    if len(promises) > MOST_COLUMNS:
+        every = [_column(document, promise) for _, document, promise in promises]
+        for heading in ("", *list(every[0])[:SHOWN]):
+            table.add_column(heading.replace(" at ", "\nat ").replace(" by, ", " by,\n"), justify="right")
+        for letter, (name, _, _), column in zip(LETTERS, promises, every, strict=False):
+            table.add_row(f"{letter}: {name}", *list(column.values())[:SHOWN])
+        return table
     table.add_column("exact figures")
     for letter, (name, _, _) in zip(LETTERS, promises, strict=False):
         table.add_column(f"{letter}: {name}", justify="right")
     columns = [_column(document, promise) for _, document, promise in promises]
-    for heading in columns[0]:
-        table.add_row(heading, *(column[heading] for column in columns))
+    for heading in dict.fromkeys(heading for column in columns for heading in column):
+        table.add_row(heading, *(column.get(heading, "") for column in columns))
     return table
 
 
@@ -149,9 +179,9 @@ def _column(document: str, promise: "Promise") -> dict[str, str]:
     down, up = ("-", "+") if procedure.ratio.is_upward else ("+", "-")
     return {
         **figures,
-        "slope": f"{lines.slope:.6g}",
-        "accept line": f"{down}{lines.accept_intercept:.5g}",
-        "reject line": f"{up}{lines.reject_intercept:.5g}",
+        "line: n times": f"{lines.slope:.10g}",
+        "accept: plus": f"{down}{lines.accept_intercept:.5g}",
+        "reject: plus": f"{up}{lines.reject_intercept:.5g}",
     }
 
 
@@ -159,7 +189,7 @@ def _show_suggestion(console: "Console", suggestion: "Suggestion") -> None:
     unit = "units" if suggestion.axis == "sample_number" else "of exposure"
     console.print(
         f"\nSmallest truncation: {suggestion.at:.6g} {unit}, calibrated, lengthens tests by "
-        f"{100 * suggestion.inflation:.2f} % at most; average {suggestion.average_at_h0:.6g} at h0, "
+        f"{100 * suggestion.inflation:.3g} % at most; average {suggestion.average_at_h0:.6g} at h0, "
         f"{suggestion.average_at_h1:.6g} at h1; alpha {suggestion.attained.alpha:.5f}, "
         f"beta {suggestion.attained.beta:.5f}."
     )
@@ -176,7 +206,8 @@ def _quantile(point: "Point") -> float:
 
 
 def _limit(fixed: Any) -> str:  # noqa: ANN401 - a value of the domain, which is imported late
-    return f"{'at most' if fixed.accepts_at_most else 'at least'} {fixed.acceptance_limit:.6g}"
+    of = "" if float(fixed.acceptance_limit).is_integer() else "a sum of "
+    return f"{of}{'at most' if fixed.accepts_at_most else 'at least'} {fixed.acceptance_limit:.10g}"
 
 
 def _option(pointer: str) -> str:

@@ -26,7 +26,7 @@ def drawn(parameters: Sequence[float], curves: Sequence[Sequence[float]], top: f
         level = top * (HEIGHT - 1 - row) / (HEIGHT - 1)
         label = f"{level:8.4g}" if row % 3 == 0 or row == HEIGHT - 1 else " " * 8
         lines.append(f"{label} |{''.join(cells)}")
-    ends = f"{parameters[0]:.4g}", f"{parameters[-1]:.4g}"
+    ends = f"{parameters[0]:.10g}", f"{parameters[-1]:.10g}"
     lines.append(" " * 9 + "+" + "-" * WIDTH)
     lines.append(" " * 10 + ends[0] + " " * (WIDTH - len(ends[0]) - len(ends[1])) + ends[1])
     return lines

@@ -7,14 +7,15 @@ import numpy as np
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan
 from service.domain.families.base import ORIGIN, Start
 from service.domain.procedure import Content, Procedure, with_thresholds
-from service.sequential import calibration
+from service.sequential import boundaries, calibration
 from service.sequential.boundaries import Thresholds
 from service.sequential.calibration import Risks, RisksNotMet
 from service.sequential.decision import Decision
 from service.sequential.exact.characteristics import Characteristics, TooMuchWork
 
-# Steps that one calibration may take in all; a usual one takes a few million.
-MOST_WORK = 1_500_000_000
+# Multiplications that one calibration may take in all, and computations that it takes at the least.
+MOST_WORK = 600_000_000
+FEWEST_TRIES = 12
 
 
 def calibrated(content: Content) -> Thresholds:
@@ -41,6 +42,10 @@ def calibrated(content: Content) -> Thresholds:
         return risks_of(procedure, found)
 
     stated = Risks(content["alpha"], content["beta"])
+    # One computation between limits that are surely wide enough tells whether all of them can be paid for.
+    risks_at(boundaries.strict(stated.alpha, stated.beta))
+    if FEWEST_TRIES * spent > MOST_WORK:
+        raise ComputationTooLarge(f"{MOST_WORK} multiplications")
     procedure = with_thresholds(content, Thresholds(-1.0, 1.0))
     find: Callable[[calibration.RisksAt, Risks], Thresholds] = (
         calibration.smallest if procedure.family.has_stepwise_risks else calibration.matching

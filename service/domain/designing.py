@@ -15,7 +15,7 @@ from service.sequential.exact.characteristics import Characteristics
 
 LARGEST_INFLATION = 1.0
 # Truncations tried in one search.
-MOST_TRIES = 60
+MOST_TRIES = 40
 # Where totals are whole numbers a smaller truncation may do though one above it does not; so many more are looked at.
 FURTHER_DOWN = 6
 # A truncation by time is found to three digits.

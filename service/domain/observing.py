@@ -17,6 +17,7 @@ from service.domain.families import Increments
 from service.domain.procedure import Procedure
 from service.domain.state import Decided, State, Sum
 from service.sequential.double import Double, FloatArray, running_sum
+from service.sequential.tables import UnitTable
 from service.sequential.walk import Exit, first_exit_at_reports, first_exit_in_time
 
 # Whole numbers up to here are exact in a double.
@@ -64,6 +65,7 @@ def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at:
     if state.is_decided:
         return replace(state, sequence=state.sequence + count, overrun=state.overrun + count)
     walk = walk_from(procedure, state, increments)
+    _check_rows(procedure, state, walk)
     exit_ = first_exit(procedure, walk, increments)
     if exit_ is None:
         return replace(_moved(procedure, state, increments, walk.end), sequence=state.sequence + count)
@@ -121,6 +123,23 @@ def _decided(procedure: Procedure, before: State, moved: State, exit_: Exit, at:
         at=at,
         cause=exit_.cause,
     )
+
+
+def _check_rows(procedure: Procedure, state: State, walk: Walk) -> None:
+    """No group may pass over a row of a table: what would have been decided there would never be known."""
+    region = procedure.region
+    if not isinstance(region, UnitTable):
+        return
+    ends = walk.progress.value
+    begins = np.concatenate([[float(state.sample_number)], ends[:-1]])
+    rows = np.array(region.sample_numbers, float)
+    next_row = rows[np.minimum(np.searchsorted(rows, begins, side="right"), len(rows) - 1)]
+    passed = np.flatnonzero((ends > next_row) & (begins < next_row))
+    if passed.size:
+        i = int(passed[0])
+        where = f"{next_row[i] - begins[i]:.0f} units lead to sample number {next_row[i]:.0f}"
+        rule = f"a group may not pass over a row of the table: {where}"
+        raise InvalidObservations([Fault(f"/observations/{i}/size", rule)])
 
 
 def _check_size(procedure: Procedure, progress: FloatArray, total: FloatArray) -> None:

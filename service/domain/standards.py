@@ -63,7 +63,8 @@ def expanded(content: Content) -> dict[str, Any]:
         return dict(content)
     standard = {entry.name: entry for entry in catalogue()}.get(content["standard"])
     if standard is None:
-        rule = f"must be one of the catalogue's (GET /v1/standard-plans); received {content['standard']!r}"
+        names = ", ".join(entry.name for entry in catalogue())
+        rule = f"must be one of {names}; received {content['standard']!r}"
         raise InvalidPlan([Fault("/standard", rule)])
     _check_scale(standard, content.get("scale"))
     stated = _scaled(standard, content.get("scale", 1.0))

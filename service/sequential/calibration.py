@@ -9,7 +9,7 @@ found from the inside: each limit in turn is let out just as far as its risk ask
 moves.
 Each turn is a bracketed search on the logarithm of the risk, which falls nearly linearly with the limit. Where the
 risks are continuous the same is solved by a quasi-Newton method on logarithms first.
-Accuracy: the limits to 1e-10 relative, or to the very region where risks move in steps.
+Accuracy: the limits to 1e-8 relative, or to the very region where risks move in steps.
 Cost: some tens of exact computations; a few hundred where the risks move in steps.
 Source: the requirement is that of Wald (1947), Sequential Analysis, section 3.3, taken exactly; the lattice argument is
 Tarski's (1955), Pacific Journal of Mathematics 5, 285-309.
@@ -32,7 +32,7 @@ CLOSE = 1e-9
 INNERMOST, OUTERMOST = 1e-6, 4.0
 # How near each turn comes to where a risk stops exceeding the stated one, relative to the strict limits. All but the
 # last stay on the inner side, as coming from the inside asks.
-RESOLUTIONS = (1e-2, 1e-4, 1e-7, 1e-10)
+RESOLUTIONS = (1e-2, 1e-4, 1e-6, 1e-8)
 MOST_TURNS = 60
 
 
@@ -75,16 +75,20 @@ def matching(risks_at: RisksAt, stated: Risks) -> Thresholds:
         found = risks_at(_thresholds(within))
         return np.log(np.maximum([found.alpha, found.beta], 1e-300)) - aim
 
+    def solved(start: FloatArray) -> Thresholds | None:
+        found = root(misses, start, method="hybr", options={"xtol": 1e-13, "maxfev": 60})  # type: ignore[call-overload] # shapes
+        is_inside = np.all(found.x <= scale + math.log(OUTERMOST))
+        return _thresholds(found.x) if is_inside and np.all(np.abs(misses(found.x)) < CLOSE) else None
+
     # Overshoot lets limits be about half a nat nearer than the strict ones.
-    start = np.log(np.maximum(np.exp(scale) - 0.6, 0.3 * np.exp(scale)))
-    solved = root(misses, start, method="hybr", options={"xtol": 1e-13, "maxfev": 60})  # type: ignore[call-overload] # shapes
-    if np.all(solved.x <= scale + math.log(OUTERMOST)) and np.all(np.abs(misses(solved.x)) < CLOSE):
-        return _thresholds(solved.x)
+    near = solved(np.log(np.maximum(np.exp(scale) - 0.6, 0.3 * np.exp(scale))))
+    if near is not None:
+        return near
     found = smallest(risks_at, stated)
-    attained = risks_at(found)
-    if max(abs(attained.alpha / stated.alpha - 1.0), abs(attained.beta / stated.beta - 1.0)) > 10.0 * CLOSE:
-        raise RisksNotMet(attained)
-    return found
+    polished = solved(np.log([-found.accept, found.reject]))
+    if polished is None:
+        raise RisksNotMet(risks_at(found))
+    return polished
 
 
 def smallest(risks_at: RisksAt, stated: Risks) -> Thresholds:

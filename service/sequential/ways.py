@@ -20,14 +20,22 @@ FURTHEST = 10_000_000
 SMALLEST_BLOCK, LARGEST_BLOCK = 64, 65_536
 
 
-def looks_to_lower(region: Region, progress: float, total: float, step: float) -> int | None:
-    """The fewest further looks, `step` apart, after which an unchanged total ends below; None where it never does."""
-    return _looks(region, progress, total, step, rise=0.0)
+def looks_to_lower(region: Region, progress: float, total: float, step: float) -> tuple[int, float] | None:
+    """
+    The fewest further looks, `step` apart, after which an unchanged total ends below, and how much it may rise
+    meanwhile; None where it never does.
+    """
+    found = _looks(region, progress, total, step, rise=0.0)
+    return None if found is None else (found[0], found[1] - total)
 
 
-def looks_to_upper(region: Region, progress: float, total: float, rise: float) -> int | None:
-    """The fewest further looks, one unit apart, after which a total that rises at each ends above; None if never."""
-    return _looks(region, progress, total, 1.0, rise)
+def looks_to_upper(region: Region, progress: float, total: float, rise: float) -> tuple[int, float] | None:
+    """
+    The fewest further looks, one unit apart, after which a total that rises at each ends above, and by how much it must
+    rise at the least until then; None where it never does.
+    """
+    found = _looks(region, progress, total, 1.0, rise)
+    return None if found is None else (found[0], max(0.0, found[1] - total))
 
 
 def time_to_lower(region: Region, progress: float, total: float) -> float | None:
@@ -60,7 +68,7 @@ def jump_to_upper(region: Region, progress: float, total: float) -> tuple[int, f
         increase, block = increase + block, min(2 * block, LARGEST_BLOCK)
 
 
-def _looks(region: Region, progress: float, total: float, step: float, rise: float) -> int | None:
+def _looks(region: Region, progress: float, total: float, step: float, rise: float) -> tuple[int, float] | None:
     last = FURTHEST if region.wall is None else math.ceil((region.wall.progress - progress) / step * (1.0 - 1e-12))
     begin, block = 1, SMALLEST_BLOCK
     wanted = BELOW if rise == 0.0 else ABOVE
@@ -72,6 +80,8 @@ def _looks(region: Region, progress: float, total: float, step: float, rise: flo
         ends = np.flatnonzero(below | above)
         if ends.size:
             first = int(ends[0])
-            return begin + first if (below if wanted == BELOW else above)[first] else None
+            if not (below if wanted == BELOW else above)[first]:
+                return None
+            return begin + first, float((limits.lower if wanted == BELOW else limits.upper)[first])
         begin, block = begin + len(looks), min(2 * block, LARGEST_BLOCK)
     return None

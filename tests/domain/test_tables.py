@@ -5,6 +5,7 @@ import pytest
 
 from service.domain.characteristics import promise_of
 from service.domain.checking import checked_content
+from service.domain.errors import InvalidObservations
 from service.domain.observing import observe
 from service.domain.procedure import procedure_of_document
 from service.domain.state import State
@@ -86,7 +87,13 @@ def test_observations_are_judged_by_the_rows_alone() -> None:
         assert (state.decision, state.decided.sample_number) == expected
 
 
-def test_a_group_past_the_last_row_is_judged_by_it() -> None:
+def test_no_group_passes_over_a_row() -> None:
+    """What would have been decided at the row could never be known, and the risks of the table would not hold."""
     procedure = procedure_of_document(checked_content(VACCINE))
-    state = observe(procedure, State(), {"observations": [{"value": 60, "size": 170}]}, NOW)
-    assert (state.decision, state.sample_number) == ("accept", 170)
+    groups = [{"value": 10, "size": 30}, {"value": 0, "size": 1}, {"value": 1, "size": 2}]
+    with pytest.raises(InvalidObservations) as caught:
+        observe(procedure, State(), {"observations": groups}, NOW)
+    assert caught.value.faults[0].pointer == "/observations/2/size"
+    assert "1 units lead to sample number 32" in caught.value.faults[0].detail
+    state = observe(procedure, State(), {"observations": [{"value": 10, "size": 32}, {"value": 1, "size": 30}]}, NOW)
+    assert (state.decision, state.sample_number) == ("reject", 62)

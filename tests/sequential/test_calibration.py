@@ -7,8 +7,8 @@ import numpy as np
 import pytest
 
 from service.sequential import likelihood
-from service.sequential.boundaries import Thresholds
-from service.sequential.calibration import Risks, RisksAt, RisksNotMet, matching, smallest
+from service.sequential.boundaries import Thresholds, strict
+from service.sequential.calibration import RESOLUTIONS, Risks, RisksAt, RisksNotMet, matching, smallest
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.exact.processes import Failures, Units
@@ -55,9 +55,9 @@ def test_continuous_risks_are_met_to_eight_digits(risks_at: RisksAt, alpha: floa
 
 def test_both_ways_of_finding_continuous_thresholds_agree() -> None:
     risks_at, stated = measurements(1.0, None), Risks(0.05, 0.10)
-    first, second = matching(risks_at, stated), smallest(risks_at, stated)
-    assert first.accept == pytest.approx(second.accept, rel=1e-8)
-    assert first.reject == pytest.approx(second.reject, rel=1e-8)
+    first, second, limits = matching(risks_at, stated), smallest(risks_at, stated), strict(0.05, 0.10)
+    assert first.accept == pytest.approx(second.accept, abs=RESOLUTIONS[-1] * -limits.accept)
+    assert first.reject == pytest.approx(second.reject, abs=RESOLUTIONS[-1] * limits.reject)
 
 
 @pytest.mark.parametrize(

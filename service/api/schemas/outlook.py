@@ -38,7 +38,7 @@ class WayOut(Answer):
 
     observations: int | None = Field(description="Units or reports that it takes; null where time alone does it.")
     exposure: float | None = Field(description="Further exposure: what it takes, or what there may be at most.")
-    total: float = Field(description="By how much the total must change.")
+    total: float = Field(description="By how much the total may rise at most, or must at least.")
     words: str
 
 

@@ -137,7 +137,7 @@ class PlanOut(Answer):
     beta: float
     boundaries: str
     statistic: str
-    truncation: dict[str, float] | None
+    truncation: dict[str, int | float] | None
     known: dict[str, float] | None
     thresholds: ThresholdsOut | None = Field(description="Null where the limits are a table's.")
     lines: LinesOut | None = Field(description="Null where straight lines do not bound the region.")

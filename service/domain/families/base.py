@@ -49,7 +49,7 @@ class Way:
     Attributes:
         observations: Units or reports that it takes, None where time alone does it.
         exposure: Further exposure: as much as it takes, or as much as there may be at most.
-        total: By how much the total must change.
+        total: By how much the total may rise at most (towards the lower limit) or must rise at least.
         words: The same for people.
     """
 

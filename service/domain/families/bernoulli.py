@@ -63,8 +63,8 @@ class Bernoulli(Family):
         down = looks_to_lower(region, start.progress, start.total, 1.0)
         up = looks_to_upper(region, start.progress, start.total, 1.0)
         return (
-            None if down is None else Way(down, None, 0.0, plural(down, "conforming unit")),
-            None if up is None else Way(up, None, float(up), plural(up, "nonconforming unit")),
+            None if down is None else Way(down[0], None, down[1], _with_at_most(*down)),
+            None if up is None else Way(up[0], None, up[1], _with_at_least(*up)),
         )
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
@@ -91,3 +91,19 @@ class Bernoulli(Family):
         refuse(whole_numbers(value, 0))
         refuse(value.require(value.values <= size.values, "must not exceed the size of its group"))
         return Increments(size.values.astype(np.int64), size.values, value.values)
+
+
+def _with_at_most(units: int, nonconforming: float) -> str:
+    """Units to come of which few enough are nonconforming."""
+    if nonconforming == 0:
+        return plural(units, "conforming unit")
+    return f"{plural(units, 'unit')} with at most {nonconforming:.0f} nonconforming"
+
+
+def _with_at_least(units: int, nonconforming: float) -> str:
+    """Units to come of which enough are nonconforming."""
+    if nonconforming == units:
+        return plural(units, "nonconforming unit")
+    if nonconforming == 0:
+        return f"{plural(units, 'unit')}, whatever they show"
+    return f"{plural(units, 'unit')} with at least {nonconforming:.0f} nonconforming"

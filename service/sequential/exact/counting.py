@@ -24,7 +24,7 @@ from service.sequential.exact.stretches import NO_CUT, Stretch, stretches_of_loo
 from service.sequential.region import Region
 
 # Multiplications of one computation, and totals that it follows at once.
-MOST_WORK = 2_000_000_000
+MOST_WORK = 800_000_000
 WIDEST = 4_000
 # A stretch costs about as much as so many multiplications, however narrow it is.
 STRETCH_WORK = 2_000
@@ -133,9 +133,8 @@ class _Course:
         left_out = rest * (1.0 + self._time / max(float(np.min(self._mean)), 1e-300)) if rest else 0.0
         bound = left_out + (self._stretches + 1) * 8.0 * float(np.finfo(float).eps)
         deviation = scale * spread(self._mean, self._second)
-        work = self._work + STRETCH_WORK * self._stretches
         quantiles = scale * self._quantiles
-        return Characteristics(self._below, self._above, scale * self._mean, deviation, quantiles, bound, work)
+        return Characteristics(self._below, self._above, scale * self._mean, deviation, quantiles, bound, self._work)
 
     def _width(self, stretch: Stretch) -> int:
         """The totals that can go on during a stretch, from the lowest; counts the work too."""
@@ -146,7 +145,7 @@ class _Course:
             room = max(0, stretch.room - self._lowest)
             width = room if self._process.largest is None else min(width, room)
         self._stretches += 1
-        self._work += self._process.points * width * count
+        self._work += self._process.points * width * count + STRETCH_WORK
         if width > WIDEST:
             raise TooMuchWork(WIDEST, "totals at once")
         if self._work > MOST_WORK:

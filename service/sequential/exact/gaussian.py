@@ -24,6 +24,8 @@ from service.sequential.region import StraightRegion
 MOST_POINTS = 1_200
 # A factor of more than exp(12) between the ends of the region would cost digits.
 LARGEST_TILT = 12.0
+# A larger drift leaves no probability of a second step that floating point could hold.
+LARGEST_DRIFT = 30.0
 # Multiplications for each cube of the points, about.
 WORK = 20
 
@@ -70,7 +72,8 @@ def _nodes(strip: Strip) -> tuple[int, int]:
 
 def _figures(strip: Strip, nodes: int, drifts: FloatArray, start: float, last: int | None) -> Figures:
     """Through the modes where the tilt is mild, step by step elsewhere."""
-    is_mild = np.abs(drifts) * max(strip.high - start, start - strip.low) <= LARGEST_TILT
+    tilt = np.abs(drifts) * max(strip.high - start, start - strip.low)
+    is_mild = (tilt <= LARGEST_TILT) & (np.abs(drifts) <= LARGEST_DRIFT)
     if np.all(is_mild):
         return by_modes(strip, nodes, drifts, start, last)
     if not np.any(is_mild):

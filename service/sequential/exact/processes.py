@@ -21,6 +21,7 @@ from service.sequential.exact.characteristics import TooMuchWork
 
 # Terms added for the reports of one stretch.
 MOST_TERMS = 10_000_000
+TINY = 1e-100
 
 
 class Process(Protocol):
@@ -96,7 +97,8 @@ class Units:
         p = np.broadcast_to(self._p, shape)
         stay, moment = np.full(shape, units), np.full(shape, units * (units - 1.0) / 2.0)
         # The unit T at which the reach is passed is negative binomial; wanted are E[min(T, units)] and its second kin.
-        passed = (reach < units) & (p > 0.0)
+        # A chance too small to square never comes to anything.
+        passed = (reach < units) & (p > TINY)
         r, q = reach[passed], p[passed]
         never = 1.0 - betainc(r + 1.0, units - r, q)
         first = (r + 1.0) / q * betainc(r + 2.0, units - r, q) + units * never
