@@ -11,6 +11,10 @@ from tests.postgres import postgres_server
 from tests.running import Running, running
 
 
+def pytest_addoption(parser: pytest.Parser) -> None:
+    parser.addoption("--long", action="store_true", help="Run the long forms of the fault tests.")
+
+
 @pytest.fixture(scope="session")
 def service(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Running]:
     """One running service for the whole session; tests keep apart by names of their own."""

@@ -20,10 +20,46 @@ from typing import Any
 
 from sqlalchemy import create_engine, text
 from sqlalchemy.engine import URL, make_url
+from sqlalchemy.pool import NullPool
 
 from tests.running import free_port
 
 _numbers = itertools.count(1)
+
+
+class Server:
+    """A server of our own, which may be stopped and started again at the same address."""
+
+    def __init__(self, home: Path) -> None:
+        self._home, self._identity = home, _identity(home)
+        self._programs = _programs(home, self._identity)
+        self._port, self._data = free_port(), home / "data"
+        self.url = URL.create("postgresql", "sprt", host="127.0.0.1", port=self._port, database="postgres")
+        initdb = [self._programs / "initdb", "-D", self._data, "-U", "sprt", "-A", "trust", "-E", "UTF8", "--no-sync"]
+        _run(initdb, self._identity)
+
+    def start(self) -> None:
+        options = f"-p {self._port} -c listen_addresses=127.0.0.1 -c unix_socket_directories= -c fsync=off"
+        waiting = ["-l", self._home / "log", "-w", "-t", "30", "-o", options]
+        _run([self._programs / "pg_ctl", "-D", self._data, *waiting, "start"], self._identity)
+
+    def stop(self) -> None:
+        _run([self._programs / "pg_ctl", "-D", self._data, "-m", "immediate", "stop"], self._identity)
+
+
+@contextmanager
+def own_server() -> Iterator[Server]:
+    """A running server that nothing else uses."""
+    home = Path(tempfile.mkdtemp(prefix="sprt-tests-postgres-"))
+    try:
+        server = Server(home)
+        server.start()
+        try:
+            yield server
+        finally:
+            server.stop()
+    finally:
+        shutil.rmtree(home, ignore_errors=True)
 
 
 @contextmanager
@@ -33,29 +69,15 @@ def postgres_server() -> Iterator[URL]:
     if given:
         yield make_url(given)
         return
-    home = Path(tempfile.mkdtemp(prefix="sprt-tests-postgres-"))
-    try:
-        identity = _identity(home)
-        programs = _programs(home, identity)
-        port = free_port()
-        data = home / "data"
-        _run([programs / "initdb", "-D", data, "-U", "sprt", "-A", "trust", "-E", "UTF8", "--no-sync"], identity)
-        options = f"-p {port} -c listen_addresses=127.0.0.1 -c unix_socket_directories= -c fsync=off"
-        log = home / "log"
-        _run([programs / "pg_ctl", "-D", data, "-l", log, "-w", "-t", "30", "-o", options, "start"], identity)
-        try:
-            yield URL.create("postgresql", "sprt", host="127.0.0.1", port=port, database="postgres")
-        finally:
-            _run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], identity)
-    finally:
-        shutil.rmtree(home, ignore_errors=True)
+    with own_server() as server:
+        yield server.url
 
 
 @contextmanager
 def fresh_database(server: URL) -> Iterator[str]:
     """A new, empty database on the server; dropped at the end."""
     name = f"sprt_{os.getpid()}_{next(_numbers)}_{int(time.time())}"
-    admin = create_engine(server.set(drivername="postgresql+psycopg"), isolation_level="AUTOCOMMIT")
+    admin = create_engine(server.set(drivername="postgresql+psycopg"), isolation_level="AUTOCOMMIT", poolclass=NullPool)
     with admin.connect() as connection:
         connection.execute(text(f'CREATE DATABASE "{name}"'))
     try:

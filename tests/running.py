@@ -90,14 +90,15 @@ def running(
     )
     try:
         url = f"http://127.0.0.1:{port}"
-        _wait_until_ready(url, process)
+        wait_until_ready(url, process)
         yield Running(url, database_url, keys, process)
     finally:
         process.terminate()
         process.wait(20)
 
 
-def _wait_until_ready(url: str, process: "subprocess.Popen[bytes]") -> None:
+def wait_until_ready(url: str, process: "subprocess.Popen[bytes]") -> None:
+    """Ask until the service takes results."""
     deadline = time.monotonic() + START_LIMIT_SECONDS
     while time.monotonic() < deadline:
         assert process.poll() is None, "the service ended at once"

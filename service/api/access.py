@@ -11,8 +11,9 @@ from fastapi.security.utils import get_authorization_scheme_param
 from starlette.types import ASGIApp, Receive, Scope, Send
 
 from service.api.parts import Parts, looking_up
-from service.api.problems import RequestProblem, response
+from service.api.problems import RequestProblem, response, response_to
 from service.domain.access import AccessKey, Role, digest_of
+from service.domain.errors import DomainError
 
 GUARDED = "/v1"
 LONGEST_SECRET = 200
@@ -30,7 +31,11 @@ class AccessGuard:
             await self._app(scope, receive, send)
             return
         parts = cast("Parts", scope["app"].state.parts)
-        key = await _key_of(Request(scope), parts)
+        try:
+            key = await _key_of(Request(scope), parts)
+        except DomainError as error:  # here, outside of the routes, nothing else answers it
+            await response_to(error)(scope, receive, send)
+            return
         if key is None:
             detail = "Send the header Authorization: Bearer <key> with a key that is neither revoked nor expired."
             refusal = response("key-required", detail, headers={"WWW-Authenticate": "Bearer"})

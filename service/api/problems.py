@@ -166,6 +166,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",
     errors.TooManyQuestions: "overloaded",
+    errors.DatabaseAway: "overloaded",
     errors.StorageFailed: "overloaded",
     errors.OutcomeUnknown: "outcome-unknown",
 }
@@ -221,9 +222,15 @@ def install(app: FastAPI) -> None:
 
 
 async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
+    assert isinstance(error, DomainError)
+    return response_to(error)
+
+
+def response_to(error: DomainError) -> JSONResponse:
+    """The problem document of a domain error."""
     headers = {"Retry-After": str(error.retry_after_seconds)} if isinstance(error, errors.Unavailable) else None
     faults = getattr(error, "faults", ())
-    return response(OF_ERRORS[type(error)], str(error), faults, headers)  # type: ignore[index]
+    return response(OF_ERRORS[type(error)], str(error), faults, headers)
 
 
 async def _on_request_problem(_request: Request, error: Exception) -> JSONResponse:

@@ -17,7 +17,7 @@ What can go wrong, without a word of HTTP.
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
-        ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, TooManyQuestions
+        ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway, TooManyQuestions
 """
 
 from collections.abc import Iterable, Iterator, Sequence
@@ -190,6 +190,15 @@ class QueueFull(Unavailable):
 
     def __init__(self) -> None:
         super().__init__("Too many submissions are waiting; nothing was stored, try again shortly.")
+
+
+class DatabaseAway(Unavailable):
+    """The database did not answer a read."""
+
+    retry_after_seconds = 5
+
+    def __init__(self) -> None:
+        super().__init__("The database does not answer; try again shortly.")
 
 
 class TooManyQuestions(Unavailable):

@@ -85,6 +85,16 @@ class StoredPlan:
 
 
 @dataclass(frozen=True)
+class Probe:
+    """Write something that changes nothing, to see whether the database takes writes."""
+
+
+@dataclass(frozen=True)
+class Written:
+    """A probe went through."""
+
+
+@dataclass(frozen=True)
 class RegisteredTest:
     """A test as stored, its plan, and whether this command made it."""
 
@@ -112,5 +122,5 @@ class IssuedKey:
     secret: str
 
 
-Command = CreatePlan | RegisterTest | PostObservations | CreateKey | RevokeKey
-Outcome = StoredPlan | RegisteredTest | Posted | IssuedKey | AccessKey
+Command = CreatePlan | RegisterTest | PostObservations | CreateKey | RevokeKey | Probe
+Outcome = StoredPlan | RegisteredTest | Posted | IssuedKey | AccessKey | Written

@@ -37,10 +37,12 @@ from service.ingest.commands import (
     Outcome,
     Posted,
     PostObservations,
+    Probe,
     RegisteredTest,
     RegisterTest,
     RevokeKey,
     StoredPlan,
+    Written,
 )
 from service.storage.writer import Writer
 
@@ -138,6 +140,12 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
         raise UnknownKey(command.name)
     writer.revoke_key(key.id, now)
     return replace(key, revoked_at=now)
+
+
+@perform.register
+def _(command: Probe, writer: Writer, now: datetime) -> Outcome:  # noqa: ARG001 - a probe has no content and no time
+    writer.touch()
+    return Written()
 
 
 def _check_version(expected: frozenset[str] | None, test: SequentialTest | None) -> None:

@@ -92,8 +92,13 @@ class Road:
         self._waiting: queue.Queue[_Waiting | None] = queue.Queue(queue_limit)
         self._in_progress: set[tuple[str, str]] = set()
         self._thread = threading.Thread(target=self._run, name="writer", daemon=True)
-        self._is_open = False
+        self._is_open = self._has_failed = False
         self._loop: asyncio.AbstractEventLoop | None = None
+
+    @property
+    def has_failed(self) -> bool:
+        """True since a write failed at the database, until one goes through again."""
+        return self._has_failed
 
     def start(self) -> None:
         """Begin to take commands; the callers' event loop must be running."""
@@ -195,6 +200,7 @@ class Road:
 
     def _answer(self, answers: Sequence[Answer]) -> None:
         assert self._loop is not None
+        self._has_failed = any(isinstance(outcome, StorageFailed | OutcomeUnknown) for _, outcome in answers)
         self._loop.call_soon_threadsafe(_tell, answers)
 
     def _in_one_transaction(self, group: Sequence[_Waiting]) -> list[Answer]:

@@ -5,11 +5,15 @@ SQLite: write-ahead log, every commit on disk before it returns, foreign keys on
 writing one says BEGIN IMMEDIATE, so that it waits for the lock at once instead of failing half-way.
 """
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from sqlite3 import Connection as SqliteConnection
 
 from sqlalchemy import Connection, Engine, create_engine, event
 from sqlalchemy.engine import make_url
-from sqlalchemy.exc import DBAPIError
+from sqlalchemy.exc import DBAPIError, InterfaceError, OperationalError
+
+from service.domain.errors import DatabaseAway
 
 LOCK_WAIT_SECONDS = 30.0
 WRITES = "sprt_writes"
@@ -33,6 +37,20 @@ _PASSING = {"40001", "40P01", "23505"}
 def is_passing(error: Exception) -> bool:
     """True where the same transaction may go through when it is tried again at once."""
     return isinstance(error, DBAPIError) and getattr(error.orig, "sqlstate", None) in _PASSING
+
+
+@contextmanager
+def answering() -> Iterator[None]:
+    """
+    A read.
+
+    Raises:
+        DatabaseAway: The database does not answer.
+    """
+    try:
+        yield
+    except (OperationalError, InterfaceError) as error:
+        raise DatabaseAway from error
 
 
 def is_sqlite(engine: Engine) -> bool:

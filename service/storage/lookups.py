@@ -11,7 +11,7 @@ from typing import Any
 from sqlalchemy import Connection, Engine, RowMapping, Select, event
 from sqlalchemy.exc import DBAPIError
 
-from service.storage.engine import is_sqlite
+from service.storage.engine import answering, is_sqlite
 
 
 class Lookups:
@@ -25,14 +25,20 @@ class Lookups:
         event.listen(engine, "engine_disposed", self._close)
 
     def first(self, found: Select[Any], **parameters: str) -> RowMapping | None:
-        """The row found, or None."""
-        try:
+        """
+        The row found, or None.
+
+        Raises:
+            DatabaseAway: The database does not answer.
+        """
+        with answering():
+            try:
+                return self._connection().execute(found, parameters).mappings().first()
+            except DBAPIError as error:
+                if not error.connection_invalidated:
+                    raise
+            self._local.connection = None
             return self._connection().execute(found, parameters).mappings().first()
-        except DBAPIError as error:
-            if not error.connection_invalidated:
-                raise
-        self._local.connection = None
-        return self._connection().execute(found, parameters).mappings().first()
 
     def _close(self, _engine: Engine) -> None:
         """The connections end with the engine."""

@@ -12,6 +12,7 @@ from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, SubjectKind, Submission
 from service.domain.state import Decision
 from service.storage import rows, tables
+from service.storage.engine import answering
 from service.storage.lookups import Lookups
 
 # A page of the log ends with whichever comes first; a single submission may be larger.
@@ -152,15 +153,15 @@ class Reader:
     def counts(self) -> list[Count]:
         """How many tests there are of each kind, status and decision."""
         by = (tables.tests.c.subject_kind, tables.tests.c.status, tables.tests.c.decision)
-        with self._engine.connect() as connection:
+        with answering(), self._engine.connect() as connection:
             return [Count(*row) for row in connection.execute(select(*by, func.count()).group_by(*by))]
 
     def _first(self, found: Select[Any]) -> RowMapping | None:
-        with self._engine.connect() as connection:
+        with answering(), self._engine.connect() as connection:
             return connection.execute(found).mappings().first()
 
     def _all(self, found: Select[Any]) -> list[RowMapping]:
-        with self._engine.connect() as connection:
+        with answering(), self._engine.connect() as connection:
             return list(connection.execute(found).mappings())
 
 

@@ -10,7 +10,19 @@ from contextlib import contextmanager
 from datetime import datetime
 from typing import Any, TypeVar
 
-from sqlalchemy import Connection, Engine, Executable, RowMapping, Select, bindparam, insert, select, tuple_, update
+from sqlalchemy import (
+    Connection,
+    Engine,
+    Executable,
+    RowMapping,
+    Select,
+    bindparam,
+    insert,
+    select,
+    text,
+    tuple_,
+    update,
+)
 
 from service.domain.access import AccessKey
 from service.domain.plan import Plan
@@ -131,6 +143,10 @@ class Writer:
         """The test's status, version, time and state, as they are now."""
         self._tests[test.key] = test
         self._saved.add(test.key)
+
+    def touch(self) -> None:
+        """Write a row as it is: only a database that takes writes can."""
+        self._connection.execute(text("UPDATE alembic_version SET version_num = version_num"))
 
     def flush(self) -> None:
         """Write what was appended and saved."""

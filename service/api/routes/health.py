@@ -8,6 +8,7 @@ from fastapi import APIRouter
 from service.api.parts import PartsOf, reading
 from service.api.problems import RequestProblem
 from service.api.schemas.administration import HealthOut
+from service.ingest.commands import Probe
 
 logger = logging.getLogger(__name__)
 
@@ -29,11 +30,13 @@ async def health() -> HealthOut:
 
 @router.get("/readyz", summary="Can it take results?", responses=NOT_READY)
 async def readiness(parts: PartsOf) -> HealthOut:
-    """Checks that the database answers and has the schema this version knows."""
+    """Checks that the database answers, has the schema this version knows, and takes writes where one failed before."""
     try:
         await reading(parts.check_ready)
+        if parts.road.has_failed:
+            await parts.road.submit(Probe())
     except Exception:
         logger.exception("not ready")
-        detail = "The database does not answer, or its schema is another; see the log."
+        detail = "The database does not answer or takes no writes, or its schema is another; see the log."
         raise RequestProblem("overloaded", detail, headers={"Retry-After": "5"}) from None
     return HealthOut(status="ready")
