@@ -18,34 +18,48 @@ MOST_WORK = 600_000_000
 FEWEST_TRIES = 12
 
 
-def calibrated(content: Content) -> Thresholds:
+class Budget:
+    """What computations that belong together may cost."""
+
+    def __init__(self, most: int = MOST_WORK) -> None:
+        self._most, self._spent = most, 0
+
+    def spend(self, work: int, times: int = 1) -> None:
+        """
+        Take note of work done, and ask whether so many times that would be too much.
+
+        Raises:
+            ComputationTooLarge: It is, or would be.
+        """
+        self._spent += work
+        if self._spent + (times - 1) * work > self._most:
+            raise ComputationTooLarge(f"{self._most} multiplications")
+
+
+def calibrated(content: Content, budget: Budget | None = None) -> Thresholds:
     """
     Thresholds whose exact risks equal the stated ones, or for whole-number totals looked at in steps those of the
     smallest region that exceeds neither.
 
     Args:
         content: A plan's content without faults.
+        budget: What it may cost, together with what was spent from it before.
 
     Raises:
         InvalidPlan: No thresholds keep the risks, most often because of the truncation.
         ComputationTooLarge: It would take too long.
     """
-    spent = 0
+    allowed = budget or Budget()
 
-    def risks_at(thresholds: Thresholds) -> Risks:
-        nonlocal spent
+    def risks_at(thresholds: Thresholds, times: int = 1) -> Risks:
         procedure = with_thresholds(content, thresholds)
         found = exact_figures(procedure, procedure.hypotheses)
-        spent += found.work
-        if spent > MOST_WORK:
-            raise ComputationTooLarge(f"{MOST_WORK} multiplications")
+        allowed.spend(found.work, times)
         return risks_of(procedure, found)
 
     stated = Risks(content["alpha"], content["beta"])
     # One computation between limits that are surely wide enough tells whether all of them can be paid for.
-    risks_at(boundaries.strict(stated.alpha, stated.beta))
-    if FEWEST_TRIES * spent > MOST_WORK:
-        raise ComputationTooLarge(f"{MOST_WORK} multiplications")
+    risks_at(boundaries.strict(stated.alpha, stated.beta), times=FEWEST_TRIES)
     procedure = with_thresholds(content, Thresholds(-1.0, 1.0))
     find: Callable[[calibration.RisksAt, Risks], Thresholds] = (
         calibration.smallest if procedure.family.has_stepwise_risks else calibration.matching

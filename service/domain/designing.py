@@ -4,7 +4,7 @@ import math
 from dataclasses import dataclass
 from typing import Any
 
-from service.domain.calibrating import calibrated, exact_figures, risks_of
+from service.domain.calibrating import Budget, calibrated, exact_figures, risks_of
 from service.domain.checking import checked_content
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion
 from service.domain.families import FAMILIES
@@ -16,8 +16,10 @@ from service.sequential.exact.characteristics import Characteristics
 LARGEST_INFLATION = 1.0
 # Truncations tried in one search.
 MOST_TRIES = 40
+# Multiplications of one search in all.
+MOST_WORK = 1_500_000_000
 # Where totals are whole numbers a smaller truncation may do though one above it does not; so many more are looked at.
-FURTHER_DOWN = 6
+FURTHER_DOWN = 8
 # A truncation by time is found to three digits.
 RESOLUTION = 1e-3
 
@@ -46,8 +48,11 @@ class Suggestion:
 
 def suggested_truncation(content: Content, inflation: float) -> Suggestion:
     """
-    The smallest truncation at which calibrated boundaries keep both risks and neither average, at h0 or h1, exceeds
-    that of the calibrated plan without truncation by more than `inflation`.
+    A small truncation at which calibrated boundaries keep both risks and neither average, at h0 or h1, exceeds that of
+    the calibrated plan without truncation by more than `inflation`.
+
+    It is the smallest that halving finds. Where totals are whole numbers the risks move in steps, and a smaller one may
+    do by luck; a few are looked at.
 
     Args:
         content: A plan as a caller sends it; its boundary rule and truncation are left out of account.
@@ -87,6 +92,7 @@ class _Search:
         self._open = {**stated, "boundaries": "calibrated"}
         self._inflation = inflation
         self._tries: dict[float, _Try | None] = {}
+        self._budget = Budget(MOST_WORK)
         family = FAMILIES[stated["family"]]
         self._axis = "exposure" if family.has_exposure else "sample_number"
         self._is_whole = not family.is_watched_in_time
@@ -131,7 +137,7 @@ class _Search:
     def _try(self, at: float) -> _Try | None:
         content: dict[str, Any] = {**self._open, "truncation": {self._axis: int(at) if self._is_whole else at}}
         try:
-            procedure = with_thresholds(content, calibrated(content))
+            procedure = with_thresholds(content, calibrated(content, self._budget))
         except InvalidPlan:
             return None
         found = exact_figures(procedure, procedure.hypotheses)

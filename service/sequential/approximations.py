@@ -60,8 +60,10 @@ def approximate(motion: Motion, slope: float, lower: float, upper: float) -> App
     root = _conjugate_root(motion, slope)
     if root is None:
         return None
-    # P(above) from the martingale; expm1 keeps the digits of small probabilities.
-    above = -math.expm1(-root * lower) / (math.exp(min(root * upper, 700.0)) - math.exp(min(-root * lower, 700.0)))
+    # P(above) from the martingale, divided by its larger exponential; expm1 keeps the digits of small probabilities.
+    whole = -math.expm1(-abs(root) * (lower + upper))
+    near = -math.expm1(-abs(root) * lower) / whole
+    above = math.exp(-root * upper) * near if root > 0.0 else near
     progress = (upper * above - lower * (1.0 - above)) / drift
     return Approximation(1.0 - above, progress)
 
@@ -75,6 +77,8 @@ def _conjugate_root(motion: Motion, slope: float) -> float | None:
 
     # Near zero the excess is about -|drift| t + variance t^2 / 2, so this is short of the root.
     near = abs(motion.mean - slope) / motion.variance
+    if not 0.0 < near < math.inf:
+        return None
     while excess(near) >= 0.0:
         near /= 2.0
     far = 2.0 * near

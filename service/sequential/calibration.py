@@ -57,14 +57,15 @@ RisksAt = Callable[[Thresholds], Risks]
 
 def matching(risks_at: RisksAt, stated: Risks) -> Thresholds:
     """
-    Thresholds whose risks equal the stated ones, for risks that move continuously.
+    Thresholds whose risks equal the stated ones, for risks that move continuously; where a risk is below the stated one
+    whatever the limits, the smallest region.
 
     Args:
         risks_at: The exact risks of the region between two thresholds.
         stated: Both in (0, 1).
 
     Raises:
-        RisksNotMet: None do, most often because the wall is too near.
+        RisksNotMet: None keep them, most often because the wall is too near.
     """
     limits = strict(stated.alpha, stated.beta)
     scale = np.log([-limits.accept, limits.reject])
@@ -86,9 +87,8 @@ def matching(risks_at: RisksAt, stated: Risks) -> Thresholds:
         return near
     found = smallest(risks_at, stated)
     polished = solved(np.log([-found.accept, found.reject]))
-    if polished is None:
-        raise RisksNotMet(risks_at(found))
-    return polished
+    # Where even the innermost limit keeps a risk, that risk stays below the stated one.
+    return found if polished is None else polished
 
 
 def smallest(risks_at: RisksAt, stated: Risks) -> Thresholds:

@@ -240,6 +240,11 @@ class StraightRegion:
         return math.inf if math.isinf(self.span.per_progress) else self.span.per_progress * progress
 
 
+def looks_to_wall(wall: Wall, step: float, progress: float) -> int:
+    """The looks, `step` apart, after which a walk has come to the wall; at least one."""
+    return max(1, math.ceil((wall.progress * (1.0 - TIE) - progress) / step))
+
+
 def straight_region(
     ratio: LikelihoodRatio, thresholds: Thresholds, span: Span, wall: Wall | None = None
 ) -> StraightRegion:

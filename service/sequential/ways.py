@@ -5,19 +5,22 @@ Quantity: the fewest further looks, least time or smallest jump after which the 
 Method: rays through the region: no increase at all towards the lower limit, the largest increase at each look towards
 the upper one.
 Accuracy: that of the region.
-Cost: a few operations for each look passed over.
+Cost: a few operations for each of the next few looks, and as many for each doubling beyond.
 Source: the construction is that of the acceptance and rejection numbers in Wald (1945), section 5.2.
 """
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 
-from service.sequential.double import Double
-from service.sequential.region import ABOVE, BELOW, Region
+from service.sequential.double import BoolArray, Double, FloatArray
+from service.sequential.region import ABOVE, BELOW, Limits, Region, StraightRegion, looks_to_wall
 
-FURTHEST = 10_000_000
-SMALLEST_BLOCK, LARGEST_BLOCK = 64, 65_536
+# No test goes so far; whole numbers up to here are exact in a double.
+FURTHEST = 2**53
+# Looks that are tried at once before halving, and where a wall is near.
+BLOCK, LARGEST_BLOCK = 256, 32_768
 
 
 def looks_to_lower(region: Region, progress: float, total: float, step: float) -> tuple[int, float] | None:
@@ -51,37 +54,68 @@ def time_to_lower(region: Region, progress: float, total: float) -> float | None
 
 def jump_to_upper(region: Region, progress: float, total: float) -> tuple[int, float]:
     """
-    The fewest increases of one that end above if they come now, and how much progress the last of them has at most.
+    The fewest increases of one that end above, and how much progress the last of them has at most.
 
-    Source: as `Region.upper_left_at`; a cap ends above whenever it is reached before the wall.
+    They end above at once, or, where that takes fewer, by the wall, which parts the totals.
     """
     wall = math.inf if region.wall is None else region.wall.progress
     cap = math.inf if region.wall is None or region.wall.cap is None else region.wall.cap
-    increase, block = 1, 64
-    while True:
-        totals = total + np.arange(increase, increase + block, dtype=np.float64)
-        until = np.where(totals >= cap, wall, np.minimum(region.upper_left_at(totals), wall))
-        later = np.flatnonzero(until > progress)
-        if later.size:
-            first = int(later[0])
-            return increase + first, float(until[first]) - progress
-        increase, block = increase + block, min(2 * block, LARGEST_BLOCK)
+
+    def until(increase: int) -> float:
+        """The progress until which a total so much larger is beyond the upper limit; grows with the increase."""
+        if total + increase >= cap:
+            return wall
+        return min(float(region.upper_left_at(np.array([total + increase]))[0]), wall)
+
+    fewest = _first_true(lambda increase: until(increase) > progress)
+    if region.wall is not None:
+        at_wall = max(0, math.ceil(float(region.limits(np.array([wall])).upper[0]) - total))
+        if at_wall < fewest:
+            return at_wall, wall - progress
+    return fewest, until(fewest) - progress
 
 
 def _looks(region: Region, progress: float, total: float, step: float, rise: float) -> tuple[int, float] | None:
-    last = FURTHEST if region.wall is None else math.ceil((region.wall.progress - progress) / step * (1.0 - 1e-12))
-    begin, block = 1, SMALLEST_BLOCK
+    """The first look that ends on the side of the ray, and the limit there; None where another side comes first."""
+    last = None if region.wall is None else looks_to_wall(region.wall, step, progress)
     wanted = BELOW if rise == 0.0 else ABOVE
-    while begin <= last:
-        looks = np.arange(begin, min(begin + block, last + 1), dtype=np.float64)
-        limits = region.limits(progress + step * looks)
-        totals = total + rise * looks
-        below, above = totals <= limits.lower, totals >= limits.upper
-        ends = np.flatnonzero(below | above)
-        if ends.size:
-            first = int(ends[0])
-            if not (below if wanted == BELOW else above)[first]:
-                return None
-            return begin + first, float((limits.lower if wanted == BELOW else limits.upper)[first])
-        begin, block = begin + len(looks), min(2 * block, LARGEST_BLOCK)
-    return None
+
+    def at(looks: FloatArray) -> tuple[BoolArray, BoolArray, Limits]:
+        limits, totals = region.limits(progress + step * looks), total + rise * looks
+        return totals <= limits.lower, totals >= limits.upper, limits
+
+    def ends(look: int) -> bool:
+        below, above, _ = at(np.array([float(look)]))
+        return bool(below[0] or above[0])
+
+    first = _first_in_block(lambda looks: np.logical_or(*at(looks)[:2]), last)
+    if first is None and not isinstance(region, StraightRegion):
+        return None
+    if first is None:  # between two straight lines a ray that has left stays outside, so halving finds the moment
+        first = last if last is not None and not ends(last) else _first_true(ends, begin=BLOCK)
+    if first is None:
+        return None
+    below, above, limits = at(np.array([float(first)]))
+    if not (below if wanted == BELOW else above)[0]:
+        return None
+    return first, float((limits.lower if wanted == BELOW else limits.upper)[0])
+
+
+def _first_in_block(ends: Callable[[FloatArray], BoolArray], last: int | None) -> int | None:
+    """The first look that ends: among the next few, or, where there is a last one, among all up to a limit."""
+    reach = BLOCK if last is None else min(last, LARGEST_BLOCK)
+    found = np.flatnonzero(ends(np.arange(1.0, reach + 1.0)))
+    return int(found[0]) + 1 if found.size else None
+
+
+def _first_true(holds: Callable[[int], bool], begin: int = 1) -> int:
+    """The first whole number from `begin` on for which something holds that then goes on to hold."""
+    low, high = begin - 1, begin
+    while not holds(high):
+        low, high = high, 2 * high
+        if high > FURTHEST:
+            return high
+    while high - low > 1:
+        middle = (low + high) // 2
+        low, high = (low, middle) if holds(middle) else (middle, high)
+    return high

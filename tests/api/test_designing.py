@@ -170,6 +170,7 @@ def test_a_standard_plan_runs_from_its_name_alone(admin: httpx.Client, new_name:
         ({**STAGED, "table": [{"sample_number": 5}, TABLE[2]]}, "/table/0"),
         ({**STAGED, "table": [{"sample_number": 5, "accept": 1, "reject": 4}, *TABLE]}, "/table/1/accept"),
         ({**STAGED, "table": [{"sample_number": 5, "failures": 1}]}, "/table/0/failures"),
+        ({**STAGED, "table": [{"sample_number": 5, "accept": 10**390}]}, "/table/0/accept"),
         ({**SHAFT, "boundaries": "table", "table": TABLE}, "/table"),
         ({**TIMED, "table": [*TIMES[:2], {"failures": 4, "reject_at": 6.0}]}, "/table/2"),
         ({**TIMED, "table": [*TIMES[:2], {"failures": 3, "reject_at": 5.0}]}, "/table/2"),

@@ -9,7 +9,8 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstr
 from service.domain.names import NAME_PATTERN
 
 Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
-Whole = Annotated[int, Field(strict=True)]
+# Whole numbers that a double holds exactly.
+Whole = Annotated[int, Field(strict=True, ge=-(2**53), le=2**53)]
 Name = Annotated[str, StringConstraints(strict=True, pattern=NAME_PATTERN)]
 # Free text without control characters, which no log, table or page could show.
 _SHOWN = r"^[^\x00-\x1f\x7f]+$"

@@ -69,7 +69,7 @@ class Exponential(Family):
         failures, within = jump_to_upper(region, start.progress, start.total)
         return (
             None if time is None else Way(None, time, 0.0, f"a unit-time of {time:.6g} without failure"),
-            Way(failures, within, float(failures), f"{plural(failures, 'failure')} within a unit-time of {within:.6g}"),
+            Way(failures or None, within, float(failures), _failures_within(failures, within)),
         )
 
     def estimate(self, start: Start) -> float | None:
@@ -91,3 +91,9 @@ class Exponential(Family):
         time, failed = columns["time"], columns["failed"]
         refuse(reals(time, "must be 0 or above", time.values >= 0.0))
         return Increments(np.ones(len(time.values), np.int64), time.values, failed.values)
+
+
+def _failures_within(failures: int, within: float) -> str:
+    if failures == 0:
+        return f"a unit-time of {within:.6g}, whatever fails"
+    return f"{plural(failures, 'failure')} within a unit-time of {within:.6g}"

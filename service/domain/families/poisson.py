@@ -65,7 +65,7 @@ class Poisson(Family):
         count, within = jump_to_upper(region, start.progress, start.total)
         return (
             None if time is None else Way(1, time, 0.0, f"an exposure of {time:.6g} without a count"),
-            Way(1, within, float(count), f"{plural(count, 'count')} within an exposure of {within:.6g}"),
+            Way(1, within, float(count), _counts_within(count, within)),
         )
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
@@ -83,3 +83,9 @@ class Poisson(Family):
         value, exposure = columns["value"], columns["exposure"]
         refuse([*whole_numbers(value, 0), *reals(exposure, "must be above 0", exposure.values > 0.0)])
         return Increments(np.ones(len(value.values), np.int64), exposure.values, value.values)
+
+
+def _counts_within(count: int, within: float) -> str:
+    if count == 0:
+        return f"an exposure of {within:.6g}, whatever is counted"
+    return f"{plural(count, 'count')} within an exposure of {within:.6g}"

@@ -20,12 +20,11 @@ import numpy as np
 from service.sequential.double import FloatArray, IndexArray
 from service.sequential.exact.characteristics import NEGLIGIBLE, QUANTILES, Characteristics, TooMuchWork, spread
 from service.sequential.exact.processes import Process
-from service.sequential.exact.stretches import NO_CUT, Stretch, stretches_of_looks, stretches_of_time
+from service.sequential.exact.stretches import NO_CUT, WIDEST, Stretch, stretches_of_looks, stretches_of_time
 from service.sequential.region import Region
 
-# Multiplications of one computation, and totals that it follows at once.
+# Multiplications of one computation.
 MOST_WORK = 800_000_000
-WIDEST = 4_000
 # A stretch costs about as much as so many multiplications, however narrow it is.
 STRETCH_WORK = 2_000
 # Bisections of a stretch of time: to thirteen digits of it.

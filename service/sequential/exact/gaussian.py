@@ -22,10 +22,12 @@ from service.sequential.exact.strip import Figures, Strip
 from service.sequential.region import StraightRegion
 
 MOST_POINTS = 1_200
-# A factor of more than exp(12) between the ends of the region would cost digits.
-LARGEST_TILT = 12.0
+# A factor of more than exp(10) between the ends of the region would cost digits.
+LARGEST_TILT = 10.0
 # A larger drift leaves no probability of a second step that floating point could hold.
 LARGEST_DRIFT = 30.0
+# Rounding of the modes' sums, before it is magnified.
+ROUNDING = 4e-15
 # Multiplications for each cube of the points, about.
 WORK = 20
 
@@ -53,6 +55,9 @@ def gaussian_characteristics(
     fine, coarse = (_figures(strip, nodes, drifts, start, last) for nodes in counts)
     bound = float(np.max(np.abs(fine.below - coarse.below))) + float(np.max(np.abs(fine.above - coarse.above)))
     bound += float(np.max(np.abs(fine.mean / coarse.mean - 1.0))) + 1e-13
+    # Both share the rounding that the tilt magnifies.
+    tilt = np.abs(drifts) * max(strip.high - start, start - strip.low)
+    bound += ROUNDING * math.exp(float(np.max(tilt, where=tilt <= LARGEST_TILT, initial=0.0)))
     deviation = spread(fine.mean, fine.second)
     return Characteristics(fine.below, fine.above, fine.mean, deviation, fine.quantiles(), bound, WORK * counts[0] ** 3)
 

@@ -46,7 +46,7 @@ class _Modes:
     vectors: FloatArray
 
 
-@lru_cache(maxsize=64)
+@lru_cache(maxsize=16)
 def modes_of(strip: Strip, nodes: int) -> _Modes:
     """The modes of a strip at so many nodes; the last few strips asked for are kept."""
     x, weights = nodes_between(strip, nodes)

@@ -19,8 +19,9 @@ from scipy.special import betainc, gammainc, gammaln, xlog1py, xlogy
 from service.sequential.double import FloatArray, IndexArray
 from service.sequential.exact.characteristics import TooMuchWork
 
-# Terms added for the reports of one stretch.
-MOST_TERMS = 10_000_000
+# Terms added for the reports of one computation, and of them at once.
+MOST_TERMS = 20_000_000
+LARGEST_BLOCK = 500_000
 TINY = 1e-100
 
 
@@ -117,7 +118,7 @@ class Reports:
     largest: int | None = None
 
     def __init__(self, means: FloatArray, step: float) -> None:
-        self._means, self.step = means[:, np.newaxis], step
+        self._means, self.step, self._terms = means[:, np.newaxis], step, 0
 
     @property
     def points(self) -> int:
@@ -131,14 +132,17 @@ class Reports:
     def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
         """See `Process`."""
         looks = int(duration)
-        if looks * self.points * width > MOST_TERMS:
+        self._terms += looks * self.points * width
+        if self._terms > MOST_TERMS:
             raise TooMuchWork(MOST_TERMS, "terms")
         shape = (self.points, width)
         stay, moment = np.ones(shape), np.zeros(shape)
-        for look in range(1, looks):
-            within = np.cumsum(self.increases(float(look), width), axis=1)
-            stay += within
-            moment += look * within
+        block = max(1, LARGEST_BLOCK // (self.points * width))
+        for begin in range(1, looks, block):
+            look = np.arange(begin, min(begin + block, looks), dtype=float)[:, np.newaxis, np.newaxis]
+            within = np.cumsum(_poisson(self._means * look, width), axis=2)
+            stay += within.sum(axis=0)
+            moment += (look * within).sum(axis=0)
         return stay, moment
 
     def only(self, chosen: IndexArray) -> "Reports":

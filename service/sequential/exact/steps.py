@@ -16,7 +16,7 @@ from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import QUANTILES, TooMuchWork
 from service.sequential.exact.strip import Figures, Strip, density, nodes_between
 
-MOST_STEPS = 100_000
+MOST_WORK = 3_000_000_000
 NEGLIGIBLE = 1e-16
 
 
@@ -25,15 +25,16 @@ def by_steps(strip: Strip, nodes: int, drifts: FloatArray, start: float, last: i
     One drift after the other; arguments as for `modes.by_modes`.
 
     Raises:
-        TooMuchWork: More than 100,000 steps.
+        TooMuchWork: More multiplications than are allowed for all drifts together.
     """
-    rows = [_at(strip, nodes, float(drift), start, last) for drift in drifts]
+    most = MOST_WORK // (nodes * nodes * len(drifts))
+    rows = [_at(strip, nodes, float(drift), start, last, most) for drift in drifts]
     below, above, mean, second, quantiles = (np.array(column) for column in zip(*rows, strict=True))
     return Figures(below, above, mean, second, lambda: quantiles)
 
 
-def _at(
-    strip: Strip, nodes: int, drift: float, start: float, last: int | None
+def _at(  # noqa: PLR0913 - the parts of one walk
+    strip: Strip, nodes: int, drift: float, start: float, last: int | None, most: int
 ) -> tuple[float, float, float, float, list[float]]:
     """Both probabilities, two moments and the quantiles at one drift, step by step."""
     x, weights = nodes_between(strip, nodes)
@@ -47,8 +48,8 @@ def _at(
     while (rest := float(alive.sum())) > NEGLIGIBLE and n != last:
         survival.append(rest)
         n += 1
-        if n > MOST_STEPS:
-            raise TooMuchWork(MOST_STEPS, "steps")
+        if n > most:
+            raise TooMuchWork(MOST_WORK, "multiplications")
         if n == last:
             below, above = below + float(alive @ ndtr(-x - drift)), above + float(alive @ ndtr(x + drift))
         else:

@@ -18,9 +18,11 @@ import numpy as np
 
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import TooMuchWork
-from service.sequential.region import Region
+from service.sequential.region import Region, looks_to_wall
 
 MOST_LOOKS = 10_000_000
+# Totals that are followed at once.
+WIDEST = 4_000
 SMALLEST_BLOCK, LARGEST_BLOCK = 256, 65_536
 # Totals whose moments are asked for at a time.
 TOTALS = 64
@@ -55,7 +57,7 @@ def stretches_of_looks(region: Region, step: float, progress: float) -> Iterator
     Raises:
         TooMuchWork: More than 10 million looks.
     """
-    last = _looks_to_wall(region, step, progress)
+    last = math.inf if region.wall is None else looks_to_wall(region.wall, step, progress)
     begin, block, highest_cut = 1, SMALLEST_BLOCK, NO_CUT
     while begin <= last:
         if begin > MOST_LOOKS:
@@ -77,13 +79,20 @@ def stretches_of_looks(region: Region, step: float, progress: float) -> Iterator
 
 
 def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[Stretch]:
-    """Stretches of a region watched in continuous time, from this progress and total on."""
+    """
+    Stretches of a region watched in continuous time, from this progress and total on.
+
+    Raises:
+        TooMuchWork: More than 4,000 totals go on at once.
+    """
     wall = math.inf if region.wall is None else region.wall.progress
     cap = math.inf if region.wall is None or region.wall.cap is None else region.wall.cap
     lower_at, upper_at = _Moments(region.lower_reached_at), _Moments(region.upper_left_at)
     room = total + 1
     while room < cap and upper_at[room] <= progress:
         room += 1
+        if room - total > WIDEST:
+            raise TooMuchWork(WIDEST, "totals at once")
     now, lowest = progress, total
     durations = _Durations()
     while True:
@@ -130,9 +139,3 @@ class _Durations:
         if len(self._seen) < FEW:
             self._seen.append(duration)
         return duration
-
-
-def _looks_to_wall(region: Region, step: float, progress: float) -> float:
-    if region.wall is None:
-        return math.inf
-    return math.ceil((region.wall.progress - progress) / step * (1.0 - 1e-12))
