@@ -6,6 +6,7 @@ Numbers that no double stands for get through on purpose, so that the schema can
 """
 
 import json
+import re
 import sys
 from dataclasses import dataclass
 from typing import Any
@@ -19,6 +20,9 @@ LARGEST_OBJECT = 200
 # Databases refuse to read a number whose text is much longer, or whose exponent is much larger, than a double needs.
 LONGEST_NUMBER = 400
 LARGEST_EXPONENT = 400
+_MAY_BE_UNFIT = re.compile(r"[0-9][eE]|[0-9.]{300}")
+
+_SCALARS = {int, float, str, bool, type(None)}
 
 Location = tuple[str | int, ...]
 
@@ -50,7 +54,9 @@ def decoded(body: bytes, longest_list: int) -> Any:  # noqa: ANN401 - JSON is an
     """
     try:
         text = body.decode("utf-8")
-        document = json.loads(text, object_pairs_hook=_object, parse_float=_number)
+        # A number is unfit only by an exponent or by a very long text; without either the decoder's own speed will do.
+        number = _number if _MAY_BE_UNFIT.search(text) else None
+        document = json.loads(text, object_pairs_hook=_object, parse_float=number)
         if "\\u" in text:
             json.dumps(document, ensure_ascii=False, default=repr).encode("utf-8")  # finds half of a surrogate pair
     except RecursionError:
@@ -95,6 +101,8 @@ def _check_structure(node: dict[str, Any] | list[Any] | Any, place: Location, lo
     if len(node) > limit:
         fault = Fault(pointer_to(place), f"may hold at most {limit} elements; received {len(node)}")
         raise RequestProblem("invalid-body", "The body holds more than is taken at once; split it.", [fault])
+    if set(map(type, node.values() if isinstance(node, dict) else node)) <= _SCALARS:
+        return
     for name, child in node.items() if isinstance(node, dict) else enumerate(node):
         if isinstance(child, dict | list):
             _check_structure(child, (*place, name), longest_list)
