@@ -12,6 +12,7 @@ from service.sequential.boundaries import Thresholds
 from service.sequential.calibration import Risks, RisksNotMet
 from service.sequential.decision import Decision
 from service.sequential.exact.characteristics import Characteristics, TooMuchWork
+from service.sequential.fixed_sample import FixedSample
 
 # Multiplications that one calibration may take in all, and computations that it takes at the least.
 MOST_WORK = 600_000_000
@@ -88,8 +89,7 @@ def exact_figures(procedure: Procedure, parameters: Sequence[float], start: Star
 
 def risks_of(procedure: Procedure, found: Characteristics) -> Risks:
     """P(reject) at h0 and P(accept) at h1, from figures whose first two points are h0 and h1."""
-    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
-    return Risks(alpha=_clipped(rejects[0]), beta=accepts_at(procedure, found, 1))
+    return Risks(alpha=rejects_at(procedure, found, 0), beta=accepts_at(procedure, found, 1))
 
 
 def accepts_at(procedure: Procedure, found: Characteristics, i: int) -> float:
@@ -98,8 +98,30 @@ def accepts_at(procedure: Procedure, found: Characteristics, i: int) -> float:
     return _clipped(accepts[i])
 
 
+def rejects_at(procedure: Procedure, found: Characteristics, i: int) -> float:
+    """The probability of rejection at the i-th parameter."""
+    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
+    return _clipped(rejects[i])
+
+
+def fixed_sample_of(procedure: Procedure) -> FixedSample | None:
+    """The smallest fixed sample with the stated risks; its lower hypothesis is that of small totals."""
+    (h0, h1), (alpha, beta) = procedure.hypotheses, procedure.risks
+    lower, upper, risks = (h0, h1, (alpha, beta)) if procedure.ratio.is_upward else (h1, h0, (beta, alpha))
+    return procedure.family.fixed_sample(lower, upper, risks, procedure.known)
+
+
 def _clipped(probability: float) -> float:
     return min(1.0, max(0.0, float(probability)))
 
 
-__all__ = ["Risks", "accepts_at", "calibrated", "exact_figures", "risks_of"]
+__all__ = [
+    "Budget",
+    "Risks",
+    "accepts_at",
+    "calibrated",
+    "exact_figures",
+    "fixed_sample_of",
+    "rejects_at",
+    "risks_of",
+]

@@ -4,11 +4,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 
-import numpy as np
-
-from service.domain.calibrating import accepts_at, exact_figures, risks_of
+from service.domain.calibrating import accepts_at, exact_figures, fixed_sample_of, risks_of
 from service.domain.errors import Fault, InvalidQuestion
-from service.domain.families import Family
 from service.domain.procedure import Procedure, procedure_of_document
 from service.sequential.approximations import OVERSHOOT, approximate
 from service.sequential.decision import Decision
@@ -165,11 +162,8 @@ def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Ap
 
 
 def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
-    h0, h1 = procedure.hypotheses
-    alpha, beta = procedure.risks
     is_upward = procedure.ratio.is_upward
-    lower, upper, risks = (h0, h1, (alpha, beta)) if is_upward else (h1, h0, (beta, alpha))
-    sample = procedure.family.fixed_sample(lower, upper, risks, procedure.known)
+    sample = fixed_sample_of(procedure)
     if sample is None:
         return None
     next_total = sample.limit + (1.0 if procedure.family.span.is_integer else 0.0)
@@ -188,16 +182,4 @@ def common_grid(documents: Sequence[str]) -> tuple[float, ...]:
     """Parameters around all hypotheses of plans of one family."""
     procedures = [procedure_of_document(document) for document in documents]
     hypotheses = [parameter for procedure in procedures for parameter in procedure.hypotheses]
-    return _grid(procedures[0].family, min(hypotheses), max(hypotheses))
-
-
-def _grid(family: Family, low: float, high: float) -> tuple[float, ...]:
-    """Parameters around both hypotheses that show the whole curve."""
-    margin = high - low
-    if family.parameter_rule(-1.0) is None:
-        grid = np.linspace(low - margin, high + margin, GRID_POINTS)
-    elif family.parameter_rule(2.0) is None:
-        grid = np.geomspace(low / 2.0, high * 2.0, GRID_POINTS)
-    else:
-        grid = np.linspace(max(0.0, low - margin), min(1.0, high + margin), GRID_POINTS)
-    return tuple(float(value) for value in grid)
+    return procedures[0].family.grid(min(hypotheses), max(hypotheses), GRID_POINTS)

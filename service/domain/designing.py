@@ -4,7 +4,7 @@ import math
 from dataclasses import dataclass
 from typing import Any
 
-from service.domain.calibrating import Budget, calibrated, exact_figures, risks_of
+from service.domain.calibrating import Budget, calibrated, exact_figures, fixed_sample_of, risks_of
 from service.domain.checking import checked_content
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion
 from service.domain.families import FAMILIES
@@ -97,8 +97,8 @@ class _Search:
         self._axis = "exposure" if family.has_exposure else "sample_number"
         self._is_whole = not family.is_watched_in_time
         document = checked_content(self._open)
-        self._whole = procedure_of_document(document)
-        self._averages = exact_figures(self._whole, self._whole.hypotheses).mean
+        self._open_plan = procedure_of_document(document)
+        self._averages = exact_figures(self._open_plan, self._open_plan.hypotheses).mean
 
     def run(self) -> Suggestion:
         """Gallop up until a truncation does, then halve the distance down."""
@@ -119,10 +119,7 @@ class _Search:
         return float(math.ceil(at)) if self._is_whole else float(f"{at:.4g}")
 
     def _smallest_size(self) -> float:
-        h0, h1 = self._whole.hypotheses
-        alpha, beta = self._whole.risks
-        lower, upper, risks = (h0, h1, (alpha, beta)) if self._whole.ratio.is_upward else (h1, h0, (beta, alpha))
-        fixed = self._whole.family.fixed_sample(lower, upper, risks, self._whole.known)
+        fixed = fixed_sample_of(self._open_plan)
         return float(max(self._averages)) if fixed is None else fixed.size
 
     def _does(self, at: float) -> bool:

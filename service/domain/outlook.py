@@ -3,7 +3,7 @@
 from dataclasses import dataclass
 from functools import lru_cache
 
-from service.domain.calibrating import accepts_at, exact_figures
+from service.domain.calibrating import accepts_at, exact_figures, rejects_at
 from service.domain.characteristics import Spread, spread_at
 from service.domain.families.base import Start, Way
 from service.domain.procedure import Procedure, procedure_of_document
@@ -96,13 +96,12 @@ def _outlook(document: str, standing: Start) -> Outlook:
     if estimate is not None:
         asked["estimate"] = estimate
     found = exact_figures(procedure, tuple(asked.values()), standing)
-    rejects = found.above if procedure.region.below is Decision.ACCEPT else found.below
     expected = tuple(
         Expected(
             under=under,
             parameter=parameter,
             probability_of_acceptance=accepts_at(procedure, found, i),
-            probability_of_rejection=min(1.0, max(0.0, float(rejects[i]))),
+            probability_of_rejection=rejects_at(procedure, found, i),
             further_sample_number=None if procedure.family.is_watched_in_time else spread_at(found, i),
             further_exposure=spread_at(found, i) if procedure.family.has_exposure else None,
         )

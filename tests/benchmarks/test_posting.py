@@ -7,19 +7,9 @@ from pathlib import Path
 import httpx
 import pytest
 
+from tests.faults.fleet import PLAN
 from tests.running import running
 
-PLAN = {
-    "name": "drift",
-    "family": "normal",
-    "h0": 0.0,
-    "h1": 0.001,
-    "alpha": 0.05,
-    "beta": 0.05,
-    "boundaries": "given",
-    "thresholds": {"accept": -1e6, "reject": 1e6},
-    "known": {"sigma": 1.0},
-}
 ROUNDS, POSTS = 9, 100
 
 
@@ -29,7 +19,7 @@ def test_the_millionth_observation_costs_what_the_first_did(tmp_path: Path) -> N
     with running(tmp_path, SPRT_MAX_BATCH="1000000") as service, service.client() as client:
         client.post("/v1/plans", json=PLAN).raise_for_status()
         for key in ("long", *(f"new-{i}" for i in range(ROUNDS))):
-            registration = {"key": key, "plan": "drift", "subject": {"kind": "experiment", "name": key}}
+            registration = {"key": key, "plan": PLAN["name"], "subject": {"kind": "experiment", "name": key}}
             client.post("/v1/tests", json=registration).raise_for_status()
         for _ in range(100):
             _post(client, "long", [0.0, 0.001] * 5000)

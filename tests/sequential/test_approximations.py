@@ -1,6 +1,7 @@
 """The approximations against what their authors printed."""
 
 import math
+from statistics import NormalDist
 
 import pytest
 
@@ -45,3 +46,30 @@ def test_the_normal_test_by_wald_and_by_siegmund() -> None:
 
 def test_a_total_that_never_moves_has_no_approximation() -> None:
     assert approximate(coin(0.0), 0.2, 1.0, 1.0) is None
+
+
+SAVINGS = {
+    0.01: (58, 60, 61, 62, 63),
+    0.02: (54, 56, 57, 58, 59),
+    0.03: (51, 53, 54, 55, 55),
+    0.04: (49, 50, 51, 52, 53),
+    0.05: (47, 49, 50, 50, 51),
+}
+
+
+@pytest.mark.parametrize("beta", SAVINGS)
+def test_walds_table_of_savings(beta: float) -> None:
+    """
+    Wald (1945), percentage saving over the fixed sample for a normal mean when H1 is true (quoted from memory).
+
+    Rows beta, columns alpha = .01 … .05. One entry, alpha = .05 and beta = .02, computes to 58.496 and is printed 59.
+    """
+    shift = 0.01
+    motion = Motion(lambda t: shift * t + 0.5 * t * t, shift, 1.0)
+    for column, printed in enumerate(SAVINGS[beta]):
+        alpha = 0.01 * (column + 1)
+        limits = boundaries.wald(alpha, beta)
+        found = approximate(motion, shift / 2, -limits.accept / shift, limits.reject / shift)
+        assert found is not None
+        fixed = ((NormalDist().inv_cdf(1 - alpha) + NormalDist().inv_cdf(1 - beta)) / shift) ** 2
+        assert 100 * (1 - found.progress / fixed) == pytest.approx(printed, abs=0.505)

@@ -164,6 +164,10 @@ class Family(ABC):
             TooMuchWork: The computation would need more steps than are allowed.
         """
 
+    def grid(self, low: float, high: float, points: int) -> tuple[float, ...]:
+        """Parameters around two hypotheses that show the whole curve; evenly in proportion, for positive ones."""
+        return tuple(float(value) for value in np.geomspace(low / 2.0, high * 2.0, points))
+
     @abstractmethod
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """The shortest ways from here to the lower and to the upper limit."""

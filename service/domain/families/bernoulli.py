@@ -58,6 +58,11 @@ class Bernoulli(Family):
         """See `Family`."""
         return counting_characteristics(region, Units(parameters), start.progress, int(start.total))
 
+    def grid(self, low: float, high: float, points: int) -> tuple[float, ...]:
+        """See `Family`."""
+        ends = max(0.0, 2.0 * low - high), min(1.0, 2.0 * high - low)
+        return tuple(float(value) for value in np.linspace(*ends, points))
+
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """See `Family`."""
         down = looks_to_lower(region, start.progress, start.total, 1.0)

@@ -40,6 +40,10 @@ class Normal(Family):
             raise TypeError(f"only straight regions of {self.name} are followed exactly")
         return gaussian_characteristics(region, parameters, known["sigma"], start.progress, start.total)
 
+    def grid(self, low: float, high: float, points: int) -> tuple[float, ...]:
+        """See `Family`."""
+        return tuple(float(value) for value in np.linspace(2.0 * low - high, 2.0 * high - low, points))
+
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """See `Family`."""
         limits = region.limits(np.array([start.progress + 1.0]))
