@@ -31,7 +31,6 @@ def document(**content: Any) -> str:
         {"family": "exponential", "h0": 1.000000000001, "h1": 1.0},
         {"family": "bernoulli", "h0": 0.01, "h1": 0.010000000000001},
         {"family": "bernoulli", "h0": 1e-9, "h1": 2e-9},
-        {"family": "bernoulli", "h0": 0.999999, "h1": 0.99999},
         {"family": "poisson", "h0": 1e-6, "h1": 1e-5},
         {"family": "normal", "h0": 0.0, "h1": 0.001, "known": {"sigma": 1.0}},
     ],

@@ -181,7 +181,7 @@ def test_sixty_four_writers(request: pytest.FixtureRequest, tmp_path: Path, data
             fleet.register(client)
         stop = threading.Event()
         threads = fleet.post_during(service.url, service.key, stop)
-        time.sleep(2.0)
+        time.sleep(1.0)
         stop.set()
         for thread in threads:
             thread.join()

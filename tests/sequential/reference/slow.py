@@ -57,6 +57,11 @@ def step(plan: Plan, result: float, weight: float) -> mpf:
     return log(density(plan, plan.h1, result, weight)) - log(density(plan, plan.h0, result, weight))
 
 
+def decimal(number: float) -> mpf:
+    """The number as a person writes it: a hundred exposures of 0.57 are 57, whatever a double makes of them."""
+    return mpf(repr(number))
+
+
 def run(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
     """
     The whole test.
@@ -71,11 +76,11 @@ def run(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
     evidence, position, total, units = mpf(0), mpf(0), mpf(0), 0
     for used, (result, weight) in enumerate(observations, start=1):
         evidence += step(plan, result, weight)
-        position += mpf(weight)
+        position += decimal(weight)
         total += mpf(result)
         units += int(weight) if plan.family == "bernoulli" else 1
         decision, cause = _judged(plan, evidence), "boundary"
-        if decision == "continue" and plan.wall is not None and position >= plan.wall:
+        if decision == "continue" and plan.wall is not None and position >= decimal(plan.wall):
             decision, cause = ("reject" if evidence > 0 else "accept"), "truncation"
         if decision != "continue":
             return Answer(decision, cause, used, units, position, total, evidence)
@@ -95,16 +100,16 @@ def _in_time(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
     jumps_to = "reject" if drifts_to == "accept" else "accept"
     evidence, position, total = mpf(0), mpf(0), mpf(0)
     for used, (failed, time) in enumerate(observations, start=1):
-        end = position + mpf(time)
+        end = position + decimal(time)
         reaches = position + (mpf(threshold) - evidence) / speed
-        wall = mpf(plan.wall) if plan.wall is not None else None
+        wall = decimal(plan.wall) if plan.wall is not None else None
         if reaches <= end and (wall is None or reaches <= wall):
             return Answer(drifts_to, "boundary", used, used, reaches, total, mpf(threshold))
         if wall is not None and wall <= end:
             evidence += speed * (wall - position)
             forced = drifts_to if plan.cap is not None else ("reject" if evidence > 0 else "accept")
             return Answer(forced, "truncation", used, used, wall, total, evidence)
-        evidence += speed * mpf(time)
+        evidence += speed * decimal(time)
         position = end
         if failed:
             evidence += log(mpf(plan.h0) / mpf(plan.h1))
