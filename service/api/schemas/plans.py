@@ -116,6 +116,10 @@ class LinesOut(Answer):
     reject_intercept: float
 
 
+# A row of a table as it is kept: the entries that it has.
+Row = dict[str, int | float]
+
+
 class AttainedOut(Answer):
     """The exact risks: P(reject) at h0 and P(accept) at h1."""
 
@@ -141,7 +145,7 @@ class PlanOut(Answer):
     known: dict[str, float] | None
     thresholds: ThresholdsOut | None = Field(description="Null where the limits are a table's.")
     lines: LinesOut | None = Field(description="Null where straight lines do not bound the region.")
-    table: list[RowForm] | None
+    table: list[Row] | None
     standard: str | None
     scale: float | None
     source: str | None = Field(description="Where the standard stands.")
@@ -190,7 +194,7 @@ class StandardOut(Answer):
     alpha: float
     beta: float
     attained: AttainedOut
-    table: list[RowForm]
+    table: list[Row]
 
     @classmethod
     def of(cls, standard: Standard, attained: Risks) -> "StandardOut":
