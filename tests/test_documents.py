@@ -52,7 +52,7 @@ def test_the_design_that_the_readme_shows_is_what_the_command_prints(tmp_path: P
     done = command(*arguments, database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}", COLUMNS="80")
     printed = [line.rstrip() for line in done.stdout.splitlines()]
     assert all(line in printed for line in shown if line), done.stdout
-    assert "Smallest truncation: 201 units" in done.stdout
+    assert "Suggested truncation: 201 units" in done.stdout
 
 
 def test_every_setting_is_in_the_readme_with_its_default() -> None:

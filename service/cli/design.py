@@ -38,7 +38,7 @@ def design(
     ] = None,
     scale: Annotated[float | None, typer.Option(help="Lower test mean life, for a reliability standard.")] = None,
     suggest: Annotated[
-        float | None, typer.Option(help="Find the smallest truncation that lengthens tests by at most this share.")
+        float | None, typer.Option(help="Find a small truncation that lengthens tests by at most this share.")
     ] = None,
 ) -> None:
     """Show exact risks and sample numbers of candidate plans side by side, with their curves."""
@@ -188,7 +188,7 @@ def _column(document: str, promise: "Promise") -> dict[str, str]:
 def _show_suggestion(console: "Console", suggestion: "Suggestion") -> None:
     unit = "units" if suggestion.axis == "sample_number" else "of exposure"
     console.print(
-        f"\nSmallest truncation: {suggestion.at:.6g} {unit}, calibrated, lengthens tests by "
+        f"\nSuggested truncation: {suggestion.at:.6g} {unit}, calibrated, lengthens tests by "
         f"{100 * suggestion.inflation:.3g} % at most; average {suggestion.average_at_h0:.6g} at h0, "
         f"{suggestion.average_at_h1:.6g} at h1; alpha {suggestion.attained.alpha:.5f}, "
         f"beta {suggestion.attained.beta:.5f}."

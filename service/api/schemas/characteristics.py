@@ -71,7 +71,9 @@ class CharacteristicsForm(PlanContentForm):
 
     name: Name | None = None
     at: Annotated[list[Number], FailFast(), Field(max_length=500)] = Field(default_factory=list)
-    suggest_truncation: TruncationQuestionForm | None = Field(None, description="Ask for the smallest truncation.")
+    suggest_truncation: TruncationQuestionForm | None = Field(
+        None, description="Ask for a truncation, as small as the search finds."
+    )
     candidates: Annotated[list[CandidateForm], Field(min_length=1, max_length=8)] | None = None
 
 
@@ -129,7 +131,7 @@ class PointOut(Answer):
 
 
 class SuggestionOut(Answer):
-    """The smallest truncation found at which calibrated boundaries keep both risks within the inflation."""
+    """A truncation, as small as the search finds, whose calibrated boundaries keep both risks within the inflation."""
 
     truncation: TruncationForm
     thresholds: ThresholdsOut
