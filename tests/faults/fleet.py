@@ -24,7 +24,7 @@ PLAN = {
     "thresholds": {"accept": -1e6, "reject": 1e6},
     "known": {"sigma": 1.0},
 }
-PATIENCE_SECONDS = 5.0
+PATIENCE_SECONDS = 30.0
 
 
 @dataclass

@@ -145,16 +145,18 @@ def test_a_full_disk_refuses_and_recovers(tmp_path: Path) -> None:
         with service.client() as client:
             fleet.register(client)
             assert service.process is not None
-            quota = max(path.stat().st_size for path in tmp_path.iterdir()) + 200_000
-            resource.prlimit(service.process.pid, resource.RLIMIT_FSIZE, (quota, resource.RLIM_INFINITY))
             stop = threading.Event()
             threads = fleet.post_during(service.url, service.key, stop)
+            time.sleep(0.3)
+            # Smaller than the files are already: from now on nothing fits, however little it is.
+            resource.prlimit(service.process.pid, resource.RLIMIT_FSIZE, (4096, resource.RLIM_INFINITY))
             deadline = time.monotonic() + 60
             while not any(station.refusals for station in fleet.stations):
                 assert time.monotonic() < deadline, "the quota is reached"
                 time.sleep(0.05)
             assert client.get("/readyz").status_code == 503
             assert client.get("/v1/tests/lot-0").status_code == 200
+            assert client.get("/readyz").status_code == 503
             resource.prlimit(service.process.pid, resource.RLIMIT_FSIZE, (resource.RLIM_INFINITY,) * 2)
             time.sleep(0.5)
             stop.set()
