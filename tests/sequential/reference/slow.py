@@ -6,6 +6,7 @@ logarithms are added, and after each observation the sum is compared with the th
 """
 
 from dataclasses import dataclass
+from fractions import Fraction
 
 from mpmath import exp, log, mp, mpf, pi, sqrt
 
@@ -57,9 +58,14 @@ def step(plan: Plan, result: float, weight: float) -> mpf:
     return log(density(plan, plan.h1, result, weight)) - log(density(plan, plan.h0, result, weight))
 
 
-def decimal(number: float) -> mpf:
-    """The number as a person writes it: a hundred exposures of 0.57 are 57, whatever a double makes of them."""
-    return mpf(repr(number))
+def written(number: float) -> Fraction:
+    """The number as a person writes it: a hundred exposures of 0.57 are 57, whatever binary digits make of them."""
+    return Fraction(repr(number))
+
+
+def digits(number: Fraction) -> mpf:
+    """A fraction in 60 digits."""
+    return mpf(number.numerator) / number.denominator
 
 
 def run(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
@@ -73,18 +79,18 @@ def run(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
     """
     if plan.family == "exponential":
         return _in_time(plan, observations)
-    evidence, position, total, units = mpf(0), mpf(0), mpf(0), 0
+    evidence, position, total, units = mpf(0), Fraction(0), mpf(0), 0
     for used, (result, weight) in enumerate(observations, start=1):
         evidence += step(plan, result, weight)
-        position += decimal(weight)
+        position += written(weight)
         total += mpf(result)
         units += int(weight) if plan.family == "bernoulli" else 1
         decision, cause = _judged(plan, evidence), "boundary"
-        if decision == "continue" and plan.wall is not None and position >= decimal(plan.wall):
+        if decision == "continue" and plan.wall is not None and position >= written(plan.wall):
             decision, cause = ("reject" if evidence > 0 else "accept"), "truncation"
         if decision != "continue":
-            return Answer(decision, cause, used, units, position, total, evidence)
-    return Answer("continue", None, len(observations), units, position, total, evidence)
+            return Answer(decision, cause, used, units, digits(position), total, evidence)
+    return Answer("continue", None, len(observations), units, digits(position), total, evidence)
 
 
 def _judged(plan: Plan, evidence: mpf) -> str:
@@ -98,18 +104,20 @@ def _in_time(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
     speed = 1 / mpf(plan.h0) - 1 / mpf(plan.h1)
     drifts_to, threshold = ("accept", plan.accept) if speed < 0 else ("reject", plan.reject)
     jumps_to = "reject" if drifts_to == "accept" else "accept"
-    evidence, position, total = mpf(0), mpf(0), mpf(0)
+    evidence, elapsed, total = mpf(0), Fraction(0), mpf(0)
     for used, (failed, time) in enumerate(observations, start=1):
-        end = position + decimal(time)
+        position = digits(elapsed)
+        elapsed += written(time)
+        end = digits(elapsed)
         reaches = position + (mpf(threshold) - evidence) / speed
-        wall = decimal(plan.wall) if plan.wall is not None else None
+        wall = digits(written(plan.wall)) if plan.wall is not None else None
         if reaches <= end and (wall is None or reaches <= wall):
             return Answer(drifts_to, "boundary", used, used, reaches, total, mpf(threshold))
-        if wall is not None and wall <= end:
+        if wall is not None and plan.wall is not None and written(plan.wall) <= elapsed:
             evidence += speed * (wall - position)
             forced = drifts_to if plan.cap is not None else ("reject" if evidence > 0 else "accept")
             return Answer(forced, "truncation", used, used, wall, total, evidence)
-        evidence += speed * decimal(time)
+        evidence += speed * (end - position)
         position = end
         if failed:
             evidence += log(mpf(plan.h0) / mpf(plan.h1))
@@ -119,4 +127,4 @@ def _in_time(plan: Plan, observations: list[tuple[float, float]]) -> Answer:
             return Answer(judged, "boundary", used, used, position, total, evidence)
         if plan.cap is not None and total >= plan.cap:
             return Answer(jumps_to, "truncation", used, used, position, total, evidence)
-    return Answer("continue", None, len(observations), len(observations), position, total, evidence)
+    return Answer("continue", None, len(observations), len(observations), digits(elapsed), total, evidence)
