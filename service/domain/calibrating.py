@@ -6,7 +6,8 @@ import numpy as np
 
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan
 from service.domain.families.base import ORIGIN, Start
-from service.domain.procedure import Content, Procedure, with_thresholds
+from service.domain.plan import Content
+from service.domain.procedure import Procedure, with_thresholds
 from service.sequential import boundaries, calibration
 from service.sequential.boundaries import Thresholds
 from service.sequential.calibration import Risks, RisksNotMet

@@ -10,8 +10,8 @@ from service.domain.calibrating import Risks, calibrated, exact_figures, risks_o
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, located
 from service.domain.families import FAMILIES, Family
 from service.domain.families.base import positive_rule
-from service.domain.plan import canonical
-from service.domain.procedure import Content, Procedure, procedure_of_document
+from service.domain.plan import Content, canonical, rounded
+from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.tables import faults_of_table
 from service.sequential.errors import OutOfRange
 from service.sequential.region import StraightRegion
@@ -20,8 +20,6 @@ BOUNDARY_RULES = ("wald", "strict", "calibrated", "given", "table")
 LARGEST_SAMPLE_NUMBER = 1_000_000_000
 REQUIRED = ("family", "h0", "h1", "alpha", "beta")
 DEFAULTS = {"boundaries": "wald", "statistic": "simple"}
-# Digits that are kept of figures that were computed, well above their error.
-DIGITS = 12
 
 
 def checked_content(given: Content) -> str:
@@ -79,19 +77,15 @@ def _completed(content: Content) -> dict[str, Any]:
     completed = dict(content)
     if content["boundaries"] == "calibrated":
         thresholds = calibrated(content)
-        completed["thresholds"] = {"accept": _rounded(thresholds.accept), "reject": _rounded(thresholds.reject)}
+        completed["thresholds"] = {"accept": rounded(thresholds.accept), "reject": rounded(thresholds.reject)}
     if content["boundaries"] in ("calibrated", "table"):
         procedure = procedure_of_document(canonical(completed))
         try:
             risks = risks_of(procedure, exact_figures(procedure, procedure.hypotheses))
         except ComputationTooLarge:
             return completed
-        completed["attained"] = {"alpha": _rounded(risks.alpha), "beta": _rounded(risks.beta)}
+        completed["attained"] = {"alpha": rounded(risks.alpha), "beta": rounded(risks.beta)}
     return completed
-
-
-def _rounded(value: float) -> float:
-    return float(f"{value:.{DIGITS}g}")
 
 
 def _faults_of(content: Content) -> list[Fault]:

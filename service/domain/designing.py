@@ -8,7 +8,8 @@ from service.domain.calibrating import Budget, calibrated, exact_figures, fixed_
 from service.domain.checking import checked_content
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion
 from service.domain.families import FAMILIES
-from service.domain.procedure import Content, Procedure, procedure_of_document, with_thresholds
+from service.domain.plan import Content
+from service.domain.procedure import Procedure, procedure_of_document, with_thresholds
 from service.sequential.boundaries import Thresholds
 from service.sequential.calibration import Risks
 from service.sequential.exact.characteristics import Characteristics

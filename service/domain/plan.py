@@ -8,6 +8,16 @@ from datetime import datetime
 from functools import lru_cache
 from typing import Any
 
+Content = Mapping[str, Any]
+
+# Digits that are kept of figures that were computed, well above their error and as many as a person would write.
+DIGITS = 12
+
+
+def rounded(value: float) -> float:
+    """A computed figure as it is stored with a plan."""
+    return float(f"{value:.{DIGITS}g}")
+
 
 @dataclass(frozen=True)
 class Plan:

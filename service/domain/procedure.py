@@ -8,17 +8,14 @@ import json
 from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Any
 
 from service.domain.families import FAMILIES, Family
-from service.domain.plan import Plan
+from service.domain.plan import Content, Plan
 from service.domain.tables import region_of_table
 from service.sequential import boundaries
 from service.sequential.boundaries import Thresholds
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Region, StraightRegion, Wall, straight_region
-
-Content = Mapping[str, Any]
 
 
 @dataclass(frozen=True)
@@ -80,7 +77,7 @@ def with_thresholds(content: Content, thresholds: Thresholds) -> Procedure:
         OutOfRange: Floating point cannot tell the hypotheses apart.
     """
     family, ratio = _evidence(content)
-    return _procedure(content, thresholds, straight_region(ratio, thresholds, family.span, _wall(content)))
+    return _procedure(content, ratio, thresholds, straight_region(ratio, thresholds, family.span, _wall(content)))
 
 
 @lru_cache(maxsize=1024)
@@ -88,7 +85,8 @@ def _compiled(document: str) -> Procedure:
     content: Content = json.loads(document)
     if content["boundaries"] == "table":
         family, ratio = _evidence(content)
-        return _procedure(content, None, region_of_table(family, content["table"], is_upward=ratio.is_upward))
+        region = region_of_table(family, content["table"], is_upward=ratio.is_upward)
+        return _procedure(content, ratio, None, region)
     return with_thresholds(content, _thresholds(content))
 
 
@@ -97,8 +95,8 @@ def _evidence(content: Content) -> tuple[Family, LikelihoodRatio]:
     return family, family.likelihood_ratio(content["h0"], content["h1"], content.get("known", {}))
 
 
-def _procedure(content: Content, thresholds: Thresholds | None, region: Region) -> Procedure:
-    family, ratio = _evidence(content)
+def _procedure(content: Content, ratio: LikelihoodRatio, thresholds: Thresholds | None, region: Region) -> Procedure:
+    family = FAMILIES[content["family"]]
     hypotheses, risks = (content["h0"], content["h1"]), (content["alpha"], content["beta"])
     return Procedure(family, ratio, thresholds, region, content.get("known", {}), hypotheses, risks)
 

@@ -1,6 +1,5 @@
 """Standard plans by name: the catalogue's entries as contents of plans."""
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
@@ -8,12 +7,9 @@ from typing import Any
 from service.domain.catalogue import INSPECTION, RELIABILITY, CountedStandard, TimedStandard
 from service.domain.errors import Fault, InvalidPlan
 from service.domain.families.base import positive_rule
+from service.domain.plan import Content, rounded
 
 MILITARY = "MIL-HDBK-781A/"
-# Products of a scale and a printed time keep as many digits as a person would write.
-DIGITS = 12
-
-Content = Mapping[str, Any]
 
 
 @dataclass(frozen=True, eq=False)
@@ -95,16 +91,12 @@ def _scaled(standard: Standard, scale: float) -> dict[str, Any]:
     """The standard's content in the plan's unit of time."""
     content = dict(standard.content)
     if standard.needs_scale:
-        content["h0"], content["h1"] = _times(content["h0"], scale), _times(content["h1"], scale)
+        content["h0"], content["h1"] = rounded(scale * content["h0"]), rounded(scale * content["h1"])
         content["table"] = [
-            {name: value if name == "failures" else _times(value, scale) for name, value in row.items()}
+            {name: value if name == "failures" else rounded(scale * value) for name, value in row.items()}
             for row in content["table"]
         ]
     return content
-
-
-def _times(value: float, scale: float) -> float:
-    return float(f"{value * scale:.{DIGITS}g}")
 
 
 def _timed(name: str, entry: TimedStandard) -> Standard:

@@ -10,6 +10,8 @@ from service.sequential.double import FloatArray
 NEGLIGIBLE = 1e-13
 
 QUANTILES = (0.5, 0.9, 0.95, 0.99)
+# Probabilities of still sampling that the quantiles stand for.
+LEVELS = 1.0 - np.array(QUANTILES)
 
 
 class TooMuchWork(Exception):

@@ -18,7 +18,7 @@ from typing import NamedTuple
 import numpy as np
 
 from service.sequential.double import FloatArray, IndexArray
-from service.sequential.exact.characteristics import NEGLIGIBLE, QUANTILES, Characteristics, TooMuchWork, spread
+from service.sequential.exact.characteristics import LEVELS, NEGLIGIBLE, QUANTILES, Characteristics, TooMuchWork, spread
 from service.sequential.exact.processes import Process
 from service.sequential.exact.stretches import NO_CUT, WIDEST, Stretch, stretches_of_looks, stretches_of_time
 from service.sequential.region import Region
@@ -33,8 +33,6 @@ BISECTIONS = 44
 SMALL, MOST_MATRICES = 500_000, 200
 # Stretches are gathered after so many of them, or so many numbers.
 BATCH_STRETCHES, BATCH = 64, 2_000_000
-# Probabilities of still sampling that the quantiles stand for.
-LEVELS = 1.0 - np.array(QUANTILES)
 
 
 def counting_characteristics(

@@ -56,7 +56,7 @@ def gaussian_characteristics(
     bound = float(np.max(np.abs(fine.below - coarse.below))) + float(np.max(np.abs(fine.above - coarse.above)))
     bound += float(np.max(np.abs(fine.mean / coarse.mean - 1.0))) + 1e-13
     # Both share the rounding that the tilt magnifies.
-    tilt = np.abs(drifts) * max(strip.high - start, start - strip.low)
+    tilt = _tilt(strip, drifts, start)
     bound += ROUNDING * math.exp(float(np.max(tilt, where=tilt <= LARGEST_TILT, initial=0.0)))
     deviation = spread(fine.mean, fine.second)
     return Characteristics(fine.below, fine.above, fine.mean, deviation, fine.quantiles(), bound, WORK * counts[0] ** 3)
@@ -75,10 +75,15 @@ def _nodes(strip: Strip) -> tuple[int, int]:
     return fine, coarse
 
 
+def _tilt(strip: Strip, drifts: FloatArray, start: float) -> FloatArray:
+    """The logarithm of the factor by which a drift changes the density at the far end; shape (points,)."""
+    tilt: FloatArray = np.abs(drifts) * max(strip.high - start, start - strip.low)
+    return tilt
+
+
 def _figures(strip: Strip, nodes: int, drifts: FloatArray, start: float, last: int | None) -> Figures:
     """Through the modes where the tilt is mild, step by step elsewhere."""
-    tilt = np.abs(drifts) * max(strip.high - start, start - strip.low)
-    is_mild = (tilt <= LARGEST_TILT) & (np.abs(drifts) <= LARGEST_DRIFT)
+    is_mild = (_tilt(strip, drifts, start) <= LARGEST_TILT) & (np.abs(drifts) <= LARGEST_DRIFT)
     if np.all(is_mild):
         return by_modes(strip, nodes, drifts, start, last)
     if not np.any(is_mild):

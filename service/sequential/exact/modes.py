@@ -20,7 +20,7 @@ from scipy.linalg import eigh
 from scipy.special import ndtr
 
 from service.sequential.double import FloatArray
-from service.sequential.exact.characteristics import QUANTILES
+from service.sequential.exact.characteristics import LEVELS, QUANTILES
 from service.sequential.exact.strip import Figures, Strip, density, nodes_between
 
 MOST_STEPS = 1_000_000_000
@@ -140,13 +140,12 @@ def _weighted(z: FloatArray, count: int) -> FloatArray:
 
 def _quantiles(survival: Callable[[FloatArray], FloatArray], last: int, mean: FloatArray) -> FloatArray:
     """The first n with P(still sampling) <= 1 - q, by doubling the mean and bisection; array of shape (points, 4)."""
-    levels = 1.0 - np.array(QUANTILES)
     high = np.repeat(np.minimum(np.ceil(mean), last)[:, np.newaxis], len(QUANTILES), axis=1)
     low = np.zeros_like(high)
-    while np.any(is_open := (survival(high) > levels) & (high < last)):
+    while np.any(is_open := (survival(high) > LEVELS) & (high < last)):
         low, high = np.where(is_open, high, low), np.where(is_open, np.minimum(2.0 * high, last), high)
     while np.any(high - low > 1.0):
         middle = np.floor(0.5 * (low + high))
-        is_early = survival(middle) > levels
+        is_early = survival(middle) > LEVELS
         low, high = np.where(is_early, middle, low), np.where(is_early, high, middle)
     return high
