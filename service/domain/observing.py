@@ -14,6 +14,7 @@ import numpy as np
 
 from service.domain.errors import Fault, InvalidObservations
 from service.domain.families import Increments
+from service.domain.families.base import Start
 from service.domain.procedure import Procedure
 from service.domain.state import Decided, State, Sum
 from service.sequential.double import Double, FloatArray, running_sum
@@ -35,10 +36,11 @@ class Position:
 
 @dataclass(frozen=True)
 class Walk:
-    """The walk of one submission: running progress and total after each of its observations."""
+    """The walk of one submission: running progress, total and carried sums after each of its observations."""
 
     progress: Double
     total: Double
+    carried: tuple[Double, ...] = ()
 
     @property
     def end(self) -> Position:
@@ -68,9 +70,9 @@ def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at:
     _check_rows(procedure, state, walk)
     exit_ = first_exit(procedure, walk, increments)
     if exit_ is None:
-        return replace(_moved(procedure, state, increments, walk.end), sequence=state.sequence + count)
+        return replace(_moved(procedure, state, increments, walk, walk.end), sequence=state.sequence + count)
     position = Position(exit_.index, exit_.progress, exit_.total)
-    moved = _moved(procedure, state, increments, position)
+    moved = _moved(procedure, state, increments, walk, position)
     return replace(
         moved,
         sequence=state.sequence + count,
@@ -87,11 +89,29 @@ def walk_from(procedure: Procedure, state: State, increments: Increments) -> Wal
     Raises:
         InvalidObservations: The sums grow past what can be kept exactly.
     """
-    start = state.exposure if procedure.family.has_exposure else Sum(float(state.sample_number))
-    progress = running_sum(_double(start), increments.progress)
-    total = running_sum(_double(state.total), increments.total)
-    _check_size(procedure, progress.value, total.value)
-    return Walk(progress, total)
+    family = procedure.family
+    if family.carries:
+        before = zip(_carried(procedure, state), increments.carried, strict=True)
+        carried = tuple(running_sum(_double(start), terms) for start, terms in before)
+        walk = Walk(*family.place(carried, procedure.known), carried)
+    else:
+        start = state.exposure if family.has_exposure else Sum(float(state.sample_number))
+        progress = running_sum(_double(start), increments.progress)
+        walk = Walk(progress, running_sum(_double(state.total), increments.total))
+    _check_size(procedure, walk.progress.value, walk.total.value)
+    return walk
+
+
+def standing_of(procedure: Procedure, state: State) -> Start:
+    """The point of the region at which a state stands."""
+    family = procedure.family
+    if family.carries:
+        sums = [Double(np.array([number.high]), np.array([number.low])) for number in _carried(procedure, state)]
+        progress, total = family.place(sums, procedure.known)
+        values = tuple(number.value for number in _carried(procedure, state))
+        return Start(float(progress.value[0]), float(total.value[0]), values)
+    progress_of = state.exposure.value if family.has_exposure else float(state.sample_number)
+    return Start(progress_of, state.total.value)
 
 
 def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit | None:
@@ -101,7 +121,7 @@ def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit
     return first_exit_at_reports(procedure.region, walk.progress, walk.total)
 
 
-def _moved(procedure: Procedure, state: State, increments: Increments, position: Position) -> State:
+def _moved(procedure: Procedure, state: State, increments: Increments, walk: Walk, position: Position) -> State:
     """The state whose walk of this submission stands at this position."""
     evidence = float(procedure.ratio.log(position.progress, position.total))
     if not math.isfinite(evidence):
@@ -112,6 +132,7 @@ def _moved(procedure: Procedure, state: State, increments: Increments, position:
         exposure=_sum(position.progress) if procedure.family.has_exposure else state.exposure,
         total=_sum(position.total),
         log_likelihood_ratio=evidence + 0.0,  # a negative zero becomes a plain one
+        carried=tuple(_sum(sums.at(position.index)) for sums in walk.carried),
     )
 
 
@@ -147,6 +168,11 @@ def _check_size(procedure: Procedure, progress: FloatArray, total: FloatArray) -
     too_large = not family.has_exposure and progress[-1] > LARGEST_TOTAL
     if too_large or (family.span.is_integer and total[-1] > LARGEST_TOTAL):
         raise InvalidObservations([Fault("", "the totals would pass 2**53 and no longer be exact")])
+
+
+def _carried(procedure: Procedure, state: State) -> tuple[Sum, ...]:
+    """The sums so far; all are zero before the first observation."""
+    return state.carried or (Sum(),) * len(procedure.family.carries)
 
 
 def _double(number: Sum) -> Double:

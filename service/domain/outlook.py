@@ -6,6 +6,7 @@ from functools import lru_cache
 from service.domain.calibrating import accepts_at, exact_figures, rejects_at
 from service.domain.characteristics import Spread, spread_at
 from service.domain.families.base import Start, Way
+from service.domain.observing import standing_of
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import State
 from service.sequential.decision import Decision
@@ -67,7 +68,7 @@ NO_WAYS = Ways(None, None)
 
 def ways_of(procedure: Procedure, state: State) -> Ways:
     """The shortest way to each decision from here."""
-    return NO_WAYS if state.is_decided else _ways(procedure, _standing(procedure, state))
+    return NO_WAYS if state.is_decided else _ways(procedure, standing_of(procedure, state))
 
 
 def outlook_of(document: str, state: State) -> Outlook:
@@ -82,7 +83,7 @@ def outlook_of(document: str, state: State) -> Outlook:
         ComputationTooLarge: The exact figures need more steps than are allowed.
     """
     procedure = procedure_of_document(document)
-    standing = _standing(procedure, state)
+    standing = standing_of(procedure, state)
     if state.is_decided:
         return Outlook(NO_WAYS, procedure.family.estimate(standing), None, (), 0.0)
     return _outlook(document, standing)
@@ -113,11 +114,6 @@ def _outlook(document: str, standing: Start) -> Outlook:
 def _ways(procedure: Procedure, standing: Start) -> Ways:
     lower, upper = procedure.family.ways(procedure.region, standing, procedure.known)
     return Ways(lower, upper) if procedure.region.below is Decision.ACCEPT else Ways(upper, lower)
-
-
-def _standing(procedure: Procedure, state: State) -> Start:
-    progress = state.exposure.value if procedure.family.has_exposure else float(state.sample_number)
-    return Start(progress, state.total.value)
 
 
 def _room(procedure: Procedure, standing: Start) -> Room | None:

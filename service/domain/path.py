@@ -67,7 +67,11 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
         if exit_ is not None:
             break
         state = State(
-            sequence=int(sequence[-1]), sample_number=int(units[-1]), exposure=_last(progress), total=_last(total)
+            sequence=int(sequence[-1]),
+            sample_number=int(units[-1]),
+            exposure=_last(progress),
+            total=_last(total),
+            carried=tuple(_last(sums) for sums in walk.carried),
         )
     return _thinned(_joined(pieces), points)
 

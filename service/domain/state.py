@@ -43,6 +43,7 @@ class State:
         sample_number: Units used (reports, for families watched in time).
         exposure: Unit-time or other exposure used; zero for families without exposure.
         total: The sufficient statistic in its natural unit.
+        carried: Running sums of a family that needs more of them than progress and total; empty before the first.
         log_likelihood_ratio: Evidence for H1 against H0, in nats.
         decision: The answer; accept and reject are final.
         decided: The moment of the decision, once there is one.
@@ -57,6 +58,7 @@ class State:
     decision: Decision = Decision.CONTINUE
     decided: Decided | None = None
     overrun: int = 0
+    carried: tuple[Sum, ...] = ()
 
     @property
     def is_decided(self) -> bool:

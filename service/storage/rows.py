@@ -31,6 +31,7 @@ def row_of_state(state: State) -> Row:
         "decided_at": decided.at if decided else None,
         "decided_cause": decided.cause.value if decided else None,
         "overrun": state.overrun,
+        "carried": json.dumps([[number.high, number.low] for number in state.carried]) if state.carried else None,
     }
 
 
@@ -45,6 +46,7 @@ def state_of(row: RowMapping) -> State:
         decision=Decision(row["decision"]),
         decided=_decided_of(row),
         overrun=row["overrun"],
+        carried=tuple(Sum(high, low) for high, low in json.loads(row["carried"] or "[]")),
     )
 
 

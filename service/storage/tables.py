@@ -85,6 +85,7 @@ def _state_columns() -> list[Column[Any] | CheckConstraint]:
         Column("decided_at", UtcTime),
         Column("decided_cause", String(10)),
         Column("overrun", BigInteger, nullable=False),
+        Column("carried", Text),
         CheckConstraint("decision IN ('continue', 'accept', 'reject')", name="decision"),
         CheckConstraint("decided_cause IN ('boundary', 'truncation')", name="decided_cause"),
     ]

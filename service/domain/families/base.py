@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from service.domain.errors import Fault, InvalidObservations
 from service.sequential.approximations import Motion
-from service.sequential.double import FloatArray
+from service.sequential.double import Double, FloatArray
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
@@ -32,10 +32,11 @@ Document = Mapping[str, Any]
 
 @dataclass(frozen=True)
 class Start:
-    """A point of the region from which sampling goes on."""
+    """A point of the region from which sampling goes on, with the sums that a family carries."""
 
     progress: float = 0.0
     total: float = 0.0
+    carried: tuple[float, ...] = ()
 
 
 ORIGIN = Start()
@@ -68,11 +69,13 @@ class Increments:
         units: What each observation adds to the sample number.
         progress: What it adds to the axis of the region: units or exposure.
         total: What it adds to the sufficient statistic.
+        carried: What it adds to each of the running sums that the family carries; those then give progress and total.
     """
 
     units: NDArray[np.int64]
     progress: FloatArray
     total: FloatArray
+    carried: tuple[FloatArray, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -112,6 +115,7 @@ class Family(ABC):
         is_watched_in_time: The region is watched between reports, not only at their ends.
         parameter_lowers_total: Large parameters make small totals.
         table: The rows of a table for this family, if a plan may be given as one.
+        carries: The running sums that give progress and total where these do not simply add up; see `place`.
     """
 
     name: ClassVar[str]
@@ -126,6 +130,7 @@ class Family(ABC):
     is_watched_in_time: ClassVar[bool] = False
     parameter_lowers_total: ClassVar[bool] = False
     table: ClassVar[TableKind | None] = None
+    carries: ClassVar[tuple[str, ...]] = ()
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -148,6 +153,16 @@ class Family(ABC):
         Raises:
             InvalidObservations: With a fault for each offending element.
         """
+
+    def place(self, sums: Sequence[Double], known: Mapping[str, float]) -> tuple[Double, Double]:
+        """
+        Progress and total from the running sums, for families that carry them.
+
+        Args:
+            sums: One for each name in `carries`, with arrays of shape (observations,).
+            known: What the plan knows beforehand.
+        """
+        raise TypeError(f"{self.name} adds up progress and total themselves")
 
     def parameter_rule(self, value: float) -> str | None:
         """The rule that a true parameter breaks; the ends of the range may be asked for where they mean something."""
