@@ -176,7 +176,7 @@ def _column(document: str, promise: "Promise") -> dict[str, str]:
     if lines is None:
         return {**figures, "limits": "by its table"}
     # The lines are slope * n with these added; where H1 lies below H0, acceptance is above.
-    down, up = ("-", "+") if procedure.ratio.is_upward else ("+", "-")
+    down, up = ("-", "+") if procedure.is_upward else ("+", "-")
     return {
         **figures,
         "line: n times": f"{lines.slope:.10g}",

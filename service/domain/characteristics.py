@@ -4,7 +4,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 
-from service.domain.calibrating import accepts_at, exact_figures, fixed_sample_of, risks_of
+from service.domain.calibrating import accepts_at, around, exact_figures, fixed_sample_of, risks_of
 from service.domain.errors import Fault, InvalidQuestion
 from service.domain.procedure import Procedure, procedure_of_document
 from service.sequential.approximations import OVERSHOOT, approximate
@@ -80,7 +80,7 @@ class Promise:
     method: str
     error_bound: float
     alpha: float
-    beta: float
+    beta: float | None
     points: tuple[Point, ...]
     fixed_sample: Fixed | None
 
@@ -123,13 +123,13 @@ def promise_of(document: str, at: Sequence[float]) -> Promise:
 def _promise(document: str, at: tuple[float, ...]) -> Promise:
     procedure = procedure_of_document(document)
     found = exact_figures(procedure, (*procedure.hypotheses, *at))
-    risks = risks_of(procedure, found)
+    risks, first = risks_of(procedure, found), len(procedure.hypotheses)
     return Promise(
         method="recursion" if procedure.family.span.is_integer else "quadrature",
         error_bound=found.error_bound,
         alpha=risks.alpha,
         beta=risks.beta,
-        points=tuple(_point(procedure, found, i + 2, parameter) for i, parameter in enumerate(at)),
+        points=tuple(_point(procedure, found, i + first, parameter) for i, parameter in enumerate(at)),
         fixed_sample=_fixed_sample(procedure, found),
     )
 
@@ -154,7 +154,7 @@ def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Ap
         return None
     motion = family.motion(parameter, procedure.known)
     more = overshoot * motion.variance**0.5
-    found = approximate(motion, procedure.ratio.slope, region.lower_intercept + more, region.upper_intercept + more)
+    found = approximate(motion, region.ratio.slope, region.lower_intercept + more, region.upper_intercept + more)
     if found is None:
         return None
     accepts = found.below if region.below is Decision.ACCEPT else 1.0 - found.below
@@ -162,7 +162,7 @@ def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Ap
 
 
 def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
-    is_upward = procedure.ratio.is_upward
+    is_upward = procedure.is_upward
     sample = fixed_sample_of(procedure)
     if sample is None:
         return None
@@ -181,5 +181,5 @@ def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
 def common_grid(documents: Sequence[str]) -> tuple[float, ...]:
     """Parameters around all hypotheses of plans of one family."""
     procedures = [procedure_of_document(document) for document in documents]
-    hypotheses = [parameter for procedure in procedures for parameter in procedure.hypotheses]
-    return procedures[0].family.grid(min(hypotheses), max(hypotheses), GRID_POINTS)
+    ends = [parameter for procedure in procedures for parameter in around(procedure)]
+    return procedures[0].family.grid(min(ends), max(ends), GRID_POINTS)

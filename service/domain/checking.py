@@ -2,24 +2,30 @@
 
 import math
 from collections.abc import Mapping, Sequence
+from dataclasses import asdict
 from functools import lru_cache
 from typing import Any
 
+import numpy as np
+
 from service.domain import standards
-from service.domain.calibrating import Risks, calibrated, exact_figures, risks_of
-from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, located
+from service.domain.calibrating import Attained, calibrated, exact_figures, risks_of, worst_of
+from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion, located
 from service.domain.families import FAMILIES, Family
 from service.domain.families.base import positive_rule
-from service.domain.plan import Content, canonical, rounded
+from service.domain.plan import Content, canonical, known_of, rounded
 from service.domain.procedure import Procedure, procedure_of_document
+from service.domain.statistics import STATISTICS, faults_of_statistic
 from service.domain.tables import faults_of_table
+from service.sequential.boundaries import Thresholds
+from service.sequential.curved import CurvedRegion
+from service.sequential.decision import Decision
 from service.sequential.errors import OutOfRange
 from service.sequential.region import StraightRegion
 
-BOUNDARY_RULES = ("wald", "strict", "calibrated", "given", "table")
 LARGEST_SAMPLE_NUMBER = 1_000_000_000
-REQUIRED = ("family", "h0", "h1", "alpha", "beta")
-DEFAULTS = {"boundaries": "wald", "statistic": "simple"}
+REQUIRED = ("family", "h0", "alpha")
+DEFAULTS = {"statistic": "simple"}
 
 
 def checked_content(given: Content) -> str:
@@ -33,7 +39,7 @@ def checked_content(given: Content) -> str:
         InvalidPlan: With a fault for each thing that cannot be right.
         ComputationTooLarge: The boundaries cannot be calibrated within the limit of work.
     """
-    content = standards.expanded({key: value for key, value in {**DEFAULTS, **given}.items() if value is not None})
+    content = _with_defaults(given)
     missing = [Fault(f"/{name}", "is required") for name in REQUIRED if name not in content]
     if missing or (faults := _faults_of(content)):
         raise InvalidPlan(missing or faults)
@@ -41,7 +47,7 @@ def checked_content(given: Content) -> str:
         document = canonical(_completed(content))
         compiled = procedure_of_document(document)
     except OutOfRange as error:
-        raise InvalidPlan([Fault("/h1", f"{error.rule}; h0 is {content['h0']!r}, h1 {content['h1']!r}")]) from error
+        raise InvalidPlan([Fault("/h1", f"{error.rule}; h0 is {content['h0']!r}, h1 {content.get('h1')!r}")]) from error
     _check_truncation_leaves_a_choice(compiled)
     return document
 
@@ -65,27 +71,48 @@ def checked_candidates(given: Sequence[Content]) -> list[str]:
 
 
 @lru_cache(maxsize=64)
-def attained_by(standard: standards.Standard) -> Risks:
+def attained_by(standard: standards.Standard) -> Attained:
     """The exact risks of a standard plan at its own hypotheses."""
     scale = {"scale": 1.0} if standard.needs_scale else {}
     procedure = procedure_of_document(checked_content({"standard": standard.name, **DEFAULTS, **scale}))
     return risks_of(procedure, exact_figures(procedure, procedure.hypotheses))
 
 
+def _with_defaults(given: Content) -> Content:
+    """What was stated, with a standard's name replaced by its table and the defaults filled in."""
+    content = standards.expanded({key: value for key, value in {**DEFAULTS, **given}.items() if value is not None})
+    statistic = STATISTICS.get(content["statistic"], STATISTICS["simple"])
+    return {"boundaries": statistic.boundaries[0], **content}
+
+
 def _completed(content: Content) -> dict[str, Any]:
     """With what is computed from it once and for all."""
     completed = dict(content)
     if content["boundaries"] == "calibrated":
-        thresholds = calibrated(content)
-        completed["thresholds"] = {"accept": rounded(thresholds.accept), "reject": rounded(thresholds.reject)}
-    if content["boundaries"] in ("calibrated", "table"):
+        completed["thresholds"] = _rounded(calibrated(content))
+    is_simple = STATISTICS[content["statistic"]].is_simple
+    if content["boundaries"] in ("calibrated", "table") or not is_simple:
         procedure = procedure_of_document(canonical(completed))
         try:
-            risks = risks_of(procedure, exact_figures(procedure, procedure.hypotheses))
-        except ComputationTooLarge:
+            completed["attained"] = _attained(procedure) if is_simple else _worst(procedure)
+        except (ComputationTooLarge, InvalidQuestion):
             return completed
-        completed["attained"] = {"alpha": rounded(risks.alpha), "beta": rounded(risks.beta)}
     return completed
+
+
+def _rounded(thresholds: Thresholds) -> dict[str, float]:
+    ends = {"accept": thresholds.accept, "reject": thresholds.reject}
+    return {name: rounded(value) for name, value in ends.items() if math.isfinite(value)}
+
+
+def _attained(procedure: Procedure) -> dict[str, float | None]:
+    risks = risks_of(procedure, exact_figures(procedure, procedure.hypotheses))
+    return {name: None if value is None else rounded(value) for name, value in asdict(risks).items()}
+
+
+def _worst(procedure: Procedure) -> dict[str, float | None]:
+    """The risks at the worst points of both hypotheses, and these points."""
+    return {name: None if value is None else rounded(value) for name, value in asdict(worst_of(procedure)).items()}
 
 
 def _faults_of(content: Content) -> list[Fault]:
@@ -93,49 +120,48 @@ def _faults_of(content: Content) -> list[Fault]:
     if family is None:
         known = ", ".join(FAMILIES)
         return [Fault("/family", f"must be one of {known}; received {content['family']!r}")]
+    members = faults_of_statistic(family, content)
+    if members:
+        return members
     return [
-        *_faults_of_statistic(content),
         *_faults_of_hypotheses(family, content),
         *_faults_of_risks(content),
         *_faults_of_boundaries(content),
-        *_faults_of_known(family, content.get("known", {})),
+        *_faults_of_known(family, known_of(content)),
         *_faults_of_truncation(family, content.get("truncation")),
         *_faults_of_rows(family, content),
     ]
-
-
-def _faults_of_statistic(content: Content) -> list[Fault]:
-    statistic = content["statistic"]
-    return [] if statistic == "simple" else [Fault("/statistic", f"must be simple; received {statistic!r}")]
 
 
 def _faults_of_hypotheses(family: Family, content: Content) -> list[Fault]:
     faults = [
         Fault(f"/{name}", f"{rule}: it is a {family.parameter}; received {content[name]!r}")
         for name in ("h0", "h1")
-        if (rule := family.hypothesis_rule(content[name])) is not None
+        if name in content and (rule := family.hypothesis_rule(content[name])) is not None
     ]
-    if content["h0"] == content["h1"]:
+    if STATISTICS[content["statistic"]].is_simple and content["h0"] == content["h1"]:
         faults.append(Fault("/h1", f"must differ from h0; received {content['h1']!r} for both"))
     return faults
 
 
 def _faults_of_risks(content: Content) -> list[Fault]:
-    alpha, beta = content["alpha"], content["beta"]
+    alpha, beta = content["alpha"], content.get("beta")
     faults = [
         Fault(f"/{name}", f"must lie strictly between 0 and 1; received {risk!r}")
         for name, risk in (("alpha", alpha), ("beta", beta))
-        if not 0.0 < risk < 1.0
+        if risk is not None and not 0.0 < risk < 1.0
     ]
-    if not faults and alpha + beta >= 1.0:
+    if not faults and beta is not None and alpha + beta >= 1.0:
         faults.append(Fault("/beta", f"alpha + beta must be below 1; received {alpha!r} + {beta!r}"))
     return faults
 
 
 def _faults_of_boundaries(content: Content) -> list[Fault]:
     rule, thresholds = content["boundaries"], content.get("thresholds")
-    if rule not in BOUNDARY_RULES:
-        return [Fault("/boundaries", f"must be one of {', '.join(BOUNDARY_RULES)}; received {rule!r}")]
+    statistic = STATISTICS[content["statistic"]]
+    if rule not in statistic.boundaries:
+        where = "" if statistic.is_simple else f" for a {statistic.name} plan"
+        return [Fault("/boundaries", f"must be one of {', '.join(statistic.boundaries)}{where}; received {rule!r}")]
     faults = []
     if rule != "table" and "table" in content:
         faults.append(Fault("/table", f'belongs to "table" boundaries, not {rule!r}'))
@@ -145,10 +171,13 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
         return faults
     if thresholds is None:
         return [*faults, Fault("/thresholds", 'are required for "given" boundaries')]
-    if not -1e6 <= thresholds["accept"] < 0.0:  # noqa: PLR2004
-        faults.append(
-            Fault("/thresholds/accept", f"must lie below 0 (at least -1e6); received {thresholds['accept']!r}")
-        )
+    accept = thresholds.get("accept")
+    if accept is None and statistic.is_simple:
+        faults.append(Fault("/thresholds/accept", "is required"))
+    if accept is not None and not statistic.may_accept(content):
+        faults.append(Fault("/thresholds/accept", "means nothing here: nothing accepts before the truncation"))
+    if accept is not None and not -1e6 <= accept < 0.0:  # noqa: PLR2004
+        faults.append(Fault("/thresholds/accept", f"must lie below 0 (at least -1e6); received {accept!r}"))
     if not 0.0 < thresholds["reject"] <= 1e6:  # noqa: PLR2004
         faults.append(Fault("/thresholds/reject", f"must lie above 0 (at most 1e6); received {thresholds['reject']!r}"))
     return faults
@@ -201,9 +230,22 @@ def _count_rule(value: float) -> str | None:
 
 def _check_truncation_leaves_a_choice(procedure: Procedure) -> None:
     """A wall before the first possible decision would make the boundaries meaningless."""
+    if isinstance(procedure.region, CurvedRegion):
+        _check_something_rejects(procedure.region)
     if not isinstance(procedure.region, StraightRegion):
         return
     wall, first = procedure.region.wall, procedure.region.first_possible_decision()
     if wall is not None and wall.progress < first and math.isfinite(first):
         rule = f"must not come before the first possible decision, at {first:.0f}; received {wall.progress:.0f}"
         raise InvalidPlan([Fault("/truncation/sample_number", rule)])
+
+
+def _check_something_rejects(region: CurvedRegion) -> None:
+    """A threshold that no total can reach before the wall, nor at it, would make the test an idle one."""
+    if region.wall is None or region.wall.cap is not None:
+        return
+    limits = region.limits(np.array([region.wall.progress]))
+    ends = ((region.below, limits.lower), (region.above, limits.upper))
+    most = region.span.per_progress * region.wall.progress
+    if not any(end is Decision.REJECT and region.span.floor <= limit[0] <= most for end, limit in ends):
+        raise InvalidPlan([Fault("/truncation", "comes before any total could reject: the threshold is out of reach")])

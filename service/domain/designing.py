@@ -4,14 +4,13 @@ import math
 from dataclasses import dataclass
 from typing import Any
 
-from service.domain.calibrating import Budget, calibrated, exact_figures, fixed_sample_of, risks_of
+from service.domain.calibrating import Attained, Budget, calibrated, exact_figures, fixed_sample_of, risks_of
 from service.domain.checking import checked_content
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion
 from service.domain.families import FAMILIES
 from service.domain.plan import Content
 from service.domain.procedure import Procedure, procedure_of_document, with_thresholds
 from service.sequential.boundaries import Thresholds
-from service.sequential.calibration import Risks
 from service.sequential.exact.characteristics import Characteristics
 
 LARGEST_INFLATION = 1.0
@@ -41,7 +40,7 @@ class Suggestion:
     axis: str
     at: float
     thresholds: Thresholds
-    attained: Risks
+    attained: Attained
     average_at_h0: float
     average_at_h1: float
     inflation: float
@@ -67,6 +66,9 @@ def suggested_truncation(content: Content, inflation: float) -> Suggestion:
     if not 0.0 < inflation <= LARGEST_INFLATION:
         rule = f"must be above 0 and at most {LARGEST_INFLATION:g}; received {inflation!r}"
         raise InvalidQuestion("The inflation is out of range.", [Fault("/suggest_truncation/inflation", rule)])
+    if content.get("statistic") not in (None, "simple"):
+        fault = Fault("/suggest_truncation", f"is for simple plans; received a {content['statistic']} one")
+        raise InvalidQuestion("Only simple plans have a truncation suggested.", [fault])
     if "table" in content or "standard" in content:
         fault = Fault("/suggest_truncation", "means nothing for a table: its last row is the end")
         raise InvalidQuestion("A table has its own truncation.", [fault])
@@ -90,7 +92,7 @@ class _Search:
         left_out = ("truncation", "thresholds", "boundaries")
         stated = {key: value for key, value in content.items() if key not in left_out and value is not None}
         checked_content({**stated, "boundaries": "wald"})
-        self._open = {**stated, "boundaries": "calibrated"}
+        self._open = {"statistic": "simple", **stated, "boundaries": "calibrated"}
         self._inflation = inflation
         self._tries: dict[float, _Try | None] = {}
         self._budget = Budget(MOST_WORK)

@@ -16,7 +16,8 @@ from service.domain.errors import Fault, InvalidObservations
 from service.domain.families import Increments
 from service.domain.families.base import Start
 from service.domain.procedure import Procedure
-from service.domain.state import Decided, State, Sum
+from service.domain.state import Decided, Decision, State, Sum
+from service.domain.statistics import ABOVE, BELOW
 from service.sequential.double import Double, FloatArray, running_sum
 from service.sequential.tables import UnitTable
 from service.sequential.walk import Exit, first_exit_at_reports, first_exit_in_time
@@ -114,6 +115,14 @@ def standing_of(procedure: Procedure, state: State) -> Start:
     return Start(progress_of, state.total.value)
 
 
+def direction_of_rejection(procedure: Procedure, state: State) -> str | None:
+    """Of a two-sided plan's rejection: on which side of h0 the parameter lies; None for others."""
+    if not procedure.is_two_sided or state.decision is not Decision.REJECT:
+        return None
+    h0, estimate = procedure.hypotheses[0], procedure.family.estimate(standing_of(procedure, state))
+    return ABOVE if estimate is None or estimate > h0 else BELOW
+
+
 def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit | None:
     """Where the walk leaves the region, watched as the family is."""
     if procedure.family.is_watched_in_time:
@@ -123,7 +132,7 @@ def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit
 
 def _moved(procedure: Procedure, state: State, increments: Increments, walk: Walk, position: Position) -> State:
     """The state whose walk of this submission stands at this position."""
-    evidence = float(procedure.ratio.log(position.progress, position.total))
+    evidence = float(procedure.evidence.log(position.progress, position.total))
     if not math.isfinite(evidence):
         raise InvalidObservations([Fault("", "the sums are too large for the plan's likelihood ratio")])
     return replace(

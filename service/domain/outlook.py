@@ -1,11 +1,14 @@
 """What is still needed from where a test stands: the shortest ways to each decision, and what is to be expected."""
 
+import math
 from dataclasses import dataclass
 from functools import lru_cache
 
+import numpy as np
+
 from service.domain.calibrating import accepts_at, exact_figures, rejects_at
 from service.domain.characteristics import Spread, spread_at
-from service.domain.families.base import Start, Way
+from service.domain.families.base import Start, Way, plural
 from service.domain.observing import standing_of
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import State
@@ -14,10 +17,15 @@ from service.sequential.decision import Decision
 
 @dataclass(frozen=True)
 class Ways:
-    """The shortest way to each decision; None where the region has none, or the test is decided."""
+    """
+    The shortest way to each decision; None where the region has none, or the test is decided.
+
+    `reject_below` is that to the lower limit of a two-sided region, whose upper one is `reject`.
+    """
 
     accept: Way | None
     reject: Way | None
+    reject_below: Way | None = None
 
 
 @dataclass(frozen=True)
@@ -53,7 +61,7 @@ class Outlook:
     Attributes:
         estimate: Maximum likelihood from the observations so far, None where there is none.
         room: None where the plan is not truncated, or the test is decided.
-        expected: Empty once the test is decided.
+        expected: Empty once the test is decided, and where the plan may go on for ever.
     """
 
     ways: Ways
@@ -93,7 +101,9 @@ def outlook_of(document: str, state: State) -> Outlook:
 def _outlook(document: str, standing: Start) -> Outlook:
     procedure = procedure_of_document(document)
     estimate = procedure.family.estimate(standing)
-    asked = {"h0": procedure.hypotheses[0], "h1": procedure.hypotheses[1]}
+    if procedure.may_go_on_for_ever:
+        return Outlook(_ways(procedure, standing), estimate, None, (), 0.0)
+    asked = dict(zip(("h0", "h1"), procedure.hypotheses, strict=False))
     if estimate is not None:
         asked["estimate"] = estimate
     found = exact_figures(procedure, tuple(asked.values()), standing)
@@ -113,7 +123,22 @@ def _outlook(document: str, standing: Start) -> Outlook:
 
 def _ways(procedure: Procedure, standing: Start) -> Ways:
     lower, upper = procedure.family.ways(procedure.region, standing, procedure.known)
+    if procedure.is_two_sided:
+        return Ways(_way_between(procedure, standing), upper, lower)
     return Ways(lower, upper) if procedure.region.below is Decision.ACCEPT else Ways(upper, lower)
+
+
+def _way_between(procedure: Procedure, standing: Start) -> Way | None:
+    """To the wall of a two-sided region without reaching a limit."""
+    room = _room(procedure, standing)
+    if room is None or procedure.region.wall is None:
+        return None
+    limits = procedure.region.limits(np.array([procedure.region.wall.progress]))
+    low, high = float(limits.lower[0]), float(limits.upper[0])
+    ends = f"a total between {low:.6g} and {high:.6g}" if math.isfinite(low) else f"a total below {high:.6g}"
+    units = room.sample_number
+    more = f"an exposure of {room.exposure:.6g}" if units is None else plural(units, "unit")
+    return Way(room.sample_number, room.exposure, high - standing.total, f"{more} more that end with {ends}")
 
 
 def _room(procedure: Procedure, standing: Start) -> Room | None:

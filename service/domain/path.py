@@ -33,11 +33,16 @@ class Path:
 
 @dataclass(frozen=True)
 class RegionPoint:
-    """The limits of the total at one progress; None where no total of the family decides."""
+    """
+    The limits of the total at one progress; None where no total of the family decides.
+
+    `reject_below` is the lower limit of a two-sided region, whose upper one is `reject`.
+    """
 
     progress: float
     accept: float | None
     reject: float | None
+    reject_below: float | None
 
 
 def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: int) -> Path:
@@ -62,7 +67,7 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
             progress, total = _ending_in(progress, exit_.progress), _ending_in(total, exit_.total)
         units = state.sample_number + np.cumsum(increments.units[:count])
         sequence = state.sequence + np.arange(1, count + 1)
-        evidence = procedure.ratio.log(progress, total)
+        evidence = procedure.evidence.log(progress, total)
         pieces.append(Path(sequence, units, progress.value, total.value, evidence))
         if exit_ is not None:
             break
@@ -86,16 +91,23 @@ def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
     elif not procedure.family.has_exposure:
         progress = np.unique(np.ceil(progress))
     limits = region.limits(progress)
-    accept, reject = (limits.lower, limits.upper) if procedure.ratio.is_upward else (limits.upper, limits.lower)
     return [
-        RegionPoint(float(at), _finite(low), _finite(high))
-        for at, low, high in zip(progress, accept, reject, strict=True)
+        _region_point(procedure, float(at), _finite(low), _finite(high))
+        for at, low, high in zip(progress, limits.lower, limits.upper, strict=True)
     ]
+
+
+def _region_point(procedure: Procedure, progress: float, lower: float | None, upper: float | None) -> RegionPoint:
+    if procedure.is_two_sided:
+        return RegionPoint(progress, None, upper, lower)
+    return (
+        RegionPoint(progress, lower, upper, None) if procedure.is_upward else RegionPoint(progress, upper, lower, None)
+    )
 
 
 def _origin(procedure: Procedure) -> Path:
     zero = np.zeros(1)
-    evidence = procedure.ratio.log(Double(zero, zero), Double(zero, zero)) + 0.0
+    evidence = procedure.evidence.log(Double(zero, zero), Double(zero, zero)) + 0.0
     return Path(np.zeros(1, np.int64), np.zeros(1, np.int64), zero, zero, evidence)
 
 

@@ -10,6 +10,9 @@ from typing import Any
 
 Content = Mapping[str, Any]
 
+# The member of `known` that is no number.
+PRIOR = "prior"
+
 # Digits that are kept of figures that were computed, well above their error and as many as a person would write.
 DIGITS = 12
 
@@ -70,6 +73,17 @@ def stated(document: str) -> Mapping[str, Any]:
 def fingerprint_of(document: str) -> str:
     """SHA-256 of a canonical document, hexadecimal."""
     return hashlib.sha256(document.encode()).hexdigest()
+
+
+def known_of(content: Content) -> Mapping[str, float]:
+    """The numbers that the family needs to know beforehand."""
+    return {name: value for name, value in content.get("known", {}).items() if name != PRIOR}
+
+
+def prior_of(content: Content) -> Mapping[str, float] | None:
+    """The prior that a mixture averages over."""
+    prior: Mapping[str, float] | None = content.get("known", {}).get(PRIOR)
+    return prior
 
 
 @lru_cache(maxsize=1024)

@@ -1,19 +1,24 @@
 """
-A plan made ready to run: its content compiled to a likelihood ratio and a region.
+A plan made ready to run: its content compiled to its evidence and a region.
 
 Content is plain JSON with its defaults filled in, as `checking.checked_content` makes it.
 """
 
 import json
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import lru_cache
 
 from service.domain.families import FAMILIES, Family
-from service.domain.plan import Content, Plan
+from service.domain.plan import Content, Plan, known_of
+from service.domain.statistics import accepts_early, evidence_of, hypotheses_of
 from service.domain.tables import region_of_table
 from service.sequential import boundaries
 from service.sequential.boundaries import Thresholds
+from service.sequential.curved import CurvedRegion
+from service.sequential.decision import Decision
+from service.sequential.evidence import Evidence
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Region, StraightRegion, Wall, straight_region
 
@@ -23,16 +28,36 @@ class Procedure:
     """
     A plan's numbers at work: the family, the evidence, the limits and the region that decides.
 
-    `thresholds` is None where the limits are not of the log-likelihood ratio but a table's.
+    Attributes:
+        thresholds: None where the limits are not of the log-likelihood ratio but a table's. `accept` is minus infinity
+            where nothing accepts before the truncation.
+        hypotheses: h0, and h1 where the plan states one apart from it.
+        risks: alpha, and beta where the plan states one.
     """
 
     family: Family
-    ratio: LikelihoodRatio
+    evidence: LikelihoodRatio | Evidence
     thresholds: Thresholds | None
     region: Region
     known: Mapping[str, float]
-    hypotheses: tuple[float, float]
-    risks: tuple[float, float]
+    hypotheses: tuple[float, ...]
+    risks: tuple[float, float | None]
+
+    @property
+    def is_two_sided(self) -> bool:
+        """Both limits of the region reject."""
+        return self.region.below is self.region.above
+
+    @property
+    def is_upward(self) -> bool:
+        """Large totals speak for H1."""
+        return self.region.above is Decision.REJECT
+
+    @property
+    def may_go_on_for_ever(self) -> bool:
+        """Nothing but the rejection of H0 ends sampling."""
+        never_accepts = self.thresholds is not None and math.isinf(self.thresholds.accept)
+        return never_accepts and self.region.wall is None
 
 
 @dataclass(frozen=True)
@@ -65,8 +90,8 @@ def lines_of(procedure: Procedure) -> Lines | None:
     if not isinstance(region, StraightRegion):
         return None
     lower, upper = region.lower_intercept, region.upper_intercept
-    accept, reject = (lower, upper) if procedure.ratio.is_upward else (upper, lower)
-    return Lines(procedure.ratio.slope, accept, reject)
+    accept, reject = (lower, upper) if procedure.is_upward else (upper, lower)
+    return Lines(region.ratio.slope, accept, reject)
 
 
 def with_thresholds(content: Content, thresholds: Thresholds) -> Procedure:
@@ -76,35 +101,42 @@ def with_thresholds(content: Content, thresholds: Thresholds) -> Procedure:
     Raises:
         OutOfRange: Floating point cannot tell the hypotheses apart.
     """
-    family, ratio = _evidence(content)
-    return _procedure(content, ratio, thresholds, straight_region(ratio, thresholds, family.span, _wall(content)))
+    family = FAMILIES[content["family"]]
+    evidence, wall = evidence_of(family, content), _wall(content)
+    region: Region
+    if isinstance(evidence, LikelihoodRatio):
+        region = straight_region(evidence, thresholds, family.span, wall)
+    else:
+        region = CurvedRegion(evidence, thresholds, family.span, wall)
+    return _procedure(content, evidence, thresholds, region)
 
 
 @lru_cache(maxsize=1024)
 def _compiled(document: str) -> Procedure:
     content: Content = json.loads(document)
     if content["boundaries"] == "table":
-        family, ratio = _evidence(content)
-        region = region_of_table(family, content["table"], is_upward=ratio.is_upward)
-        return _procedure(content, ratio, None, region)
+        family = FAMILIES[content["family"]]
+        evidence = evidence_of(family, content)
+        region = region_of_table(family, content["table"], is_upward=evidence.is_upward)
+        return _procedure(content, evidence, None, region)
     return with_thresholds(content, _thresholds(content))
 
 
-def _evidence(content: Content) -> tuple[Family, LikelihoodRatio]:
-    family = FAMILIES[content["family"]]
-    return family, family.likelihood_ratio(content["h0"], content["h1"], content.get("known", {}))
-
-
-def _procedure(content: Content, ratio: LikelihoodRatio, thresholds: Thresholds | None, region: Region) -> Procedure:
-    family = FAMILIES[content["family"]]
-    hypotheses, risks = (content["h0"], content["h1"]), (content["alpha"], content["beta"])
-    return Procedure(family, ratio, thresholds, region, content.get("known", {}), hypotheses, risks)
+def _procedure(
+    content: Content, evidence: LikelihoodRatio | Evidence, thresholds: Thresholds | None, region: Region
+) -> Procedure:
+    family, risks = FAMILIES[content["family"]], (content["alpha"], content.get("beta"))
+    return Procedure(family, evidence, thresholds, region, known_of(content), hypotheses_of(content), risks)
 
 
 def _thresholds(content: Content) -> Thresholds:
     """Stored with the plan where they were given or calibrated; what follows from the risks alone is not."""
-    if "thresholds" in content:
-        return Thresholds(float(content["thresholds"]["accept"]), float(content["thresholds"]["reject"]))
+    stored = content.get("thresholds")
+    if stored is not None:
+        accept = stored.get("accept")
+        return Thresholds(-math.inf if accept is None else float(accept), float(stored["reject"]))
+    if not accepts_early(content):
+        return Thresholds(-math.inf, boundaries.strict(content["alpha"], 1.0).reject)
     rule = boundaries.strict if content["boundaries"] == "strict" else boundaries.wald
     return rule(content["alpha"], content["beta"])
 

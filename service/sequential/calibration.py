@@ -20,7 +20,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.optimize import root
+from scipy.optimize import brentq, root
 
 from service.sequential.boundaries import Thresholds, strict
 from service.sequential.double import FloatArray
@@ -117,6 +117,37 @@ def smallest(risks_at: RisksAt, stated: Risks) -> Thresholds:
         if max(reject / limits.reject, accept / limits.accept) >= OUTERMOST:
             break
     raise RisksNotMet(risks_at(Thresholds(accept, reject)))
+
+
+def reject_alone(alpha_at: Callable[[float], float], stated: float, *, is_stepwise: bool) -> float:
+    """
+    The reject threshold of a region that accepts only at its wall: the one whose exact alpha equals the stated one, or,
+    where alpha moves in steps, the smallest whose alpha does not exceed it.
+
+    Args:
+        alpha_at: The exact alpha between minus infinity and a threshold; falls as it rises.
+        stated: In (0, 1).
+        is_stepwise: Alpha moves in steps.
+
+    Raises:
+        RisksNotMet: Even a far threshold exceeds it.
+    """
+    scale = strict(stated, stated).reject
+    if not is_stepwise:
+
+        def miss(log: float) -> float:
+            return math.log(max(alpha_at(math.exp(log)), 1e-300)) - math.log(stated)
+
+        near, far = math.log(INNERMOST * scale), math.log(OUTERMOST * scale)
+        if miss(near) > 0.0 > miss(far):
+            return math.exp(brentq(miss, near, far, xtol=1e-14, rtol=1e-14))
+    limit = INNERMOST * scale
+    for turn, resolution in enumerate(RESOLUTIONS):
+        search = _Search(resolution, is_last=turn == len(RESOLUTIONS) - 1)
+        limit = search.let_out(lambda at: alpha_at(at) / stated, limit, scale)
+    if limit >= OUTERMOST * scale:
+        raise RisksNotMet(Risks(alpha_at(limit), math.nan))
+    return limit
 
 
 def _thresholds(logs: FloatArray) -> Thresholds:

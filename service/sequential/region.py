@@ -81,7 +81,7 @@ class Limits:
     The region at some progress values; arrays of shape (points,).
 
     Sampling goes on while lower < total < upper. A limit that no total can reach is infinite. Where the wall stands,
-    the two meet, and `lower` includes the total that accepts.
+    the two usually meet, and `lower` includes the total that ends below.
     """
 
     lower: FloatArray
@@ -106,6 +106,11 @@ class Region(Protocol):
         """The decision for totals at or over the upper limit."""
         ...
 
+    @property
+    def between(self) -> Decision:
+        """The decision for totals between the limits of the wall, where these leave room."""
+        ...
+
     def limits(self, progress: FloatArray) -> Limits:
         """The limits at each progress, the wall included; array of shape (points,)."""
         ...
@@ -115,7 +120,7 @@ class Region(Protocol):
         ...
 
     def sides_at_wall(self, progress: Double, total: Double) -> SideArray:
-        """The forced decision for each point at or past the wall: BELOW or ABOVE; array of shape (points,)."""
+        """The forced end of each point at or past the wall, INSIDE between its limits; array of shape (points,)."""
         ...
 
     def lower_reached_at(self, total: FloatArray) -> FloatArray:
@@ -144,6 +149,8 @@ class StraightRegion:
     upper_intercept: float
     span: Span
     wall: Wall | None = None
+
+    between = Decision.ACCEPT  # the lines' wall leaves no room
 
     @property
     def below(self) -> Decision:

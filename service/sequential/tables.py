@@ -37,6 +37,8 @@ class UnitTable:
     below: Decision
     above: Decision
 
+    between = Decision.ACCEPT  # the last row leaves no room
+
     @property
     def wall(self) -> Wall:
         """See `Region`."""
@@ -102,6 +104,7 @@ class TimeTable:
     wall: Wall
 
     below = Decision.ACCEPT
+    between = Decision.ACCEPT  # the wall leaves no room
     above = Decision.REJECT
 
     @cached_property

@@ -87,7 +87,8 @@ def _exit(region: Region, index: int, progress: Double, total: Double, side: int
     cause = Cause.TRUNCATION if side == INSIDE else Cause.BOUNDARY
     if side == INSIDE:
         side = _single(region.sides_at_wall(_as_array(progress), _as_array(total)))
-    return Exit(index, progress, total, region.below if side == BELOW else region.above, cause)
+    decisions = {BELOW: region.below, INSIDE: region.between, ABOVE: region.above}
+    return Exit(index, progress, total, decisions[int(side)], cause)
 
 
 def _first(leaves: BoolArray) -> int | None:

@@ -15,7 +15,8 @@ from collections.abc import Callable
 import numpy as np
 
 from service.sequential.double import BoolArray, Double, FloatArray
-from service.sequential.region import ABOVE, BELOW, Limits, Region, StraightRegion, looks_to_wall
+from service.sequential.region import ABOVE, BELOW, Limits, Region, looks_to_wall
+from service.sequential.tables import UnitTable
 
 # No test goes so far; whole numbers up to here are exact in a double.
 FURTHEST = 2**53
@@ -89,9 +90,9 @@ def _looks(region: Region, progress: float, total: float, step: float, rise: flo
         return bool(below[0] or above[0])
 
     first = _first_in_block(lambda looks: np.logical_or(*at(looks)[:2]), last)
-    if first is None and not isinstance(region, StraightRegion):
+    if first is None and isinstance(region, UnitTable):
         return None
-    if first is None:  # between two straight lines a ray that has left stays outside, so halving finds the moment
+    if first is None:  # outside the limits of a likelihood ratio a ray that has left stays, so halving finds the moment
         first = last if last is not None and not ends(last) else _first_true(ends, begin=BLOCK)
     if first is None:
         return None

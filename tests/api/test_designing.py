@@ -101,7 +101,7 @@ def test_a_staged_table_looks_only_at_its_rows(admin: httpx.Client, new_name: Na
     state = admin.post(f"/v1/tests/{key}/observations", json={"values": [1, 1, 1, 0, 0]}).json()
     assert state["decision"] == "continue"
     assert state["thresholds"] is None
-    assert state["outlook"] == {"accept": None, "reject": "5 units, whatever they show"}
+    assert state["outlook"] == {"accept": None, "reject": "5 units, whatever they show", "reject_below": None}
     state = admin.post(f"/v1/tests/{key}/observations", json={"values": [0] * 5}).json()
     assert (state["decision"], state["decided"]["sample_number"], state["decided"]["cause"]) == (
         "reject",
@@ -140,6 +140,8 @@ def test_a_standard_plan_runs_from_its_name_alone(admin: httpx.Client, new_name:
     assert plan["attained"] == {
         "alpha": pytest.approx(0.182492, abs=5e-7),
         "beta": pytest.approx(0.192581, abs=5e-7),
+        "alpha_at": None,
+        "beta_at": None,
     }
     assert "MIL-HDBK-781A" in plan["source"]
     key = new_name("lot")
@@ -199,7 +201,11 @@ def test_a_new_test_knows_the_shortest_ways(
 ) -> None:
     """By hand from the lines: PUMP: ln 9 / (1/500 - 1/1000) = 2197.22; (4 ln 2 - ln 9) * 1000 = 575.364."""
     key = with_test(admin, new_name, plan)
-    assert admin.get(f"/v1/tests/{key}").json()["outlook"] == {"accept": accept, "reject": reject}
+    assert admin.get(f"/v1/tests/{key}").json()["outlook"] == {
+        "accept": accept,
+        "reject": reject,
+        "reject_below": None,
+    }
 
 
 @pytest.mark.parametrize("plan", [SEAL, WELD, PUMP, SHAFT])

@@ -93,4 +93,5 @@ def test_a_risk_that_no_limit_can_raise_stays_below_the_stated_one() -> None:
     plan = checked_content({"family": "exponential", "h0": 0.3106, "h1": 25.87, **stated, "boundaries": "calibrated"})
     promise = promise_of(plan, [0.3106, 25.87])
     assert promise.alpha == pytest.approx(0.00303, abs=1e-8)
+    assert promise.beta is not None
     assert promise.beta < 0.369

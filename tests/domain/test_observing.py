@@ -15,6 +15,7 @@ from service.domain.observing import observe
 from service.domain.plan import Plan
 from service.domain.procedure import Procedure, procedure_of
 from service.domain.state import State
+from service.sequential.likelihood import LikelihoodRatio
 from tests.sequential.reference import slow
 
 NOW = datetime(2031, 5, 4, 9, 30, tzinfo=UTC)
@@ -119,7 +120,9 @@ def test_every_decision_agrees_with_the_slow_reference_in_any_split(
     assert whole.total.value == pytest.approx(float(expected.total), rel=1e-13, abs=1e-13)
     if compiled.family.has_exposure:
         assert whole.exposure.value == pytest.approx(float(expected.position), rel=1e-12)
-    size = abs(compiled.ratio.gain) * (abs(whole.total.value) + abs(compiled.ratio.slope) * float(expected.position))
+    ratio = compiled.evidence
+    assert isinstance(ratio, LikelihoodRatio)
+    size = abs(ratio.gain) * (abs(whole.total.value) + abs(ratio.slope) * float(expected.position))
     assert abs(whole.log_likelihood_ratio - float(expected.evidence)) <= 1e-12 * max(1.0, size)
     if whole.decided is not None:
         assert whole.decided.cause == expected.cause

@@ -34,6 +34,7 @@ def test_the_true_risks_of_the_reliability_plans(name: str) -> None:
     document = standard(f"MIL-HDBK-781A/{name}", scale=100.0)
     procedure = procedure_of_document(document)
     promise = promise_of(document, procedure.hypotheses)
+    assert promise.beta is not None
     assert 100 * promise.alpha == pytest.approx(alpha, abs=0.0501)
     assert 100 * promise.beta == pytest.approx(beta, abs=0.0601)  # VI-D: 19.258 is printed as 19.2
     assert 100 * promise.alpha == pytest.approx(exact_alpha, abs=5.1e-5)

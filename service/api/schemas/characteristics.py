@@ -178,7 +178,7 @@ class CharacteristicsOut(Answer):
             suggested_truncation=None if suggestion is None else SuggestionOut.of(suggestion),
             method=promise.method,
             error_bound=promise.error_bound,
-            attained=AttainedOut(alpha=promise.alpha, beta=promise.beta),
+            attained=AttainedOut(alpha=promise.alpha, beta=promise.beta, alpha_at=None, beta_at=None),
             points=[PointOut.of(point) for point in promise.points],
             fixed_sample=None if promise.fixed_sample is None else FixedSampleOut.model_validate(promise.fixed_sample),
         )

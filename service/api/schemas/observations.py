@@ -44,8 +44,8 @@ PATH: dict[str, Any] = {
         {"sequence": 1, "sample_number": 1, "exposure": None, "total": 0, "log_likelihood_ratio": -0.0953101798043249},
     ],
     "region": [
-        {"sample_number": 1, "exposure": None, "accept": None, "reject": None},
-        {"sample_number": 24, "exposure": None, "accept": 0, "reject": 3},
+        {"sample_number": 1, "exposure": None, "accept": None, "reject": None, "reject_below": None},
+        {"sample_number": 24, "exposure": None, "accept": 0, "reject": 3, "reject_below": None},
     ],
 }
 
@@ -166,6 +166,7 @@ class RegionPointOut(Answer):
     exposure: float | None
     accept: int | float | None
     reject: int | float | None
+    reject_below: int | float | None = Field(description="The lower limit of a two-sided plan; null for others.")
 
 
 class PathOut(Answer):
@@ -247,6 +248,7 @@ def _region_point(procedure: Procedure, point: RegionPoint) -> RegionPointOut:
         exposure=point.progress if has_exposure else None,
         accept=_limit(procedure, point.accept),
         reject=_limit(procedure, point.reject),
+        reject_below=_limit(procedure, point.reject_below),
     )
 
 

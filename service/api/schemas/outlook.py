@@ -13,6 +13,7 @@ OUTLOOK: dict[str, Any] = {
     "decision": "continue",
     "accept": {"observations": 21, "exposure": None, "total": 0, "words": "21 conforming units"},
     "reject": {"observations": 2, "exposure": None, "total": 2, "words": "2 nonconforming units"},
+    "reject_below": None,
     "room": {"sample_number": 180, "exposure": None, "failures": None},
     "estimate": 0.05,
     "expected": [
@@ -96,6 +97,7 @@ class OutlookOut(Answer):
     decision: str
     accept: WayOut | None
     reject: WayOut | None
+    reject_below: WayOut | None = Field(description="To the lower limit of a two-sided plan; null for others.")
     room: RoomOut | None = Field(description="Null without truncation.")
     estimate: float | None = Field(description="Maximum likelihood, from the observations so far.")
     expected: list[ExpectedOut]
@@ -108,6 +110,7 @@ class OutlookOut(Answer):
             decision=state.decision,
             accept=optional(WayOut, outlook.ways.accept),
             reject=optional(WayOut, outlook.ways.reject),
+            reject_below=optional(WayOut, outlook.ways.reject_below),
             room=optional(RoomOut, outlook.room),
             estimate=outlook.estimate,
             expected=[ExpectedOut.of(expected) for expected in outlook.expected],

@@ -1,12 +1,13 @@
 """Plans."""
 
+import math
 from datetime import datetime
 from typing import Annotated, Any
 
-from pydantic import ConfigDict, Field
+from pydantic import ConfigDict, Field, field_validator
 
 from service.api.schemas.common import Answer, Form, Name, Number, Text, Whole, optional, shown_as
-from service.domain.calibrating import Risks
+from service.domain.calibrating import Attained
 from service.domain.plan import Plan
 from service.domain.procedure import lines_of, procedure_of
 from service.domain.standards import Standard, source_of
@@ -28,6 +29,8 @@ STORED: dict[str, Any] = {
     **EXAMPLE,
     "parameter": "proportion nonconforming",
     "statistic": "simple",
+    "sides": None,
+    "direction": None,
     "known": None,
     "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
     "lines": {"slope": 0.02499, "accept_intercept": 1.36382, "reject_intercept": 1.75096},
@@ -42,7 +45,7 @@ STORED: dict[str, Any] = {
 }
 
 # Members of a stored plan that not every plan has.
-OPTIONAL = ("truncation", "known", "table", "standard", "scale", "attained")
+OPTIONAL = ("h1", "beta", "sides", "direction", "truncation", "known", "table", "standard", "scale", "attained")
 
 
 class TruncationForm(Form):
@@ -56,7 +59,7 @@ class TruncationForm(Form):
 class ThresholdsForm(Form):
     """Limits of the log-likelihood ratio, in nats."""
 
-    accept: Number
+    accept: Number | None = Field(None, description="Left out where nothing accepts before the truncation.")
     reject: Number
 
 
@@ -76,17 +79,26 @@ class PlanContentForm(Form):
 
     family: str | None = Field(None, description="bernoulli, poisson, exponential or normal. Required.")
     h0: Number | None = Field(None, description="Parameter under H0; see the family. Required.")
-    h1: Number | None = Field(None, description="Parameter under H1. Required.")
+    h1: Number | None = Field(None, description="Parameter under H1; required for simple plans.")
     alpha: Number | None = Field(None, description="Producer's risk: P(reject) when H0 is true. Required.")
-    beta: Number | None = Field(None, description="Consumer's risk: P(accept) when H1 is true. Required.")
-    boundaries: str = Field("wald", description="wald, strict, calibrated, given or table.")
+    beta: Number | None = Field(None, description="Consumer's risk: P(accept) when H1 is true.")
+    boundaries: str | None = Field(
+        None,
+        description="wald, strict, calibrated, given or table; when left out wald, for generalised plans calibrated, "
+        "for mixture plans strict.",
+    )
     table: Annotated[list[RowForm], Field(max_length=2000)] | None = Field(None, description='With "table" boundaries.')
     standard: Text | None = Field(None, description="The name of a standard plan; see GET /v1/standard-plans.")
     scale: Number | None = Field(None, description="With a reliability standard: the lower test mean life.")
-    statistic: str = Field("simple", description="simple.")
+    statistic: str | None = Field(None, description="simple (when left out), generalised or mixture.")
+    sides: Whole | None = Field(None, description="2: H0 is h0 alone, against both sides of it. 1 when left out.")
+    direction: str | None = Field(None, description="above (when left out) or below: where H1 lies without an h1.")
     thresholds: ThresholdsForm | None = Field(None, description='With "given" boundaries.')
     truncation: TruncationForm | None = None
-    known: dict[Name, Number] | None = Field(None, description='What the family needs to know: {"sigma": 0.6}.')
+    known: dict[Name, Number | dict[Name, Number]] | None = Field(
+        None,
+        description='What the family needs to know: {"sigma": 0.6}; for a mixture its prior: {"prior": {"tau": 0.3}}.',
+    )
 
     def content(self) -> dict[str, Any]:
         """The plan without its name, as the domain takes it."""
@@ -104,8 +116,13 @@ class PlanForm(PlanContentForm):
 class ThresholdsOut(Answer):
     """Accept at or below ln B, reject at or above ln A, in nats."""
 
-    accept: float
+    accept: float | None = Field(description="Null where nothing accepts before the truncation.")
     reject: float
+
+    @field_validator("accept", mode="before")
+    @classmethod
+    def _never(cls, accept: float | None) -> float | None:
+        return None if accept is None or math.isinf(accept) else accept
 
 
 class LinesOut(Answer):
@@ -121,10 +138,12 @@ Row = dict[str, int | float]
 
 
 class AttainedOut(Answer):
-    """The exact risks: P(reject) at h0 and P(accept) at h1."""
+    """The exact risks: P(reject) at h0 and P(accept) at h1; of composite hypotheses the largest, and where."""
 
     alpha: float
-    beta: float
+    beta: float | None = Field(description="Null where the plan states no h1 apart from h0.")
+    alpha_at: float | None = Field(None, description="Of composite hypotheses: the parameter of H0 with this alpha.")
+    beta_at: float | None = Field(None, description="Of composite hypotheses: the parameter of H1 with this beta.")
 
 
 class PlanOut(Answer):
@@ -136,13 +155,15 @@ class PlanOut(Answer):
     family: str
     parameter: str
     h0: float
-    h1: float
+    h1: float | None
     alpha: float
-    beta: float
+    beta: float | None
     boundaries: str
     statistic: str
+    sides: int | None
+    direction: str | None
     truncation: dict[str, int | float] | None
-    known: dict[str, float] | None
+    known: dict[str, float | dict[str, float]] | None
     thresholds: ThresholdsOut | None = Field(description="Null where the limits are a table's.")
     lines: LinesOut | None = Field(description="Null where straight lines do not bound the region.")
     table: list[Row] | None
@@ -197,7 +218,7 @@ class StandardOut(Answer):
     table: list[Row]
 
     @classmethod
-    def of(cls, standard: Standard, attained: Risks) -> "StandardOut":
+    def of(cls, standard: Standard, attained: Attained) -> "StandardOut":
         """From the catalogue's entry, at scale 1 where it has one."""
         return cls(
             name=standard.name,

@@ -8,9 +8,11 @@ from pydantic import ConfigDict, Field
 from service.api.schemas.common import Answer, Form, Name, Text, optional, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.families import Family
+from service.domain.families.base import Way
+from service.domain.observing import direction_of_rejection
 from service.domain.outlook import Ways, ways_of
 from service.domain.plan import Plan
-from service.domain.procedure import procedure_of
+from service.domain.procedure import Procedure, procedure_of
 from service.domain.sequential_test import SequentialTest, Subject, SubjectKind
 from service.domain.state import State
 from service.ingest.commands import Posted
@@ -31,7 +33,13 @@ STATE: dict[str, Any] = {
     "sample_number": 24,
     "exposure": None,
     "total": 0,
-    "decided": {"sample_number": 24, "exposure": None, "at": "2031-05-04T09:30:00Z", "cause": "boundary"},
+    "decided": {
+        "sample_number": 24,
+        "exposure": None,
+        "at": "2031-05-04T09:30:00Z",
+        "cause": "boundary",
+        "direction": None,
+    },
     "outlook": None,
     "overrun": 1,
     "status": "open",
@@ -78,6 +86,7 @@ class DecidedOut(Answer):
     exposure: float | None
     at: datetime
     cause: str
+    direction: str | None = Field(description="Of a two-sided plan's rejection: above or below h0; null for others.")
 
 
 class WaysOut(Answer):
@@ -85,12 +94,12 @@ class WaysOut(Answer):
 
     accept: str | None
     reject: str | None
+    reject_below: str | None = Field(description="To the lower limit of a two-sided plan; null for others.")
 
     @classmethod
     def of(cls, ways: Ways) -> "WaysOut":
         """From the domain's ways."""
-        accept, reject = ways.accept, ways.reject
-        return cls(accept=None if accept is None else accept.words, reject=None if reject is None else reject.words)
+        return cls(accept=_words(ways.accept), reject=_words(ways.reject), reject_below=_words(ways.reject_below))
 
 
 class TestOut(Answer):
@@ -169,7 +178,7 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "sample_number": state.sample_number,
         "exposure": state.exposure.value if procedure.family.has_exposure else None,
         "total": total_of(procedure.family, state.total.value),
-        "decided": _decided(state),
+        "decided": _decided(procedure, state),
         "outlook": None if state.is_decided else WaysOut.of(ways_of(procedure, state)),
         "overrun": state.overrun,
         "status": test.status,
@@ -179,5 +188,18 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
     }
 
 
-def _decided(state: State) -> DecidedOut | None:
-    return None if state.decided is None else DecidedOut.model_validate(state.decided)
+def _decided(procedure: Procedure, state: State) -> DecidedOut | None:
+    decided = state.decided
+    if decided is None:
+        return None
+    return DecidedOut(
+        sample_number=decided.sample_number,
+        exposure=decided.exposure,
+        at=decided.at,
+        cause=decided.cause,
+        direction=direction_of_rejection(procedure, state),
+    )
+
+
+def _words(way: Way | None) -> str | None:
+    return None if way is None else way.words

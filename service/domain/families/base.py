@@ -12,7 +12,9 @@ from numpy.typing import NDArray
 
 from service.domain.errors import Fault, InvalidObservations
 from service.sequential.approximations import Motion
+from service.sequential.deviance import Deviance
 from service.sequential.double import Double, FloatArray
+from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
@@ -115,6 +117,7 @@ class Family(ABC):
         is_watched_in_time: The region is watched between reports, not only at their ends.
         parameter_lowers_total: Large parameters make small totals.
         table: The rows of a table for this family, if a plan may be given as one.
+        prior: Names of the parameters of its conjugate prior; empty for families without composite hypotheses.
         carries: The running sums that give progress and total where these do not simply add up; see `place`.
     """
 
@@ -130,6 +133,7 @@ class Family(ABC):
     is_watched_in_time: ClassVar[bool] = False
     parameter_lowers_total: ClassVar[bool] = False
     table: ClassVar[TableKind | None] = None
+    prior: ClassVar[tuple[str, ...]] = ()
     carries: ClassVar[tuple[str, ...]] = ()
 
     @abstractmethod
@@ -163,6 +167,29 @@ class Family(ABC):
             known: What the plan knows beforehand.
         """
         raise TypeError(f"{self.name} adds up progress and total themselves")
+
+    def deviance(self, known: Mapping[str, float]) -> Deviance:
+        """How far observations lie from a parameter, for families with composite hypotheses."""
+        raise TypeError(f"{self.name} has no composite hypotheses")
+
+    def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
+        """
+        The evidence of a mixture over the conjugate prior, for families with composite hypotheses.
+
+        Args:
+            edge: H0's value, as a mean of the total in one unit of progress.
+            direction: 1 where H1 lies above the edge, -1 below, 0 on both sides.
+            known, prior: As a plan states them.
+        """
+        raise TypeError(f"{self.name} has no composite hypotheses")
+
+    def mean_of(self, parameter: float) -> float:
+        """The mean of the total in one unit of progress."""
+        return parameter
+
+    def parameter_of(self, mean: float) -> float:
+        """The parameter with this mean of the total in one unit of progress."""
+        return mean
 
     def parameter_rule(self, value: float) -> str | None:
         """The rule that a true parameter breaks; the ends of the range may be asked for where they mean something."""

@@ -19,14 +19,17 @@ from service.domain.families.base import (
     refuse,
     whole_numbers,
 )
-from service.sequential import fixed_sample, likelihood
+from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
+from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Units
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.mixture import BetaMixture
 from service.sequential.region import PASS_FAIL, Region, Span
 from service.sequential.ways import looks_to_lower, looks_to_upper
 
@@ -38,6 +41,7 @@ class Bernoulli(Family):
     parameter: ClassVar[str] = "proportion nonconforming"
     optional: ClassVar[Mapping[str, float]] = {"size": 1.0}
     span: ClassVar[Span] = PASS_FAIL
+    prior: ClassVar[tuple[str, ...]] = ("a", "b")
     table: ClassVar[TableKind | None] = TableKind.UNITS
 
     def hypothesis_rule(self, value: float) -> str | None:
@@ -47,6 +51,14 @@ class Bernoulli(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.bernoulli(h0, h1)
+
+    def deviance(self, known: Mapping[str, float]) -> Deviance:
+        """See `Family`."""
+        return deviance.bernoulli()
+
+    def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
+        """See `Family`."""
+        return BetaMixture(edge, direction, prior["a"], prior["b"])
 
     def parameter_rule(self, value: float) -> str | None:
         """See `Family`."""

@@ -1,5 +1,6 @@
 """Lives with a constant failure rate, watched in continuous time."""
 
+import math
 from collections.abc import Mapping
 from typing import ClassVar
 
@@ -19,14 +20,17 @@ from service.domain.families.base import (
     reals,
     refuse,
 )
-from service.sequential import fixed_sample, likelihood
+from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
+from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Failures
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.mixture import GammaMixture
 from service.sequential.region import COUNTS, Region, Span
 from service.sequential.ways import jump_to_upper, time_to_lower
 
@@ -44,6 +48,7 @@ class Exponential(Family):
     required: ClassVar[tuple[str, ...]] = ("failed",)
     in_values: ClassVar[Mapping[str, float]] = {"failed": 1.0}
     span: ClassVar[Span] = COUNTS
+    prior: ClassVar[tuple[str, ...]] = ("shape", "rate")
     parameter_lowers_total: ClassVar[bool] = True
     table: ClassVar[TableKind | None] = TableKind.TIMES
     has_exposure: ClassVar[bool] = True
@@ -56,6 +61,22 @@ class Exponential(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.exponential(h0, h1)
+
+    def deviance(self, known: Mapping[str, float]) -> Deviance:
+        """See `Family`."""
+        return deviance.poisson()
+
+    def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
+        """See `Family`; the prior is that of the failure rate."""
+        return GammaMixture(edge, direction, prior["shape"], prior["rate"])
+
+    def mean_of(self, parameter: float) -> float:
+        """See `Family`."""
+        return 1.0 / parameter
+
+    def parameter_of(self, mean: float) -> float:
+        """See `Family`."""
+        return 1.0 / mean if mean > 0.0 else math.inf
 
     def exact(
         self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN

@@ -1,18 +1,23 @@
 """Measurements with a known standard deviation."""
 
+import math
 from collections.abc import Mapping
 from typing import ClassVar
 
 import numpy as np
 
 from service.domain.families.base import LARGEST_REAL, ORIGIN, Column, Family, Increments, Start, Way, reals, refuse
-from service.sequential import fixed_sample, likelihood
+from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
+from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
+from service.sequential.exact.looks import characteristics_by_looks
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.mixture import NormalMixture
 from service.sequential.region import REALS, Region, Span, StraightRegion
 
 
@@ -23,6 +28,7 @@ class Normal(Family):
     parameter: ClassVar[str] = "mean"
     known: ClassVar[tuple[str, ...]] = ("sigma",)
     span: ClassVar[Span] = REALS
+    prior: ClassVar[tuple[str, ...]] = ("tau",)
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""
@@ -32,12 +38,20 @@ class Normal(Family):
         """See `Family`."""
         return likelihood.normal(h0, h1, known["sigma"])
 
+    def deviance(self, known: Mapping[str, float]) -> Deviance:
+        """See `Family`."""
+        return deviance.normal(known["sigma"])
+
+    def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
+        """See `Family`."""
+        return NormalMixture(edge, direction, known["sigma"], prior["tau"])
+
     def exact(
         self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN
     ) -> Characteristics:
         """See `Family`."""
         if not isinstance(region, StraightRegion):
-            raise TypeError(f"only straight regions of {self.name} are followed exactly")
+            return characteristics_by_looks(region, parameters, known["sigma"], start.progress, start.total)
         return gaussian_characteristics(region, parameters, known["sigma"], start.progress, start.total)
 
     def grid(self, low: float, high: float, points: int) -> tuple[float, ...]:
@@ -49,8 +63,8 @@ class Normal(Family):
         limits = region.limits(np.array([start.progress + 1.0]))
         low, high = float(limits.lower[0]) - start.total, float(limits.upper[0]) - start.total
         return (
-            Way(1, None, low, f"a measurement of at most {low:.6g}"),
-            Way(1, None, high, f"a measurement of at least {high:.6g}"),
+            Way(1, None, low, f"a measurement of at most {low:.6g}") if math.isfinite(low) else None,
+            Way(1, None, high, f"a measurement of at least {high:.6g}") if math.isfinite(high) else None,
         )
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:

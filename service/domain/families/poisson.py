@@ -19,14 +19,17 @@ from service.domain.families.base import (
     refuse,
     whole_numbers,
 )
-from service.sequential import fixed_sample, likelihood
+from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
+from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Reports
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.likelihood import LikelihoodRatio
+from service.sequential.mixture import GammaMixture
 from service.sequential.region import COUNTS, Region, Span
 from service.sequential.ways import jump_to_upper, time_to_lower
 
@@ -38,6 +41,7 @@ class Poisson(Family):
     parameter: ClassVar[str] = "rate per unit of exposure"
     optional: ClassVar[Mapping[str, float]] = {"exposure": 1.0}
     span: ClassVar[Span] = COUNTS
+    prior: ClassVar[tuple[str, ...]] = ("shape", "rate")
     has_exposure: ClassVar[bool] = True
 
     def hypothesis_rule(self, value: float) -> str | None:
@@ -47,6 +51,14 @@ class Poisson(Family):
     def likelihood_ratio(self, h0: float, h1: float, known: Mapping[str, float]) -> LikelihoodRatio:
         """See `Family`."""
         return likelihood.poisson(h0, h1)
+
+    def deviance(self, known: Mapping[str, float]) -> Deviance:
+        """See `Family`."""
+        return deviance.poisson()
+
+    def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
+        """See `Family`."""
+        return GammaMixture(edge, direction, prior["shape"], prior["rate"])
 
     def parameter_rule(self, value: float) -> str | None:
         """See `Family`."""

@@ -27,7 +27,9 @@ class Characteristics:
     """
     Exact figures at some parameters; arrays of shape (points,), quantiles of shape (points, 4).
 
-    `mean`, `standard_deviation` and `quantiles` are of the progress at the decision: units, or exposure.
+    `below`, `above`: probabilities of ending at or beyond either limit; `between`: of ending between the limits of the
+    wall, where these leave room. `mean`, `standard_deviation` and `quantiles` are of the progress at the decision:
+    units, or exposure.
 
     Attributes:
         error_bound: A bound of the absolute error of the probabilities, and of the relative error of the means.
@@ -35,6 +37,7 @@ class Characteristics:
     """
 
     below: FloatArray
+    between: FloatArray
     above: FloatArray
     mean: FloatArray
     standard_deviation: FloatArray

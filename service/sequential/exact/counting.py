@@ -72,7 +72,7 @@ class _Piece(NamedTuple):
         duration: How long it was.
         width: Places within its room, counted from the lowest total.
         alive: Array of shape (points, 1, totals): the probabilities at its beginning.
-        below: Array of shape (points,): what ended below at its end.
+        below, between: Arrays of shape (points,): what ended below, and between the limits of the wall, at its end.
     """
 
     time: float
@@ -80,6 +80,7 @@ class _Piece(NamedTuple):
     width: int
     alive: FloatArray
     below: FloatArray
+    between: FloatArray
 
 
 class _Course:
@@ -94,7 +95,7 @@ class _Course:
         self._process, self._lowest = process, total
         self._alive, self._nothing = np.ones((points, 1, 1)), np.zeros(points)
         self._time, self._stretches, self._work, self._is_over = 0.0, 0, 0, False
-        self._below, self._above = np.zeros(points), np.zeros(points)
+        self._below, self._between, self._above = np.zeros(points), np.zeros(points), np.zeros(points)
         self._mean, self._second = np.zeros(points), np.zeros(points)
         self._quantiles = np.full((points, len(QUANTILES)), np.nan)
         self._pieces: list[_Piece] = []
@@ -116,7 +117,11 @@ class _Course:
             self._lowest, moved_on = self._lowest + min(cut, width), moved[:, :, cut:]
         else:
             moved_on = moved
-        self._pieces.append(_Piece(self._time, stretch.duration, width, self._alive, below))
+        between = self._nothing
+        if stretch.is_last:
+            count = None if stretch.top is None else max(0, stretch.top - self._lowest)
+            between = moved_on[:, 0, :count].sum(axis=1)
+        self._pieces.append(_Piece(self._time, stretch.duration, width, self._alive, below, between))
         self._alive = moved_on[:, :, :0] if stretch.is_last else moved_on
         self._time += stretch.duration
         if stretch.is_last or self._alive.shape[2] == 0 or self._is_batch_full(width):
@@ -131,7 +136,9 @@ class _Course:
         bound = left_out + (self._stretches + 1) * 8.0 * float(np.finfo(float).eps)
         deviation = scale * spread(self._mean, self._second)
         quantiles = scale * self._quantiles
-        return Characteristics(self._below, self._above, scale * self._mean, deviation, quantiles, bound, self._work)
+        return Characteristics(
+            self._below, self._between, self._above, scale * self._mean, deviation, quantiles, bound, self._work
+        )
 
     def _width(self, stretch: Stretch) -> int:
         """The totals that can go on during a stretch, from the lowest; counts the work too."""
@@ -180,13 +187,14 @@ class _Course:
             if piece.alive.shape[2] > piece.width:  # beyond the room already: still there until the next look
                 beyond[k] = piece.alive[:, 0, piece.width :].sum(axis=1)
         self._gather_moments(reaches, beyond, widest)
-        below = np.array([piece.below for piece in pieces])
+        below, between = np.array([piece.below for piece in pieces]), np.array([piece.between for piece in pieces])
         before = reaches.sum(axis=2) + beyond
         last = self._alive.sum(axis=(1, 2))
         rest = np.concatenate([before[1:], last[np.newaxis]])
         ends_alone = self._alive.shape[2] == 0 and not np.any(last)
-        after = rest + below
+        after = rest + below + between
         self._below += below.sum(axis=0)
+        self._between += between.sum(axis=0)
         self._above += (before - after).sum(axis=0)
         self._gather_quantiles(reaches, after, rest)
         self._pieces = []

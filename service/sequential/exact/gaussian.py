@@ -59,7 +59,16 @@ def gaussian_characteristics(
     tilt = _tilt(strip, drifts, start)
     bound += ROUNDING * math.exp(float(np.max(tilt, where=tilt <= LARGEST_TILT, initial=0.0)))
     deviation = spread(fine.mean, fine.second)
-    return Characteristics(fine.below, fine.above, fine.mean, deviation, fine.quantiles(), bound, WORK * counts[0] ** 3)
+    return Characteristics(
+        below=fine.below,
+        between=np.zeros_like(fine.below),
+        above=fine.above,
+        mean=fine.mean,
+        standard_deviation=deviation,
+        quantiles=fine.quantiles(),
+        error_bound=bound,
+        work=WORK * counts[0] ** 3,
+    )
 
 
 def _nodes(strip: Strip) -> tuple[int, int]:

@@ -41,12 +41,14 @@ class Stretch(NamedTuple):
         duration: Looks, or time.
         room: Totals below it go on while the stretch lasts, all others have ended above; None where all go on.
         cut: Totals up to it end below when the stretch ends; NO_CUT where none do.
-        is_last: Whatever then is left ends above.
+        top: Where the wall stands, totals from it on end above, and those between it and the cut end between.
+        is_last: Nothing goes on after it.
     """
 
     duration: float
     room: int | None
     cut: int
+    top: int | None
     is_last: bool
 
 
@@ -71,8 +73,8 @@ def stretches_of_looks(region: Region, step: float, progress: float) -> Iterator
         ends |= np.diff(cuts, prepend=highest_cut) > 0
         before = 0
         for end in np.flatnonzero(ends):
-            room = None if math.isinf(limits.upper[end]) else int(limits.upper[end])
-            yield Stretch(float(end + 1 - before), room, int(cuts[end]), is_last=bool(looks[end] == last))
+            room = _whole(float(limits.upper[end]))
+            yield Stretch(float(end + 1 - before), room, int(cuts[end]), room, is_last=bool(looks[end] == last))
             before = int(end) + 1
         highest_cut = int(cuts[-1])
         begin, block = begin + len(looks), min(2 * block, LARGEST_BLOCK)
@@ -100,14 +102,19 @@ def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[S
         rises_at = upper_at[room] if room < cap else math.inf
         moment = min(falls_at, rises_at, wall)
         if moment == wall:
-            cut = region.limits(np.array([wall])).lower[0]
-            yield Stretch(wall - now, room, NO_CUT if math.isinf(cut) else int(cut), is_last=True)
+            limits = region.limits(np.array([wall]))
+            cut, top = (_whole(float(limit[0])) for limit in (limits.lower, limits.upper))
+            yield Stretch(wall - now, room, NO_CUT if cut is None else cut, top, is_last=True)
             return
         duration = durations.known_as(moment - now, moment)
-        yield Stretch(duration, room, lowest if moment == falls_at else NO_CUT, is_last=False)
+        yield Stretch(duration, room, lowest if moment == falls_at else NO_CUT, room, is_last=False)
         now = moment
         lowest += moment == falls_at
         room += moment == rises_at
+
+
+def _whole(limit: float) -> int | None:
+    return int(limit) if math.isfinite(limit) else None
 
 
 class _Moments:

@@ -1,0 +1,182 @@
+"""
+The statistics: what the evidence of a plan is made of, which plans each of them needs, and the region that follows.
+
+`simple` weighs two parameter values; `generalised` two ranges by their suprema; `mixture` averages H1 over a prior.
+"""
+
+import math
+from dataclasses import dataclass
+
+from service.domain.errors import Fault
+from service.domain.families import FAMILIES, Family
+from service.domain.families.base import positive_rule
+from service.domain.plan import Content, known_of, prior_of
+from service.sequential import generalised
+from service.sequential.evidence import Evidence
+from service.sequential.likelihood import LikelihoodRatio
+
+ABOVE, BELOW = "above", "below"
+
+
+@dataclass(frozen=True)
+class Statistic:
+    """
+    What a plan with this statistic states.
+
+    Attributes:
+        boundaries: The rules that hold for it, the default first.
+        required: Members that the plan must have beside those that all have.
+        optional: Members that mean something in it and are not required.
+        one_sided: Those of them that mean nothing in a two-sided plan.
+    """
+
+    name: str
+    boundaries: tuple[str, ...]
+    required: tuple[str, ...]
+    optional: tuple[str, ...] = ()
+    one_sided: tuple[str, ...] = ()
+
+    def may_accept(self, content: Content) -> bool:
+        """Whether an accept threshold means something in such a plan."""
+        return self.name != "mixture" and content.get("sides") != 2  # noqa: PLR2004
+
+    @property
+    def is_simple(self) -> bool:
+        """True for the ratio of two parameter values, whose region is straight."""
+        return self.name == "simple"
+
+
+STATISTICS = {
+    statistic.name: statistic
+    for statistic in (
+        Statistic("simple", ("wald", "strict", "calibrated", "given", "table"), ("h1", "beta")),
+        Statistic(
+            "generalised",
+            ("calibrated", "given"),
+            (),
+            optional=("h1", "beta", "sides", "direction"),
+            one_sided=("h1", "beta", "direction"),
+        ),
+        Statistic(
+            "mixture", ("strict", "calibrated", "given"), (), optional=("sides", "direction"), one_sided=("direction",)
+        ),
+    )
+}
+# Members that only some statistics know.
+SPECIAL = ("h1", "beta", "sides", "direction")
+
+
+def hypotheses_of(content: Content) -> tuple[float, ...]:
+    """The values that the plan states: h0, and h1 where it lies apart from h0."""
+    h0, h1 = content["h0"], content.get("h1")
+    return (h0,) if h1 is None or h1 == h0 else (h0, h1)
+
+
+def faults_of_statistic(family: Family, content: Content) -> list[Fault]:
+    """What is wrong with the members that depend on the statistic."""
+    statistic = STATISTICS.get(content["statistic"])
+    if statistic is None:
+        return [Fault("/statistic", f"must be one of {', '.join(STATISTICS)}; received {content['statistic']!r}")]
+    allowed = (*statistic.required, *statistic.optional)
+    faults = [Fault(f"/{name}", "is required") for name in statistic.required if name not in content]
+    faults += [
+        Fault(f"/{name}", f"means nothing for a {statistic.name} plan")
+        for name in SPECIAL
+        if name in content and name not in allowed
+    ]
+    if not statistic.is_simple:
+        faults += _faults_of_sides(statistic, content)
+        faults += _faults_of_composite(family, statistic, content)
+    return faults
+
+
+def evidence_of(family: Family, content: Content) -> LikelihoodRatio | Evidence:
+    """
+    The evidence of a content without faults.
+
+    Raises:
+        OutOfRange: Floating point cannot tell the hypotheses apart.
+    """
+    known, hypotheses = known_of(content), hypotheses_of(content)
+    if content["statistic"] == "simple":
+        return family.likelihood_ratio(content["h0"], content["h1"], known)
+    direction = direction_of(family, content)
+    edge = family.mean_of(content["h0"])
+    if content["statistic"] == "mixture":
+        return family.mixture(edge, direction, known, prior_of(content) or {})
+    deviance = family.deviance(known)
+    if direction == 0:
+        return generalised.TwoSided(deviance, edge)
+    ratio = family.likelihood_ratio(hypotheses[0], hypotheses[1], known) if len(hypotheses) > 1 else None
+    return generalised.OneSided(deviance, edge, family.mean_of(hypotheses[-1]), ratio, direction > 0)
+
+
+def direction_of(family: Family, content: Content) -> int:
+    """On which side of H0's edge totals speak for H1: 1 above, -1 below, 0 on both."""
+    if content.get("sides") == 2:  # noqa: PLR2004
+        return 0
+    hypotheses = hypotheses_of(content)
+    is_above = hypotheses[-1] > hypotheses[0] if len(hypotheses) > 1 else content.get("direction", ABOVE) == ABOVE
+    return 1 if is_above != family.parameter_lowers_total else -1
+
+
+def accepts_early(content: Content) -> bool:
+    """Whether the plan may accept before it is truncated."""
+    if content["statistic"] == "simple":
+        return True
+    if content["boundaries"] != "given":
+        return "beta" in content
+    return (content.get("thresholds") or {}).get("accept") is not None
+
+
+def _faults_of_sides(statistic: Statistic, content: Content) -> list[Fault]:
+    faults = []
+    sides, direction = content.get("sides", 1), content.get("direction")
+    if sides not in (1, 2):
+        faults.append(Fault("/sides", f"must be 1 or 2; received {sides!r}"))
+    if direction not in (None, ABOVE, BELOW):
+        faults.append(Fault("/direction", f"must be {ABOVE} or {BELOW}; received {direction!r}"))
+    if sides == 2:  # noqa: PLR2004
+        names = (name for name in statistic.one_sided if name in content)
+        faults += [Fault(f"/{name}", "means nothing for a two-sided plan: H0 is h0 alone") for name in names]
+    return faults
+
+
+def _faults_of_composite(family: Family, statistic: Statistic, content: Content) -> list[Fault]:
+    """What composite hypotheses ask of the rest of the plan."""
+    served = [other.name for other in FAMILIES.values() if other.prior]
+    if not family.prior:
+        return [Fault("/statistic", f"{statistic.name} is served for {', '.join(served)}, not for {family.name}")]
+    faults, is_apart = [], len(hypotheses_of(content)) > 1
+    if "beta" in content and not is_apart:
+        rule = "needs an h1 apart from h0; leave it out where nothing is to accept before the truncation"
+        faults.append(Fault("/beta", rule))
+    if is_apart and "direction" in content:
+        faults.append(Fault("/direction", "is said by h1 already; leave it out"))
+    if content.get("truncation") is None and not accepts_early(content) and not _may_go_on_for_ever(content):
+        rule = "is required: nothing accepts before it"
+        faults.append(Fault("/truncation", f"{rule}, and no threshold holds the level without it"))
+    return faults + _faults_of_prior(family, statistic, content)
+
+
+def _may_go_on_for_ever(content: Content) -> bool:
+    """Mixtures keep their level however long they run; no other evidence without an accept threshold does."""
+    return bool(content["statistic"] == "mixture" and content["boundaries"] != "calibrated")
+
+
+def _faults_of_prior(family: Family, statistic: Statistic, content: Content) -> list[Fault]:
+    prior = prior_of(content)
+    if statistic.name != "mixture":
+        return [] if prior is None else [Fault("/known/prior", "belongs to mixture plans")]
+    wanted = ", ".join(f'"{name}"' for name in family.prior)
+    if prior is None:
+        return [Fault("/known/prior", f"is required for {family.name}, with {wanted}")]
+    faults = [
+        Fault(f"/known/prior/{name}", f"is required for {family.name}") for name in family.prior if name not in prior
+    ]
+    for name, value in prior.items():
+        if name not in family.prior:
+            faults.append(Fault(f"/known/prior/{name}", f"means nothing for {family.name}; its prior has {wanted}"))
+        elif (rule := positive_rule(value)) is not None or not math.isfinite(value):
+            faults.append(Fault(f"/known/prior/{name}", f"{rule}; received {value!r}"))
+    return faults

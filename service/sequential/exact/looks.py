@@ -1,0 +1,175 @@
+"""
+Exact figures of a test of normal measurements between limits of any shape, look by look.
+
+Quantity: probabilities of each end, mean, standard deviation and quantiles of the further sample number.
+Method: the density of the totals that go on is carried from look to look at Gauss-Legendre points between the limits
+of that look, or as far as the totals are likely to come. It is carried under one drift; the likelihood ratio gives the
+figures under the others near it, whose sums have positive terms only.
+Accuracy: the difference to a computation with fewer points, reported as the error bound.
+Cost: points squared for each look, once for each group of drifts.
+Source: Armitage, McPherson and Rowe (1969), Journal of the Royal Statistical Society A 132, 235-244 (the recursion).
+"""
+
+import math
+from collections.abc import Iterator
+from typing import NamedTuple
+
+import numpy as np
+from scipy.special import ndtr
+
+from service.sequential.double import FloatArray, IndexArray
+from service.sequential.exact.characteristics import LEVELS, NEGLIGIBLE, Characteristics, TooMuchWork, spread
+from service.sequential.exact.strip import Strip, density, nodes_between
+from service.sequential.region import Region, looks_to_wall
+
+# Standard deviations from the mean beyond which a total is not followed.
+FAR = 8.5
+# Beyond this the normal density is lost among the smallest numbers, which are slow.
+FURTHEST = 37.0
+# Drifts whose totals at the last look lie within so many standard deviations are followed together.
+REACH = 16.0
+MOST_POINTS, MOST_WORK = 2_500, 1_500_000_000
+# One exponential and one multiplication for each pair of points.
+PAIR_WORK = 4
+BLOCK = 256
+# Numbers of points rise by this share, for finding the points of a new number costs more than using a few more.
+RISE = 1.06
+
+
+class _Look(NamedTuple):
+    """Limits at one look, in standard deviations from where sampling stands."""
+
+    lower: float
+    upper: float
+    is_last: bool
+
+
+class _Ends(NamedTuple):
+    """Arrays of shape (points,), but `survival` of shape (looks, points): the probability of going on after each."""
+
+    below: FloatArray
+    between: FloatArray
+    above: FloatArray
+    survival: FloatArray
+    work: int
+
+
+def characteristics_by_looks(
+    region: Region, means: FloatArray, sigma: float, progress: float = 0.0, total: float = 0.0
+) -> Characteristics:
+    """
+    Exact figures at these means, from one point of the region on.
+
+    Args:
+        region: Of real totals.
+        means: Array of shape (points,).
+        sigma: Standard deviation of one measurement, above 0.
+        progress, total: Where sampling stands, inside the region.
+
+    Raises:
+        TooMuchWork: The region is too wide for the spread, or too long.
+    """
+    drifts = means / sigma
+    looks = None if region.wall is None else looks_to_wall(region.wall, 1.0, progress)
+    groups = _groups(drifts, looks)
+    fine, coarse = (
+        _joined([_followed(region, drifts[group], sigma, (progress, total), fineness) for group in groups], groups)
+        for fineness in (1.2, 1.0)
+    )
+    mean, second = _moments(fine.survival)
+    bound = float(np.max(np.abs(fine.below - coarse.below))) + float(np.max(np.abs(fine.above - coarse.above)))
+    bound += float(np.max(np.abs(mean / _moments(coarse.survival)[0] - 1.0))) + 1e-13
+    going_on = np.concatenate([fine.survival, np.zeros((1, len(means)))])
+    quantiles = np.argmax(going_on[:, :, np.newaxis] <= LEVELS, axis=0) + 1.0
+    deviation = spread(mean, second)
+    work = fine.work + coarse.work
+    return Characteristics(fine.below, fine.between, fine.above, mean, deviation, quantiles, bound, work)
+
+
+def _groups(drifts: FloatArray, looks: int | None) -> list[IndexArray]:
+    """Indices of drifts that may be followed together; each by itself where the last look is not known."""
+    order = np.argsort(drifts)
+    if looks is None:
+        return [order[i : i + 1] for i in range(len(order))]
+    group = np.floor((drifts[order] - drifts[order[0]]) * math.sqrt(looks) / REACH)
+    return np.split(order, np.flatnonzero(np.diff(group)) + 1)
+
+
+def _joined(parts: list[_Ends], groups: list[IndexArray]) -> _Ends:
+    """All groups as one, in the order of the drifts as given."""
+    order = np.argsort(np.concatenate(groups))
+    looks = max(len(part.survival) for part in parts)
+    survival = [np.pad(part.survival, ((0, looks - len(part.survival)), (0, 0))) for part in parts]
+    return _Ends(
+        below=np.concatenate([part.below for part in parts])[order],
+        between=np.concatenate([part.between for part in parts])[order],
+        above=np.concatenate([part.above for part in parts])[order],
+        survival=np.concatenate(survival, axis=1)[:, order],
+        work=sum(part.work for part in parts),
+    )
+
+
+def _moments(survival: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """The first two moments of the sample number; `survival[k]` is the probability of more than k + 1."""
+    weight = 2.0 * np.arange(1, len(survival) + 1) + 1.0
+    return 1.0 + survival.sum(axis=0), 1.0 + weight @ survival
+
+
+def _looks(region: Region, sigma: float, start: tuple[float, float]) -> Iterator[_Look]:
+    progress, total = start
+    last = math.inf if region.wall is None else looks_to_wall(region.wall, 1.0, progress)
+    begin = 1
+    while begin <= last:
+        looks = np.arange(begin, min(begin + BLOCK, last + 1), dtype=np.float64)
+        limits = region.limits(progress + looks)
+        lower, upper = (limits.lower - total) / sigma, (limits.upper - total) / sigma
+        for look, low, high in zip(looks, lower, upper, strict=True):
+            yield _Look(float(low), float(high), bool(look == last))
+        begin += len(looks)
+
+
+def _followed(region: Region, drifts: FloatArray, sigma: float, start: tuple[float, float], fineness: float) -> _Ends:
+    """One group of drifts to the end."""
+    base = 0.5 * float(drifts.min() + drifts.max())
+    zero = np.zeros(len(drifts))
+    below, between, above = zero, zero, zero
+    survival: list[FloatArray] = []
+    x, mass, work = np.zeros(1), np.ones(1), 0
+    for k, look in enumerate(_looks(region, sigma, start)):
+        # Under another drift each point weighs as much more as the likelihood of having come to it.
+        tilted = mass * np.exp(np.multiply.outer(drifts - base, x) - 0.5 * k * (drifts**2 - base**2)[:, np.newaxis])
+        ahead = x + drifts[:, np.newaxis]
+        below = below + (tilted * ndtr(look.lower - ahead)).sum(axis=1)
+        above = above + (tilted * ndtr(ahead - look.upper)).sum(axis=1)
+        rest = np.maximum(0.0, (tilted * (ndtr(look.upper - ahead) - ndtr(look.lower - ahead))).sum(axis=1))
+        if look.is_last:
+            between = rest
+            break
+        if float(np.max(rest)) < NEGLIGIBLE or look.upper <= look.lower:
+            break
+        survival.append(rest)
+        nodes, weights = _nodes(look, drifts, k + 1, fineness)
+        work += PAIR_WORK * len(x) * len(nodes)
+        if work > MOST_WORK:
+            raise TooMuchWork(MOST_WORK, "multiplications")
+        mass = mass @ density(np.clip(nodes - x[:, np.newaxis] - base, -FURTHEST, FURTHEST)) * weights
+        x = nodes
+    return _Ends(below, between, above, np.array(survival).reshape(-1, len(drifts)), work)
+
+
+def _nodes(look: _Look, drifts: FloatArray, k: int, fineness: float) -> tuple[FloatArray, FloatArray]:
+    """Points between the limits of the k-th look, or as far as totals are likely to come; and their weights."""
+    reach = FAR * math.sqrt(k)
+    low = max(look.lower, k * float(drifts.min()) - reach)
+    high = min(look.upper, k * float(drifts.max()) + reach)
+    if high <= low:  # only what is as good as impossible goes on
+        low, high = (look.lower, look.lower + 1.0) if math.isfinite(look.lower) else (look.upper - 1.0, look.upper)
+    points = _known_number(fineness * (20.0 + 2.0 * (high - low)))
+    if points > MOST_POINTS:
+        raise TooMuchWork(MOST_POINTS, "quadrature points")
+    return nodes_between(Strip(low, high), points)
+
+
+def _known_number(points: float) -> int:
+    """The next higher of a few numbers of points."""
+    return math.ceil(RISE ** math.ceil(math.log(points) / math.log(RISE)))
