@@ -3,15 +3,17 @@ The region of any evidence between constant thresholds: limits that need not be 
 
 Quantity: the limits of the total at each progress, as for straight lines.
 Method: whether a point lies at or beyond the lower or the upper limit is asked of the evidence itself; both answers
-change once as the total moves, and once as the progress does, so halving finds every limit.
+change once as the total moves, and once as the progress does. Near what H0 leads to expect the evidence of whole totals
+is tabulated once for all thresholds; everything else is found by halving, and moments by a bracketed secant.
 Accuracy: whole-number limits are exact, ties resolved at 1e-12; real ones to the last few digits. Deciding does not use
 them: it compares the evidence with the thresholds.
-Cost: about a hundred evaluations of the evidence for each real limit, fewer for whole ones.
+Cost: a comparison for each tabulated total; some tens of evaluations of the evidence for each limit beyond.
 Source: the construction of acceptance and rejection numbers is Wald's (1945), section 5.2, for any monotone evidence.
 """
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -23,11 +25,17 @@ from service.sequential.region import ABOVE, BELOW, FEW_UNITS, INSIDE, TIE, Limi
 
 # Totals and progress are looked for between these.
 SMALLEST, FURTHEST = 1e-300, 2.0**53
-# Halvings that bring a real limit to its last digits.
-HALVINGS = 110
+# Halvings that bring a real limit to its last digits, and steps of the secant that do so for a moment.
+HALVINGS, STEPS = 110, 60
+# A table has totals as far as so many standard deviations and so many units from what H0 leads to expect; so many
+# numbers at most, for so many progress values.
+REACH, UNITS = 12.0, 30.0
+LARGEST_TABLE, MOST_PROGRESS, MOST_TABLES = 400_000, 4_096, 24
 
 Holds = Callable[[FloatArray], BoolArray]
-Judgement = Callable[[Double, Double], BoolArray]
+Rise = Callable[[FloatArray], FloatArray]
+# From progress, total and evidence to whether the point lies on one side.
+Judgement = Callable[[FloatArray, FloatArray, FloatArray], BoolArray]
 
 
 @dataclass(frozen=True)
@@ -77,102 +85,191 @@ class CurvedRegion:
 
     def sides(self, progress: Double, total: Double) -> SideArray:
         """See `Region`."""
-        below, above = self._is_below(progress, total), self._is_above(progress, total)
-        return np.where(below, BELOW, np.where(above, ABOVE, INSIDE)).astype(np.int8)
+        return self._sides(progress, total, self._is_below, self._is_above)
 
     def sides_at_wall(self, progress: Double, total: Double) -> SideArray:
         """See `Region`."""
-        below, above = self._ends_below(progress, total), self._ends_above(progress, total)
-        return np.where(below, BELOW, np.where(above, ABOVE, INSIDE)).astype(np.int8)
+        return self._sides(progress, total, self._ends_below, self._ends_above)
 
     def lower_reached_at(self, total: FloatArray) -> FloatArray:
         """See `Region`."""
-        low, high = self._moments(total, lambda at: self._is_below(_plain(at), _plain(total)))
-        return np.where(high > FURTHEST, np.inf, np.where(low <= 0.0, 0.0, high))
+        threshold = self.thresholds.reject if self.below is Decision.REJECT else self.thresholds.accept
+        if np.isinf(threshold):
+            return np.full_like(total, np.inf)
+        sign = 1.0 if self.below is Decision.REJECT else -1.0
+        start = total / self._mean if self.evidence.is_two_sided else np.zeros_like(total)
+        moment = self._moments(lambda at: sign * (self._log(at, total) - threshold), start)
+        return np.where(np.isnan(moment), np.inf, moment)
 
     def upper_left_at(self, total: FloatArray) -> FloatArray:
         """See `Region`."""
-        low, _ = self._moments(total, lambda at: ~self._is_above(_plain(at), _plain(total)))
-        return np.where(low <= 0.0, -np.inf, low)
+        threshold = self.thresholds.reject if self.above is Decision.REJECT else self.thresholds.accept
+        if np.isinf(threshold):
+            return np.full_like(total, -np.inf)
+        sign = 1.0 if self.above is Decision.REJECT else -1.0
+        end = total / self._mean if self.evidence.is_two_sided else np.full_like(total, np.inf)
+        moment = self._moments(lambda at: sign * (threshold - self._log(at, total)), np.zeros_like(total), end)
+        never = np.isnan(moment) | (moment <= SMALLEST)
+        return np.where(never, -np.inf, moment)
 
     def open_horizon(self, reached: float) -> float:
         """See `Region`."""
         first = float(self.lower_reached_at(np.zeros(1))[0]) if self.span.is_integer else FEW_UNITS
-        start = first if np.isfinite(first) else FEW_UNITS
+        start = first if 0.0 < first < FURTHEST else FEW_UNITS
         return max(1.25 * reached, 3.0 * start)
 
     @property
     def _has_accept(self) -> bool:
         return bool(np.isfinite(self.thresholds.accept))
 
-    def _is_below(self, progress: Double, total: Double) -> BoolArray:
+    @property
+    def _mean(self) -> float:
+        """What one unit of progress adds to the total at the edge of H0."""
+        return float(self.evidence.expected(np.ones(1))[0])
+
+    def _log(self, progress: FloatArray, total: FloatArray) -> FloatArray:
+        return self.evidence.log(_plain(progress), _plain(total))
+
+    def _sides(self, progress: Double, total: Double, is_below: Judgement, is_above: Judgement) -> SideArray:
+        point = progress.value, total.value, self.evidence.log(progress, total)
+        return np.where(is_below(*point), BELOW, np.where(is_above(*point), ABOVE, INSIDE)).astype(np.int8)
+
+    def _is_below(self, progress: FloatArray, total: FloatArray, evidence: FloatArray) -> BoolArray:
         """At or under the lower limit, the wall left out."""
         if self.evidence.is_two_sided:
-            return (total.value < self.evidence.expected(progress.value)) & self._rejects(progress, total)
-        return self._accepts(progress, total) if self.evidence.is_upward else self._rejects(progress, total)
+            return (total < self.evidence.expected(progress)) & self._rejects(evidence)
+        return self._accepts(evidence) if self.evidence.is_upward else self._rejects(evidence)
 
-    def _is_above(self, progress: Double, total: Double) -> BoolArray:
+    def _is_above(self, progress: FloatArray, total: FloatArray, evidence: FloatArray) -> BoolArray:
         """At or over the upper limit, the wall left out."""
         if self.evidence.is_two_sided:
-            return (total.value > self.evidence.expected(progress.value)) & self._rejects(progress, total)
-        return self._rejects(progress, total) if self.evidence.is_upward else self._accepts(progress, total)
+            return (total > self.evidence.expected(progress)) & self._rejects(evidence)
+        return self._rejects(evidence) if self.evidence.is_upward else self._accepts(evidence)
 
-    def _ends_below(self, progress: Double, total: Double) -> BoolArray:
+    def _ends_below(self, progress: FloatArray, total: FloatArray, evidence: FloatArray) -> BoolArray:
         """What the wall ends on the lower side."""
         if self.wall is not None and self.wall.cap is not None:
-            return total.value < float(self.wall.cap)
+            return total < float(self.wall.cap)
         if self.evidence.is_two_sided:
-            return self._is_below(progress, total)
-        accepted = self._ends_accepted(progress, total)
+            return self._is_below(progress, total, evidence)
+        accepted = self._ends_accepted(evidence)
         return accepted if self.evidence.is_upward else ~accepted
 
-    def _ends_above(self, progress: Double, total: Double) -> BoolArray:
+    def _ends_above(self, progress: FloatArray, total: FloatArray, evidence: FloatArray) -> BoolArray:
         """What the wall ends on the upper side."""
         if self.evidence.is_two_sided:
-            return self._is_above(progress, total)
-        return ~self._ends_below(progress, total)
+            return self._is_above(progress, total, evidence)
+        return ~self._ends_below(progress, total, evidence)
 
-    def _ends_accepted(self, progress: Double, total: Double) -> BoolArray:
+    def _ends_accepted(self, evidence: FloatArray) -> BoolArray:
         if not self._has_accept:
-            return ~self._rejects(progress, total)
-        return self.evidence.log(progress, total) <= (TIE if self.span.is_integer else 0.0)
+            return ~self._rejects(evidence)
+        return evidence <= (TIE if self.span.is_integer else 0.0)
 
-    def _accepts(self, progress: Double, total: Double) -> BoolArray:
-        return self.evidence.log(progress, total) <= self.thresholds.accept + self._tie(self.thresholds.accept)
+    def _accepts(self, evidence: FloatArray) -> BoolArray:
+        return evidence <= self.thresholds.accept + self._tie(self.thresholds.accept)
 
-    def _rejects(self, progress: Double, total: Double) -> BoolArray:
-        return self.evidence.log(progress, total) >= self.thresholds.reject - self._tie(self.thresholds.reject)
+    def _rejects(self, evidence: FloatArray) -> BoolArray:
+        return evidence >= self.thresholds.reject - self._tie(self.thresholds.reject)
 
     def _tie(self, threshold: float) -> float:
         return TIE * max(1.0, abs(threshold)) if self.span.is_integer and np.isfinite(threshold) else 0.0
 
     def _limits(
-        self,
-        progress: FloatArray,
-        is_below: Judgement | None,
-        is_above: Judgement | None,
+        self, progress: FloatArray, is_below: Judgement | None, is_above: Judgement | None
     ) -> tuple[FloatArray, FloatArray]:
         """The largest total below and the smallest above at each progress, infinite where there is none."""
         lower, upper = np.full_like(progress, -np.inf), np.full_like(progress, np.inf)
-        has_begun = progress > 0.0
-        where = _plain(progress[has_begun])
-        search = _Search(self.span, self.evidence, where.value)
+        begun = np.flatnonzero(progress > 0.0)
+        if not begun.size:
+            return lower, upper
+        at = progress[begun]
+        is_tabulated = self.span.is_integer and len(at) <= MOST_PROGRESS
+        table = _table(self.evidence, self.span, at.tobytes()) if is_tabulated else None
         if is_below is not None:
-            lower[has_begun], _ = search.change(lambda total: ~is_below(where, _plain(total)))
+            lower[begun], _ = self._change(at, table, is_below, turned=True)
         if is_above is not None:
-            _, upper[has_begun] = search.change(lambda total: is_above(where, _plain(total)))
+            _, upper[begun] = self._change(at, table, is_above, turned=False)
         return lower, upper
 
-    def _moments(self, total: FloatArray, holds: Holds) -> tuple[FloatArray, FloatArray]:
-        """The progress up to which something does not hold for each total, and from which on it does."""
-        low, high = np.zeros_like(total), np.ones_like(total)
-        while np.any(far := ~holds(high) & (high <= FURTHEST)):
-            low, high = np.where(far, high, low), np.where(far, 2.0 * high, high)
-        for _ in range(HALVINGS):
-            middle = np.sqrt(np.maximum(low, SMALLEST)) * np.sqrt(high)
-            at = holds(middle)
-            low, high = np.where(at, low, middle), np.where(at, middle, high)
-        return low, high
+    def _change(
+        self, progress: FloatArray, table: "_Table | None", judge: Judgement, *, turned: bool
+    ) -> tuple[FloatArray, FloatArray]:
+        """The last total before and the first after the change of a judgement; `turned` where small totals have it."""
+        last, first = np.full_like(progress, np.nan), np.full_like(progress, np.nan)
+        if table is not None:
+            holds = judge(progress[:, np.newaxis], table.totals, table.evidence)
+            last, first = table.change(~holds if turned else holds)
+        open_ = np.flatnonzero(np.isnan(last))
+        if open_.size:
+            rest = progress[open_]
+
+            def holds_at(total: FloatArray) -> BoolArray:
+                answer = judge(rest, total, self._log(rest, total))
+                return ~answer if turned else answer
+
+            last[open_], first[open_] = _Search(self.span, self.evidence, rest).change(holds_at)
+        return last, first
+
+    def _moments(self, rise: Rise, start: FloatArray, end: FloatArray | None = None) -> FloatArray:
+        """Where a rising function of the progress passes zero between `start` and `end`; NaN where it does not."""
+        low = np.maximum(start, SMALLEST)
+        high = np.full_like(start, 1.0 / abs(self._mean) if self._mean else 1.0) + low
+        far = np.inf if end is None else end
+        high = np.minimum(np.maximum(high, 2.0 * low), far)
+        while np.any(short := (rise(high) < 0.0) & (high < np.minimum(far, FURTHEST))):
+            low, high = np.where(short, high, low), np.where(short, np.minimum(4.0 * high, far), high)
+        return _root(rise, low, high)
+
+
+@dataclass(frozen=True)
+class _Table:
+    """
+    The evidence of whole totals around what H0 leads to expect; arrays of shape (progress, totals).
+
+    Attributes:
+        is_possible: The family has such a total.
+        begins, ends: Whether the row starts at the smallest, and ends at the largest total of the family.
+    """
+
+    totals: FloatArray
+    evidence: FloatArray
+    is_possible: BoolArray
+    begins: BoolArray
+    ends: BoolArray
+
+    def change(self, holds: BoolArray) -> tuple[FloatArray, FloatArray]:
+        """The last total that does not hold and the first that does; NaN where the table is too narrow to tell."""
+        rows = np.arange(len(holds))
+        holds = holds & self.is_possible
+        first = holds.argmax(axis=1)
+        found = holds[rows, first]
+        first_total = self.totals[rows, first]
+        after = np.where(found, first_total, np.where(self.ends, np.inf, np.nan))
+        largest = np.where(self.is_possible, self.totals, -np.inf).max(axis=1)
+        before = np.where(
+            found, np.where(first > 0, first_total - 1.0, np.where(self.begins, -np.inf, np.nan)), largest
+        )
+        unknown = np.isnan(before) | np.isnan(after)
+        return np.where(unknown, np.nan, before), np.where(unknown, np.nan, after)
+
+
+@lru_cache(maxsize=MOST_TABLES)
+def _table(evidence: Evidence, span: Span, packed: bytes) -> _Table | None:
+    """The table at these progress values; None where it would be too large."""
+    progress = np.frombuffer(packed)
+    expected, away = evidence.expected(progress), REACH * evidence.deviation(progress) + UNITS
+    first = np.maximum(np.floor(expected - away), span.floor)
+    width = int(np.max(np.floor(expected + away) - first)) + 1
+    if len(progress) * width > LARGEST_TABLE:
+        return None
+    totals = first[:, np.newaxis] + np.arange(width, dtype=np.float64)
+    largest = np.floor(span.per_progress * progress)[:, np.newaxis]
+    is_possible = totals <= largest
+    where = np.broadcast_to(progress[:, np.newaxis], totals.shape)
+    values = evidence.log(_plain(where), _plain(np.minimum(totals, largest)))
+    ends = (totals[:, -1:] >= largest)[:, 0]
+    return _Table(totals, values, is_possible, first <= span.floor, ends)
 
 
 class _Search:
@@ -213,6 +310,29 @@ class _Search:
             high = np.where(up, np.minimum(high + width, self._largest), high)
             low = np.where(down, np.maximum(low - width, self._floor), low)
             width = np.where(up | down, 2.0 * width, width)
+
+
+def _root(rise: Rise, low: FloatArray, high: FloatArray) -> FloatArray:
+    """
+    The zero of a rising function between two arrays of positive numbers, element by element; NaN where it has none.
+
+    Regula falsi in the logarithm whose kept end is weakened (Illinois), with halvings where it is slow.
+    """
+    left, right = np.log(low), np.log(np.maximum(high, SMALLEST))
+    below, above = rise(low), rise(high)
+    has_none = (above < 0.0) | ~np.isfinite(high)
+    is_at_start = below >= 0.0
+    below, above = np.where(is_at_start, -1.0, below), np.where(has_none, 1.0, above)
+    for step in range(STEPS):
+        if np.all(right - left <= 4e-16 * np.maximum(1.0, np.abs(right))):
+            break
+        share = np.full_like(left, 0.5) if step % 4 == 3 else below / (below - above)
+        middle = left + (right - left) * np.clip(share, 1e-12, 1.0 - 1e-12)
+        found = rise(np.exp(middle))
+        holds = found >= 0.0
+        above, below = np.where(holds, found, 0.5 * above), np.where(holds, 0.5 * below, found)
+        left, right = np.where(holds, left, middle), np.where(holds, middle, right)
+    return np.where(has_none, np.nan, np.where(is_at_start, low, np.exp(right)))
 
 
 def _plain(values: FloatArray) -> Double:

@@ -9,8 +9,8 @@ Source: Loader (2000), Fast and Accurate Computation of Binomial Probabilities (
 McCullagh and Nelder (1989), Generalized Linear Models, section 2.3 (deviances).
 """
 
-from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
@@ -20,50 +20,62 @@ from service.sequential.double import Double, FloatArray, two_product, two_sum
 NEAR, TERMS = 0.1, 10
 
 
+class Deviance(Protocol):
+    """The evidence of a one-parameter family against single values of its parameter."""
+
+    def against(self, progress: Double, total: Double, parameter: float) -> FloatArray:
+        """Ln sup L - ln L(parameter), with the parameter as the mean of one unit of progress; same shape as given."""
+        ...
+
+    def variance(self, parameter: float) -> float:
+        """The variance of the total in one unit of progress."""
+        ...
+
+
 @dataclass(frozen=True)
-class Deviance:
-    """
-    The evidence of a one-parameter family against single values of its parameter.
-
-    Attributes:
-        against: From progress, total and parameter to ln sup L - ln L(parameter); same shape as given.
-        variance: From a parameter to the variance of the total in one unit of progress.
-    """
-
-    against: Callable[[Double, Double, float], FloatArray]
-    variance: Callable[[float], float]
-
-
-def bernoulli() -> Deviance:
+class Bernoulli:
     """Total = units with the attribute, progress = units, parameter = proportion strictly between 0 and 1."""
 
-    def against(progress: Double, total: Double, proportion: float) -> FloatArray:
+    def against(self, progress: Double, total: Double, parameter: float) -> FloatArray:
+        """See `Deviance`."""
         n, count = progress.value, total.value
-        return _gap(count, n * proportion) + _gap(n - count, n * (1.0 - proportion))
+        return _gap(count, n * parameter) + _gap(n - count, n * (1.0 - parameter))
 
-    return Deviance(against, lambda proportion: proportion * (1.0 - proportion))
+    def variance(self, parameter: float) -> float:
+        """See `Deviance`."""
+        return parameter * (1.0 - parameter)
 
 
-def poisson() -> Deviance:
+@dataclass(frozen=True)
+class Poisson:
     """Total = count, progress = exposure, parameter = rate above 0."""
 
-    def against(progress: Double, total: Double, rate: float) -> FloatArray:
-        return _gap(total.value, rate * progress.value)
+    def against(self, progress: Double, total: Double, parameter: float) -> FloatArray:
+        """See `Deviance`."""
+        return _gap(total.value, parameter * progress.value)
 
-    return Deviance(against, lambda rate: rate)
+    def variance(self, parameter: float) -> float:
+        """See `Deviance`."""
+        return parameter
 
 
-def normal(sigma: float) -> Deviance:
+@dataclass(frozen=True)
+class Normal:
     """Total = sum of the measurements, progress = units, parameter = mean; sigma above 0 is known."""
 
-    def against(progress: Double, total: Double, mean: float) -> FloatArray:
-        line = two_product(progress.high, np.float64(mean))  # type: ignore[arg-type]
+    sigma: float
+
+    def against(self, progress: Double, total: Double, parameter: float) -> FloatArray:
+        """See `Deviance`."""
+        line = two_product(progress.high, np.float64(parameter))  # type: ignore[arg-type]
         difference = two_sum(total.high, -line.high)
-        away = (difference.high + (difference.low + (total.low - line.low - mean * progress.low))) / sigma
+        away = (difference.high + (difference.low + (total.low - line.low - parameter * progress.low))) / self.sigma
         n = progress.value
         return np.where(n > 0.0, 0.5 * away * away / np.where(n > 0.0, n, 1.0), 0.0)
 
-    return Deviance(against, lambda _mean: sigma * sigma)
+    def variance(self, parameter: float) -> float:  # noqa: ARG002 - the same for every mean
+        """See `Deviance`."""
+        return self.sigma * self.sigma
 
 
 def _gap(count: FloatArray, expected: FloatArray) -> FloatArray:

@@ -23,6 +23,10 @@ class Evidence(Protocol):
         """Large totals speak for H1; of no meaning where both sides do."""
         ...
 
+    def __hash__(self) -> int:
+        """By value, for what is kept for an evidence once computed."""
+        ...
+
     def log(self, progress: Double, total: Double) -> FloatArray:
         """The log-likelihood ratio in nats; same shape as given."""
         ...

@@ -1,6 +1,7 @@
 """Generalised and mixture likelihood ratios, against searching and quadrature in 25 digits."""
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 import pytest
@@ -10,13 +11,18 @@ from service.sequential import deviance, generalised, likelihood
 from service.sequential.deviance import Deviance
 from service.sequential.double import Double
 from service.sequential.evidence import Evidence
+from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.mixture import BetaMixture, GammaMixture, NormalMixture, log_beta_share, log_lower_gamma
 from service.sequential.mixture import log_upper_gamma as upper
 from tests.sequential.reference import composite
 
 SIGMA = 0.8
-DEVIANCES = {"bernoulli": deviance.bernoulli(), "poisson": deviance.poisson(), "normal": deviance.normal(SIGMA)}
-RATIOS = {
+DEVIANCES: dict[str, Deviance] = {
+    "bernoulli": deviance.Bernoulli(),
+    "poisson": deviance.Poisson(),
+    "normal": deviance.Normal(SIGMA),
+}
+RATIOS: dict[str, Callable[[float, float], LikelihoodRatio]] = {
     "bernoulli": likelihood.bernoulli,
     "poisson": likelihood.poisson,
     "normal": lambda a, b: likelihood.normal(a, b, SIGMA),
@@ -74,7 +80,7 @@ def test_equal_edges_and_two_sides(family: str) -> None:
 )
 def test_published_rows_of_the_poisson_ratio(observed: int, expected: float, statistic: float) -> None:
     """PMC3644310, table 2a; the expected counts are printed to a tenth, which moves the statistic by 0.003 at most."""
-    evidence = generalised.OneSided(deviance.poisson(), 1.0, 1.0, None, is_upward=True)
+    evidence = generalised.OneSided(deviance.Poisson(), 1.0, 1.0, None, is_upward=True)
     assert evidence_at(evidence, expected, float(observed)) == pytest.approx(statistic, abs=3.5e-3)
 
 
@@ -107,7 +113,9 @@ def test_published_normal_mixture() -> None:
     assert math.exp(evidence_at(evidence, 50.0, 20.0)) == pytest.approx(8.309176631689, rel=1e-12)
 
 
-@pytest.mark.parametrize(("a", "b", "y"), [(4001.0, 2.0, 0.3), (1.5, 9e5, 0.9), (2000.0, 3000.0, 0.1), (30.0, 4.0, 1e-20)])
+@pytest.mark.parametrize(
+    ("a", "b", "y"), [(4001.0, 2.0, 0.3), (1.5, 9e5, 0.9), (2000.0, 3000.0, 0.1), (30.0, 4.0, 1e-20)]
+)
 def test_shares_of_a_beta_prior_that_no_double_holds(a: float, b: float, y: float) -> None:
     arrays = np.array([a]), np.array([b])
     tail = (

@@ -54,7 +54,7 @@ class Bernoulli(Family):
 
     def deviance(self, known: Mapping[str, float]) -> Deviance:
         """See `Family`."""
-        return deviance.bernoulli()
+        return deviance.Bernoulli()
 
     def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
         """See `Family`."""

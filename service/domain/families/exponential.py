@@ -64,7 +64,7 @@ class Exponential(Family):
 
     def deviance(self, known: Mapping[str, float]) -> Deviance:
         """See `Family`."""
-        return deviance.poisson()
+        return deviance.Poisson()
 
     def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
         """See `Family`; the prior is that of the failure rate."""

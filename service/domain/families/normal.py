@@ -40,7 +40,7 @@ class Normal(Family):
 
     def deviance(self, known: Mapping[str, float]) -> Deviance:
         """See `Family`."""
-        return deviance.normal(known["sigma"])
+        return deviance.Normal(known["sigma"])
 
     def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
         """See `Family`."""

@@ -54,7 +54,7 @@ class Poisson(Family):
 
     def deviance(self, known: Mapping[str, float]) -> Deviance:
         """See `Family`."""
-        return deviance.poisson()
+        return deviance.Poisson()
 
     def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
         """See `Family`."""

@@ -28,6 +28,8 @@ FAR = 8.5
 FURTHEST = 37.0
 # Drifts whose totals at the last look lie within so many standard deviations are followed together.
 REACH = 16.0
+# Without a last look as many are supposed; nearly all is over by then.
+OPEN_LOOKS = 100
 MOST_POINTS, MOST_WORK = 2_500, 1_500_000_000
 # One exponential and one multiplication for each pair of points.
 PAIR_WORK = 4
@@ -87,11 +89,9 @@ def characteristics_by_looks(
 
 
 def _groups(drifts: FloatArray, looks: int | None) -> list[IndexArray]:
-    """Indices of drifts that may be followed together; each by itself where the last look is not known."""
+    """Indices of drifts that may be followed together."""
     order = np.argsort(drifts)
-    if looks is None:
-        return [order[i : i + 1] for i in range(len(order))]
-    group = np.floor((drifts[order] - drifts[order[0]]) * math.sqrt(looks) / REACH)
+    group = np.floor((drifts[order] - drifts[order[0]]) * math.sqrt(looks or OPEN_LOOKS) / REACH)
     return np.split(order, np.flatnonzero(np.diff(group)) + 1)
 
 
