@@ -19,9 +19,7 @@ MOST_COLUMNS, SHOWN = 4, 6
 
 
 def design(
-    family: Annotated[
-        str | None, typer.Option(help="bernoulli (where none is given), poisson, exponential or normal.")
-    ] = None,
+    family: Annotated[str | None, typer.Option(help="bernoulli (where none is given), or another family.")] = None,
     h0: Annotated[float | None, typer.Option(help="Parameter under H0.")] = None,
     h1: Annotated[float | None, typer.Option(help="Parameter under H1.")] = None,
     alpha: Annotated[float | None, typer.Option(help="Producer's risk: P(reject) when H0 is true.")] = None,

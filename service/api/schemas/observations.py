@@ -20,6 +20,7 @@ EXAMPLES: list[dict[str, Any]] = [
     {"values": [0, 0, 1]},
     {"observations": [{"value": 2, "size": 50, "unit": "tray-7", "observed_at": "2031-05-04T09:30:00Z"}]},
     {"observations": [{"time": 41.5, "failed": True}, {"time": 200.0, "failed": False}]},
+    {"observations": [{"a": 0, "b": 1}, {"a": 1, "b": 1}]},
 ]
 
 
@@ -76,6 +77,8 @@ class ObservationForm(Form):
     time: Number = Field(default_factory=float, description="Unit-time since the report before (exponential).")
     exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
+    a: Number = Field(default_factory=float, description="Result in arm a, of families that compare two arms.")
+    b: Number = Field(default_factory=float, description="Result in arm b.")
     failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
     unit: Unit = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: Moment = Field(
@@ -119,6 +122,8 @@ class LoggedOut(Answer):
     time: int | float | None = None
     exposure: int | float | None = None
     size: int | float | None = None
+    a: int | float | None = None
+    b: int | float | None = None
     failed: bool | None = None
     unit: str | None
     observed_at: str | None

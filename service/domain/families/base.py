@@ -108,7 +108,7 @@ class Family(ABC):
         value_field: The field of an observation that carries its result.
         optional: Fields that an observation may carry beside it, with the value taken where one is absent.
         required: Fields that an observation object must carry beside it.
-        in_values: What the required fields are for a bare number in `values`.
+        in_values: What the required fields are for a bare number in `values`; where one is missing there are no such.
         known: Names of what the family needs to know beforehand.
         span: The totals it can show.
         has_exposure: The region runs over exposure rather than units.
@@ -187,7 +187,7 @@ class Family(ABC):
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """The shortest ways from here to the lower and to the upper limit."""
 
-    def estimate(self, start: Start) -> float | None:
+    def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """The maximum-likelihood estimate of the parameter from the observations so far, None where there is none."""
         return start.total / start.progress if start.progress > 0.0 else None
 
@@ -223,6 +223,11 @@ class Family(ABC):
         return self.increments(self._columns_of_objects(document["observations"]))
 
     def _columns_of_values(self, values: Sequence[float]) -> dict[str, Column]:
+        unsaid = [field for field in self.required if field not in self.in_values]
+        if unsaid:
+            fields = " and ".join((self.value_field, *unsaid))
+            rule = f'means nothing for {self.name}: post "observations", each with {fields}'
+            raise InvalidObservations([Fault("/values", rule)])
         count = len(values)
         columns = {self.value_field: Column(_array(values), lambda i: f"/values/{i}")}
         for field, value in {**self.optional, **self.in_values}.items():

@@ -72,7 +72,7 @@ class Exponential(Family):
             Way(failures or None, within, float(failures), _failures_within(failures, within)),
         )
 
-    def estimate(self, start: Start) -> float | None:
+    def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """See `Family`."""
         return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
 

@@ -1,0 +1,90 @@
+"""Families that compare two arms, over HTTP from plan to log."""
+
+import csv
+import io
+from typing import Any
+
+import httpx
+import pytest
+
+from tests.api.examples import Namer, pointers, with_test
+
+GRIP: dict[str, Any] = {"family": "paired", "h0": 1.0, "h1": 3.0, "alpha": 0.05, "beta": 0.10}
+
+PAIRS: list[dict[str, Any]] = [{"a": 1, "b": 1}, {"a": 1, "b": 0}, {"a": 0, "b": 1, "unit": "p 3"}, {"a": 0, "b": 0}]
+
+CASES: list[tuple[dict[str, Any], list[dict[str, Any]], int, float]] = [(GRIP, PAIRS, 2, 1)]
+
+
+def post(client: httpx.Client, key: str, body: dict[str, Any]) -> httpx.Response:
+    return client.post(f"/v1/tests/{key}/observations", json=body)
+
+
+@pytest.mark.parametrize(("plan", "rows", "sample_number", "total"), CASES)
+def test_two_arms_go_the_whole_way(
+    admin: httpx.Client,
+    new_name: Namer,
+    plan: dict[str, Any],
+    rows: list[dict[str, Any]],
+    sample_number: int,
+    total: float,
+) -> None:
+    key = with_test(admin, new_name, plan)
+    answer = post(admin, key, {"observations": rows})
+    assert answer.status_code == 201, answer.text
+    state = answer.json()
+    assert (state["decision"], state["sample_number"], state["observations"]) == ("continue", sample_number, len(rows))
+    assert state["total"] == pytest.approx(total)
+    assert all(state["outlook"].values())
+
+    items = admin.get(f"/v1/tests/{key}/observations").json()["items"]
+    assert [{name: item[name] for name in row} for item, row in zip(items, rows, strict=True)] == rows
+    table = admin.get(f"/v1/tests/{key}/observations", headers={"Accept": "text/csv"}).text
+    assert [(row["a"], row["b"]) for row in csv.DictReader(io.StringIO(table))] == [
+        (str(row["a"]), str(row["b"])) for row in rows
+    ]
+
+    path = admin.get(f"/v1/tests/{key}/path").json()
+    assert [point["sequence"] for point in path["points"]] == list(range(len(rows) + 1))
+    assert path["points"][-1]["log_likelihood_ratio"] == state["log_likelihood_ratio"]
+    outlook = admin.get(f"/v1/tests/{key}/outlook").json()
+    assert [expected["under"] for expected in outlook["expected"]] == ["h0", "h1", "estimate"]
+    assert outlook["error_bound"] < 1e-9
+
+    rehearsed = admin.post("/v1/rehearsal", json={"plan": plan, "submission": {"observations": rows}}).json()
+    assert rehearsed["points"] == path["points"]
+    found = admin.get(f"/v1/plans/{state['plan']}/characteristics").json()
+    curve = [point["probability_of_acceptance"] for point in found["points"]]
+    assert curve == sorted(curve, reverse=plan["h1"] > plan["h0"])
+    assert found["fixed_sample"]["size"] > 0
+    calibrated = {**plan, "boundaries": "calibrated", "truncation": {"sample_number": 60}}
+    stored = admin.post("/v1/plans", json={"name": new_name("plan"), **calibrated}).json()
+    assert stored["attained"]["alpha"] <= plan["alpha"] * (1 + 1e-9)
+    assert stored["attained"]["beta"] <= plan["beta"] * (1 + 1e-9)
+
+
+BAD: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (GRIP, {"values": [0, 1]}, "/values"),
+    (GRIP, {"observations": [{"a": 0}]}, "/observations/0/b"),
+    (GRIP, {"observations": [{"b": 0}]}, "/observations/0/a"),
+    (GRIP, {"observations": [{"a": 0, "b": 1}, {"a": 0, "b": 2}]}, "/observations/1/b"),
+    (GRIP, {"observations": [{"a": True, "b": 1}]}, "/observations/0/a"),
+    (GRIP, {"observations": [{"a": 0, "b": None}]}, "/observations/0/b"),
+    (GRIP, {"observations": [{"a": 0, "b": 1, "size": 1}]}, "/observations/0/size"),
+]
+
+
+@pytest.mark.parametrize(("plan", "body", "pointer"), BAD)
+def test_a_bad_pair_refuses_the_whole_submission(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any], pointer: str
+) -> None:
+    key = with_test(admin, new_name, plan)
+    answer = post(admin, key, body)
+    assert (answer.status_code, pointers(answer)) == (422, [pointer]), answer.text
+    assert admin.get(f"/v1/tests/{key}").json()["version"] == 1
+
+
+def test_one_pair_may_carry_one_serial_number(admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, GRIP)
+    post(admin, key, {"observations": PAIRS}).raise_for_status()
+    assert post(admin, key, {"observations": [{"a": 0, "b": 1, "unit": "p 3"}]}).status_code == 409

@@ -1,0 +1,185 @@
+"""Families that compare two arms: evidence, decisions, exact figures and outlook against slow second computations."""
+
+import math
+from fractions import Fraction
+from typing import Any
+
+import numpy as np
+import pytest
+
+from service.domain.characteristics import promise_of
+from service.domain.checking import checked_content
+from service.domain.errors import InvalidObservations, InvalidPlan
+from service.domain.observing import observe
+from service.domain.outlook import outlook_of
+from service.domain.procedure import lines_of, procedure_of_document
+from service.domain.state import State
+from tests.domain.test_observing import NOW
+from tests.sequential.reference import arms, paths
+
+PAIRED: dict[str, Any] = {"family": "paired", "h0": 1.0, "h1": 3.0, "alpha": 0.05, "beta": 0.10}
+
+
+def document(base: dict[str, Any], **change: Any) -> str:
+    return checked_content({**base, **change})
+
+
+def posted(plan: str, rows: list[dict[str, Any]]) -> State:
+    return observe(procedure_of_document(plan), State(), {"observations": rows}, NOW)
+
+
+def of_pairs(pairs: list[tuple[Any, Any]]) -> list[dict[str, Any]]:
+    return [{"a": a, "b": b} for a, b in pairs]
+
+
+def refused(plan: str, body: dict[str, Any]) -> list[str]:
+    with pytest.raises(InvalidObservations) as caught:
+        observe(procedure_of_document(plan), State(), body, NOW)
+    return [fault.pointer for fault in caught.value.faults]
+
+
+@pytest.mark.parametrize("chance_in_a", [Fraction(1, 3), Fraction(9, 10), Fraction(1, 1000)])
+@pytest.mark.parametrize(("u0", "u1"), [(1.0, 3.0), (3.0, 0.5), (0.25, 0.2500001)])
+def test_the_evidence_of_pairs_needs_no_chance_of_either_arm(u0: float, u1: float, chance_in_a: Fraction) -> None:
+    source = np.random.default_rng(3)
+    pairs = [(int(a), int(b)) for a, b in source.integers(0, 2, (40, 2))]
+    plan = document(PAIRED, h0=u0, h1=u1, boundaries="given", thresholds={"accept": -900.0, "reject": 900.0})
+    state = posted(plan, of_pairs(pairs))
+    slow = arms.evidence_of_pairs(pairs, Fraction(u0), Fraction(u1), chance_in_a)
+    size = abs(math.log(u1 / u0)) * 40
+    assert abs(state.log_likelihood_ratio - float(slow)) <= 1e-12 * size
+    assert state.sample_number == sum(a != b for a, b in pairs)
+    assert state.total.value == sum(b > a for a, b in pairs)
+
+
+def test_the_lines_of_pairs_are_walds() -> None:
+    """Wald (1947), Sequential Analysis, chapter 6, formulas of the acceptance and rejection numbers (recalled)."""
+    lines = lines_of(procedure_of_document(document(PAIRED)))
+    assert lines is not None
+    gain = math.log(3.0) - math.log(1.0)
+    assert lines.slope == pytest.approx(math.log((1 + 3) / (1 + 1)) / gain, rel=1e-14)
+    assert lines.accept_intercept == pytest.approx(-math.log(0.10 / 0.95) / gain, rel=1e-14)
+    assert lines.reject_intercept == pytest.approx(math.log(0.90 / 0.05) / gain, rel=1e-14)
+
+
+def wald_numbers(u0: float, u1: float, alpha: float, beta: float, last: int) -> paths.Limits:
+    """Acceptance and rejection numbers after t pairs that differ; at the last the sign of the evidence decides."""
+    gain = math.log(u1) - math.log(u0)
+    slope = math.log((1 + u1) / (1 + u0)) / gain
+
+    def limits(t: int) -> tuple[float, float]:
+        if t == last:
+            accept = math.floor(slope * t)
+            return accept, accept + 1
+        accept = math.floor(math.log(beta / (1 - alpha)) / gain + slope * t)
+        return accept, math.ceil(math.log((1 - beta) / alpha) / gain + slope * t)
+
+    return limits
+
+
+@pytest.mark.parametrize("u", [1, 2, 3])
+def test_exact_figures_of_pairs_agree_with_every_path(u: int) -> None:
+    plan = document(PAIRED, truncation={"sample_number": 40})
+    p = Fraction(u, 1 + u)
+    slow = paths.looks(wald_numbers(1.0, 3.0, 0.05, 0.10, 40), {0: 1 - p, 1: p}, 40)
+    promise = promise_of(plan, [float(u)])
+    point = promise.points[0]
+    assert point.sample_number is not None
+    assert point.probability_of_acceptance == pytest.approx(slow.below, abs=1e-13)
+    assert point.sample_number.mean == pytest.approx(slow.mean, rel=1e-13)
+    assert point.sample_number.quantiles["0.9"] == slow.quantile(0.9)
+
+
+def test_pairs_that_agree_change_no_risk() -> None:
+    """All pairs followed one by one, those that agree too, from both arms' chances; about 200 of 500 would do."""
+    chance_in_a, u = 0.3, 2.0
+    chance_in_b = u * 0.3 / 0.7 / (1 + u * 0.3 / 0.7)
+    for_b, for_a = chance_in_b * (1 - chance_in_a), chance_in_a * (1 - chance_in_b)
+    limits = wald_numbers(1.0, 3.0, 0.05, 0.10, 60)
+    alive, accepted, left = {(0, 0): 1.0}, 0.0, 1.0
+    for _ in range(500):
+        moved: dict[tuple[int, int], float] = {}
+        for (t, total), chance in alive.items():
+            steps = (((t, total), 1 - for_a - for_b), ((t + 1, total), for_a), ((t + 1, total + 1), for_b))
+            for place, step in steps:
+                moved[place] = moved.get(place, 0.0) + chance * step
+        alive = {}
+        for (t, total), chance in moved.items():
+            low, high = limits(t) if t else (-1, 1)
+            if total <= low:
+                accepted += chance
+            elif total < high:
+                alive[t, total] = chance
+        left = sum(alive.values())
+    assert left < 1e-12
+    plan = document(PAIRED, truncation={"sample_number": 60})
+    assert promise_of(plan, [u]).points[0].probability_of_acceptance == pytest.approx(accepted, abs=1e-11)
+
+
+def test_a_decision_of_pairs_falls_at_the_pair_that_crosses() -> None:
+    """By hand: 1 pair for b weighs ln(3/2) = .405, one for a -ln 2 = -.693; ln B = -2.25, so four for a accept."""
+    plan = document(PAIRED)
+    rows = of_pairs([(1, 1), (1, 0), (0, 0), (1, 0), (1, 0), (1, 1), (1, 0), (0, 1)])
+    state = posted(plan, rows)
+    assert state.decision == "accept"
+    assert state.decided is not None
+    assert (state.decided.sequence, state.sample_number, state.total.value, state.overrun) == (7, 4, 0.0, 1)
+    assert state.log_likelihood_ratio == pytest.approx(-4 * math.log(2), rel=1e-14)
+
+
+def test_the_outlook_of_pairs_speaks_of_pairs_that_differ() -> None:
+    """By hand: eight pairs for b weigh 3.24 and seven 2.84, ln A = 2.89; the estimate is 3 for b to 1 for a."""
+    plan = document(PAIRED)
+    outlook = outlook_of(plan, State())
+    assert outlook.ways.accept is not None
+    assert outlook.ways.reject is not None
+    assert outlook.ways.accept.words == "4 pairs that differ, all in a's favour"
+    assert outlook.ways.reject.words == "8 pairs that differ, all in b's favour"
+    assert outlook.estimate is None
+    state = posted(plan, of_pairs([(0, 1), (0, 1), (1, 1), (1, 0), (0, 1)]))
+    later = outlook_of(plan, state)
+    assert later.estimate == 3.0
+    assert [expected.under for expected in later.expected] == ["h0", "h1", "estimate"]
+    assert later.expected[1].probability_of_acceptance == later.expected[2].probability_of_acceptance
+
+
+def test_calibrated_pairs_are_calibrated_proportions() -> None:
+    """Odds of 1 and 3 are chances of 1/2 and 3/4: only the names differ."""
+    calibrated = {"boundaries": "calibrated", "truncation": {"sample_number": 60}}
+    pairs = promise_of(document(PAIRED, **calibrated), [1.0, 3.0])
+    plain = promise_of(document({**PAIRED, "family": "bernoulli"}, h0=0.5, h1=0.75, **calibrated), [0.5, 0.75])
+    assert 0.03 < pairs.alpha <= 0.05
+    assert 0.06 < pairs.beta <= 0.10
+    assert (pairs.alpha, pairs.beta) == pytest.approx((plain.alpha, plain.beta), abs=1e-12)
+    assert pairs.fixed_sample is not None
+    assert plain.fixed_sample is not None
+    assert pairs.fixed_sample.size == plain.fixed_sample.size
+
+
+def test_a_table_of_pairs_is_a_sign_test() -> None:
+    """One look at 10 pairs that differ, against at 9 or more: P = 11/1024 (binomial, by hand)."""
+    rows = [{"sample_number": 10, "accept": 8, "reject": 9}]
+    promise = promise_of(document(PAIRED, boundaries="table", table=rows), [1.0])
+    assert promise.alpha == pytest.approx(11 / 1024, abs=1e-15)
+    state = posted(document(PAIRED, boundaries="table", table=rows), of_pairs([(0, 1)] * 9 + [(1, 1), (1, 0)]))
+    assert (state.decision, state.sample_number) == ("reject", 10)
+
+
+def test_bad_pairs_are_named() -> None:
+    plan = document(PAIRED)
+    assert refused(plan, {"observations": [{"a": 0, "b": 2}, {"a": 0.5, "b": 0}]}) == [
+        "/observations/1/a",
+        "/observations/0/b",
+    ]
+    assert refused(plan, {"observations": [{"b": 1}, {"a": 1, "b": 1, "value": 0}]}) == [
+        "/observations/0/a",
+        "/observations/1/value",
+    ]
+    assert refused(plan, {"values": [0, 1]}) == ["/values"]
+
+
+@pytest.mark.parametrize("change", [{"h0": 0.0}, {"h1": 1e7}, {"h0": -1.0}, {"h1": 1e-7}])
+def test_odds_out_of_reach_are_refused(change: dict[str, float]) -> None:
+    with pytest.raises(InvalidPlan) as caught:
+        document(PAIRED, **change)
+    assert [fault.pointer for fault in caught.value.faults] == [f"/{name}" for name in change]
