@@ -160,7 +160,8 @@ def _check_rows(procedure: Procedure, state: State, walk: Walk) -> None:
         i = int(passed[0])
         where = f"{next_row[i] - begins[i]:.0f} units lead to sample number {next_row[i]:.0f}"
         rule = f"a group may not pass over a row of the table: {where}"
-        raise InvalidObservations([Fault(f"/observations/{i}/size", rule)])
+        field = "/size" if "size" in procedure.family.fields else ""
+        raise InvalidObservations([Fault(f"/observations/{i}{field}", rule)])
 
 
 def _check_size(procedure: Procedure, progress: FloatArray, total: FloatArray) -> None:

@@ -13,7 +13,12 @@ GRIP: dict[str, Any] = {"family": "paired", "h0": 1.0, "h1": 3.0, "alpha": 0.05,
 
 PAIRS: list[dict[str, Any]] = [{"a": 1, "b": 1}, {"a": 1, "b": 0}, {"a": 0, "b": 1, "unit": "p 3"}, {"a": 0, "b": 0}]
 
-CASES: list[tuple[dict[str, Any], list[dict[str, Any]], int, float]] = [(GRIP, PAIRS, 2, 1)]
+DOSE: dict[str, Any] = {**GRIP, "family": "poisson_ratio", "h1": 0.5, "known": {"exposure_ratio": 2.0}}
+
+CASES: list[tuple[dict[str, Any], list[dict[str, Any]], int, float]] = [
+    (GRIP, PAIRS, 2, 1),
+    (DOSE, [{"a": 3, "b": 4}, {"a": 0, "b": 0}, {"a": 0, "b": 1, "unit": "week 3"}], 8, 5),
+]
 
 
 def post(client: httpx.Client, key: str, body: dict[str, Any]) -> httpx.Response:
@@ -57,7 +62,7 @@ def test_two_arms_go_the_whole_way(
     curve = [point["probability_of_acceptance"] for point in found["points"]]
     assert curve == sorted(curve, reverse=plan["h1"] > plan["h0"])
     assert found["fixed_sample"]["size"] > 0
-    calibrated = {**plan, "boundaries": "calibrated", "truncation": {"sample_number": 60}}
+    calibrated = {**plan, "boundaries": "calibrated", "truncation": {"sample_number": 120}}
     stored = admin.post("/v1/plans", json={"name": new_name("plan"), **calibrated}).json()
     assert stored["attained"]["alpha"] <= plan["alpha"] * (1 + 1e-9)
     assert stored["attained"]["beta"] <= plan["beta"] * (1 + 1e-9)
@@ -71,6 +76,10 @@ BAD: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (GRIP, {"observations": [{"a": True, "b": 1}]}, "/observations/0/a"),
     (GRIP, {"observations": [{"a": 0, "b": None}]}, "/observations/0/b"),
     (GRIP, {"observations": [{"a": 0, "b": 1, "size": 1}]}, "/observations/0/size"),
+    (DOSE, {"values": [0, 1]}, "/values"),
+    (DOSE, {"observations": [{"b": 4}]}, "/observations/0/a"),
+    (DOSE, {"observations": [{"a": 3, "b": 4, "exposure": 2.0}]}, "/observations/0/exposure"),
+    (DOSE, {"observations": [{"a": 3, "b": 0.5}]}, "/observations/0/b"),
 ]
 
 

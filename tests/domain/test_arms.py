@@ -15,9 +15,19 @@ from service.domain.outlook import outlook_of
 from service.domain.procedure import lines_of, procedure_of_document
 from service.domain.state import State
 from tests.domain.test_observing import NOW
+from tests.domain.test_tables import VACCINE
 from tests.sequential.reference import arms, paths
 
 PAIRED: dict[str, Any] = {"family": "paired", "h0": 1.0, "h1": 3.0, "alpha": 0.05, "beta": 0.10}
+
+COUNTS: dict[str, Any] = {
+    "family": "poisson_ratio",
+    "h0": 1.0,
+    "h1": 0.5,
+    "alpha": 0.05,
+    "beta": 0.10,
+    "known": {"exposure_ratio": 2.0},
+}
 
 
 def document(base: dict[str, Any], **change: Any) -> str:
@@ -183,3 +193,96 @@ def test_odds_out_of_reach_are_refused(change: dict[str, float]) -> None:
     with pytest.raises(InvalidPlan) as caught:
         document(PAIRED, **change)
     assert [fault.pointer for fault in caught.value.faults] == [f"/{name}" for name in change]
+
+
+@pytest.mark.parametrize("rate", [0.3, 40.0])
+@pytest.mark.parametrize(("h0", "h1", "exposure"), [(1.0, 0.5, 2.0), (0.2, 1.7, 0.01), (3.0, 3.000001, 1.0)])
+def test_the_evidence_of_a_ratio_needs_no_rate(h0: float, h1: float, exposure: float, rate: float) -> None:
+    source = np.random.default_rng(5)
+    counts = [(int(a), int(b)) for a, b in source.poisson(3.0, (30, 2))]
+    limits = {"boundaries": "given", "thresholds": {"accept": -900.0, "reject": 900.0}}
+    plan = document(COUNTS, h0=h0, h1=h1, known={"exposure_ratio": exposure}, **limits)
+    state = posted(plan, of_pairs(counts))
+    events = sum(a + b for a, b in counts)
+    slow = arms.evidence_of_counts(counts, (h0, h1), exposure, rate)
+    assert abs(state.log_likelihood_ratio - float(slow)) <= 1e-12 * abs(math.log(h1 / h0)) * events
+    assert (state.sample_number, state.total.value) == (events, sum(b for _, b in counts))
+
+
+@pytest.mark.parametrize("ratio", [1.0, 0.7, 0.5])
+def test_exact_figures_of_a_ratio_agree_with_every_path(ratio: float) -> None:
+    """With twice the exposure in b an event is there with chance 2r/(1 + 2r); ratios 1 and 1/2 are odds of 2 and 1."""
+    plan = document(COUNTS, truncation={"sample_number": 50})
+    p = Fraction(2 * Fraction(ratio), 1 + 2 * Fraction(ratio))
+    gain, slope = math.log(1 / 2), math.log(2 / 3) / math.log(1 / 2)
+    lower, upper = math.log(0.90 / 0.05) / gain, math.log(0.10 / 0.95) / gain
+
+    def limits(n: int) -> tuple[float, float]:
+        if n == 50:  # Few events in b speak for H1; the sign of the evidence decides.
+            return math.ceil(slope * n) - 1, math.ceil(slope * n)
+        return math.floor(slope * n + lower), math.ceil(slope * n + upper)
+
+    slow = paths.looks(limits, {0: 1 - p, 1: p}, 50)
+    point = promise_of(plan, [ratio]).points[0]
+    assert point.sample_number is not None
+    assert point.probability_of_acceptance == pytest.approx(slow.above, abs=1e-13)
+    assert point.sample_number.mean == pytest.approx(slow.mean, rel=1e-13)
+
+
+def test_the_staged_vaccine_design_is_a_ratio_of_rates() -> None:
+    """Protocol C4591001, Tables 6-8: efficacy is one less the ratio, with equal exposures; 30 %, 50 % and 60 %."""
+    known = {"exposure_ratio": 1.0}
+    plan = checked_content({**VACCINE, "family": "poisson_ratio", "h0": 0.7, "h1": 0.4, "known": known})
+    promise = promise_of(plan, [0.7, 0.5, 0.4])
+    assert [1 - point.probability_of_acceptance for point in promise.points] == pytest.approx(
+        [0.021, 0.439, 0.866], abs=5.1e-4
+    )
+    cases = [point.sample_number.mean for point in promise.points if point.sample_number]
+    assert cases == pytest.approx([80.29, 120.36, 103.02], abs=5.1e-3)
+    assert posted(plan, [{"a": 26, "b": 6}]).decision == "reject"
+    with pytest.raises(InvalidObservations, match="refused") as caught:
+        posted(plan, [{"a": 20, "b": 5}, {"a": 7, "b": 1}])
+    assert caught.value.faults[0].pointer == "/observations/1"
+
+
+def test_a_report_of_events_is_looked_at_only_at_its_end() -> None:
+    """By hand: an event in a weighs ln(3/2) = .405 for H1; eight reach ln A = 2.89, and three in b take back .863."""
+    plan = document(COUNTS)
+    assert posted(plan, of_pairs([(1, 0)] * 8)).decision == "reject"
+    state = posted(plan, of_pairs([(8, 3), (0, 0)]))
+    assert state.decision == "continue"
+    assert state.log_likelihood_ratio == pytest.approx(8 * math.log(1.5) - 3 * math.log(4 / 3), rel=1e-14)
+    assert (state.sample_number, state.total.value) == (11, 3)
+
+
+def test_the_outlook_of_a_ratio_speaks_of_events() -> None:
+    """By hand: seven events in b weigh -2.01 and eight -2.30, ln B = -2.25; 3 in b over 8 in a, halved."""
+    plan = document(COUNTS)
+    ways = outlook_of(plan, State()).ways
+    assert ways.accept is not None
+    assert ways.reject is not None
+    assert (ways.accept.words, ways.reject.words) == ("8 events, all in b", "8 events, all in a")
+    later = outlook_of(plan, posted(plan, of_pairs([(4, 3)])))
+    assert later.estimate == pytest.approx(3 / 4 / 2, rel=1e-15)
+    assert later.ways.reject is not None
+    assert later.ways.reject.words == "6 events, all in a"
+
+
+def test_arms_that_are_missing_or_no_counts_are_named() -> None:
+    plan = document(COUNTS)
+    assert refused(plan, {"observations": [{"a": 3}]}) == ["/observations/0/b"]
+    assert refused(plan, {"observations": [{"a": 3, "b": -1}, {"a": 0.5, "b": 2}]}) == [
+        "/observations/1/a",
+        "/observations/0/b",
+    ]
+    assert refused(plan, {"observations": [{"a": 3, "b": 2e9}]}) == ["/observations/0/b"]
+    with pytest.raises(InvalidPlan) as caught:
+        document({name: value for name, value in COUNTS.items() if name != "known"})
+    assert [fault.pointer for fault in caught.value.faults] == ["/known/exposure_ratio"]
+
+
+def test_exposures_too_far_apart_leave_no_test() -> None:
+    with pytest.raises(InvalidPlan, match="errors") as caught:
+        document(COUNTS, known={"exposure_ratio": 1e9})
+    assert caught.value.faults[0].pointer == "/h1"
+    assert "odds of b against a from 1e-06 to 1e+06" in caught.value.faults[0].detail

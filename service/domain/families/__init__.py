@@ -6,6 +6,7 @@ from service.domain.families.exponential import Exponential
 from service.domain.families.normal import Normal
 from service.domain.families.paired import Paired
 from service.domain.families.poisson import Poisson
+from service.domain.families.poisson_ratio import PoissonRatio
 
 _ALL: tuple[Family, ...] = (
     Bernoulli(),
@@ -13,6 +14,7 @@ _ALL: tuple[Family, ...] = (
     Exponential(),
     Normal(),
     Paired(),
+    PoissonRatio(),
 )
 
 FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}
