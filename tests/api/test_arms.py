@@ -15,9 +15,18 @@ PAIRS: list[dict[str, Any]] = [{"a": 1, "b": 1}, {"a": 1, "b": 0}, {"a": 0, "b":
 
 DOSE: dict[str, Any] = {**GRIP, "family": "poisson_ratio", "h1": 0.5, "known": {"exposure_ratio": 2.0}}
 
+LENS: dict[str, Any] = {
+    **GRIP,
+    "family": "normal_difference",
+    "h0": 0.0,
+    "h1": 0.5,
+    "known": {"sigma_a": 0.3, "sigma_b": 0.4},
+}
+
 CASES: list[tuple[dict[str, Any], list[dict[str, Any]], int, float]] = [
     (GRIP, PAIRS, 2, 1),
     (DOSE, [{"a": 3, "b": 4}, {"a": 0, "b": 0}, {"a": 0, "b": 1, "unit": "week 3"}], 8, 5),
+    (LENS, [{"a": 10.1, "b": 10.3}, {"a": 10.0, "b": 10.2, "unit": "cut 2"}], 2, 0.4),
 ]
 
 
@@ -77,6 +86,9 @@ BAD: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (GRIP, {"observations": [{"a": 0, "b": None}]}, "/observations/0/b"),
     (GRIP, {"observations": [{"a": 0, "b": 1, "size": 1}]}, "/observations/0/size"),
     (DOSE, {"values": [0, 1]}, "/values"),
+    (LENS, {"values": [0.5]}, "/values"),
+    (LENS, {"observations": [{"a": 10.0}]}, "/observations/0/b"),
+    (LENS, {"observations": [{"a": 10.0, "b": 1e200}]}, "/observations/0/b"),
     (DOSE, {"observations": [{"b": 4}]}, "/observations/0/a"),
     (DOSE, {"observations": [{"a": 3, "b": 4, "exposure": 2.0}]}, "/observations/0/exposure"),
     (DOSE, {"observations": [{"a": 3, "b": 0.5}]}, "/observations/0/b"),

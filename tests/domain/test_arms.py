@@ -29,6 +29,15 @@ COUNTS: dict[str, Any] = {
     "known": {"exposure_ratio": 2.0},
 }
 
+LEVELS: dict[str, Any] = {
+    "family": "normal_difference",
+    "h0": 0.0,
+    "h1": 0.5,
+    "alpha": 0.05,
+    "beta": 0.05,
+    "known": {"sigma_a": 0.3, "sigma_b": 0.4},
+}
+
 
 def document(base: dict[str, Any], **change: Any) -> str:
     return checked_content({**base, **change})
@@ -286,3 +295,54 @@ def test_exposures_too_far_apart_leave_no_test() -> None:
         document(COUNTS, known={"exposure_ratio": 1e9})
     assert caught.value.faults[0].pointer == "/h1"
     assert "odds of b against a from 1e-06 to 1e+06" in caught.value.faults[0].detail
+
+
+@pytest.mark.parametrize(("h0", "h1"), [(0.0, 0.5), (0.2, -0.3)])
+def test_the_evidence_of_a_difference_is_that_of_its_density(h0: float, h1: float) -> None:
+    source = np.random.default_rng(8)
+    pairs = [(float(a), float(b)) for a, b in source.normal(100.0, 0.4, (40, 2))]
+    limits = {"boundaries": "given", "thresholds": {"accept": -900.0, "reject": 900.0}}
+    state = posted(document(LEVELS, h0=h0, h1=h1, **limits), of_pairs(pairs))
+    slow = arms.evidence_of_differences(pairs, (h0, h1), (0.3, 0.4))
+    assert state.log_likelihood_ratio == pytest.approx(float(slow), rel=1e-12)
+    assert state.total.value == pytest.approx(math.fsum(b - a for a, b in pairs), rel=1e-14)
+
+
+def test_exact_figures_of_a_difference_are_those_of_a_mean() -> None:
+    """Two independent computations of the normal test with risks .05 and a shift of one sigma: ASN 6.92007795."""
+    promise = promise_of(document(LEVELS), [0.0, 0.25])
+    assert [point.sample_number.mean for point in promise.points if point.sample_number] == pytest.approx(
+        [6.92007795, 12.69065621], abs=5e-9
+    )
+    assert promise.points[0].probability_of_acceptance == pytest.approx(0.97135781, abs=5e-9)
+    assert promise.points[0].wald is not None
+    assert promise.points[0].wald.average == pytest.approx(5.29999, abs=5e-6)
+    # (1.645 + 1.645)**2 = 10.8 pairs of a fixed sample (Neyman and Pearson).
+    assert promise.fixed_sample is not None
+    assert promise.fixed_sample.size == 11
+
+
+def test_a_calibrated_difference_has_the_stated_risks() -> None:
+    promise = promise_of(document(LEVELS, boundaries="calibrated", truncation={"sample_number": 20}), [0.0])
+    assert (promise.alpha, promise.beta) == pytest.approx((0.05, 0.05), abs=1e-8)
+
+
+def test_the_outlook_of_a_difference_asks_for_a_pair() -> None:
+    """By hand: gain .5/.25 = 2, so the lines are n/4 - 1.4722 and n/4 + 1.4722; ln(19) = 2.9444."""
+    plan = document(LEVELS)
+    outlook = outlook_of(plan, posted(plan, [{"a": 10.0, "b": 10.5}]))
+    assert outlook.estimate == 0.5
+    assert outlook.ways.accept is not None
+    assert outlook.ways.accept.words == "a pair whose b less a is at most -1.47222"
+    assert outlook.ways.accept.total == pytest.approx(0.5 - math.log(19) / 2 - 0.5, rel=1e-14)
+    assert outlook.ways.reject is not None
+    assert outlook.ways.reject.total == pytest.approx(math.log(19) / 2, rel=1e-14)
+
+
+def test_bad_measurements_of_pairs_are_named() -> None:
+    plan = document(LEVELS)
+    assert refused(plan, {"observations": [{"a": 1.0, "b": 1e101}]}) == ["/observations/0/b"]
+    assert refused(plan, {"observations": [{"a": 1.0}]}) == ["/observations/0/b"]
+    with pytest.raises(InvalidPlan) as caught:
+        document(LEVELS, known={"sigma_a": 1.0, "sigma": 1.0})
+    assert [fault.pointer for fault in caught.value.faults] == ["/known/sigma_b", "/known/sigma"]

@@ -4,6 +4,7 @@ from service.domain.families.base import Family, Increments
 from service.domain.families.bernoulli import Bernoulli
 from service.domain.families.exponential import Exponential
 from service.domain.families.normal import Normal
+from service.domain.families.normal_difference import NormalDifference
 from service.domain.families.paired import Paired
 from service.domain.families.poisson import Poisson
 from service.domain.families.poisson_ratio import PoissonRatio
@@ -15,6 +16,7 @@ _ALL: tuple[Family, ...] = (
     Normal(),
     Paired(),
     PoissonRatio(),
+    NormalDifference(),
 )
 
 FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}

@@ -1,0 +1,86 @@
+"""Measurements that come one at a time in two arms, against the likelihood of all of them."""
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from mpmath import mp, mpf
+
+from service.sequential import likelihood
+from service.sequential.double import Double, FloatArray, running_sum
+from service.sequential.two_samples import Arm, pairs_worth
+
+mp.dps = 60
+
+SIGMAS = st.sampled_from([(1.0, 1.0), (0.5, 2.0), (3.0, 0.01), (1e90, 3e90), (1e-90, 1e-90)])
+ORDERS = st.lists(st.booleans(), min_size=1, max_size=30)
+
+
+def arm(values: FloatArray, is_here: FloatArray) -> Arm:
+    """The running count and sum of the measurements that fell into one arm."""
+    zero = Double.of(0.0)
+    return Arm(np.cumsum(is_here), running_sum(zero, values * is_here))
+
+
+def moments(values: FloatArray, is_b: FloatArray, sigmas: tuple[float, float]) -> tuple[FloatArray, FloatArray]:
+    return pairs_worth(arm(values, 1.0 - is_b), arm(values, is_b), *sigmas)
+
+
+def slow_evidence(rows: list[tuple[bool, float]], means: tuple[float, float], sigmas: tuple[float, float]) -> mpf:
+    """Ln of the ratio of the likelihoods of everything measured, each at the level that suits its hypothesis best."""
+    best = []
+    for difference in means:
+        shifted = [(x - mpf(difference) if is_b else mpf(x), mpf(sigmas[is_b])) for is_b, x in rows]
+        level = sum(x / s**2 for x, s in shifted) / sum(1 / s**2 for _, s in shifted)
+        best.append(-sum(((x - level) / s) ** 2 for x, s in shifted) / 2)
+    return best[1] - best[0]
+
+
+@settings(max_examples=150, deadline=None)
+@given(ORDERS, SIGMAS, st.integers(0, 2**32 - 1), st.sampled_from([0.0, 1e6]))
+def test_the_evidence_is_that_of_all_measurements(
+    order: list[bool], sigmas: tuple[float, float], seed: int, level: float
+) -> None:
+    source = np.random.default_rng(seed)
+    scale = np.hypot(*sigmas)
+    values = scale * (level + source.normal(0.0, 1.0, len(order)))
+    means = (0.0, 0.7 * scale)
+    progress, total = moments(values, np.array(order, float), sigmas)
+    ratio = likelihood.normal(*means, float(scale))
+    zero = np.zeros(len(order))
+    found = ratio.log(Double(progress, zero), Double(total, zero))
+    slow = slow_evidence(list(zip(order, values.tolist(), strict=True)), means, sigmas)
+    size = abs(ratio.gain) * (abs(total[-1]) + abs(ratio.slope) * progress[-1])
+    assert abs(found[-1] - float(slow)) <= 1e-12 * max(1.0, size)
+
+
+@settings(max_examples=60, deadline=None)
+@given(ORDERS, SIGMAS)
+def test_the_steps_of_the_total_are_independent(order: list[bool], sigmas: tuple[float, float]) -> None:
+    """Cov(total then, total later) = Var(total then) = progress * (sa**2 + sb**2), from each measurement's weight."""
+    is_b, count = np.array(order, float), len(order)
+    columns = [moments(np.eye(count)[i], is_b, sigmas) for i in range(count)]
+    weights = np.array([total for _, total in columns])
+    scale = max(sigmas)
+    relative = np.where(is_b == 1.0, sigmas[1], sigmas[0]) / scale
+    covariance = (weights * relative[:, np.newaxis] ** 2).T @ weights
+    variance = columns[0][0] * ((sigmas[0] / scale) ** 2 + (sigmas[1] / scale) ** 2)
+    expected = np.minimum(variance[:, np.newaxis], variance)
+    assert np.all(np.diff(columns[0][0]) >= 0.0)
+    assert covariance == pytest.approx(expected, rel=1e-12, abs=1e-12)
+
+
+def test_complete_pairs_are_pairs() -> None:
+    source = np.random.default_rng(2)
+    a, b = source.normal(1000.0, 1.0, (2, 50))
+    values, is_b = np.column_stack([a, b]).ravel(), np.tile([0.0, 1.0], 50)
+    progress, total = moments(values, is_b, (0.3, 1.7))
+    assert np.array_equal(progress[1::2], np.arange(1.0, 51.0))
+    assert total[1::2] == pytest.approx(np.cumsum(b - a), abs=1e-10)
+
+
+def test_with_an_empty_arm_nothing_is_known() -> None:
+    values = np.array([5.0, 7.0, -3.0])
+    progress, total = moments(values, np.ones(3), (1.0, 2.0))
+    assert not np.any(progress)
+    assert not np.any(total)
