@@ -1,5 +1,6 @@
 """What a plan really promises: exact probabilities of acceptance and exact sample numbers."""
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
@@ -103,7 +104,7 @@ def promise_of(document: str, at: Sequence[float]) -> Promise:
         at: True parameters.
 
     Raises:
-        InvalidQuestion: Too many parameters, or one outside the family's range.
+        InvalidQuestion: Too many parameters, one outside the family's range, or a family without a model.
         ComputationTooLarge: The recursion would not end within its limit.
     """
     procedure = procedure_of_document(document)
@@ -182,4 +183,5 @@ def common_grid(documents: Sequence[str]) -> tuple[float, ...]:
     """Parameters around all hypotheses of plans of one family."""
     procedures = [procedure_of_document(document) for document in documents]
     hypotheses = [parameter for procedure in procedures for parameter in procedure.hypotheses]
-    return procedures[0].family.grid(min(hypotheses), max(hypotheses), GRID_POINTS)
+    low, high = min(hypotheses, default=math.nan), max(hypotheses, default=math.nan)
+    return procedures[0].family.grid(low, high, GRID_POINTS)

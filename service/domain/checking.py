@@ -13,12 +13,16 @@ from service.domain.families.base import positive_rule
 from service.domain.plan import Content, canonical, rounded
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.tables import faults_of_table
+from service.sequential import boundaries
 from service.sequential.errors import OutOfRange
 from service.sequential.region import StraightRegion
 
 BOUNDARY_RULES = ("wald", "strict", "calibrated", "given", "table")
 LARGEST_SAMPLE_NUMBER = 1_000_000_000
-REQUIRED = ("family", "h0", "h1", "alpha", "beta")
+HYPOTHESES = ("h0", "h1")
+RISKS = ("alpha", "beta")
+# Boundary rules that need no model of the observations.
+FOR_EVERY_MODEL = ("strict", "given")
 DEFAULTS = {"boundaries": "wald", "statistic": "simple"}
 
 
@@ -34,7 +38,7 @@ def checked_content(given: Content) -> str:
         ComputationTooLarge: The boundaries cannot be calibrated within the limit of work.
     """
     content = standards.expanded({key: value for key, value in {**DEFAULTS, **given}.items() if value is not None})
-    missing = [Fault(f"/{name}", "is required") for name in REQUIRED if name not in content]
+    missing = [Fault(f"/{name}", "is required") for name in _required(content) if name not in content]
     if missing or (faults := _faults_of(content)):
         raise InvalidPlan(missing or faults)
     try:
@@ -75,6 +79,8 @@ def attained_by(standard: standards.Standard) -> Risks:
 def _completed(content: Content) -> dict[str, Any]:
     """With what is computed from it once and for all."""
     completed = dict(content)
+    if not FAMILIES[content["family"]].has_model:
+        return {**completed, **_bounded(content)}
     if content["boundaries"] == "calibrated":
         thresholds = calibrated(content)
         completed["thresholds"] = {"accept": rounded(thresholds.accept), "reject": rounded(thresholds.reject)}
@@ -88,6 +94,21 @@ def _completed(content: Content) -> dict[str, Any]:
     return completed
 
 
+def _bounded(content: Content) -> dict[str, Any]:
+    """The bounds of the risks that hold for every model; a forced decision has none."""
+    thresholds = procedure_of_document(canonical(content)).thresholds
+    if thresholds is None or "truncation" in content:
+        return {}
+    alpha, beta = boundaries.guaranteed(thresholds)
+    return {"attained": {"alpha": rounded(alpha), "beta": rounded(beta)}}
+
+
+def _required(content: Content) -> tuple[str, ...]:
+    family = FAMILIES.get(content.get("family", ""))
+    has_model = family is None or family.has_model
+    return ("family", *(HYPOTHESES if has_model else ()), *RISKS)
+
+
 def _faults_of(content: Content) -> list[Fault]:
     family = FAMILIES.get(content["family"])
     if family is None:
@@ -98,6 +119,7 @@ def _faults_of(content: Content) -> list[Fault]:
         *_faults_of_hypotheses(family, content),
         *_faults_of_risks(content),
         *_faults_of_boundaries(content),
+        *_faults_of_model(family, content),
         *_faults_of_known(family, content.get("known", {})),
         *_faults_of_truncation(family, content.get("truncation")),
         *_faults_of_rows(family, content),
@@ -110,9 +132,12 @@ def _faults_of_statistic(content: Content) -> list[Fault]:
 
 
 def _faults_of_hypotheses(family: Family, content: Content) -> list[Fault]:
+    if not family.has_model:
+        reason = f"means nothing for {family.name}: its increments hold both hypotheses"
+        return [Fault(f"/{name}", reason) for name in HYPOTHESES if name in content]
     faults = [
         Fault(f"/{name}", f"{rule}: it is a {family.parameter}; received {content[name]!r}")
-        for name in ("h0", "h1")
+        for name in HYPOTHESES
         if (rule := family.hypothesis_rule(content[name])) is not None
     ]
     if content["h0"] == content["h1"]:
@@ -154,6 +179,15 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
     return faults
 
 
+def _faults_of_model(family: Family, content: Content) -> list[Fault]:
+    """Without a model only what holds for every model is promised."""
+    rule = content["boundaries"]
+    if family.has_model or rule in FOR_EVERY_MODEL or rule not in BOUNDARY_RULES:
+        return []
+    reason = "other rules promise risks that only a model of the observations can give"
+    return [Fault("/boundaries", f"must be strict or given for {family.name}: {reason}; received {rule!r}")]
+
+
 def _faults_of_known(family: Family, known: Mapping[str, float]) -> list[Fault]:
     faults = [Fault(f"/known/{name}", f"is required for {family.name}") for name in family.known if name not in known]
     for name, value in known.items():
@@ -184,7 +218,7 @@ def _faults_of_truncation(family: Family, truncation: Mapping[str, float] | None
 
 
 def _faults_of_rows(family: Family, content: Content) -> list[Fault]:
-    if content["boundaries"] != "table":
+    if content["boundaries"] != "table" or not family.has_model:
         return []
     if content.get("truncation") is not None:
         return [Fault("/truncation", "means nothing beside a table: its last row is the end")]

@@ -53,7 +53,7 @@ class Outlook:
     Attributes:
         estimate: Maximum likelihood from the observations so far, None where there is none.
         room: None where the plan is not truncated, or the test is decided.
-        expected: Empty once the test is decided.
+        expected: Empty once the test is decided, and where the family has no model.
     """
 
     ways: Ways
@@ -93,6 +93,8 @@ def outlook_of(document: str, state: State) -> Outlook:
 def _outlook(document: str, standing: Start) -> Outlook:
     procedure = procedure_of_document(document)
     estimate = procedure.family.estimate(standing, procedure.known)
+    if not procedure.family.has_model:
+        return Outlook(_ways(procedure, standing), estimate, _room(procedure, standing), (), 0.0)
     asked = {"h0": procedure.hypotheses[0], "h1": procedure.hypotheses[1]}
     if estimate is not None:
         asked["estimate"] = estimate

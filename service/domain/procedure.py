@@ -5,6 +5,7 @@ Content is plain JSON with its defaults filled in, as `checking.checked_content`
 """
 
 import json
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import lru_cache
@@ -23,7 +24,8 @@ class Procedure:
     """
     A plan's numbers at work: the family, the evidence, the limits and the region that decides.
 
-    `thresholds` is None where the limits are not of the log-likelihood ratio but a table's.
+    `thresholds` is None where the limits are not of the log-likelihood ratio but a table's. `hypotheses` are h0 and h1,
+    none where the family has no model.
     """
 
     family: Family
@@ -31,7 +33,7 @@ class Procedure:
     thresholds: Thresholds | None
     region: Region
     known: Mapping[str, float]
-    hypotheses: tuple[float, float]
+    hypotheses: tuple[float, ...]
     risks: tuple[float, float]
 
 
@@ -92,13 +94,19 @@ def _compiled(document: str) -> Procedure:
 
 def _evidence(content: Content) -> tuple[Family, LikelihoodRatio]:
     family = FAMILIES[content["family"]]
-    return family, family.likelihood_ratio(content["h0"], content["h1"], content.get("known", {}))
+    # A family without a model does not look at hypotheses, and its plans have none.
+    h0, h1 = _hypotheses(content) or (math.nan, math.nan)
+    return family, family.likelihood_ratio(h0, h1, content.get("known", {}))
+
+
+def _hypotheses(content: Content) -> tuple[float, ...]:
+    return tuple(content[name] for name in ("h0", "h1") if name in content)
 
 
 def _procedure(content: Content, ratio: LikelihoodRatio, thresholds: Thresholds | None, region: Region) -> Procedure:
     family = FAMILIES[content["family"]]
-    hypotheses, risks = (content["h0"], content["h1"]), (content["alpha"], content["beta"])
-    return Procedure(family, ratio, thresholds, region, content.get("known", {}), hypotheses, risks)
+    risks = (content["alpha"], content["beta"])
+    return Procedure(family, ratio, thresholds, region, content.get("known", {}), _hypotheses(content), risks)
 
 
 def _thresholds(content: Content) -> Thresholds:

@@ -120,6 +120,11 @@ def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
     return _checked(LikelihoodRatio(gain, float(middle.high), float(middle.low)))
 
 
+def summed() -> LikelihoodRatio:
+    """The evidence where the total is itself the sum of log-likelihood ratios, worked out elsewhere."""
+    return LikelihoodRatio(gain=1.0, slope=0.0)
+
+
 def _log_quotient(a: float, b: float) -> float:
     """ln(a/b) of positive numbers; near one the difference a - b is exact, where the quotient has lost digits."""
     quotient = a / b

@@ -225,6 +225,17 @@ def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
     assert not (tmp_path / "none.sqlite3").exists()
 
 
+def test_two_arms_are_designed_with_what_they_need_to_know(tmp_path: Path) -> None:
+    """Odds of 2 and 1 in b: chances of 2/3 and 1/2, whose fixed sample is that of these proportions."""
+    url, risks = f"sqlite:///{tmp_path / 'none.sqlite3'}", ["--alpha", "0.05", "--beta", "0.1"]
+    ratio = ["--family", "poisson_ratio", "--h0", "1", "--h1", "0.5", "--known", "exposure_ratio=2"]
+    arms = command("design", *ratio, *risks, database_url=url)
+    plain = command("design", "--h0", "0.6666666666666666", "--h1", "0.5", *risks, database_url=url)
+    wanted = "Smallest fixed sample with the same risks: 79 units, accept at least 46."
+    assert wanted in arms.stdout
+    assert wanted in plain.stdout
+
+
 @pytest.mark.parametrize(
     ("arguments", "said"),
     [
@@ -233,6 +244,12 @@ def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
         (["--standard", "MIL-HDBK-781A/III-D"], "--scale: is required"),
         (["--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1", "--truncation", "x"], "--truncation"),
         (["--family", "normal", "--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1"], "--sigma"),
+        (
+            ["--family", "poisson_ratio", "--h0", "1", "--h1", "2", "--alpha", "0.1", "--beta", "0.1"],
+            "--known exposure",
+        ),
+        (["--family", "score", "--alpha", "0.1", "--beta", "0.1", "--boundaries", "strict"], "no exact figures"),
+        (["--h0", "0.1", "--known", "share"], "name=number"),
         (["--h0", "1e-6", "--h1", "1.1e-6", "--alpha", "0.1", "--beta", "0.1"], "would need more than"),
     ],
 )

@@ -43,7 +43,7 @@ STORED: dict[str, Any] = {
 }
 
 # Members of a stored plan that not every plan has.
-OPTIONAL = ("truncation", "known", "table", "standard", "scale", "attained")
+OPTIONAL = ("h0", "h1", "truncation", "known", "table", "standard", "scale", "attained")
 
 
 class TruncationForm(Form):
@@ -76,8 +76,8 @@ class PlanContentForm(Form):
     """What a plan promises, its name left out. A standard brings its own family, hypotheses, risks and table."""
 
     family: str | None = Field(None, description=f"{', '.join(FAMILIES)}. Required.")
-    h0: Number | None = Field(None, description="Parameter under H0; see the family. Required.")
-    h1: Number | None = Field(None, description="Parameter under H1. Required.")
+    h0: Number | None = Field(None, description="Parameter under H0; see the family. Required, but for score.")
+    h1: Number | None = Field(None, description="Parameter under H1. Required, but for score.")
     alpha: Number | None = Field(None, description="Producer's risk: P(reject) when H0 is true. Required.")
     beta: Number | None = Field(None, description="Consumer's risk: P(accept) when H1 is true. Required.")
     boundaries: str = Field("wald", description="wald, strict, calibrated, given or table.")
@@ -136,8 +136,8 @@ class PlanOut(Answer):
     name: str
     family: str
     parameter: str
-    h0: float
-    h1: float
+    h0: float | None = Field(description="Null, as h1, for score.")
+    h1: float | None
     alpha: float
     beta: float
     boundaries: str
@@ -150,7 +150,9 @@ class PlanOut(Answer):
     standard: str | None
     scale: float | None
     source: str | None = Field(description="Where the standard stands.")
-    attained: AttainedOut | None = Field(description="Exact risks, for calibrated boundaries and tables.")
+    attained: AttainedOut | None = Field(
+        description="Exact risks, for calibrated boundaries and tables; for score the bounds that hold for every model."
+    )
     fingerprint: str
     created_at: datetime
     created_by: str

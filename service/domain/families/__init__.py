@@ -8,6 +8,7 @@ from service.domain.families.normal_difference import NormalDifference
 from service.domain.families.paired import Paired
 from service.domain.families.poisson import Poisson
 from service.domain.families.poisson_ratio import PoissonRatio
+from service.domain.families.score import Score
 
 _ALL: tuple[Family, ...] = (
     Bernoulli(),
@@ -17,6 +18,7 @@ _ALL: tuple[Family, ...] = (
     Paired(),
     PoissonRatio(),
     NormalDifference(),
+    Score(),
 )
 
 FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}

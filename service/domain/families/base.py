@@ -116,6 +116,7 @@ class Family(ABC):
         parameter_lowers_total: Large parameters make small totals.
         table: The rows of a table for this family, if a plan may be given as one.
         carries: The running sums that give progress and total where these do not simply add up; see `place`.
+        has_model: A plan states h0 and h1, and what they say of the observations gives exact figures.
     """
 
     name: ClassVar[str]
@@ -131,6 +132,7 @@ class Family(ABC):
     parameter_lowers_total: ClassVar[bool] = False
     table: ClassVar[TableKind | None] = None
     carries: ClassVar[tuple[str, ...]] = ()
+    has_model: ClassVar[bool] = True
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
