@@ -23,7 +23,8 @@ SELECT
     s.actor,
     s.first_sequence + o.key <= coalesce(t.decided_sequence, t.sequence) AS counted,
     CASE o.type WHEN 'object' THEN o.value ->> 'a' END AS a,
-    CASE o.type WHEN 'object' THEN o.value ->> 'b' END AS b
+    CASE o.type WHEN 'object' THEN o.value ->> 'b' END AS b,
+    CASE o.type WHEN 'object' THEN o.value ->> 'arm' END AS arm
 FROM submissions AS s
 JOIN tests AS t ON t.key = s.test
 JOIN json_each(s.body, CASE WHEN json_type(s.body, '$.values') IS NULL THEN '$.observations' ELSE '$.values' END) AS o
@@ -47,7 +48,8 @@ SELECT
     s.actor,
     s.first_sequence + o.position - 1 <= coalesce(t.decided_sequence, t.sequence) AS counted,
     CASE jsonb_typeof(o.item) WHEN 'object' THEN (o.item ->> 'a')::float8 END AS a,
-    CASE jsonb_typeof(o.item) WHEN 'object' THEN (o.item ->> 'b')::float8 END AS b
+    CASE jsonb_typeof(o.item) WHEN 'object' THEN (o.item ->> 'b')::float8 END AS b,
+    CASE jsonb_typeof(o.item) WHEN 'object' THEN o.item ->> 'arm' END AS arm
 FROM submissions AS s
 JOIN tests AS t ON t.key = s.test
 CROSS JOIN LATERAL jsonb_array_elements(coalesce(s.body::jsonb -> 'values', s.body::jsonb -> 'observations'))

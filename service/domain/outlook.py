@@ -105,7 +105,7 @@ def _outlook(document: str, standing: Start) -> Outlook:
             parameter=parameter,
             probability_of_acceptance=accepts_at(procedure, found, i),
             probability_of_rejection=rejects_at(procedure, found, i),
-            further_sample_number=None if procedure.family.is_watched_in_time else spread_at(found, i),
+            further_sample_number=spread_at(found, i) if procedure.family.has_figures_of_units else None,
             further_exposure=spread_at(found, i) if procedure.family.has_exposure else None,
         )
         for i, (under, parameter) in enumerate(asked.items())

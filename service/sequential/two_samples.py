@@ -40,9 +40,7 @@ def pairs_worth(a: Arm, b: Arm, sigma_a: float, sigma_b: float) -> tuple[FloatAr
     Returns:
         Two arrays of shape (moments,), zero where an arm is empty.
     """
-    # A share of the variance rather than variances: squares of small or large deviations would leave the range.
-    larger = max(sigma_a, sigma_b)
-    share = (sigma_a / larger) ** 2 / ((sigma_a / larger) ** 2 + (sigma_b / larger) ** 2)
+    share = variance_share(sigma_a, sigma_b)
     # na nb (sa**2 + sb**2) / (sa**2 nb + sb**2 na), written so that equal counts give themselves.
     weight = a.count + share * (b.count - a.count)
     is_compared = (a.count > 0.0) & (b.count > 0.0)
@@ -51,6 +49,32 @@ def pairs_worth(a: Arm, b: Arm, sigma_a: float, sigma_b: float) -> tuple[FloatAr
     # progress (sum b/nb - sum a/na) = (na sum b - nb sum a) / weight.
     crossed = _difference(_times(b.total, a.count), _times(a.total, b.count))
     return progress, np.where(is_compared, crossed / whole, 0.0)
+
+
+def variance_share(sigma_a: float, sigma_b: float) -> float:
+    """The share of arm a in the variance of a difference; squares of the deviations themselves may leave the range."""
+    larger = max(sigma_a, sigma_b)
+    of_a, of_b = (sigma_a / larger) ** 2, (sigma_b / larger) ** 2
+    return of_a / (of_a + of_b)
+
+
+def reaching(
+    total: float, counts: tuple[float, float], sums: tuple[float, float], share: float, *, in_b: bool
+) -> float:
+    """
+    The measurement with which the total of `pairs_worth` becomes this.
+
+    Args:
+        counts: Of arms a and b with that measurement, both above 0.
+        sums: Of arms a and b without it.
+        share: See `variance_share`.
+        in_b: Whether it is one of arm b.
+    """
+    (count_a, count_b), (sum_a, sum_b) = counts, sums
+    crossed = total * (count_a + share * (count_b - count_a))
+    if in_b:
+        return (crossed + count_b * sum_a) / count_a - sum_b
+    return (count_a * sum_b - crossed) / count_b - sum_a
 
 
 def _times(number: Double, factor: FloatArray) -> Double:

@@ -109,3 +109,55 @@ def test_one_pair_may_carry_one_serial_number(admin: httpx.Client, new_name: Nam
     key = with_test(admin, new_name, GRIP)
     post(admin, key, {"observations": PAIRS}).raise_for_status()
     assert post(admin, key, {"observations": [{"a": 0, "b": 1, "unit": "p 3"}]}).status_code == 409
+
+
+def test_arms_measured_one_at_a_time_go_the_whole_way(admin: httpx.Client, new_name: Namer) -> None:
+    """By hand: 2 in a and 1 in b are 2/(2 + .36(1 - 2)) = 1.2195 pairs, and the averages differ by .3."""
+    plan = {**LENS, "family": "normal_two_sample", "truncation": {"exposure": 40.0}}
+    key = with_test(admin, new_name, plan)
+    rows = [{"arm": "a", "value": 10.1}, {"arm": "a", "value": 10.3, "unit": "cut 9"}, {"arm": "b", "value": 10.5}]
+    first = post(admin, key, {"observations": rows[:2]}).json()
+    assert (first["log_likelihood_ratio"], first["exposure"], first["sample_number"]) == (0.0, 0.0, 2)
+    state = post(admin, key, {"observations": rows[2:]}).json()
+    assert state["exposure"] == pytest.approx(2 / 1.64, rel=1e-14)
+    assert state["total"] == pytest.approx(0.3 * 2 / 1.64, rel=1e-12)
+    assert state["outlook"]["accept"].startswith("a measurement in b of at most ")
+
+    items = admin.get(f"/v1/tests/{key}/observations").json()["items"]
+    assert [{name: item[name] for name in row} for item, row in zip(items, rows, strict=True)] == rows
+    table = admin.get(f"/v1/tests/{key}/observations", headers={"Accept": "text/csv"}).text
+    assert [(row["arm"], row["value"]) for row in csv.DictReader(io.StringIO(table))] == [
+        ("a", "10.1"),
+        ("a", "10.3"),
+        ("b", "10.5"),
+    ]
+    path = admin.get(f"/v1/tests/{key}/path").json()
+    assert path["axis"] == "exposure"
+    assert path["points"][-1]["exposure"] == state["exposure"]
+    outlook = admin.get(f"/v1/tests/{key}/outlook").json()
+    assert outlook["room"]["exposure"] == pytest.approx(40 - 2 / 1.64)
+    assert outlook["expected"][0]["further_sample_number"] is None
+    assert outlook["expected"][0]["further_exposure"]["average"] > 0
+    rehearsed = admin.post("/v1/rehearsal", json={"plan": plan, "submission": {"observations": rows}}).json()
+    assert rehearsed["log_likelihood_ratio"] == state["log_likelihood_ratio"]
+    point = admin.get(f"/v1/plans/{state['plan']}/characteristics?at=0.25").json()["points"][0]
+    assert point["average_sample_number"] is None
+    assert point["average_exposure"] > 10
+
+
+@pytest.mark.parametrize(
+    ("row", "pointer"),
+    [
+        ({"arm": "c", "value": 1.0}, "/observations/0/arm"),
+        ({"arm": None, "value": 1.0}, "/observations/0/arm"),
+        ({"arm": 1, "value": 1.0}, "/observations/0/arm"),
+        ({"value": 1.0}, "/observations/0/arm"),
+        ({"arm": "a"}, "/observations/0/value"),
+    ],
+)
+def test_an_arm_that_is_not_there_is_named(
+    admin: httpx.Client, new_name: Namer, row: dict[str, Any], pointer: str
+) -> None:
+    key = with_test(admin, new_name, {**LENS, "family": "normal_two_sample"})
+    answer = post(admin, key, {"observations": [row]})
+    assert (answer.status_code, pointers(answer)) == (422, [pointer]), answer.text

@@ -6,6 +6,8 @@ from typing import Any
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from service.domain.characteristics import promise_of
 from service.domain.checking import checked_content
@@ -37,6 +39,8 @@ LEVELS: dict[str, Any] = {
     "beta": 0.05,
     "known": {"sigma_a": 0.3, "sigma_b": 0.4},
 }
+
+SINGLES: dict[str, Any] = {**LEVELS, "family": "normal_two_sample"}
 
 
 def document(base: dict[str, Any], **change: Any) -> str:
@@ -346,3 +350,89 @@ def test_bad_measurements_of_pairs_are_named() -> None:
     with pytest.raises(InvalidPlan) as caught:
         document(LEVELS, known={"sigma_a": 1.0, "sigma": 1.0})
     assert [fault.pointer for fault in caught.value.faults] == ["/known/sigma_b", "/known/sigma"]
+
+
+def measured(order: list[bool], seed: int) -> list[dict[str, Any]]:
+    values = np.random.default_rng(seed).normal(100.0, 0.35, len(order)).round(3)
+    return [{"arm": "b" if is_b else "a", "value": float(x)} for is_b, x in zip(order, values, strict=True)]
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.lists(st.booleans(), min_size=1, max_size=60), st.integers(0, 10**6), st.data())
+def test_arms_measured_in_any_order_and_split_decide_as_the_likelihood_does(
+    order: list[bool], seed: int, data: st.DataObject
+) -> None:
+    plan = document(SINGLES)
+    rows = measured(order, seed)
+    whole = posted(plan, rows)
+    limits = procedure_of_document(plan).thresholds
+    assert limits is not None
+    seen: list[tuple[bool, float]] = []
+    evidence, decision = 0.0, "continue"
+    for is_b, row in zip(order, rows, strict=True):
+        seen.append((is_b, row["value"]))
+        evidence = float(arms.evidence_of_measurements(seen, (0.0, 0.5), (0.3, 0.4)))
+        decision = "accept" if evidence <= limits.accept else "reject" if evidence >= limits.reject else "continue"
+        if decision != "continue":
+            break
+    assert (whole.decision, whole.sample_number) == (decision, len(seen))
+    assert whole.log_likelihood_ratio == pytest.approx(evidence, abs=1e-9)
+    cut = data.draw(st.integers(0, len(rows)))
+    state = State()
+    for piece in (rows[:cut], rows[cut:]):
+        state = observe(procedure_of_document(plan), state, {"observations": piece}, NOW) if piece else state
+    assert state == whole
+
+
+def test_one_at_a_time_comes_to_what_pairs_come_to() -> None:
+    pairs = [(100.0, 100.4), (99.8, 100.1), (100.3, 100.2)]
+    singles = [row for a, b in pairs for row in ({"arm": "a", "value": a}, {"arm": "b", "value": b})]
+    in_pairs, one_by_one = posted(document(LEVELS), of_pairs(pairs)), posted(document(SINGLES), singles)
+    assert one_by_one.log_likelihood_ratio == pytest.approx(in_pairs.log_likelihood_ratio, rel=1e-12)
+    assert (one_by_one.exposure.value, one_by_one.sample_number) == (3.0, 6)
+    assert (
+        promise_of(document(SINGLES), [0.1]).points[0].exposure
+        == promise_of(document(LEVELS), [0.1]).points[0].sample_number
+    )
+    assert promise_of(document(SINGLES), [0.1]).points[0].sample_number is None
+
+
+def test_one_arm_alone_says_nothing() -> None:
+    state = posted(document(SINGLES), [{"arm": "b", "value": 1e6}] * 9)
+    assert (state.decision, state.log_likelihood_ratio, state.sample_number, state.exposure.value) == (
+        "continue",
+        0.0,
+        9,
+        0.0,
+    )
+
+
+@pytest.mark.parametrize("order", [[], [True], [False], [False, True], [False, False, True], [True, True, False]])
+def test_the_way_of_single_measurements_leads_to_the_decision(order: list[bool]) -> None:
+    plan = document(SINGLES)
+    procedure = procedure_of_document(plan)
+    state = posted(plan, measured(order, 4)) if order else State()
+    ways = outlook_of(plan, state).ways
+    for way, decision in ((ways.accept, "accept"), (ways.reject, "reject")):
+        assert way is not None
+        if not order:
+            assert way.words.startswith("a pair whose b less a is")
+            assert way.observations == 2
+            continue
+        arm, value = way.words.split()[3], float(way.words.split()[-1])
+        towards = 1e-3 if "at least" in way.words else -1e-3
+        for step, reached in ((towards, decision), (-towards, "continue")):
+            after = observe(procedure, state, {"observations": [{"arm": arm, "value": value + step}]}, NOW)
+            assert after.decision == reached, way.words
+        assert way.exposure == pytest.approx(after.exposure.value - state.exposure.value)
+
+
+def test_an_arm_that_is_not_there_is_named() -> None:
+    plan = document(SINGLES)
+    assert refused(plan, {"observations": [{"arm": "c", "value": 1.0}]}) == ["/observations/0/arm"]
+    assert refused(plan, {"observations": [{"value": 1.0}]}) == ["/observations/0/arm"]
+    assert refused(plan, {"observations": [{"a": 1.0, "b": 2.0}]})[:1] == ["/observations/0/arm"]
+    assert refused(plan, {"values": [1.0]}) == ["/values"]
+    with pytest.raises(InvalidPlan) as caught:
+        document(SINGLES, truncation={"sample_number": 30})
+    assert "/truncation/exposure" in [fault.pointer for fault in caught.value.faults]

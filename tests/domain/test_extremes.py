@@ -35,6 +35,7 @@ def document(**content: Any) -> str:
         {"family": "normal", "h0": 0.0, "h1": 0.001, "known": {"sigma": 1.0}},
         {"family": "paired", "h0": 1.0, "h1": 1.000000000001},
         {"family": "paired", "h0": 1e-6, "h1": 2e-6},
+        {"family": "normal_two_sample", "h0": 0.0, "h1": 1e-3, "known": {"sigma_a": 1e-90, "sigma_b": 1.0}},
         {"family": "normal_difference", "h0": 0.0, "h1": 1e-3, "known": {"sigma_a": 1.0, "sigma_b": 1e-90}},
         {"family": "poisson_ratio", "h0": 1e3, "h1": 2e3, "known": {"exposure_ratio": 1e-9}},
     ],

@@ -4,13 +4,11 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from mpmath import mp, mpf
 
 from service.sequential import likelihood
 from service.sequential.double import Double, FloatArray, running_sum
-from service.sequential.two_samples import Arm, pairs_worth
-
-mp.dps = 60
+from service.sequential.two_samples import Arm, pairs_worth, reaching, variance_share
+from tests.sequential.reference import arms
 
 SIGMAS = st.sampled_from([(1.0, 1.0), (0.5, 2.0), (3.0, 0.01), (1e90, 3e90), (1e-90, 1e-90)])
 ORDERS = st.lists(st.booleans(), min_size=1, max_size=30)
@@ -26,16 +24,6 @@ def moments(values: FloatArray, is_b: FloatArray, sigmas: tuple[float, float]) -
     return pairs_worth(arm(values, 1.0 - is_b), arm(values, is_b), *sigmas)
 
 
-def slow_evidence(rows: list[tuple[bool, float]], means: tuple[float, float], sigmas: tuple[float, float]) -> mpf:
-    """Ln of the ratio of the likelihoods of everything measured, each at the level that suits its hypothesis best."""
-    best = []
-    for difference in means:
-        shifted = [(x - mpf(difference) if is_b else mpf(x), mpf(sigmas[is_b])) for is_b, x in rows]
-        level = sum(x / s**2 for x, s in shifted) / sum(1 / s**2 for _, s in shifted)
-        best.append(-sum(((x - level) / s) ** 2 for x, s in shifted) / 2)
-    return best[1] - best[0]
-
-
 @settings(max_examples=150, deadline=None)
 @given(ORDERS, SIGMAS, st.integers(0, 2**32 - 1), st.sampled_from([0.0, 1e6]))
 def test_the_evidence_is_that_of_all_measurements(
@@ -49,7 +37,7 @@ def test_the_evidence_is_that_of_all_measurements(
     ratio = likelihood.normal(*means, float(scale))
     zero = np.zeros(len(order))
     found = ratio.log(Double(progress, zero), Double(total, zero))
-    slow = slow_evidence(list(zip(order, values.tolist(), strict=True)), means, sigmas)
+    slow = arms.evidence_of_measurements(list(zip(order, values.tolist(), strict=True)), means, sigmas)
     size = abs(ratio.gain) * (abs(total[-1]) + abs(ratio.slope) * progress[-1])
     assert abs(found[-1] - float(slow)) <= 1e-12 * max(1.0, size)
 
@@ -84,3 +72,24 @@ def test_with_an_empty_arm_nothing_is_known() -> None:
     progress, total = moments(values, np.ones(3), (1.0, 2.0))
     assert not np.any(progress)
     assert not np.any(total)
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    count_a=st.integers(1, 30),
+    count_b=st.integers(1, 30),
+    in_b=st.booleans(),
+    sigmas=SIGMAS,
+    wanted=st.floats(-50.0, 50.0),
+)
+def test_a_measurement_brings_the_total_where_it_is_wanted(
+    *, count_a: int, count_b: int, in_b: bool, sigmas: tuple[float, float], wanted: float
+) -> None:
+    without = (12.5 * (count_a - (not in_b)), 11.75 * (count_b - in_b))
+    value = reaching(wanted, (count_a, count_b), without, variance_share(*sigmas), in_b=in_b)
+    sums = (without[0] + (not in_b) * value, without[1] + in_b * value)
+    a, b = (
+        Arm(np.array([float(count)]), Double(np.array([total]), np.zeros(1)))
+        for count, total in zip((count_a, count_b), sums, strict=True)
+    )
+    assert pairs_worth(a, b, *sigmas)[1][0] == pytest.approx(wanted, abs=1e-8)

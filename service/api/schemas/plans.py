@@ -24,6 +24,20 @@ CONTENT: dict[str, Any] = {
 
 EXAMPLE: dict[str, Any] = {"name": "seal-leak", **CONTENT}
 
+RISKS: dict[str, Any] = {"alpha": 0.05, "beta": 0.10}
+EXAMPLES: list[dict[str, Any]] = [
+    EXAMPLE,
+    {"name": "two-grips", "family": "paired", "h0": 1.0, "h1": 3.0, **RISKS},
+    {
+        "name": "two-lubricants",
+        "family": "poisson_ratio",
+        "h0": 1.0,
+        "h1": 0.5,
+        **RISKS,
+        "known": {"exposure_ratio": 2.0},
+    },
+    {"name": "own-model", "family": "score", **RISKS, "boundaries": "strict"},
+]
 
 STORED: dict[str, Any] = {
     **EXAMPLE,
@@ -97,7 +111,7 @@ class PlanContentForm(Form):
 class PlanForm(PlanContentForm):
     """A plan: what is promised before the first datum."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+    model_config = ConfigDict(json_schema_extra={"examples": [*EXAMPLES]})
 
     name: Name
 

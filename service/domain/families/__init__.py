@@ -5,6 +5,7 @@ from service.domain.families.bernoulli import Bernoulli
 from service.domain.families.exponential import Exponential
 from service.domain.families.normal import Normal
 from service.domain.families.normal_difference import NormalDifference
+from service.domain.families.normal_two_sample import NormalTwoSample
 from service.domain.families.paired import Paired
 from service.domain.families.poisson import Poisson
 from service.domain.families.poisson_ratio import PoissonRatio
@@ -18,6 +19,7 @@ _ALL: tuple[Family, ...] = (
     Paired(),
     PoissonRatio(),
     NormalDifference(),
+    NormalTwoSample(),
     Score(),
 )
 

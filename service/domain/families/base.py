@@ -109,6 +109,7 @@ class Family(ABC):
         optional: Fields that an observation may carry beside it, with the value taken where one is absent.
         required: Fields that an observation object must carry beside it.
         in_values: What the required fields are for a bare number in `values`; where one is missing there are no such.
+        words: Fields that are words, with the number that stands for each.
         known: Names of what the family needs to know beforehand.
         span: The totals it can show.
         has_exposure: The region runs over exposure rather than units.
@@ -125,6 +126,7 @@ class Family(ABC):
     optional: ClassVar[Mapping[str, float]] = {}
     required: ClassVar[tuple[str, ...]] = ()
     in_values: ClassVar[Mapping[str, float]] = {}
+    words: ClassVar[Mapping[str, Mapping[str, float]]] = {}
     known: ClassVar[tuple[str, ...]] = ()
     span: ClassVar[Span]
     has_exposure: ClassVar[bool] = False
@@ -209,8 +211,13 @@ class Family(ABC):
         return self.span.is_integer and not self.is_watched_in_time
 
     @property
+    def has_figures_of_units(self) -> bool:
+        """True where exact figures of the progress are figures of the sample number as well."""
+        return not self.is_watched_in_time
+
+    @property
     def fields(self) -> tuple[str, ...]:
-        """The numeric fields of an observation, its result first."""
+        """The fields of an observation that say what was observed, its result first."""
         return (self.value_field, *self.required, *self.optional)
 
     def read(self, document: Document) -> Increments:
@@ -240,11 +247,24 @@ class Family(ABC):
         self._check_fields(observations)
         return {
             field: Column(
-                _array([o.get(field, self.optional.get(field)) for o in observations]),
+                self._numbers(field, observations),
                 lambda i, field=field: f"/observations/{i}/{field}",  # type: ignore[misc]
             )
             for field in self.fields
         }
+
+    def _numbers(self, field: str, observations: Sequence[Document]) -> FloatArray:
+        """One field of all observations as numbers."""
+        if field not in self.words:
+            return _array([o.get(field, self.optional.get(field)) for o in observations])
+        number_of = self.words[field]
+        faults = [
+            Fault(f"/observations/{i}/{field}", f"must be one of {', '.join(number_of)}; received {o[field]!r}")
+            for i, o in enumerate(observations)
+            if o[field] not in number_of
+        ]
+        refuse(faults)
+        return np.array([number_of[o[field]] for o in observations])
 
     def _check_fields(self, observations: Sequence[Document]) -> None:
         """Every required field is there, and none that means nothing in this family."""

@@ -22,8 +22,7 @@ class NormalDifference(Normal):
     """
     One observation is a measurement in each arm; the differences b - a are measurements of one normal distribution.
 
-    The total is the sum of the differences. Measurements of one arm at a time are weighed by
-    `sequential.two_samples.pairs_worth`, for the same region.
+    The total is the sum of the differences.
     """
 
     name: ClassVar[str] = "normal_difference"

@@ -57,5 +57,17 @@ def evidence_of_differences(
     return evidence
 
 
+def evidence_of_measurements(
+    rows: list[tuple[bool, float]], means: tuple[float, float], sigmas: tuple[float, float]
+) -> mpf:
+    """Ln of the ratio of the likelihoods of everything measured, each at the level that suits its hypothesis best."""
+    best = []
+    for difference in means:
+        shifted = [(x - mpf(difference) if is_b else mpf(x), mpf(sigmas[is_b])) for is_b, x in rows]
+        level = sum(x / s**2 for x, s in shifted) / sum(1 / s**2 for _, s in shifted)
+        best.append(-sum(((x - level) / s) ** 2 for x, s in shifted) / 2)
+    return best[1] - best[0]
+
+
 def _poisson(count: int, mean: mpf) -> mpf:
     return exp(-mean) * mean**count / factorial(count)
