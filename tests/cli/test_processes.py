@@ -10,6 +10,7 @@ from pathlib import Path
 
 import httpx
 import pytest
+from scipy.stats import binom
 from sqlalchemy import create_engine, text
 
 from tests.api.examples import PUMP, SEAL, SHAFT, Namer, with_test
@@ -226,14 +227,26 @@ def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
 
 
 def test_two_arms_are_designed_with_what_they_need_to_know(tmp_path: Path) -> None:
-    """Odds of 2 and 1 in b: chances of 2/3 and 1/2, whose fixed sample is that of these proportions."""
-    url, risks = f"sqlite:///{tmp_path / 'none.sqlite3'}", ["--alpha", "0.05", "--beta", "0.1"]
-    ratio = ["--family", "poisson_ratio", "--h0", "1", "--h1", "0.5", "--known", "exposure_ratio=2"]
-    arms = command("design", *ratio, *risks, database_url=url)
-    plain = command("design", "--h0", "0.6666666666666666", "--h1", "0.5", *risks, database_url=url)
-    wanted = "Smallest fixed sample with the same risks: 79 units, accept at least 46."
-    assert wanted in arms.stdout
-    assert wanted in plain.stdout
+    """With twice the exposure, ratios of 1 and 1/2 are chances of 2/3 and 1/2 that an event is in b."""
+    asked = [
+        "--family",
+        "poisson_ratio",
+        "--h0",
+        "1",
+        "--h1",
+        "0.5",
+        "--known",
+        "exposure_ratio=2",
+        "--alpha",
+        "0.05",
+        "--beta",
+        "0.1",
+    ]
+    done = command("design", *asked, database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}")
+    assert "Smallest fixed sample with the same risks: 79 units, accept at least 46." in done.stdout, done.stderr
+    assert binom.cdf(45, 79, 2 / 3) <= 0.05
+    assert binom.sf(45, 79, 1 / 2) <= 0.10
+    assert all(binom.cdf(k - 1, 78, 2 / 3) > 0.05 or binom.sf(k - 1, 78, 1 / 2) > 0.10 for k in range(79))
 
 
 @pytest.mark.parametrize(
