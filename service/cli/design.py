@@ -19,14 +19,15 @@ MOST_COLUMNS, SHOWN = 4, 6
 
 
 def design(
-    family: Annotated[
-        str | None, typer.Option(help="bernoulli (where none is given), poisson, exponential or normal.")
-    ] = None,
+    family: Annotated[str | None, typer.Option(help="bernoulli (where none is given), or another family.")] = None,
     h0: Annotated[float | None, typer.Option(help="Parameter under H0.")] = None,
     h1: Annotated[float | None, typer.Option(help="Parameter under H1.")] = None,
     alpha: Annotated[float | None, typer.Option(help="Producer's risk: P(reject) when H0 is true.")] = None,
     beta: Annotated[float | None, typer.Option(help="Consumer's risk: P(accept) when H1 is true.")] = None,
     sigma: Annotated[float | None, typer.Option(help="Known standard deviation, for normal.")] = None,
+    known: Annotated[
+        list[str] | None, typer.Option(help="What else the family needs to know: exposure_ratio=2; more than once.")
+    ] = None,
     boundaries: Annotated[
         list[str] | None, typer.Option(help="wald, strict or calibrated; more than once to compare.")
     ] = None,
@@ -48,7 +49,7 @@ def design(
     from service.domain.errors import Invalid
 
     own: dict[str, Any] = {"h0": h0, "h1": h1, "alpha": alpha, "beta": beta}
-    own["known"] = None if sigma is None else {"sigma": sigma}
+    own["known"] = _known(sigma, known or []) or None
     own = {name: value for name, value in own.items() if value is not None}
     asked_of_own = {"--family": family, "--boundaries": boundaries, "--truncation": truncation, "--suggest": suggest}
     idle = [option for option, value in asked_of_own.items() if value is not None and standard and not own]
@@ -68,6 +69,18 @@ def design(
     except Invalid as error:
         faults = "".join(f"\n  {_option(fault.pointer)}: {fault.detail}" for fault in error.faults)
         raise fail(f"{error}{faults}") from None
+
+
+def _known(sigma: float | None, others: list[str]) -> dict[str, float]:
+    """What the family needs to know beforehand, by name."""
+    found = {} if sigma is None else {"sigma": sigma}
+    for text in others:
+        name, _, value = text.partition("=")
+        try:
+            found[name] = float(value)
+        except ValueError:
+            raise fail(f"--known must have the form name=number; received {text!r}") from None
+    return found
 
 
 def _standard(name: str | None, scale: float | None) -> dict[str, Any]:
@@ -213,5 +226,7 @@ def _limit(fixed: Any) -> str:  # noqa: ANN401 - a value of the domain, which is
 def _option(pointer: str) -> str:
     """The option that a pointer into a plan's body stands for."""
     parts = [part for part in pointer.split("/") if part and not part.isdigit() and part != "candidates"]
-    names = {"known": "sigma", "suggest_truncation": "suggest"}
+    if parts[:1] == ["known"]:
+        return "--sigma" if parts[1:] == ["sigma"] else f"--known {parts[-1]}"
+    names = {"suggest_truncation": "suggest"}
     return f"--{names.get(parts[0], parts[0])}" if parts else "plan"

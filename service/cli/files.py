@@ -14,8 +14,8 @@ from dataclasses import dataclass
 from itertools import islice
 from typing import Any
 
-FIELDS = ("value", "time", "exposure", "size", "failed", "unit", "observed_at")
-NUMBERS = ("value", "time", "exposure", "size")
+NUMBERS = ("value", "time", "exposure", "size", "a", "b")
+FIELDS = (*NUMBERS, "arm", "failed", "unit", "observed_at")
 # Python reads more as a number than a file should hold: 1_0, nan, digits of other scripts.
 NUMBER = re.compile(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?")
 WHOLE = re.compile(r"[+-]?[0-9]+")

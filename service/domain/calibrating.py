@@ -179,12 +179,13 @@ def around(procedure: Procedure) -> tuple[float, float]:
     """Two parameters between and around which all that matters happens: the hypotheses, or so far from the only one."""
     hypotheses, region, family = procedure.hypotheses, procedure.region, procedure.family
     if len(hypotheses) > 1 or not isinstance(region, CurvedRegion) or region.wall is None:
-        return min(hypotheses), max(hypotheses)
+        return min(hypotheses, default=math.nan), max(hypotheses, default=math.nan)
     at_wall = np.array([region.wall.progress])
     away = DEVIATIONS * float(region.evidence.deviation(at_wall)[0]) / region.wall.progress
-    edge = family.mean_of(hypotheses[0])
+    edge = family.mean_of(hypotheses[0], procedure.known)
     low = edge - away if math.isinf(family.span.floor) else max(edge - away, NEAREST * edge)
-    ends = family.parameter_of(low), family.parameter_of(min(edge + away, family.span.per_progress))
+    high = min(edge + away, family.span.per_progress)
+    ends = family.parameter_of(low, procedure.known), family.parameter_of(high, procedure.known)
     return min(ends), max(ends)
 
 

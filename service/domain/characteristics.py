@@ -60,8 +60,9 @@ class Point:
     The figures at one true parameter.
 
     `wald` and `siegmund` are None where the plan is truncated; `siegmund` also where steps are not normal.
-    `sample_number` is None where reports have no fixed size (families watched in time); `exposure` is None for families
-    without exposure. `failures` is the mean number of failures for families watched in time.
+    `sample_number` is None where reports have no fixed size (families watched in time, arms measured one at a time);
+    `exposure` is None for families without exposure. `failures` is the mean number of failures for families watched in
+    time.
     """
 
     parameter: float
@@ -103,7 +104,7 @@ def promise_of(document: str, at: Sequence[float]) -> Promise:
         at: True parameters.
 
     Raises:
-        InvalidQuestion: Too many parameters, or one outside the family's range.
+        InvalidQuestion: Too many parameters, one outside the family's range, or a family without a model.
         ComputationTooLarge: The recursion would not end within its limit.
     """
     procedure = procedure_of_document(document)
@@ -139,7 +140,7 @@ def _point(procedure: Procedure, found: Characteristics, i: int, parameter: floa
     return Point(
         parameter=parameter,
         probability_of_acceptance=accepts_at(procedure, found, i),
-        sample_number=None if family.is_watched_in_time else ends,
+        sample_number=ends if family.has_figures_of_units else None,
         exposure=ends if family.has_exposure else None,
         failures=ends.mean / parameter if family.is_watched_in_time else None,
         wald=_approximate(procedure, parameter, 0.0),

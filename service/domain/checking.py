@@ -17,6 +17,7 @@ from service.domain.plan import Content, canonical, known_of, rounded
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.statistics import STATISTICS, faults_of_statistic
 from service.domain.tables import faults_of_table
+from service.sequential import boundaries
 from service.sequential.boundaries import Thresholds
 from service.sequential.curved import CurvedRegion
 from service.sequential.decision import Decision
@@ -24,7 +25,9 @@ from service.sequential.errors import OutOfRange
 from service.sequential.region import StraightRegion
 
 LARGEST_SAMPLE_NUMBER = 1_000_000_000
-REQUIRED = ("family", "h0", "alpha")
+HYPOTHESES = ("h0", "h1")
+# Boundary rules that need no model of the observations.
+FOR_EVERY_MODEL = ("strict", "given")
 DEFAULTS = {"statistic": "simple"}
 
 
@@ -40,7 +43,7 @@ def checked_content(given: Content) -> str:
         ComputationTooLarge: The boundaries cannot be calibrated within the limit of work.
     """
     content = _with_defaults(given)
-    missing = [Fault(f"/{name}", "is required") for name in REQUIRED if name not in content]
+    missing = [Fault(f"/{name}", "is required") for name in _required(content) if name not in content]
     if missing or (faults := _faults_of(content)):
         raise InvalidPlan(missing or faults)
     try:
@@ -88,6 +91,8 @@ def _with_defaults(given: Content) -> Content:
 def _completed(content: Content) -> dict[str, Any]:
     """With what is computed from it once and for all."""
     completed = dict(content)
+    if not FAMILIES[content["family"]].has_model:
+        return {**completed, **_bounded(content)}
     if content["boundaries"] == "calibrated":
         completed["thresholds"] = _rounded(calibrated(content))
     is_simple = STATISTICS[content["statistic"]].is_simple
@@ -115,6 +120,21 @@ def _worst(procedure: Procedure) -> dict[str, float | None]:
     return {name: None if value is None else rounded(value) for name, value in asdict(worst_of(procedure)).items()}
 
 
+def _bounded(content: Content) -> dict[str, Any]:
+    """The bounds of the risks that hold for every model; a forced decision has none."""
+    thresholds = procedure_of_document(canonical(content)).thresholds
+    if thresholds is None or "truncation" in content:
+        return {}
+    alpha, beta = boundaries.guaranteed(thresholds)
+    return {"attained": {"alpha": rounded(alpha), "beta": rounded(beta)}}
+
+
+def _required(content: Content) -> tuple[str, ...]:
+    family = FAMILIES.get(content.get("family", ""))
+    has_model = family is None or family.has_model
+    return ("family", "h0", "alpha") if has_model else ("family", "alpha")
+
+
 def _faults_of(content: Content) -> list[Fault]:
     family = FAMILIES.get(content["family"])
     if family is None:
@@ -127,6 +147,7 @@ def _faults_of(content: Content) -> list[Fault]:
         *_faults_of_hypotheses(family, content),
         *_faults_of_risks(content),
         *_faults_of_boundaries(content),
+        *_faults_of_model(family, content),
         *_faults_of_known(family, known_of(content)),
         *_faults_of_truncation(family, content.get("truncation")),
         *_faults_of_rows(family, content),
@@ -134,9 +155,12 @@ def _faults_of(content: Content) -> list[Fault]:
 
 
 def _faults_of_hypotheses(family: Family, content: Content) -> list[Fault]:
+    if not family.has_model:
+        reason = f"means nothing for {family.name}: its increments hold both hypotheses"
+        return [Fault(f"/{name}", reason) for name in HYPOTHESES if name in content]
     faults = [
         Fault(f"/{name}", f"{rule}: it is a {family.parameter}; received {content[name]!r}")
-        for name in ("h0", "h1")
+        for name in HYPOTHESES
         if name in content and (rule := family.hypothesis_rule(content[name])) is not None
     ]
     if STATISTICS[content["statistic"]].is_simple and content["h0"] == content["h1"]:
@@ -183,6 +207,15 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
     return faults
 
 
+def _faults_of_model(family: Family, content: Content) -> list[Fault]:
+    """Without a model only what holds for every model is promised."""
+    rule = content["boundaries"]
+    if family.has_model or rule in FOR_EVERY_MODEL or rule not in STATISTICS[content["statistic"]].boundaries:
+        return []
+    reason = "other rules promise risks that only a model of the observations can give"
+    return [Fault("/boundaries", f"must be strict or given for {family.name}: {reason}; received {rule!r}")]
+
+
 def _faults_of_known(family: Family, known: Mapping[str, float]) -> list[Fault]:
     faults = [Fault(f"/known/{name}", f"is required for {family.name}") for name in family.known if name not in known]
     for name, value in known.items():
@@ -213,7 +246,7 @@ def _faults_of_truncation(family: Family, truncation: Mapping[str, float] | None
 
 
 def _faults_of_rows(family: Family, content: Content) -> list[Fault]:
-    if content["boundaries"] != "table":
+    if content["boundaries"] != "table" or not family.has_model:
         return []
     if content.get("truncation") is not None:
         return [Fault("/truncation", "means nothing beside a table: its last row is the end")]

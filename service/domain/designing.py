@@ -60,7 +60,7 @@ def suggested_truncation(content: Content, inflation: float) -> Suggestion:
 
     Raises:
         InvalidPlan: The plan has faults.
-        InvalidQuestion: The inflation is out of range, or the plan is a table.
+        InvalidQuestion: The inflation is out of range, the plan is a table, or its family has no model.
         ComputationTooLarge: No truncation was found within the limit of work.
     """
     if not 0.0 < inflation <= LARGEST_INFLATION:
@@ -72,6 +72,10 @@ def suggested_truncation(content: Content, inflation: float) -> Suggestion:
     if "table" in content or "standard" in content:
         fault = Fault("/suggest_truncation", "means nothing for a table: its last row is the end")
         raise InvalidQuestion("A table has its own truncation.", [fault])
+    family = FAMILIES.get(content.get("family", ""))
+    if family is not None and not family.has_model:
+        rule = f"means nothing for {family.name}: without a model no truncation can be weighed"
+        raise InvalidQuestion("A truncation is weighed by exact figures.", [Fault("/suggest_truncation", rule)])
     return _Search(content, inflation).run()
 
 

@@ -17,14 +17,14 @@ class LoggedObservation:
 
     Attributes:
         sequence: Its number within the test, from 1.
-        fields: The family's numeric fields by name.
+        fields: The family's own fields by name.
         unit: Serial number of the unit, where one was given.
         observed_at: When it was observed, as the caller wrote it.
         is_counted: False for overrun.
     """
 
     sequence: int
-    fields: Mapping[str, float | bool]
+    fields: Mapping[str, float | bool | str]
     unit: str | None
     observed_at: str | None
     received_at: datetime

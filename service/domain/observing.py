@@ -119,7 +119,7 @@ def direction_of_rejection(procedure: Procedure, state: State) -> str | None:
     """Of a two-sided plan's rejection: on which side of h0 the parameter lies; None for others."""
     if not procedure.is_two_sided or state.decision is not Decision.REJECT:
         return None
-    h0, estimate = procedure.hypotheses[0], procedure.family.estimate(standing_of(procedure, state))
+    h0, estimate = procedure.hypotheses[0], procedure.family.estimate(standing_of(procedure, state), procedure.known)
     return ABOVE if estimate is None or estimate > h0 else BELOW
 
 
@@ -169,7 +169,8 @@ def _check_rows(procedure: Procedure, state: State, walk: Walk) -> None:
         i = int(passed[0])
         where = f"{next_row[i] - begins[i]:.0f} units lead to sample number {next_row[i]:.0f}"
         rule = f"a group may not pass over a row of the table: {where}"
-        raise InvalidObservations([Fault(f"/observations/{i}/size", rule)])
+        field = "/size" if "size" in procedure.family.fields else ""
+        raise InvalidObservations([Fault(f"/observations/{i}{field}", rule)])
 
 
 def _check_size(procedure: Procedure, progress: FloatArray, total: FloatArray) -> None:

@@ -61,7 +61,7 @@ class Outlook:
     Attributes:
         estimate: Maximum likelihood from the observations so far, None where there is none.
         room: None where the plan is not truncated, or the test is decided.
-        expected: Empty once the test is decided, and where the plan may go on for ever.
+        expected: Empty once the test is decided, where the plan may go on for ever, and where the family has no model.
     """
 
     ways: Ways
@@ -93,16 +93,16 @@ def outlook_of(document: str, state: State) -> Outlook:
     procedure = procedure_of_document(document)
     standing = standing_of(procedure, state)
     if state.is_decided:
-        return Outlook(NO_WAYS, procedure.family.estimate(standing), None, (), 0.0)
+        return Outlook(NO_WAYS, procedure.family.estimate(standing, procedure.known), None, (), 0.0)
     return _outlook(document, standing)
 
 
 @lru_cache(maxsize=4096)
 def _outlook(document: str, standing: Start) -> Outlook:
     procedure = procedure_of_document(document)
-    estimate = procedure.family.estimate(standing)
-    if procedure.may_go_on_for_ever:
-        return Outlook(_ways(procedure, standing), estimate, None, (), 0.0)
+    estimate = procedure.family.estimate(standing, procedure.known)
+    if procedure.may_go_on_for_ever or not procedure.family.has_model:
+        return Outlook(_ways(procedure, standing), estimate, _room(procedure, standing), (), 0.0)
     asked = dict(zip(("h0", "h1"), procedure.hypotheses, strict=False))
     if estimate is not None:
         asked["estimate"] = estimate
@@ -113,7 +113,7 @@ def _outlook(document: str, standing: Start) -> Outlook:
             parameter=parameter,
             probability_of_acceptance=accepts_at(procedure, found, i),
             probability_of_rejection=rejects_at(procedure, found, i),
-            further_sample_number=None if procedure.family.is_watched_in_time else spread_at(found, i),
+            further_sample_number=spread_at(found, i) if procedure.family.has_figures_of_units else None,
             further_exposure=spread_at(found, i) if procedure.family.has_exposure else None,
         )
         for i, (under, parameter) in enumerate(asked.items())

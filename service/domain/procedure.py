@@ -31,7 +31,7 @@ class Procedure:
     Attributes:
         thresholds: None where the limits are not of the log-likelihood ratio but a table's. `accept` is minus infinity
             where nothing accepts before the truncation.
-        hypotheses: h0, and h1 where the plan states one apart from it.
+        hypotheses: h0, and h1 where the plan states one apart from it; none where the family has no model.
         risks: alpha, and beta where the plan states one.
     """
 

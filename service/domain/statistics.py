@@ -67,7 +67,9 @@ SPECIAL = ("h1", "beta", "sides", "direction")
 
 
 def hypotheses_of(content: Content) -> tuple[float, ...]:
-    """The values that the plan states: h0, and h1 where it lies apart from h0."""
+    """The values that the plan states: h0, and h1 where it lies apart from h0; none where the family has no model."""
+    if "h0" not in content:
+        return ()
     h0, h1 = content["h0"], content.get("h1")
     return (h0,) if h1 is None or h1 == h0 else (h0, h1)
 
@@ -78,7 +80,8 @@ def faults_of_statistic(family: Family, content: Content) -> list[Fault]:
     if statistic is None:
         return [Fault("/statistic", f"must be one of {', '.join(STATISTICS)}; received {content['statistic']!r}")]
     allowed = (*statistic.required, *statistic.optional)
-    faults = [Fault(f"/{name}", "is required") for name in statistic.required if name not in content]
+    required = [name for name in statistic.required if family.has_model or name != "h1"]
+    faults = [Fault(f"/{name}", "is required") for name in required if name not in content]
     faults += [
         Fault(f"/{name}", f"means nothing for a {statistic.name} plan")
         for name in SPECIAL
@@ -99,16 +102,17 @@ def evidence_of(family: Family, content: Content) -> LikelihoodRatio | Evidence:
     """
     known, hypotheses = known_of(content), hypotheses_of(content)
     if content["statistic"] == "simple":
-        return family.likelihood_ratio(content["h0"], content["h1"], known)
+        # A family without a model does not look at hypotheses, and its plans have none.
+        return family.likelihood_ratio(content.get("h0", math.nan), content.get("h1", math.nan), known)
     direction = direction_of(family, content)
-    edge = family.mean_of(content["h0"])
+    edge = family.mean_of(content["h0"], known)
     if content["statistic"] == "mixture":
         return family.mixture(edge, direction, known, prior_of(content) or {})
     deviance = family.deviance(known)
     if direction == 0:
         return generalised.TwoSided(deviance, edge)
     ratio = family.likelihood_ratio(hypotheses[0], hypotheses[1], known) if len(hypotheses) > 1 else None
-    return generalised.OneSided(deviance, edge, family.mean_of(hypotheses[-1]), ratio, direction > 0)
+    return generalised.OneSided(deviance, edge, family.mean_of(hypotheses[-1], known), ratio, direction > 0)
 
 
 def direction_of(family: Family, content: Content) -> int:

@@ -11,6 +11,9 @@ collectif, for the bound behind `strict`.
 import math
 from dataclasses import dataclass
 
+# A bound that would round to zero is given as this.
+SMALLEST = 1e-300
+
 
 @dataclass(frozen=True)
 class Thresholds:
@@ -47,3 +50,15 @@ def strict(alpha: float, beta: float) -> Thresholds:
     Source: Ville (1939).
     """
     return Thresholds(math.log(beta), -math.log(alpha))
+
+
+def guaranteed(thresholds: Thresholds) -> tuple[float, float]:
+    """
+    Bounds of P0(reject) and P1(accept) that hold for every model and however the last step overshoots.
+
+    The first needs no more than that the likelihood ratio is a supermartingale under H0, the second the same of its
+    inverse under H1. No decision may be forced.
+
+    Source: Ville (1939).
+    """
+    return max(SMALLEST, math.exp(-thresholds.reject)), max(SMALLEST, math.exp(thresholds.accept))

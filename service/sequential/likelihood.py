@@ -66,6 +66,21 @@ def bernoulli(p0: float, p1: float) -> LikelihoodRatio:
     return _ratio(_log_quotient(p1, p0) + cumulant, cumulant)
 
 
+def odds(odds0: float, odds1: float) -> LikelihoodRatio:
+    """
+    Odds u0 and u1 of one outcome against the other, both above 0; total = units with the outcome, progress = units.
+
+    Raises:
+        OutOfRange: The odds are too close to tell apart in floating point.
+
+    Source: Wald (1947), Sequential Analysis, chapter 6: ln(u1/u0) for an outcome, and
+    ln((1 + u0)/(1 + u1)) for every unit.
+    """
+    is_close = 0.5 <= (1.0 + odds1) / (1.0 + odds0) <= 2.0
+    cumulant = math.log1p((odds1 - odds0) / (1.0 + odds0)) if is_close else math.log1p(odds1) - math.log1p(odds0)
+    return _ratio(_log_quotient(odds1, odds0), cumulant)
+
+
 def poisson(rate0: float, rate1: float) -> LikelihoodRatio:
     """
     Rates per unit of exposure, both above 0; total = count, progress = exposure.
@@ -103,6 +118,11 @@ def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
     middle = two_sum(Double.of(mean0 / 2.0).high, Double.of(mean1 / 2.0).high)
     gain = (mean1 - mean0) / sigma / sigma
     return _checked(LikelihoodRatio(gain, float(middle.high), float(middle.low)))
+
+
+def summed() -> LikelihoodRatio:
+    """The evidence where the total is itself the sum of log-likelihood ratios, worked out elsewhere."""
+    return LikelihoodRatio(gain=1.0, slope=0.0)
 
 
 def _log_quotient(a: float, b: float) -> float:

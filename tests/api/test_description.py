@@ -45,6 +45,11 @@ def test_every_body_has_an_example(description: dict) -> None:  # type: ignore[t
             assert schemas[reference.rpartition("/")[2]]["examples"], name
 
 
+def test_every_plan_that_is_shown_can_be_made(admin: httpx.Client) -> None:
+    for plan in plans.EXAMPLES:
+        assert admin.post("/v1/plans", json={**plan, "name": f"shown-{plan['name']}"}).status_code == 201
+
+
 def test_every_problem_has_an_example(description: dict) -> None:  # type: ignore[type-arg]
     shown = {
         example

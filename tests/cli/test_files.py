@@ -18,6 +18,16 @@ def test_numbers_of_csv_are_plain_ones() -> None:
     assert [row.observation["value"] for row in rows] == [7, 7, -7.5, 0.5, 7.0, 1000.0]
 
 
+def test_a_row_of_two_arms_is_a_pair() -> None:
+    rows = list(read_csv(["a,b,unit\n", "0,1,p-7\n", "10.5,-3,\n"]))
+    assert [row.observation for row in rows] == [{"a": 0, "b": 1, "unit": "p-7"}, {"a": 10.5, "b": -3}]
+
+
+def test_a_row_of_one_arm_names_it() -> None:
+    (row,) = read_csv(["arm,value\n", "b, 10.5\n"])
+    assert row.observation == {"arm": "b", "value": 10.5}
+
+
 def test_ndjson_takes_objects_and_bare_numbers() -> None:
     assert list(read_ndjson(['{"value": 1}\n', "\n", "0\n"], "value")) == [
         Numbered(1, {"value": 1}),

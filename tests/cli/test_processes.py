@@ -10,6 +10,7 @@ from pathlib import Path
 
 import httpx
 import pytest
+from scipy.stats import binom
 from sqlalchemy import create_engine, text
 
 from tests.api.examples import PUMP, SEAL, SHAFT, Namer, with_test
@@ -225,6 +226,29 @@ def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
     assert not (tmp_path / "none.sqlite3").exists()
 
 
+def test_two_arms_are_designed_with_what_they_need_to_know(tmp_path: Path) -> None:
+    """With twice the exposure, ratios of 1 and 1/2 are chances of 2/3 and 1/2 that an event is in b."""
+    asked = [
+        "--family",
+        "poisson_ratio",
+        "--h0",
+        "1",
+        "--h1",
+        "0.5",
+        "--known",
+        "exposure_ratio=2",
+        "--alpha",
+        "0.05",
+        "--beta",
+        "0.1",
+    ]
+    done = command("design", *asked, database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}")
+    assert "Smallest fixed sample with the same risks: 79 units, accept at least 46." in done.stdout, done.stderr
+    assert binom.cdf(45, 79, 2 / 3) <= 0.05
+    assert binom.sf(45, 79, 1 / 2) <= 0.10
+    assert all(binom.cdf(k - 1, 78, 2 / 3) > 0.05 or binom.sf(k - 1, 78, 1 / 2) > 0.10 for k in range(79))
+
+
 @pytest.mark.parametrize(
     ("arguments", "said"),
     [
@@ -233,6 +257,12 @@ def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
         (["--standard", "MIL-HDBK-781A/III-D"], "--scale: is required"),
         (["--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1", "--truncation", "x"], "--truncation"),
         (["--family", "normal", "--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1"], "--sigma"),
+        (
+            ["--family", "poisson_ratio", "--h0", "1", "--h1", "2", "--alpha", "0.1", "--beta", "0.1"],
+            "--known exposure",
+        ),
+        (["--family", "score", "--alpha", "0.1", "--beta", "0.1", "--boundaries", "strict"], "no exact figures"),
+        (["--h0", "0.1", "--known", "share"], "name=number"),
         (["--h0", "1e-6", "--h1", "1.1e-6", "--alpha", "0.1", "--beta", "0.1"], "would need more than"),
     ],
 )

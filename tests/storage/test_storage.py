@@ -184,23 +184,25 @@ def test_the_view_shows_each_observation_of_the_log(engine: Engine) -> None:
     add(engine, test)
     objects = (
         '{"observations": [{"value": 2, "size": 50, "unit": "u 1", "observed_at": "2031-05-04T09:30:00Z"}, '
-        '{"time": 1.5, "failed": true}, {"value": 0, "exposure": 2.25}]}'
+        '{"time": 1.5, "failed": true}, {"value": 0, "exposure": 2.25}, {"a": 1, "b": 4.5}, {"arm": "b", "value": 3}]}'
     )
     with writing(engine) as writer:
         writer.append(a_submission("lot-1", 1, 2, '{"values": [0, 1.5]}'), {})
-        writer.append(a_submission("lot-1", 3, 5, objects), {})
+        writer.append(a_submission("lot-1", 3, 7, objects), {})
     query = text(
-        "SELECT sequence, value, exposure, size, failed, unit, observed_at, actor, counted FROM observations "
-        "WHERE test = 'lot-1' ORDER BY sequence"
+        "SELECT sequence, value, exposure, size, failed, unit, observed_at, actor, counted, a, b, arm "
+        "FROM observations WHERE test = 'lot-1' ORDER BY sequence"
     )
     with engine.connect() as connection:
         rows = [tuple(row) for row in connection.execute(query)]
     assert rows == [
-        (1, 0, None, None, None, None, None, "me", True),
-        (2, 1.5, None, None, None, None, None, "me", True),
-        (3, 2, None, 50, None, "u 1", "2031-05-04T09:30:00Z", "me", True),
-        (4, 1.5, None, None, True, None, None, "me", False),
-        (5, 0, 2.25, None, None, None, None, "me", False),
+        (1, 0, None, None, None, None, None, "me", True, None, None, None),
+        (2, 1.5, None, None, None, None, None, "me", True, None, None, None),
+        (3, 2, None, 50, None, "u 1", "2031-05-04T09:30:00Z", "me", True, None, None, None),
+        (4, 1.5, None, None, True, None, None, "me", False, None, None, None),
+        (5, 0, 2.25, None, None, None, None, "me", False, None, None, None),
+        (6, None, None, None, None, None, None, "me", False, 1, 4.5, None),
+        (7, 3, None, None, None, None, None, "me", False, None, None, "b"),
     ]
 
 

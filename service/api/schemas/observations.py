@@ -2,7 +2,7 @@
 
 from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
-from typing import Annotated, Any, Self
+from typing import Annotated, Any, Literal, Self
 
 from pydantic import ConfigDict, FailFast, Field, StrictBool, StringConstraints, model_validator
 
@@ -20,6 +20,8 @@ EXAMPLES: list[dict[str, Any]] = [
     {"values": [0, 0, 1]},
     {"observations": [{"value": 2, "size": 50, "unit": "tray-7", "observed_at": "2031-05-04T09:30:00Z"}]},
     {"observations": [{"time": 41.5, "failed": True}, {"time": 200.0, "failed": False}]},
+    {"observations": [{"a": 0, "b": 1}, {"a": 1, "b": 1}]},
+    {"observations": [{"arm": "a", "value": 10.1}, {"arm": "b", "value": 10.4}]},
 ]
 
 
@@ -76,6 +78,11 @@ class ObservationForm(Form):
     time: Number = Field(default_factory=float, description="Unit-time since the report before (exponential).")
     exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
+    a: Number = Field(default_factory=float, description="Result in arm a, of families that compare two arms.")
+    b: Number = Field(default_factory=float, description="Result in arm b.")
+    arm: Literal["a", "b"] = Field(
+        default="a", description="Whose result it is, where arms are measured one at a time."
+    )
     failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
     unit: Unit = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: Moment = Field(
@@ -119,6 +126,9 @@ class LoggedOut(Answer):
     time: int | float | None = None
     exposure: int | float | None = None
     size: int | float | None = None
+    a: int | float | None = None
+    b: int | float | None = None
+    arm: str | None = None
     failed: bool | None = None
     unit: str | None
     observed_at: str | None

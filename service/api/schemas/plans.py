@@ -8,6 +8,7 @@ from pydantic import ConfigDict, Field, field_validator
 
 from service.api.schemas.common import Answer, Form, Name, Number, Text, Whole, optional, shown_as
 from service.domain.calibrating import Attained
+from service.domain.families import FAMILIES
 from service.domain.plan import Plan
 from service.domain.procedure import lines_of, procedure_of
 from service.domain.standards import Standard, source_of
@@ -24,6 +25,20 @@ CONTENT: dict[str, Any] = {
 
 EXAMPLE: dict[str, Any] = {"name": "seal-leak", **CONTENT}
 
+RISKS: dict[str, Any] = {"alpha": 0.05, "beta": 0.10}
+EXAMPLES: list[dict[str, Any]] = [
+    EXAMPLE,
+    {"name": "two-grips", "family": "paired", "h0": 1.0, "h1": 3.0, **RISKS},
+    {
+        "name": "two-lubricants",
+        "family": "poisson_ratio",
+        "h0": 1.0,
+        "h1": 0.5,
+        **RISKS,
+        "known": {"exposure_ratio": 2.0},
+    },
+    {"name": "own-model", "family": "score", **RISKS, "boundaries": "strict"},
+]
 
 STORED: dict[str, Any] = {
     **EXAMPLE,
@@ -45,7 +60,19 @@ STORED: dict[str, Any] = {
 }
 
 # Members of a stored plan that not every plan has.
-OPTIONAL = ("h1", "beta", "sides", "direction", "truncation", "known", "table", "standard", "scale", "attained")
+OPTIONAL = (
+    "h0",
+    "h1",
+    "beta",
+    "sides",
+    "direction",
+    "truncation",
+    "known",
+    "table",
+    "standard",
+    "scale",
+    "attained",
+)
 
 
 class TruncationForm(Form):
@@ -77,9 +104,9 @@ class RowForm(Form):
 class PlanContentForm(Form):
     """What a plan promises, its name left out. A standard brings its own family, hypotheses, risks and table."""
 
-    family: str | None = Field(None, description="bernoulli, poisson, exponential or normal. Required.")
-    h0: Number | None = Field(None, description="Parameter under H0; see the family. Required.")
-    h1: Number | None = Field(None, description="Parameter under H1; required for simple plans.")
+    family: str | None = Field(None, description=f"{', '.join(FAMILIES)}. Required.")
+    h0: Number | None = Field(None, description="Parameter under H0; see the family. Required, but for score.")
+    h1: Number | None = Field(None, description="Parameter under H1; required for simple plans, but for score.")
     alpha: Number | None = Field(None, description="Producer's risk: P(reject) when H0 is true. Required.")
     beta: Number | None = Field(None, description="Consumer's risk: P(accept) when H1 is true.")
     boundaries: str | None = Field(
@@ -108,7 +135,7 @@ class PlanContentForm(Form):
 class PlanForm(PlanContentForm):
     """A plan: what is promised before the first datum."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+    model_config = ConfigDict(json_schema_extra={"examples": [*EXAMPLES]})
 
     name: Name
 
@@ -154,7 +181,7 @@ class PlanOut(Answer):
     name: str
     family: str
     parameter: str
-    h0: float
+    h0: float | None = Field(description="Null for score.")
     h1: float | None
     alpha: float
     beta: float | None
@@ -170,7 +197,9 @@ class PlanOut(Answer):
     standard: str | None
     scale: float | None
     source: str | None = Field(description="Where the standard stands.")
-    attained: AttainedOut | None = Field(description="Exact risks, for calibrated boundaries and tables.")
+    attained: AttainedOut | None = Field(
+        description="Exact risks, for calibrated boundaries and tables; for score the bounds that hold for every model."
+    )
     fingerprint: str
     created_at: datetime
     created_by: str

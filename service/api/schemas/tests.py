@@ -31,6 +31,7 @@ STATE: dict[str, Any] = {
     "log_likelihood_ratio": -2.2874443153037967,
     "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
     "sample_number": 24,
+    "observations": 24,
     "exposure": None,
     "total": 0,
     "decided": {
@@ -116,6 +117,7 @@ class TestOut(Answer):
     log_likelihood_ratio: float
     thresholds: ThresholdsOut | None
     sample_number: int
+    observations: int = Field(description="Observations counted so far, whatever each of them adds.")
     exposure: float | None
     total: int | float
     decided: DecidedOut | None
@@ -176,6 +178,7 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "log_likelihood_ratio": state.log_likelihood_ratio,
         "thresholds": optional(ThresholdsOut, procedure.thresholds),
         "sample_number": state.sample_number,
+        "observations": state.sequence - state.overrun,
         "exposure": state.exposure.value if procedure.family.has_exposure else None,
         "total": total_of(procedure.family, state.total.value),
         "decided": _decided(procedure, state),

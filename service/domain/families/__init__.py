@@ -4,8 +4,25 @@ from service.domain.families.base import Family, Increments
 from service.domain.families.bernoulli import Bernoulli
 from service.domain.families.exponential import Exponential
 from service.domain.families.normal import Normal
+from service.domain.families.normal_difference import NormalDifference
+from service.domain.families.normal_two_sample import NormalTwoSample
+from service.domain.families.paired import Paired
 from service.domain.families.poisson import Poisson
+from service.domain.families.poisson_ratio import PoissonRatio
+from service.domain.families.score import Score
 
-FAMILIES: dict[str, Family] = {family.name: family for family in (Bernoulli(), Poisson(), Exponential(), Normal())}
+_ALL: tuple[Family, ...] = (
+    Bernoulli(),
+    Poisson(),
+    Exponential(),
+    Normal(),
+    Paired(),
+    PoissonRatio(),
+    NormalDifference(),
+    NormalTwoSample(),
+    Score(),
+)
+
+FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}
 
 __all__ = ["FAMILIES", "Family", "Increments"]

@@ -110,7 +110,8 @@ class Family(ABC):
         value_field: The field of an observation that carries its result.
         optional: Fields that an observation may carry beside it, with the value taken where one is absent.
         required: Fields that an observation object must carry beside it.
-        in_values: What the required fields are for a bare number in `values`.
+        in_values: What the required fields are for a bare number in `values`; where one is missing there are no such.
+        words: Fields that are words, with the number that stands for each.
         known: Names of what the family needs to know beforehand.
         span: The totals it can show.
         has_exposure: The region runs over exposure rather than units.
@@ -119,6 +120,7 @@ class Family(ABC):
         table: The rows of a table for this family, if a plan may be given as one.
         prior: Names of the parameters of its conjugate prior; empty for families without composite hypotheses.
         carries: The running sums that give progress and total where these do not simply add up; see `place`.
+        has_model: A plan states h0 and h1, and what they say of the observations gives exact figures.
     """
 
     name: ClassVar[str]
@@ -127,6 +129,7 @@ class Family(ABC):
     optional: ClassVar[Mapping[str, float]] = {}
     required: ClassVar[tuple[str, ...]] = ()
     in_values: ClassVar[Mapping[str, float]] = {}
+    words: ClassVar[Mapping[str, Mapping[str, float]]] = {}
     known: ClassVar[tuple[str, ...]] = ()
     span: ClassVar[Span]
     has_exposure: ClassVar[bool] = False
@@ -135,6 +138,7 @@ class Family(ABC):
     table: ClassVar[TableKind | None] = None
     prior: ClassVar[tuple[str, ...]] = ()
     carries: ClassVar[tuple[str, ...]] = ()
+    has_model: ClassVar[bool] = True
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -183,11 +187,11 @@ class Family(ABC):
         """
         raise TypeError(f"{self.name} has no composite hypotheses")
 
-    def mean_of(self, parameter: float) -> float:
+    def mean_of(self, parameter: float, known: Mapping[str, float]) -> float:
         """The mean of the total in one unit of progress."""
         return parameter
 
-    def parameter_of(self, mean: float) -> float:
+    def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """The parameter with this mean of the total in one unit of progress."""
         return mean
 
@@ -214,7 +218,7 @@ class Family(ABC):
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """The shortest ways from here to the lower and to the upper limit."""
 
-    def estimate(self, start: Start) -> float | None:
+    def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """The maximum-likelihood estimate of the parameter from the observations so far, None where there is none."""
         return start.total / start.progress if start.progress > 0.0 else None
 
@@ -234,8 +238,13 @@ class Family(ABC):
         return self.span.is_integer and not self.is_watched_in_time
 
     @property
+    def has_figures_of_units(self) -> bool:
+        """True where exact figures of the progress are figures of the sample number as well."""
+        return not self.is_watched_in_time
+
+    @property
     def fields(self) -> tuple[str, ...]:
-        """The numeric fields of an observation, its result first."""
+        """The fields of an observation that say what was observed, its result first."""
         return (self.value_field, *self.required, *self.optional)
 
     def read(self, document: Document) -> Increments:
@@ -250,6 +259,11 @@ class Family(ABC):
         return self.increments(self._columns_of_objects(document["observations"]))
 
     def _columns_of_values(self, values: Sequence[float]) -> dict[str, Column]:
+        unsaid = [field for field in self.required if field not in self.in_values]
+        if unsaid:
+            fields = " and ".join((self.value_field, *unsaid))
+            rule = f'means nothing for {self.name}: post "observations", each with {fields}'
+            raise InvalidObservations([Fault("/values", rule)])
         count = len(values)
         columns = {self.value_field: Column(_array(values), lambda i: f"/values/{i}")}
         for field, value in {**self.optional, **self.in_values}.items():
@@ -260,11 +274,24 @@ class Family(ABC):
         self._check_fields(observations)
         return {
             field: Column(
-                _array([o.get(field, self.optional.get(field)) for o in observations]),
+                self._numbers(field, observations),
                 lambda i, field=field: f"/observations/{i}/{field}",  # type: ignore[misc]
             )
             for field in self.fields
         }
+
+    def _numbers(self, field: str, observations: Sequence[Document]) -> FloatArray:
+        """One field of all observations as numbers."""
+        if field not in self.words:
+            return _array([o.get(field, self.optional.get(field)) for o in observations])
+        number_of = self.words[field]
+        faults = [
+            Fault(f"/observations/{i}/{field}", f"must be one of {', '.join(number_of)}; received {o[field]!r}")
+            for i, o in enumerate(observations)
+            if o[field] not in number_of
+        ]
+        refuse(faults)
+        return np.array([number_of[o[field]] for o in observations])
 
     def _check_fields(self, observations: Sequence[Document]) -> None:
         """Every required field is there, and none that means nothing in this family."""

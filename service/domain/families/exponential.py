@@ -70,11 +70,11 @@ class Exponential(Family):
         """See `Family`; the prior is that of the failure rate."""
         return GammaMixture(edge, direction, prior["shape"], prior["rate"])
 
-    def mean_of(self, parameter: float) -> float:
+    def mean_of(self, parameter: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
         return 1.0 / parameter
 
-    def parameter_of(self, mean: float) -> float:
+    def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
         return 1.0 / mean if mean > 0.0 else math.inf
 
@@ -93,7 +93,7 @@ class Exponential(Family):
             Way(failures or None, within, float(failures), _failures_within(failures, within)),
         )
 
-    def estimate(self, start: Start) -> float | None:
+    def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """See `Family`."""
         return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
 
