@@ -119,7 +119,7 @@ def centre_check(events: FloatArray, exposures: FloatArray, noun: str) -> Check:
 def failures_centre_check(times: FloatArray, failed: BoolArray) -> Check:
     """Whether failures come early or late along the unit-time."""
     found = shapes.even_failures(times, failed)
-    return _centre(found, "failures", "the unit-time", "Laplace's test given the number of failures, exact up to 20")
+    return _centre(found, "failures", "the unit-time", "Laplace's test given the number of failures, exact up to 100")
 
 
 def rate_dispersion_check(events: FloatArray, exposures: FloatArray, noun: str) -> Check:

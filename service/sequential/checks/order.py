@@ -5,7 +5,8 @@ Quantity: the number of runs on either side of the median, the lag-one autocorre
 the order of observation; each with its two-sided p-value given the values themselves, every order being as likely.
 Method: the exact distribution of runs given how many lie on either side; for the autocorrelation its exact mean and
 variance over all orders and the normal distribution; Kendall's tau, exact for few values without ties.
-Accuracy: runs exact; the autocorrelation is asked of 20 values or more; for tau see scipy.stats.kendalltau.
+Accuracy: runs exact; the autocorrelation holds its level at 5 % and 1 % from the 20 values that it takes at least, and
+near 0.001 its p-value may be two to four times too small for very skewed values; tau as scipy.stats.kendalltau.
 Cost: O(n log n) time, some arrays of n numbers; a million values take about a second.
 Source: Wald and Wolfowitz (1940), Annals of Mathematical Statistics 11, 147-162 (runs); Wald and Wolfowitz (1943),
 Annals of Mathematical Statistics 14, 378-388, and Moran (1948), Biometrika 35, 255-260 (serial correlation over all
