@@ -2,12 +2,13 @@
 Does the stream of observations look like what the plan supposes? Figures for people; never a part of a decision.
 
 All observations that were posted are looked at, counted ones and overrun together: they come from one process, and a
-stream that goes on past the decision is less selected by it. Of very long streams the latest million are looked at.
+stream that goes on past the decision is less selected by it. Of very long streams a million are looked at: the latest
+that counted, and then the first that came after them.
 """
 
 import json
 from collections.abc import Iterable, Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from typing import Any
 
 import numpy as np
@@ -18,7 +19,7 @@ from service.domain.families.base import Document, plural
 from service.domain.procedure import Procedure
 from service.domain.state import State
 
-# Observations looked at: some 24 MB of numbers, and a few seconds to decode and check.
+# Observations looked at: some 24 MB of numbers, and some seconds to decode and check.
 MOST_OBSERVATIONS = 1_000_000
 
 # Observations decoded together.
@@ -37,6 +38,30 @@ WHEN_STOPPED = (
     "Sampling stopped because of what was observed, so the observations are no random sample of a fixed size: the "
     "p-values are approximate, most of all those of order and drift in a short test."
 )
+
+
+@dataclass(frozen=True)
+class Stretch:
+    """The observations that are looked at, from `first` to `last`; those up to `last_counted` were counted."""
+
+    first: int
+    last: int
+    last_counted: int
+
+    @property
+    def count(self) -> int:
+        """All of them."""
+        return self.last - self.first + 1
+
+    @property
+    def counted(self) -> int:
+        """Those that came up to the decision."""
+        return self.last_counted - self.first + 1
+
+    @property
+    def overrun(self) -> int:
+        """Those that came after it."""
+        return self.count - self.counted
 
 
 @dataclass(frozen=True)
@@ -77,9 +102,11 @@ class Assumptions:
         return min((value for value in self.adjusted if value is not None), default=None)
 
 
-def first_looked_at(state: State) -> int:
-    """The sequence of the first observation that is looked at; ask the log for nothing before it."""
-    return max(1, state.sequence - MOST_OBSERVATIONS + 1)
+def stretch_of(state: State) -> Stretch:
+    """What is looked at: everything while it is not too much, else the latest counted and then what came after them."""
+    last_counted = _last_counted(state)
+    first = max(1, last_counted - MOST_OBSERVATIONS + 1)
+    return Stretch(first, min(state.sequence, first + MOST_OBSERVATIONS - 1), last_counted)
 
 
 def assumptions_of(procedure: Procedure, state: State, bodies: Iterable[tuple[int, str]]) -> Assumptions:
@@ -89,26 +116,23 @@ def assumptions_of(procedure: Procedure, state: State, bodies: Iterable[tuple[in
     Args:
         procedure: The plan, compiled.
         state: Where the test stands.
-        bodies: The submissions that hold the observations to look at, as posted and in order, each with its first
-            sequence.
+        bodies: The submissions that hold the observations of the stretch to look at, as posted and in order, each
+            with its first sequence.
     """
-    first = first_looked_at(state)
-    seen = _gathered(procedure, first, bodies)
+    stretch = stretch_of(state)
+    seen = _gathered(procedure, stretch, bodies)
     checks = procedure.family.checks(seen, procedure.known)
-    if state.is_decided:
+    if state.is_decided and stretch.overrun < stretch.counted:
         checks = tuple(_with_stopping(check) for check in checks)
     adjusted = _adjusted(checks)
-    count = len(seen.total)
-    last_counted = state.sequence if state.decided is None else state.decided.sequence
-    overrun = state.sequence - max(last_counted, first - 1)
     return Assumptions(
-        first_sequence=first if count else None,
-        last_sequence=state.sequence if count else None,
-        overrun=overrun,
+        first_sequence=stretch.first if stretch.count else None,
+        last_sequence=stretch.last if stretch.count else None,
+        overrun=stretch.overrun,
         checks=checks,
         adjusted=adjusted,
         summary=_summary(checks, adjusted),
-        notes=_notes(state, count, overrun),
+        notes=_notes(state, stretch),
     )
 
 
@@ -127,20 +151,19 @@ def holm(p_values: list[float]) -> list[float]:
     return adjusted
 
 
-def _gathered(procedure: Procedure, first: int, bodies: Iterable[tuple[int, str]]) -> Increments:
-    """The observations from `first` on, as one submission."""
-    empty = np.zeros(0)
-    read = [Increments(np.zeros(0, np.int64), empty, empty)]
-    before = 0
+def _gathered(procedure: Procedure, stretch: Stretch, bodies: Iterable[tuple[int, str]]) -> Increments:
+    """The observations of the stretch as one submission."""
+    read, before = list[Increments](), 0
     for first_of_piece, document in _in_pieces(bodies):
-        if len(read) == 1:
-            before = max(0, first - first_of_piece)
+        if not read:
+            before = max(0, stretch.first - first_of_piece)
         read.append(procedure.family.read(document))
-    return Increments(
-        np.concatenate([piece.units for piece in read])[before:],
-        np.concatenate([piece.progress for piece in read])[before:],
-        np.concatenate([piece.total for piece in read])[before:],
-    )
+    if not read:
+        empty = np.zeros(0)
+        return Increments(np.zeros(0, np.int64), empty, empty)
+    kept = slice(before, before + stretch.count)
+    names = [field.name for field in fields(read[0])]
+    return replace(read[0], **{name: np.concatenate([getattr(piece, name) for piece in read])[kept] for name in names})
 
 
 def _in_pieces(bodies: Iterable[tuple[int, str]]) -> Iterator[tuple[int, Document]]:
@@ -185,15 +208,22 @@ def _summary(checks: tuple[Check, ...], adjusted: tuple[float | None, ...]) -> s
     )
 
 
-def _notes(state: State, count: int, overrun: int) -> tuple[str, ...]:
+def _notes(state: State, stretch: Stretch) -> tuple[str, ...]:
     notes = [NO_EFFECT]
-    if overrun:
+    if stretch.overrun:
         notes.append(
-            f"All observations are looked at, the {overrun} after the decision as well: they come from the same "
+            f"The {stretch.overrun} observations after the decision are looked at as well: they come from the same "
             "stream, and without them it would be more selected by the stopping."
         )
-    if count < state.sequence:
-        notes.append(f"Only the latest {count} of {state.sequence} observations are looked at.")
-    if count:
+    if stretch.count < state.sequence:
+        notes.append(
+            f"Observations {stretch.first} to {stretch.last} of {state.sequence} are looked at, "
+            f"for there are more than {MOST_OBSERVATIONS}."
+        )
+    if stretch.count:
         notes.append(WHEN_STOPPED if state.is_decided else WHILE_RUNNING)
     return tuple(notes)
+
+
+def _last_counted(state: State) -> int:
+    return state.sequence if state.decided is None else state.decided.sequence

@@ -16,7 +16,7 @@ from service.domain import assumptions
 from service.domain.assumptions import NO_EFFECT, Assumptions, assumptions_of, holm
 from service.domain.checking import checked_content
 from service.domain.checks import Check
-from service.domain.families import FAMILIES, Family
+from service.domain.families import FAMILIES, Family, Increments
 from service.domain.observing import observe
 from service.domain.procedure import procedure_of_document
 from service.domain.state import State
@@ -165,6 +165,16 @@ def test_an_invented_stream_that_breaks_a_supposition_is_found(fault: str) -> No
     assert "very unusual" in check.sentence
 
 
+@pytest.mark.parametrize("name", sorted(FAMILIES))
+def test_every_family_there_is_has_checks(name: str) -> None:
+    """Without observations none can be made, and each says why."""
+    family, nothing = FAMILIES[name], np.zeros(0)
+    checks = family.checks(Increments(np.zeros(0, np.int64), nothing, nothing), dict.fromkeys(family.known, 1.0))
+    assert checks
+    assert all(check.found is None and check.sentence.startswith("Not made: ") for check in checks)
+    assert len({check.name for check in checks}) == len(checks)
+
+
 @pytest.mark.parametrize("family", sorted(PLANS))
 def test_an_empty_stream_has_no_checks_made_and_says_why(family: str) -> None:
     found = posted(family)
@@ -214,11 +224,12 @@ def test_the_summary_counts_what_was_made_and_found() -> None:
 
 
 def test_counted_observations_and_overrun_are_looked_at_together() -> None:
-    document = {"values": [0] * 60 + [1, 0] * 10}
-    found = posted("bernoulli", document)
-    assert (found.observations, found.first_sequence, found.last_sequence) == (80, 1, 80)
-    assert found.overrun > 0
-    assert any(f"the {found.overrun} after the decision" in note for note in found.notes)
+    found = posted("bernoulli", {"values": [1, 0, 0, 0, 0] * 2 + [0] * 30 + [1, 0, 0]})
+    assert (found.observations, found.first_sequence, found.last_sequence) == (43, 1, 43)
+    # By hand: two nonconforming, and as many conforming as bring the evidence down to ln(.1/.95).
+    conforming = math.ceil((2.0 * math.log(4.0) - math.log(0.1 / 0.95)) / math.log(0.95 / 0.8))
+    assert found.overrun == 43 - (2 + conforming) == 11
+    assert any(f"The {found.overrun} observations after the decision" in note for note in found.notes)
     assert any("Sampling stopped because of what was observed" in note for note in found.notes)
     (halves,) = (check for check in found.checks if check.name == "halves")
     assert halves.sentence.endswith("so this p-value is approximate.")
@@ -227,12 +238,18 @@ def test_counted_observations_and_overrun_are_looked_at_together() -> None:
 
 
 def test_only_the_latest_are_looked_at_where_there_are_too_many(monkeypatch: pytest.MonkeyPatch) -> None:
-    stream = np.round(np.random.default_rng(3).normal(10.2, 0.5, 90), 3)
+    stream = np.tile([10.0, 10.4, 10.1, 10.6, 10.2, 10.2], 15)
     pieces = [values(piece) for piece in np.split(stream, [7, 31, 62])]
     monkeypatch.setattr(assumptions, "MOST_OBSERVATIONS", 50)
     late = posted("normal", *pieces)
     assert (late.observations, late.first_sequence, late.last_sequence) == (50, 41, 90)
-    assert "Only the latest 50 of 90 observations are looked at." in late.notes
+    assert "Observations 41 to 90 of 90 are looked at, for there are more than 50." in late.notes
+    decided = posted("normal", *pieces, values(np.full(200, 11.0)))
+    assert (decided.first_sequence, decided.last_sequence, decided.overrun) == (43, 92, 0)
+    early = posted("normal", values(np.full(200, 11.0)))
+    assert (early.first_sequence, early.last_sequence) == (1, 50)
+    # By hand: each measurement of 11.0 brings (0.5/0.25) * 0.75 = 1.5 nats, and ln(.9/.05) = 2.89 rejects.
+    assert early.overrun == 48
     monkeypatch.undo()
     alone = posted("normal", values(stream[40:]))
     assert [check.found for check in late.checks] == [check.found for check in alone.checks]

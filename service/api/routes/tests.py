@@ -18,7 +18,7 @@ from service.api.schemas.common import Label, Moment, Name, Text
 from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
-from service.domain.assumptions import assumptions_of, first_looked_at
+from service.domain.assumptions import assumptions_of, stretch_of
 from service.domain.errors import Fault
 from service.domain.outlook import outlook_of
 from service.domain.plan import Plan
@@ -144,7 +144,8 @@ async def show_assumptions(key: str, request: Request, response: Response, parts
 
 def _assumptions(parts: Parts, test: SequentialTest, plan: Plan) -> AssumptionsOut:
     procedure = procedure_of(plan)
-    bodies = parts.reader.bodies(test.key, first_looked_at(test.state) - 1, test.state.sequence)
+    stretch = stretch_of(test.state)
+    bodies = parts.reader.bodies(test.key, stretch.first - 1, stretch.last)
     return AssumptionsOut.of(assumptions_of(procedure, test.state, bodies), procedure.family.name, test)
 
 
