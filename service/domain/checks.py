@@ -140,7 +140,10 @@ def spread_check(values: FloatArray, sigma: float, noun: str) -> Check:
     words = _directed(
         found,
         lambda f: f"The standard deviation of the {noun} is {f.figure:.4g} times the plan's sigma",
-        ("the risks are larger than promised", "the sample is larger than needed"),
+        (
+            "sigma is too small and the risks are larger than promised",
+            "sigma is too large and the sample larger than needed",
+        ),
     )
     return Check("spread", Supposition.SPREAD, "chi-squared test of a variance, exact", found, words)
 

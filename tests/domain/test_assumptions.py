@@ -291,7 +291,7 @@ def streams(draw: st.DrawFn) -> tuple[str, Document]:
     return family, groups([draw(st.integers(0, size)) for size in sizes], sizes)
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=100, deadline=None)
 @given(streams(), st.sampled_from([1e-100, 0.5, 1e100]))
 def test_every_stream_that_is_taken_has_finite_figures(stream: tuple[str, Document], sigma: float) -> None:
     name, document = stream
