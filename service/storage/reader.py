@@ -120,13 +120,21 @@ class Reader:
 
         Give as `through` the sequence of a test that was read before, for more may have been posted since.
         """
+        for row in self._log(select(tables.submissions), test, after, through):
+            yield rows.submission_of(row)
+
+    def bodies(self, test: str, after: int = 0, through: int = NO_END) -> Iterator[tuple[int, str]]:
+        """The first sequence and the body of the same submissions, for work that needs no more of them."""
+        log = tables.submissions.c
+        for row in self._log(select(log.first_sequence, log.last_sequence, log.body), test, after, through):
+            yield row["first_sequence"], row["body"]
+
+    def _log(self, found: Select[Any], test: str, after: int, through: int) -> Iterator[RowMapping]:
         log = tables.submissions.c
         first = self._first_around(test, after)
         while (last := self._last_of_page(test, first, through)) is not None:
-            page = select(tables.submissions).where(log.test == test, log.first_sequence.between(first, last))
-            for row in self._all(page.order_by(log.first_sequence)):
-                if row["last_sequence"] > after:
-                    yield rows.submission_of(row)
+            page = found.where(log.test == test, log.first_sequence.between(first, last))
+            yield from (row for row in self._all(page.order_by(log.first_sequence)) if row["last_sequence"] > after)
             first = last + 1
 
     def _first_around(self, test: str, after: int) -> int:

@@ -161,6 +161,7 @@ def test_a_long_log_comes_in_order_from_any_place(engine: Engine) -> None:
     assert [s.first_sequence for s in reader.submissions("lot-1", 501)] == list(range(501, 900, 2))
     assert [s.first_sequence for s in reader.submissions("lot-1", 501, 510)] == [501, 503, 505, 507, 509]
     assert list(reader.submissions("lot-1", 0, 0)) == []
+    assert list(reader.bodies("lot-1", 501, 510)) == [(first, "{}") for first in (501, 503, 505, 507, 509)]
 
 
 def test_few_heavy_submissions_are_held_at_once(engine: Engine) -> None:

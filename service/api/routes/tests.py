@@ -13,13 +13,17 @@ from service.api.lookup import known_test, unchanged_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import Parts, PartsOf, computing, reading
 from service.api.problems import RequestProblem
+from service.api.schemas.assumptions import AssumptionsOut
 from service.api.schemas.common import Label, Moment, Name, Text
 from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
+from service.domain.assumptions import assumptions_of, stretch_of
 from service.domain.errors import Fault
 from service.domain.outlook import outlook_of
-from service.domain.sequential_test import SubjectKind
+from service.domain.plan import Plan
+from service.domain.procedure import procedure_of
+from service.domain.sequential_test import SequentialTest, SubjectKind
 from service.domain.state import Decision
 from service.ingest.commands import RegisteredTest, RegisterTest
 from service.storage.reader import TestFilters
@@ -120,6 +124,29 @@ async def show_outlook(key: str, request: Request, response: Response, parts: Pa
     response.headers["ETag"] = etag(test.version)
     outlook = await computing(parts, lambda: outlook_of(plan.document, test.state))
     return OutlookOut.of(outlook, test.state)
+
+
+@router.get(
+    "/{key}/assumptions",
+    responses=answers_with("not-found"),
+    response_model=AssumptionsOut,
+    summary="Whether the observations look as the plan supposes",
+    dependencies=[requires(Role.VIEWER)],
+)
+async def show_assumptions(key: str, request: Request, response: Response, parts: PartsOf) -> AssumptionsOut | Response:
+    """Checks of independence, steadiness, dispersion, spread and shape; they never change the decision."""
+    if (unchanged := await unchanged_test(parts, key, request)) is not None:
+        return unchanged
+    test, plan = await known_test(parts, key)
+    response.headers["ETag"] = etag(test.version)
+    return await computing(parts, lambda: _assumptions(parts, test, plan))
+
+
+def _assumptions(parts: Parts, test: SequentialTest, plan: Plan) -> AssumptionsOut:
+    procedure = procedure_of(plan)
+    stretch = stretch_of(test.state)
+    bodies = parts.reader.bodies(test.key, stretch.first - 1, stretch.last)
+    return AssumptionsOut.of(assumptions_of(procedure, test.state, bodies), procedure.family.name, test)
 
 
 def _page(parts: Parts, filters: TestFilters, after: str | None, limit: int) -> tuple[list[TestOut], str | None]:

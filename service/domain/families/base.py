@@ -10,6 +10,7 @@ from typing import Any, ClassVar
 import numpy as np
 from numpy.typing import NDArray
 
+from service.domain.checks import Check, order_checks
 from service.domain.errors import Fault, InvalidObservations
 from service.sequential.approximations import Motion
 from service.sequential.deviance import Deviance
@@ -231,6 +232,10 @@ class Family(ABC):
         self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
     ) -> FixedSample | None:
         """The smallest fixed sample; `lower` is the hypothesis of small totals, `risks` are in that order."""
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """Whether a stream looks as supposed: here, that what each observation adds to the total is in no order."""
+        return order_checks(seen.total, "observations")
 
     @property
     def has_stepwise_risks(self) -> bool:

@@ -6,6 +6,13 @@ from typing import ClassVar
 
 import numpy as np
 
+from service.domain.checks import (
+    Check,
+    autocorrelation_check,
+    even_runs_check,
+    halves_check,
+    proportion_dispersion_check,
+)
 from service.domain.families.base import (
     LARGEST_EXPONENT,
     ORIGIN,
@@ -21,6 +28,7 @@ from service.domain.families.base import (
 )
 from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.checks.counts import proportion_residuals
 from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
 from service.sequential.evidence import Evidence
@@ -108,6 +116,18 @@ class Bernoulli(Family):
         refuse(whole_numbers(value, 0))
         refuse(value.require(value.values <= size.values, "must not exceed the size of its group"))
         return Increments(size.values.astype(np.int64), size.values, value.values)
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """See `Family`: independent results of one proportion, groups not more varied than chance makes them."""
+        nonconforming, sizes = seen.total, seen.progress
+        has_groups = bool(np.any(sizes > 1.0))
+        noun = "groups" if has_groups else "units"
+        return (
+            even_runs_check(nonconforming, sizes, noun),
+            *([autocorrelation_check(proportion_residuals(nonconforming, sizes), noun)] if has_groups else []),
+            halves_check(nonconforming, sizes, "nonconforming"),
+            *([proportion_dispersion_check(nonconforming, sizes, "nonconforming units")] if has_groups else []),
+        )
 
 
 def _with_at_most(units: int, nonconforming: float) -> str:

@@ -5,10 +5,18 @@ from typing import ClassVar
 
 import numpy as np
 
-from service.domain.families.base import ORIGIN, Family, Start, TableKind, Way, plural
+from service.domain.checks import (
+    Check,
+    autocorrelation_check,
+    even_runs_check,
+    halves_check,
+    proportion_dispersion_check,
+)
+from service.domain.families.base import ORIGIN, Family, Increments, Start, TableKind, Way, plural
 from service.domain.families.bernoulli import Bernoulli
 from service.sequential import likelihood
 from service.sequential.approximations import Motion
+from service.sequential.checks.counts import proportion_residuals
 from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
 from service.sequential.errors import OutOfRange
@@ -111,6 +119,17 @@ class Conditional(Family):
     ) -> FixedSample | None:
         """See `Family`."""
         return SHARES.fixed_sample(self._share(lower, known), self._share(upper, known), risks, {})
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """See `Family`: what has shown falls to b by one chance, report by report where one holds several."""
+        has_shown = seen.progress > 0.0
+        shown, in_b = seen.progress[has_shown], seen.total[has_shown]
+        several = self.shown[1]
+        checks = [even_runs_check(in_b, shown, several), halves_check(in_b, shown, f"{several} {self.in_b}")]
+        if np.any(shown > 1.0):
+            checks[1:1] = [autocorrelation_check(proportion_residuals(in_b, shown), "reports")]
+            checks.append(proportion_dispersion_check(in_b, shown, f"{several} {self.in_b}"))
+        return tuple(checks)
 
     def _share(self, parameter: float, known: Mapping[str, float]) -> float:
         odds = parameter * self.odds_at_one(known)

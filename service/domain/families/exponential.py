@@ -6,6 +6,13 @@ from typing import ClassVar
 
 import numpy as np
 
+from service.domain.checks import (
+    Check,
+    agelessness_check,
+    autocorrelation_check,
+    failures_centre_check,
+    runs_check,
+)
 from service.domain.families.base import (
     ORIGIN,
     Column,
@@ -22,6 +29,7 @@ from service.domain.families.base import (
 )
 from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.checks.shapes import gaps_between_failures
 from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
 from service.sequential.evidence import Evidence
@@ -112,6 +120,21 @@ class Exponential(Family):
         time, failed = columns["time"], columns["failed"]
         refuse(reals(time, "must be 0 or above", time.values >= 0.0))
         return Increments(np.ones(len(time.values), np.int64), time.values, failed.values)
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """
+        See `Family`: a constant failure rate, over the unit-time of the test and over the age of each unit.
+
+        While it is constant, the unit-times from failure to failure are independent and alike, whatever is suspended.
+        """
+        times, failed = seen.progress, seen.total > 0.0
+        gaps, noun = gaps_between_failures(times, failed), "times between failures"
+        return (
+            runs_check(gaps, noun),
+            autocorrelation_check(gaps, noun),
+            failures_centre_check(times, failed),
+            agelessness_check(times, failed),
+        )
 
 
 def _failures_within(failures: int, within: float) -> str:

@@ -6,6 +6,7 @@ from typing import ClassVar
 
 import numpy as np
 
+from service.domain.checks import Check, normality_check, order_checks, spread_check
 from service.domain.families.base import LARGEST_REAL, ORIGIN, Column, Family, Increments, Start, Way, reals, refuse
 from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
@@ -84,3 +85,12 @@ class Normal(Family):
         refuse(reals(value, "must be a number", np.isfinite(value.values)))
         count = len(value.values)
         return Increments(np.ones(count, np.int64), np.ones(count), value.values)
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """See `Family`: independent measurements without drift, of the known spread, of normal shape."""
+        values, noun = seen.total, "measurements"
+        return (
+            *order_checks(values, noun),
+            spread_check(values, known["sigma"], noun),
+            normality_check(values, noun),
+        )

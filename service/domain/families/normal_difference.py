@@ -6,6 +6,7 @@ from typing import ClassVar
 
 import numpy as np
 
+from service.domain.checks import Check
 from service.domain.families.base import ORIGIN, Column, Increments, Start, Way, reals, refuse
 from service.domain.families.normal import Normal
 from service.sequential.approximations import Motion
@@ -61,6 +62,10 @@ class NormalDifference(Normal):
     def fixed_sample(self, lower: float, upper: float, risks: tuple[float, float], known: Known) -> FixedSample | None:
         """See `Family`."""
         return super().fixed_sample(lower, upper, risks, _of_difference(known))
+
+    def checks(self, seen: Increments, known: Known) -> tuple[Check, ...]:
+        """See `Family`: of the differences."""
+        return super().checks(seen, _of_difference(known))
 
     def increments(self, columns: Mapping[str, Column]) -> Increments:
         """See `Family`."""

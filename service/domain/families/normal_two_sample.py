@@ -6,6 +6,7 @@ from typing import ClassVar
 
 import numpy as np
 
+from service.domain.checks import Check, normality_check, order_checks, spread_check
 from service.domain.families.base import Column, Increments, Start, Way, reals, refuse
 from service.domain.families.normal_difference import NormalDifference
 from service.sequential.double import Double
@@ -42,6 +43,17 @@ class NormalTwoSample(NormalDifference):
         is_b, is_a, count = arm.values, 1.0 - arm.values, len(value.values)
         carried = (is_a, is_a * value.values, is_b, is_b * value.values)
         return Increments(np.ones(count, np.int64), np.zeros(count), np.zeros(count), carried)
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """See `Family`: of the measurements less the average of their arm, in the standard deviations of the arm."""
+        is_a, of_a, is_b, of_b = seen.carried or (np.zeros(0),) * len(self.carries)
+        residuals = np.zeros(len(is_a))
+        for is_in, values, sigma in ((is_a, of_a, known["sigma_a"]), (is_b, of_b, known["sigma_b"])):
+            inside = is_in > 0.0
+            residuals[inside] = (values[inside] - np.mean(values[inside])) / sigma if np.any(inside) else 0.0
+        noun = "measurements, each less the average of its arm,"
+        spread = spread_check(residuals, 1.0, noun, averages=len(NAMES))
+        return *order_checks(residuals, noun), spread, normality_check(residuals, noun)
 
     def place(self, sums: Sequence[Double], known: Mapping[str, float]) -> tuple[Double, Double]:
         """See `Family`."""

@@ -5,6 +5,13 @@ from typing import ClassVar
 
 import numpy as np
 
+from service.domain.checks import (
+    Check,
+    autocorrelation_check,
+    centre_check,
+    even_runs_check,
+    rate_dispersion_check,
+)
 from service.domain.families.base import (
     ORIGIN,
     Column,
@@ -21,6 +28,7 @@ from service.domain.families.base import (
 )
 from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
+from service.sequential.checks.counts import rate_residuals
 from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
 from service.sequential.evidence import Evidence
@@ -95,6 +103,16 @@ class Poisson(Family):
         value, exposure = columns["value"], columns["exposure"]
         refuse([*whole_numbers(value, 0), *reals(exposure, "must be above 0", exposure.values > 0.0)])
         return Increments(np.ones(len(value.values), np.int64), exposure.values, value.values)
+
+    def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
+        """See `Family`: independent counts of one rate, of Poisson's dispersion."""
+        counts, exposures = seen.total, seen.progress
+        return (
+            even_runs_check(counts, exposures, "reports"),
+            autocorrelation_check(rate_residuals(counts, exposures), "reports"),
+            centre_check(counts, exposures, "counts"),
+            rate_dispersion_check(counts, exposures, "counts"),
+        )
 
 
 def _counts_within(count: int, within: float) -> str:
