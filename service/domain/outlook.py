@@ -84,14 +84,14 @@ def outlook_of(document: str, state: State) -> Outlook:
     procedure = procedure_of_document(document)
     standing = _standing(procedure, state)
     if state.is_decided:
-        return Outlook(NO_WAYS, procedure.family.estimate(standing), None, (), 0.0)
+        return Outlook(NO_WAYS, procedure.family.estimate(standing, procedure.known), None, (), 0.0)
     return _outlook(document, standing)
 
 
 @lru_cache(maxsize=4096)
 def _outlook(document: str, standing: Start) -> Outlook:
     procedure = procedure_of_document(document)
-    estimate = procedure.family.estimate(standing)
+    estimate = procedure.family.estimate(standing, procedure.known)
     asked = {"h0": procedure.hypotheses[0], "h1": procedure.hypotheses[1]}
     if estimate is not None:
         asked["estimate"] = estimate

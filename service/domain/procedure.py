@@ -92,13 +92,17 @@ def _compiled(document: str) -> Procedure:
 
 def _evidence(content: Content) -> tuple[Family, LikelihoodRatio]:
     family = FAMILIES[content["family"]]
-    return family, family.likelihood_ratio(content["h0"], content["h1"], content.get("known", {}))
+    return family, family.likelihood_ratio(content["h0"], content["h1"], _known(family, content))
+
+
+def _known(family: Family, content: Content) -> Mapping[str, float]:
+    return family.settled(content.get("known", {}), content["h0"], content["h1"])
 
 
 def _procedure(content: Content, ratio: LikelihoodRatio, thresholds: Thresholds | None, region: Region) -> Procedure:
     family = FAMILIES[content["family"]]
     hypotheses, risks = (content["h0"], content["h1"]), (content["alpha"], content["beta"])
-    return Procedure(family, ratio, thresholds, region, content.get("known", {}), hypotheses, risks)
+    return Procedure(family, ratio, thresholds, region, _known(family, content), hypotheses, risks)
 
 
 def _thresholds(content: Content) -> Thresholds:

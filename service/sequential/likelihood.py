@@ -105,6 +105,20 @@ def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
     return _checked(LikelihoodRatio(gain, float(middle.high), float(middle.low)))
 
 
+def lognormal(median0: float, median1: float, sigma: float) -> LikelihoodRatio:
+    """
+    Medians above 0 with a known standard deviation sigma of the natural logarithm; total = sum of the logarithms.
+
+    Raises:
+        OutOfRange: The medians are too close, or too far apart, for floating point.
+
+    Source: that of `normal`, with the logarithms of the medians as means; their difference is ln(median1/median0).
+    """
+    distance = _log_quotient(median1, median0)
+    middle = two_sum(Double.of(math.log(median0)).high, Double.of(distance / 2.0).high)
+    return _checked(LikelihoodRatio(distance / sigma / sigma, float(middle.high), float(middle.low)))
+
+
 def _log_quotient(a: float, b: float) -> float:
     """ln(a/b) of positive numbers; near one the difference a - b is exact, where the quotient has lost digits."""
     quotient = a / b

@@ -7,6 +7,7 @@ from pydantic import ConfigDict, Field
 
 from service.api.schemas.common import Answer, Form, Name, Number, Text, Whole, optional, shown_as
 from service.domain.calibrating import Risks
+from service.domain.families import FAMILIES
 from service.domain.plan import Plan
 from service.domain.procedure import lines_of, procedure_of
 from service.domain.standards import Standard, source_of
@@ -74,7 +75,7 @@ class RowForm(Form):
 class PlanContentForm(Form):
     """What a plan promises, its name left out. A standard brings its own family, hypotheses, risks and table."""
 
-    family: str | None = Field(None, description="bernoulli, poisson, exponential or normal. Required.")
+    family: str | None = Field(None, description=f"One of {', '.join(FAMILIES)}. Required.")
     h0: Number | None = Field(None, description="Parameter under H0; see the family. Required.")
     h1: Number | None = Field(None, description="Parameter under H1. Required.")
     alpha: Number | None = Field(None, description="Producer's risk: P(reject) when H0 is true. Required.")

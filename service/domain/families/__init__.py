@@ -3,9 +3,18 @@
 from service.domain.families.base import Family, Increments
 from service.domain.families.bernoulli import Bernoulli
 from service.domain.families.exponential import Exponential
+from service.domain.families.lognormal import Lognormal
 from service.domain.families.normal import Normal
 from service.domain.families.poisson import Poisson
 
-FAMILIES: dict[str, Family] = {family.name: family for family in (Bernoulli(), Poisson(), Exponential(), Normal())}
+_ALL: tuple[Family, ...] = (
+    Bernoulli(),
+    Poisson(),
+    Exponential(),
+    Normal(),
+    Lognormal(),
+)
+
+FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}
 
 __all__ = ["FAMILIES", "Family", "Increments"]

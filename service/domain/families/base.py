@@ -112,6 +112,7 @@ class Family(ABC):
         is_watched_in_time: The region is watched between reports, not only at their ends.
         parameter_lowers_total: Large parameters make small totals.
         table: The rows of a table for this family, if a plan may be given as one.
+        has_normal_steps: The total moves by normal amounts, so that Siegmund's overshoot is theirs.
     """
 
     name: ClassVar[str]
@@ -126,6 +127,7 @@ class Family(ABC):
     is_watched_in_time: ClassVar[bool] = False
     parameter_lowers_total: ClassVar[bool] = False
     table: ClassVar[TableKind | None] = None
+    has_normal_steps: ClassVar[bool] = False
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -141,13 +143,21 @@ class Family(ABC):
         """
 
     @abstractmethod
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """
         Check the columns of a submission and turn them into increments.
 
         Raises:
             InvalidObservations: With a fault for each offending element.
         """
+
+    def known_rule(self, name: str, value: float) -> str | None:
+        """The rule that something known beforehand breaks; `name` is one of `known`."""
+        return positive_rule(value)
+
+    def settled(self, known: Mapping[str, float], h0: float, h1: float) -> Mapping[str, float]:
+        """What is known of a plan, with what follows from its hypotheses; all that takes `known` is given this."""
+        return known
 
     def parameter_rule(self, value: float) -> str | None:
         """The rule that a true parameter breaks; the ends of the range may be asked for where they mean something."""
@@ -172,7 +182,7 @@ class Family(ABC):
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """The shortest ways from here to the lower and to the upper limit."""
 
-    def estimate(self, start: Start) -> float | None:
+    def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """The maximum-likelihood estimate of the parameter from the observations so far, None where there is none."""
         return start.total / start.progress if start.progress > 0.0 else None
 
@@ -196,7 +206,7 @@ class Family(ABC):
         """The numeric fields of an observation, its result first."""
         return (self.value_field, *self.required, *self.optional)
 
-    def read(self, document: Document) -> Increments:
+    def read(self, document: Document, known: Mapping[str, float]) -> Increments:
         """
         Decode a submission as posted: `{"values": [...]}` or `{"observations": [{...}]}`.
 
@@ -204,8 +214,8 @@ class Family(ABC):
             InvalidObservations: With a fault for each offending element.
         """
         if "values" in document:
-            return self.increments(self._columns_of_values(document["values"]))
-        return self.increments(self._columns_of_objects(document["observations"]))
+            return self.increments(self._columns_of_values(document["values"]), known)
+        return self.increments(self._columns_of_objects(document["observations"]), known)
 
     def _columns_of_values(self, values: Sequence[float]) -> dict[str, Column]:
         count = len(values)

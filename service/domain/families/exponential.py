@@ -72,7 +72,7 @@ class Exponential(Family):
             Way(failures or None, within, float(failures), _failures_within(failures, within)),
         )
 
-    def estimate(self, start: Start) -> float | None:
+    def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """See `Family`."""
         return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
 
@@ -86,7 +86,7 @@ class Exponential(Family):
         """See `Family`."""
         return fixed_sample.poisson(1.0 / lower, 1.0 / upper, *risks)
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         time, failed = columns["time"], columns["failed"]
         refuse(reals(time, "must be 0 or above", time.values >= 0.0))

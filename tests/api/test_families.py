@@ -1,0 +1,101 @@
+"""Every further family over HTTP: plan, test, observations, outlook, characteristics, log."""
+
+from typing import Any
+
+import httpx
+import pytest
+
+from tests.api.examples import Namer, pointers, with_plan, with_test
+
+FILL = {"family": "lognormal", "h0": 10.0, "h1": 15.0, "alpha": 0.05, "beta": 0.10, "known": {"sigma": 0.5}}
+
+PLANS = [FILL]
+# A plan, observations that accept it, the number that it takes, and the total then.
+ACCEPTED: list[tuple[dict[str, Any], dict[str, Any], int, float]] = [
+    # By hand: ln(10.5) - ln(150)/2 = -.1540 each; the line lies at -.25 * 2.2513 / ln 1.5 = -1.388: ten.
+    (FILL, {"values": [10.5] * 12}, 10, 23.513752571634),
+]
+BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (FILL, {"h0": 0.0}, "/h0"),
+    (FILL, {"h1": -1.0}, "/h1"),
+    (FILL, {"known": {}}, "/known/sigma"),
+    (FILL, {"truncation": {"exposure": 4.0}}, "/truncation/exposure"),
+    (FILL, {"boundaries": "table", "table": [{"sample_number": 5, "accept": 1, "reject": 2}]}, "/table"),
+]
+BAD_OBSERVATIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (FILL, {"values": [3.0, 0.0]}, "/values/1"),
+    (FILL, {"values": [-2.0]}, "/values/0"),
+    (FILL, {"observations": [{"value": 3.0, "exposure": 2.0}]}, "/observations/0/exposure"),
+]
+
+
+@pytest.mark.parametrize(("plan", "body", "number", "total"), ACCEPTED)
+def test_a_test_runs_from_plan_to_decision(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any], number: int, total: float
+) -> None:
+    key = with_test(admin, new_name, plan)
+    new = admin.get(f"/v1/tests/{key}").json()
+    assert new["outlook"]["accept"]
+    assert new["outlook"]["reject"]
+    state = admin.post(f"/v1/tests/{key}/observations", json=body).json()
+    assert (state["decision"], state["decided"]["sample_number"]) == ("accept", number)
+    assert state["total"] == pytest.approx(total, rel=1e-11)
+    rehearsed = admin.post(f"/v1/plans/{state['plan']}/rehearsal", json=body).json()
+    assert (rehearsed["decision"], rehearsed["total"]) == (state["decision"], state["total"])
+    path = admin.get(f"/v1/tests/{key}/path").json()
+    assert path["points"][-1]["log_likelihood_ratio"] == state["log_likelihood_ratio"]
+    logged = admin.get(f"/v1/tests/{key}/observations").json()["items"]
+    assert [row["counted"] for row in logged] == [True] * number + [False] * (len(logged) - number)
+    table = admin.get(f"/v1/tests/{key}/observations", headers={"Accept": "text/csv"}).text
+    assert len(table.splitlines()) == len(logged) + 1
+
+
+@pytest.mark.parametrize("plan", PLANS)
+def test_its_risks_are_exact_and_calibrated(admin: httpx.Client, new_name: Namer, plan: dict[str, Any]) -> None:
+    name = with_plan(admin, new_name("plan"), plan)
+    found = admin.get(f"/v1/plans/{name}/characteristics").json()
+    curve = [point["probability_of_acceptance"] for point in found["points"]]
+    assert len(curve) == 51
+    assert curve == sorted(curve, reverse=plan["h1"] > plan["h0"])
+    assert found["error_bound"] < 1e-8
+    assert found["fixed_sample"]["saving_at_h0"] > 0
+    calibrated = admin.post("/v1/characteristics", json={**plan, "boundaries": "calibrated", "at": [plan["h0"]]})
+    attained = calibrated.json()["attained"]
+    assert attained["alpha"] <= plan["alpha"] * (1 + 1e-7)
+    assert attained["beta"] <= plan["beta"] * (1 + 1e-7)
+
+
+@pytest.mark.parametrize("plan", PLANS)
+def test_at_the_beginning_the_outlook_is_what_the_plan_promises(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any]
+) -> None:
+    key = with_test(admin, new_name, plan)
+    outlook = admin.get(f"/v1/tests/{key}/outlook").json()
+    body = {**plan, "at": [plan["h0"], plan["h1"]]}
+    promise = admin.post("/v1/characteristics", json=body).json()
+    for part, point in zip(outlook["expected"], promise["points"], strict=True):
+        assert part["probability_of_acceptance"] == pytest.approx(point["probability_of_acceptance"], abs=1e-12)
+        further = part["further_exposure"] or part["further_sample_number"]
+        assert further["average"] == pytest.approx(
+            point["average_exposure"] or point["average_sample_number"], rel=1e-12
+        )
+
+
+@pytest.mark.parametrize(("base", "change", "pointer"), BAD_PLANS)
+def test_a_plan_that_cannot_be_right_names_the_field(
+    admin: httpx.Client, new_name: Namer, base: dict[str, Any], change: dict[str, Any], pointer: str
+) -> None:
+    answer = admin.post("/v1/plans", json={"name": new_name("bad"), **base, **change})
+    assert answer.status_code == 422, answer.text
+    assert pointer in pointers(answer)
+
+
+@pytest.mark.parametrize(("plan", "body", "pointer"), BAD_OBSERVATIONS)
+def test_an_observation_that_cannot_be_right_is_named_and_nothing_is_stored(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any], pointer: str
+) -> None:
+    key = with_test(admin, new_name, plan)
+    answer = admin.post(f"/v1/tests/{key}/observations", json=body)
+    assert answer.status_code == 422, answer.text
+    assert pointer in pointers(answer)
+    assert admin.get(f"/v1/tests/{key}").json()["version"] == 1
