@@ -86,4 +86,7 @@ def _conjugate_root(motion: Motion, slope: float) -> float | None:
         far *= 2.0
         if far > 1e6:
             return None
+    # Where the cumulant has a pole, come down from beyond it: a bracket with an infinite end converges slowly.
+    while math.isinf(excess(far)) and near < (middle := 0.5 * (near + far)) < far:
+        near, far = (middle, far) if excess(middle) < 0.0 else (near, middle)
     return sign * float(brentq(excess, near, far, xtol=1e-14, rtol=1e-13))

@@ -19,6 +19,9 @@ from dataclasses import dataclass
 from service.sequential.double import Double, FloatArray, two_product, two_sum
 from service.sequential.errors import OutOfRange
 
+# exp() of more overflows.
+LARGEST_EXPONENT = 700.0
+
 
 @dataclass(frozen=True)
 class LikelihoodRatio:
@@ -76,6 +79,27 @@ def poisson(rate0: float, rate1: float) -> LikelihoodRatio:
     Source: the Poisson density, rate**count * exp(-rate * exposure), at both rates.
     """
     return _ratio(_log_quotient(rate1, rate0), rate1 - rate0)
+
+
+def negative_binomial(mean0: float, mean1: float, dispersion: float) -> LikelihoodRatio:
+    """
+    Mean counts per unit, both above 0, with variance mean + mean**2 / dispersion; total = count, progress = units.
+
+    Raises:
+        OutOfRange: The means are too close to tell apart in floating point.
+
+    Source: Johnson, Kemp and Kotz, Univariate Discrete Distributions, section 5.1: the probability of x is proportional
+    to (mean / (mean + dispersion))**x * (dispersion / (mean + dispersion))**dispersion.
+    """
+    # ln of the quotient of mean / (mean + dispersion), and of its complement, whose difference of means is exact.
+    natural = math.log1p((mean1 - mean0) / mean0 * (dispersion / (mean1 + dispersion)))
+    return _ratio(natural, dispersion * math.log1p((mean1 - mean0) / (mean0 + dispersion)))
+
+
+def negative_binomial_cumulant(mean: float, dispersion: float, t: float) -> float:
+    """The cumulant generating function at t of a count with variance mean + mean**2 / dispersion; may be infinite."""
+    growth = (mean / dispersion) * math.expm1(min(t, LARGEST_EXPONENT))
+    return -dispersion * math.log1p(-growth) if growth < 1.0 else math.inf
 
 
 def exponential(mean0: float, mean1: float) -> LikelihoodRatio:

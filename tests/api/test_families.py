@@ -9,13 +9,30 @@ from tests.api.examples import Namer, pointers, with_plan, with_test
 
 FILL = {"family": "lognormal", "h0": 10.0, "h1": 15.0, "alpha": 0.05, "beta": 0.10, "known": {"sigma": 0.5}}
 
-PLANS = [FILL]
+# Scratches of a panel: counts with variance m + m**2 / 2.
+SCRATCH = {
+    "family": "negative_binomial",
+    "h0": 0.5,
+    "h1": 1.5,
+    "alpha": 0.05,
+    "beta": 0.10,
+    "known": {"dispersion": 2.0},
+}
+
+PLANS = [FILL, SCRATCH]
 # A plan, observations that accept it, the number that it takes, and the total then.
 ACCEPTED: list[tuple[dict[str, Any], dict[str, Any], int, float]] = [
     # By hand: ln(10.5) - ln(150)/2 = -.1540 each; the line lies at -.25 * 2.2513 / ln 1.5 = -1.388: ten.
     (FILL, {"values": [10.5] * 12}, 10, 23.513752571634),
+    # By hand: ln(9.5) / (2 ln(3.5/2.5)) = 3.345 units without a count; one count weighs ln(15/7) = .762, as 1.13 units.
+    (SCRATCH, {"values": [0, 1, 0, 0, 0, 0]}, 5, 1),
 ]
 BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (SCRATCH, {"h0": 0.0}, "/h0"),
+    (SCRATCH, {"known": {"dispersion": 0.0}}, "/known/dispersion"),
+    (SCRATCH, {"known": {"dispersion": 1.0, "sigma": 1.0}}, "/known/sigma"),
+    (SCRATCH, {"known": None}, "/known/dispersion"),
+    (SCRATCH, {"known": {"dispersion": 1e-100}}, "/known/dispersion"),
     (FILL, {"h0": 0.0}, "/h0"),
     (FILL, {"h1": -1.0}, "/h1"),
     (FILL, {"known": {}}, "/known/sigma"),
@@ -23,6 +40,9 @@ BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (FILL, {"boundaries": "table", "table": [{"sample_number": 5, "accept": 1, "reject": 2}]}, "/table"),
 ]
 BAD_OBSERVATIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (SCRATCH, {"values": [0, 1.5]}, "/values/1"),
+    (SCRATCH, {"values": [-1]}, "/values/0"),
+    (SCRATCH, {"observations": [{"value": 3, "exposure": 2.0}]}, "/observations/0/exposure"),
     (FILL, {"values": [3.0, 0.0]}, "/values/1"),
     (FILL, {"values": [-2.0]}, "/values/0"),
     (FILL, {"observations": [{"value": 3.0, "exposure": 2.0}]}, "/observations/0/exposure"),

@@ -33,6 +33,9 @@ def document(**content: Any) -> str:
         {"family": "bernoulli", "h0": 1e-9, "h1": 2e-9},
         {"family": "poisson", "h0": 1e-6, "h1": 1e-5},
         {"family": "normal", "h0": 0.0, "h1": 0.001, "known": {"sigma": 1.0}},
+        {"family": "negative_binomial", "h0": 1e6, "h1": 1.1e6, "known": {"dispersion": 3.0}},
+        {"family": "negative_binomial", "h0": 1.0, "h1": 2.0, "known": {"dispersion": 1e-6}},
+        {"family": "negative_binomial", "h0": 1.0, "h1": 1.000001, "known": {"dispersion": 1e12}},
     ],
 )
 def test_hypotheses_that_are_hard_to_tell_apart_hold_nobody_up(content: dict[str, Any]) -> None:
@@ -64,6 +67,8 @@ def test_the_way_to_a_far_decision_is_counted_exactly() -> None:
         ({"family": "poisson", "h0": 1.0, "h1": 2.0}, 1000.0),
         ({"family": "normal", "h0": 0.0, "h1": 1.0, "known": {"sigma": 1.0}}, 200.0),
         ({"family": "exponential", "h0": 2.0, "h1": 1.0}, 0.005),
+        ({"family": "negative_binomial", "h0": 1.0, "h1": 2.0, "known": {"dispersion": 2.0}}, 1e90),
+        ({"family": "negative_binomial", "h0": 1.0, "h1": 2.0, "known": {"dispersion": 2.0}}, 1e-90),
     ],
 )
 def test_far_parameters_have_figures_and_approximations(content: dict[str, Any], at: float) -> None:

@@ -1,6 +1,7 @@
 """Families by transformation or with something known, against their densities, observation by observation."""
 
 from collections.abc import Callable
+from fractions import Fraction
 from functools import reduce
 from typing import Any
 
@@ -16,16 +17,27 @@ from service.domain.observing import observe
 from service.domain.outlook import outlook_of, ways_of
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import State
+from service.sequential import fixed_sample
+from service.sequential.approximations import approximate
+from service.sequential.decision import Decision
+from service.sequential.region import StraightRegion
 from tests.domain.test_observing import NOW
-from tests.sequential.reference import densities
+from tests.sequential.reference import densities, paths
 
 RISKS = {"alpha": 0.05, "beta": 0.10}
+
+ONE = Fraction(1)
 
 Likelihood = Callable[[Any, float], mpf]
 
 
 def compiled(**content: Any) -> Procedure:
     return procedure_of_document(checked_content({**RISKS, **content}))
+
+
+def fraction(probability: mpf) -> Fraction:
+    """To 40 digits."""
+    return Fraction(int(probability * 10**40), 10**40)
 
 
 def slow(procedure: Procedure, values: list[Any], density: Likelihood, wall: int | None) -> tuple[str, int, mpf]:
@@ -110,3 +122,106 @@ def test_the_estimate_of_lognormal_is_the_geometric_mean() -> None:
     outlook = outlook_of(plan, state)
     assert outlook.estimate == pytest.approx(12.0, rel=1e-14)
     assert [part.under for part in outlook.expected] == ["h0", "h1", "estimate"]
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    st.sampled_from([(0.5, 1.5), (1.5, 0.5), (4.0, 5.0), (0.02, 0.1)]),
+    st.sampled_from([0.3, 2.0, 50.0]),
+    st.sampled_from([0.0, 0.5, 1.0]),
+    st.integers(0, 2**32 - 1),
+    st.integers(1, 90),
+    st.sampled_from([None, 20]),
+)
+def test_negative_binomial_agrees_with_its_probabilities(
+    means: tuple[float, float], dispersion: float, place: float, seed: int, cut: int, wall: int | None
+) -> None:
+    truncation = {"truncation": {"sample_number": wall}} if wall else {}
+    known = {"dispersion": dispersion}
+    procedure = compiled(family="negative_binomial", h0=means[0], h1=means[1], known=known, **truncation)
+    mean = means[0] ** (1 - place) * means[1] ** place
+    values = np.random.default_rng(seed).negative_binomial(dispersion, dispersion / (mean + dispersion), 90).tolist()
+    agrees(procedure, values, lambda x, theta: densities.negative_binomial(x, theta, dispersion), cut, wall)
+
+
+@pytest.mark.parametrize("dispersion", [0.4, 3.0, 1e9])
+@pytest.mark.parametrize("mean", [0.0, 0.25, 0.9])
+def test_negative_binomial_has_exact_figures(dispersion: float, mean: float) -> None:
+    """Look by look in fractions of the probabilities, to a wall of 12 units."""
+    procedure = compiled(
+        family="negative_binomial", h0=0.25, h1=1.0, known={"dispersion": dispersion}, truncation={"sample_number": 12}
+    )
+    table = procedure.region.limits(np.arange(13.0))
+    chances = {k: fraction(densities.negative_binomial(k, mean, dispersion)) for k in range(40)} if mean else {0: ONE}
+    expected = paths.looks(lambda n: (float(table.lower[n]), float(table.upper[n])), chances, 12, rest_above=True)
+    found = procedure.family.exact(procedure.region, np.array([mean]), procedure.known)
+    assert abs(found.below[0] - expected.below) <= found.error_bound < 1e-12
+    assert found.mean[0] == pytest.approx(expected.mean, rel=1e-12)
+    assert found.standard_deviation[0] ** 2 == pytest.approx(expected.second - expected.mean**2, abs=1e-11)
+    assert found.quantiles[0].tolist() == [expected.quantile(q) for q in (0.5, 0.9, 0.95, 0.99)]
+
+
+def test_a_large_dispersion_is_poisson() -> None:
+    counts = promise_of(checked_content({**RISKS, "family": "poisson", "h0": 0.5, "h1": 1.5}), [0.5, 0.9])
+    content = {**RISKS, "family": "negative_binomial", "h0": 0.5, "h1": 1.5, "known": {"dispersion": 1e12}}
+    found = promise_of(checked_content(content), [0.5, 0.9])
+    for point, other in zip(found.points, counts.points, strict=True):
+        assert point.probability_of_acceptance == pytest.approx(other.probability_of_acceptance, abs=1e-11)
+        assert point.sample_number is not None
+        assert other.exposure is not None
+        assert point.sample_number.mean == pytest.approx(other.exposure.mean, rel=1e-11)
+        assert point.wald is not None
+        assert other.wald is not None
+        assert point.wald.average == pytest.approx(other.wald.average, rel=1e-9)
+
+
+def test_walds_approximation_is_right_at_the_hypotheses() -> None:
+    """By construction: the conjugate root is the gain itself there, so the approximate risks are the stated ones."""
+    for h0, h1, dispersion in ((0.5, 1.5, 0.01), (1.5, 0.5, 0.01), (3.0, 4.0, 1e4)):
+        procedure = compiled(family="negative_binomial", h0=h0, h1=h1, known={"dispersion": dispersion})
+        walds_risks_are_the_stated_ones(procedure)
+
+
+def walds_risks_are_the_stated_ones(procedure: Procedure) -> None:
+    region = procedure.region
+    assert isinstance(region, StraightRegion)
+    for parameter, accepts in zip(procedure.hypotheses, (0.95, 0.10), strict=True):
+        motion = procedure.family.motion(parameter, procedure.known)
+        found = approximate(motion, procedure.ratio.slope, region.lower_intercept, region.upper_intercept)
+        assert found is not None
+        below = accepts if region.below is Decision.ACCEPT else 1 - accepts
+        assert found.below == pytest.approx(below, abs=1e-9)
+
+
+def test_no_smaller_sample_of_counts_keeps_both_risks() -> None:
+    """Every size and limit below the answer, from sums of the probabilities."""
+    found = fixed_sample.negative_binomial(0.5, 1.5, 2.0, 0.05, 0.10)
+    assert found is not None
+
+    def accepts(n: int, c: int, mean: float) -> float:
+        return float(sum(densities.negative_binomial(k, n * mean, n * 2.0) for k in range(c + 1)))
+
+    assert found.lower_risk == pytest.approx(1 - accepts(int(found.size), int(found.limit), 0.5), abs=1e-13)
+    assert found.upper_risk == pytest.approx(accepts(int(found.size), int(found.limit), 1.5), abs=1e-13)
+    assert found.lower_risk <= 0.05
+    assert found.upper_risk <= 0.10
+    for n in range(1, int(found.size)):
+        assert not any(1 - accepts(n, c, 0.5) <= 0.05 and accepts(n, c, 1.5) <= 0.10 for c in range(2 * n + 4))
+
+
+def test_the_ways_of_negative_binomial_decide_and_one_less_does_not() -> None:
+    procedure = compiled(family="negative_binomial", h0=0.5, h1=1.5, known={"dispersion": 2.0})
+    begun = observe(procedure, State(), {"values": [1, 0, 2]}, NOW)
+    ways = ways_of(procedure, begun)
+    assert ways.accept is not None
+    assert ways.reject is not None
+    assert ways.accept.observations is not None
+    needed, rise = ways.accept.observations, round(ways.accept.total)
+    assert rise == 0
+    assert ways.accept.words == f"{needed} units without a count"
+    assert observe(procedure, begun, {"values": [0] * needed}, NOW).decision == "accept"
+    assert observe(procedure, begun, {"values": [0] * (needed - 1)}, NOW).decision == "continue"
+    count = round(ways.reject.total)
+    assert ways.reject.words == f"1 unit with at least {count} counts"
+    assert observe(procedure, begun, {"values": [count]}, NOW).decision == "reject"
+    assert observe(procedure, begun, {"values": [count - 1]}, NOW).decision == "continue"

@@ -4,6 +4,7 @@ from service.domain.families.base import Family, Increments
 from service.domain.families.bernoulli import Bernoulli
 from service.domain.families.exponential import Exponential
 from service.domain.families.lognormal import Lognormal
+from service.domain.families.negative_binomial import NegativeBinomial
 from service.domain.families.normal import Normal
 from service.domain.families.poisson import Poisson
 
@@ -13,6 +14,7 @@ _ALL: tuple[Family, ...] = (
     Exponential(),
     Normal(),
     Lognormal(),
+    NegativeBinomial(),
 )
 
 FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}
