@@ -14,8 +14,8 @@ from dataclasses import dataclass
 from itertools import islice
 from typing import Any
 
-FIELDS = ("value", "time", "exposure", "size", "failed", "unit", "observed_at")
-NUMBERS = ("value", "time", "exposure", "size")
+FIELDS = ("value", "time", "from", "exposure", "size", "failed", "unit", "observed_at")
+NUMBERS = ("value", "time", "from", "exposure", "size")
 # Python reads more as a number than a file should hold: 1_0, nan, digits of other scripts.
 NUMBER = re.compile(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?")
 WHOLE = re.compile(r"[+-]?[0-9]+")

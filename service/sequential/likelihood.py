@@ -115,6 +115,23 @@ def exponential(mean0: float, mean1: float) -> LikelihoodRatio:
     return _ratio(_log_quotient(mean0, mean1), (mean0 - mean1) / mean0 / mean1)
 
 
+def weibull(life0: float, life1: float, shape: float) -> LikelihoodRatio:
+    """
+    Characteristic lives above 0 of a known shape; total = failures, progress = the failures that life0 expects.
+
+    The latter is the sum of (age/life0)**shape over the units, or of its growth where a unit was not watched from new.
+
+    Raises:
+        OutOfRange: The lives are too close, or too far apart, for floating point.
+
+    Source: that of `exponential`: the power age**shape of a life is exponential with mean life**shape, here in units of
+    life0**shape. Epstein and Sobel (1955); Johnson, Kotz and Balakrishnan, Continuous Univariate Distributions, vol. 1,
+    section 21.2.
+    """
+    natural = shape * _log_quotient(life0, life1)
+    return _ratio(natural, math.expm1(natural) if natural < LARGEST_EXPONENT else math.nan)
+
+
 def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
     """
     Means with a known standard deviation sigma above 0; total = sum of the measurements, progress = units.

@@ -19,3 +19,29 @@ from service.sequential.double import FloatArray
 def logarithms(values: FloatArray) -> FloatArray:
     """Natural logarithms of positive numbers; same shape as given, (count,)."""
     return np.fromiter(map(math.log, values.tolist()), np.float64, len(values))
+
+
+def power_spans(begin: FloatArray, end: FloatArray, unit: float, power: float) -> FloatArray:
+    """
+    (end/unit)**power - (begin/unit)**power for ages 0 <= begin <= end; arrays of shape (count,).
+
+    Infinite, or no number, where that is too large for a double.
+    """
+    spans = (_power_span(a, b, unit, power) for a, b in zip(begin.tolist(), end.tolist(), strict=True))
+    return np.fromiter(spans, np.float64, len(end))
+
+
+def _power_span(begin: float, end: float, unit: float, power: float) -> float:
+    if begin == 0.0:
+        return _power(end / unit, power)
+    growth = power * math.log1p((end - begin) / begin)
+    if growth < 1.0:
+        return _power(begin / unit, power) * math.expm1(growth)
+    return _power(end / unit, power) - _power(begin / unit, power)
+
+
+def _power(base: float, exponent: float) -> float:
+    try:
+        return math.pow(base, exponent)
+    except OverflowError:
+        return math.inf

@@ -5,7 +5,7 @@ from typing import Any
 import httpx
 import pytest
 
-from tests.api.examples import Namer, pointers, with_plan, with_test
+from tests.api.examples import SHAFT, Namer, pointers, with_plan, with_test
 
 FILL = {"family": "lognormal", "h0": 10.0, "h1": 15.0, "alpha": 0.05, "beta": 0.10, "known": {"sigma": 0.5}}
 
@@ -19,7 +19,10 @@ SCRATCH = {
     "known": {"dispersion": 2.0},
 }
 
-PLANS = [FILL, SCRATCH]
+# Bearings that wear out, in hours.
+BEARING = {"family": "weibull", "h0": 1000.0, "h1": 500.0, "alpha": 0.10, "beta": 0.10, "known": {"shape": 2.0}}
+
+PLANS = [FILL, SCRATCH, BEARING]
 # A plan, observations that accept it, the number that it takes, and the total then.
 ACCEPTED: list[tuple[dict[str, Any], dict[str, Any], int, float]] = [
     # By hand: ln(10.5) - ln(150)/2 = -.1540 each; the line lies at -.25 * 2.2513 / ln 1.5 = -1.388: ten.
@@ -28,6 +31,12 @@ ACCEPTED: list[tuple[dict[str, Any], dict[str, Any], int, float]] = [
     (SCRATCH, {"values": [0, 1, 0, 0, 0, 0]}, 5, 1),
 ]
 BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (BEARING, {"known": {"shape": 0.0}}, "/known/shape"),
+    (BEARING, {"known": {"shape": 101.0}}, "/known/shape"),
+    (BEARING, {"known": {"shape": 2.0, "life": 3.0}}, "/known/life"),
+    (BEARING, {"h0": 0.0}, "/h0"),
+    (BEARING, {"h0": 1e90, "h1": 1e-90, "known": {"shape": 50.0}}, "/h1"),
+    (BEARING, {"truncation": {"sample_number": 4}}, "/truncation/sample_number"),
     (SCRATCH, {"h0": 0.0}, "/h0"),
     (SCRATCH, {"known": {"dispersion": 0.0}}, "/known/dispersion"),
     (SCRATCH, {"known": {"dispersion": 1.0, "sigma": 1.0}}, "/known/sigma"),
@@ -40,6 +49,13 @@ BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (FILL, {"boundaries": "table", "table": [{"sample_number": 5, "accept": 1, "reject": 2}]}, "/table"),
 ]
 BAD_OBSERVATIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (BEARING, {"observations": [{"time": 5.0}]}, "/observations/0/failed"),
+    (BEARING, {"observations": [{"time": -5.0, "failed": False}]}, "/observations/0/time"),
+    (BEARING, {"observations": [{"time": 5.0, "from": 6.0, "failed": False}]}, "/observations/0/time"),
+    (BEARING, {"observations": [{"time": 5.0, "from": -6.0, "failed": False}]}, "/observations/0/from"),
+    (BEARING, {"observations": [{"time": 5.0, "from": None, "failed": False}]}, "/observations/0/from"),
+    (BEARING, {"values": [10.0, 1e90]}, "/values/1"),
+    (SHAFT, {"observations": [{"value": 5.0, "from": 1.0}]}, "/observations/0/from"),
     (SCRATCH, {"values": [0, 1.5]}, "/values/1"),
     (SCRATCH, {"values": [-1]}, "/values/0"),
     (SCRATCH, {"observations": [{"value": 3, "exposure": 2.0}]}, "/observations/0/exposure"),
@@ -119,3 +135,28 @@ def test_an_observation_that_cannot_be_right_is_named_and_nothing_is_stored(
     assert answer.status_code == 422, answer.text
     assert pointer in pointers(answer)
     assert admin.get(f"/v1/tests/{key}").json()["version"] == 1
+
+
+def test_a_unit_is_watched_in_time_from_the_age_it_had(admin: httpx.Client, new_name: Namer) -> None:
+    """
+    By hand: no failure accepts at ln 9 / (2**2 - 1) = .732408 expected failures.
+
+    .35**2 + .6**2 = .4825 of them and the .81 - .49 of a unit from 700 to 900 hours are .8025, so it falls inside.
+    """
+    key = with_test(admin, new_name, {**BEARING, "truncation": {"exposure": 5.0, "failures": 3}})
+    way = admin.get(f"/v1/tests/{key}").json()["outlook"]["accept"]
+    assert way == "an exposure of 0.732408, as of 1 unit from new to age 855.809, without failure"
+    stretches = [{"time": 350.0}, {"time": 600.0, "from": 0}, {"time": 900.0, "from": 700.0}]
+    body = {"observations": [{**stretch, "failed": False} for stretch in stretches]}
+    state = admin.post(f"/v1/tests/{key}/observations", json=body).json()
+    assert state["decision"] == "accept"
+    assert state["decided"]["exposure"] == pytest.approx(0.7324081924454064, rel=1e-14)
+    logged = admin.get(f"/v1/tests/{key}/observations").json()["items"]
+    assert [(row["time"], row["from"], row["failed"]) for row in logged] == [
+        (350.0, 0.0, False),
+        (600.0, 0.0, False),
+        (900.0, 700.0, False),
+    ]
+    table = admin.get(f"/v1/tests/{key}/observations", headers={"Accept": "text/csv"}).text.splitlines()
+    assert table[0].startswith("sequence,time,failed,from,")
+    assert table[3].startswith("3,900.0,false,700.0,")

@@ -1,5 +1,6 @@
 """Families by transformation or with something known, against their densities, observation by observation."""
 
+import math
 from collections.abc import Callable
 from fractions import Fraction
 from functools import reduce
@@ -9,10 +10,11 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from mpmath import log, mpf
+from mpmath import log, mp, mpf
 
 from service.domain.characteristics import promise_of
 from service.domain.checking import checked_content
+from service.domain.families.base import Start
 from service.domain.observing import observe
 from service.domain.outlook import outlook_of, ways_of
 from service.domain.procedure import Procedure, procedure_of_document
@@ -21,6 +23,7 @@ from service.sequential import fixed_sample
 from service.sequential.approximations import approximate
 from service.sequential.decision import Decision
 from service.sequential.region import StraightRegion
+from service.sequential.transforms import power_spans
 from tests.domain.test_observing import NOW
 from tests.sequential.reference import densities, paths
 
@@ -225,3 +228,132 @@ def test_the_ways_of_negative_binomial_decide_and_one_less_does_not() -> None:
     assert ways.reject.words == f"1 unit with at least {count} counts"
     assert observe(procedure, begun, {"values": [count]}, NOW).decision == "reject"
     assert observe(procedure, begun, {"values": [count - 1]}, NOW).decision == "continue"
+
+
+Stretch = tuple[float, float, bool]
+
+
+def slow_lives(procedure: Procedure, stretches: list[Stretch], shape: float) -> tuple[str, int, mpf | None]:
+    """Decision, stretches used, and the age at which it fell where no failure made it; from hazards and reliability."""
+    assert procedure.thresholds is not None
+    (h0, h1), limits, evidence = procedure.hypotheses, procedure.thresholds, mpf(0)
+    falls_to, jumps_to = ("accept", "reject") if h1 < h0 else ("reject", "accept")
+    limit = mpf(limits.accept if falls_to == "accept" else limits.reject)
+
+    def outlived(begin: float, age: mpf) -> mpf:
+        """Evidence in outliving an age after having reached another."""
+        lived = [
+            densities.weibull_reliability(age, life, shape) / densities.weibull_reliability(mpf(begin), life, shape)
+            for life in (h0, h1)
+        ]
+        return log(lived[1]) - log(lived[0])
+
+    def is_over(value: mpf) -> bool:
+        return bool(value <= limit if falls_to == "accept" else value >= limit)
+
+    for used, (begin, age, failed) in enumerate(stretches, start=1):
+        if is_over(evidence + outlived(begin, mpf(age))):
+            low, high = mpf(begin), mpf(age)
+            for _ in range(60):
+                middle = (low + high) / 2
+                low, high = (low, middle) if is_over(evidence + outlived(begin, middle)) else (middle, high)
+            return falls_to, used, high
+        evidence += outlived(begin, mpf(age))
+        if failed:
+            hazards = [densities.weibull_hazard(mpf(age), life, shape) for life in (h0, h1)]
+            evidence += log(hazards[1]) - log(hazards[0])
+        if evidence >= limits.reject if jumps_to == "reject" else evidence <= limits.accept:
+            return jumps_to, used, None
+    return "continue", len(stretches), None
+
+
+@settings(max_examples=25, deadline=None)
+@given(
+    st.sampled_from([(1000.0, 500.0), (500.0, 1000.0), (2.0, 1.9), (1e-3, 5e-4)]),
+    st.sampled_from([0.5, 1.0, 2.5, 6.0]),
+    st.integers(0, 2**32 - 1),
+    st.integers(1, 40),
+)
+def test_weibull_agrees_with_its_hazard(lives: tuple[float, float], shape: float, seed: int, cut: int) -> None:
+    procedure = compiled(family="weibull", h0=lives[0], h1=lives[1], known={"shape": shape})
+    source = np.random.default_rng(seed)
+    stretches: list[Stretch] = []
+    for life in lives[0] * source.weibull(shape, 20):
+        first = float(source.uniform(0.2, 1.5)) * lives[0]
+        stretches.append((0.0, min(first, float(life)), life <= first))
+        if life > first:
+            stretches.append((first, float(life), bool(source.integers(2))))
+    rows = [{"time": age, "failed": failed, **({"from": a} if a else {})} for a, age, failed in stretches]
+    whole = observe(procedure, State(), {"observations": rows}, NOW)
+    pieces = [piece for piece in (rows[:cut], rows[cut:]) if piece]
+    assert reduce(lambda s, piece: observe(procedure, s, {"observations": piece}, NOW), pieces, State()) == whole
+    decision, used, age = slow_lives(procedure, stretches, shape)
+    assert (whole.decision, whole.sample_number) == (decision, used)
+    if age is not None:
+        exposures = [(mpf(b) / lives[0]) ** shape - (mpf(a) / lives[0]) ** shape for a, b, _ in stretches[: used - 1]]
+        exposures.append((age / lives[0]) ** shape - (mpf(stretches[used - 1][0]) / lives[0]) ** shape)
+        assert whole.exposure.value == pytest.approx(float(sum(exposures)), rel=1e-12)
+
+
+@pytest.mark.parametrize("life", [1000.0, 700.0])
+def test_weibull_figures_are_those_of_a_simulation_in_hours(life: float) -> None:
+    """3000 tests unit by unit, in ages and hazards; each figure within 4 standard errors."""
+    shape = 2.5
+    plan = checked_content({**RISKS, "family": "weibull", "h0": 1000.0, "h1": 600.0, "known": {"shape": shape}})
+    procedure = procedure_of_document(plan)
+    assert procedure.thresholds is not None
+    source, accepted, failures, exposures = np.random.default_rng(23), [], [], []
+    gain = shape * np.log(1000.0 / 600.0)
+    for _ in range(3000):
+        evidence, count, exposure = 0.0, 0, 0.0
+        while procedure.thresholds.accept < evidence < procedure.thresholds.reject:
+            age = life * source.weibull(shape)
+            falls_at = (evidence - procedure.thresholds.accept) / (600.0**-shape - 1000.0**-shape)
+            if age**shape >= falls_at:
+                exposure, evidence = exposure + falls_at / 1000.0**shape, procedure.thresholds.accept
+                break
+            exposure += (age / 1000.0) ** shape
+            evidence += gain - (600.0**-shape - 1000.0**-shape) * age**shape
+            count += 1
+        accepted.append(evidence <= procedure.thresholds.accept)
+        failures.append(count)
+        exposures.append(exposure)
+    point = promise_of(plan, [life]).points[0]
+    assert point.exposure is not None
+    assert point.failures is not None
+    found = ((point.probability_of_acceptance, accepted), (point.failures, failures), (point.exposure.mean, exposures))
+    for exact, sample in found:
+        assert abs(np.mean(sample) - exact) < 4 * np.std(sample) / np.sqrt(3000)
+
+
+def test_the_fixed_sample_of_weibull_is_told_in_failures_that_h0_expects() -> None:
+    """Accept with at most c failures: Poisson means e and e * (h0/h1)**shape have the stated risks."""
+    plan = checked_content({**RISKS, "family": "weibull", "h0": 1000.0, "h1": 600.0, "known": {"shape": 2.5}})
+    fixed = promise_of(plan, [1000.0]).fixed_sample
+    assert fixed is not None
+
+    def accepts(mean: float) -> float:
+        return sum(float(np.exp(-mean)) * mean**k / math.factorial(k) for k in range(int(fixed.acceptance_limit) + 1))
+
+    assert fixed.alpha == pytest.approx(1 - accepts(fixed.size), abs=1e-12)
+    assert fixed.beta == pytest.approx(accepts(fixed.size * (1000.0 / 600.0) ** 2.5), abs=1e-12)
+    assert fixed.alpha <= 0.05
+    assert fixed.beta == pytest.approx(0.10, abs=1e-9)
+
+
+def test_the_estimate_of_weibull_is_in_its_unit_of_time() -> None:
+    """The power mean of the ages over the failures: (sum of age**shape / failures)**(1/shape)."""
+    procedure = compiled(family="weibull", h0=1000.0, h1=600.0, known={"shape": 2.5})
+    state = observe(procedure, State(), {"values": [700.0, 800.0]}, NOW)
+    found = procedure.family.estimate(Start(state.exposure.value, state.total.value), procedure.known)
+    assert found == pytest.approx(((700.0**2.5 + 800.0**2.5) / 2) ** 0.4, rel=1e-13)
+    assert procedure.family.estimate(Start(0.5, 0.0), procedure.known) is None
+
+
+@pytest.mark.parametrize("begin", [0.0, 1e-9, 1.0, 999.0, 1000.0 - 1e-9])
+@pytest.mark.parametrize("power", [0.01, 1.0, 2.5, 100.0])
+def test_a_short_stretch_of_a_long_life_keeps_its_digits(begin: float, power: float) -> None:
+    with mp.workdps(60):
+        exact = (mpf(1000) / 700) ** mpf(power) - (mpf(begin) / 700) ** mpf(power)
+    found = power_spans(np.array([begin]), np.array([1000.0]), 700.0, power)[0]
+    assert found == pytest.approx(float(exact), rel=1e-13)

@@ -20,6 +20,7 @@ EXAMPLES: list[dict[str, Any]] = [
     {"values": [0, 0, 1]},
     {"observations": [{"value": 2, "size": 50, "unit": "tray-7", "observed_at": "2031-05-04T09:30:00Z"}]},
     {"observations": [{"time": 41.5, "failed": True}, {"time": 200.0, "failed": False}]},
+    {"observations": [{"time": 900.0, "from": 650.0, "failed": False}]},
 ]
 
 
@@ -73,10 +74,17 @@ class ObservationForm(Form):
     """
 
     value: Number = Field(default_factory=float, description="Result: 0 or 1, a count, or a measurement.")
-    time: Number = Field(default_factory=float, description="Unit-time since the report before (exponential).")
+    time: Number = Field(
+        default_factory=float, description="Unit-time since the report before (exponential), or age reached (weibull)."
+    )
+    from_: Number = Field(
+        alias="from", default_factory=float, description="Age from which it was watched (weibull), 0 when left out."
+    )
     exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
-    failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
+    failed: StrictBool = Field(
+        default_factory=bool, description="Whether a failure ended the time (exponential, weibull)."
+    )
     unit: Unit = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: Moment = Field(
         default_factory=lambda: datetime.min.replace(tzinfo=UTC),
@@ -117,6 +125,7 @@ class LoggedOut(Answer):
     sequence: int
     value: int | float | None = None
     time: int | float | None = None
+    from_: int | float | None = Field(None, alias="from")
     exposure: int | float | None = None
     size: int | float | None = None
     failed: bool | None = None

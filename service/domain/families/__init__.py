@@ -7,6 +7,7 @@ from service.domain.families.lognormal import Lognormal
 from service.domain.families.negative_binomial import NegativeBinomial
 from service.domain.families.normal import Normal
 from service.domain.families.poisson import Poisson
+from service.domain.families.weibull import Weibull
 
 _ALL: tuple[Family, ...] = (
     Bernoulli(),
@@ -15,6 +16,7 @@ _ALL: tuple[Family, ...] = (
     Normal(),
     Lognormal(),
     NegativeBinomial(),
+    Weibull(),
 )
 
 FAMILIES: dict[str, Family] = {family.name: family for family in _ALL}
