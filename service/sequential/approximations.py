@@ -50,10 +50,10 @@ def approximate(motion: Motion, slope: float, lower: float, upper: float) -> App
     Wald's approximation for lines at slope * progress - lower and slope * progress + upper.
 
     Returns:
-        None where the total never moves, so that no conjugate root exists.
+        None where the total never moves, or by more than a double holds, so that no conjugate root is found.
     """
     drift = motion.mean - slope
-    if motion.variance <= 0.0:
+    if not 0.0 < motion.variance < math.inf:
         return None
     if abs(drift) < 1e-9 * math.sqrt(motion.variance):
         return Approximation(upper / (lower + upper), lower * upper / motion.variance)

@@ -95,6 +95,26 @@ def normal(m_lower: float, m_upper: float, sigma: float, lower_risk: float, uppe
     return FixedSample(n, limit, lower_risk, float(ndtr((limit - n * m_upper) / (sigma * math.sqrt(n)))))
 
 
+def normal_variance(sigma_lower: float, sigma_upper: float, lower_risk: float, upper_risk: float) -> FixedSample | None:
+    """
+    The fewest degrees of freedom; the limit of the sum of squares gives the lower hypothesis exactly its risk.
+
+    None beyond 2 * 10**9.
+
+    Source: the distribution of a sum of squares over its variance is chi-square.
+    """
+    quotient = (sigma_lower / sigma_upper) ** 2
+
+    def half_limit(n: int) -> float:
+        return float(gammainccinv(0.5 * n, lower_risk))
+
+    def below(n: int) -> float:
+        return float(gammainc(0.5 * n, quotient * half_limit(n)))
+
+    n = _first_n(lambda size: below(size) <= upper_risk, 1)
+    return None if n is None else FixedSample(n, 2.0 * sigma_lower**2 * half_limit(n), lower_risk, below(n))
+
+
 def _smallest_n(limit: int, p_upper: float, upper_risk: float) -> int | None:
     """The smallest n for which at most `limit` are found with probability at most `upper_risk`."""
     return _first_n(lambda n: float(bdtr(limit, n, p_upper)) <= upper_risk, limit + 1)

@@ -96,12 +96,6 @@ def negative_binomial(mean0: float, mean1: float, dispersion: float) -> Likeliho
     return _ratio(natural, dispersion * math.log1p((mean1 - mean0) / (mean0 + dispersion)))
 
 
-def negative_binomial_cumulant(mean: float, dispersion: float, t: float) -> float:
-    """The cumulant generating function at t of a count with variance mean + mean**2 / dispersion; may be infinite."""
-    growth = (mean / dispersion) * math.expm1(min(t, LARGEST_EXPONENT))
-    return -dispersion * math.log1p(-growth) if growth < 1.0 else math.inf
-
-
 def exponential(mean0: float, mean1: float) -> LikelihoodRatio:
     """
     Mean lives, both above 0; total = failures, progress = unit-time.
@@ -158,6 +152,24 @@ def lognormal(median0: float, median1: float, sigma: float) -> LikelihoodRatio:
     distance = _log_quotient(median1, median0)
     middle = two_sum(Double.of(math.log(median0)).high, Double.of(distance / 2.0).high)
     return _checked(LikelihoodRatio(distance / sigma / sigma, float(middle.high), float(middle.low)))
+
+
+def normal_variance(sigma0: float, sigma1: float) -> LikelihoodRatio:
+    """
+    Standard deviations above 0; total = sum of squared deviations from the mean, progress = degrees of freedom.
+
+    One degree for each measurement where the mean is known. Where it is not, the deviations are from the mean of the
+    measurements and there is one less: by Helmert's transformation the sum of squares is that of n - 1 independent
+    deviations, each known as soon as its measurement comes, and its density is free of the unknown mean.
+
+    Raises:
+        OutOfRange: The standard deviations are too close, or too far apart, for floating point.
+
+    Source: Wald (1947), Sequential Analysis, chapter 8: (1/sigma0**2 - 1/sigma1**2)/2 times the sum of squares, less
+    ln(sigma1/sigma0) for each degree of freedom.
+    """
+    natural = 0.5 * ((sigma1 - sigma0) / sigma0) * ((sigma1 + sigma0) / sigma1) / sigma0 / sigma1
+    return _ratio(natural, _log_quotient(sigma1, sigma0))
 
 
 def _log_quotient(a: float, b: float) -> float:

@@ -22,15 +22,26 @@ SCRATCH = {
 # Bearings that wear out, in hours.
 BEARING = {"family": "weibull", "h0": 1000.0, "h1": 500.0, "alpha": 0.10, "beta": 0.10, "known": {"shape": 2.0}}
 
-PLANS = [FILL, SCRATCH, BEARING]
+# The diameter of a bore, in micrometres from its nominal value: is it even enough?
+BORE = {"family": "normal_variance", "h0": 1.0, "h1": 2.0, "alpha": 0.05, "beta": 0.10, "known": {"mean": -3.0}}
+
+PLANS = [FILL, SCRATCH, BEARING, BORE]
 # A plan, observations that accept it, the number that it takes, and the total then.
 ACCEPTED: list[tuple[dict[str, Any], dict[str, Any], int, float]] = [
+    # By hand: each measurement gives .375 * .25 - ln 2 = -.5994, and -2.2513 is passed at the fourth.
+    (BORE, {"values": [-3.5, -2.5, -2.5, -3.5, -3.0]}, 4, 1.0),
     # By hand: ln(10.5) - ln(150)/2 = -.1540 each; the line lies at -.25 * 2.2513 / ln 1.5 = -1.388: ten.
     (FILL, {"values": [10.5] * 12}, 10, 23.513752571634),
     # By hand: ln(9.5) / (2 ln(3.5/2.5)) = 3.345 units without a count; one count weighs ln(15/7) = .762, as 1.13 units.
     (SCRATCH, {"values": [0, 1, 0, 0, 0, 0]}, 5, 1),
 ]
 BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (BORE, {"h0": 0.0}, "/h0"),
+    (BORE, {"h1": -2.0}, "/h1"),
+    (BORE, {"known": {}}, "/known/mean"),
+    (BORE, {"known": {"mean": 1e101}}, "/known/mean"),
+    (BORE, {"known": {"mean": 0.0, "sigma": 1.0}}, "/known/sigma"),
+    (BORE, {"h1": 1.0000000000000002, "h0": 1.0, "truncation": {"exposure": 3.0}}, "/truncation/exposure"),
     (BEARING, {"known": {"shape": 0.0}}, "/known/shape"),
     (BEARING, {"known": {"shape": 101.0}}, "/known/shape"),
     (BEARING, {"known": {"shape": 2.0, "life": 3.0}}, "/known/life"),
@@ -49,6 +60,8 @@ BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (FILL, {"boundaries": "table", "table": [{"sample_number": 5, "accept": 1, "reject": 2}]}, "/table"),
 ]
 BAD_OBSERVATIONS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
+    (BORE, {"values": [0.0, 1e101]}, "/values/1"),
+    (BORE, {"observations": [{"value": 5.0, "size": 2}]}, "/observations/0/size"),
     (BEARING, {"observations": [{"time": 5.0}]}, "/observations/0/failed"),
     (BEARING, {"observations": [{"time": -5.0, "failed": False}]}, "/observations/0/time"),
     (BEARING, {"observations": [{"time": 5.0, "from": 6.0, "failed": False}]}, "/observations/0/time"),

@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from mpmath import log, mp, mpf
+from mpmath import findroot, gammainc, log, mp, mpf
 
 from service.domain.characteristics import promise_of
 from service.domain.checking import checked_content
@@ -357,3 +357,75 @@ def test_a_short_stretch_of_a_long_life_keeps_its_digits(begin: float, power: fl
         exact = (mpf(1000) / 700) ** mpf(power) - (mpf(begin) / 700) ** mpf(power)
     found = power_spans(np.array([begin]), np.array([1000.0]), 700.0, power)[0]
     assert found == pytest.approx(float(exact), rel=1e-13)
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    st.sampled_from([(1.0, 2.0), (2.0, 1.0), (1e-6, 1.3e-6), (30.0, 31.0)]),
+    st.sampled_from([0.0, -7.25, 1e3]),
+    st.sampled_from([0.0, 0.5, 1.0]),
+    st.integers(0, 2**32 - 1),
+    st.integers(1, 90),
+    st.sampled_from([None, 20]),
+)
+def test_normal_variance_agrees_with_its_density(
+    sigmas: tuple[float, float], mean: float, place: float, seed: int, cut: int, wall: int | None
+) -> None:
+    truncation = {"truncation": {"sample_number": wall}} if wall else {}
+    procedure = compiled(family="normal_variance", h0=sigmas[0], h1=sigmas[1], known={"mean": mean}, **truncation)
+    sigma = sigmas[0] ** (1 - place) * sigmas[1] ** place
+    values = np.random.default_rng(seed).normal(mean, sigma, 90).tolist()
+    agrees(procedure, values, lambda x, theta: densities.normal(x, mean, theta), cut, wall)
+
+
+def test_the_fixed_sample_of_normal_variance_is_the_smallest() -> None:
+    """Chi-square limits from quadrature of its density, for the size and the one below."""
+    found = fixed_sample.normal_variance(1.0, 2.0, 0.05, 0.10)
+    assert found is not None
+
+    def below(n: int, limit: float) -> mpf:
+        return gammainc(mpf(n) / 2, 0, mpf(limit) / 2, regularized=True)
+
+    n = int(found.size)
+    assert float(below(n, found.limit)) == pytest.approx(0.95, abs=1e-12)
+    assert float(below(n, found.limit / 4)) == pytest.approx(found.upper_risk, abs=1e-12)
+    assert found.upper_risk <= 0.10
+    with mp.workdps(20):
+        smaller = findroot(lambda at: below(n - 1, at) - mpf("0.95"), found.limit)
+    assert below(n - 1, smaller / 4) > 0.10
+
+
+def test_walds_approximation_of_normal_variance_is_right_at_the_hypotheses() -> None:
+    for sigmas in ((1.0, 2.0), (2.0, 1.0), (1.0, 1.01), (1.0, 50.0)):
+        walds_risks_are_the_stated_ones(
+            compiled(family="normal_variance", h0=sigmas[0], h1=sigmas[1], known={"mean": 0.0})
+        )
+
+
+def test_the_ways_of_normal_variance_decide_and_a_little_less_does_not() -> None:
+    procedure = compiled(family="normal_variance", h0=1.0, h1=2.0, known={"mean": 5.0})
+    begun = observe(procedure, State(), {"values": [5.5, 3.0]}, NOW)
+    ways = ways_of(procedure, begun)
+    assert ways.accept is not None
+    assert ways.reject is not None
+    needed, rise = ways.accept.observations, ways.accept.total
+    assert needed is not None
+    assert needed > 1
+    assert ways.accept.words == f"{needed} measurements whose squared deviations from 5 sum to at most {rise:.6g}"
+    near = math.sqrt(rise / needed)
+    assert observe(procedure, begun, {"values": [5.0 + 0.999 * near] * needed}, NOW).decision == "accept"
+    assert observe(procedure, begun, {"values": [5.0 + 1.001 * near] * needed}, NOW).decision == "continue"
+    assert observe(procedure, begun, {"values": [5.0] * (needed - 1)}, NOW).decision == "continue"
+    far = math.sqrt(ways.reject.total)
+    assert ways.reject.words == f"a measurement at least {far:.6g} from 5"
+    assert observe(procedure, begun, {"values": [5.0 - 1.001 * far]}, NOW).decision == "reject"
+    assert observe(procedure, begun, {"values": [5.0 - 0.999 * far]}, NOW).decision == "continue"
+
+
+def test_the_estimate_of_normal_variance_is_the_root_of_the_mean_square() -> None:
+    procedure = compiled(family="normal_variance", h0=1.0, h1=2.0, known={"mean": 5.0})
+    assert procedure.family.estimate(Start(4.0, 9.0), procedure.known) == 1.5
+    assert procedure.family.estimate(Start(1.0, 0.0), procedure.known) is None
+    assert procedure.family.estimate(Start(0.0, 0.0), procedure.known) is None
+    state = observe(procedure, State(), {"values": [5.0, 5.0, 5.0]}, NOW)
+    assert state.log_likelihood_ratio == pytest.approx(-3 * math.log(2.0), rel=1e-14)

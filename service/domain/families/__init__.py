@@ -6,6 +6,7 @@ from service.domain.families.exponential import Exponential
 from service.domain.families.lognormal import Lognormal
 from service.domain.families.negative_binomial import NegativeBinomial
 from service.domain.families.normal import Normal
+from service.domain.families.normal_variance import NormalVariance
 from service.domain.families.poisson import Poisson
 from service.domain.families.weibull import Weibull
 
@@ -16,6 +17,7 @@ _ALL: tuple[Family, ...] = (
     Normal(),
     Lognormal(),
     NegativeBinomial(),
+    NormalVariance(),
     Weibull(),
 )
 

@@ -7,6 +7,7 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.families.base import (
+    LARGEST_EXPONENT,
     ORIGIN,
     Column,
     Family,
@@ -76,7 +77,8 @@ class NegativeBinomial(Family):
         dispersion = known["dispersion"]
 
         def cumulant(t: float) -> float:
-            return likelihood.negative_binomial_cumulant(parameter, dispersion, t)
+            growth = (parameter / dispersion) * math.expm1(min(t, LARGEST_EXPONENT))
+            return -dispersion * math.log1p(-growth) if growth < 1.0 else math.inf
 
         return Motion(cumulant, parameter, parameter + parameter * (parameter / dispersion))
 
