@@ -26,7 +26,7 @@ import numpy as np
 from scipy.linalg import lu_factor, lu_solve
 from scipy.special import erf, erfc, gammainc, gammaincc
 
-from service.sequential.double import FloatArray
+from service.sequential.double import BoolArray, FloatArray
 from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork, spread
 from service.sequential.region import Region, StraightRegion, looks_to_wall
 
@@ -247,26 +247,46 @@ class _Kernel:
 
 
 def _kernel_of(walk: _Walk, resolution: _Resolution) -> _Kernel:
-    points, edges = resolution.points, _edges(walk, resolution.sharp)
-    count = len(edges) - 1
+    points, panels = resolution.points, _panels_of(walk, resolution.sharp)
+    count = len(panels.left)
     if count * points > MOST_NODES:
         raise TooMuchWork(MOST_NODES, "quadrature points")
-    roots, _ = _legendre(points)
-    left, right = edges[:-1], edges[1:]
-    heights = (right[:, np.newaxis] - (right - left)[:, np.newaxis] * roots**2).ravel()
-    means = _means(np.append(heights, walk.start) - walk.fall, left, right, points)
+    places, _ = _legendre(points)
+    shares = np.where(panels.has_corner[:, np.newaxis], places**2, places)
+    heights = (panels.right[:, np.newaxis] - panels.width[:, np.newaxis] * shares).ravel()
+    means = _means(np.append(heights, walk.start) - walk.fall, panels, points)
     onward = means.reshape(len(heights) + 1, count * points)
     work = len(heights) * count * (points + MORE_POINTS) * points // 2
     return _Kernel(heights, onward[:-1], onward[-1], work)
 
 
-def _means(origins: FloatArray, left: FloatArray, right: FloatArray, points: int) -> FloatArray:
+@dataclass(frozen=True)
+class _Panels:
+    """
+    Pieces of the strip, ascending; arrays of shape (panels,).
+
+    Attributes:
+        left, right: Their ends.
+        has_corner: Whether what is asked has a corner at the right end; it is then smooth in the root of the distance.
+    """
+
+    left: FloatArray
+    right: FloatArray
+    has_corner: BoolArray
+
+    @property
+    def width(self) -> FloatArray:
+        """The length of each."""
+        return self.right - self.left
+
+
+def _means(origins: FloatArray, panels: _Panels, points: int) -> FloatArray:
     """
     Weights of the values at the points of each panel in the mean of a function at origin + square, the function being
     zero outside the panel; array of shape (origins, panels, points).
     """
     tau, weights = _legendre(points + MORE_POINTS)
-    to_left, to_right = left - origins[:, np.newaxis], right - origins[:, np.newaxis]
+    to_left, to_right = panels.left - origins[:, np.newaxis], panels.right - origins[:, np.newaxis]
     from_, to = np.nonzero((to_right > 0.0) & (to_left < FARTHEST**2))
     reach = np.sqrt(to_right[from_, to])[:, np.newaxis]
     far = np.minimum(reach, FARTHEST)
@@ -276,20 +296,21 @@ def _means(origins: FloatArray, left: FloatArray, right: FloatArray, points: int
     number = far - back
     chance = np.exp(-0.5 * number**2) * (far - near) * (tau * weights) * (4.0 / math.sqrt(2.0 * math.pi))
     distance = np.maximum((reach - far + back) * (reach + number), 0.0)
-    place = 2.0 * np.sqrt(distance / (right - left)[to, np.newaxis]) - 1.0
+    share = distance / panels.width[to, np.newaxis]
+    place = 2.0 * np.where(panels.has_corner[to, np.newaxis], np.sqrt(share), share) - 1.0
     # Legendre coefficients of the function from its values: exact up to the degree that the points carry.
     before, now = np.ones_like(place), place
     moments = [np.einsum("nq,nq->n", chance, before), np.einsum("nq,nq->n", chance, now)]
     for degree in range(1, points - 1):
         before, now = now, ((2 * degree + 1) * place * now - degree * before) / (degree + 1)
         moments.append(np.einsum("nq,nq->n", chance, now))
-    means = np.zeros((len(origins), len(left), points))
+    means = np.zeros((len(origins), len(panels.left), points))
     means[from_, to] = np.stack(moments, axis=1) @ _coefficients(points)
     return means
 
 
-def _edges(walk: _Walk, most: int) -> FloatArray:
-    """The ends of the panels: corners, and more where a panel would be too wide for the squares."""
+def _panels_of(walk: _Walk, most: int) -> _Panels:
+    """Between corners, and narrower where a panel would be too wide for the squares."""
     low, high, fall = walk.low, walk.high, walk.fall
     width = high - low
     sharp = math.floor(min(most + fall * fall / 4.0, width / fall))
@@ -305,7 +326,8 @@ def _edges(walk: _Walk, most: int) -> FloatArray:
     inner = inner[high - inner > 1e-9 * width]
     ends = [low, *inner.tolist(), high]
     cells = [_cut(left, right, fall, is_open=right == high) for left, right in pairwise(ends)]
-    return np.array([low, *(edge for cell in cells for edge in cell)])
+    edges = np.array([low, *(edge for cell in cells for edge in cell)])
+    return _Panels(edges[:-1], edges[1:], np.isin(edges[1:], inner))
 
 
 def _cut(left: float, right: float, fall: float, *, is_open: bool) -> list[float]:

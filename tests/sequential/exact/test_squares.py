@@ -1,12 +1,13 @@
 """Exact figures of sums of squares against nested quadrature, closed forms, simulation and laws."""
 
 import math
+from collections.abc import Callable
+from itertools import pairwise
 
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from mpmath import erf, exp, mp, mpf, pi, quad, sqrt
 from scipy.special import gammainc
 
 from service.sequential import boundaries, likelihood
@@ -21,23 +22,38 @@ def region_of(sigma0: float, sigma1: float, limits: Thresholds, wall: int | None
     return straight_region(ratio, limits, POSITIVE, None if wall is None else Wall(float(wall)))
 
 
-def within(reach: mpf) -> mpf:
+X, WEIGHTS = np.polynomial.legendre.leggauss(80)
+ANGLES, ANGLE_WEIGHTS = math.pi / 4 * (X + 1), math.pi / 4 * WEIGHTS
+
+
+def integral(function: Callable[[float], float], ends: list[float]) -> float:
+    """Piece by piece with 80 points each; roots of the distance to either end of a piece do no harm."""
+    whole = 0.0
+    for from_, to in pairwise(ends):
+        at = from_ + (to - from_) * np.sin(ANGLES) ** 2
+        weights = (to - from_) * np.sin(2 * ANGLES) * ANGLE_WEIGHTS
+        whole += sum(weight * function(float(z)) for weight, z in zip(weights, at, strict=True))
+    return whole
+
+
+def within(reach: float) -> float:
     """P(a squared standard normal number is at most `reach`)."""
-    return erf(sqrt(reach / 2)) if reach > 0 else mpf(0)
+    return math.erf(math.sqrt(reach / 2)) if reach > 0 else 0.0
 
 
-def three_steps(low: mpf, high: mpf, fall: mpf, start: mpf) -> tuple[mpf, mpf]:
+def three_steps(low: float, high: float, fall: float, start: float) -> tuple[float, float]:
     """P(ending below) and the mean number of steps at a wall of three, one integral inside the other."""
 
-    def mean_of(function: object, height: mpf, corners: list[mpf]) -> mpf:
+    def mean_of(function: Callable[[float], float], height: float, corners: list[float]) -> float:
         """Of a function of the height after one step, over the heights between the lines."""
-        from_, to = max(low, height - fall), high
-        inner = sorted(corner for corner in corners if from_ < corner < to)
-        ends = [sqrt(max(mpf(0), at - height + fall)) for at in (from_, *inner, to)]
-        weighed = lambda z: 2 * exp(-z * z / 2) / sqrt(2 * pi) * function(height - fall + z * z)  # type: ignore[operator]  # noqa: E731
-        return quad(weighed, ends, maxdegree=5)
+        from_ = max(low, height - fall)
+        inner = sorted(corner for corner in corners if from_ < corner < high)
+        begin = 0.0 if height - fall >= low else math.sqrt(low - height + fall)
+        ends = [begin, *(math.sqrt(at - height + fall) for at in (*inner, high))]
+        chance = math.sqrt(2 / math.pi)
+        return integral(lambda z: chance * math.exp(-z * z / 2) * function(height - fall + z * z), ends)
 
-    def second(height: mpf) -> mpf:
+    def second(height: float) -> float:
         """P(below) after a height reached by one step."""
         return within(low - height + fall) + mean_of(lambda at: within(fall - at), height, [fall, low + fall])
 
@@ -48,36 +64,35 @@ def three_steps(low: mpf, high: mpf, fall: mpf, start: mpf) -> tuple[mpf, mpf]:
     return below, 1 + first + later
 
 
-@pytest.mark.parametrize(("sigmas", "sigma"), [((1.0, 2.0), 0.4), ((1.0, 2.0), 6.0), ((3.0, 1.0), 1.7)])
+@pytest.mark.parametrize(
+    ("sigmas", "sigma"), [((1.0, 2.0), 0.4), ((1.0, 2.0), 1.0), ((1.0, 2.0), 6.0), ((3.0, 1.0), 1.7), ((1.0, 1.1), 0.8)]
+)
 def test_three_measurements_by_nested_quadrature(sigmas: tuple[float, float], sigma: float) -> None:
     region = region_of(*sigmas, Thresholds(-0.9, 1.7), wall=3)
     found = squares_characteristics(region, np.array([sigma**2]))
-    with mp.workdps(17):
-        variance = mpf(sigma**2)
-        low, high = -mpf(region.lower_intercept) / variance, mpf(region.upper_intercept) / variance
-        below, mean = three_steps(low, high, mpf(region.ratio.slope) / variance, mpf(0))
-    assert abs(found.below[0] - float(below)) <= found.error_bound < 1e-9
+    low, high = -region.lower_intercept / sigma**2, region.upper_intercept / sigma**2
+    below, mean = three_steps(low, high, region.ratio.slope / sigma**2, 0.0)
+    assert abs(found.below[0] - below) <= found.error_bound < 1e-9
     assert found.below[0] + found.above[0] == pytest.approx(1.0, abs=1e-12)
-    assert found.mean[0] == pytest.approx(float(mean), rel=found.error_bound)
+    assert found.mean[0] == pytest.approx(mean, rel=found.error_bound)
 
 
 def test_from_within_the_region_by_nested_quadrature() -> None:
     """Two of five measurements are done, and their squares sum to 3."""
     region = region_of(1.0, 1.5, Thresholds(-1.2, 2.0), wall=5)
     found = squares_characteristics(region, np.array([1.3]), progress=2.0, total=3.0)
-    with mp.workdps(17):
-        low, high = -mpf(region.lower_intercept) / mpf(1.3), mpf(region.upper_intercept) / mpf(1.3)
-        fall = mpf(region.ratio.slope) / mpf(1.3)
-        below, mean = three_steps(low, high, fall, 3 / mpf(1.3) - 2 * fall)
-    assert abs(found.below[0] - float(below)) <= found.error_bound < 1e-9
-    assert found.mean[0] == pytest.approx(float(mean), rel=found.error_bound)
+    low, high = -region.lower_intercept / 1.3, region.upper_intercept / 1.3
+    fall = region.ratio.slope / 1.3
+    below, mean = three_steps(low, high, fall, 3.0 / 1.3 - 2.0 * fall)
+    assert abs(found.below[0] - below) <= found.error_bound < 1e-9
+    assert found.mean[0] == pytest.approx(mean, rel=found.error_bound)
 
 
-@pytest.mark.parametrize("wall", [1, 2, 3, 7, 24])
+@pytest.mark.parametrize("wall", [1, 2, 7, 24])
 @pytest.mark.parametrize("sigma", [0.8, 1.2, 2.5])
 def test_between_far_lines_the_wall_decides_by_a_chi_square(wall: int, sigma: float) -> None:
     """P(sum of n squares <= n * slope) is an incomplete gamma function."""
-    region = region_of(1.0, 1.6, Thresholds(-40.0, 400.0), wall=wall)
+    region = region_of(1.0, 1.6, Thresholds(-40.0, 60.0 if sigma < 2.0 else 400.0), wall=wall)
     found = squares_characteristics(region, np.array([sigma**2]))
     expected = gammainc(wall / 2, wall * region.ratio.slope / sigma**2 / 2)
     assert abs(found.below[0] - expected) <= found.error_bound < 1e-8
@@ -126,7 +141,7 @@ def test_a_far_wall_changes_nothing() -> None:
     assert far.quantiles.tolist() == whole.quantiles.tolist()
 
 
-@pytest.mark.parametrize("sigma", [0.06, 0.1, 0.15, 0.2, 0.25, 0.3])
+@pytest.mark.parametrize("sigma", [0.06, 0.15, 0.2, 0.25])
 def test_a_spread_that_is_all_but_none_goes_over_into_one_that_is(sigma: float) -> None:
     """The closed form of a falling walk and the quadrature, just on its two sides: the mean grows smoothly."""
     region = region_of(1.0, 2.0, boundaries.wald(0.05, 0.1))
@@ -141,7 +156,7 @@ def test_a_spread_that_is_all_but_none_goes_over_into_one_that_is(sigma: float) 
     assert np.all(np.diff(found.mean) >= -1e-9)
 
 
-@settings(max_examples=12, deadline=None)
+@settings(max_examples=8, deadline=None)
 @given(
     st.sampled_from([(1.0, 1.5), (1.0, 2.0), (4.0, 1.0), (1.0, 8.0)]),
     st.builds(Thresholds, st.floats(-4.0, -0.3), st.floats(0.3, 4.0)),
