@@ -1,5 +1,6 @@
 """Choose a plan: candidates side by side, with what each really promises, without a service."""
 
+import math
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
@@ -20,13 +21,17 @@ MOST_COLUMNS, SHOWN = 4, 6
 
 def design(
     family: Annotated[
-        str | None, typer.Option(help="bernoulli (where none is given), poisson, exponential or normal.")
+        str | None,
+        typer.Option(help="bernoulli (where none is given), poisson, exponential, normal or another family."),
     ] = None,
     h0: Annotated[float | None, typer.Option(help="Parameter under H0.")] = None,
     h1: Annotated[float | None, typer.Option(help="Parameter under H1.")] = None,
     alpha: Annotated[float | None, typer.Option(help="Producer's risk: P(reject) when H0 is true.")] = None,
     beta: Annotated[float | None, typer.Option(help="Consumer's risk: P(accept) when H1 is true.")] = None,
-    sigma: Annotated[float | None, typer.Option(help="Known standard deviation, for normal.")] = None,
+    sigma: Annotated[float | None, typer.Option(help="Known standard deviation, for normal and lognormal.")] = None,
+    known: Annotated[
+        list[str] | None, typer.Option(help="What else the family needs to know, such as shape=2; may be repeated.")
+    ] = None,
     boundaries: Annotated[
         list[str] | None, typer.Option(help="wald, strict or calibrated; more than once to compare.")
     ] = None,
@@ -48,7 +53,7 @@ def design(
     from service.domain.errors import Invalid
 
     own: dict[str, Any] = {"h0": h0, "h1": h1, "alpha": alpha, "beta": beta}
-    own["known"] = None if sigma is None else {"sigma": sigma}
+    own["known"] = {**({} if sigma is None else {"sigma": sigma}), **_known(known or [])} or None
     own = {name: value for name, value in own.items() if value is not None}
     asked_of_own = {"--family": family, "--boundaries": boundaries, "--truncation": truncation, "--suggest": suggest}
     idle = [option for option, value in asked_of_own.items() if value is not None and standard and not own]
@@ -68,6 +73,20 @@ def design(
     except Invalid as error:
         faults = "".join(f"\n  {_option(fault.pointer)}: {fault.detail}" for fault in error.faults)
         raise fail(f"{error}{faults}") from None
+
+
+def _known(given: list[str]) -> dict[str, float]:
+    """Names with their numbers."""
+    known = {}
+    for pair in given:
+        name, _, number = pair.partition("=")
+        try:
+            known[name] = float(number)
+        except ValueError:
+            raise fail(f"--known must be a name with a number, such as shape=2; received {pair!r}") from None
+        if not math.isfinite(known[name]):
+            raise fail(f"--known must be a name with a number, such as shape=2; received {pair!r}")
+    return known
 
 
 def _standard(name: str | None, scale: float | None) -> dict[str, Any]:
@@ -213,5 +232,6 @@ def _limit(fixed: Any) -> str:  # noqa: ANN401 - a value of the domain, which is
 def _option(pointer: str) -> str:
     """The option that a pointer into a plan's body stands for."""
     parts = [part for part in pointer.split("/") if part and not part.isdigit() and part != "candidates"]
-    names = {"known": "sigma", "suggest_truncation": "suggest"}
-    return f"--{names.get(parts[0], parts[0])}" if parts else "plan"
+    if parts[:2] == ["known", "sigma"]:
+        return "--sigma"
+    return f"--{'suggest' if parts[0] == 'suggest_truncation' else parts[0]}" if parts else "plan"

@@ -233,6 +233,11 @@ def test_candidates_are_designed_without_a_service(tmp_path: Path) -> None:
         (["--standard", "MIL-HDBK-781A/III-D"], "--scale: is required"),
         (["--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1", "--truncation", "x"], "--truncation"),
         (["--family", "normal", "--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1"], "--sigma"),
+        (["--family", "weibull", "--h0", "2", "--h1", "1", "--alpha", "0.1", "--beta", "0.1"], "--known: is required"),
+        (
+            ["--h0", "0.1", "--h1", "0.2", "--alpha", "0.1", "--beta", "0.1", "--known", "shape"],
+            "--known must be a name",
+        ),
         (["--h0", "1e-6", "--h1", "1.1e-6", "--alpha", "0.1", "--beta", "0.1"], "would need more than"),
     ],
 )
@@ -241,6 +246,15 @@ def test_a_design_that_cannot_be_right_is_refused_in_a_line(tmp_path: Path, argu
     assert done.returncode == 1
     assert said in done.stderr
     assert "Traceback" not in done.stderr
+
+
+def test_a_design_may_need_to_know_more(tmp_path: Path) -> None:
+    """Weibull of shape 2, half the life: mean lives 1 and 1/4 in failures that H0 expects, exactly 1.17109 of them."""
+    url = f"sqlite:///{tmp_path / 'none.sqlite3'}"
+    question = ["--family", "weibull", "--h0", "1000", "--h1", "500", "--alpha", "0.1", "--beta", "0.1"]
+    done = command("design", *question, "--known", "shape=2", database_url=url)
+    assert done.returncode == 0, done.stderr
+    assert "1.17109" in done.stdout
 
 
 def test_a_bad_setting_is_named_in_a_line(tmp_path: Path) -> None:

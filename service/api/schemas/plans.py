@@ -87,7 +87,10 @@ class PlanContentForm(Form):
     statistic: str = Field("simple", description="simple.")
     thresholds: ThresholdsForm | None = Field(None, description='With "given" boundaries.')
     truncation: TruncationForm | None = None
-    known: dict[Name, Number] | None = Field(None, description='What the family needs to know: {"sigma": 0.6}.')
+    known: dict[Name, Number] | None = Field(
+        None,
+        description='What the family needs to know: {"sigma": 0.6}, {"shape": 2.0}, {"mean": 0.0}, … See the family.',
+    )
 
     def content(self) -> dict[str, Any]:
         """The plan without its name, as the domain takes it."""
