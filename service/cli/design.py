@@ -1,5 +1,6 @@
 """Choose a plan: candidates side by side, with what each really promises, without a service."""
 
+import math
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
@@ -24,7 +25,7 @@ def design(
     h1: Annotated[float | None, typer.Option(help="Parameter under H1.")] = None,
     alpha: Annotated[float | None, typer.Option(help="Producer's risk: P(reject) when H0 is true.")] = None,
     beta: Annotated[float | None, typer.Option(help="Consumer's risk: P(accept) when H1 is true.")] = None,
-    sigma: Annotated[float | None, typer.Option(help="Known standard deviation, for normal.")] = None,
+    sigma: Annotated[float | None, typer.Option(help="Known standard deviation, for normal and lognormal.")] = None,
     known: Annotated[
         list[str] | None, typer.Option(help="What else the family needs to know: exposure_ratio=2; more than once.")
     ] = None,
@@ -79,7 +80,9 @@ def _known(sigma: float | None, others: list[str]) -> dict[str, float]:
         try:
             found[name] = float(value)
         except ValueError:
-            raise fail(f"--known must have the form name=number; received {text!r}") from None
+            found[name] = math.nan
+        if not math.isfinite(found[name]):
+            raise fail(f"--known must have the form name=number; received {text!r}")
     return found
 
 

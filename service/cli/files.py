@@ -14,7 +14,7 @@ from dataclasses import dataclass
 from itertools import islice
 from typing import Any
 
-NUMBERS = ("value", "time", "exposure", "size", "a", "b")
+NUMBERS = ("value", "time", "from", "exposure", "size", "a", "b")
 FIELDS = (*NUMBERS, "arm", "failed", "unit", "observed_at")
 # Python reads more as a number than a file should hold: 1_0, nan, digits of other scripts.
 NUMBER = re.compile(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?")

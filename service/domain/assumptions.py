@@ -157,7 +157,7 @@ def _gathered(procedure: Procedure, stretch: Stretch, bodies: Iterable[tuple[int
     for first_of_piece, document in _in_pieces(bodies):
         if not read:
             before = max(0, stretch.first - first_of_piece)
-        read.append(procedure.family.read(document))
+        read.append(procedure.family.read(document, procedure.known))
     if not read:
         empty = np.zeros(0)
         return Increments(np.zeros(0, np.int64), empty, empty)

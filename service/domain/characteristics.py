@@ -142,10 +142,16 @@ def _point(procedure: Procedure, found: Characteristics, i: int, parameter: floa
         probability_of_acceptance=accepts_at(procedure, found, i),
         sample_number=ends if family.has_figures_of_units else None,
         exposure=ends if family.has_exposure else None,
-        failures=ends.mean / parameter if family.is_watched_in_time else None,
+        failures=_failures(procedure, parameter, ends.mean),
         wald=_approximate(procedure, parameter, 0.0),
-        siegmund=None if family.span.is_integer else _approximate(procedure, parameter, OVERSHOOT),
+        siegmund=None if not family.has_normal_steps else _approximate(procedure, parameter, OVERSHOOT),
     )
+
+
+def _failures(procedure: Procedure, parameter: float, exposure: float) -> float | None:
+    """The mean number of failures in the mean exposure, by Wald's identity."""
+    family = procedure.family
+    return exposure * family.motion(parameter, procedure.known).mean if family.is_watched_in_time else None
 
 
 def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Approximate | None:

@@ -221,7 +221,7 @@ def _faults_of_known(family: Family, known: Mapping[str, float]) -> list[Fault]:
     for name, value in known.items():
         if name not in family.known:
             faults.append(Fault(f"/known/{name}", f"means nothing for {family.name}"))
-        elif (rule := positive_rule(value)) is not None:
+        elif (rule := family.known_rule(name, value)) is not None:
             faults.append(Fault(f"/known/{name}", f"{rule}; received {value!r}"))
     return faults
 

@@ -63,7 +63,7 @@ def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at:
     Raises:
         InvalidObservations: An observation cannot be right; the fault names it.
     """
-    increments = procedure.family.read(document)
+    increments = procedure.family.read(document, procedure.known)
     count = len(increments.total)
     if state.is_decided:
         return replace(state, sequence=state.sequence + count, overrun=state.overrun + count)

@@ -58,7 +58,7 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
     """
     state, pieces = State(), [_origin(procedure)]
     for document in documents:
-        increments = procedure.family.read(document)
+        increments = procedure.family.read(document, procedure.known)
         walk = walk_from(procedure, state, increments)
         exit_ = first_exit(procedure, walk, increments)
         count = len(increments.total) if exit_ is None else exit_.index + 1

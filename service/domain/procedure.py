@@ -11,8 +11,8 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 from service.domain.families import FAMILIES, Family
-from service.domain.plan import Content, Plan, known_of
-from service.domain.statistics import accepts_early, evidence_of, hypotheses_of
+from service.domain.plan import Content, Plan
+from service.domain.statistics import accepts_early, evidence_of, hypotheses_of, settled_known
 from service.domain.tables import region_of_table
 from service.sequential import boundaries
 from service.sequential.boundaries import Thresholds
@@ -126,7 +126,9 @@ def _procedure(
     content: Content, evidence: LikelihoodRatio | Evidence, thresholds: Thresholds | None, region: Region
 ) -> Procedure:
     family, risks = FAMILIES[content["family"]], (content["alpha"], content.get("beta"))
-    return Procedure(family, evidence, thresholds, region, known_of(content), hypotheses_of(content), risks)
+    return Procedure(
+        family, evidence, thresholds, region, settled_known(family, content), hypotheses_of(content), risks
+    )
 
 
 def _thresholds(content: Content) -> Thresholds:

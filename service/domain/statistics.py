@@ -5,6 +5,7 @@ The statistics: what the evidence of a plan is made of, which plans each of them
 """
 
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 from service.domain.errors import Fault
@@ -74,6 +75,12 @@ def hypotheses_of(content: Content) -> tuple[float, ...]:
     return (h0,) if h1 is None or h1 == h0 else (h0, h1)
 
 
+def settled_known(family: Family, content: Content) -> Mapping[str, float]:
+    """What the family knows of a plan, with what follows from its hypotheses."""
+    h0 = content.get("h0", math.nan)
+    return family.settled(known_of(content), h0, content.get("h1", h0))
+
+
 def faults_of_statistic(family: Family, content: Content) -> list[Fault]:
     """What is wrong with the members that depend on the statistic."""
     statistic = STATISTICS.get(content["statistic"])
@@ -100,7 +107,7 @@ def evidence_of(family: Family, content: Content) -> LikelihoodRatio | Evidence:
     Raises:
         OutOfRange: Floating point cannot tell the hypotheses apart.
     """
-    known, hypotheses = known_of(content), hypotheses_of(content)
+    known, hypotheses = settled_known(family, content), hypotheses_of(content)
     if content["statistic"] == "simple":
         # A family without a model does not look at hypotheses, and its plans have none.
         return family.likelihood_ratio(content.get("h0", math.nan), content.get("h1", math.nan), known)

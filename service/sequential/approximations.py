@@ -50,10 +50,10 @@ def approximate(motion: Motion, slope: float, lower: float, upper: float) -> App
     Wald's approximation for lines at slope * progress - lower and slope * progress + upper.
 
     Returns:
-        None where the total never moves, so that no conjugate root exists.
+        None where the total never moves, or by more than a double holds, so that no conjugate root is found.
     """
     drift = motion.mean - slope
-    if motion.variance <= 0.0:
+    if not 0.0 < motion.variance < math.inf:
         return None
     if abs(drift) < 1e-9 * math.sqrt(motion.variance):
         return Approximation(upper / (lower + upper), lower * upper / motion.variance)
@@ -86,4 +86,7 @@ def _conjugate_root(motion: Motion, slope: float) -> float | None:
         far *= 2.0
         if far > 1e6:
             return None
+    # Where the cumulant has a pole, come down from beyond it: a bracket with an infinite end converges slowly.
+    while math.isinf(excess(far)) and near < (middle := 0.5 * (near + far)) < far:
+        near, far = (middle, far) if excess(middle) < 0.0 else (near, middle)
     return sign * float(brentq(excess, near, far, xtol=1e-14, rtol=1e-13))

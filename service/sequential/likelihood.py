@@ -19,6 +19,9 @@ from dataclasses import dataclass
 from service.sequential.double import Double, FloatArray, two_product, two_sum
 from service.sequential.errors import OutOfRange
 
+# exp() of more overflows.
+LARGEST_EXPONENT = 700.0
+
 
 @dataclass(frozen=True)
 class LikelihoodRatio:
@@ -93,6 +96,21 @@ def poisson(rate0: float, rate1: float) -> LikelihoodRatio:
     return _ratio(_log_quotient(rate1, rate0), rate1 - rate0)
 
 
+def negative_binomial(mean0: float, mean1: float, dispersion: float) -> LikelihoodRatio:
+    """
+    Mean counts per unit, both above 0, with variance mean + mean**2 / dispersion; total = count, progress = units.
+
+    Raises:
+        OutOfRange: The means are too close to tell apart in floating point.
+
+    Source: Johnson, Kemp and Kotz, Univariate Discrete Distributions, section 5.1: the probability of x is proportional
+    to (mean / (mean + dispersion))**x * (dispersion / (mean + dispersion))**dispersion.
+    """
+    # ln of the quotient of mean / (mean + dispersion), and of its complement, whose difference of means is exact.
+    natural = math.log1p((mean1 - mean0) / mean0 * (dispersion / (mean1 + dispersion)))
+    return _ratio(natural, dispersion * math.log1p((mean1 - mean0) / (mean0 + dispersion)))
+
+
 def exponential(mean0: float, mean1: float) -> LikelihoodRatio:
     """
     Mean lives, both above 0; total = failures, progress = unit-time.
@@ -104,6 +122,23 @@ def exponential(mean0: float, mean1: float) -> LikelihoodRatio:
     - (1/mean1 - 1/mean0) * time.
     """
     return _ratio(_log_quotient(mean0, mean1), (mean0 - mean1) / mean0 / mean1)
+
+
+def weibull(life0: float, life1: float, shape: float) -> LikelihoodRatio:
+    """
+    Characteristic lives above 0 of a known shape; total = failures, progress = the failures that life0 expects.
+
+    The latter is the sum of (age/life0)**shape over the units, or of its growth where a unit was not watched from new.
+
+    Raises:
+        OutOfRange: The lives are too close, or too far apart, for floating point.
+
+    Source: that of `exponential`: the power age**shape of a life is exponential with mean life**shape, here in units of
+    life0**shape. Epstein and Sobel (1955); Johnson, Kotz and Balakrishnan, Continuous Univariate Distributions, vol. 1,
+    section 21.2.
+    """
+    natural = shape * _log_quotient(life0, life1)
+    return _ratio(natural, math.expm1(natural) if natural < LARGEST_EXPONENT else math.nan)
 
 
 def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
@@ -123,6 +158,38 @@ def normal(mean0: float, mean1: float, sigma: float) -> LikelihoodRatio:
 def summed() -> LikelihoodRatio:
     """The evidence where the total is itself the sum of log-likelihood ratios, worked out elsewhere."""
     return LikelihoodRatio(gain=1.0, slope=0.0)
+
+
+def lognormal(median0: float, median1: float, sigma: float) -> LikelihoodRatio:
+    """
+    Medians above 0 with a known standard deviation sigma of the natural logarithm; total = sum of the logarithms.
+
+    Raises:
+        OutOfRange: The medians are too close, or too far apart, for floating point.
+
+    Source: that of `normal`, with the logarithms of the medians as means; their difference is ln(median1/median0).
+    """
+    distance = _log_quotient(median1, median0)
+    middle = two_sum(Double.of(math.log(median0)).high, Double.of(distance / 2.0).high)
+    return _checked(LikelihoodRatio(distance / sigma / sigma, float(middle.high), float(middle.low)))
+
+
+def normal_variance(sigma0: float, sigma1: float) -> LikelihoodRatio:
+    """
+    Standard deviations above 0; total = sum of squared deviations from the mean, progress = degrees of freedom.
+
+    One degree for each measurement where the mean is known. Where it is not, the deviations are from the mean of the
+    measurements and there is one less: by Helmert's transformation the sum of squares is that of n - 1 independent
+    deviations, each known as soon as its measurement comes, and its density is free of the unknown mean.
+
+    Raises:
+        OutOfRange: The standard deviations are too close, or too far apart, for floating point.
+
+    Source: Wald (1947), Sequential Analysis, chapter 8: (1/sigma0**2 - 1/sigma1**2)/2 times the sum of squares, less
+    ln(sigma1/sigma0) for each degree of freedom.
+    """
+    natural = 0.5 * ((sigma1 - sigma0) / sigma0) * ((sigma1 + sigma0) / sigma1) / sigma0 / sigma1
+    return _ratio(natural, _log_quotient(sigma1, sigma0))
 
 
 def _log_quotient(a: float, b: float) -> float:

@@ -72,6 +72,10 @@ class Span:
 
 PASS_FAIL = Span(is_integer=True, floor=0.0, per_progress=1.0)
 COUNTS = Span(is_integer=True, floor=0.0, per_progress=math.inf)
+# The same for counts whose progress is whole units rather than exposure.
+UNIT_COUNTS = Span(is_integer=True, floor=0.0, per_progress=math.inf)
+# Sums of squares.
+POSITIVE = Span(is_integer=False, floor=0.0, per_progress=math.inf)
 REALS = Span(is_integer=False, floor=-math.inf, per_progress=math.inf)
 
 

@@ -273,6 +273,15 @@ def test_a_design_that_cannot_be_right_is_refused_in_a_line(tmp_path: Path, argu
     assert "Traceback" not in done.stderr
 
 
+def test_a_design_may_need_to_know_more(tmp_path: Path) -> None:
+    """Weibull of shape 2, half the life: mean lives 1 and 1/4 in failures that H0 expects, exactly 1.17109 of them."""
+    url = f"sqlite:///{tmp_path / 'none.sqlite3'}"
+    question = ["--family", "weibull", "--h0", "1000", "--h1", "500", "--alpha", "0.1", "--beta", "0.1"]
+    done = command("design", *question, "--known", "shape=2", database_url=url)
+    assert done.returncode == 0, done.stderr
+    assert "1.17109" in done.stdout
+
+
 def test_a_bad_setting_is_named_in_a_line(tmp_path: Path) -> None:
     done = command("serve", database_url=f"sqlite:///{tmp_path / 'none.sqlite3'}", SPRT_MAX_BATCH="many")
     assert done.returncode == 1

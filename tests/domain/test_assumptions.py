@@ -88,7 +88,9 @@ def test_where_all_suppositions_hold_p_values_are_as_rare_as_they_say(kind: str)
     generator, streams, found = np.random.default_rng(11), 150, dict[str, list[float]]()
     plan = FAMILIES[family]
     for _ in range(streams):
-        for check in plan.checks(plan.read(draw(generator)), PLANS[family].get("known", {})):
+        for check in plan.checks(
+            plan.read(draw(generator), PLANS[family].get("known", {})), PLANS[family].get("known", {})
+        ):
             if check.found is not None:
                 found.setdefault(check.name, []).append(check.found.p_value)
     assert found
@@ -296,7 +298,7 @@ def streams(draw: st.DrawFn) -> tuple[str, Document]:
 def test_every_stream_that_is_taken_has_finite_figures(stream: tuple[str, Document], sigma: float) -> None:
     name, document = stream
     family: Family = FAMILIES[name]
-    for check in family.checks(family.read(document), {"sigma": sigma}):
+    for check in family.checks(family.read(document, {"sigma": sigma}), {"sigma": sigma}):
         assert check.sentence.endswith(".")
         if check.found is not None:
             assert math.isfinite(check.found.figure), check
@@ -306,6 +308,6 @@ def test_every_stream_that_is_taken_has_finite_figures(stream: tuple[str, Docume
 def test_a_family_without_checks_of_its_own_has_those_of_order() -> None:
     """The default takes what each observation adds to the total."""
     family = FAMILIES["normal"]
-    seen = family.read({"values": list(range(30))})
+    seen = family.read({"values": list(range(30))}, {})
     assert [check.name for check in Family.checks(family, seen, {})] == ["runs", "autocorrelation", "trend"]
     assert all(check.found and check.found.p_value < 1e-6 for check in Family.checks(family, seen, {}))

@@ -38,6 +38,11 @@ def document(**content: Any) -> str:
         {"family": "normal_two_sample", "h0": 0.0, "h1": 1e-3, "known": {"sigma_a": 1e-90, "sigma_b": 1.0}},
         {"family": "normal_difference", "h0": 0.0, "h1": 1e-3, "known": {"sigma_a": 1.0, "sigma_b": 1e-90}},
         {"family": "poisson_ratio", "h0": 1e3, "h1": 2e3, "known": {"exposure_ratio": 1e-9}},
+        {"family": "normal_variance", "h0": 1.0, "h1": 1.0001, "known": {"mean": 0.0}},
+        {"family": "weibull", "h0": 1.0, "h1": 1.000001, "known": {"shape": 0.01}},
+        {"family": "negative_binomial", "h0": 1e6, "h1": 1.1e6, "known": {"dispersion": 3.0}},
+        {"family": "negative_binomial", "h0": 1.0, "h1": 2.0, "known": {"dispersion": 1e-6}},
+        {"family": "negative_binomial", "h0": 1.0, "h1": 1.000001, "known": {"dispersion": 1e12}},
     ],
 )
 def test_hypotheses_that_are_hard_to_tell_apart_hold_nobody_up(content: dict[str, Any]) -> None:
@@ -71,6 +76,13 @@ def test_the_way_to_a_far_decision_is_counted_exactly() -> None:
         ({"family": "exponential", "h0": 2.0, "h1": 1.0}, 0.005),
         ({"family": "paired", "h0": 1.0, "h1": 2.0}, 1e6),
         ({"family": "paired", "h0": 1.0, "h1": 2.0}, 1e-6),
+        ({"family": "weibull", "h0": 1000.0, "h1": 500.0, "known": {"shape": 3.0}}, 1e-100),
+        ({"family": "normal_variance", "h0": 1.0, "h1": 2.0, "known": {"mean": -1e100}}, 1e-100),
+        ({"family": "normal_variance", "h0": 1.0, "h1": 2.0, "known": {"mean": 0.0}}, 1e100),
+        ({"family": "normal_variance", "h0": 1e-70, "h1": 1e70, "known": {"mean": 0.0}}, 1e-100),
+        ({"family": "weibull", "h0": 1000.0, "h1": 500.0, "known": {"shape": 3.0}}, 1e100),
+        ({"family": "negative_binomial", "h0": 1.0, "h1": 2.0, "known": {"dispersion": 2.0}}, 1e90),
+        ({"family": "negative_binomial", "h0": 1.0, "h1": 2.0, "known": {"dispersion": 2.0}}, 1e-90),
     ],
 )
 def test_far_parameters_have_figures_and_approximations(content: dict[str, Any], at: float) -> None:

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from hypothesis import assume, given
 from hypothesis import strategies as st
-from mpmath import mpf
+from mpmath import exp, log, mpf
 
 from service.sequential import likelihood
 from service.sequential.double import Double
@@ -81,3 +81,32 @@ def test_the_order_of_the_units_does_not_matter(p0: float, p1: float, units: lis
     exact = sum(slow.step(slow.Plan("bernoulli", p0, p1, -1, 1), x, 1) for x in units)
     evidence = ratio.log(Double.of(17.0), Double.of(float(np.sum(units))))
     assert float(evidence) == pytest.approx(float(exact), rel=1e-9, abs=1e-11)
+
+
+@pytest.mark.parametrize("h0", [3.0, 1e-50, 1e50])
+@pytest.mark.parametrize("apart", [1e-9, 1e-4, 0.3, -0.3, 40.0])
+@pytest.mark.parametrize("known", [0.02, 1.0, 70.0])
+def test_close_and_far_hypotheses_keep_their_digits(h0: float, apart: float, known: float) -> None:
+    """Gain and slope of the families with something known, in 60 digits from their natural parameters and cumulants."""
+    h1 = h0 * (1.0 + apart)
+    a, b, k = mpf(h0), mpf(h1), mpf(known)
+    g = k * log(a / b)
+    scale = mpf(1) if h0 == 3.0 else a  # dispersion and means of one size
+    d = k * scale
+    found = {
+        likelihood.lognormal(h0, h1, known): (log(b / a) / k**2, log(a * b) / 2),
+        likelihood.weibull(h0, h1, known): (g, (exp(g) - 1) / g),
+        likelihood.negative_binomial(h0, h1, float(d)): (
+            log(b / (b + mpf(float(d)))) - log(a / (a + mpf(float(d)))),
+            mpf(float(d))
+            * log((b + mpf(float(d))) / (a + mpf(float(d))))
+            / (log(b / (b + mpf(float(d)))) - log(a / (a + mpf(float(d))))),
+        ),
+        likelihood.normal_variance(h0, h1): (
+            (1 / a**2 - 1 / b**2) / 2,
+            log(b / a) / ((1 / a**2 - 1 / b**2) / 2),
+        ),
+    }
+    for ratio, (gain, slope) in found.items():
+        assert ratio.gain == pytest.approx(float(gain), rel=2e-14)
+        assert ratio.slope == pytest.approx(float(slope), rel=2e-13)

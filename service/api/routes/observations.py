@@ -173,7 +173,7 @@ def _csv(parts: Parts, test: SequentialTest, plan: Plan) -> Iterator[str]:
     columns = csv_columns(family)
     yield _csv_line(columns)
     for entry in expanded(family, test, _submissions(parts, test)):
-        row = LoggedOut.of(entry).model_dump(mode="json")
+        row = LoggedOut.of(entry).model_dump(mode="json", by_alias=True)
         yield _csv_line([_cell(row[column]) for column in columns])
 
 

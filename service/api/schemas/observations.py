@@ -22,6 +22,7 @@ EXAMPLES: list[dict[str, Any]] = [
     {"observations": [{"time": 41.5, "failed": True}, {"time": 200.0, "failed": False}]},
     {"observations": [{"a": 0, "b": 1}, {"a": 1, "b": 1}]},
     {"observations": [{"arm": "a", "value": 10.1}, {"arm": "b", "value": 10.4}]},
+    {"observations": [{"time": 900.0, "from": 650.0, "failed": False}]},
 ]
 
 
@@ -75,7 +76,12 @@ class ObservationForm(Form):
     """
 
     value: Number = Field(default_factory=float, description="Result: 0 or 1, a count, or a measurement.")
-    time: Number = Field(default_factory=float, description="Unit-time since the report before (exponential).")
+    time: Number = Field(
+        default_factory=float, description="Unit-time since the report before (exponential), or age reached (weibull)."
+    )
+    from_: Number = Field(
+        alias="from", default_factory=float, description="Age from which it was watched (weibull), 0 when left out."
+    )
     exposure: Number = Field(default_factory=float, description="Exposure of a count (poisson), 1 when left out.")
     size: Number = Field(default_factory=float, description="Units in the group (bernoulli), 1 when left out.")
     a: Number = Field(default_factory=float, description="Result in arm a, of families that compare two arms.")
@@ -83,7 +89,9 @@ class ObservationForm(Form):
     arm: Literal["a", "b"] = Field(
         default="a", description="Whose result it is, where arms are measured one at a time."
     )
-    failed: StrictBool = Field(default_factory=bool, description="Whether a failure ended the time (exponential).")
+    failed: StrictBool = Field(
+        default_factory=bool, description="Whether a failure ended the time (exponential, weibull)."
+    )
     unit: Unit = Field(default_factory=str, description="Serial number; may be counted once in a test.")
     observed_at: Moment = Field(
         default_factory=lambda: datetime.min.replace(tzinfo=UTC),
@@ -124,6 +132,7 @@ class LoggedOut(Answer):
     sequence: int
     value: int | float | None = None
     time: int | float | None = None
+    from_: int | float | None = Field(None, alias="from")
     exposure: int | float | None = None
     size: int | float | None = None
     a: int | float | None = None

@@ -122,6 +122,7 @@ class Family(ABC):
         prior: Names of the parameters of its conjugate prior; empty for families without composite hypotheses.
         carries: The running sums that give progress and total where these do not simply add up; see `place`.
         has_model: A plan states h0 and h1, and what they say of the observations gives exact figures.
+        has_normal_steps: The total moves by normal amounts, so that Siegmund's overshoot is theirs.
     """
 
     name: ClassVar[str]
@@ -140,6 +141,7 @@ class Family(ABC):
     prior: ClassVar[tuple[str, ...]] = ()
     carries: ClassVar[tuple[str, ...]] = ()
     has_model: ClassVar[bool] = True
+    has_normal_steps: ClassVar[bool] = False
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -155,7 +157,7 @@ class Family(ABC):
         """
 
     @abstractmethod
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """
         Check the columns of a submission and turn them into increments.
 
@@ -195,6 +197,14 @@ class Family(ABC):
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """The parameter with this mean of the total in one unit of progress."""
         return mean
+
+    def known_rule(self, name: str, value: float) -> str | None:
+        """The rule that something known beforehand breaks; `name` is one of `known`."""
+        return positive_rule(value)
+
+    def settled(self, known: Mapping[str, float], h0: float, h1: float) -> Mapping[str, float]:
+        """What is known of a plan, with what follows from its hypotheses; all that takes `known` is given this."""
+        return known
 
     def parameter_rule(self, value: float) -> str | None:
         """The rule that a true parameter breaks; the ends of the range may be asked for where they mean something."""
@@ -252,7 +262,7 @@ class Family(ABC):
         """The fields of an observation that say what was observed, its result first."""
         return (self.value_field, *self.required, *self.optional)
 
-    def read(self, document: Document) -> Increments:
+    def read(self, document: Document, known: Mapping[str, float]) -> Increments:
         """
         Decode a submission as posted: `{"values": [...]}` or `{"observations": [{...}]}`.
 
@@ -260,8 +270,8 @@ class Family(ABC):
             InvalidObservations: With a fault for each offending element.
         """
         if "values" in document:
-            return self.increments(self._columns_of_values(document["values"]))
-        return self.increments(self._columns_of_objects(document["observations"]))
+            return self.increments(self._columns_of_values(document["values"]), known)
+        return self.increments(self._columns_of_objects(document["observations"]), known)
 
     def _columns_of_values(self, values: Sequence[float]) -> dict[str, Column]:
         unsaid = [field for field in self.required if field not in self.in_values]

@@ -107,7 +107,7 @@ class Bernoulli(Family):
         """See `Family`."""
         return fixed_sample.binomial(lower, upper, *risks)
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         value, size = columns["value"], columns["size"]
         refuse(whole_numbers(size, 1))

@@ -115,7 +115,7 @@ class Exponential(Family):
         """See `Family`."""
         return fixed_sample.poisson(1.0 / lower, 1.0 / upper, *risks)
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         time, failed = columns["time"], columns["failed"]
         refuse(reals(time, "must be 0 or above", time.values >= 0.0))

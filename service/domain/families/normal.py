@@ -30,6 +30,7 @@ class Normal(Family):
     known: ClassVar[tuple[str, ...]] = ("sigma",)
     span: ClassVar[Span] = REALS
     prior: ClassVar[tuple[str, ...]] = ("tau",)
+    has_normal_steps: ClassVar[bool] = True
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""
@@ -79,7 +80,7 @@ class Normal(Family):
         """See `Family`."""
         return fixed_sample.normal(lower, upper, known["sigma"], *risks)
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         value = columns["value"]
         refuse(reals(value, "must be a number", np.isfinite(value.values)))

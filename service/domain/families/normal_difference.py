@@ -67,7 +67,7 @@ class NormalDifference(Normal):
         """See `Family`: of the differences."""
         return super().checks(seen, _of_difference(known))
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         a, b = columns["a"], columns["b"]
         refuse([fault for arm in (a, b) for fault in reals(arm, "must be a number", np.isfinite(arm.values))])

@@ -36,7 +36,7 @@ class NormalTwoSample(NormalDifference):
         """Exact figures suppose a look after each pair, and pairs are not what the sample number counts."""
         return False
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         value, arm = columns["value"], columns["arm"]
         refuse(reals(value, "must be a number", np.isfinite(value.values)))

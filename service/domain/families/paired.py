@@ -25,7 +25,7 @@ class Paired(Conditional):
     in_a: ClassVar[str] = "in a's favour"
     in_b: ClassVar[str] = "in b's favour"
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         a, b = columns["a"], columns["b"]
         rule = "must be 0 or 1"

@@ -98,7 +98,7 @@ class Poisson(Family):
         """See `Family`."""
         return fixed_sample.poisson(lower, upper, *risks)
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         value, exposure = columns["value"], columns["exposure"]
         refuse([*whole_numbers(value, 0), *reals(exposure, "must be above 0", exposure.values > 0.0)])

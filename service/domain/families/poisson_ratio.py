@@ -30,7 +30,7 @@ class PoissonRatio(Conditional):
         """See `Conditional`."""
         return known["exposure_ratio"]
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         a, b = columns["a"], columns["b"]
         refuse([*whole_numbers(a, 0), *whole_numbers(b, 0)])

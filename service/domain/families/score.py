@@ -73,7 +73,7 @@ class Score(Family):
         """See `Family`."""
         _refuse()
 
-    def increments(self, columns: Mapping[str, Column]) -> Increments:
+    def increments(self, columns: Mapping[str, Column], known: Mapping[str, float]) -> Increments:
         """See `Family`."""
         value = columns["value"]
         refuse(reals(value, "must be a number", np.isfinite(value.values)))

@@ -130,9 +130,10 @@ class _Course:
     def summary(self) -> Characteristics:
         """The figures once all is over."""
         scale = self._process.step or 1.0
-        rest = float(np.max(self._alive.sum(axis=(1, 2))))
+        rest = self._alive.sum(axis=(1, 2))
+        is_left = rest > 0.0
         # What is no longer followed would still last about as long as it took to become negligible.
-        left_out = rest * (1.0 + self._time / max(float(np.min(self._mean)), 1e-300)) if rest else 0.0
+        left_out = float(np.max(rest[is_left] * (1.0 + self._time / self._mean[is_left]), initial=0.0))
         bound = left_out + (self._stretches + 1) * 8.0 * float(np.finfo(float).eps)
         deviation = scale * spread(self._mean, self._second)
         quantiles = scale * self._quantiles

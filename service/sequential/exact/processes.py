@@ -11,6 +11,7 @@ Source: Johnson, Kemp and Kotz, Univariate Discrete Distributions, sections 3.4 
 An Introduction to Probability Theory, vol. II, section I.3.
 """
 
+from collections.abc import Callable
 from typing import Protocol
 
 import numpy as np
@@ -118,7 +119,7 @@ class Reports:
     largest: int | None = None
 
     def __init__(self, means: FloatArray, step: float) -> None:
-        self._means, self.step, self._terms = means[:, np.newaxis], step, 0
+        self._means, self.step, self._stays = means[:, np.newaxis], step, _Added()
 
     @property
     def points(self) -> int:
@@ -131,23 +132,57 @@ class Reports:
 
     def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
         """See `Process`."""
-        looks = int(duration)
-        self._terms += looks * self.points * width
-        if self._terms > MOST_TERMS:
-            raise TooMuchWork(MOST_TERMS, "terms")
-        shape = (self.points, width)
-        stay, moment = np.ones(shape), np.zeros(shape)
-        block = max(1, LARGEST_BLOCK // (self.points * width))
-        for begin in range(1, looks, block):
-            look = np.arange(begin, min(begin + block, looks), dtype=float)[:, np.newaxis, np.newaxis]
-            within = np.cumsum(_poisson(self._means * look, width), axis=2)
-            stay += within.sum(axis=0)
-            moment += (look * within).sum(axis=0)
-        return stay, moment
+        return self._stays.added(lambda look: _poisson(self._means * look, width), duration, (self.points, width))
 
     def only(self, chosen: IndexArray) -> "Reports":
         """See `Process`."""
         return Reports(self._means[chosen, 0], self.step)
+
+
+class Overdispersed:
+    """
+    Each look adds the count of one unit with the given mean, array of shape (points,), and a common dispersion.
+
+    The variance is mean + mean**2 / dispersion. Over several looks the count is of the same kind, with a dispersion so
+    many times larger.
+    """
+
+    step = 1.0
+    largest: int | None = None
+
+    def __init__(self, means: FloatArray, dispersion: float) -> None:
+        self._means, self._dispersion, self._stays = means[:, np.newaxis], dispersion, _Added()
+
+    @property
+    def points(self) -> int:
+        """See `Process`."""
+        return len(self._means)
+
+    def increases(self, duration: float | FloatArray, width: int) -> FloatArray:
+        """See `Process`."""
+        return self._probabilities(np.reshape(np.asarray(duration, float), (-1, 1)), width)
+
+    def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
+        """See `Process`."""
+        return self._stays.added(lambda look: self._probabilities(look, width), duration, (self.points, width))
+
+    def only(self, chosen: IndexArray) -> "Overdispersed":
+        """See `Process`."""
+        return Overdispersed(self._means[chosen, 0], self._dispersion)
+
+    def _probabilities(self, looks: FloatArray, width: int) -> FloatArray:
+        """Of 0, 1, …, width - 1 after these looks; array of shape (…, points, width)."""
+        k = np.arange(1.0, width)
+        none = -looks * self._dispersion * np.log1p(self._means / self._dispersion)
+        # The quotient of neighbours is (looks * dispersion + k - 1) / k * mean / (mean + dispersion), which tends to
+        # Poisson's as the dispersion grows: differences of log-gammas would lose all digits there.
+        share = self._dispersion / (self._means + self._dispersion)
+        quotients = self._means * (looks + (k - 1.0) / self._dispersion) * share / k
+        with np.errstate(divide="ignore"):
+            logs = np.log(quotients)
+        none = np.broadcast_to(none, (*logs.shape[:-1], 1))
+        probabilities: FloatArray = np.exp(np.cumsum(np.concatenate([none, logs], axis=-1), axis=-1))
+        return probabilities
 
 
 class Failures:
@@ -180,6 +215,35 @@ class Failures:
     def only(self, chosen: IndexArray) -> "Failures":
         """See `Process`."""
         return Failures(self._rates[chosen, 0])
+
+
+class _Added:
+    """The sums over the looks of a stretch, look by look; remembers how many terms it has added."""
+
+    def __init__(self) -> None:
+        self._terms = 0
+
+    def added(
+        self, probabilities: Callable[[FloatArray], FloatArray], duration: float, shape: tuple[int, int]
+    ) -> tuple[FloatArray, FloatArray]:
+        """
+        The stays of a stretch; `probabilities` are those of the increases after looks of shape (looks, 1, 1).
+
+        Raises:
+            TooMuchWork: More than 20 million terms since the beginning.
+        """
+        looks, terms = int(duration), shape[0] * shape[1]
+        self._terms += looks * terms
+        if self._terms > MOST_TERMS:
+            raise TooMuchWork(MOST_TERMS, "terms")
+        stay, moment = np.ones(shape), np.zeros(shape)
+        block = max(1, LARGEST_BLOCK // terms)
+        for begin in range(1, looks, block):
+            look = np.arange(begin, min(begin + block, looks), dtype=float)[:, np.newaxis, np.newaxis]
+            within = np.cumsum(probabilities(look), axis=2)
+            stay += within.sum(axis=0)
+            moment += (look * within).sum(axis=0)
+        return stay, moment
 
 
 def _poisson(means: FloatArray, width: int) -> FloatArray:

@@ -1,0 +1,420 @@
+"""
+Exact figures of a test of spread: a sum of squares of normal deviations between two parallel lines.
+
+Quantity: probabilities of both decisions, mean, standard deviation and quantiles of the further progress, for each
+variance by itself.
+Method: in units of the variance each step of the total is the square of a standard normal number, and seen from the
+lines it falls by a constant first. Whatever is asked of the rest of the walk is a function of its height that solves an
+integral equation. The density of a square is infinite at zero, so the integral runs over the number that is squared,
+where it is smooth. The solution has a corner of half-integer order at each whole number of falls above the lower line,
+and above the middle where there is a wall, and no other: on panels that end there it is a smooth function of the root
+of the distance to the end, and is kept by its values at Gauss-Legendre points of that root (product integration).
+Corners soften with each fall; after some of them wider panels do.
+Accuracy: the difference to a computation with fewer points, reported as the error bound.
+Cost: points cubed for each variance, and points squared for each step to the quantiles or to the wall.
+Source: Page (1954), Biometrika 41, 100-115 (integral equations); Atkinson, The Numerical Solution of Integral Equations
+of the Second Kind, chapter 4 (product integration); Asmussen and Albrecher, Ruin Probabilities, chapter IV (Lundberg's
+inequality, which bounds how far a walk that falls ever rises).
+"""
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+from itertools import pairwise
+
+import numpy as np
+from scipy.linalg import lu_factor, lu_solve
+from scipy.special import erf, erfc, gammainc, gammaincc
+
+from service.sequential.double import BoolArray, FloatArray
+from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork, spread
+from service.sequential.region import Region, StraightRegion, looks_to_wall
+
+MOST_NODES = 2_400
+MOST_WORK = 1_500_000_000
+# More points than those for the integral over a panel.
+MORE_POINTS = 12
+# A normal number beyond this has no probability that matters.
+FARTHEST = 9.0
+WIDEST_PANEL = 6.0
+# Variances beyond these multiples of the slope are as these.
+SMALLEST, LARGEST = 1e-100, 1e100
+# Probability that a walk ever rises beyond where it is followed.
+NEVER = 1e-16
+NEGLIGIBLE = 1e-15
+# The quotient of two successive probabilities of still sampling no longer moves.
+SETTLED = 1e-11
+
+
+@dataclass(frozen=True)
+class _Walk:
+    """
+    A walk in units of the variance, seen from the lines: each step falls by `fall` and rises by a square.
+
+    Attributes:
+        low, high: The lines.
+        start: Its height, between them.
+        last: Steps to the wall, which parts the heights at 0; None without one.
+    """
+
+    low: float
+    high: float
+    fall: float
+    start: float
+    last: int | None
+
+
+@dataclass(frozen=True)
+class _Resolution:
+    """
+    How closely a computation looks.
+
+    Attributes:
+        points: Gauss-Legendre points of a panel.
+        sharp: Corners that are ends of panels; later ones are so soft that a panel may run across. A long fall keeps
+            more of them sharp.
+    """
+
+    points: int
+    sharp: int
+
+
+# The two computations that are compared.
+FINE, COARSE = _Resolution(points=16, sharp=14), _Resolution(points=12, sharp=12)
+
+
+@dataclass(frozen=True)
+class _Row:
+    """The figures of one walk."""
+
+    below: float
+    above: float
+    mean: float
+    second: float
+    quantiles: list[float]
+    work: int = 0
+
+
+def squares_characteristics(
+    region: Region, variances: FloatArray, progress: float = 0.0, total: float = 0.0
+) -> Characteristics:
+    """
+    Exact figures at these variances, from one point of the region on.
+
+    Args:
+        region: Two parallel lines of sums of squares, with or without a wall; one unit of progress adds one square.
+        variances: Array of shape (points,), all above 0.
+        progress, total: Where sampling stands, inside the region.
+
+    Raises:
+        TooMuchWork: The region is too wide for a variance, or the wall too far.
+        TypeError: The region is bounded by curves.
+    """
+    if not isinstance(region, StraightRegion):
+        raise TypeError("only straight regions of squares are followed exactly")
+    rows, bound, work = [], 0.0, 0
+    for variance in variances.tolist():
+        walk = _walk_of(region, variance, progress, total)
+        row, error = _compared(walk)
+        bound, work = max(bound, error), work + row.work
+        rows.append(row)
+        if work > MOST_WORK:
+            raise TooMuchWork(MOST_WORK, "multiplications")
+    mean, second = np.array([row.mean for row in rows]), np.array([row.second for row in rows])
+    return Characteristics(
+        below=np.array([row.below for row in rows]),
+        between=np.zeros(len(rows)),
+        above=np.array([row.above for row in rows]),
+        mean=mean,
+        standard_deviation=spread(mean, second),
+        quantiles=np.array([row.quantiles for row in rows]),
+        error_bound=bound,
+        work=work,
+    )
+
+
+def _walk_of(region: StraightRegion, variance: float, progress: float, total: float) -> _Walk:
+    slope = region.ratio.slope
+    variance = min(max(variance, SMALLEST * slope), LARGEST * slope)
+    return _Walk(
+        low=-region.lower_intercept / variance,
+        high=region.upper_intercept / variance,
+        fall=slope / variance,
+        start=(total - slope * progress) / variance,
+        last=None if region.wall is None else looks_to_wall(region.wall, 1.0, progress),
+    )
+
+
+def _compared(walk: _Walk) -> tuple[_Row, float]:
+    """The figures, and a bound of their error."""
+    if walk.last == 1:
+        below = float(_below(np.array([walk.start]), 0.0, walk.fall)[0])
+        return _Row(below, 1.0 - below, 1.0, 1.0, [1.0] * len(QUANTILES)), NEGLIGIBLE
+    simple = _falling(walk) or _leaping(walk)
+    if simple is not None:
+        return simple, 4.0 * NEGLIGIBLE
+    near = _Walk(walk.low, min(walk.high, walk.start + _rise(walk.fall)), walk.fall, walk.start, walk.last)
+    fine, coarse = _figures(near, FINE), _figures(near, COARSE)
+    error = abs(fine.below - coarse.below) + abs(fine.above - coarse.above) + abs(fine.mean / coarse.mean - 1.0)
+    return fine, error + 1e-13 * max(1.0, 0.01 * fine.mean)
+
+
+def _falling(walk: _Walk) -> _Row | None:
+    """A spread so small that the walk all but falls: it ends at the first step that may end it, or at the next."""
+    first = max(1.0, math.ceil((walk.start - walk.low) / walk.fall))
+    is_forced = walk.last is not None and walk.last <= first
+    if walk.last is not None and is_forced:
+        first = walk.last - 1.0
+    room = (0.0 if is_forced else walk.low) - walk.start + walk.fall * (first + 1.0)
+    ceiling = min(room, walk.high - walk.start + walk.fall)
+    if ceiling <= 0.0 or gammaincc((first + 1.0) / 2.0, ceiling / 2.0) > NEGLIGIBLE:
+        return None
+    at_once = 0.0 if is_forced else float(gammainc(first / 2.0, max(0.0, room - walk.fall) / 2.0))
+    mean, second = first + 1.0 - at_once, (first + 1.0) ** 2 - at_once * (2.0 * first + 1.0)
+    quantiles = [first if 1.0 - at_once <= 1.0 - q else first + 1.0 for q in QUANTILES]
+    return _Row(1.0, 0.0, mean, second, quantiles)
+
+
+def _leaping(walk: _Walk) -> _Row | None:
+    """A spread so large that the first square goes beyond all."""
+    first = np.array([walk.start])
+    if erf(math.sqrt((walk.high - walk.start + walk.fall) / 2.0)) > NEGLIGIBLE:
+        return None
+    below, above = float(_below(first, walk.low, walk.fall)[0]), float(_above(first, walk.high, walk.fall)[0])
+    return _Row(below, above, 1.0, 1.0, [1.0] * len(QUANTILES))
+
+
+def _rise(fall: float) -> float:
+    """A height above its start that the walk never comes to, where it clearly falls: Lundberg's inequality."""
+    if fall < 1.1:
+        return math.inf
+    root = 0.5
+    for _ in range(200):  # the root of -ln(1 - 2 root) / 2 = fall * root, from above; each turn is .91 nearer at least
+        root = -0.5 * math.expm1(-2.0 * fall * root)
+    return -math.log(NEVER) / root
+
+
+def _figures(walk: _Walk, resolution: _Resolution) -> _Row:
+    kernel = _kernel_of(walk, resolution)
+    onward, begin = kernel.onward, kernel.begin
+    here = np.array([walk.start])
+    down, up = _below(kernel.heights, walk.low, walk.fall), _above(kernel.heights, walk.high, walk.fall)
+    down_now, up_now = (float(f(here, at, walk.fall)[0]) for f, at in ((_below, walk.low), (_above, walk.high)))
+    if walk.last is not None:
+        forced = _below(kernel.heights, 0.0, walk.fall)
+        return _to_the_wall(kernel, (down_now, up_now), np.stack([down, up, forced, 1.0 - forced], axis=1), walk.last)
+    lu = lu_factor(np.eye(len(onward)) - onward, check_finite=False)
+    solved = lu_solve(lu, np.stack([down, up, np.ones_like(down)], axis=1), check_finite=False)
+    lasting = solved[:, 2]
+    squared = lu_solve(lu, 1.0 + 2.0 * (onward @ lasting), check_finite=False)
+    quantiles, steps = _quantiles(kernel) if resolution == FINE else ([], 0)
+    return _Row(
+        below=down_now + float(begin @ solved[:, 0]),
+        above=up_now + float(begin @ solved[:, 1]),
+        mean=1.0 + float(begin @ lasting),
+        second=1.0 + float(begin @ (2.0 * lasting + squared)),
+        quantiles=quantiles,
+        work=kernel.work + len(onward) ** 3 // 10 + steps * len(onward) ** 2 // 2,
+    )
+
+
+def _below(heights: FloatArray, line: float, fall: float) -> FloatArray:
+    """P(the next step comes to a line or under it)."""
+    reached: FloatArray = erf(np.sqrt(np.maximum(line - heights + fall, 0.0) / 2.0))
+    return reached
+
+
+def _above(heights: FloatArray, line: float, fall: float) -> FloatArray:
+    """P(the next step comes to a line or over it)."""
+    reached: FloatArray = erfc(np.sqrt(np.maximum(line - heights + fall, 0.0) / 2.0))
+    return reached
+
+
+@dataclass(frozen=True)
+class _Kernel:
+    """
+    One step of the walk between the lines, on functions of the height kept by their values.
+
+    Attributes:
+        heights: Array of shape (nodes,).
+        onward: Array of shape (nodes, nodes): the mean of a function after a step from each node.
+        begin: Array of shape (nodes,): the same from the start.
+    """
+
+    heights: FloatArray
+    onward: FloatArray
+    begin: FloatArray
+    work: int
+
+
+def _kernel_of(walk: _Walk, resolution: _Resolution) -> _Kernel:
+    points, panels = resolution.points, _panels_of(walk, resolution.sharp)
+    count = len(panels.left)
+    if count * points > MOST_NODES:
+        raise TooMuchWork(MOST_NODES, "quadrature points")
+    places, _ = _legendre(points)
+    shares = np.where(panels.has_corner[:, np.newaxis], places**2, places)
+    heights = (panels.right[:, np.newaxis] - panels.width[:, np.newaxis] * shares).ravel()
+    means = _means(np.append(heights, walk.start) - walk.fall, panels, points)
+    onward = means.reshape(len(heights) + 1, count * points)
+    work = len(heights) * count * (points + MORE_POINTS) * points // 2
+    return _Kernel(heights, onward[:-1], onward[-1], work)
+
+
+@dataclass(frozen=True)
+class _Panels:
+    """
+    Pieces of the strip, ascending; arrays of shape (panels,).
+
+    Attributes:
+        left, right: Their ends.
+        has_corner: Whether what is asked has a corner at the right end; it is then smooth in the root of the distance.
+    """
+
+    left: FloatArray
+    right: FloatArray
+    has_corner: BoolArray
+
+    @property
+    def width(self) -> FloatArray:
+        """The length of each."""
+        return self.right - self.left
+
+
+def _means(origins: FloatArray, panels: _Panels, points: int) -> FloatArray:
+    """
+    Weights of the values at the points of each panel in the mean of a function at origin + square, the function being
+    zero outside the panel; array of shape (origins, panels, points).
+    """
+    tau, weights = _legendre(points + MORE_POINTS)
+    to_left, to_right = panels.left - origins[:, np.newaxis], panels.right - origins[:, np.newaxis]
+    from_, to = np.nonzero((to_right > 0.0) & (to_left < FARTHEST**2))
+    reach = np.sqrt(to_right[from_, to])[:, np.newaxis]
+    far = np.minimum(reach, FARTHEST)
+    near = np.sqrt(np.maximum(to_left[from_, to], 0.0))[:, np.newaxis]
+    # The number that is squared, thicker towards the right end, where the function has its corner.
+    back = (far - near) * tau**2
+    number = far - back
+    chance = np.exp(-0.5 * number**2) * (far - near) * (tau * weights) * (4.0 / math.sqrt(2.0 * math.pi))
+    distance = np.maximum((reach - far + back) * (reach + number), 0.0)
+    share = distance / panels.width[to, np.newaxis]
+    place = 2.0 * np.where(panels.has_corner[to, np.newaxis], np.sqrt(share), share) - 1.0
+    # Legendre coefficients of the function from its values: exact up to the degree that the points carry.
+    before, now = np.ones_like(place), place
+    moments = [np.einsum("nq,nq->n", chance, before), np.einsum("nq,nq->n", chance, now)]
+    for degree in range(1, points - 1):
+        before, now = now, ((2 * degree + 1) * place * now - degree * before) / (degree + 1)
+        moments.append(np.einsum("nq,nq->n", chance, now))
+    means = np.zeros((len(origins), len(panels.left), points))
+    means[from_, to] = np.stack(moments, axis=1) @ _coefficients(points)
+    return means
+
+
+def _panels_of(walk: _Walk, most: int) -> _Panels:
+    """Between corners, and narrower where a panel would be too wide for the squares."""
+    low, high, fall = walk.low, walk.high, walk.fall
+    width = high - low
+    sharp = math.floor(min(most + fall * fall / 4.0, width / fall))
+    if sharp > MOST_NODES:
+        raise TooMuchWork(MOST_NODES, "quadrature points")
+    corners = low + fall * np.arange(sharp + 1.0)
+    if walk.last is not None:
+        first = math.ceil(low / fall)
+        corners = np.append(corners, fall * np.arange(max(1, first), max(1, first) + sharp + 1.0))
+    inner = np.unique(corners[(corners > low) & (corners < high)])
+    # Corners of two kinds that fall together are one.
+    inner = inner[np.diff(inner, prepend=low) > 1e-9 * width]
+    inner = inner[high - inner > 1e-9 * width]
+    ends = [low, *inner.tolist(), high]
+    cells = [_cut(left, right, fall, is_open=right == high) for left, right in pairwise(ends)]
+    edges = np.array([low, *(edge for cell in cells for edge in cell)])
+    return _Panels(edges[:-1], edges[1:], np.isin(edges[1:], inner))
+
+
+def _cut(left: float, right: float, fall: float, *, is_open: bool) -> list[float]:
+    """The ends of the panels between two corners, ascending, the first left out: narrow at the right end."""
+    edges, distance = [right], 0.0
+    while True:
+        step = 2.0 + 2.0 * math.sqrt(distance)
+        step = min(step, WIDEST_PANEL) if fall < WIDEST_PANEL else step
+        # Above the upper line, one fall away, the function would go on with a corner of its own.
+        step = min(step, max(fall, distance)) if is_open else step
+        distance += step
+        if right - distance <= left + 0.25 * step:
+            return edges[::-1]
+        if len(edges) > MOST_NODES:
+            raise TooMuchWork(MOST_NODES, "quadrature points")
+        edges.append(right - distance)
+
+
+def _quantiles(kernel: _Kernel) -> tuple[list[float], int]:
+    """The first step after which sampling goes on with at most 1 - q, and the steps that it took."""
+    levels = [1.0 - q for q in QUANTILES]
+    alive, survival, quotient = kernel.begin, [1.0, float(kernel.begin.sum())], 0.0
+    most = max(1, MOST_WORK // len(alive) ** 2)
+    while survival[-1] > levels[-1]:
+        alive = alive @ kernel.onward
+        survival.append(float(alive.sum()))
+        before, quotient = quotient, survival[-1] / survival[-2]
+        if _is_settled(before, quotient, survival[-1]):
+            break
+        if len(survival) > most:
+            raise TooMuchWork(MOST_WORK, "multiplications")
+    reached = np.array(survival)
+    found = []
+    for level in levels:
+        if reached[-1] <= level:
+            found.append(float(np.argmax(reached <= level)))
+        else:  # from here on the probability falls by the same quotient
+            found.append(len(reached) - 1.0 + math.ceil(math.log(level / reached[-1]) / math.log(quotient)))
+    return found, len(survival)
+
+
+def _is_settled(before: float, quotient: float, alive: float) -> bool:
+    return alive < 0.5 and quotient < 1.0 and abs(quotient - before) < SETTLED * (1.0 - quotient)
+
+
+def _to_the_wall(kernel: _Kernel, now: tuple[float, float], ends: FloatArray, last: int) -> _Row:
+    """
+    Step by step to the wall.
+
+    Args:
+        kernel: The walk.
+        now: P(below) and P(above) in the first step.
+        ends: Array of shape (nodes, 4): P(below) and P(above) in a step between the lines, and in the last one.
+        last: Steps to the wall, at least 2.
+    """
+    below, above = now
+    alive, survival, step, rest = kernel.begin, [1.0], 1, 1.0
+    most = max(1, MOST_WORK // len(alive) ** 2)
+    while step < last and (rest := float(alive.sum())) > NEGLIGIBLE * 1e-1:
+        survival.append(rest)
+        step += 1
+        chances = alive @ ends
+        is_last = step == last
+        below, above = below + float(chances[2 * is_last]), above + float(chances[2 * is_last + 1])
+        alive = alive @ kernel.onward
+        if step > most:
+            raise TooMuchWork(MOST_WORK, "multiplications")
+    reached = np.array([*survival, 0.0])
+    weigh = 2.0 * np.arange(len(survival)) + 1.0
+    quantiles = [float(np.argmax(reached <= 1.0 - q)) for q in QUANTILES]
+    mean, second = float(np.sum(survival)), float(np.sum(weigh * np.array(survival)))
+    return _Row(below, above, mean, second, quantiles, kernel.work + step * len(alive) ** 2 // 2)
+
+
+@lru_cache(maxsize=16)
+def _legendre(points: int) -> tuple[FloatArray, FloatArray]:
+    """Gauss-Legendre points and weights between 0 and 1."""
+    x, weights = np.polynomial.legendre.leggauss(points)
+    return 0.5 * (x + 1.0), 0.5 * weights
+
+
+@lru_cache(maxsize=16)
+def _coefficients(points: int) -> FloatArray:
+    """Legendre coefficients of each of the functions that are 1 at one point; array of shape (degrees, points)."""
+    x, weights = np.polynomial.legendre.leggauss(points)
+    degrees = np.arange(points)[:, np.newaxis]
+    values = np.polynomial.legendre.legvander(x, points - 1).T
+    coefficients: FloatArray = (degrees + 0.5) * values * weights
+    return coefficients
