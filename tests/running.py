@@ -46,7 +46,7 @@ def free_port() -> int:
     """
     A loopback port that nothing listens on just now.
 
-    Each process that runs tests takes from a range of its own, outside of the one that connections are given ports from.
+    Each process that runs tests has a range of its own, outside of the one from which connections are given theirs.
     """
     while True:
         port = _FIRST_PORT + next(_ports) % _PORTS

@@ -14,7 +14,6 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
-
 # -zeta(1/2) / sqrt(2 pi), the mean overshoot of a normal walk in standard deviations.
 OVERSHOOT = 0.5825971579390108
 
