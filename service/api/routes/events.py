@@ -46,6 +46,7 @@ STREAM: dict[int | str, dict[str, Any]] = {
 
 @router.get(
     "/events",
+    status_code=200,
     responses={**answers_with(), **STREAM},
     response_class=EventStream,
     summary="Be told which tests change",
