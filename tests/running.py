@@ -20,7 +20,7 @@ from service.ingest.road import perform_now
 from service.storage.engine import create_engine_for
 from service.storage.migrate import upgrade
 
-START_LIMIT_SECONDS = 20.0
+START_LIMIT_SECONDS = 60.0
 
 _PORTS = 2000
 _FIRST_PORT = 20_000 + _PORTS * int(os.environ.get("PYTEST_XDIST_WORKER", "gw4").removeprefix("gw"))
