@@ -17,6 +17,7 @@ from service.api.parts import Computers, Parts
 from service.api.requests import RequestId
 from service.api.routes import administration, characteristics, events, health, observations, plans, tests
 from service.api.streams import Streams
+from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
@@ -115,6 +116,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         separate_input_output_schemas=False,
     )
     problems.install(app)
+    app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
     for module in (plans, characteristics, tests, observations, events, administration, health):

@@ -79,10 +79,8 @@ async def list_tests(
     summary="Show a test",
     dependencies=[requires(Role.VIEWER)],
 )
-async def show_test(key: str, request: Request, response: Response, parts: PartsOf) -> TestOut | Response:
-    """Where a test stands: continue, accept or reject."""
-    if (unchanged := await unchanged_test(parts, key, request)) is not None:
-        return unchanged
+async def show_test(key: str, response: Response, parts: PartsOf) -> TestOut:
+    """Where a test stands: continue, accept or reject. With the ETag of this version in `If-None-Match`, 304."""
     test, plan = await known_test(parts, key)
     response.headers["ETag"] = etag(test.version)
     return TestOut.of(test, plan)
