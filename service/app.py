@@ -1,8 +1,12 @@
 """Builds and connects everything; the only module that knows all parts."""
 
+import asyncio
 import logging
-from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
+import signal
+import threading
+from collections.abc import AsyncIterator, Callable, Iterator
+from contextlib import asynccontextmanager, contextmanager
+from types import FrameType
 
 from fastapi import FastAPI
 
@@ -11,12 +15,15 @@ from service.api.access import AccessGuard
 from service.api.description import describe
 from service.api.parts import Computers, Parts
 from service.api.requests import RequestId
-from service.api.routes import administration, characteristics, health, observations, plans, tests
+from service.api.routes import administration, characteristics, events, health, observations, plans, tests
+from service.api.streams import Streams
+from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
 from service.storage.reader import Reader
+from service.storage.watching import Watcher
 
 # Exact computations that run at once; more wait.
 COMPUTERS, MOST_WAITING = 2, 8
@@ -42,6 +49,33 @@ def set_up_log(settings: Settings) -> None:
     logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
 
 
+@contextmanager
+def at_a_signal_to_end(act: Callable[[], object]) -> Iterator[None]:
+    """
+    Act as soon as the process is told to end, and before the server does what it does then.
+
+    The server waits for open connections before it tells the application, and a stream stays open until it is told.
+    """
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    before = {number: signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)}
+
+    def end(number: int, frame: FrameType | None) -> None:
+        act()
+        handler = before[signal.Signals(number)]
+        if callable(handler):
+            handler(number, frame)
+
+    for number in before:
+        signal.signal(number, end)
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
 def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     """
     The service as an ASGI application; it opens its database when it starts.
@@ -56,11 +90,17 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         check_schema(engine)
         computers = Computers(COMPUTERS, MOST_WAITING)
         road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes)
-        app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine), computers)
+        streams, loop = Streams(settings.stream_limit), asyncio.get_running_loop()
+        watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
+        app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine), computers, streams)
         road.start()
+        watcher.start()
         try:
-            yield
+            with at_a_signal_to_end(lambda: loop.call_soon_threadsafe(streams.stop)):
+                yield
         finally:
+            streams.stop()
+            await asyncio.to_thread(watcher.stop)
             await road.stop()
             computers.stop()
             engine.dispose()
@@ -76,9 +116,10 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         separate_input_output_schemas=False,
     )
     problems.install(app)
+    app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, characteristics, tests, observations, administration, health):
+    for module in (plans, characteristics, tests, observations, events, administration, health):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]

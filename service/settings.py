@@ -17,6 +17,8 @@ class Settings(BaseSettings):
     queue_limit: int = Field(1000, ge=1, description="Submissions that may wait to be written.")
     queue_bytes: int = Field(256 * 1024 * 1024, ge=1024, description="Bytes of submissions that may wait.")
     group_limit: int = Field(256, ge=1, description="Submissions committed together.")
+    stream_limit: int = Field(100, ge=1, description="Streams of events that may be open in one process.")
+    heartbeat_seconds: float = Field(15.0, ge=1.0, le=30.0, description="Between signs of life on a quiet stream.")
     log_level: Literal["DEBUG", "INFO", "WARNING", "ERROR"] = Field("INFO", description="Level of the log.")
 
 

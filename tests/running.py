@@ -1,5 +1,7 @@
 """A real service on a real socket: the program started as a process, on a database of its own."""
 
+import contextlib
+import itertools
 import os
 import socket
 import subprocess
@@ -18,7 +20,11 @@ from service.ingest.road import perform_now
 from service.storage.engine import create_engine_for
 from service.storage.migrate import upgrade
 
-START_LIMIT_SECONDS = 20.0
+START_LIMIT_SECONDS = 60.0
+
+_PORTS = 2000
+_FIRST_PORT = 20_000 + _PORTS * int(os.environ.get("PYTEST_XDIST_WORKER", "gw4").removeprefix("gw"))
+_ports = itertools.count(os.getpid() * 7)
 
 
 @dataclass(frozen=True)
@@ -37,10 +43,16 @@ class Running:
 
 
 def free_port() -> int:
-    """A loopback port that nothing listens on just now."""
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        return int(probe.getsockname()[1])
+    """
+    A loopback port that nothing listens on just now.
+
+    Each process that runs tests has a range of its own, outside of the one from which connections are given theirs.
+    """
+    while True:
+        port = _FIRST_PORT + next(_ports) % _PORTS
+        with socket.socket() as probe, contextlib.suppress(OSError):
+            probe.bind(("127.0.0.1", port))
+            return port
 
 
 def command(*arguments: str, database_url: str, **extra: str) -> subprocess.CompletedProcess[str]:

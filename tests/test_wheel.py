@@ -41,7 +41,12 @@ def test_a_wheel_migrates_and_makes_keys_far_from_the_checkout(tmp_path: Path) -
         )
 
     where = subprocess.run(
-        [python, "-c", "import service; print(service.__file__)"], cwd=home, capture_output=True, text=True, check=True
+        [python, "-c", "import service; print(service.__file__)"],
+        cwd=home,
+        env=environment,
+        capture_output=True,
+        text=True,
+        check=True,
     )
     assert where.stdout.startswith(str(home))
     migrated = run("migrate")

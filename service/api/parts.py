@@ -4,7 +4,7 @@ import asyncio
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
-from typing import Annotated, TypeVar, cast
+from typing import TYPE_CHECKING, Annotated, TypeVar, cast
 
 from fastapi import Depends, Request
 
@@ -12,6 +12,9 @@ from service.domain.errors import TooManyQuestions
 from service.ingest.road import Clock, Road
 from service.settings import Settings
 from service.storage.reader import Reader
+
+if TYPE_CHECKING:
+    from service.api.streams import Streams
 
 T = TypeVar("T")
 
@@ -26,6 +29,7 @@ class Parts:
     clock: Clock
     check_ready: Callable[[], None]
     computers: "Computers"
+    streams: "Streams"
 
 
 async def _parts(request: Request) -> Parts:

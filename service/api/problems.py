@@ -166,6 +166,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",
     errors.TooManyQuestions: "overloaded",
+    errors.TooManyStreams: "overloaded",
     errors.DatabaseAway: "overloaded",
     errors.StorageFailed: "overloaded",
     errors.OutcomeUnknown: "outcome-unknown",

@@ -17,7 +17,8 @@ What can go wrong, without a word of HTTP.
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
-        ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway, TooManyQuestions
+        ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway
+        ├── TooManyQuestions, TooManyStreams
 """
 
 from collections.abc import Iterable, Iterator, Sequence
@@ -208,6 +209,15 @@ class TooManyQuestions(Unavailable):
 
     def __init__(self) -> None:
         super().__init__("Too many exact computations are waiting; try again shortly.")
+
+
+class TooManyStreams(Unavailable):
+    """As many streams of events are open as one process carries."""
+
+    retry_after_seconds = 15
+
+    def __init__(self, limit: int) -> None:
+        super().__init__(f"This process carries {limit} streams of events and has no more places; come back later.")
 
 
 class ShuttingDown(Unavailable):

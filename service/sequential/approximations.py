@@ -14,8 +14,6 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from scipy.optimize import brentq
-
 # -zeta(1/2) / sqrt(2 pi), the mean overshoot of a normal walk in standard deviations.
 OVERSHOOT = 0.5825971579390108
 
@@ -70,6 +68,8 @@ def approximate(motion: Motion, slope: float, lower: float, upper: float) -> App
 
 def _conjugate_root(motion: Motion, slope: float) -> float | None:
     """The root of K(t) = slope * t other than zero; it lies on the side away from the drift."""
+    from scipy.optimize import brentq  # noqa: PLC0415 - nearly half of a command's start
+
     sign = 1.0 if motion.mean < slope else -1.0
 
     def excess(t: float) -> float:

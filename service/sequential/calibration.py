@@ -20,7 +20,6 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.optimize import brentq, root
 
 from service.sequential.boundaries import Thresholds, strict
 from service.sequential.double import FloatArray
@@ -70,6 +69,8 @@ def matching(risks_at: RisksAt, stated: Risks) -> Thresholds:
     limits = strict(stated.alpha, stated.beta)
     scale = np.log([-limits.accept, limits.reject])
     aim = np.log([stated.alpha, stated.beta])
+
+    from scipy.optimize import root  # noqa: PLC0415 - nearly half of a command's start
 
     def misses(logs: FloatArray) -> FloatArray:
         within = np.clip(logs, scale + math.log(1e-3), scale + math.log(OUTERMOST))
@@ -132,6 +133,8 @@ def reject_alone(alpha_at: Callable[[float], float], stated: float, *, is_stepwi
     Raises:
         RisksNotMet: Even a far threshold exceeds it.
     """
+    from scipy.optimize import brentq  # noqa: PLC0415 - nearly half of a command's start
+
     scale = strict(stated, stated).reject
     if not is_stepwise:
 

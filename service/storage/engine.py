@@ -17,6 +17,8 @@ from service.domain.errors import DatabaseAway
 
 LOCK_WAIT_SECONDS = 30.0
 WRITES = "sprt_writes"
+# Where PostgreSQL tells that tests have changed.
+CHANNEL = "sprt_changes"
 
 
 def create_engine_for(url: str) -> Engine:

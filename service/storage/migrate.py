@@ -1,4 +1,9 @@
-"""The schema: which revision a database has, which this version knows, and how to get there."""
+"""
+The schema: which revision a database has, which this version knows, and how to get there.
+
+A revision that services of an older schema may go on running on says so in its name: `0005_since_0003` suits those that
+know 0003 or 0004. So a database is migrated first and its services are replaced one by one, while all of them run.
+"""
 
 import io
 from collections.abc import Callable
@@ -11,6 +16,8 @@ from alembic.script import ScriptDirectory
 from sqlalchemy import Connection, Engine, inspect, text
 
 from service.storage.engine import WRITES, is_sqlite
+
+SINCE = "_since_"
 
 # Any number that no other program on the same server locks by.
 ADVISORY_LOCK = 5_397_204_186
@@ -53,16 +60,22 @@ def check_known(engine: Engine) -> None:
 
 def check_schema(engine: Engine) -> None:
     """
-    Ask whether the database has the schema that this version knows.
+    Ask whether the database has the schema that this version knows, or a newer one that declares to suit it.
 
     Raises:
-        SchemaMismatch: It has none, an older or a newer one.
+        SchemaMismatch: It has none, an older one, or a newer one that this version must not run on.
     """
-    check_known(engine)
     revision, head = current_revision(engine), head_revision()
-    if revision != head:
+    if revision != head and not _suits(revision, head):
+        check_known(engine)
         has = "no schema yet" if revision is None else f"the older schema {revision}"
         raise SchemaMismatch(f"The database has {has} (wanted: {head}). Run: sprt-monitor migrate")
+
+
+def _suits(revision: str | None, head: str) -> bool:
+    """True for a newer revision that services of the schema `head` may run on; numbers in names have four digits."""
+    number, _, oldest = (revision or "").partition(SINCE)
+    return bool(oldest) and oldest <= head.partition(SINCE)[0] < number
 
 
 def upgrade(engine: Engine, revision: str = "head") -> None:

@@ -26,6 +26,7 @@ _KEY = select(tables.api_keys).where(tables.api_keys.c.digest == bindparam("dige
 _PLAN = select(tables.plans).where(tables.plans.c.name == bindparam("name"))
 _TEST = select(tables.tests).where(tables.tests.c.key == bindparam("key"))
 _VERSION = select(tables.tests.c.version).where(tables.tests.c.key == bindparam("key"))
+_LAST_CHANGE = select(func.max(tables.tests.c.change).label("last"))
 
 # No test comes so far.
 NO_END = 2**62
@@ -37,12 +38,24 @@ class TestFilters:
 
     __test__ = False
 
+    key: str | None = None
     decision: Decision | None = None
     kind: SubjectKind | None = None
     subject: str | None = None
     plan: str | None = None
     labels: tuple[tuple[str, str], ...] = ()
     updated_after: datetime | None = None
+
+
+class Change(NamedTuple):
+    """A test that has changed, as it is now; the number grows in the order in which changes became visible."""
+
+    number: int
+    key: str
+    version: int
+    decision: str
+    status: str
+    updated_at: datetime
 
 
 class Count(NamedTuple):
@@ -114,6 +127,19 @@ class Reader:
             found = found.where(tables.tests.c.key > after)
         return [rows.test_of(row) for row in self._all(found)]
 
+    def last_change(self) -> int:
+        """The number of the newest change; 0 without any."""
+        row = self._lookups.first(_LAST_CHANGE)
+        return (row["last"] if row is not None else None) or 0
+
+    def changes(self, filters: TestFilters, after: int, limit: int) -> list[Change]:
+        """Tests that match the filters and have changed since the change `after`, in the order of the changes."""
+        column = tables.tests.c
+        shown = (column.change, column.key, column.version, column.decision, column.status, column.updated_at)
+        found = _filtered_each(select(*shown), filters)
+        found = found.where(column.change > after).order_by(column.change).limit(limit)
+        return [Change(*row.values()) for row in self._all(found)]
+
     def submissions(self, test: str, after: int = 0, through: int = NO_END) -> Iterator[Submission]:
         """
         The log of a test in order: the submissions that hold its observations after `after` and up to `through`.
@@ -176,6 +202,7 @@ class Reader:
 def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
     column, labels = tables.tests.c, tables.test_labels
     equal = {
+        column.key: filters.key,
         column.decision: filters.decision,
         column.subject_kind: filters.kind,
         column.subject_name: filters.subject,
@@ -190,3 +217,25 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
     if filters.updated_after is not None:
         found = found.where(column.updated_at > filters.updated_after)
     return found
+
+
+def _filtered_each(found: Select[Any], filters: TestFilters) -> Select[Any]:
+    """
+    The same filters, but for the time, asked of each test by itself: to find a few among the few that have changed.
+
+    Appending nothing to a column keeps a planner from reading all tests that share its value; labels are looked up.
+    """
+    column, labels = tables.tests.c, tables.test_labels.c
+    equal = {
+        column.decision: filters.decision,
+        column.subject_kind: filters.kind,
+        column.subject_name: filters.subject,
+        column.plan: filters.plan,
+    }
+    for which, value in equal.items():
+        if value is not None:
+            found = found.where(which.concat("") == str(value))
+    for name, value in filters.labels:
+        own = select(labels.test).where(labels.test == column.key, labels.name == name, labels.value == value)
+        found = found.where(own.exists())
+    return found if filters.key is None else found.where(column.key == filters.key)

@@ -138,6 +138,8 @@ tests = Table(
     Column("registered_by", String(100), nullable=False),
     Column("updated_at", UtcTime, nullable=False),
     *_state_columns(),
+    # Of the last write to the test; in the order in which writes became visible. Zero until the writer numbers it.
+    Column("change", BigInteger, nullable=False, server_default="0"),
     PrimaryKeyConstraint("key"),
     ForeignKeyConstraint(["plan"], ["plans.name"]),
     CheckConstraint("subject_kind IN ('lot', 'experiment')", name="subject_kind"),
@@ -146,6 +148,7 @@ tests = Table(
     Index(None, "plan", "key"),
     Index(None, "subject_name", "key"),
     Index(None, "updated_at"),
+    Index(None, "change"),
     Index(None, "subject_kind", "status", "decision"),
 )
 

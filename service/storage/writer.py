@@ -3,6 +3,10 @@ Writes, inside one transaction that `writing` opens and commits.
 
 What a group of commands reads is fetched at once, and what they append to the log is written at once, before the
 commit; in between the group sees its own entries. So a group costs a few statements, however many commands it has.
+
+Every changed test is given a number just before the commit. On PostgreSQL one lock is held from there to the end of the
+transaction, so that numbers grow in the order in which changes become visible: whoever has seen one has seen all below.
+It is the last lock that a transaction takes, so that nobody waits for another one while holding it.
 """
 
 from collections.abc import Iterable, Iterator, Mapping, Sequence
@@ -17,6 +21,7 @@ from sqlalchemy import (
     RowMapping,
     Select,
     bindparam,
+    func,
     insert,
     select,
     text,
@@ -28,7 +33,10 @@ from service.domain.access import AccessKey
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Submission
 from service.storage import rows, tables
-from service.storage.engine import WRITES
+from service.storage.engine import CHANNEL, WRITES, is_sqlite
+
+# Any number that no other program on the same server locks by, and not that of the migrations.
+NUMBERING_LOCK = 5_397_204_187
 
 # Values in one IN list; SQLite takes 999 parameters at the least.
 MOST_AT_ONCE = 400
@@ -49,6 +57,7 @@ _REPEATED = select(tables.submissions).where(
 _UNITS = select(tables.units.c.unit, tables.units.c.sequence).where(
     tables.units.c.test == bindparam("test"), tables.units.c.unit.in_(bindparam("units", expanding=True))
 )
+_LAST_CHANGE = select(func.max(tables.tests.c.change))
 _SAVE = update(tables.tests).where(tables.tests.c.key == bindparam("which"))
 
 Pair = tuple[str, str]
@@ -62,6 +71,7 @@ class Writer:
         self._connection = connection
         self._tests: dict[str, SequentialTest] = {}
         self._saved: set[str] = set()
+        self._added: set[str] = set()
         self._repeated: dict[Pair, Submission | None] = {}
         self._appended: list[Submission] = []
         self._units: dict[str, dict[str, int]] = {}
@@ -111,6 +121,7 @@ class Writer:
     def add_test(self, test: SequentialTest) -> None:
         """A new test with its labels."""
         self._connection.execute(insert(tables.tests), rows.row_of_test(test))
+        self._added.add(test.key)
         labels = [{"test": test.key, "name": name, "value": value} for name, value in test.labels.items()]
         if labels:
             self._connection.execute(insert(tables.test_labels), labels)
@@ -158,20 +169,34 @@ class Writer:
         ]
         self._many(insert(tables.units), units)
         moved = [self._tests[key] for key in sorted(self._saved)]
+        added = sorted(self._added - self._saved)
+        first = self._next_change() if moved or added else 0
+        self._many(_SAVE, [{"which": key, "change": first + i} for i, key in enumerate(added)])
         self._many(
             _SAVE,
             [
                 {
                     "which": test.key,
+                    "change": number,
                     "status": test.status.value,
                     "version": test.version,
                     "updated_at": test.updated_at,
                     **rows.row_of_state(test.state),
                 }
-                for test in moved
+                for number, test in enumerate(moved, first + len(added))
             ],
         )
-        self._appended, self._saved, self._units = [], set(), {}
+        self._appended, self._saved, self._added, self._units = [], set(), set(), {}
+
+    def _next_change(self) -> int:
+        """The next number; PostgreSQL tells those who listen once the transaction is committed."""
+        if is_sqlite(self._connection.engine):
+            last = self._connection.execute(_LAST_CHANGE).scalar()
+        else:
+            # Two statements: the second must see what was committed while the first waited.
+            self._connection.execute(select(func.pg_advisory_xact_lock(NUMBERING_LOCK)))
+            last = self._connection.execute(_LAST_CHANGE.add_columns(func.pg_notify(CHANNEL, ""))).scalar()
+        return (last or 0) + 1
 
     def _many(self, statement: Executable, parameters: list[dict[str, Any]]) -> None:
         if parameters:

@@ -1,11 +1,15 @@
 """JSON that is sound, and JSON that no form could be."""
 
+import json
+import sys
 from typing import Any
 
 import pytest
+from hypothesis import example, given
+from hypothesis import strategies as st
 from pydantic import ValidationError
 
-from service.api.decoding import decoded
+from service.api.decoding import UnfitNumber, decoded
 from service.api.problems import RequestProblem
 from service.api.schemas.observations import ObservationsForm
 
@@ -50,3 +54,37 @@ def test_a_number_that_a_double_cannot_hold_is_named(number: str) -> None:
 @pytest.mark.parametrize("number", ["0", "0.0", "-0.0", "0e5", "0.000", "1e-300", "2.2250738585072014e-308", "1E+5"])
 def test_zeros_and_plain_numbers_stay_what_they_are(number: str) -> None:
     assert decoded(number.encode(), longest_list=3) == float(number)
+
+
+def outcome(text: str) -> Any:
+    """What the decoder makes of a text, or that it refuses it."""
+    try:
+        return decoded(text.encode(), longest_list=10)
+    except RequestProblem as refusal:
+        return refusal.name
+
+
+@given(st.lists(st.one_of(st.floats(allow_nan=False, allow_infinity=False), st.integers()), max_size=8))
+def test_plain_lists_of_numbers_are_read_to_the_bit(numbers: list[float]) -> None:
+    text = json.dumps({"values": numbers})
+    found = outcome(text)["values"]
+    assert list(map(repr, found)) == list(map(repr, json.loads(text, parse_float=found_or)["values"]))
+
+
+def found_or(text: str) -> Any:
+    """The nearest double, unless the service calls the number unfit."""
+    number = float(text)
+    return number if number == 0.0 or abs(number) >= sys.float_info.min else UnfitNumber(text)
+
+
+@given(st.text(alphabet="0159.,-+[]{}: eE\t\n\u00a0", max_size=12))
+@example("1,,2").via("two commas")
+@example("01").via("a leading zero")
+@example("1.").via("no fraction")
+@example("-").via("a sign alone")
+@example("1 2").via("no comma")
+@example("[1]").via("a nested list")
+def test_both_decoders_refuse_the_same(inside: str) -> None:
+    """A member more takes a body off the fast way; what it says of the list must not depend on it."""
+    fast, slow = outcome(f'{{"values":[{inside}]}}'), outcome(f'{{"values":[{inside}],"x":0}}')
+    assert repr(fast) == repr({"values": slow["values"]} if isinstance(slow, dict) and "values" in slow else slow)

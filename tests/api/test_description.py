@@ -4,7 +4,16 @@ import httpx
 import pytest
 
 from service.api import problems
-from service.api.schemas import administration, assumptions, characteristics, observations, outlook, plans, tests
+from service.api.schemas import (
+    administration,
+    assumptions,
+    characteristics,
+    events,
+    observations,
+    outlook,
+    plans,
+    tests,
+)
 from service.api.schemas.common import Answer
 from service.domain import errors
 from service.domain.errors import DomainError
@@ -65,13 +74,17 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
     schemas = description["components"]["schemas"]
     models = {
         model.__name__: model
-        for module in (administration, assumptions, characteristics, observations, outlook, plans, tests)
+        for module in (administration, assumptions, characteristics, events, observations, outlook, plans, tests)
         for model in vars(module).values()
         if isinstance(model, type) and issubclass(model, Answer)
     }
     for name, operation in operations(description):
         for status, response in operation["responses"].items():
-            if int(status) < 300:
+            if "text/event-stream" in response["content"]:
+                told = response["content"]["text/event-stream"]["example"]
+                (data,) = (line.removeprefix("data: ") for line in told.splitlines() if line.startswith("data: "))
+                events.TestEventOut.model_validate_json(data)
+            elif int(status) < 300:
                 schema = response["content"]["application/json"]["schema"]
                 for choice in schema.get("anyOf", [schema]):
                     model = choice["$ref"].rpartition("/")[2]

@@ -7,6 +7,7 @@ import httpx
 import pytest
 
 from tests.api.examples import SEAL, Namer, pointers, with_plan, with_test
+from tests.running import Running
 
 
 def test_a_registered_test_asks_for_an_observation(admin: httpx.Client, new_name: Namer) -> None:
@@ -133,3 +134,20 @@ def test_an_unknown_name_is_404_everywhere(admin: httpx.Client, name: str) -> No
     assert admin.get(f"/v1/plans/{name}").status_code == 404
     assert admin.post(f"/v1/tests/{name}/observations", json={"values": [0]}).status_code == 404
     assert admin.delete(f"/v1/keys/{name}").status_code == 404
+
+
+def test_who_has_the_present_version_is_told_so_and_nobody_else(
+    service: Running, admin: httpx.Client, new_name: Namer
+) -> None:
+    key = with_test(admin, new_name, SEAL)
+    tag = admin.get(f"/v1/tests/{key}").headers["ETag"]
+    for given, status in ((tag, 304), (f'"x", W/{tag}', 304), ("*", 304), ('"0"', 200)):
+        answer = admin.get(f"/v1/tests/{key}", headers={"If-None-Match": given})
+        assert (answer.status_code, answer.headers["ETag"]) == (status, tag), given
+        assert answer.headers["X-Request-Id"]
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [0]}).raise_for_status()
+    assert admin.get(f"/v1/tests/{key}", headers={"If-None-Match": tag}).status_code == 200
+    for path in ("nowhere", "a%00b", f"{key}/nowhere", ""):
+        assert admin.get(f"/v1/tests/{path}", headers={"If-None-Match": "*"}).status_code in {404, 307}, path
+    with service.client(None) as nobody:
+        assert nobody.get(f"/v1/tests/{key}", headers={"If-None-Match": "*"}).status_code == 401

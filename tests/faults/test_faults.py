@@ -120,6 +120,9 @@ def test_a_database_that_goes_away_and_comes_back() -> None:
         server.stop()
         time.sleep(1.0)
         assert httpx.get(f"{service.url}/readyz", timeout=30).status_code == 503
+        with service.client() as client:
+            conditional = client.get("/v1/tests/lot-0", headers={"If-None-Match": '"1"'})
+            assert (conditional.status_code, conditional.headers["Retry-After"]) == (503, "5")
         server.start()
         time.sleep(1.0)
         before = sum(len(station.acknowledged) for station in fleet.stations)

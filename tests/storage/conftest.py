@@ -1,4 +1,4 @@
-"""Every test of storage runs on both databases."""
+"""Every test of storage runs on both databases, and on two versions of PostgreSQL where there are two."""
 
 from collections.abc import Iterator
 from pathlib import Path
@@ -8,10 +8,12 @@ from sqlalchemy import Engine
 
 from service.storage.engine import create_engine_for
 from service.storage.migrate import upgrade
-from tests.postgres import fresh_database
+from tests.postgres import fresh_database, has_an_older_one
+
+DATABASES = ["sqlite", "postgresql", *(["oldest-postgresql"] if has_an_older_one() else [])]
 
 
-@pytest.fixture(params=["sqlite", "postgresql"])
+@pytest.fixture(params=DATABASES)
 def empty(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[Engine]:
     """An empty database of each kind."""
     if request.param == "sqlite":
@@ -19,7 +21,8 @@ def empty(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[Engine]:
         yield engine
         engine.dispose()
         return
-    with fresh_database(request.getfixturevalue("server")) as url:
+    name = "server" if request.param == "postgresql" else "oldest_server"
+    with fresh_database(request.getfixturevalue(name)) as url:
         engine = create_engine_for(url)
         yield engine
         engine.dispose()

@@ -1,5 +1,7 @@
 """The schema comes from the migrations, on both databases."""
 
+from datetime import timedelta
+
 import pytest
 from alembic.autogenerate import compare_metadata
 from alembic.runtime.migration import MigrationContext
@@ -7,6 +9,7 @@ from sqlalchemy import Engine, inspect, text
 
 from service.storage.migrate import (
     SchemaMismatch,
+    check_known,
     check_schema,
     current_revision,
     downgrade,
@@ -16,7 +19,8 @@ from service.storage.migrate import (
 )
 from service.storage.reader import Reader, TestFilters
 from service.storage.tables import metadata
-from tests.storage.test_storage import a_test, add
+from tests.documents import TOP
+from tests.storage.test_storage import NOW, a_test, add
 
 
 def test_the_tables_and_the_migrations_agree(engine: Engine) -> None:
@@ -47,6 +51,47 @@ def test_an_unknown_schema_is_named(engine: Engine) -> None:
         connection.execute(text("UPDATE alembic_version SET version_num = '9999'"))
     with pytest.raises(SchemaMismatch, match=r"9999.*does not know"):
         check_schema(engine)
+
+
+@pytest.mark.parametrize(("found", "suits"), [("since {}", True), ("since 0001", True), ("since 9998", False)])
+def test_a_newer_schema_that_suits_this_version_is_served(engine: Engine, found: str, suits: bool) -> None:  # noqa: FBT001
+    number = head_revision()[:4]
+    name = f"9999_{found.format(number).replace(' ', '_')}"
+    with engine.begin() as connection:
+        connection.execute(text("UPDATE alembic_version SET version_num = :name"), {"name": name})
+    if suits:
+        check_schema(engine)
+    else:
+        with pytest.raises(SchemaMismatch, match=rf"{name}.*does not know"):
+            check_schema(engine)
+    with pytest.raises(SchemaMismatch, match=rf"{name}.*does not know"):
+        check_known(engine)
+
+
+def test_an_older_schema_is_served_by_none_however_it_is_named(engine: Engine) -> None:
+    with engine.begin() as connection:
+        connection.execute(text("UPDATE alembic_version SET version_num = '0000_since_0000'"))
+    with pytest.raises(SchemaMismatch):
+        check_schema(engine)
+
+
+def test_every_revision_is_numbered_in_order() -> None:
+    names = sorted(path.name for path in (TOP / "migrations" / "versions").glob("*.py"))
+    assert [name[:5] for name in names] == [f"{number:04}_" for number in range(1, len(names) + 1)]
+    assert head_revision()[:4] == f"{len(names):04}"
+
+
+def test_tests_from_before_are_numbered_by_their_last_change(engine: Engine) -> None:
+    add(engine, *(a_test(key, updated_at=NOW + timedelta(hours=hour)) for key, hour in (("b", 2), ("a", 3), ("c", 1))))
+    downgrade(engine, "0001")
+    upgrade(engine)
+    assert [(change.number, change.key) for change in Reader(engine).changes(TestFilters(), 0, 9)] == [
+        (1, "c"),
+        (2, "b"),
+        (3, "a"),
+    ]
+    add(engine, a_test("d"))
+    assert Reader(engine).last_change() == 4
 
 
 def test_a_database_at_the_base_says_what_to_run(engine: Engine) -> None:

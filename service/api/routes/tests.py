@@ -1,61 +1,45 @@
 """Tests: register, list, show."""
 
+from dataclasses import replace
 from typing import Annotated, cast
 
 from fastapi import APIRouter, Query, Request, Response
-from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.conditional import etag, expected_versions
 from service.api.description import answers_with
+from service.api.filters import FiltersQuery
 from service.api.lookup import known_test, unchanged_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import Parts, PartsOf, computing, reading
-from service.api.problems import RequestProblem
 from service.api.schemas.assumptions import AssumptionsOut
-from service.api.schemas.common import Label, Moment, Name, Text
+from service.api.schemas.common import Moment
 from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
 from service.domain.assumptions import assumptions_of, stretch_of
-from service.domain.errors import Fault
 from service.domain.outlook import outlook_of
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
-from service.domain.sequential_test import SequentialTest, SubjectKind
-from service.domain.state import Decision
+from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import RegisteredTest, RegisterTest
 from service.storage.reader import TestFilters
 
 router = APIRouter(prefix="/v1/tests", tags=["tests"], route_class=StrictRoute)
 
 
-class TestsQuery(BaseModel):
+class TestsQuery(FiltersQuery):
     """The filters and the page of the list."""
 
     __test__ = False
-    model_config = ConfigDict(extra="forbid")
-
-    decision: Decision | None = None
-    kind: SubjectKind | None = None
-    subject: Annotated[Text | None, Field(description="Exact name of the subject.")] = None
-    plan: Name | None = None
-    label: Annotated[list[Label], Field(max_length=20, description="name:value; all of them must match.")] = []
     updated_after: Moment | None = None
     limit: Limit = 100
     cursor: Cursor = None
 
     def filters(self) -> TestFilters:
         """For the reader."""
-        return TestFilters(
-            decision=self.decision,
-            kind=self.kind,
-            subject=self.subject,
-            plan=self.plan,
-            labels=tuple(_label(text, position) for position, text in enumerate(self.label)),
-            updated_after=self.updated_after,
-        )
+        return replace(super().filters(), updated_after=self.updated_after)
 
 
 @router.post(
@@ -100,10 +84,8 @@ async def list_tests(
     summary="Show a test",
     dependencies=[requires(Role.VIEWER)],
 )
-async def show_test(key: str, request: Request, response: Response, parts: PartsOf) -> TestOut | Response:
-    """Where a test stands: continue, accept or reject."""
-    if (unchanged := await unchanged_test(parts, key, request)) is not None:
-        return unchanged
+async def show_test(key: str, response: Response, parts: PartsOf) -> TestOut:
+    """Where a test stands: continue, accept or reject. With the ETag of this version in `If-None-Match`, 304."""
     test, plan = await known_test(parts, key)
     response.headers["ETag"] = etag(test.version)
     return TestOut.of(test, plan)
@@ -155,11 +137,3 @@ def _page(parts: Parts, filters: TestFilters, after: str | None, limit: int) -> 
     plans = {name: parts.reader.plan(name) for name in {test.plan for test in page}}
     items = [TestOut.of(test, plan) for test in page if (plan := plans[test.plan]) is not None]
     return items, encoded(page[-1].key) if len(tests) > len(page) else None
-
-
-def _label(text: str, position: int) -> tuple[str, str]:
-    name, colon, value = text.partition(":")
-    if not (name and colon and value):
-        fault = Fault(f"/label/{position}", f"must have the form name:value; received {text!r}")
-        raise RequestProblem("invalid-parameter", "A parameter cannot be right; see errors.", [fault])
-    return name, value
