@@ -39,6 +39,8 @@ FARTHEST = 9.0
 WIDEST_PANEL = 6.0
 # Variances beyond these multiples of the slope are as these.
 SMALLEST, LARGEST = 1e-100, 1e100
+# Pairs of an origin and a panel that are worked on at once: their numbers stay near the processor.
+BLOCK = 300
 # Probability that a walk ever rises beyond where it is followed.
 NEVER = 1e-16
 NEGLIGIBLE = 1e-15
@@ -286,28 +288,45 @@ def _means(origins: FloatArray, panels: _Panels, points: int) -> FloatArray:
     Weights of the values at the points of each panel in the mean of a function at origin + square, the function being
     zero outside the panel; array of shape (origins, panels, points).
     """
-    tau, weights = _legendre(points + MORE_POINTS)
     to_left, to_right = panels.left - origins[:, np.newaxis], panels.right - origins[:, np.newaxis]
-    from_, to = np.nonzero((to_right > 0.0) & (to_left < FARTHEST**2))
-    reach = np.sqrt(to_right[from_, to])[:, np.newaxis]
+    origin, panel = np.nonzero((to_right > 0.0) & (to_left < FARTHEST**2))
+    means = np.zeros((len(origins), len(panels.left), points))
+    for begin in range(0, len(origin), BLOCK):
+        some = origin[begin : begin + BLOCK], panel[begin : begin + BLOCK]
+        means[some] = _weights(to_left[some], to_right[some], panels.has_corner[some[1]], points)
+    return means
+
+
+def _weights(to_left: FloatArray, to_right: FloatArray, has_corner: BoolArray, points: int) -> FloatArray:
+    """
+    The same for pairs of an origin and a panel.
+
+    Args:
+        to_left, to_right: Arrays of shape (pairs,): from the origin to the ends of the panel; not all of it lies below.
+        has_corner: Array of shape (pairs,).
+        points: Of the panel.
+
+    Returns:
+        Array of shape (pairs, points).
+    """
+    tau, weights = _legendre(points + MORE_POINTS)
+    reach, near = np.sqrt(to_right)[:, np.newaxis], np.sqrt(np.maximum(to_left, 0.0))[:, np.newaxis]
     far = np.minimum(reach, FARTHEST)
-    near = np.sqrt(np.maximum(to_left[from_, to], 0.0))[:, np.newaxis]
-    # The number that is squared, thicker towards the right end, where the function has its corner.
+    # The number that is squared, thicker towards the right end, where the function may have its corner.
     back = (far - near) * tau**2
     number = far - back
     chance = np.exp(-0.5 * number**2) * (far - near) * (tau * weights) * (4.0 / math.sqrt(2.0 * math.pi))
     distance = np.maximum((reach - far + back) * (reach + number), 0.0)
-    share = distance / panels.width[to, np.newaxis]
-    place = 2.0 * np.where(panels.has_corner[to, np.newaxis], np.sqrt(share), share) - 1.0
+    share = distance / (to_right - to_left)[:, np.newaxis]
+    place = 2.0 * np.where(has_corner[:, np.newaxis], np.sqrt(share), share) - 1.0
     # Legendre coefficients of the function from its values: exact up to the degree that the points carry.
     before, now = np.ones_like(place), place
     moments = [np.einsum("nq,nq->n", chance, before), np.einsum("nq,nq->n", chance, now)]
     for degree in range(1, points - 1):
         before, now = now, ((2 * degree + 1) * place * now - degree * before) / (degree + 1)
         moments.append(np.einsum("nq,nq->n", chance, now))
-    means = np.zeros((len(origins), len(panels.left), points))
-    means[from_, to] = np.stack(moments, axis=1) @ _coefficients(points)
-    return means
+    found: FloatArray = np.stack(moments, axis=1) @ _coefficients(points)
+    return found
 
 
 def _panels_of(walk: _Walk, most: int) -> _Panels:
