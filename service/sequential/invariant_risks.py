@@ -8,9 +8,9 @@ with its likelihood over that of the whole mixture, a weight that never exceeds 
 rejections come from the courses of H1, where they are usual. Deviations of quantities with known means are taken out
 by least squares: the weights of each part (mean 1), and within a part the sum, its square and the squares less what
 they are expected to be at the decision (mean 0).
-Accuracy: the standard error stated with each figure; at least one over the number of courses, nothing rarer being
-seen.
-Cost: about 0.2 microseconds for each look of each course.
+Accuracy: the standard error stated with each figure; for probabilities at least what one course of the heaviest weight
+seen would add, for what has not been seen.
+Cost: about 0.1 microseconds for each look of each course, weights included.
 Source: Wald (1947), Sequential Analysis, appendix A.2 (the likelihood identity, and the mean of the sums); Cox
 (1952), Proceedings of the Cambridge Philosophical Society 48, 290-299 (the ratio of the last t is that of all);
 Siegmund (1976), Annals of Statistics 4, 673-684 (importance sampling of sequential tests); Owen and Zhou (2000),
@@ -217,8 +217,13 @@ class _Mixture:
         reached = np.searchsorted(np.cumsum(share), np.array(QUANTILES) - 1e-12)
         quantiles = tuple(float(seen[min(i, len(seen) - 1)]) for i in reached)
         bounded = min(max(rejection.value, 0.0), 1.0)
-        error = max(rejection.standard_error, 1.0 / self.courses)
+        error = max(rejection.standard_error, self._floor(weights))
         return Point(delta, Estimate(bounded, error), mean, deviation, quantiles)
+
+    def _floor(self, weights: FloatArray) -> float:
+        """What one more course could add to the rarer of the decisions, going by the heaviest seen; never zero."""
+        heaviest = [float(np.max(weights, where=side, initial=0.0)) for side in (self._is_rejected, ~self._is_rejected)]
+        return (min(heaviest) or 1.0) / self.courses
 
     def _estimate(self, values: FloatArray) -> Estimate:
         """The mean of the mixture, cleared of what the controls explain, and its standard error."""

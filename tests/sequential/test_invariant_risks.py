@@ -58,7 +58,7 @@ def test_short_tests_do_what_their_chain_says(
     grid = 1e-4 if is_long else 3e-4
     test = invariant_test(invariant_ratio(*deltas, sides), Thresholds(*thresholds), 1, last)
     at = (*deltas, 0.4)
-    found = simulated(test, at, 5, Effort(2e-4 if is_long else 1.5e-3))
+    found = simulated(test, at, 5, Effort(3e-4 if is_long else 1.5e-3))
     for delta, point in zip(at, found.points, strict=True):
         allowed = SIGMAS * point.rejection.standard_error + grid
         assert abs(point.rejection.value - chain.rejection(delta)) < allowed
@@ -106,7 +106,7 @@ def plainly(test: InvariantTest, delta: float, courses: int, seed: int) -> tuple
     ],
 )
 def test_importance_sampling_agrees_with_plain_simulation(test: InvariantTest, request: pytest.FixtureRequest) -> None:
-    courses, at = 20_000 if request.config.getoption("--long") else 2000, (test.ratio.delta0, 0.6, test.ratio.delta1)
+    courses, at = 8000 if request.config.getoption("--long") else 2000, (test.ratio.delta0, 0.6, test.ratio.delta1)
     found = simulated(test, at, 11, Effort(2e-3))
     for delta, point in zip(at, found.points, strict=True):
         rejected, numbers = plainly(test, delta, courses, 77)
