@@ -8,7 +8,7 @@ against the nearest point of the other hypothesis, over all sigma, times the ave
 information of the decision itself.
 Accuracy: rounding.
 Cost: a few operations.
-Source: Wald (1947), Sequential Analysis, appendix A.7, inequality for the average sample number of any test;
+Source: Wald (1947), Sequential Analysis, appendix, inequality for the average sample number of any test;
 Hoeffding (1953), Annals of Mathematical Statistics 24, 127-130; the smallest information over sigma by setting its
 derivative to zero: for a true delta against 0 it is ln(1 + delta**2)/2, for a true 0 against delta it is delta**2/2.
 """

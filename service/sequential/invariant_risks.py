@@ -11,7 +11,7 @@ they are expected to be at the decision (mean 0).
 Accuracy: the standard error stated with each figure; for probabilities at least what one course of the heaviest weight
 seen would add, for what has not been seen.
 Cost: about 0.1 microseconds for each look of each course, weights included.
-Source: Wald (1947), Sequential Analysis, appendix A.2 (the likelihood identity, and the mean of the sums); Cox
+Source: Wald (1947), Sequential Analysis, appendix (the likelihood identity, and the mean of the sums); Cox
 (1952), Proceedings of the Cambridge Philosophical Society 48, 290-299 (the ratio of the last t is that of all);
 Siegmund (1976), Annals of Statistics 4, 673-684 (importance sampling of sequential tests); Owen and Zhou (2000),
 Journal of the American Statistical Association 95, 135-143 (mixtures with controls).
