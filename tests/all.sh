@@ -19,7 +19,7 @@ mypy
 echo "== imports keep to the house"
 lint-imports
 echo "== tests"
-# On two processes, each with a service, a database server and ports of its own; alone where figures are taken or shown.
+# On two processes, each with a service and a database server of its own; alone where figures are taken or shown.
 case " $* " in
 *" benchmark "* | *" -s "*) processes=0 ;;
 *) processes=2 ;;

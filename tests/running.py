@@ -1,8 +1,8 @@
 """A real service on a real socket: the program started as a process, on a database of its own."""
 
 import contextlib
-import itertools
 import os
+import random
 import socket
 import subprocess
 import sys
@@ -22,9 +22,7 @@ from service.storage.migrate import upgrade
 
 START_LIMIT_SECONDS = 60.0
 
-_PORTS = 2000
-_FIRST_PORT = 20_000 + _PORTS * int(os.environ.get("PYTEST_XDIST_WORKER", "gw4").removeprefix("gw"))
-_ports = itertools.count(os.getpid() * 7)
+PORTS = (12_000, 32_000)
 
 
 @dataclass(frozen=True)
@@ -46,10 +44,11 @@ def free_port() -> int:
     """
     A loopback port that nothing listens on just now.
 
-    Each process that runs tests has a range of its own, outside of the one from which connections are given theirs.
+    Chosen at random, because others who run tests on the machine choose too before what they started listens; outside
+    of the range from which connections are given theirs.
     """
     while True:
-        port = _FIRST_PORT + next(_ports) % _PORTS
+        port = random.SystemRandom().randrange(*PORTS)
         with socket.socket() as probe, contextlib.suppress(OSError):
             probe.bind(("127.0.0.1", port))
             return port

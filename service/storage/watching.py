@@ -30,6 +30,7 @@ class Watcher:
     def __init__(self, engine: Engine, wake: Callable[[], object]) -> None:
         self._engine, self._wake = engine, wake
         self._is_stopped = threading.Event()
+        self._is_away = False
         self._thread = threading.Thread(target=self._run, name="watcher", daemon=True)
 
     def start(self) -> None:
@@ -43,14 +44,13 @@ class Watcher:
 
     def _run(self) -> None:
         watch = self._watch_file if is_sqlite(self._engine) else self._listen
-        is_away = False
         while not self._is_stopped.is_set():
             try:
                 watch()
             except (SQLAlchemyError, psycopg.Error) as error:
-                if not is_away:
+                if not self._is_away:
                     logger.warning("changes are not watched until the database answers: %s", error)
-                is_away = True
+                self._is_away = True
                 self._is_stopped.wait(AGAIN_SECONDS)
 
     def _watch_file(self) -> None:
@@ -58,6 +58,7 @@ class Watcher:
             seen = None
             while not self._is_stopped.is_set():
                 count = connection.exec_driver_sql("PRAGMA data_version").scalar()
+                self._is_away = False
                 if count != seen:
                     self._wake()
                 seen = count
@@ -67,6 +68,7 @@ class Watcher:
         address = self._engine.url.set(drivername="postgresql").render_as_string(hide_password=False)
         with psycopg.connect(address, autocommit=True) as connection:
             connection.execute(f"LISTEN {CHANNEL}")
+            self._is_away = False
             self._wake()  # for what was missed until now
             while not self._is_stopped.is_set():
                 for _ in connection.notifies(timeout=AGAIN_SECONDS, stop_after=1):

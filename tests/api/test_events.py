@@ -1,5 +1,6 @@
 """Streams of changed tests over a real socket, on both databases."""
 
+import asyncio
 import contextlib
 import json
 import os
@@ -7,7 +8,7 @@ import re
 import socket
 import subprocess
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import AsyncIterator, Callable, Iterator
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
@@ -16,6 +17,7 @@ import httpx
 import pytest
 from sqlalchemy.engine import URL
 
+from service.api import streams
 from tests.api.examples import SEAL, Namer, pointers, with_plan
 from tests.documents import README, blocks
 from tests.postgres import fresh_database, own_server
@@ -259,6 +261,25 @@ def test_a_caller_who_does_not_read_holds_up_nobody(watched: Running, engineer: 
             for version in range(2, 10):
                 post(engineer, key, [0])
                 stream.until(key, version)
+
+
+def test_a_caller_who_takes_nothing_for_long_loses_the_place(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(streams, "PATIENCE_SECONDS", 0.1)
+    left = []
+
+    async def told() -> AsyncIterator[str]:
+        yield "retry: 3000\n\n"
+
+    async def never(*_: Any) -> Any:
+        await asyncio.Event().wait()
+
+    async def run() -> None:
+        stream = streams.EventStream(told(), lambda: left.append("place"))
+        async with asyncio.timeout(5.0):
+            await stream({"type": "http", "asgi": {"spec_version": "2.3"}}, never, never)
+
+    asyncio.run(run())
+    assert left == ["place"]
 
 
 def test_a_stream_resumes_after_a_restart_which_does_not_wait_for_it(
