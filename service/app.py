@@ -11,7 +11,7 @@ from service.api.access import AccessGuard
 from service.api.description import describe
 from service.api.parts import Computers, Parts
 from service.api.requests import RequestId
-from service.api.routes import administration, characteristics, health, observations, plans, tests
+from service.api.routes import administration, characteristics, health, inference, observations, plans, tests
 from service.ingest.road import Clock, Road, utc_now
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
@@ -78,7 +78,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     problems.install(app)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, characteristics, tests, observations, administration, health):
+    for module in (plans, characteristics, tests, observations, inference, administration, health):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]

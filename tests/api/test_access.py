@@ -29,6 +29,7 @@ LEAST_ROLE = {
     ("GET", "/v1/tests/{key}/observations"): "viewer",
     ("GET", "/v1/tests/{key}/path"): "viewer",
     ("GET", "/v1/tests/{key}/outlook"): "viewer",
+    ("GET", "/v1/tests/{key}/inference"): "viewer",
     ("GET", "/v1/summary"): "viewer",
     ("GET", "/v1/keys"): "administrator",
     ("POST", "/v1/keys"): "administrator",

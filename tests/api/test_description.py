@@ -4,7 +4,7 @@ import httpx
 import pytest
 
 from service.api import problems
-from service.api.schemas import administration, characteristics, observations, outlook, plans, tests
+from service.api.schemas import administration, characteristics, inference, observations, outlook, plans, tests
 from service.api.schemas.common import Answer
 from service.domain import errors
 from service.domain.errors import DomainError
@@ -60,7 +60,7 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
     schemas = description["components"]["schemas"]
     models = {
         model.__name__: model
-        for module in (administration, characteristics, observations, outlook, plans, tests)
+        for module in (administration, characteristics, inference, observations, outlook, plans, tests)
         for model in vars(module).values()
         if isinstance(model, type) and issubclass(model, Answer)
     }

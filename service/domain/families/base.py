@@ -12,9 +12,10 @@ from numpy.typing import NDArray
 
 from service.domain.errors import Fault, InvalidObservations
 from service.sequential.approximations import Motion
-from service.sequential.double import FloatArray
+from service.sequential.double import Double, FloatArray
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Region, Span
 
@@ -88,6 +89,23 @@ class Column:
         return [Fault(self.pointer(int(i)), f"{rule}; received {_plain(self.values[i])}") for i in broken]
 
 
+@dataclass(frozen=True)
+class End:
+    """
+    Where a test ended, for inference.
+
+    Attributes:
+        looks: Array of shape (looks,): the progress at each look taken, the deciding one last; for families watched in
+            time only that one.
+        total: The total at the end.
+        is_above: It ended above the region, or at the wall on that side; else below.
+    """
+
+    looks: FloatArray
+    total: Double
+    is_above: bool
+
+
 class TableKind(StrEnum):
     """What the rows of a table run over."""
 
@@ -112,6 +130,7 @@ class Family(ABC):
         is_watched_in_time: The region is watched between reports, not only at their ends.
         parameter_lowers_total: Large parameters make small totals.
         table: The rows of a table for this family, if a plan may be given as one.
+        no_unbiased_estimate: Why the parameter has no unbiased estimate, where it has none.
     """
 
     name: ClassVar[str]
@@ -126,6 +145,7 @@ class Family(ABC):
     is_watched_in_time: ClassVar[bool] = False
     parameter_lowers_total: ClassVar[bool] = False
     table: ClassVar[TableKind | None] = None
+    no_unbiased_estimate: ClassVar[str | None] = None
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -185,6 +205,27 @@ class Family(ABC):
         self, lower: float, upper: float, risks: tuple[float, float], known: Mapping[str, float]
     ) -> FixedSample | None:
         """The smallest fixed sample; `lower` is the hypothesis of small totals, `risks` are in that order."""
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """An end among all that could have come, None where the family does not follow them."""
+        return None
+
+    def of_mean(self, mean: float) -> float:
+        """The parameter under which one unit of progress has this mean, infinite where it lies beyond the range."""
+        return mean
+
+    def to_mean(self, parameter: float) -> float:
+        """The mean of one unit of progress."""
+        return parameter
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """
+        The bias of the maximum-likelihood estimate at this parameter, with looks `step` of progress apart.
+
+        Raises:
+            TooMuchWork: The test may go on for too long.
+        """
+        raise NotImplementedError
 
     @property
     def has_stepwise_risks(self) -> bool:

@@ -50,7 +50,7 @@ def bias_of_counts(region: Region, law: Law, natural: float, step: float) -> flo
 
 
 class _Counts:
-    """The sum of what each look contributes, stretch by stretch; between changes of the limits looks are added at once."""
+    """The sum of what each look contributes, stretch by stretch, all looks of one at once."""
 
     def __init__(self, law: Law, natural: float, step: float) -> None:
         self._law, self._natural, self._step = law, natural, step

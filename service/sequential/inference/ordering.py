@@ -1,7 +1,7 @@
 """
 The stage-wise ordering of the outcomes of a sequential test, and what it says about the parameter.
 
-Quantity: P(an outcome at least as far up as the one observed) and P(one further up), as functions of the parameter; from
+Quantity: P(an outcome at least as far up as the one observed) and P(one further up), by the parameter; from
 them confidence limits and the median-unbiased estimate.
 Method: furthest up are the exits above the region, the earliest first; then the decisions at the wall by their totals;
 then the exits below, the latest first. At one look larger totals are further up. A coupling shows that both

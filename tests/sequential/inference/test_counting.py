@@ -1,5 +1,6 @@
 """Inference after tests of whole totals against enumerations of all outcomes, and the laws that it obeys."""
 
+import itertools
 import math
 from collections.abc import Callable
 from fractions import Fraction
@@ -166,7 +167,7 @@ def test_an_interval_covers_at_least_as_often_as_it_says(region: Region, looks: 
         low, high = (limit(outcome, (1 - level) / 2) for limit in (lower_limit, upper_limit))
         intervals.append((law.mean(low), law.mean(high)))
     # Further up in the ordering is further up in both limits.
-    assert all(a[0] >= b[0] and a[1] >= b[1] for a, b in zip(intervals, intervals[1:], strict=False))
+    assert all(a[0] >= b[0] and a[1] >= b[1] for a, b in itertools.pairwise(intervals))
     for p in np.linspace(0.005, 0.995, 67):
         chances = [outcomes.chance_of_units(end, p) for end in ordered]
         covered = [low <= p <= high for low, high in intervals]
