@@ -79,7 +79,7 @@ MEANINGS = {
     "maximum_likelihood": "The {parameter} under which these observations are most probable; "
     "stopping when they decide makes it too extreme on average.",
     "median_unbiased": "The {parameter} under which this outcome lies in the middle: "
-    "the estimate is as often too large as too small.",
+    "the estimate is about as often too large as too small.",
     "unbiased": "Over many tests under this plan its average is the true {parameter}, whatever that is.",
     "interval": "Whatever the true {parameter}, at least {level} of tests under this plan end with limits around it.",
     "bias_of_maximum_likelihood": "By how much the maximum-likelihood estimate would be off on average "
@@ -174,8 +174,8 @@ def inference_at(procedure: Procedure, looks: Looks, total: Sum, decision: Decis
     standing = Start(float(looks.progress[-1]), total.value)
     if standing.progress == 0.0:
         return _decided_at_once(level, looks)
-    found = _Figures(procedure, _outcome(procedure, looks, total, decision), standing, looks, {})
     try:
+        found = _Figures(procedure, _outcome(procedure, looks, total, decision), standing, looks, {})
         lower, upper = found.interval((1.0 - level) / 2.0)
         return Inference(
             p_value=found.p_value(),

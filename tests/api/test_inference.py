@@ -201,7 +201,7 @@ def test_a_long_log_of_uneven_exposures_is_read_to_its_end(admin: httpx.Client, 
 def test_before_the_decision_there_is_only_an_outlook(admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, SEAL)
     admin.post(f"/v1/tests/{key}/observations", json={"values": [0, 0]}).raise_for_status()
-    answer = admin.get(f"/v1/tests/{key}/inference")
+    answer = admin.get(f"/v1/tests/{key}/inference", headers={"If-None-Match": "*"})
     assert answer.status_code == 409
     assert answer.json()["type"].endswith(":not-decided")
     assert "outlook" in answer.json()["detail"]

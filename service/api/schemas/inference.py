@@ -13,11 +13,11 @@ ORDERING = "stage-wise"
 
 INFERENCE: dict[str, Any] = {
     "decision": "reject",
-    "p_value": 0.0143,
-    "estimates": {"maximum_likelihood": 0.2143, "median_unbiased": 0.1895, "unbiased": 0.1538},
-    "interval": {"level": 0.95, "lower": 0.0468, "upper": 0.4803},
+    "p_value": 0.0084,
+    "estimates": {"maximum_likelihood": 0.1429, "median_unbiased": 0.1213, "unbiased": 0.0769},
+    "interval": {"level": 0.95, "lower": 0.0178, "upper": 0.3603},
     "ordering": ORDERING,
-    "bias_of_maximum_likelihood": 0.1021,
+    "bias_of_maximum_likelihood": 0.0844,
     "overrun": 0,
     "looks": "The test was looked at after each observation, as it was reported.",
     "reasons": {},

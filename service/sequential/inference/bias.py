@@ -6,13 +6,15 @@ watched in time progress/total.
 Method: while sampling goes on, each look moves total/progress on average by (mean * progress - total)/progress * step/
 (next progress), so the bias is the sum of that over all looks taken, and only the mean of the totals that go on is
 needed. In time, the moments at which failures end the test are gamma distributed within a stretch.
-Accuracy: rounding, and sampling that goes on with less than 1e-11.
+Accuracy: 1e-9 of the mean of one unit, or of the standard deviation of a measurement; for failures in time, ends of
+probability 1e-11 are left out.
 Cost: one pass to the end of the test at one parameter.
 Source: Cox (1952), Proceedings of the Cambridge Philosophical Society 48, 290-299, and Whitehead (1986), Biometrika 73,
 573-581, for the bias after sequential tests; the sum is the telescoped expectation.
 """
 
 from collections.abc import Iterator
+from typing import NamedTuple
 
 import numpy as np
 from scipy.special import gammainc
@@ -26,10 +28,15 @@ from service.sequential.region import Region, looks_to_wall
 
 MOST_LOOKS, MOST_STRETCHES = 200_000, 50_000
 MOST_WORK = 1_000_000_000
-STRETCH_WORK = 10_000
+STRETCH_WORK = 5_000
 BLOCK = 256
-# Sampling that goes on with less moves the estimate by no more than this share of its own range.
-NEGLIGIBLE = 1e-11
+# Numbers that are gathered after.
+BATCH = 200_000
+# Sampling is followed until what is still to come moves the bias by less than this share of the mean, or of the
+# standard deviation: an estimate moves on by no more than the width of the region over the progress.
+NEGLIGIBLE = 1e-9
+# Failures in time are followed until this much is left.
+UNFOLLOWED = 1e-11
 # Durations whose tables are kept.
 MOST_TABLES = 32
 
@@ -44,56 +51,95 @@ def bias_of_counts(region: Region, law: Law, natural: float, step: float) -> flo
     counted = _Counts(law, natural, step)
     for stretch in stretches_of_looks(region, step, 0.0):
         counted.advance(stretch)
-        if counted.goes_on < NEGLIGIBLE:
+        if counted.is_over:
             break
-    return counted.bias
+    return counted.bias()
+
+
+class _Row(NamedTuple):
+    """The totals that go on at the beginning of a stretch: from the lowest on, after so many looks."""
+
+    lowest: int
+    looks: float
+    alive: FloatArray
 
 
 class _Counts:
-    """The sum of what each look contributes, stretch by stretch, all looks of one at once."""
+    """
+    The sum of what each look contributes.
+
+    The loop does as little as it can for each stretch; stretches of equal shape are added up together, in `_gather`.
+    """
 
     def __init__(self, law: Law, natural: float, step: float) -> None:
-        self._law, self._natural, self._step = law, natural, step
+        self._law, self._natural, self._step, self._mean = law, natural, step, law.mean(natural)
         self._alive, self._lowest, self._looks, self._work = np.ones(1), 0, 0.0, 0
+        self._rows: dict[tuple[float, int, int], list[_Row]] = {}
+        self._gathered, self._waiting, self._is_over = 0.0, 0, False
         self._tables: dict[float, tuple[FloatArray, FloatArray]] = {}
         self._increases: dict[float, FloatArray] = {}
-        self.bias = 0.0
+        self._widest: dict[float, int] = {}
 
     @property
-    def goes_on(self) -> float:
-        """The probability of still sampling."""
-        return float(self._alive.sum())
+    def is_over(self) -> bool:
+        """True once nothing worth following is left."""
+        return self._is_over
+
+    def bias(self) -> float:
+        """The sum, once all is over."""
+        self._gather()
+        return self._gathered
 
     def advance(self, stretch: Stretch) -> None:
-        """Add the looks of a stretch."""
-        width = len(self._alive) - 1 + self._law.widest(self._natural, stretch.duration * self._step)
+        """Move by one stretch."""
+        count = len(self._alive)
+        width = count - 1 + self._most(stretch.duration)
         width = width if stretch.room is None else min(width, max(0, stretch.room - self._lowest))
-        self._work += width * round(stretch.duration) + STRETCH_WORK
+        self._work += width * (count + round(stretch.duration)) + STRETCH_WORK
         if width > WIDEST:
             raise TooMuchWork(WIDEST, "totals at once")
         if self._work > MOST_WORK:
             raise TooMuchWork(MOST_WORK, "multiplications")
-        alive = self._alive[:width]
-        if stretch.duration > 1.0 and len(alive):
-            self._add_looks_inside(alive, stretch.duration, width)
-        moved = self._moved(alive, stretch.duration, width)
+        row = _Row(self._lowest, self._looks, self._alive)
+        self._rows.setdefault((stretch.duration, width, count), []).append(row)
+        moved = self._moved(stretch.duration, width)
         cut = width if stretch.is_last else min(width, max(0, stretch.cut + 1 - self._lowest))
         self._alive, self._lowest = moved[cut:], self._lowest + cut
         self._looks += stretch.duration
-        totals = self._lowest + np.arange(len(self._alive), dtype=float)
-        self._add(np.array([self._looks]), np.array([self.goes_on]), np.array([self._alive @ totals]))
+        self._waiting += width * round(stretch.duration) + 1
+        if self._waiting > BATCH or stretch.is_last:
+            self._gather()
+            reach = (len(self._alive) + 1.0) / (self._looks * self._step)
+            self._is_over = float(self._alive.sum()) * reach < NEGLIGIBLE * self._mean
 
-    def _add(self, looks: FloatArray, goes_on: FloatArray, totals: FloatArray) -> None:
-        progress, mean = looks * self._step, self._law.mean(self._natural)
-        self.bias += float(np.sum((mean * progress * goes_on - totals) / (progress * (looks + 1.0))))
+    def _most(self, duration: float) -> int:
+        if duration not in self._widest:
+            self._widest[duration] = self._law.widest(self._natural, duration * self._step)
+        return self._widest[duration]
 
-    def _add_looks_inside(self, alive: FloatArray, duration: float, width: int) -> None:
-        """The looks before the end of a stretch, where only what has outgrown the room has ended."""
-        stays, increases = self._table(duration, width)
-        reach = width - 1 - np.arange(len(alive))
-        goes_on = stays[:, reach] @ alive
-        totals = stays[:, reach] @ (alive * (self._lowest + np.arange(len(alive)))) + increases[:, reach] @ alive
-        self._add(self._looks + np.arange(1.0, duration), goes_on, totals)
+    def _gather(self) -> None:
+        """Add up what the stretches since the last time contribute."""
+        for (duration, width, count), rows in self._rows.items():
+            alive = np.array([row.alive for row in rows])
+            risen = np.arange(float(count))
+            goes_on, rise = alive.sum(axis=1)[:, np.newaxis], (alive @ risen)[:, np.newaxis]
+            if duration > 1.0 and min(width, count):
+                # Inside a stretch only what has outgrown the room has ended.
+                inside = alive[:, :width]
+                reach = width - 1 - np.arange(inside.shape[1])
+                stays, increases = (table[:, reach].T for table in self._table(duration, width))
+                goes_on = np.concatenate([goes_on, inside @ stays], axis=1)
+                further = (inside * risen[:width]) @ stays + inside @ increases
+                rise = np.concatenate([rise, further], axis=1)
+            lowest, begins = (
+                np.array(column, dtype=float)[:, np.newaxis] for column in list(zip(*rows, strict=True))[:2]
+            )
+            looks = begins + np.arange(goes_on.shape[1])
+            progress = looks * self._step
+            errors = self._mean * progress * goes_on - lowest * goes_on - rise
+            shares = np.divide(errors, progress * (looks + 1.0), out=np.zeros_like(errors), where=looks > 0.0)
+            self._gathered += float(shares.sum())
+        self._rows, self._waiting = {}, 0
 
     def _table(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
         """
@@ -108,13 +154,14 @@ class _Counts:
         reach = np.arange(float(width))
         stays = law.stays(natural, progress, reach)
         # k * P(k) is the mean times the probability of k - 1 further increases once the first has come.
-        increases = law.mean(natural) * progress * law.stays(natural, progress - law.first_step, reach - 1.0)
+        increases = self._mean * progress * law.stays(natural, progress - law.first_step, reach - 1.0)
         if len(self._tables) >= MOST_TABLES:
             self._tables.clear()
         self._tables[duration] = (stays, increases)
         return stays, increases
 
-    def _moved(self, alive: FloatArray, duration: float, width: int) -> FloatArray:
+    def _moved(self, duration: float, width: int) -> FloatArray:
+        alive = self._alive[:width]
         if not len(alive):
             return np.zeros(0)
         known = self._increases.get(duration)
@@ -131,7 +178,8 @@ def bias_of_measurements(region: Region, frame: Frame, natural: float) -> float:
     Raises:
         TooMuchWork: The test may go on for too long, or between limits too far apart.
     """
-    bias, masses, kernel, work = 0.0, np.ones(1), None, 0
+    bias, masses, work = 0.0, np.ones(1), 0
+    kernel: Kernel | None = None
     for begin, count in _blocks(region, 1.0):
         looks = begin + np.arange(float(count))
         lower, upper = limits_seen(region, frame, looks, natural)
@@ -141,13 +189,13 @@ def bias_of_measurements(region: Region, frame: Frame, natural: float) -> float:
         work += points * points * count
         if work > MOST_WORK:
             raise TooMuchWork(MOST_WORK, "multiplications")
-        for look, low, high in zip(looks, lower, upper, strict=True):
-            masses = kernel.step(masses, float(low), float(high))
+        for look, low, high in zip(looks.tolist(), lower.tolist(), upper.tolist(), strict=True):
+            masses = kernel.step(masses, low, high)
             goes_on = float(masses.sum())
             bias += (natural * look * goes_on - float(masses @ kernel.nodes)) / (look * (look + 1.0))
-            if goes_on < NEGLIGIBLE:
-                return frame.sigma * bias
-    return frame.sigma * bias
+            if goes_on * (high - low) < NEGLIGIBLE * look:
+                return float(frame.sigma * bias)
+    return float(frame.sigma * bias)
 
 
 def bias_of_life(region: Region, rate: float) -> float:
@@ -162,7 +210,7 @@ def bias_of_life(region: Region, rate: float) -> float:
         if i > MOST_STRETCHES:
             raise TooMuchWork(MOST_STRETCHES, "stretches")
         begun.advance(stretch)
-        if begun.goes_on < NEGLIGIBLE:
+        if begun.goes_on < UNFOLLOWED:
             break
     return begun.sum / begun.probability - 1.0 / rate
 
@@ -173,7 +221,8 @@ class _Lives:
     def __init__(self, rate: float) -> None:
         self._rate, self._law = rate, RateLaw()
         self._alive, self._lowest, self._time = np.ones(1), 0, 0.0
-        self.sum, self.probability = 0.0, 0.0
+        self.sum: float = 0.0
+        self.probability: float = 0.0
 
     @property
     def goes_on(self) -> float:

@@ -64,13 +64,14 @@ def schedule_of_looks(region: Region, looks: FloatArray) -> Schedule:
         return Schedule((), 0.0, float(looks[0]))
     before = looks[:-1]
     limits = region.limits(before)
-    cuts = np.maximum.accumulate(limits.lower)
+    # Limits that are no whole numbers are those of the totals beyond them.
+    cuts, rooms = np.maximum.accumulate(np.floor(limits.lower)), np.ceil(limits.upper)
     ends = np.ones(len(before), dtype=bool)
-    ends[:-1] = limits.upper[1:] != limits.upper[:-1]
+    ends[:-1] = rooms[1:] != rooms[:-1]
     ends |= cuts > np.concatenate([[-np.inf], cuts[:-1]])
     places = np.flatnonzero(ends)
     moments = np.concatenate([[0.0], before[places]])
-    rows = zip(moments[:-1], np.diff(moments), limits.upper[places], cuts[places], strict=True)
+    rows = zip(moments[:-1], np.diff(moments), rooms[places], cuts[places], strict=True)
     stages = tuple(Stage(*(float(number) for number in row)) for row in rows)
     return Schedule(stages, float(before[-1]), float(looks[-1] - before[-1]))
 

@@ -20,6 +20,7 @@ from service.sequential.inference.ordering import lower_limit, median_unbiased, 
 from service.sequential.inference.schedules import schedule_of_looks
 from service.sequential.region import COUNTS, PASS_FAIL, Region, Wall, straight_region
 from service.sequential.tables import UnitTable
+from tests.sequential.exact.test_oracles import tables
 from tests.sequential.reference import outcomes
 from tests.sequential.reference.outcomes import End
 
@@ -90,7 +91,7 @@ def grouped(wall: int, sizes: list[int]) -> list[Fraction]:
     return looks[1:]
 
 
-@settings(max_examples=40, deadline=None)
+@settings(max_examples=25, deadline=None)
 @given(PROPORTIONS, PROPORTIONS, THRESHOLDS, st.integers(1, 25), st.lists(st.integers(1, 5), min_size=1, max_size=4))
 def test_units_and_groups_against_all_outcomes(
     p0: float, p1: float, limits: Thresholds, wall: int, sizes: list[int]
@@ -104,6 +105,24 @@ def test_units_and_groups_against_all_outcomes(
     for end in ordered:
         estimate = fast(region, UnitLaw(), end, looks).first_step_mean()
         assert estimate == pytest.approx(float(end.from_first / end.paths), rel=1e-12, abs=1e-14)
+
+
+@settings(max_examples=12, deadline=None)
+@given(tables())
+def test_tables_with_missing_rows_against_all_outcomes(table: UnitTable) -> None:
+    looks = [Fraction(n) for n in range(1, table.sample_numbers[-1] + 1)]
+    agrees(table, UnitLaw(), looks, of_units(table, looks), outcomes.chance_of_units, [0.1, 0.6])
+
+
+def test_limits_between_whole_numbers_are_those_of_the_totals_beyond() -> None:
+    whole = UnitTable((4, 9, 20), (0.0, 1.0, 4.0), (3.0, 5.0, 5.0), Decision.ACCEPT, Decision.REJECT)
+    between = UnitTable((4, 9, 20), (0.3, 1.9, 4.0), (2.1, 4.5, 5.0), Decision.ACCEPT, Decision.REJECT)
+    looks = np.arange(1.0, 21.0)
+    found = [
+        CountedOutcome(UnitLaw(), schedule_of_looks(table, looks), 4, is_above=False).tails(-0.8)
+        for table in (whole, between)
+    ]
+    assert found[0] == found[1]
 
 
 @settings(max_examples=8, deadline=None)
@@ -168,7 +187,7 @@ def test_an_interval_covers_at_least_as_often_as_it_says(region: Region, looks: 
         intervals.append((law.mean(low), law.mean(high)))
     # Further up in the ordering is further up in both limits.
     assert all(a[0] >= b[0] and a[1] >= b[1] for a, b in itertools.pairwise(intervals))
-    for p in np.linspace(0.005, 0.995, 67):
+    for p in np.linspace(0.005, 0.995, 41):
         chances = [outcomes.chance_of_units(end, p) for end in ordered]
         covered = [low <= p <= high for low, high in intervals]
         assert math.fsum(c for c, holds in zip(chances, covered, strict=True) if holds) >= level - 1e-9
@@ -215,6 +234,23 @@ def test_the_bias_with_groups_of_one_size(group: float, wall: float) -> None:
     assert bias_of_counts(region, UnitLaw(), UnitLaw().natural(0.35), group) == pytest.approx(
         math.fsum(errors), abs=1e-13
     )
+
+
+@pytest.mark.parametrize("p", [0.02, 0.05, 0.2])
+def test_the_bias_of_an_open_plan_is_the_mean_error_over_all_its_ends(p: float) -> None:
+    """Look by look until next to nothing goes on, each end with its own estimate."""
+    region = straight_region(likelihood.bernoulli(0.01, 0.1), Thresholds(-2.2512917986, 2.8903717579), PASS_FAIL)
+    limits, alive, error = region.limits(np.arange(2001.0)), {0: 1.0}, 0.0
+    for n in range(1, 2001):
+        moved: dict[int, float] = {}
+        for total, chance in alive.items():
+            moved[total] = moved.get(total, 0.0) + chance * (1 - p)
+            moved[total + 1] = moved.get(total + 1, 0.0) + chance * p
+        ended = {k: chance for k, chance in moved.items() if not limits.lower[n] < k < limits.upper[n]}
+        error += math.fsum(chance * (k / n - p) for k, chance in ended.items())
+        alive = {k: chance for k, chance in moved.items() if k not in ended}
+    assert sum(alive.values()) < 1e-12
+    assert bias_of_counts(region, UnitLaw(), UnitLaw().natural(p), 1.0) == pytest.approx(error, abs=1e-9 * p)
 
 
 def test_girshick_mosteller_and_savages_estimate_in_simons_design() -> None:

@@ -93,6 +93,7 @@ def passes(region: Region, units: int, total: float, mean: float, sigma: float, 
 STRAIGHT = straight_region(likelihood.normal(10.0, 10.5, 0.5), wald(0.05, 0.1), REALS)
 TRUNCATED = straight_region(likelihood.normal(1.0, 0.0, 0.8), Thresholds(-1.6, 2.1), REALS, Wall(4.0))
 CURVED = Curved((-2.0, -1.5, -0.4, 0.6), (2.5, 2.3, 2.6, 2.9))
+MOVING = Curved((-2.0, -1.5, -0.4, 0.6), (2.5, 2.3, 2.6, 0.6), Wall(4.0))
 OPEN_BELOW = Curved((-math.inf, -math.inf, 0.2, 0.6), (2.5, 2.3, 2.6, 2.9))
 
 
@@ -149,14 +150,14 @@ def test_the_mean_of_the_first_measurement_given_the_end(region: StraightRegion)
     assert outcome(region, sigma, units, total, is_above=True).first_step_mean() == pytest.approx(exact, rel=1e-9)
 
 
-@pytest.mark.parametrize("mean", [0.1, 0.5, 1.3])
-def test_the_unbiased_estimate_and_the_bias_have_the_right_means(mean: float) -> None:
+@pytest.mark.parametrize(("region", "mean"), [(TRUNCATED, 0.1), (TRUNCATED, 1.3), (MOVING, 0.4)])
+def test_the_unbiased_estimate_and_the_bias_have_the_right_means(region: Region, mean: float) -> None:
     """Over all ends of a test of at most four measurements, by quadrature over where it ends."""
     sigma, unbiased, average = 0.8, 0.0, 0.0
     nodes, weights = np.polynomial.legendre.leggauss(30)
-    rows = dense(TRUNCATED, 3, mean, sigma)
+    rows = dense(region, 3, mean, sigma)
     for units in range(1, 5):
-        limits = TRUNCATED.limits(np.array([float(units)]))
+        limits = region.limits(np.array([float(units)]))
         for is_above in (True, False):
             edge = float((limits.upper if is_above else limits.lower)[0])
             far = edge + (9 if is_above else -9) * sigma
@@ -168,12 +169,12 @@ def test_the_unbiased_estimate_and_the_bias_have_the_right_means(mean: float) ->
                 else:
                     x, f = rows[units - 2]
                     density = float(simpson(f * norm.pdf(total - x, mean, sigma), x=x))
-                end = outcome(TRUNCATED, sigma, units, total, is_above=is_above)
+                end = outcome(region, sigma, units, total, is_above=is_above)
                 unbiased += weight * density * end.first_step_mean()
                 average += weight * density * total / units
     assert unbiased == pytest.approx(mean, abs=1e-9)
-    frame = frame_of(TRUNCATED, sigma, 0.0)
-    assert bias_of_measurements(TRUNCATED, frame, frame.natural(mean)) == pytest.approx(average - mean, abs=1e-9)
+    frame = frame_of(region, sigma, 0.0)
+    assert bias_of_measurements(region, frame, frame.natural(mean)) == pytest.approx(average - mean, abs=1e-9)
 
 
 def test_one_measurement_has_the_usual_limits() -> None:
