@@ -122,12 +122,13 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
     assert decided is not None
     if family.is_watched_in_time:
         return _looks(np.array([state.exposure.value]), None, IN_TIME)
-    if decided.sample_number > MOST_LOOKS:
-        raise ComputationTooLarge(f"{MOST_LOOKS} looks")
-    is_unit_by_unit = not family.has_exposure and decided.sequence == decided.sample_number
-    if isinstance(procedure.region, UnitTable) or is_unit_by_unit:
-        words = EACH if is_unit_by_unit else ROWS
-        return _looks(np.arange(1.0, decided.sample_number + 1.0), 1.0, words)
+    if isinstance(procedure.region, UnitTable):
+        rows = np.array(procedure.region.sample_numbers, dtype=float)
+        return _looks(rows[rows <= decided.sample_number], 1.0, ROWS)
+    if not family.has_exposure and decided.sequence == decided.sample_number:
+        if decided.sample_number > MOST_LOOKS:
+            raise ComputationTooLarge(f"{MOST_LOOKS} looks")
+        return _looks(np.arange(1.0, decided.sample_number + 1.0), 1.0, EACH)
     progress, steps = _reported(procedure, decided.sequence, documents)
     is_even = bool(np.all(steps == steps[0]))
     return _looks(progress, float(steps[0]) if is_even else None, EACH if is_even and steps[0] == 1.0 else TAKEN)

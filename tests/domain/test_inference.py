@@ -96,6 +96,31 @@ def test_measurements_too_far_between_their_limits_are_too_much() -> None:
         after(content, {"values": [2000.0, 2000.0]})
 
 
+def test_enormous_counts_cost_no_more_than_others() -> None:
+    """A last report that only a misread field explains: the first was then as high as the region let it be."""
+    reports = [{"value": 1, "exposure": 1.0}, {"value": 900_000_000, "exposure": 0.5}]
+    found = after(WELD, {"observations": reports})
+    # 0, 1, 2 or 3 counts in the first report; each more is likelier by 2 * 900,000,001 / counts, so it was the most.
+    reject = 4
+    assert found.unbiased == pytest.approx(reject - 1, rel=1e-8)
+    assert found.lower is not None
+    assert 0.0 < found.lower < (found.median_unbiased or 0.0) < (found.upper or 0.0)
+    assert after(WELD, {"observations": reports[1:]}).unbiased == pytest.approx(1.8e9)
+
+
+@pytest.mark.parametrize("last", [1e4, -1e4, 1e90])
+def test_a_misread_measurement_still_has_an_answer(last: float) -> None:
+    content = {"family": "normal", "h0": 0.0, "h1": 1.0, "alpha": 0.05, "beta": 0.1, "known": {"sigma": 1.0}}
+    alone = after(content, {"values": [last]})
+    assert (alone.lower, alone.upper) == (pytest.approx(last, rel=1e-3), pytest.approx(last, rel=1e-3))
+    found = after(content, {"values": [0.5, last]})
+    low, high = np.log(0.1 / 0.95) + 0.5, np.log(0.9 / 0.05) + 0.5
+    # The first measurement, given so large a sum, was as far out as the region let it be.
+    assert found.unbiased == pytest.approx(high if last > 0 else low, abs=1e-2)
+    assert found.lower is not None
+    assert found.lower < (found.median_unbiased or 0.0) < (found.upper or 0.0)
+
+
 def test_a_mean_measured_twice() -> None:
     """Two measurements, the first inside: both tails by one integral over it."""
     content = {"family": "normal", "h0": 0.0, "h1": 1.0, "alpha": 0.1, "beta": 0.1, "known": {"sigma": 1.0}}

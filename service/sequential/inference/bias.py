@@ -30,8 +30,8 @@ MOST_LOOKS, MOST_STRETCHES = 200_000, 50_000
 MOST_WORK = 1_000_000_000
 STRETCH_WORK = 5_000
 BLOCK = 256
-# Numbers that are gathered after.
-BATCH = 200_000
+# Numbers, or stretches, after which contributions are added up.
+BATCH, BATCH_STRETCHES = 200_000, 250
 # Sampling is followed until what is still to come moves the bias by less than this share of the mean, or of the
 # standard deviation: an estimate moves on by no more than the width of the region over the progress.
 NEGLIGIBLE = 1e-9
@@ -106,8 +106,9 @@ class _Counts:
         cut = width if stretch.is_last else min(width, max(0, stretch.cut + 1 - self._lowest))
         self._alive, self._lowest = moved[cut:], self._lowest + cut
         self._looks += stretch.duration
-        self._waiting += width * round(stretch.duration) + 1
-        if self._waiting > BATCH or stretch.is_last:
+        # Much to add up, or many stretches, after which nothing may be left.
+        self._waiting += width * round(stretch.duration) + BATCH // BATCH_STRETCHES
+        if self._waiting > BATCH or stretch.is_last or not len(self._alive):
             self._gather()
             reach = (len(self._alive) + 1.0) / (self._looks * self._step)
             self._is_over = float(self._alive.sum()) * reach < NEGLIGIBLE * self._mean

@@ -94,8 +94,11 @@ class CountedOutcome:
 
     @property
     def reference(self) -> float:
-        """See `Outcome`."""
-        return self.law.near(float(self.total), self.schedule.begin + self.schedule.duration)
+        """See `Outcome`; where the last look brought more than the rest explains, near what came before it."""
+        stages, begin = self.schedule.stages, self.schedule.begin
+        if not stages:
+            return self.law.near(float(self.total), self.schedule.duration)
+        return self.law.near(min(float(self.total), stages[-1].room, self.law.largest(begin)), begin)
 
     def natural(self, mean: float) -> float:
         """See `Outcome`."""
@@ -121,13 +124,12 @@ class CountedOutcome:
 
     def first_step_mean(self) -> float:
         """See `Outcome`; exact up to rounding, for totals that are looked at now and then."""
-        law, natural, end = self.law, self.reference, self.schedule.begin + self.schedule.duration
-        if end == law.first_step:
-            return float(self.total)
+        law, natural = self.law, self.reference
+        if not self.schedule.stages:
+            return float(self.total) / self.schedule.duration
         walk = _Walk(law, natural, 1)
         walk.go(self.schedule)
-        from_first = self._log_arrival(walk.last(self.schedule), walk.begin)
-        from_origin = self._log_arrival(self._passed.last, 0.0)
+        from_first, from_origin = self._log_arrival(walk.last(self.schedule)), self._log_arrival(self._passed.last)
         return law.mean(natural) * math.exp(from_first - from_origin)
 
     @cached_property
@@ -153,17 +155,16 @@ class CountedOutcome:
         weights: FloatArray = np.exp(np.minimum(standing.log_weight + factor, 0.0))
         return weights
 
-    def _log_arrival(self, last: _Standing, begin: float) -> float:
-        """Ln of the probability, under the reference, of arriving here at the last look, which may begin late."""
-        largest = float(last.log_weight.max(initial=-math.inf))
-        if math.isinf(largest):
-            return -math.inf
+    def _log_arrival(self, last: _Standing) -> float:
+        """Ln of the probability, under the reference and up to a constant, of arriving here from these totals."""
+        law, duration = self.law, self.schedule.duration
+        most = int(min(float(self.total) - self._passed.last.total[0], law.largest(duration)))
         missing = float(self.total) - last.total
-        duration = self.schedule.duration - max(0.0, begin - self.schedule.begin)
-        increases = self.law.increases(self.reference, duration, max(1, int(missing.max()) + 1))
-        chances = np.where(missing >= 0.0, increases[np.maximum(missing, 0.0).astype(int)], 0.0)
-        arrives = float(np.exp(last.log_weight - largest) @ chances)
-        return largest + math.log(arrives) if arrives > 0.0 else -math.inf
+        possible = (missing >= 0.0) & (missing <= most)
+        chances = law.falling(self.reference, duration, most, len(self._passed.last.total) + 1)
+        logs = last.log_weight[possible] + chances[(most - missing[possible]).astype(int)]
+        largest = float(logs.max(initial=-math.inf))
+        return largest + math.log(float(np.exp(logs - largest).sum())) if largest > -math.inf else -math.inf
 
 
 class _Walk:

@@ -44,6 +44,14 @@ class Law(Protocol):
         """Probabilities of the increases below `width`; array of shape (width,)."""
         ...
 
+    def largest(self, duration: float) -> float:
+        """The largest increase over the duration, infinite where there is none."""
+        ...
+
+    def falling(self, natural: float, duration: float, most: int, count: int) -> FloatArray:
+        """Ln of the probabilities of the increases most, most - 1, …, less that of the first; array of (count,)."""
+        ...
+
     def widest(self, natural: float, duration: float) -> int:
         """Increases at and beyond this one have no probability that matters."""
         ...
@@ -84,6 +92,15 @@ class UnitLaw:
         """See `Law`."""
         found: FloatArray = Units(np.array([self.mean(natural)])).increases(duration, width)[0]
         return found
+
+    def largest(self, duration: float) -> float:
+        """See `Law`."""
+        return duration
+
+    def falling(self, natural: float, duration: float, most: int, count: int) -> FloatArray:
+        """See `Law`."""
+        increase = most - np.arange(count - 1.0)
+        return _summed(increase, (duration - increase + 1.0) * math.exp(natural))
 
     def widest(self, natural: float, duration: float) -> int:  # noqa: ARG002 - all are possible
         """See `Law`."""
@@ -129,6 +146,15 @@ class RateLaw:
         found: FloatArray = Failures(np.array([math.exp(natural)])).increases(duration, width)[0]
         return found
 
+    def largest(self, duration: float) -> float:  # noqa: ARG002 - there is none
+        """See `Law`."""
+        return math.inf
+
+    def falling(self, natural: float, duration: float, most: int, count: int) -> FloatArray:
+        """See `Law`."""
+        increase = most - np.arange(count - 1.0)
+        return _summed(increase, np.full_like(increase, math.exp(natural) * duration))
+
     def widest(self, natural: float, duration: float) -> int:
         """See `Law`."""
         expected = math.exp(natural) * duration
@@ -149,6 +175,14 @@ class RateLaw:
     def log_factor(self, natural: float, other: float, total: FloatArray, progress: FloatArray) -> FloatArray:
         """See `Law`."""
         return total * (natural - other) - progress * (math.exp(natural) - math.exp(other))
+
+
+def _summed(increase: FloatArray, divisor: FloatArray) -> FloatArray:
+    """Ln of the products of increase/divisor, each the ratio of one probability to the next; none below zero."""
+    with np.errstate(divide="ignore"):  # below zero there is nothing
+        ratios = np.log(np.maximum(increase, 0.0) / divisor)
+    summed: FloatArray = np.concatenate([np.zeros(1), np.cumsum(ratios)])
+    return summed
 
 
 def _log_chance(natural: float) -> float:

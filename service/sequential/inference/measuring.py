@@ -105,8 +105,12 @@ class MeasuredOutcome:
 
     @property
     def reference(self) -> float:
-        """See `Outcome`."""
-        return self.height / self.units
+        """See `Outcome`; where the last look brought more than the rest explains, near what came before it."""
+        if self.units == 1:
+            return self.height
+        before = np.array([self.units - 1.0])
+        lower, upper = limits_seen(self.region, self.frame, before, self.height / self.units)
+        return min(max(self.height, float(lower[0])), float(upper[0])) / float(before[0])
 
     def natural(self, mean: float) -> float:
         """See `Outcome`."""
@@ -147,7 +151,10 @@ class MeasuredOutcome:
         """See `Outcome`."""
         if self.units == 1:
             return self.frame.mean(self.height)
-        onward = density(self.height - self._passed.nodes[-1] - self.reference)
+        # The density of the last step, up to a constant.
+        nodes = self._passed.nodes[-1]
+        exponent = nodes * (self.height - self.reference) - 0.5 * nodes**2
+        onward = np.exp(exponent - exponent.max())
         first = float(self._passed.weighted @ onward) / float(self._passed.masses[-1] @ onward)
         return self.frame.mean(first)
 

@@ -124,10 +124,12 @@ def _root(rising: Callable[[float], float], start: float) -> float:
     if value == 0.0:
         return start
     direction = -1.0 if value > 0.0 else 1.0
-    near, step = start, 0.25
+    # Steps that an enormous start, of misread data, does not swallow.
+    scale = max(1.0, 1e-12 * abs(start))
+    near, step = start, 0.25 * scale
     while True:
         far = near + direction * step
-        if abs(far - start) > FURTHEST:
+        if abs(far - start) > FURTHEST * scale:
             return direction * math.inf
         if rising(far) * direction >= 0.0:
             return float(brentq(rising, near, far, xtol=ROOT, rtol=1e-15))
