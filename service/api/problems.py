@@ -87,6 +87,12 @@ _TYPES = (
         "The first submission is still in progress",
         "A submission with the key 'a1' is in progress.",
     ),
+    ProblemType(
+        "not-decided",
+        409,
+        "The test is not decided yet",
+        "The test 'lot-7' is not decided yet; until then ask for its outlook.",
+    ),
     ProblemType("version-moved", 412, "The state has moved on", "If-Match gave 3, its version is now 4."),
     ProblemType("body-too-large", 413, "The body is too large", "A body may have at most 8388608 bytes."),
     ProblemType(
@@ -162,6 +168,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.RepeatedUnits: "unit-repeated",
     errors.TestIsClosed: "test-closed",
     errors.SubmissionInProgress: "in-progress",
+    errors.NotDecided: "not-decided",
     errors.VersionMoved: "version-moved",
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",

@@ -14,7 +14,7 @@ What can go wrong, without a word of HTTP.
     │   ├── UnknownPlan, UnknownTest, UnknownKey
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
-    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
+    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, NotDecided
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway
@@ -170,6 +170,16 @@ class SubmissionInProgress(Conflict):
 
     def __init__(self, key: str) -> None:
         super().__init__(f"A submission with the idempotency key {key!r} is still in progress; try again shortly.")
+
+
+class NotDecided(Conflict):
+    """What is asked follows the decision, and there is none yet."""
+
+    def __init__(self, key: str) -> None:
+        super().__init__(
+            f"The test {key!r} is not decided yet, and inference follows the decision. "
+            "Until then ask for its outlook: what is still needed and what is to be expected."
+        )
 
 
 class VersionMoved(DomainError):

@@ -18,6 +18,7 @@ from service.sequential.double import Double, FloatArray
 from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Region, Span
 
@@ -94,6 +95,23 @@ class Column:
         return [Fault(self.pointer(int(i)), f"{rule}; received {_plain(self.values[i])}") for i in broken]
 
 
+@dataclass(frozen=True)
+class End:
+    """
+    Where a test ended, for inference.
+
+    Attributes:
+        looks: Array of shape (looks,): the progress at each look taken, the deciding one last; for families watched in
+            time only that one.
+        total: The total at the end.
+        is_above: It ended above the region, or at the wall on that side; else below.
+    """
+
+    looks: FloatArray
+    total: Double
+    is_above: bool
+
+
 class TableKind(StrEnum):
     """What the rows of a table run over."""
 
@@ -123,6 +141,8 @@ class Family(ABC):
         carries: The running sums that give progress and total where these do not simply add up; see `place`.
         has_model: A plan states h0 and h1, and what they say of the observations gives exact figures.
         has_normal_steps: The total moves by normal amounts, so that Siegmund's overshoot is theirs.
+        no_unbiased_estimate: Why the parameter has no unbiased estimate, where it has none.
+        no_bias: Why the bias of the maximum-likelihood estimate is not given, where it is not.
     """
 
     name: ClassVar[str]
@@ -142,6 +162,8 @@ class Family(ABC):
     carries: ClassVar[tuple[str, ...]] = ()
     has_model: ClassVar[bool] = True
     has_normal_steps: ClassVar[bool] = False
+    no_unbiased_estimate: ClassVar[str | None] = None
+    no_bias: ClassVar[str | None] = None
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -246,6 +268,19 @@ class Family(ABC):
     def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
         """Whether a stream looks as supposed: here, that what each observation adds to the total is in no order."""
         return order_checks(seen.total, "observations")
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """An end among all that could have come, None where the family does not follow them."""
+        return None
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """
+        The bias of the maximum-likelihood estimate at this parameter, with looks `step` of progress apart.
+
+        Raises:
+            TooMuchWork: The test may go on for too long.
+        """
+        raise NotImplementedError
 
     @property
     def has_stepwise_risks(self) -> bool:

@@ -17,6 +17,7 @@ from service.domain.families.base import (
     LARGEST_EXPONENT,
     ORIGIN,
     Column,
+    End,
     Family,
     Increments,
     Start,
@@ -36,6 +37,11 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Units
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.bias import bias_of_counts
+from service.sequential.inference.counting import CountedOutcome
+from service.sequential.inference.laws import UnitLaw
+from service.sequential.inference.ordering import Outcome
+from service.sequential.inference.schedules import schedule_of_looks
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.mixture import BetaMixture
 from service.sequential.region import PASS_FAIL, Region, Span
@@ -91,6 +97,16 @@ class Bernoulli(Family):
             None if down is None else Way(down[0], None, down[1], _with_at_most(*down)),
             None if up is None else Way(up[0], None, up[1], _with_at_least(*up)),
         )
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        return CountedOutcome(UnitLaw(), schedule_of_looks(region, end.looks), int(end.total.value), end.is_above)
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """See `Family`."""
+        if parameter in (0.0, 1.0):
+            return 0.0  # every unit is alike
+        return bias_of_counts(region, UnitLaw(), UnitLaw().natural(parameter), step)
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

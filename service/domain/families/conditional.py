@@ -12,7 +12,7 @@ from service.domain.checks import (
     halves_check,
     proportion_dispersion_check,
 )
-from service.domain.families.base import ORIGIN, Family, Increments, Start, TableKind, Way, plural
+from service.domain.families.base import ORIGIN, End, Family, Increments, Start, TableKind, Way, plural
 from service.domain.families.bernoulli import Bernoulli
 from service.sequential import likelihood
 from service.sequential.approximations import Motion
@@ -23,6 +23,7 @@ from service.sequential.errors import OutOfRange
 from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import PASS_FAIL, Region, Span
 from service.sequential.ways import looks_to_lower, looks_to_upper
@@ -47,6 +48,8 @@ class Conditional(Family):
     span: ClassVar[Span] = PASS_FAIL
     prior: ClassVar[tuple[str, ...]] = Bernoulli.prior
     table: ClassVar[TableKind | None] = TableKind.UNITS
+    no_unbiased_estimate: ClassVar[str | None] = "Unbiased is only the estimate of the share of b, not of its odds."
+    no_bias: ClassVar[str | None] = "Is known of the estimate of the share of b only, not of its odds."
     shown: ClassVar[tuple[str, str]]
     in_a: ClassVar[str]
     in_b: ClassVar[str]
@@ -80,6 +83,10 @@ class Conditional(Family):
     def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
         """See `Family`; the prior is that of the share of b."""
         return SHARES.mixture(edge, direction, {}, prior)
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        return SHARES.outcome(region, end, {})
 
     def mean_of(self, parameter: float, known: Mapping[str, float]) -> float:
         """See `Family`."""

@@ -16,6 +16,7 @@ from service.domain.checks import (
 from service.domain.families.base import (
     ORIGIN,
     Column,
+    End,
     Family,
     Increments,
     Start,
@@ -37,6 +38,11 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Failures
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.bias import bias_of_life
+from service.sequential.inference.counting import CountedOutcome
+from service.sequential.inference.laws import RateLaw
+from service.sequential.inference.ordering import Outcome
+from service.sequential.inference.schedules import schedule_of_time
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.mixture import GammaMixture
 from service.sequential.region import COUNTS, Region, Span
@@ -60,6 +66,10 @@ class Exponential(Family):
     parameter_lowers_total: ClassVar[bool] = True
     table: ClassVar[TableKind | None] = TableKind.TIMES
     has_exposure: ClassVar[bool] = True
+    no_unbiased_estimate: ClassVar[str | None] = (
+        "No estimate of a mean life is unbiased here: the longer the life, the surer the test ends without "
+        "a failure, and what is estimated then is one finite number."
+    )
     is_watched_in_time: ClassVar[bool] = True
 
     def hypothesis_rule(self, value: float) -> str | None:
@@ -104,6 +114,16 @@ class Exponential(Family):
     def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:
         """See `Family`."""
         return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        return CountedOutcome(
+            RateLaw(), schedule_of_time(region, float(end.looks[-1])), int(end.total.value), end.is_above
+        )
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """See `Family`; among the ends with a failure, for without one there is no estimate."""
+        return bias_of_life(region, 1.0 / parameter)
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

@@ -33,6 +33,8 @@ class Lognormal(Normal):
 
     name: ClassVar[str] = "lognormal"
     parameter: ClassVar[str] = "median"
+    no_unbiased_estimate: ClassVar[str | None] = "Unbiased is only the estimate of the median's logarithm."
+    no_bias: ClassVar[str | None] = "Is known of the estimate of the median's logarithm only."
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""

@@ -7,7 +7,18 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.checks import Check, normality_check, order_checks, spread_check
-from service.domain.families.base import LARGEST_REAL, ORIGIN, Column, Family, Increments, Start, Way, reals, refuse
+from service.domain.families.base import (
+    LARGEST_REAL,
+    ORIGIN,
+    Column,
+    End,
+    Family,
+    Increments,
+    Start,
+    Way,
+    reals,
+    refuse,
+)
 from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.deviance import Deviance
@@ -17,6 +28,9 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.exact.looks import characteristics_by_looks
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.bias import bias_of_measurements
+from service.sequential.inference.measuring import MeasuredOutcome, frame_of, height_of
+from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.mixture import NormalMixture
 from service.sequential.region import REALS, Region, Span, StraightRegion
@@ -68,6 +82,16 @@ class Normal(Family):
             Way(1, None, low, f"a measurement of at most {low:.6g}") if math.isfinite(low) else None,
             Way(1, None, high, f"a measurement of at least {high:.6g}") if math.isfinite(high) else None,
         )
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        units, frame = len(end.looks), frame_of(region, known["sigma"], middle=0.0)
+        return MeasuredOutcome(region, frame, units, height_of(region, frame, units, end.total), end.is_above)
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """See `Family`."""
+        frame = frame_of(region, known["sigma"], middle=0.0)
+        return bias_of_measurements(region, frame, frame.natural(parameter))
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

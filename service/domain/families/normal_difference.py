@@ -7,7 +7,7 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.checks import Check
-from service.domain.families.base import ORIGIN, Column, Increments, Start, Way, reals, refuse
+from service.domain.families.base import ORIGIN, Column, End, Increments, Start, Way, reals, refuse
 from service.domain.families.normal import Normal
 from service.sequential.approximations import Motion
 from service.sequential.deviance import Deviance
@@ -15,6 +15,7 @@ from service.sequential.double import FloatArray
 from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Region
 
@@ -45,6 +46,14 @@ class NormalDifference(Normal):
     def mixture(self, edge: float, direction: int, known: Known, prior: Mapping[str, float]) -> Evidence:
         """See `Family`."""
         return super().mixture(edge, direction, _of_difference(known), prior)
+
+    def outcome(self, region: Region, end: End, known: Known) -> Outcome | None:
+        """See `Family`."""
+        return super().outcome(region, end, _of_difference(known))
+
+    def bias(self, region: Region, parameter: float, step: float, known: Known) -> float:
+        """See `Family`."""
+        return super().bias(region, parameter, step, _of_difference(known))
 
     def exact(self, region: Region, parameters: FloatArray, known: Known, start: Start = ORIGIN) -> Characteristics:
         """See `Family`."""

@@ -7,9 +7,10 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.checks import Check, normality_check, order_checks, spread_check
-from service.domain.families.base import Column, Increments, Start, Way, reals, refuse
+from service.domain.families.base import Column, End, Increments, Start, Way, reals, refuse
 from service.domain.families.normal_difference import NormalDifference
 from service.sequential.double import Double
+from service.sequential.inference.ordering import Outcome
 from service.sequential.region import Region
 from service.sequential.two_samples import Arm, pairs_worth, reaching, variance_share
 
@@ -43,6 +44,10 @@ class NormalTwoSample(NormalDifference):
         is_b, is_a, count = arm.values, 1.0 - arm.values, len(value.values)
         carried = (is_a, is_a * value.values, is_b, is_b * value.values)
         return Increments(np.ones(count, np.int64), np.zeros(count), np.zeros(count), carried)
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        return None  # its looks are as uneven as the arms came
 
     def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
         """See `Family`: of the measurements less the average of their arm, in the standard deviations of the arm."""

@@ -15,6 +15,7 @@ from service.domain.checks import (
 from service.domain.families.base import (
     ORIGIN,
     Column,
+    End,
     Family,
     Increments,
     Start,
@@ -36,6 +37,11 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Reports
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.bias import bias_of_counts
+from service.sequential.inference.counting import CountedOutcome
+from service.sequential.inference.laws import RateLaw
+from service.sequential.inference.ordering import Outcome
+from service.sequential.inference.schedules import schedule_of_looks
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.mixture import GammaMixture
 from service.sequential.region import COUNTS, Region, Span
@@ -87,6 +93,16 @@ class Poisson(Family):
             None if time is None else Way(1, time, 0.0, f"an exposure of {time:.6g} without a count"),
             Way(1, within, float(count), _counts_within(count, within)),
         )
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        return CountedOutcome(RateLaw(), schedule_of_looks(region, end.looks), int(end.total.value), end.is_above)
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """See `Family`."""
+        if parameter == 0.0:
+            return 0.0  # nothing is ever counted
+        return bias_of_counts(region, RateLaw(), RateLaw().natural(parameter), step)
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

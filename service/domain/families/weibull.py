@@ -48,6 +48,8 @@ class Weibull(Exponential):
     optional: ClassVar[Mapping[str, float]] = {"from": 0.0}
     known: ClassVar[tuple[str, ...]] = ("shape",)
     table: ClassVar[TableKind | None] = None
+    no_unbiased_estimate: ClassVar[str | None] = "A characteristic life has no unbiased estimate after such a test."
+    no_bias: ClassVar[str | None] = "Is known of the mean exposure for a failure only, not of the root of it."
 
     def known_rule(self, name: str, value: float) -> str | None:
         """See `Family`."""

@@ -1,0 +1,300 @@
+"""What may be said once a test is decided: a p-value, an interval and estimates that allow for the stopping rule."""
+
+import hashlib
+import math
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from functools import lru_cache
+from typing import Any
+
+import numpy as np
+
+from service.domain.errors import ComputationTooLarge, InvalidQuestion
+from service.domain.families.base import End, Start
+from service.domain.observing import walk_from
+from service.domain.procedure import Procedure, procedure_of_document
+from service.domain.state import State, Sum
+from service.sequential.decision import Decision
+from service.sequential.double import Double, FloatArray
+from service.sequential.exact.characteristics import TooMuchWork
+from service.sequential.exact.stretches import MOST_LOOKS
+from service.sequential.inference.ordering import Outcome, lower_limit, median_unbiased, upper_limit
+from service.sequential.region import INSIDE
+from service.sequential.tables import UnitTable
+
+Documents = Iterable[Mapping[str, Any]]
+
+
+@dataclass(frozen=True)
+class Looks:
+    """
+    The looks that were taken up to the decision.
+
+    Attributes:
+        progress: Array of shape (looks,): units or exposure at each; compared by its digest.
+        step: How far apart they were, None where that differed; None for families watched in time too.
+        words: The rule for people.
+    """
+
+    progress: FloatArray = field(compare=False)
+    digest: str
+    step: float | None
+    words: str
+
+
+@dataclass(frozen=True)
+class Inference:
+    """
+    The figures after a decision; None where there is none, with the reason under the figure's name in `reasons`.
+
+    Attributes:
+        bias: Of the maximum-likelihood estimate, were its value the true parameter.
+        looks: Which looks the probabilities are over.
+    """
+
+    p_value: float
+    maximum_likelihood: float | None
+    median_unbiased: float | None
+    unbiased: float | None
+    level: float
+    lower: float | None
+    upper: float | None
+    bias: float | None
+    reasons: Mapping[str, str]
+    looks: str
+
+
+IN_TIME = "The test was watched in continuous time, so nothing depends on how it was reported."
+ROWS = "The rows of the table up to the decision; how observations were grouped between them does not matter."
+EACH = "The test was looked at after each observation, as it was reported."
+TAKEN = "The looks that were taken, at the groups or exposures as they were reported; these are taken as given."
+
+NO_ESTIMATE = "There is no maximum-likelihood estimate after this outcome."
+UNEVEN = "Depends on the groups or exposures that would have come later, and those so far were not alike."
+OPEN_END = "No outcome lies further {way} than this one, so this end is that of the parameter's range{beyond}."
+AT_END = "This outcome is the furthest {way} there is, so this estimate is the end of the parameter's range{beyond}."
+UNBOUNDED = ", which has no bound"
+MEANINGS = {
+    "p_value": "If H0 were true, the probability of an outcome at least as extreme towards H1 as this one.",
+    "maximum_likelihood": "The {parameter} under which these observations are most probable; "
+    "stopping when they decide makes it too extreme on average.",
+    "median_unbiased": "The {parameter} under which this outcome lies in the middle: "
+    "the estimate is about as often too large as too small.",
+    "unbiased": "Over many tests under this plan its average is the true {parameter}, whatever that is.",
+    "interval": "Whatever the true {parameter}, at least {level} of tests under this plan end with limits around it.",
+    "bias_of_maximum_likelihood": "By how much the maximum-likelihood estimate would be off on average "
+    "if its value were the true {parameter}.",
+    "ordering": "Most extreme towards H1 are rejections at the boundary, the earliest first; then decisions at the "
+    "truncation by their total; then acceptances at the boundary, the latest first.",
+    "overrun": "Observations that came after the decision. They never count here: "
+    "all figures are those of the moment of the decision.",
+}
+WITHOUT_FAILURE = " Tests that end without a failure have no such estimate and are left out."
+AT_ONCE = "The test was decided before any exposure had passed; that has probability zero whatever the parameter."
+
+
+def inference_of(document: str, state: State, documents: Documents, level: float) -> Inference:
+    """
+    What may be said at the decision; overrun never counts. Kept for a while.
+
+    Args:
+        document: The plan's canonical document.
+        state: Of a decided test.
+        documents: Its submissions in order; read only where the looks do not follow from the state.
+        level: Of the interval, in (0, 1).
+
+    Raises:
+        ComputationTooLarge: The computation needs more steps than are allowed.
+        InvalidQuestion: The family has no inference.
+    """
+    looks = looks_of(procedure_of_document(document), state, documents)
+    return _inference(document, looks, state.total, state.decision, level)
+
+
+def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
+    """
+    The looks up to the decision: at each unit, at a table's rows, at each report, or, watched in time, at all moments.
+
+    Raises:
+        ComputationTooLarge: There are too many.
+    """
+    decided, family = state.decided, procedure.family
+    assert decided is not None
+    if family.is_watched_in_time:
+        return _looks(np.array([state.exposure.value]), None, IN_TIME)
+    if isinstance(procedure.region, UnitTable):
+        rows = np.array(procedure.region.sample_numbers, dtype=float)
+        return _looks(rows[rows <= decided.sample_number], 1.0, ROWS)
+    if not family.has_exposure and decided.sequence == decided.sample_number:
+        if decided.sample_number > MOST_LOOKS:
+            raise ComputationTooLarge(f"{MOST_LOOKS} looks")
+        return _looks(np.arange(1.0, decided.sample_number + 1.0), 1.0, EACH)
+    progress, steps = _reported(procedure, decided.sequence, documents)
+    # What adds nothing to the progress, such as a pair that agrees, is no look.
+    progress, steps = progress[steps > 0.0], steps[steps > 0.0]
+    is_even = bool(np.all(steps == steps[0]))
+    return _looks(progress, float(steps[0]) if is_even else None, EACH if is_even and steps[0] == 1.0 else TAKEN)
+
+
+def _reported(procedure: Procedure, last: int, documents: Documents) -> tuple[FloatArray, FloatArray]:
+    """Progress after each observation up to the deciding one, and what each added: arrays of shape (observations,)."""
+    state, progress, steps = State(), [], []
+    for document in documents:
+        increments = procedure.family.read(document, procedure.known)
+        walk = walk_from(procedure, state, increments)
+        count = min(len(increments.total), last - state.sequence)
+        progress.append(walk.progress.value[:count])
+        steps.append(increments.progress[:count])
+        end = walk.end
+        state = State(
+            sequence=state.sequence + count,
+            sample_number=state.sample_number + int(np.sum(increments.units[:count])),
+            exposure=Sum(float(end.progress.high), float(end.progress.low)),
+            total=Sum(float(end.total.high), float(end.total.low)),
+            carried=tuple(Sum(float(sums.high[-1]), float(sums.low[-1])) for sums in walk.carried),
+        )
+        if state.sequence >= last:
+            break
+    return np.concatenate(progress), np.concatenate(steps)
+
+
+def _looks(progress: FloatArray, step: float | None, words: str) -> Looks:
+    return Looks(progress, hashlib.sha256(progress.tobytes()).hexdigest(), step, words)
+
+
+@lru_cache(maxsize=256)
+def _inference(document: str, looks: Looks, total: Sum, decision: Decision, level: float) -> Inference:
+    return inference_at(procedure_of_document(document), looks, total, decision, level)
+
+
+def inference_at(procedure: Procedure, looks: Looks, total: Sum, decision: Decision, level: float) -> Inference:
+    """
+    The figures for a test that ended at the last of these looks, at this total and with this decision.
+
+    Raises:
+        ComputationTooLarge: The computation needs more steps than are allowed.
+        InvalidQuestion: The family has no inference.
+    """
+    standing = Start(float(looks.progress[-1]), total.value)
+    if standing.progress == 0.0:
+        return _decided_at_once(level, looks)
+    try:
+        found = _Figures(procedure, _outcome(procedure, looks, total, decision), standing, looks, {})
+        lower, upper = found.interval((1.0 - level) / 2.0)
+        return Inference(
+            p_value=found.p_value(),
+            maximum_likelihood=found.maximum_likelihood(),
+            median_unbiased=found.median_unbiased(),
+            unbiased=found.unbiased(),
+            level=level,
+            lower=lower,
+            upper=upper,
+            bias=found.bias(),
+            reasons=found.reasons,
+            looks=looks.words,
+        )
+    except TooMuchWork as error:
+        raise ComputationTooLarge(error.limit) from error
+
+
+def _outcome(procedure: Procedure, looks: Looks, total: Sum, decision: Decision) -> Outcome:
+    region, height = procedure.region, Double.of(total.high, total.low)
+    is_above = decision is region.above
+    if region.above is region.below:
+        where = Double(looks.progress[-1:], np.zeros(1)), Double(np.array([total.high]), np.array([total.low]))
+        is_above = bool(region.sides(*where)[0] >= INSIDE)
+    outcome = procedure.family.outcome(region, End(looks.progress, height, is_above), procedure.known)
+    if outcome is None:
+        raise InvalidQuestion(f"There is no inference after tests of the family {procedure.family.name}.")
+    return outcome
+
+
+@dataclass(frozen=True)
+class _Figures:
+    """One outcome and what can be said of it; where there is no figure, or an end of the range, `reasons` says why."""
+
+    procedure: Procedure
+    outcome: Outcome
+    standing: Start
+    looks: Looks
+    reasons: dict[str, str]
+
+    def p_value(self) -> float:
+        """P under H0 of an outcome at least as extreme towards H1; towards both sides twice the smaller."""
+        region = self.procedure.region
+        null = self.procedure.family.mean_of(self.procedure.hypotheses[0], self.procedure.known)
+        tails = self.outcome.tails(self.outcome.natural(null))
+        if region.above is region.below:
+            return min(1.0, 2.0 * min(tails.up, tails.down))
+        return tails.up if region.above is Decision.REJECT else tails.down
+
+    def interval(self, tail: float) -> tuple[float | None, float | None]:
+        """The two limits of the parameter."""
+        low, high = lower_limit(self.outcome, tail), upper_limit(self.outcome, tail)
+        if self.procedure.family.parameter_lowers_total:
+            low, high = high, low
+        return self._parameter(low, "lower", OPEN_END), self._parameter(high, "upper", OPEN_END)
+
+    def maximum_likelihood(self) -> float | None:
+        """From the totals at the decision, as if they had not decided when it came."""
+        return self._noted(self._estimate, "maximum_likelihood", NO_ESTIMATE)
+
+    def median_unbiased(self) -> float | None:
+        """The parameter under which this outcome is in the middle."""
+        return self._parameter(median_unbiased(self.outcome), "median_unbiased", AT_END)
+
+    def unbiased(self) -> float | None:
+        """The mean of the first unit, given the outcome."""
+        reason = self.procedure.family.no_unbiased_estimate
+        return self.outcome.first_step_mean() if reason is None else self._noted(None, "unbiased", reason)
+
+    def bias(self) -> float | None:
+        """Of the maximum-likelihood estimate, were its value the true parameter."""
+        family, name, estimate = self.procedure.family, "bias_of_maximum_likelihood", self._estimate
+        if family.no_bias is not None:
+            return self._noted(None, name, family.no_bias)
+        step = 0.0 if family.is_watched_in_time else self.looks.step
+        if estimate is None or step is None:
+            return self._noted(None, name, NO_ESTIMATE if estimate is None else UNEVEN)
+        try:
+            return float(family.bias(self.procedure.region, estimate, step, self.procedure.known))
+        except TooMuchWork as error:
+            return self._noted(None, name, f"Would need more than {error.limit}.")
+
+    @property
+    def _estimate(self) -> float | None:
+        return self.procedure.family.estimate(self.standing, self.procedure.known)
+
+    def _parameter(self, natural: float, name: str, reason: str) -> float | None:
+        """The family's parameter; an end of the range has its reason, and an end without a bound is None."""
+        parameter = self.procedure.family.parameter_of(self.outcome.mean(natural), self.procedure.known)
+        if math.isinf(natural):
+            is_towards_h1 = (natural > 0.0) == (self.procedure.region.above is Decision.REJECT)
+            way = "towards H1" if is_towards_h1 else "towards H0"
+            self.reasons[name] = reason.format(way=way, beyond="" if math.isfinite(parameter) else UNBOUNDED)
+        return parameter if math.isfinite(parameter) else None
+
+    def _noted(self, value: float | None, name: str, reason: str) -> float | None:
+        if value is None:
+            self.reasons[name] = reason
+        return value
+
+
+def _decided_at_once(level: float, looks: Looks) -> Inference:
+    """Failures at time zero: nothing but the rejection itself can be said."""
+    names = ("maximum_likelihood", "median_unbiased", "unbiased", "lower", "upper", "bias_of_maximum_likelihood")
+    return Inference(0.0, None, None, None, level, None, None, None, dict.fromkeys(names, AT_ONCE), looks.words)
+
+
+def meanings_of(document: str, level: float) -> dict[str, str]:
+    """What each figure means, in a sentence."""
+    family = procedure_of_document(document).family
+    found = {
+        name: text.format(parameter=family.parameter, level=f"{100.0 * level:g} %") for name, text in MEANINGS.items()
+    }
+    if family.is_watched_in_time:
+        found["bias_of_maximum_likelihood"] += WITHOUT_FAILURE
+    return found
+
+
+__all__ = ["Inference", "Looks", "inference_at", "inference_of", "looks_of", "meanings_of"]

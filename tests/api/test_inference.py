@@ -1,0 +1,231 @@
+"""What may be said after the decision, over HTTP: each family, each kind of plan, and what is refused."""
+
+import math
+from typing import Any
+
+import httpx
+import pytest
+from scipy.stats import chi2, norm, poisson
+
+from tests.api.examples import PUMP, SEAL, SHAFT, WELD, Namer, pointers, with_test
+
+SIMON = {
+    "family": "bernoulli",
+    "h0": 0.1,
+    "h1": 0.3,
+    "alpha": 0.05,
+    "beta": 0.2,
+    "boundaries": "table",
+    "table": [{"sample_number": 10, "accept": 1}, {"sample_number": 29, "accept": 5, "reject": 6}],
+}
+TIMED = {
+    "family": "exponential",
+    "h0": 3.0,
+    "h1": 1.0,
+    "alpha": 0.2,
+    "beta": 0.2,
+    "boundaries": "table",
+    "table": [{"failures": 0, "accept_at": 3.0}, {"failures": 2, "accept_at": 6.0}, {"failures": 3, "reject_at": 6.0}],
+}
+
+
+def inferred(client: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any], **query: Any) -> Any:
+    key = with_test(client, new_name, plan)
+    client.post(f"/v1/tests/{key}/observations", json=body).raise_for_status()
+    answer = client.get(f"/v1/tests/{key}/inference", params=query)
+    assert answer.status_code == 200, answer.text
+    return answer.json()
+
+
+def test_two_leaks_at_once(admin: httpx.Client, new_name: Namer) -> None:
+    """The furthest that a lot can go towards H1: everything by hand."""
+    found = inferred(admin, new_name, SEAL, {"values": [1, 1, 0]})
+    assert (found["decision"], found["ordering"], found["overrun"]) == ("reject", "stage-wise", 1)
+    assert found["p_value"] == pytest.approx(0.01**2, rel=1e-12)
+    assert found["estimates"] == {"maximum_likelihood": 1.0, "median_unbiased": 1.0, "unbiased": 1.0}
+    assert found["interval"]["level"] == 0.95
+    assert found["interval"]["lower"] == pytest.approx(math.sqrt(0.025), rel=1e-11)
+    assert found["interval"]["upper"] == 1.0
+    assert "towards H1" in found["reasons"]["upper"]
+    assert found["meanings"].keys() >= {"p_value", "unbiased", "interval", "overrun", "bias_of_maximum_likelihood"}
+
+
+def test_no_leak_at_all(admin: httpx.Client, new_name: Namer) -> None:
+    found = inferred(admin, new_name, SEAL, {"values": [0] * 25}, level=0.9)
+    assert (found["decision"], found["p_value"], found["overrun"]) == ("accept", 1.0, 1)
+    assert found["interval"] == {"level": 0.9, "lower": 0.0, "upper": pytest.approx(1 - 0.05 ** (1 / 24), rel=1e-11)}
+    assert found["estimates"] == {"maximum_likelihood": 0.0, "median_unbiased": 0.0, "unbiased": 0.0}
+    assert found["reasons"].keys() == {"lower", "median_unbiased"}
+
+
+@pytest.mark.parametrize("size", [1, 19])
+def test_a_two_stage_table_however_its_units_are_grouped(admin: httpx.Client, new_name: Namer, size: int) -> None:
+    """Girshick, Mosteller and Savage (1946) in Simon's design: 3 of 29 are estimated as .212308 (computed)."""
+    first = [{"value": 1, "size": 5}, {"value": 1, "size": 5}]
+    rest = [{"value": 1, "size": 19}] if size == 19 else [{"value": 1}, *({"value": 0} for _ in range(18))]
+    found = inferred(admin, new_name, SIMON, {"observations": [*first, *rest]})
+    assert found["estimates"]["unbiased"] == pytest.approx(0.212308, abs=6e-7)
+    assert found["estimates"]["maximum_likelihood"] == pytest.approx(3 / 29)
+    assert found["bias_of_maximum_likelihood"] < 0
+    assert "rows of the table" in found["looks"]
+    # Further towards H1 than 3 in all lie the outcomes with more in all: the rest is early acceptance or 2 in all.
+    early = sum(math.comb(10, k) * 0.1**k * 0.9 ** (10 - k) for k in (0, 1))
+    two = math.comb(10, 2) * 0.1**2 * 0.9**27
+    assert found["p_value"] == pytest.approx(1 - early - two, abs=1e-12)
+
+
+def test_groups_that_differ_are_taken_as_they_came(admin: httpx.Client, new_name: Namer) -> None:
+    groups = [{"value": 0, "size": 10}, {"value": 1, "size": 7}, {"value": 2, "size": 10}]
+    found = inferred(admin, new_name, SEAL, {"observations": groups})
+    assert found["decision"] == "reject"
+    assert "as they were reported" in found["looks"]
+    assert found["bias_of_maximum_likelihood"] is None
+    assert "not alike" in found["reasons"]["bias_of_maximum_likelihood"]
+    # Rejecting at or before look 3 with at least 3: by hand from the limits of 10, 17 and 27 units.
+    limits = {10: 2, 17: 2, 27: 3}  # a reject number counts only where it was looked at
+    p, alive, up, before = 0.01, {0: 1.0}, 0.0, 0
+    for n, reject in limits.items():
+        moved: dict[int, float] = {}
+        for total, chance in alive.items():
+            for more in range(n - before + 1):
+                weight = math.comb(n - before, more) * p**more * (1 - p) ** (n - before - more)
+                moved[total + more] = moved.get(total + more, 0.0) + chance * weight
+        up += sum(chance for total, chance in moved.items() if total >= reject)
+        # At 27 units none is enough to accept, but that is what the outcome is compared with, not what it needs.
+        alive, before = {total: chance for total, chance in moved.items() if total < reject}, n
+    assert found["p_value"] == pytest.approx(up, rel=1e-11)
+
+
+def test_counts_in_the_first_report(admin: httpx.Client, new_name: Namer) -> None:
+    found = inferred(admin, new_name, WELD, {"observations": [{"value": 6, "exposure": 0.8}]})
+    assert found["p_value"] == pytest.approx(poisson.sf(5, 0.4), rel=1e-11)
+    assert found["estimates"]["maximum_likelihood"] == pytest.approx(7.5)
+    assert found["estimates"]["unbiased"] == pytest.approx(7.5)
+    assert found["interval"]["lower"] == pytest.approx(chi2.ppf(0.025, 12) / 1.6, rel=1e-10)
+    assert found["interval"]["upper"] == pytest.approx(chi2.ppf(0.975, 14) / 1.6, rel=1e-10)
+    assert found["bias_of_maximum_likelihood"] > 0
+
+
+def test_a_failure_free_time(admin: httpx.Client, new_name: Namer) -> None:
+    """No upper limit of the mean life, no estimate, and the reasons beside them; reports do not matter."""
+    quiet = [{"time": 1500.0, "failed": False}, {"time": 900.0, "failed": False}]
+    found = inferred(admin, new_name, PUMP, {"observations": quiet})
+    time = 2 * math.log(9) * 500.0
+    assert found["decision"] == "accept"
+    assert found["interval"]["lower"] == pytest.approx(2 * time / chi2.ppf(0.975, 2), rel=1e-10)
+    assert found["interval"]["upper"] is None
+    assert found["estimates"] == {"maximum_likelihood": None, "median_unbiased": None, "unbiased": None}
+    assert found["bias_of_maximum_likelihood"] is None
+    assert found["reasons"].keys() == {
+        "upper",
+        "maximum_likelihood",
+        "median_unbiased",
+        "unbiased",
+        "bias_of_maximum_likelihood",
+    }
+
+
+def test_failures_before_a_time(admin: httpx.Client, new_name: Namer) -> None:
+    """Failure 2 before 800 rejects, by the limit on failures alone: the p-value is that of the Poisson process."""
+    plan = {
+        **PUMP,
+        "boundaries": "given",
+        "thresholds": {"accept": -50.0, "reject": 50.0},
+        "truncation": {"exposure": 800.0, "failures": 2},
+    }
+    found = inferred(admin, new_name, plan, {"values": [120.0, 130.0]})
+    assert found["decision"] == "reject"
+    assert found["p_value"] == pytest.approx(1 - math.exp(-0.25) * 1.25, rel=1e-11)
+    assert found["estimates"]["maximum_likelihood"] == 125.0
+    assert found["estimates"]["median_unbiased"] == pytest.approx(2 * 250.0 / chi2.ppf(0.5, 4), rel=1e-10)
+
+
+def test_a_table_of_failures_and_times(admin: httpx.Client, new_name: Namer) -> None:
+    found = inferred(
+        admin, new_name, TIMED, {"observations": [{"time": 2.0, "failed": True}, {"time": 9.0, "failed": False}]}
+    )
+    assert found["decision"] == "accept"
+    # One failure by 6, or two: all but none by 3 and three by 6; less extreme are none by 3 and fewer by 6.
+    assert found["p_value"] == pytest.approx(1 - math.exp(-1.0), rel=1e-11)
+    assert found["interval"]["lower"] < found["estimates"]["median_unbiased"] < found["interval"]["upper"]
+
+
+def test_one_measurement(admin: httpx.Client, new_name: Namer) -> None:
+    found = inferred(admin, new_name, SHAFT, {"values": [12.0]})
+    assert found["p_value"] == pytest.approx(norm.sf(4.0), rel=1e-10)
+    half = 0.5 * norm.ppf(0.975)
+    assert found["interval"]["lower"] == pytest.approx(12.0 - half, abs=1e-10)
+    assert found["interval"]["upper"] == pytest.approx(12.0 + half, abs=1e-10)
+    assert found["estimates"]["unbiased"] == pytest.approx(12.0, abs=1e-12)
+    assert found["reasons"] == {}
+
+
+@pytest.mark.parametrize(
+    ("plan", "body"),
+    [
+        ({**SEAL, "truncation": {"sample_number": 30}}, {"values": [0] * 10 + [1] + [0] * 19}),
+        ({**WELD, "truncation": {"exposure": 4.0}}, {"values": [1, 1, 1, 1]}),
+        ({**WELD, "h0": 1.5, "h1": 0.5}, {"values": [1, 0, 0, 0]}),
+        ({**PUMP, "truncation": {"exposure": 1500.0}}, {"values": [600.0, 500.0, 600.0]}),
+        ({**SHAFT, "truncation": {"sample_number": 3}}, {"values": [10.2, 10.3, 10.3]}),
+        ({**SHAFT, "h0": 10.5, "h1": 10.0, "boundaries": "calibrated"}, {"values": [9.5, 9.8, 9.9, 10.0, 9.9]}),
+        ({"standard": "MIL-HDBK-781A/III-D", "scale": 100.0}, {"values": [30.0, 30.0, 40.0, 40.0, 30.0]}),
+        ({"standard": "40-CFR-1068/A-2-AA"}, {"values": [0, 1, 0, 0, 1, 0, 0]}),
+    ],
+)
+def test_every_kind_of_plan_has_its_figures_in_order(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any]
+) -> None:
+    found = inferred(admin, new_name, plan, body)
+    wide = inferred(admin, new_name, plan, body, level=0.999)
+    narrow, middle = found["interval"], found["estimates"]["median_unbiased"]
+    assert wide["interval"]["lower"] < narrow["lower"] < middle < narrow["upper"] < wide["interval"]["upper"]
+    assert 0.0 < found["p_value"] < 1.0
+    assert abs(found["bias_of_maximum_likelihood"]) < narrow["upper"] - narrow["lower"]
+
+
+def test_a_long_log_of_uneven_exposures_is_read_to_its_end(admin: httpx.Client, new_name: Namer) -> None:
+    """In many submissions or in one: the same answer, and what came after the decision changes nothing."""
+    reports = [{"value": i % 2, "exposure": 1.0 + 0.01 * (i % 7)} for i in range(60)]
+    plan = {**WELD, "h0": 0.45, "h1": 0.55}
+    reports += [{"value": 40, "exposure": 1.5}]
+    whole = inferred(admin, new_name, plan, {"observations": reports})
+    key = with_test(admin, new_name, plan)
+    for report in [*reports, {"value": 3, "exposure": 9.0}]:
+        admin.post(f"/v1/tests/{key}/observations", json={"observations": [report]}).raise_for_status()
+    pieces = admin.get(f"/v1/tests/{key}/inference").json()
+    assert pieces.pop("overrun") == whole.pop("overrun") + 1 == 1
+    assert pieces == whole
+
+
+def test_before_the_decision_there_is_only_an_outlook(admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [0, 0]}).raise_for_status()
+    answer = admin.get(f"/v1/tests/{key}/inference", headers={"If-None-Match": "*"})
+    assert answer.status_code == 409
+    assert answer.json()["type"].endswith(":not-decided")
+    assert "outlook" in answer.json()["detail"]
+
+
+@pytest.mark.parametrize(
+    "query", ["level=0", "level=1", "level=1.5", "level=-0.9", "level=nan", "level=high", "at=0.1"]
+)
+def test_a_level_that_is_none_is_refused(admin: httpx.Client, new_name: Namer, query: str) -> None:
+    key = with_test(admin, new_name, SEAL)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [1, 1]}).raise_for_status()
+    answer = admin.get(f"/v1/tests/{key}/inference?{query}")
+    assert answer.status_code == 422, answer.text
+    assert pointers(answer) == ["/" + query.partition("=")[0]]
+
+
+def test_an_unknown_test_is_404(admin: httpx.Client) -> None:
+    assert admin.get("/v1/tests/nowhere/inference").status_code == 404
+
+
+def test_what_has_not_changed_is_not_sent_again(admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [1, 1]}).raise_for_status()
+    tag = admin.get(f"/v1/tests/{key}/inference").headers["ETag"]
+    assert admin.get(f"/v1/tests/{key}/inference", headers={"If-None-Match": tag}).status_code == 304
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [0]}).raise_for_status()
+    assert admin.get(f"/v1/tests/{key}/inference", headers={"If-None-Match": tag}).json()["overrun"] == 1
