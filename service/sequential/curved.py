@@ -22,18 +22,18 @@ from service.sequential.decision import Decision
 from service.sequential.double import BoolArray, Double, FloatArray
 from service.sequential.evidence import Evidence
 from service.sequential.region import ABOVE, BELOW, FEW_UNITS, INSIDE, TIE, Limits, SideArray, Span, Wall
+from service.sequential.roots import SMALLEST, Rise, rising_root
 
-# Totals and progress are looked for between these.
-SMALLEST, FURTHEST = 1e-300, 2.0**53
-# Halvings that bring a real limit to its last digits, and steps of the secant that do so for a moment.
-HALVINGS, STEPS = 110, 60
+# No total and no progress is looked for beyond.
+FURTHEST = 2.0**53
+# Halvings that bring a real limit to its last digits.
+HALVINGS = 110
 # A table has totals as far as so many standard deviations and so many units from what H0 leads to expect; so many
 # numbers at most, for so many progress values.
 REACH, UNITS = 12.0, 30.0
 LARGEST_TABLE, MOST_PROGRESS, MOST_TABLES = 400_000, 4_096, 24
 
 Holds = Callable[[FloatArray], BoolArray]
-Rise = Callable[[FloatArray], FloatArray]
 # From progress, total and evidence to whether the point lies on one side.
 Judgement = Callable[[FloatArray, FloatArray, FloatArray], BoolArray]
 
@@ -219,7 +219,7 @@ class CurvedRegion:
         high = np.minimum(np.maximum(high, 2.0 * low), far)
         while np.any(short := (rise(high) < 0.0) & (high < np.minimum(far, FURTHEST))):
             low, high = np.where(short, high, low), np.where(short, np.minimum(4.0 * high, far), high)
-        return _root(rise, low, high)
+        return rising_root(rise, low, high)
 
 
 @dataclass(frozen=True)
@@ -310,29 +310,6 @@ class _Search:
             high = np.where(up, np.minimum(high + width, self._largest), high)
             low = np.where(down, np.maximum(low - width, self._floor), low)
             width = np.where(up | down, 2.0 * width, width)
-
-
-def _root(rise: Rise, low: FloatArray, high: FloatArray) -> FloatArray:
-    """
-    The zero of a rising function between two arrays of positive numbers, element by element; NaN where it has none.
-
-    Regula falsi in the logarithm whose kept end is weakened (Illinois), with halvings where it is slow.
-    """
-    left, right = np.log(low), np.log(np.maximum(high, SMALLEST))
-    below, above = rise(low), rise(high)
-    has_none = (above < 0.0) | ~np.isfinite(high)
-    is_at_start = below >= 0.0
-    below, above = np.where(is_at_start, -1.0, below), np.where(has_none, 1.0, above)
-    for step in range(STEPS):
-        if np.all(right - left <= 4e-16 * np.maximum(1.0, np.abs(right))):
-            break
-        share = np.full_like(left, 0.5) if step % 4 == 3 else below / (below - above)
-        middle = left + (right - left) * np.clip(share, 1e-12, 1.0 - 1e-12)
-        found = rise(np.exp(middle))
-        holds = found >= 0.0
-        above, below = np.where(holds, found, 0.5 * above), np.where(holds, 0.5 * below, found)
-        left, right = np.where(holds, left, middle), np.where(holds, middle, right)
-    return np.where(has_none, np.nan, np.where(is_at_start, low, np.exp(right)))
 
 
 def _plain(values: FloatArray) -> Double:

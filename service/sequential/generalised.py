@@ -38,6 +38,11 @@ class OneSided:
     is_upward: bool
 
     @property
+    def is_test_martingale(self) -> bool:
+        """See `Evidence`; suprema know what came."""
+        return False
+
+    @property
     def is_two_sided(self) -> bool:
         """See `Evidence`."""
         return False
@@ -70,6 +75,11 @@ class TwoSided:
 
     deviance: Deviance
     edge0: float
+
+    @property
+    def is_test_martingale(self) -> bool:
+        """See `Evidence`; suprema know what came."""
+        return False
 
     @property
     def is_two_sided(self) -> bool:

@@ -217,7 +217,7 @@ class Family(ABC):
         return parameter
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
-        """The parameter with this mean of the total in one unit of progress."""
+        """The parameter with this mean of the total in one unit of progress; either may lie at infinity."""
         return mean
 
     def known_rule(self, name: str, value: float) -> str | None:
