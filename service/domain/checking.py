@@ -221,6 +221,8 @@ def _faults_of_known(family: Family, known: Mapping[str, float]) -> list[Fault]:
     for name, value in known.items():
         if name not in family.known:
             faults.append(Fault(f"/known/{name}", f"means nothing for {family.name}"))
+        elif not isinstance(value, float | int):
+            faults.append(Fault(f"/known/{name}", f"must be a number; received {value!r}"))
         elif (rule := family.known_rule(name, value)) is not None:
             faults.append(Fault(f"/known/{name}", f"{rule}; received {value!r}"))
     return faults

@@ -182,6 +182,8 @@ def _faults_of_prior(family: Family, statistic: Statistic, content: Content) -> 
     wanted = ", ".join(f'"{name}"' for name in family.prior)
     if prior is None:
         return [Fault("/known/prior", f"is required for {family.name}, with {wanted}")]
+    if not isinstance(prior, Mapping):
+        return [Fault("/known/prior", f"must be an object with {wanted}; received {prior!r}")]
     faults = [
         Fault(f"/known/prior/{name}", f"is required for {family.name}") for name in family.prior if name not in prior
     ]

@@ -168,7 +168,7 @@ class AttainedOut(Answer):
     """The exact risks: P(reject) at h0 and P(accept) at h1; of composite hypotheses the largest, and where."""
 
     alpha: float
-    beta: float | None = Field(description="Null where the plan states no h1 apart from h0.")
+    beta: float | None = Field(None, description="Null where the plan states no h1 apart from h0.")
     alpha_at: float | None = Field(None, description="Of composite hypotheses: the parameter of H0 with this alpha.")
     beta_at: float | None = Field(None, description="Of composite hypotheses: the parameter of H1 with this beta.")
 
