@@ -141,12 +141,14 @@ def _gap(count: FloatArray, expected: FloatArray) -> FloatArray:
     """
     sum_, difference = count + expected, count - expected
     v = np.divide(difference, sum_, out=np.zeros_like(sum_), where=sum_ > 0.0)
-    square = v * v
-    series = np.zeros_like(v)
-    for term in range(TERMS, 0, -1):
-        series = (series + 1.0 / (2 * term + 1)) * square
-    near = difference * v + 2.0 * count * v * series
-    with np.errstate(divide="ignore", invalid="ignore"):
-        logarithm = np.where(count > 0.0, count * np.log(np.where(count > 0.0, count, 1.0) / expected), 0.0)
-    far = logarithm - difference
-    return np.where(np.abs(v) < NEAR, near, np.where(sum_ > 0.0, far, 0.0))
+    is_near = np.abs(v) < NEAR
+    near = far = np.zeros_like(v)
+    if np.any(is_near):
+        square, series = v * v, np.zeros_like(v)
+        for term in range(TERMS, 0, -1):
+            series = (series + 1.0 / (2 * term + 1)) * square
+        near = difference * v + 2.0 * count * v * series
+    if not np.all(is_near):
+        with np.errstate(divide="ignore", invalid="ignore"):
+            far = np.where(count > 0.0, count * np.log(np.where(count > 0.0, count, 1.0) / expected), 0.0) - difference
+    return np.where(is_near, near, np.where(sum_ > 0.0, far, 0.0))
