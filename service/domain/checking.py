@@ -188,7 +188,7 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
     rule, thresholds = content["boundaries"], content.get("thresholds")
     statistic = STATISTICS[content["statistic"]]
     if rule not in statistic.boundaries:
-        where = "" if statistic.is_simple else f" for a {statistic.name} plan"
+        where = "" if statistic.is_simple else f" for {statistic.title}"
         return [Fault("/boundaries", f"must be one of {', '.join(statistic.boundaries)}{where}; received {rule!r}")]
     faults = []
     if rule != "table" and "table" in content:

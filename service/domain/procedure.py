@@ -71,7 +71,9 @@ class Procedure:
 @dataclass(frozen=True)
 class Lines:
     """
-    The region's two lines, as inspection standards draw them; both intercepts are positive.
+    The region's two lines over the sample number (or exposure), as inspection standards draw them.
+
+    Both intercepts are positive, but where the first unit makes no progress the nearer one may not be.
 
     Accept when the total <= slope * n - accept_intercept and reject when >= slope * n + reject_intercept; where H1
     lies below H0 the signs of the intercepts and the comparisons turn round.
@@ -97,7 +99,9 @@ def lines_of(procedure: Procedure) -> Lines | None:
     region = procedure.region
     if not isinstance(region, StraightRegion) or procedure.family.is_invariant:
         return None
-    lower, upper = region.lower_intercept, region.upper_intercept
+    # The region may run over fewer than all units.
+    shift = region.ratio.slope * procedure.family.idle_units(ORIGIN)
+    lower, upper = region.lower_intercept + shift, region.upper_intercept - shift
     accept, reject = (lower, upper) if procedure.is_upward else (upper, lower)
     return Lines(region.ratio.slope, accept, reject)
 

@@ -16,7 +16,7 @@ from service.sequential.calibration import Risks, RisksNotMet
 from service.sequential.exact.characteristics import QUANTILES, TooMuchWork
 from service.sequential.invariant_bounds import fewest_looks, information
 from service.sequential.invariant_calibration import Search, calibrated
-from service.sequential.invariant_risks import Effort, Progress, simulated
+from service.sequential.invariant_risks import LARGEST_INTERPOLATED, Effort, Progress, simulated
 from service.sequential.invariant_risks import Point as SimulatedPoint
 from service.sequential.invariant_walks import InvariantTest, invariant_test
 
@@ -25,14 +25,19 @@ SEED = 1
 LARGEST_SEED = 2**53
 # One-sided, that a calibrated plan keeps its stated risks.
 CONFIDENCE = 0.95
-# Standard error of a probability at which a simulation ends, and courses at which it ends all the same.
-EFFORT = Effort(5e-4, 1_000_000)
+# Standard error of a probability at which a simulation ends, and courses at which it ends all the same: fewer where
+# the ratio of a course takes a quadrature.
+STANDARD_ERROR, MOST_COURSES, MOST_COURSES_FAR = 5e-4, 400_000, 60_000
+# Looks of all courses together, about.
+MOST_LOOKS_TOGETHER = 100_000_000
 # Parameters of a curve, and the most that may be asked for at once.
-CURVE_POINTS, MOST_POINTS = 13, 51
+CURVE_POINTS, MOST_POINTS = 13, 25
 # Average looks that a simulation and a calibration may take, as far as they can be foreseen.
 MOST_LOOKS, MOST_LOOKS_CALIBRATED = 2_000.0, 500.0
 # Batches of a calibration with few looks, and looks that many batches share.
 BATCHES, FEWEST_BATCHES, SHARED_LOOKS = 6, 2, 400.0
+
+__all__ = ["Progress", "Question", "question_of", "simulated_promise", "simulated_test", "simulated_thresholds"]
 
 Report = Callable[[Progress], None]
 
@@ -84,7 +89,7 @@ def simulated_promise(question: Question, report: Report) -> Promise:
     test = simulated_test(procedure, thresholds)
     asked = (h0, h1, *question.at)
     try:
-        found = simulated(test, asked, question.seed, EFFORT, report)
+        found = simulated(test, asked, question.seed, _effort(test, asked), report)
     except TooMuchWork as error:
         raise ComputationTooLarge(error.limit) from error
     least = fewest_looks((h0, h1), alpha, beta, test.samples)
@@ -160,6 +165,12 @@ def _check_looks(test: InvariantTest, most: float) -> float:
     if looks > most:
         raise ComputationTooLarge(f"{most:.0f} looks on average")
     return looks
+
+
+def _effort(test: InvariantTest, asked: Sequence[float]) -> Effort:
+    is_far = max(map(abs, asked)) > LARGEST_INTERPOLATED
+    most = MOST_COURSES_FAR if is_far else MOST_COURSES
+    return Effort(STANDARD_ERROR, min(most, int(MOST_LOOKS_TOGETHER / _check_looks(test, MOST_LOOKS))))
 
 
 def _curve(procedure: Procedure) -> tuple[float, ...]:

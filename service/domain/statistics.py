@@ -48,6 +48,11 @@ class Statistic:
         return self.name == "simple"
 
     @property
+    def title(self) -> str:
+        """A plan with it, for people."""
+        return f"{'an' if self.name == 'invariant' else 'a'} {self.name} plan"
+
+    @property
     def weighs_points(self) -> bool:
         """True where one value stands against another, so that both risks are at points."""
         return self.name in {"simple", "invariant"}
@@ -100,7 +105,7 @@ def faults_of_statistic(family: Family, content: Content) -> list[Fault]:
     required = [name for name in statistic.required if family.has_model or name != "h1"]
     faults = [Fault(f"/{name}", "is required") for name in required if name not in content]
     faults += [
-        Fault(f"/{name}", f"means nothing for a {statistic.name} plan")
+        Fault(f"/{name}", f"means nothing for {statistic.title}")
         for name in SPECIAL
         if name in content and name not in allowed
     ]
