@@ -68,6 +68,9 @@ IN_TIME = "The test was watched in continuous time, so nothing depends on how it
 ROWS = "The rows of the table up to the decision; how observations were grouped between them does not matter."
 EACH = "The test was looked at after each observation, as it was reported."
 TAKEN = "The looks that were taken, at the groups or exposures as they were reported; these are taken as given."
+IN_ARMS = (
+    "The test was looked at after each measurement; in which arms they came, and in what order, is taken as given."
+)
 
 NO_ESTIMATE = "There is no maximum-likelihood estimate after this outcome."
 UNEVEN = "Depends on the groups or exposures that would have come later, and those so far were not alike."
@@ -88,6 +91,26 @@ MEANINGS = {
     "truncation by their total; then acceptances at the boundary, the latest first.",
     "overrun": "Observations that came after the decision. They never count here: "
     "all figures are those of the moment of the decision.",
+}
+TWO_SIDED = {
+    "p_value": "Twice the smaller of two probabilities if H0 were true: of an outcome at least as far up as this one, "
+    "and of one at least as far down. A plan need not share alpha equally between its sides, so after a rejection this "
+    "may exceed alpha.",
+    "ordering": "From large totals to small ones: rejections above, the earliest first; then decisions at the "
+    "truncation by their total; then rejections below, the latest first.",
+}
+# Plans that never accept and have no truncation.
+ENDLESS = {
+    "interval": "Whatever the true {parameter}, at most {rest} of tests under this plan end with limits that are not "
+    "around it.",
+    "unbiased": "Over many tests under this plan its average is the true {parameter}, wherever the test is sure to "
+    "end; under H0 it may go on for ever.",
+    "ordering": "Most extreme towards H1 are the earliest rejections, then the later ones; tests that go on for ever "
+    "are the least extreme.",
+}
+ENDLESS_TWO_SIDED = {
+    "ordering": "From large totals to small ones: rejections above, the earliest first; then tests that go on for "
+    "ever; then rejections below, the latest first.",
 }
 WITHOUT_FAILURE = " Tests that end without a failure have no such estimate and are left out."
 AT_ONCE = "The test was decided before any exposure had passed; that has probability zero whatever the parameter."
@@ -132,20 +155,25 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
     progress, steps = _reported(procedure, decided.sequence, documents)
     # What adds nothing to the progress, such as a pair that agrees, is no look.
     progress, steps = progress[steps > 0.0], steps[steps > 0.0]
+    if family.carries:
+        return _looks(progress, None, IN_ARMS)
     is_even = bool(np.all(steps == steps[0]))
     return _looks(progress, float(steps[0]) if is_even else None, EACH if is_even and steps[0] == 1.0 else TAKEN)
 
 
 def _reported(procedure: Procedure, last: int, documents: Documents) -> tuple[FloatArray, FloatArray]:
     """Progress after each observation up to the deciding one, and what each added: arrays of shape (observations,)."""
-    state, progress, steps = State(), [], []
+    state, progress, steps, reached = State(), [], [], 0.0
     for document in documents:
         increments = procedure.family.read(document, procedure.known)
         walk = walk_from(procedure, state, increments)
         count = min(len(increments.total), last - state.sequence)
         progress.append(walk.progress.value[:count])
-        steps.append(increments.progress[:count])
+        # Where progress does not add up by itself, what was gained is the difference.
+        gained = np.diff(walk.progress.value, prepend=reached) if procedure.family.carries else increments.progress
+        steps.append(gained[:count])
         end = walk.end
+        reached = float(end.progress.value)
         state = State(
             sequence=state.sequence + count,
             sample_number=state.sample_number + int(np.sum(increments.units[:count])),
@@ -200,12 +228,12 @@ def inference_at(procedure: Procedure, looks: Looks, total: Sum, decision: Decis
 def _outcome(procedure: Procedure, looks: Looks, total: Sum, decision: Decision) -> Outcome:
     region, height = procedure.region, Double.of(total.high, total.low)
     is_above = decision is region.above
-    if region.above is region.below:
+    if procedure.is_two_sided:
         where = Double(looks.progress[-1:], np.zeros(1)), Double(np.array([total.high]), np.array([total.low]))
         is_above = bool(region.sides(*where)[0] >= INSIDE)
     outcome = procedure.family.outcome(region, End(looks.progress, height, is_above), procedure.known)
     if outcome is None:
-        raise InvalidQuestion(f"There is no inference after tests of the family {procedure.family.name}.")
+        raise InvalidQuestion(procedure.family.no_inference)
     return outcome
 
 
@@ -221,12 +249,12 @@ class _Figures:
 
     def p_value(self) -> float:
         """P under H0 of an outcome at least as extreme towards H1; towards both sides twice the smaller."""
-        region = self.procedure.region
-        null = self.procedure.family.mean_of(self.procedure.hypotheses[0], self.procedure.known)
+        procedure = self.procedure
+        null = procedure.family.mean_of(procedure.hypotheses[0], procedure.known)
         tails = self.outcome.tails(self.outcome.natural(null))
-        if region.above is region.below:
+        if procedure.is_two_sided:
             return min(1.0, 2.0 * min(tails.up, tails.down))
-        return tails.up if region.above is Decision.REJECT else tails.down
+        return tails.up if procedure.is_upward else tails.down
 
     def interval(self, tail: float) -> tuple[float | None, float | None]:
         """The two limits of the parameter."""
@@ -269,10 +297,17 @@ class _Figures:
         """The family's parameter; an end of the range has its reason, and an end without a bound is None."""
         parameter = self.procedure.family.parameter_of(self.outcome.mean(natural), self.procedure.known)
         if math.isinf(natural):
-            is_towards_h1 = (natural > 0.0) == (self.procedure.region.above is Decision.REJECT)
-            way = "towards H1" if is_towards_h1 else "towards H0"
-            self.reasons[name] = reason.format(way=way, beyond="" if math.isfinite(parameter) else UNBOUNDED)
+            beyond = "" if math.isfinite(parameter) else UNBOUNDED
+            self.reasons[name] = reason.format(way=self._way(is_up=natural > 0.0), beyond=beyond)
         return parameter if math.isfinite(parameter) else None
+
+    def _way(self, *, is_up: bool) -> str:
+        """Which way large or small totals lie, for people."""
+        procedure = self.procedure
+        if not procedure.is_two_sided:
+            return "towards H1" if is_up == procedure.is_upward else "towards H0"
+        size = "larger" if is_up != procedure.family.parameter_lowers_total else "smaller"
+        return f"towards a {size} {procedure.family.parameter}"
 
     def _noted(self, value: float | None, name: str, reason: str) -> float | None:
         if value is None:
@@ -288,10 +323,14 @@ def _decided_at_once(level: float, looks: Looks) -> Inference:
 
 def meanings_of(document: str, level: float) -> dict[str, str]:
     """What each figure means, in a sentence."""
-    family = procedure_of_document(document).family
-    found = {
-        name: text.format(parameter=family.parameter, level=f"{100.0 * level:g} %") for name, text in MEANINGS.items()
-    }
+    procedure = procedure_of_document(document)
+    family, texts = procedure.family, dict(MEANINGS)
+    if procedure.is_two_sided:
+        texts |= TWO_SIDED
+    if procedure.may_go_on_for_ever:
+        texts |= ENDLESS | (ENDLESS_TWO_SIDED if procedure.is_two_sided else {})
+    words = {"parameter": family.parameter, "level": f"{100.0 * level:g} %", "rest": f"{100.0 - 100.0 * level:g} %"}
+    found = {name: text.format(**words) for name, text in texts.items()}
     if family.is_watched_in_time:
         found["bias_of_maximum_likelihood"] += WITHOUT_FAILURE
     return found

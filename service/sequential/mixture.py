@@ -18,7 +18,7 @@ import numpy as np
 from scipy.special import betainc, betaincc, betaln, gammainc, gammaincc, gammaln, log_ndtr, xlogy
 
 from service.sequential.deviance import Bernoulli, Deviance, Poisson
-from service.sequential.double import Double, FloatArray
+from service.sequential.double import Double, FloatArray, two_product, two_sum
 
 # Shares smaller than this are computed in logarithms.
 TINY = 1e-280
@@ -102,7 +102,9 @@ class NormalMixture(Mixture):
     def log(self, progress: Double, total: Double) -> FloatArray:
         """See `Evidence`. Source: Robbins (1970)."""
         n = progress.value
-        away = ((total.high - self.edge * progress.high) + (total.low - self.edge * progress.low)) / self.sigma
+        line = two_product(progress.high, np.float64(self.edge))  # type: ignore[arg-type]
+        apart = two_sum(total.high, -line.high)
+        away = (apart.high + (apart.low + (total.low - line.low - self.edge * progress.low))) / self.sigma
         share = (self.tau / self.sigma) ** 2
         spread = 1.0 + n * share
         ratio: FloatArray = 0.5 * (share * away * away / spread - np.log1p(n * share))

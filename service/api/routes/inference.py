@@ -7,9 +7,9 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
-from service.api.conditional import etag, not_modified
+from service.api.conditional import etag
 from service.api.description import answers_with
-from service.api.lookup import known_test
+from service.api.lookup import known_test, unchanged_test
 from service.api.parts import Parts, PartsOf, computing
 from service.api.schemas.inference import InferenceOut
 from service.domain.access import Role
@@ -44,13 +44,12 @@ async def show_inference(
     key: str, request: Request, response: Response, parts: PartsOf, query: Annotated[InferenceQuery, Query()]
 ) -> InferenceOut | Response:
     """A p-value, an interval and estimates that allow for the stopping rule; before the decision, 409."""
+    if (unchanged := await unchanged_test(parts, key, request)) is not None:
+        return unchanged
     test, plan = await known_test(parts, key)
     if not test.state.is_decided:
         raise NotDecided(key)
-    tag = etag(test.version)
-    if (unchanged := not_modified(request, tag)) is not None:
-        return unchanged
-    response.headers["ETag"] = tag
+    response.headers["ETag"] = etag(test.version)
     return await computing(parts, lambda: _inference(parts, test, plan, query.level))
 
 

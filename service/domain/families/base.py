@@ -149,6 +149,7 @@ class Family(ABC):
         has_model: A plan states h0 and h1, and what they say of the observations gives exact figures.
         has_normal_steps: The total moves by normal amounts, so that Siegmund's overshoot is theirs.
         no_unbiased_estimate: Why the parameter has no unbiased estimate, where it has none.
+        no_inference: Why nothing is said after the decision, where the family does not follow outcomes.
         no_bias: Why the bias of the maximum-likelihood estimate is not given, where it is not.
         may_know: Names of what a plan may state in `known` beside that.
         is_invariant: The region runs over the log-likelihood ratio itself, and figures are simulated.
@@ -173,6 +174,7 @@ class Family(ABC):
     has_model: ClassVar[bool] = True
     has_normal_steps: ClassVar[bool] = False
     no_unbiased_estimate: ClassVar[str | None] = None
+    no_inference: ClassVar[str] = "Inference after the decision is not served for this family."
     no_bias: ClassVar[str | None] = None
     may_know: ClassVar[tuple[str, ...]] = ()
     is_invariant: ClassVar[bool] = False

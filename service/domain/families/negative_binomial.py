@@ -10,6 +10,7 @@ from service.domain.families.base import (
     LARGEST_EXPONENT,
     ORIGIN,
     Column,
+    End,
     Family,
     Increments,
     Start,
@@ -26,6 +27,11 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.counting import counting_characteristics
 from service.sequential.exact.processes import Overdispersed
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.bias import bias_of_counts
+from service.sequential.inference.counting import CountedOutcome
+from service.sequential.inference.laws import OverdispersedLaw
+from service.sequential.inference.ordering import Outcome
+from service.sequential.inference.schedules import schedule_of_looks
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import UNIT_COUNTS, Region, Span
 from service.sequential.ways import looks_to_lower
@@ -71,6 +77,18 @@ class NegativeBinomial(Family):
         high = float(region.limits(np.array([start.progress + 1.0])).upper[0]) - start.total
         up = Way(1, None, max(0.0, high), _at_least(high)) if math.isfinite(high) else None
         return None if down is None else Way(down[0], None, down[1], _at_most(*down)), up
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        law, schedule = OverdispersedLaw(known["dispersion"]), schedule_of_looks(region, end.looks)
+        return CountedOutcome(law, schedule, int(end.total.value), end.is_above)
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """See `Family`."""
+        if parameter == 0.0:
+            return 0.0  # nothing is ever counted
+        law = OverdispersedLaw(known["dispersion"])
+        return bias_of_counts(region, law, law.natural(parameter), step)
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""

@@ -85,12 +85,13 @@ class Normal(Family):
 
     def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
         """See `Family`."""
-        units, frame = len(end.looks), frame_of(region, known["sigma"], middle=0.0)
-        return MeasuredOutcome(region, frame, units, height_of(region, frame, units, end.total), end.is_above)
+        frame = frame_of(region, known["sigma"])
+        height = height_of(region, frame, float(end.looks[-1]), end.total)
+        return MeasuredOutcome(region, frame, end.looks, height, end.is_above)
 
     def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
-        frame = frame_of(region, known["sigma"], middle=0.0)
+        frame = frame_of(region, known["sigma"])
         return bias_of_measurements(region, frame, frame.natural(parameter))
 
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:

@@ -7,10 +7,9 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.checks import Check, normality_check, order_checks, spread_check
-from service.domain.families.base import Column, End, Increments, Start, Way, reals, refuse
+from service.domain.families.base import Column, Increments, Start, Way, reals, refuse
 from service.domain.families.normal_difference import NormalDifference
 from service.sequential.double import Double
-from service.sequential.inference.ordering import Outcome
 from service.sequential.region import Region
 from service.sequential.two_samples import Arm, pairs_worth, reaching, variance_share
 
@@ -31,6 +30,7 @@ class NormalTwoSample(NormalDifference):
     words: ClassVar[Mapping[str, Mapping[str, float]]] = {"arm": {"a": 0.0, "b": 1.0}}
     has_exposure: ClassVar[bool] = True
     carries: ClassVar[tuple[str, ...]] = ("count_a", "sum_a", "count_b", "sum_b")
+    no_bias: ClassVar[str | None] = "Depends on the arms in which later measurements would have been taken."
 
     @property
     def has_figures_of_units(self) -> bool:
@@ -44,10 +44,6 @@ class NormalTwoSample(NormalDifference):
         is_b, is_a, count = arm.values, 1.0 - arm.values, len(value.values)
         carried = (is_a, is_a * value.values, is_b, is_b * value.values)
         return Increments(np.ones(count, np.int64), np.zeros(count), np.zeros(count), carried)
-
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
-        """See `Family`."""
-        return None  # its looks are as uneven as the arms came
 
     def checks(self, seen: Increments, known: Mapping[str, float]) -> tuple[Check, ...]:
         """See `Family`: of the measurements less the average of their arm, in the standard deviations of the arm."""

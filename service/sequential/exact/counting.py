@@ -31,6 +31,8 @@ STRETCH_WORK = 2_000
 BISECTIONS = 44
 # A convolution of at most so many products is done by a matrix; so many matrices are kept.
 SMALL, MOST_MATRICES = 500_000, 200
+# Where nothing ends above, the furthest totals that together have this probability are counted there all the same.
+UNFOLLOWED = 1e-17
 # Stretches are gathered after so many of them, or so many numbers.
 BATCH_STRETCHES, BATCH = 64, 2_000_000
 
@@ -117,6 +119,8 @@ class _Course:
             self._lowest, moved_on = self._lowest + min(cut, width), moved[:, :, cut:]
         else:
             moved_on = moved
+        if stretch.room is None:
+            moved_on = _without_the_furthest(moved_on)
         between = self._nothing
         if stretch.is_last:
             count = None if stretch.top is None else max(0, stretch.top - self._lowest)
@@ -146,6 +150,8 @@ class _Course:
         width = count = self._alive.shape[2]
         if self._process.largest is not None:
             width += self._process.largest * int(stretch.duration)
+        elif stretch.room is None:
+            width += self._process.furthest(stretch.duration)
         if stretch.room is not None:
             room = max(0, stretch.room - self._lowest)
             width = room if self._process.largest is None else min(width, room)
@@ -259,3 +265,10 @@ def _convolved(alive: FloatArray, increases: FloatArray) -> FloatArray:
         reach = min(count, width - int(increase))
         moved[:, 0, increase : increase + reach] += alive[:, 0, :reach] * increases[:, increase : increase + 1]
     return moved
+
+
+def _without_the_furthest(alive: FloatArray) -> FloatArray:
+    """The totals without those at the end that have next to no probability under any parameter."""
+    beyond = np.cumsum(alive[:, 0, ::-1].max(axis=0))[::-1]
+    kept: FloatArray = alive[:, :, : max(1, int(np.count_nonzero(beyond > UNFOLLOWED)))]
+    return kept

@@ -11,6 +11,7 @@ Source: Johnson, Kemp and Kotz, Univariate Discrete Distributions, sections 3.4 
 An Introduction to Probability Theory, vol. II, section I.3.
 """
 
+import math
 from collections.abc import Callable
 from typing import Protocol
 
@@ -24,6 +25,8 @@ from service.sequential.exact.characteristics import TooMuchWork
 MOST_TERMS = 20_000_000
 LARGEST_BLOCK = 500_000
 TINY = 1e-100
+# A number of increases that no computation follows.
+FARTHEST = 1e15
 
 
 class Process(Protocol):
@@ -58,6 +61,10 @@ class Process(Protocol):
 
         Looks are summed from the beginning of the stretch up to the one before its end; time is integrated.
         """
+        ...
+
+    def furthest(self, duration: float) -> int:
+        """Increases at and beyond this one have no probability that matters, whichever the parameter."""
         ...
 
     def only(self, chosen: IndexArray) -> "Process":
@@ -108,6 +115,10 @@ class Units:
         stay[passed], moment[passed] = first, 0.5 * second - first
         return stay, moment
 
+    def furthest(self, duration: float) -> int:
+        """See `Process`."""
+        return round(duration) + 1
+
     def only(self, chosen: IndexArray) -> "Units":
         """See `Process`."""
         return Units(self._p[chosen, 0])
@@ -133,6 +144,10 @@ class Reports:
     def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
         """See `Process`."""
         return self._stays.added(lambda look: _poisson(self._means * look, width), duration, (self.points, width))
+
+    def furthest(self, duration: float) -> int:
+        """See `Process`."""
+        return furthest_count(float(self._means.max()) * duration, 0.0)
 
     def only(self, chosen: IndexArray) -> "Reports":
         """See `Process`."""
@@ -165,6 +180,11 @@ class Overdispersed:
     def stays(self, duration: float, width: int) -> tuple[FloatArray, FloatArray]:
         """See `Process`."""
         return self._stays.added(lambda look: self._probabilities(look, width), duration, (self.points, width))
+
+    def furthest(self, duration: float) -> int:
+        """See `Process`."""
+        largest = float(self._means.max())
+        return furthest_count(largest * duration, largest / self._dispersion)
 
     def only(self, chosen: IndexArray) -> "Overdispersed":
         """See `Process`."""
@@ -212,6 +232,10 @@ class Failures:
         moment = np.cumsum((k + 1.0) * gammainc(k + 2.0, expected) / self._rates**2, axis=1)
         return stay, moment
 
+    def furthest(self, duration: float) -> int:
+        """See `Process`."""
+        return furthest_count(float(self._rates.max()) * duration, 0.0)
+
     def only(self, chosen: IndexArray) -> "Failures":
         """See `Process`."""
         return Failures(self._rates[chosen, 0])
@@ -244,6 +268,12 @@ class _Added:
             stay += within.sum(axis=0)
             moment += (look * within).sum(axis=0)
         return stay, moment
+
+
+def furthest_count(mean: float, excess: float) -> int:
+    """Beyond it a count with this mean, and a variance 1 + excess times as large, has no probability that matters."""
+    spread = 1.0 + excess
+    return math.ceil(min(mean + 12.0 * math.sqrt(mean * spread) + 60.0 * spread, FARTHEST))
 
 
 def _poisson(means: FloatArray, width: int) -> FloatArray:

@@ -90,8 +90,10 @@ def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[S
     wall = math.inf if region.wall is None else region.wall.progress
     cap = math.inf if region.wall is None or region.wall.cap is None else region.wall.cap
     lower_at, upper_at = _Moments(region.lower_reached_at), _Moments(region.upper_left_at)
-    room = total + 1
-    while room < cap and upper_at[room] <= progress:
+    room: int | None = total + 1
+    if math.isinf(cap) and upper_at[total + WIDEST] == -math.inf:  # no total is ever above
+        room = None
+    while room is not None and room < cap and upper_at[room] <= progress:
         room += 1
         if room - total > WIDEST:
             raise TooMuchWork(WIDEST, "totals at once")
@@ -99,7 +101,7 @@ def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[S
     durations = _Durations()
     while True:
         falls_at = lower_at[lowest]
-        rises_at = upper_at[room] if room < cap else math.inf
+        rises_at = upper_at[room] if room is not None and room < cap else math.inf
         moment = min(falls_at, rises_at, wall)
         if moment == wall:
             limits = region.limits(np.array([wall]))
@@ -110,7 +112,8 @@ def stretches_of_time(region: Region, progress: float, total: int) -> Iterator[S
         yield Stretch(duration, room, lowest if moment == falls_at else NO_CUT, room, is_last=False)
         now = moment
         lowest += moment == falls_at
-        room += moment == rises_at
+        if room is not None:
+            room += moment == rises_at
 
 
 def _whole(limit: float) -> int | None:

@@ -13,6 +13,7 @@ Source: Cox (1952), Proceedings of the Cambridge Philosophical Society 48, 290-2
 573-581, for the bias after sequential tests; the sum is the telescoped expectation.
 """
 
+import math
 from collections.abc import Iterator
 from typing import NamedTuple
 
@@ -37,6 +38,8 @@ BATCH, BATCH_STRETCHES = 200_000, 250
 NEGLIGIBLE = 1e-9
 # Failures in time are followed until this much is left.
 UNFOLLOWED = 1e-11
+# Totals that together have less probability are given up where no limit ends them.
+UNLIKELY = 1e-17
 # Durations whose tables are kept.
 MOST_TABLES = 32
 
@@ -105,6 +108,8 @@ class _Counts:
         moved = self._moved(stretch.duration, width)
         cut = width if stretch.is_last else min(width, max(0, stretch.cut + 1 - self._lowest))
         self._alive, self._lowest = moved[cut:], self._lowest + cut
+        if stretch.room is None:
+            self._alive = _without_the_furthest(self._alive)
         self._looks += stretch.duration
         # Much to add up, or many stretches, after which nothing may be left.
         self._waiting += width * round(stretch.duration) + BATCH // BATCH_STRETCHES
@@ -232,26 +237,39 @@ class _Lives:
 
     def advance(self, stretch: Stretch) -> None:
         """Add the failures that end the test during a stretch, and what ends at its end."""
-        room = stretch.room if stretch.room is not None else 0
-        width, expected = room - self._lowest, self._rate * stretch.duration
+        room, expected = stretch.room, self._rate * stretch.duration
+        if room is None:
+            width = len(self._alive) + self._law.widest(math.log(self._rate), stretch.duration)
+        else:
+            width = room - self._lowest
         if width > WIDEST:
             raise TooMuchWork(WIDEST, "totals at once")
-        # A failure that ends the test is the first, second, … from here: its moment is gamma distributed.
-        needed = room - self._lowest - np.arange(len(self._alive), dtype=float)
-        comes = self._alive * gammainc(needed, expected)
-        moments = self._time * comes + self._alive * needed / self._rate * gammainc(needed + 1.0, expected)
-        self._end(np.array([float(room)]), np.array([comes.sum()]), np.array([moments.sum()]))
+        if room is not None:
+            # A failure that ends the test is the first, second, … from here: its moment is gamma distributed.
+            needed = room - self._lowest - np.arange(len(self._alive), dtype=float)
+            comes = self._alive * gammainc(needed, expected)
+            moments = self._time * comes + self._alive * needed / self._rate * gammainc(needed + 1.0, expected)
+            self._end(np.array([float(room)]), np.array([comes.sum()]), np.array([moments.sum()]))
         moved = np.convolve(self._alive, self._law.increases(np.log(self._rate), stretch.duration, width))[:width]
         self._time += stretch.duration
         cut = width if stretch.is_last else min(width, max(0, stretch.cut + 1 - self._lowest))
         totals = self._lowest + np.arange(cut, dtype=float)
         self._end(totals, moved[:cut], self._time * moved[:cut])
         self._alive, self._lowest = moved[cut:], self._lowest + cut
+        if room is None:
+            self._alive = _without_the_furthest(self._alive)
 
     def _end(self, totals: FloatArray, masses: FloatArray, moments: FloatArray) -> None:
         has_failed = totals > 0.0
         self.probability += float(masses[has_failed].sum())
         self.sum += float((moments[has_failed] / totals[has_failed]).sum())
+
+
+def _without_the_furthest(alive: FloatArray) -> FloatArray:
+    """Where nothing ends above: the totals without those at the end that have next to no probability."""
+    beyond = np.cumsum(alive[::-1])[::-1]
+    kept: FloatArray = alive[: int(np.count_nonzero(beyond > UNLIKELY))]
+    return kept
 
 
 def _blocks(region: Region, step: float) -> Iterator[tuple[float, int]]:

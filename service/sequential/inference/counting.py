@@ -92,7 +92,7 @@ class CountedOutcome:
     total: int
     is_above: bool
 
-    @property
+    @cached_property
     def reference(self) -> float:
         """See `Outcome`; where the last look brought more than the rest explains, near what came before it."""
         stages, begin = self.schedule.stages, self.schedule.begin
@@ -113,7 +113,7 @@ class CountedOutcome:
         passed, law, last = self._passed, self.law, self.schedule.duration
         weights = self._weights(passed.last, natural)
         missing = float(self.total) - passed.last.total
-        if self.is_above:
+        if not self._is_summed_down:
             before = self._left_above(natural)
             up = law.reaches(natural, last, missing)
             further = law.reaches(natural, last, missing + 1.0)
@@ -127,14 +127,31 @@ class CountedOutcome:
         law, natural = self.law, self.reference
         if not self.schedule.stages:
             return float(self.total) / self.schedule.duration
-        walk = _Walk(law, natural, 1)
+        walk = _Walk(law, natural, self._most, 1)
         walk.go(self.schedule)
         from_first, from_origin = self._log_arrival(walk.last(self.schedule)), self._log_arrival(self._passed.last)
         return law.mean(natural) * math.exp(from_first - from_origin)
 
     @cached_property
     def _passed(self) -> _Pass:
-        return _Walk(self.law, self.reference).passed(self.schedule)
+        return _Walk(self.law, self.reference, self._most).passed(self.schedule)
+
+    @cached_property
+    def _is_summed_down(self) -> bool:
+        """
+        Probabilities are added up from the lower end.
+
+        So they are also where nothing could have ended above before this, and totals may be of any size: to the lower
+        end lie only those up to this one.
+        """
+        stages, law = self.schedule.stages, self.law
+        has_no_room = bool(stages) and all(stage.room == math.inf for stage in stages)
+        return not self.is_above or (has_no_room and law.largest(self.schedule.begin) == math.inf)
+
+    @property
+    def _most(self) -> float:
+        """Totals beyond this one are of no account: they never come back to it."""
+        return float(self.total) if self._is_summed_down else math.inf
 
     def _left_above(self, natural: float) -> float:
         """The probability of having ended above before the last look."""
@@ -170,8 +187,8 @@ class CountedOutcome:
 class _Walk:
     """The probabilities of the totals that go on, moved from stage to stage under the reference."""
 
-    def __init__(self, law: Law, natural: float, first: int = 0) -> None:
-        self._law, self._natural, self._lowest = law, natural, first
+    def __init__(self, law: Law, natural: float, most: float, first: int = 0) -> None:
+        self._law, self._natural, self._most, self._lowest = law, natural, most, first
         self.begin = law.first_step if first else 0.0
         self._alive, self._log_scale, self._work, self._entries = np.ones(1), 0.0, 0, 0
         self._increases: dict[float, FloatArray] = {}
@@ -182,11 +199,11 @@ class _Walk:
 
     def go(self, schedule: Schedule) -> None:
         """Go through all stages."""
-        for stage in schedule.stages:
+        for i, stage in enumerate(schedule.stages):
             begin, duration = stage.begin, stage.duration
-            if begin < self.begin:  # the first increase has used up a part of it
-                begin, duration = self.begin, duration - (self.begin - stage.begin)
-            if stage.room < math.inf:
+            if i == 0:  # the first increase has used up a part of it, or made it longer
+                begin, duration = self.begin, duration - self.begin
+            if stage.room < math.inf and math.isinf(self._most):
                 self.leaving.add(self._alive, self._lowest, begin, self._log_scale)
                 self._rooms.append(stage.room)
                 self._indices.append(self._durations.setdefault(duration, len(self._durations)))
@@ -229,8 +246,9 @@ class _Walk:
         """The totals that can go on during a stage, from the lowest; counts the work too."""
         count = len(self._alive)
         width = count - 1 + self._law.widest(self._natural, duration)
-        if stage.room < math.inf:
-            width = min(width, max(0, int(stage.room) - self._lowest))
+        room = min(stage.room, self._most + 1.0)
+        if room < math.inf:
+            width = min(width, max(0, int(room) - self._lowest))
         self._work += count * width + STAGE_WORK
         self._entries += count
         if width > WIDEST:

@@ -11,13 +11,17 @@ Univariate Discrete Distributions, sections 3.4 and 4.4.
 """
 
 import math
+from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
-from scipy.special import betainc, expit, gammainc, gammaincc
+from scipy.special import betainc, betaincc, expit, gammainc, gammaincc
 
 from service.sequential.double import FloatArray
-from service.sequential.exact.processes import Failures, Units
+from service.sequential.exact.processes import Failures, Overdispersed, Units, furthest_count
+
+# Far below any ratio of two probabilities.
+TINY = 1e-300
 
 
 class Law(Protocol):
@@ -25,7 +29,11 @@ class Law(Protocol):
 
     @property
     def first_step(self) -> float:
-        """The progress that is used up when the first increase is taken to be one."""
+        """
+        The progress that is used up when the first increase is taken to be one.
+
+        Where counts vary more than Poisson's it is below 0: once one has come, more are to be expected.
+        """
         ...
 
     def natural(self, mean: float) -> float:
@@ -157,8 +165,7 @@ class RateLaw:
 
     def widest(self, natural: float, duration: float) -> int:
         """See `Law`."""
-        expected = math.exp(natural) * duration
-        return math.ceil(expected + 12.0 * math.sqrt(expected) + 60.0)
+        return furthest_count(math.exp(natural) * duration, 0.0)
 
     def reaches(self, natural: float, duration: FloatArray | float, increase: FloatArray) -> FloatArray:
         """See `Law`."""
@@ -175,6 +182,94 @@ class RateLaw:
     def log_factor(self, natural: float, other: float, total: FloatArray, progress: FloatArray) -> FloatArray:
         """See `Law`."""
         return total * (natural - other) - progress * (math.exp(natural) - math.exp(other))
+
+
+@dataclass(frozen=True)
+class OverdispersedLaw:
+    """
+    Each unit adds a count of variance mean + mean**2 / dispersion; `natural` is the logarithm of the mean.
+
+    With q = mean/(mean + dispersion) the probability of a count over some units is that of a negative binomial,
+    proportional to q**count * (1 - q)**(units * dispersion).
+    """
+
+    dispersion: float
+
+    @property
+    def first_step(self) -> float:
+        """See `Law`: k times the probability of k is the mean times that of k - 1 with a dispersion larger by one."""
+        return -1.0 / self.dispersion
+
+    def natural(self, mean: float) -> float:
+        """See `Law`."""
+        return math.log(mean) if mean > 0.0 else -math.inf
+
+    def mean(self, natural: float) -> float:
+        """See `Law`."""
+        return math.exp(natural) if natural < math.inf else math.inf
+
+    def near(self, total: float, progress: float) -> float:
+        """See `Law`."""
+        return math.log(total + 0.5) - math.log(progress)
+
+    def increases(self, natural: float, duration: float, width: int) -> FloatArray:
+        """See `Law`."""
+        process = Overdispersed(np.array([math.exp(natural)]), self.dispersion)
+        found: FloatArray = process.increases(duration, width)[0]
+        return found
+
+    def largest(self, duration: float) -> float:  # noqa: ARG002 - there is none
+        """See `Law`."""
+        return math.inf
+
+    def falling(self, natural: float, duration: float, most: int, count: int) -> FloatArray:
+        """See `Law`."""
+        increase = most - np.arange(count - 1.0)
+        further = np.maximum(duration + (increase - 1.0) / self.dispersion, TINY)
+        return _summed(increase, further * (math.exp(natural) * self._without(natural)))
+
+    def widest(self, natural: float, duration: float) -> int:
+        """See `Law`."""
+        mean = math.exp(natural)
+        return furthest_count(mean * duration, mean / self.dispersion)
+
+    def reaches(self, natural: float, duration: FloatArray | float, increase: FloatArray) -> FloatArray:
+        """See `Law`."""
+        chance = self._tail(natural, duration, np.maximum(increase, 1.0), is_upper=True)
+        found: FloatArray = np.where(increase <= 0.0, 1.0, chance)
+        return found
+
+    def stays(self, natural: float, duration: FloatArray | float, increase: FloatArray) -> FloatArray:
+        """See `Law`."""
+        chance = self._tail(natural, duration, np.maximum(increase, 0.0) + 1.0, is_upper=False)
+        found: FloatArray = np.where(increase < 0.0, 0.0, chance)
+        return found
+
+    def log_factor(self, natural: float, other: float, total: FloatArray, progress: FloatArray) -> FloatArray:
+        """See `Law`."""
+        mean, other_mean, dispersion = math.exp(natural), math.exp(other), self.dispersion
+        with_it = math.log1p(dispersion / other_mean) - math.log1p(dispersion / mean)
+        without = math.log1p(other_mean / dispersion) - math.log1p(mean / dispersion)
+        return total * with_it + progress * (dispersion * without)
+
+    def _tail(
+        self, natural: float, duration: FloatArray | float, increase: FloatArray, *, is_upper: bool
+    ) -> FloatArray:
+        """P(at least so many) or P(fewer), from whichever share is the smaller and so has all its digits."""
+        shape = np.asarray(duration) * self.dispersion
+        without = self._without(natural)
+        found: FloatArray
+        if without > 0.5:
+            of, share = (betainc if is_upper else betaincc), math.exp(natural) / self.dispersion * without
+            found = np.asarray(of(increase, shape, share), dtype=np.float64)
+        else:
+            of = betaincc if is_upper else betainc
+            found = np.asarray(of(shape, increase, without), dtype=np.float64)
+        return found
+
+    def _without(self, natural: float) -> float:
+        """1 - q."""
+        return 1.0 / (1.0 + math.exp(natural) / self.dispersion)
 
 
 def _summed(increase: FloatArray, divisor: FloatArray) -> FloatArray:

@@ -98,8 +98,8 @@ OPEN_BELOW = Curved((-math.inf, -math.inf, 0.2, 0.6), (2.5, 2.3, 2.6, 2.9))
 
 
 def outcome(region: Region, sigma: float, units: int, total: float, *, is_above: bool) -> MeasuredOutcome:
-    frame = frame_of(region, sigma, middle=0.0)
-    return MeasuredOutcome(region, frame, units, height_of(region, frame, units, Double.of(total)), is_above)
+    frame, looks = frame_of(region, sigma), np.arange(1.0, units + 1.0)
+    return MeasuredOutcome(region, frame, looks, height_of(region, frame, units, Double.of(total)), is_above)
 
 
 @pytest.mark.parametrize(
@@ -173,7 +173,7 @@ def test_the_unbiased_estimate_and_the_bias_have_the_right_means(region: Region,
                 unbiased += weight * density * end.first_step_mean()
                 average += weight * density * total / units
     assert unbiased == pytest.approx(mean, abs=1e-9)
-    frame = frame_of(region, sigma, 0.0)
+    frame = frame_of(region, sigma)
     assert bias_of_measurements(region, frame, frame.natural(mean)) == pytest.approx(average - mean, abs=1e-9)
 
 
@@ -195,8 +195,8 @@ def test_limits_hold_as_often_as_they_say() -> None:
         deviation, units = 0.0, 0
         while -region.lower_intercept < deviation < region.upper_intercept:
             deviation, units = deviation + source.normal(mean - 0.5), units + 1
-        frame = frame_of(region, 1.0, 0.0)
-        found = MeasuredOutcome(region, frame, units, deviation, deviation > 0)
+        frame = frame_of(region, 1.0)
+        found = MeasuredOutcome(region, frame, np.arange(1.0, units + 1.0), deviation, deviation > 0)
         tails = found.tails(frame.natural(mean))
         misses += [tails.up < 0.05, tails.down < 0.05]
         medians += tails.up < 0.5
