@@ -30,6 +30,7 @@ LEAST_ROLE = {
     ("GET", "/v1/tests/{key}/path"): "viewer",
     ("GET", "/v1/tests/{key}/outlook"): "viewer",
     ("GET", "/v1/tests/{key}/assumptions"): "viewer",
+    ("GET", "/v1/tests/{key}/history"): "viewer",
     ("GET", "/v1/events"): "viewer",
     ("GET", "/v1/summary"): "viewer",
     ("GET", "/v1/keys"): "administrator",

@@ -9,6 +9,7 @@ from service.api.schemas import (
     assumptions,
     characteristics,
     events,
+    history,
     observations,
     outlook,
     plans,
@@ -74,7 +75,17 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
     schemas = description["components"]["schemas"]
     models = {
         model.__name__: model
-        for module in (administration, assumptions, characteristics, events, observations, outlook, plans, tests)
+        for module in (
+            administration,
+            assumptions,
+            characteristics,
+            events,
+            history,
+            observations,
+            outlook,
+            plans,
+            tests,
+        )
         for model in vars(module).values()
         if isinstance(model, type) and issubclass(model, Answer)
     }

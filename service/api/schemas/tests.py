@@ -178,7 +178,7 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "log_likelihood_ratio": state.log_likelihood_ratio,
         "thresholds": optional(ThresholdsOut, procedure.thresholds),
         "sample_number": state.sample_number,
-        "observations": state.sequence - state.overrun,
+        "observations": state.counted,
         "exposure": state.exposure.value if procedure.family.has_exposure else None,
         "total": total_of(procedure.family, state.total.value),
         "decided": _decided(procedure, state),
