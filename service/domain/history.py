@@ -53,15 +53,18 @@ def key_revoked(key: AccessKey, at: datetime, actor: str, request_id: str | None
 
 def decided(test: SequentialTest, before: State, actor: str, request_id: str | None, cause: Act) -> Entry:
     """The decision is another than before; `cause` is the act that made it so."""
-    state = test.state
-    details = {
+    return Entry(test.key, Act.DECIDED, test.updated_at, actor, request_id, decision_of(before, test.state, cause))
+
+
+def decision_of(before: State, state: State, cause: Act) -> Mapping[str, Any]:
+    """What is recorded of a decision that is another than before."""
+    return {
         "decision": state.decision.value,
         "before": before.decision.value,
         "sequence": state.decided.sequence if state.decided else None,
         "sample_number": state.sample_number,
         "cause": cause.value,
     }
-    return Entry(test.key, Act.DECIDED, test.updated_at, actor, request_id, details)
 
 
 def submitted(submission: Submission) -> Entry:

@@ -12,7 +12,7 @@ from sqlalchemy import RowMapping, Select, func, literal, select
 
 from service.domain.chain import Entry
 from service.domain.history import submitted
-from service.domain.sequential_test import Submission
+from service.domain.sequential_test import SequentialTest, Submission
 from service.storage import rows, tables
 
 # A page of the log ends with whichever comes first; a single submission may be larger.
@@ -68,6 +68,14 @@ class Log:
             if entry.number > through:
                 return
             yield entry
+
+    def records(self, test: SequentialTest) -> Iterator[Submission | Entry]:
+        """The whole history of a test as it was read, submissions with what was posted."""
+        submissions: Iterator[Submission | Entry] = self.submissions(test.key, 0, test.state.sequence)
+        for record in heapq.merge(submissions, self._other_acts(test.key, 0), key=lambda record: record.number):
+            if record.number > test.history.length:
+                return
+            yield record
 
     def _submissions_without_bodies(self, test: str, after: int) -> Iterator[Submission]:
         log = tables.submissions.c
