@@ -7,7 +7,7 @@ The region runs over the log-likelihood ratio of the last t, which is that of th
 import math
 from abc import abstractmethod
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import ClassVar, NoReturn
 
@@ -43,7 +43,7 @@ class Coming:
     Attributes:
         origin: The value from which `next_` counts.
         noun: What it is, before its value.
-        is_mirrored: The larger it is, the smaller is t.
+        is_mirrored: `next_` gives -t.
     """
 
     looks: Looks
@@ -186,16 +186,17 @@ def ratio_of(known: Known) -> InvariantRatio:
 
 def _at_least(coming: Coming, limit: float) -> tuple[Interval, ...]:
     """The distances of the next measurement from its origin for which t is at or above the limit."""
-    if not coming.is_mirrored:
-        return reaching(coming.next_, limit)
-    return mirrored(reaching(coming.next_, limit))
+    return mirrored(reaching(_turned(coming.next_), limit)) if coming.is_mirrored else reaching(coming.next_, limit)
 
 
 def _at_most(coming: Coming, limit: float) -> tuple[Interval, ...]:
     """Likewise at or below: that is -t at or above the negative limit."""
-    lever, room, spread = coming.next_.lever, coming.next_.room, coming.next_.spread
-    found = mirrored(reaching(Next(-lever, room, spread, coming.next_.spreads), -limit))
-    return mirrored(found) if coming.is_mirrored else found
+    return reaching(coming.next_, -limit) if coming.is_mirrored else mirrored(reaching(_turned(coming.next_), -limit))
+
+
+def _turned(next_: Next) -> Next:
+    """The -t of a measurement at the distance -u."""
+    return replace(next_, lever=-next_.lever)
 
 
 def _way(coming: Coming, distances: tuple[Interval, ...], rise: float) -> Way | None:
