@@ -256,6 +256,17 @@ def test_no_single_measurement_makes_a_t_of_nothing() -> None:
     assert outlook.estimate == pytest.approx(0.2 / 0.1)
 
 
+def test_a_long_submission_decides_where_its_parts_do() -> None:
+    """The decision falls in the third thousand, far from where a submission is cut for the work."""
+    plan = compiled(SHIM, h0=-0.02, h1=0.02, boundaries="given", thresholds={"accept": -2.0, "reject": 3.0})
+    rows = (10.0 + np.random.default_rng(5).normal(0.0, 1.0, 9000)).tolist()
+    whole = observe(plan, State(), {"values": rows}, NOW)
+    assert 1024 < whole.sample_number < 9000
+    pieces = [{"values": rows[begin : begin + 700]} for begin in range(0, 9000, 700)]
+    assert reduce(lambda state, piece: observe(plan, state, piece, NOW), pieces, State()) == whole
+    assert (whole.sequence, whole.sample_number + whole.overrun) == (9000, 9000)
+
+
 def test_all_equal_measurements_say_nothing_and_go_on() -> None:
     state = observe(compiled(SHIM), State(), {"values": [12.0] * 500}, NOW)
     assert (state.decision, state.log_likelihood_ratio, state.total.value) == ("continue", 0.0, 0.0)

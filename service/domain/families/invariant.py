@@ -151,9 +151,8 @@ class Invariant(Family):
         if not start.carried or (coming := self.coming(start, known)) is None:
             return None, None
         limits = region.limits(np.array([start.progress + 1.0]))
-        ratio = ratio_of(known)
-        found = ratio.t_limits(coming.looks, Thresholds(float(limits.lower[0]), float(limits.upper[0])))
-        accept, reject = float(found.accept[0]), float(found.reject[0])
+        ratio, thresholds = ratio_of(known), Thresholds(float(limits.lower[0]), float(limits.upper[0]))
+        accept, reject = _limits(ratio, thresholds, float(coming.looks.freedom[0]), float(coming.looks.size[0]))
         now = float(self.studied(sums_of(start))[1].t[0])
         if known["sides"] == TWO_SIDES:
             accepting = common(_at_most(coming, accept), _at_least(coming, -accept)) if math.isfinite(accept) else ()
@@ -177,6 +176,13 @@ def sums_of(start: Start) -> list[Double]:
 @lru_cache(maxsize=256)
 def _ratio(h0: float, h1: float, sides: int) -> InvariantRatio:
     return invariant_ratio(h0, h1, sides)
+
+
+@lru_cache(maxsize=65_536)
+def _limits(ratio: InvariantRatio, thresholds: Thresholds, freedom: float, size: float) -> tuple[float, float]:
+    """The t that accept and reject at one look; kept, for lists of tests ask for the same again and again."""
+    found = ratio.t_limits(Looks(np.array([freedom]), np.array([size])), thresholds)
+    return float(found.accept[0]), float(found.reject[0])
 
 
 def ratio_of(known: Known) -> InvariantRatio:
