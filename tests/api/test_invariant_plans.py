@@ -182,7 +182,7 @@ def test_questions_that_cannot_be_simulated_are_refused(admin: httpx.Client, new
 
 
 def test_a_calibrated_plan_is_stored_with_what_the_simulation_found(admin: httpx.Client, new_name: Namer) -> None:
-    content = {**SHIM, "h1": 1.0, "boundaries": "calibrated", "truncation": {"sample_number": 24}}
+    content = {**SHIM, "h1": 2.0, "boundaries": "calibrated", "truncation": {"sample_number": 9}}
     name = with_plan(admin, new_name("plan"), content)
     stored = admin.get(f"/v1/plans/{name}").json()
     attained = stored["attained"]

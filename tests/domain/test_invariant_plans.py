@@ -373,7 +373,7 @@ def test_exact_figures_are_refused_and_say_why() -> None:
 
 
 def test_calibrated_limits_keep_both_risks_with_the_confidence_stated() -> None:
-    content = {**SHIM, "h1": 1.0, "boundaries": "calibrated", "truncation": {"sample_number": 30}}
+    content = {**SHIM, "h1": 1.5, "boundaries": "calibrated", "truncation": {"sample_number": 14}}
     document = checked_content(content)
     attained = json.loads(document)["attained"]
     assert attained["alpha"] < attained["alpha_limit"] <= 0.05

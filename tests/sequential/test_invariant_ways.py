@@ -39,7 +39,7 @@ def t_of_two(a: np.ndarray, b: np.ndarray) -> float:
     return float(math.sqrt(size) * (b.mean() - a.mean()) / math.sqrt(within / freedom))
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(
     st.integers(1, 12),
     st.floats(-3.0, 3.0),
@@ -55,7 +55,7 @@ def test_the_intervals_of_one_sample_are_where_t_is_above(count: int, mean: floa
             assert holds(found, u) == (t_of_one(np.append(values, values.mean() + u)) >= limit)
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(st.integers(1, 6), st.integers(0, 6), st.sampled_from([-2.0, 0.0, 0.7, 1.6, 5.0]), st.integers(0, 1000))
 def test_the_intervals_of_two_samples_are_where_t_is_above(n: int, m: int, limit: float, seed: int) -> None:
     source = np.random.default_rng(seed)
