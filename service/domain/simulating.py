@@ -27,7 +27,7 @@ LARGEST_SEED = 2**53
 CONFIDENCE = 0.95
 # Standard error of a probability at which a simulation ends, and courses at which it ends all the same: fewer where
 # the ratio of a course takes a quadrature.
-STANDARD_ERROR, MOST_COURSES, MOST_COURSES_FAR = 5e-4, 400_000, 60_000
+STANDARD_ERROR, MOST_COURSES, MOST_COURSES_FAR = 5e-4, 600_000, 60_000
 # Looks of all courses together, about.
 MOST_LOOKS_TOGETHER = 100_000_000
 # Parameters of a curve, and the most that may be asked for at once.

@@ -128,7 +128,7 @@ def simulated(
     Args:
         at: Standardised means; at least one.
         seed: Not below 0.
-        report: Called after each batch; what it raises ends the simulation, and passes.
+        report: Called after each batch and between figures; what it raises ends the simulation, and passes.
 
     Raises:
         TooMuchWork: A course sees too many looks.
@@ -138,7 +138,7 @@ def simulated(
     goal = 1
     while True:
         run.extend(goal, report)
-        found = run.figures(at)
+        found = run.figures(at, report)
         if found.standard_error <= effort.standard_error or goal == most:
             return found
         # As many as the error asks for and a little more, but at most four times as many.
@@ -173,10 +173,14 @@ class Run:
                 made = sum(len(batches) for batches in self._batches)
                 report(Progress(made * BATCH, goal * len(self.parts) * BATCH))
 
-    def figures(self, at: Sequence[float]) -> Simulated:
-        """What the courses so far say of these means."""
+    def figures(self, at: Sequence[float], report: Report = no_report) -> Simulated:
+        """What the courses so far say of these means; `report` is called before each."""
         mixture = _Mixture(self.test, self.parts, [_joined(batches) for batches in self._batches])
-        return Simulated(tuple(mixture.point(delta) for delta in at), mixture.courses)
+        points = []
+        for delta in at:
+            report(Progress(mixture.courses, mixture.courses))
+            points.append(mixture.point(delta))
+        return Simulated(tuple(points), mixture.courses)
 
 
 def _joined(endings: list[Endings]) -> Endings:

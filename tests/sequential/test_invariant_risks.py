@@ -172,7 +172,9 @@ def test_a_seed_gives_the_same_figures_however_the_batches_are_made() -> None:
 def test_progress_is_told_and_a_simulation_can_be_ended() -> None:
     told: list[Progress] = []
     found = simulated(usual(1.0), (0.0, 0.5, 1.0), 1, Effort(3e-3), told.append)
-    assert [progress.courses for progress in told] == list(range(BATCH, found.courses + 1, BATCH))
+    # After each batch, and before each of the three figures.
+    batches = list(range(BATCH, found.courses + 1, BATCH))
+    assert [progress.courses for progress in told] == [*batches, *[found.courses] * 3]
     assert all(progress.courses <= progress.expected for progress in told)
 
     def enough(progress: Progress) -> None:

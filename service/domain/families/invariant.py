@@ -7,7 +7,7 @@ The region runs over the log-likelihood ratio of the last t, which is that of th
 import math
 from abc import abstractmethod
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import ClassVar, NoReturn
 
@@ -43,7 +43,7 @@ class Coming:
     Attributes:
         origin: The value from which `next_` counts.
         noun: What it is, before its value.
-        is_mirrored: The larger it is, the smaller is t.
+        is_mirrored: `next_` gives -t.
     """
 
     looks: Looks
@@ -151,9 +151,8 @@ class Invariant(Family):
         if not start.carried or (coming := self.coming(start, known)) is None:
             return None, None
         limits = region.limits(np.array([start.progress + 1.0]))
-        ratio = ratio_of(known)
-        found = ratio.t_limits(coming.looks, Thresholds(float(limits.lower[0]), float(limits.upper[0])))
-        accept, reject = float(found.accept[0]), float(found.reject[0])
+        ratio, thresholds = ratio_of(known), Thresholds(float(limits.lower[0]), float(limits.upper[0]))
+        accept, reject = _limits(ratio, thresholds, float(coming.looks.freedom[0]), float(coming.looks.size[0]))
         now = float(self.studied(sums_of(start))[1].t[0])
         if known["sides"] == TWO_SIDES:
             accepting = common(_at_most(coming, accept), _at_least(coming, -accept)) if math.isfinite(accept) else ()
@@ -179,6 +178,13 @@ def _ratio(h0: float, h1: float, sides: int) -> InvariantRatio:
     return invariant_ratio(h0, h1, sides)
 
 
+@lru_cache(maxsize=65_536)
+def _limits(ratio: InvariantRatio, thresholds: Thresholds, freedom: float, size: float) -> tuple[float, float]:
+    """The t that accept and reject at one look; kept, for lists of tests ask for the same again and again."""
+    found = ratio.t_limits(Looks(np.array([freedom]), np.array([size])), thresholds)
+    return float(found.accept[0]), float(found.reject[0])
+
+
 def ratio_of(known: Known) -> InvariantRatio:
     """The ratio of a plan with this `known`."""
     return _ratio(known["h0"], known["h1"], int(known["sides"]))
@@ -186,16 +192,17 @@ def ratio_of(known: Known) -> InvariantRatio:
 
 def _at_least(coming: Coming, limit: float) -> tuple[Interval, ...]:
     """The distances of the next measurement from its origin for which t is at or above the limit."""
-    if not coming.is_mirrored:
-        return reaching(coming.next_, limit)
-    return mirrored(reaching(coming.next_, limit))
+    return mirrored(reaching(_turned(coming.next_), limit)) if coming.is_mirrored else reaching(coming.next_, limit)
 
 
 def _at_most(coming: Coming, limit: float) -> tuple[Interval, ...]:
     """Likewise at or below: that is -t at or above the negative limit."""
-    lever, room, spread = coming.next_.lever, coming.next_.room, coming.next_.spread
-    found = mirrored(reaching(Next(-lever, room, spread, coming.next_.spreads), -limit))
-    return mirrored(found) if coming.is_mirrored else found
+    return reaching(coming.next_, -limit) if coming.is_mirrored else mirrored(reaching(_turned(coming.next_), -limit))
+
+
+def _turned(next_: Next) -> Next:
+    """The -t of a measurement at the distance -u."""
+    return replace(next_, lever=-next_.lever)
 
 
 def _way(coming: Coming, distances: tuple[Interval, ...], rise: float) -> Way | None:
