@@ -1,5 +1,6 @@
 """Two arms compared through the share of one of them: what families share whose evidence is a count of two kinds."""
 
+import math
 from collections.abc import Mapping
 from typing import ClassVar
 
@@ -94,7 +95,7 @@ class Conditional(Family):
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
-        return mean / (1.0 - mean) / self.odds_at_one(known) if mean < 1.0 else LARGEST_ODDS
+        return mean / (1.0 - mean) / self.odds_at_one(known) if mean < 1.0 else math.inf
 
     def exact(
         self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN

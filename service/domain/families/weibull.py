@@ -70,6 +70,8 @@ class Weibull(Exponential):
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
+        if mean == 0.0 or math.isinf(mean):
+            return 0.0 if mean else math.inf
         logarithm = math.log(known["life"]) - math.log(max(mean, 1.0 / LARGEST_REAL)) / known["shape"]
         return math.exp(min(max(logarithm, -math.log(LARGEST_REAL)), math.log(LARGEST_REAL)))
 
