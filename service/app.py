@@ -23,8 +23,10 @@ from service.api.routes import (
     inference,
     observations,
     plans,
+    simulations,
     tests,
 )
+from service.api.simulations import Simulations
 from service.api.streams import Streams
 from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
@@ -101,7 +103,9 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes)
         streams, loop = Streams(settings.stream_limit), asyncio.get_running_loop()
         watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
-        app.state.parts = Parts(settings, Reader(engine), road, clock, lambda: check_schema(engine), computers, streams)
+        simulating = Simulations(computers)
+        reader, check = Reader(engine), lambda: check_schema(engine)
+        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating)
         road.start()
         watcher.start()
         try:
@@ -109,6 +113,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
                 yield
         finally:
             streams.stop()
+            simulating.stop()
             await asyncio.to_thread(watcher.stop)
             await road.stop()
             computers.stop()
@@ -128,7 +133,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, characteristics, tests, observations, inference, events, administration, health):
+    for module in (plans, characteristics, simulations, tests, observations, inference, events, administration, health):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]

@@ -14,6 +14,7 @@ from service.settings import Settings
 from service.storage.reader import Reader
 
 if TYPE_CHECKING:
+    from service.api.simulations import Simulations
     from service.api.streams import Streams
 
 T = TypeVar("T")
@@ -30,6 +31,7 @@ class Parts:
     check_ready: Callable[[], None]
     computers: "Computers"
     streams: "Streams"
+    simulations: "Simulations"
 
 
 async def _parts(request: Request) -> Parts:

@@ -162,6 +162,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.UnknownPlan: "not-found",
     errors.UnknownTest: "not-found",
     errors.UnknownKey: "not-found",
+    errors.UnknownSimulation: "not-found",
     errors.PlanDiffers: "plan-differs",
     errors.TestDiffers: "test-differs",
     errors.KeyNameTaken: "key-name-taken",
@@ -232,6 +233,11 @@ def install(app: FastAPI) -> None:
 async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
     assert isinstance(error, DomainError)
     return response_to(error)
+
+
+def document_of(error: DomainError) -> dict[str, Any]:
+    """The members of a domain error's problem document."""
+    return document(OF_ERRORS[type(error)], str(error), getattr(error, "faults", ()))
 
 
 def response_to(error: DomainError) -> JSONResponse:

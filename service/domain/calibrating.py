@@ -184,9 +184,8 @@ def around(procedure: Procedure) -> tuple[float, float]:
     away = DEVIATIONS * float(region.evidence.deviation(at_wall)[0]) / region.wall.progress
     edge = family.mean_of(hypotheses[0], procedure.known)
     low = edge - away if math.isinf(family.span.floor) else max(edge - away, NEAREST * edge)
-    high = min(edge + away, family.span.per_progress)
-    if math.isinf(family.parameter_of(high, procedure.known)):  # where the parameter has no bound
-        high -= NEAREST * (high - edge)
+    most = family.span.per_progress
+    high = min(edge + away, most - NEAREST * (most - edge)) if math.isfinite(most) else edge + away
     ends = family.parameter_of(low, procedure.known), family.parameter_of(high, procedure.known)
     return min(ends), max(ends)
 

@@ -6,6 +6,7 @@ from functools import lru_cache
 
 from service.domain.calibrating import accepts_at, around, exact_figures, fixed_sample_of, risks_of
 from service.domain.errors import Fault, InvalidQuestion
+from service.domain.families.base import ORIGIN
 from service.domain.procedure import Procedure, procedure_of_document
 from service.sequential.approximations import OVERSHOOT, approximate
 from service.sequential.decision import Decision
@@ -62,7 +63,7 @@ class Point:
     `wald` and `siegmund` are None where the plan is truncated; `siegmund` also where steps are not normal.
     `sample_number` is None where reports have no fixed size (families watched in time, arms measured one at a time);
     `exposure` is None for families without exposure. `failures` is the mean number of failures for families watched in
-    time.
+    time. The errors are the standard errors of the probability and of the mean, where they were simulated.
     """
 
     parameter: float
@@ -72,26 +73,55 @@ class Point:
     failures: float | None
     wald: Approximate | None
     siegmund: Approximate | None
+    probability_error: float | None = None
+    average_error: float | None = None
+
+
+@dataclass(frozen=True)
+class Simulation:
+    """
+    How figures were simulated.
+
+    Attributes:
+        seed: The same gives the same figures.
+        courses: How many were followed.
+        alpha_error, beta_error: Standard errors of the attained risks.
+        least_at_h0, least_at_h1: What no test with the stated risks can have a smaller average sample number than.
+    """
+
+    seed: int
+    courses: int
+    alpha_error: float
+    beta_error: float
+    least_at_h0: float
+    least_at_h1: float
 
 
 @dataclass(frozen=True)
 class Promise:
-    """The attained risks and the figures at each parameter asked for."""
+    """
+    The attained risks and the figures at each parameter asked for.
+
+    Attributes:
+        error_bound: None where the figures were simulated.
+        simulation: How they were, None where they are exact.
+    """
 
     method: str
-    error_bound: float
+    error_bound: float | None
     alpha: float
     beta: float | None
     points: tuple[Point, ...]
     fixed_sample: Fixed | None
+    simulation: Simulation | None = None
 
 
-def spread_at(found: Characteristics, i: int) -> Spread:
-    """The figures of the progress at the i-th parameter."""
+def spread_at(found: Characteristics, i: int, idle: int = 0) -> Spread:
+    """The figures of the progress at the i-th parameter, with so many units that make no progress."""
     return Spread(
-        float(found.mean[i]),
+        float(found.mean[i]) + idle,
         float(found.standard_deviation[i]),
-        {f"{q:g}": float(value) for q, value in zip(QUANTILES, found.quantiles[i], strict=True)},
+        {f"{q:g}": float(value) + idle for q, value in zip(QUANTILES, found.quantiles[i], strict=True)},
     )
 
 
@@ -107,7 +137,15 @@ def promise_of(document: str, at: Sequence[float]) -> Promise:
         InvalidQuestion: Too many parameters, one outside the family's range, or a family without a model.
         ComputationTooLarge: The recursion would not end within its limit.
     """
-    procedure = procedure_of_document(document)
+    check_parameters(procedure_of_document(document), at)
+    return _promise(document, tuple(at) or common_grid([document]))
+
+
+def check_parameters(procedure: Procedure, at: Sequence[float]) -> None:
+    """
+    Raises:
+        InvalidQuestion: Too many parameters, or one outside the family's range.
+    """
     if len(at) > MOST_PARAMETERS:
         raise InvalidQuestion("Too many parameters.", [Fault("/at", f"at most {MOST_PARAMETERS}; received {len(at)}")])
     faults = [
@@ -117,7 +155,6 @@ def promise_of(document: str, at: Sequence[float]) -> Promise:
     ]
     if faults:
         raise InvalidQuestion("A parameter lies outside the family's range; see errors.", faults[:20])
-    return _promise(document, tuple(at) or common_grid([document]))
 
 
 @lru_cache(maxsize=256)
@@ -136,7 +173,8 @@ def _promise(document: str, at: tuple[float, ...]) -> Promise:
 
 
 def _point(procedure: Procedure, found: Characteristics, i: int, parameter: float) -> Point:
-    family, ends = procedure.family, spread_at(found, i)
+    family = procedure.family
+    ends = spread_at(found, i, family.idle_units(ORIGIN))
     return Point(
         parameter=parameter,
         probability_of_acceptance=accepts_at(procedure, found, i),
@@ -165,7 +203,7 @@ def _approximate(procedure: Procedure, parameter: float, overshoot: float) -> Ap
     if found is None:
         return None
     accepts = found.below if region.below is Decision.ACCEPT else 1.0 - found.below
-    return Approximate(accepts, found.progress)
+    return Approximate(accepts, found.progress + family.idle_units(ORIGIN))
 
 
 def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
@@ -173,6 +211,7 @@ def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
     sample = fixed_sample_of(procedure)
     if sample is None:
         return None
+    idle = procedure.family.idle_units(ORIGIN)
     next_total = sample.limit + (1.0 if procedure.family.span.is_integer else 0.0)
     return Fixed(
         size=sample.size,
@@ -180,8 +219,8 @@ def _fixed_sample(procedure: Procedure, found: Characteristics) -> Fixed | None:
         accepts_at_most=is_upward,
         alpha=sample.lower_risk if is_upward else sample.upper_risk,
         beta=sample.upper_risk if is_upward else sample.lower_risk,
-        saving_at_h0=1.0 - float(found.mean[0]) / sample.size,
-        saving_at_h1=1.0 - float(found.mean[1]) / sample.size,
+        saving_at_h0=1.0 - (float(found.mean[0]) + idle) / sample.size,
+        saving_at_h1=1.0 - (float(found.mean[1]) + idle) / sample.size,
     )
 
 

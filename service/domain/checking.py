@@ -11,10 +11,11 @@ import numpy as np
 from service.domain import standards
 from service.domain.calibrating import Attained, calibrated, exact_figures, risks_of, worst_of
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion, located
-from service.domain.families import FAMILIES, Family
+from service.domain.families import FAMILIES, Family, family_of
 from service.domain.families.base import positive_rule
 from service.domain.plan import Content, canonical, known_of, rounded
 from service.domain.procedure import Procedure, procedure_of_document
+from service.domain.simulating import simulated_thresholds
 from service.domain.statistics import STATISTICS, faults_of_statistic
 from service.domain.tables import faults_of_table
 from service.sequential import boundaries
@@ -91,8 +92,11 @@ def _with_defaults(given: Content) -> Content:
 def _completed(content: Content) -> dict[str, Any]:
     """With what is computed from it once and for all."""
     completed = dict(content)
-    if not FAMILIES[content["family"]].has_model:
+    family = family_of(content)
+    if family is not None and not family.has_model:
         return {**completed, **_bounded(content)}
+    if family is not None and family.is_invariant:
+        return {**completed, **(simulated_thresholds(content) if content["boundaries"] == "calibrated" else {})}
     if content["boundaries"] == "calibrated":
         completed["thresholds"] = _rounded(calibrated(content))
     is_simple = STATISTICS[content["statistic"]].is_simple
@@ -130,13 +134,13 @@ def _bounded(content: Content) -> dict[str, Any]:
 
 
 def _required(content: Content) -> tuple[str, ...]:
-    family = FAMILIES.get(content.get("family", ""))
+    family = family_of(content)
     has_model = family is None or family.has_model
     return ("family", "h0", "alpha") if has_model else ("family", "alpha")
 
 
 def _faults_of(content: Content) -> list[Fault]:
-    family = FAMILIES.get(content["family"])
+    family = family_of(content)
     if family is None:
         known = ", ".join(FAMILIES)
         return [Fault("/family", f"must be one of {known}; received {content['family']!r}")]
@@ -148,7 +152,7 @@ def _faults_of(content: Content) -> list[Fault]:
         *_faults_of_risks(content),
         *_faults_of_boundaries(content),
         *_faults_of_model(family, content),
-        *_faults_of_known(family, known_of(content)),
+        *_faults_of_known(family, content["statistic"], known_of(content)),
         *_faults_of_truncation(family, content.get("truncation")),
         *_faults_of_rows(family, content),
     ]
@@ -163,7 +167,7 @@ def _faults_of_hypotheses(family: Family, content: Content) -> list[Fault]:
         for name in HYPOTHESES
         if name in content and (rule := family.hypothesis_rule(content[name])) is not None
     ]
-    if STATISTICS[content["statistic"]].is_simple and content["h0"] == content["h1"]:
+    if STATISTICS[content["statistic"]].weighs_points and content["h0"] == content["h1"]:
         faults.append(Fault("/h1", f"must differ from h0; received {content['h1']!r} for both"))
     return faults
 
@@ -184,7 +188,7 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
     rule, thresholds = content["boundaries"], content.get("thresholds")
     statistic = STATISTICS[content["statistic"]]
     if rule not in statistic.boundaries:
-        where = "" if statistic.is_simple else f" for a {statistic.name} plan"
+        where = "" if statistic.is_simple else f" for {statistic.title}"
         return [Fault("/boundaries", f"must be one of {', '.join(statistic.boundaries)}{where}; received {rule!r}")]
     faults = []
     if rule != "table" and "table" in content:
@@ -196,7 +200,7 @@ def _faults_of_boundaries(content: Content) -> list[Fault]:
     if thresholds is None:
         return [*faults, Fault("/thresholds", 'are required for "given" boundaries')]
     accept = thresholds.get("accept")
-    if accept is None and statistic.is_simple:
+    if accept is None and statistic.weighs_points:
         faults.append(Fault("/thresholds/accept", "is required"))
     if accept is not None and not statistic.may_accept(content):
         faults.append(Fault("/thresholds/accept", "means nothing here: nothing accepts before the truncation"))
@@ -216,11 +220,14 @@ def _faults_of_model(family: Family, content: Content) -> list[Fault]:
     return [Fault("/boundaries", f"must be strict or given for {family.name}: {reason}; received {rule!r}")]
 
 
-def _faults_of_known(family: Family, known: Mapping[str, float]) -> list[Fault]:
+def _faults_of_known(family: Family, statistic: str, known: Mapping[str, float]) -> list[Fault]:
     faults = [Fault(f"/known/{name}", f"is required for {family.name}") for name in family.known if name not in known]
     for name, value in known.items():
-        if name not in family.known:
-            faults.append(Fault(f"/known/{name}", f"means nothing for {family.name}"))
+        if name not in (*family.known, *family.may_know):
+            where = f"an invariant plan of {family.name}" if statistic == "invariant" else family.name
+            faults.append(Fault(f"/known/{name}", f"means nothing for {where}"))
+        elif not isinstance(value, float | int):
+            faults.append(Fault(f"/known/{name}", f"must be a number; received {value!r}"))
         elif (rule := family.known_rule(name, value)) is not None:
             faults.append(Fault(f"/known/{name}", f"{rule}; received {value!r}"))
     return faults
@@ -240,6 +247,8 @@ def _faults_of_truncation(family: Family, truncation: Mapping[str, float] | None
         faults.append(Fault(f"/truncation/{axis}", f"is required to truncate {family.name}"))
     for name, value in truncation.items():
         limit = positive_rule(value) if name == "exposure" else _count_rule(value)
+        if limit is None and name == "sample_number":
+            limit = family.truncation_rule(value)
         if limit is not None:
             faults.append(Fault(f"/truncation/{name}", f"{limit}; received {value!r}"))
     return faults

@@ -148,6 +148,17 @@ def spread_check(values: FloatArray, sigma: float, noun: str, averages: int = 1)
     return Check("spread", Supposition.SPREAD, "chi-squared test of a variance, exact", found, words)
 
 
+def equal_spread_check(a: FloatArray, b: FloatArray) -> Check:
+    """The standard deviations of two arms against each other."""
+    found = shapes.equal_spread(a, b)
+    words = _directed(
+        found,
+        lambda f: f"The standard deviation in b is {f.figure:.4g} times that in a",
+        ("b varies more", "b varies less"),
+    )
+    return Check("equal_spread", Supposition.SPREAD, "F test of two variances, exact", found, words)
+
+
 def normality_check(values: FloatArray, noun: str) -> Check:
     """The shape of measurements."""
     found = shapes.normality(values, noun)

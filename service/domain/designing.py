@@ -7,7 +7,8 @@ from typing import Any
 from service.domain.calibrating import Attained, Budget, calibrated, exact_figures, fixed_sample_of, risks_of
 from service.domain.checking import checked_content
 from service.domain.errors import ComputationTooLarge, Fault, InvalidPlan, InvalidQuestion
-from service.domain.families import FAMILIES
+from service.domain.families import family_of
+from service.domain.families.base import ORIGIN
 from service.domain.plan import Content
 from service.domain.procedure import Procedure, procedure_of_document, with_thresholds
 from service.sequential.boundaries import Thresholds
@@ -72,7 +73,7 @@ def suggested_truncation(content: Content, inflation: float) -> Suggestion:
     if "table" in content or "standard" in content:
         fault = Fault("/suggest_truncation", "means nothing for a table: its last row is the end")
         raise InvalidQuestion("A table has its own truncation.", [fault])
-    family = FAMILIES.get(content.get("family", ""))
+    family = family_of(content)
     if family is not None and not family.has_model:
         rule = f"means nothing for {family.name}: without a model no truncation can be weighed"
         raise InvalidQuestion("A truncation is weighed by exact figures.", [Fault("/suggest_truncation", rule)])
@@ -100,11 +101,11 @@ class _Search:
         self._inflation = inflation
         self._tries: dict[float, _Try | None] = {}
         self._budget = Budget(MOST_WORK)
-        family = FAMILIES[stated["family"]]
+        self._open_plan = procedure_of_document(checked_content(self._open))
+        family = self._open_plan.family
         self._axis = "exposure" if family.has_exposure else "sample_number"
         self._is_whole = not family.is_watched_in_time
-        document = checked_content(self._open)
-        self._open_plan = procedure_of_document(document)
+        self._idle = family.idle_units(ORIGIN)
         self._averages = exact_figures(self._open_plan, self._open_plan.hypotheses).mean
 
     def run(self) -> Suggestion:
@@ -127,7 +128,7 @@ class _Search:
 
     def _smallest_size(self) -> float:
         fixed = fixed_sample_of(self._open_plan)
-        return float(max(self._averages)) if fixed is None else fixed.size
+        return float(max(self._averages)) + self._idle if fixed is None else fixed.size
 
     def _does(self, at: float) -> bool:
         """Whether this truncation keeps both risks within the inflation."""
@@ -155,7 +156,7 @@ class _Search:
             at=tried.at,
             thresholds=tried.procedure.thresholds,
             attained=risks_of(tried.procedure, tried.found),
-            average_at_h0=float(tried.found.mean[0]),
-            average_at_h1=float(tried.found.mean[1]),
+            average_at_h0=float(tried.found.mean[0]) + self._idle,
+            average_at_h1=float(tried.found.mean[1]) + self._idle,
             inflation=max(0.0, tried.inflation),
         )

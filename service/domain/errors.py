@@ -11,7 +11,7 @@ What can go wrong, without a word of HTTP.
     │   ├── ComputationTooLarge
     │   └── IdempotencyKeyReused
     ├── Unknown                  there is no such thing
-    │   ├── UnknownPlan, UnknownTest, UnknownKey
+    │   ├── UnknownPlan, UnknownTest, UnknownKey, UnknownSimulation
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, NotDecided
@@ -119,6 +119,16 @@ class UnknownKey(Unknown):
     """No valid access key of this name."""
 
     thing = "access key"
+
+
+class UnknownSimulation(Unknown):
+    """No simulation of this name in this process."""
+
+    thing = "simulation"
+
+    def __init__(self, name: str) -> None:
+        super().__init__(name)
+        self.args = (f"This process has no simulation {name!r}; ask the question again, which gives the same figures.",)
 
 
 class Conflict(DomainError):

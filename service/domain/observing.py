@@ -18,7 +18,7 @@ from service.domain.families.base import Start
 from service.domain.procedure import Procedure
 from service.domain.state import Decided, Decision, State, Sum
 from service.domain.statistics import ABOVE, BELOW
-from service.sequential.double import Double, FloatArray, running_sum
+from service.sequential.double import Double, FloatArray, running_sum, two_sum
 from service.sequential.tables import UnitTable
 from service.sequential.walk import Exit, first_exit_at_reports, first_exit_in_time
 
@@ -109,15 +109,17 @@ def standing_of(procedure: Procedure, state: State) -> Start:
     if family.carries:
         sums = [Double(np.array([number.high]), np.array([number.low])) for number in _carried(procedure, state)]
         progress, total = family.place(sums, procedure.known)
-        values = tuple(number.value for number in _carried(procedure, state))
-        return Start(float(progress.value[0]), float(total.value[0]), values)
+        rounded = [two_sum(number.high, number.low) for number in sums]
+        values = tuple(float(number.high[0]) for number in rounded)
+        rest = tuple(float(number.low[0]) for number in rounded)
+        return Start(float(progress.value[0]), float(total.value[0]), values, rest)
     progress_of = state.exposure.value if family.has_exposure else float(state.sample_number)
     return Start(progress_of, state.total.value)
 
 
 def direction_of_rejection(procedure: Procedure, state: State) -> str | None:
     """Of a two-sided plan's rejection: on which side of h0 the parameter lies; None for others."""
-    if not procedure.is_two_sided or state.decision is not Decision.REJECT:
+    if not procedure.has_two_directions or state.decision is not Decision.REJECT:
         return None
     h0, estimate = procedure.hypotheses[0], procedure.family.estimate(standing_of(procedure, state), procedure.known)
     return ABOVE if estimate is None or estimate > h0 else BELOW
@@ -135,13 +137,14 @@ def _moved(procedure: Procedure, state: State, increments: Increments, walk: Wal
     evidence = float(procedure.evidence.log(position.progress, position.total))
     if not math.isfinite(evidence):
         raise InvalidObservations([Fault("", "the sums are too large for the plan's likelihood ratio")])
+    carried = tuple(sums.at(position.index) for sums in walk.carried)
     return replace(
         state,
         sample_number=state.sample_number + int(np.sum(increments.units[: position.index + 1])),
         exposure=_sum(position.progress) if procedure.family.has_exposure else state.exposure,
-        total=_sum(position.total),
+        total=_sum(procedure.family.displayed(carried, position.total, procedure.known)),
         log_likelihood_ratio=evidence + 0.0,  # a negative zero becomes a plain one
-        carried=tuple(_sum(sums.at(position.index)) for sums in walk.carried),
+        carried=tuple(_sum(sums) for sums in carried),
     )
 
 

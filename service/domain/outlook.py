@@ -61,7 +61,9 @@ class Outlook:
     Attributes:
         estimate: Maximum likelihood from the observations so far, None where there is none.
         room: None where the plan is not truncated, or the test is decided.
-        expected: Empty once the test is decided, where the plan may go on for ever, and where the family has no model.
+        expected: Empty once the test is decided, where the plan may go on for ever, where the family has no model, and
+            in an invariant plan.
+        reason: Why `expected` is empty while the test goes on, None where it is not.
     """
 
     ways: Ways
@@ -69,6 +71,7 @@ class Outlook:
     room: Room | None
     expected: tuple[Expected, ...]
     error_bound: float
+    reason: str | None = None
 
 
 NO_WAYS = Ways(None, None)
@@ -101,11 +104,13 @@ def outlook_of(document: str, state: State) -> Outlook:
 def _outlook(document: str, standing: Start) -> Outlook:
     procedure = procedure_of_document(document)
     estimate = procedure.family.estimate(standing, procedure.known)
-    if procedure.may_go_on_for_ever or not procedure.family.has_model:
-        return Outlook(_ways(procedure, standing), estimate, _room(procedure, standing), (), 0.0)
+    reason = _reason(procedure)
+    if reason is not None:
+        return Outlook(_ways(procedure, standing), estimate, _room(procedure, standing), (), 0.0, reason)
     asked = dict(zip(("h0", "h1"), procedure.hypotheses, strict=False))
     if estimate is not None:
         asked["estimate"] = estimate
+    idle = procedure.family.idle_units(standing)
     found = exact_figures(procedure, tuple(asked.values()), standing)
     expected = tuple(
         Expected(
@@ -113,12 +118,23 @@ def _outlook(document: str, standing: Start) -> Outlook:
             parameter=parameter,
             probability_of_acceptance=accepts_at(procedure, found, i),
             probability_of_rejection=rejects_at(procedure, found, i),
-            further_sample_number=spread_at(found, i) if procedure.family.has_figures_of_units else None,
+            further_sample_number=spread_at(found, i, idle) if procedure.family.has_figures_of_units else None,
             further_exposure=spread_at(found, i) if procedure.family.has_exposure else None,
         )
         for i, (under, parameter) in enumerate(asked.items())
     )
     return Outlook(_ways(procedure, standing), estimate, _room(procedure, standing), expected, found.error_bound)
+
+
+def _reason(procedure: Procedure) -> str | None:
+    """Why nothing exact can be expected of the rest."""
+    if procedure.may_go_on_for_ever:
+        return "Where H0 is true this plan may go on for ever."
+    if not procedure.family.has_model:
+        return "The family has no model of the observations."
+    if procedure.family.is_invariant:
+        return "The figures of an invariant plan are simulated, from its beginning only; see its characteristics."
+    return None
 
 
 def _ways(procedure: Procedure, standing: Start) -> Ways:
@@ -145,6 +161,6 @@ def _room(procedure: Procedure, standing: Start) -> Room | None:
     wall = procedure.region.wall
     if wall is None:
         return None
-    left = wall.progress - standing.progress
+    left = wall.progress - standing.progress + procedure.family.idle_units(standing)
     failures = None if wall.cap is None else wall.cap - int(standing.total)
     return Room(None, left, failures) if procedure.family.has_exposure else Room(round(left), None, failures)

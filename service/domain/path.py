@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from service.domain.families.base import ORIGIN
 from service.domain.observing import first_exit, walk_from
 from service.domain.procedure import Procedure
 from service.domain.state import State, Sum
@@ -36,7 +37,8 @@ class RegionPoint:
     """
     The limits of the total at one progress; None where no total of the family decides.
 
-    `reject_below` is the lower limit of a two-sided region, whose upper one is `reject`.
+    `reject_below` is the lower limit of a two-sided region, whose upper one is `reject`. In a two-sided invariant plan
+    `accept` is a limit of the magnitude.
     """
 
     progress: float
@@ -68,7 +70,8 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
         units = state.sample_number + np.cumsum(increments.units[:count])
         sequence = state.sequence + np.arange(1, count + 1)
         evidence = procedure.evidence.log(progress, total)
-        pieces.append(Path(sequence, units, progress.value, total.value, evidence))
+        shown = procedure.family.displayed([_cut(sums, count) for sums in walk.carried], total, procedure.known)
+        pieces.append(Path(sequence, units, progress.value, shown.value, evidence))
         if exit_ is not None:
             break
         state = State(
@@ -90,9 +93,10 @@ def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
         progress = np.array([0.0, *region.sample_numbers])
     elif not procedure.family.has_exposure:
         progress = np.unique(np.ceil(progress))
-    limits = region.limits(progress)
+    idle = procedure.family.idle_units(ORIGIN)
+    limits = procedure.family.drawn(region, progress, procedure.known)
     return [
-        _region_point(procedure, float(at), _finite(low), _finite(high))
+        _region_point(procedure, float(at) + idle, _finite(low), _finite(high))
         for at, low, high in zip(progress, limits.lower, limits.upper, strict=True)
     ]
 
@@ -100,6 +104,8 @@ def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
 def _region_point(procedure: Procedure, progress: float, lower: float | None, upper: float | None) -> RegionPoint:
     if procedure.is_two_sided:
         return RegionPoint(progress, None, upper, lower)
+    if procedure.has_two_directions:
+        return RegionPoint(progress, lower, upper, None if upper is None else -upper)
     return (
         RegionPoint(progress, lower, upper, None) if procedure.is_upward else RegionPoint(progress, upper, lower, None)
     )

@@ -10,7 +10,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import lru_cache
 
-from service.domain.families import FAMILIES, Family
+from service.domain.families import Family, family_of
+from service.domain.families.base import ORIGIN
 from service.domain.plan import Content, Plan
 from service.domain.statistics import accepts_early, evidence_of, hypotheses_of, settled_known
 from service.domain.tables import region_of_table
@@ -21,6 +22,8 @@ from service.sequential.decision import Decision
 from service.sequential.evidence import Evidence
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.region import Region, StraightRegion, Wall, straight_region
+
+TWO_SIDES = 2
 
 
 @dataclass(frozen=True)
@@ -49,6 +52,11 @@ class Procedure:
         return self.region.below is self.region.above
 
     @property
+    def has_two_directions(self) -> bool:
+        """A rejection says on which side of h0 the parameter lies."""
+        return self.is_two_sided or self.known.get("sides") == TWO_SIDES
+
+    @property
     def is_upward(self) -> bool:
         """Large totals speak for H1."""
         return self.region.above is Decision.REJECT
@@ -63,7 +71,9 @@ class Procedure:
 @dataclass(frozen=True)
 class Lines:
     """
-    The region's two lines, as inspection standards draw them; both intercepts are positive.
+    The region's two lines over the sample number (or exposure), as inspection standards draw them.
+
+    Both intercepts are positive, but where the first unit makes no progress the nearer one may not be.
 
     Accept when the total <= slope * n - accept_intercept and reject when >= slope * n + reject_intercept; where H1
     lies below H0 the signs of the intercepts and the comparisons turn round.
@@ -87,9 +97,11 @@ def procedure_of(plan: Plan) -> Procedure:
 def lines_of(procedure: Procedure) -> Lines | None:
     """The lines of a procedure whose region is bounded by straight ones."""
     region = procedure.region
-    if not isinstance(region, StraightRegion):
+    if not isinstance(region, StraightRegion) or procedure.family.is_invariant:
         return None
-    lower, upper = region.lower_intercept, region.upper_intercept
+    # The region may run over fewer than all units.
+    shift = region.ratio.slope * procedure.family.idle_units(ORIGIN)
+    lower, upper = region.lower_intercept + shift, region.upper_intercept - shift
     accept, reject = (lower, upper) if procedure.is_upward else (upper, lower)
     return Lines(region.ratio.slope, accept, reject)
 
@@ -101,8 +113,8 @@ def with_thresholds(content: Content, thresholds: Thresholds) -> Procedure:
     Raises:
         OutOfRange: Floating point cannot tell the hypotheses apart.
     """
-    family = FAMILIES[content["family"]]
-    evidence, wall = evidence_of(family, content), _wall(content)
+    family = _family(content)
+    evidence, wall = evidence_of(family, content), _wall(family, content)
     region: Region
     if isinstance(evidence, LikelihoodRatio):
         region = straight_region(evidence, thresholds, family.span, wall)
@@ -115,7 +127,7 @@ def with_thresholds(content: Content, thresholds: Thresholds) -> Procedure:
 def _compiled(document: str) -> Procedure:
     content: Content = json.loads(document)
     if content["boundaries"] == "table":
-        family = FAMILIES[content["family"]]
+        family = _family(content)
         evidence = evidence_of(family, content)
         region = region_of_table(family, content["table"], is_upward=evidence.is_upward)
         return _procedure(content, evidence, None, region)
@@ -125,7 +137,7 @@ def _compiled(document: str) -> Procedure:
 def _procedure(
     content: Content, evidence: LikelihoodRatio | Evidence, thresholds: Thresholds | None, region: Region
 ) -> Procedure:
-    family, risks = FAMILIES[content["family"]], (content["alpha"], content.get("beta"))
+    family, risks = _family(content), (content["alpha"], content.get("beta"))
     return Procedure(
         family, evidence, thresholds, region, settled_known(family, content), hypotheses_of(content), risks
     )
@@ -143,9 +155,16 @@ def _thresholds(content: Content) -> Thresholds:
     return rule(content["alpha"], content["beta"])
 
 
-def _wall(content: Content) -> Wall | None:
+def _family(content: Content) -> Family:
+    family = family_of(content)
+    if family is None:  # not reached: a content without faults names one
+        raise KeyError(content["family"])
+    return family
+
+
+def _wall(family: Family, content: Content) -> Wall | None:
     truncation = content.get("truncation")
     if truncation is None:
         return None
-    progress = truncation.get("exposure", truncation.get("sample_number"))
+    progress = truncation.get("exposure", truncation.get("sample_number")) - family.idle_units(ORIGIN)
     return Wall(float(progress), truncation.get("failures"))

@@ -1,7 +1,8 @@
 """
 The statistics: what the evidence of a plan is made of, which plans each of them needs, and the region that follows.
 
-`simple` weighs two parameter values; `generalised` two ranges by their suprema; `mixture` averages H1 over a prior.
+`simple` weighs two parameter values; `generalised` two ranges by their suprema; `mixture` averages H1 over a prior;
+`invariant` weighs two standardised means by Student's t, whatever the standard deviation is.
 """
 
 import math
@@ -9,7 +10,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from service.domain.errors import Fault
-from service.domain.families import FAMILIES, Family
+from service.domain.families import FAMILIES, INVARIANT, Family
 from service.domain.families.base import positive_rule
 from service.domain.plan import Content, known_of, prior_of
 from service.sequential import generalised
@@ -39,12 +40,22 @@ class Statistic:
 
     def may_accept(self, content: Content) -> bool:
         """Whether an accept threshold means something in such a plan."""
-        return self.name != "mixture" and content.get("sides") != 2  # noqa: PLR2004
+        return self.weighs_points or (self.name != "mixture" and content.get("sides") != 2)  # noqa: PLR2004
 
     @property
     def is_simple(self) -> bool:
         """True for the ratio of two parameter values, whose region is straight."""
         return self.name == "simple"
+
+    @property
+    def title(self) -> str:
+        """A plan with it, for people."""
+        return f"{'an' if self.name == 'invariant' else 'a'} {self.name} plan"
+
+    @property
+    def weighs_points(self) -> bool:
+        """True where one value stands against another, so that both risks are at points."""
+        return self.name in {"simple", "invariant"}
 
 
 STATISTICS = {
@@ -61,6 +72,7 @@ STATISTICS = {
         Statistic(
             "mixture", ("strict", "calibrated", "given"), (), optional=("sides", "direction"), one_sided=("direction",)
         ),
+        Statistic("invariant", ("wald", "strict", "calibrated", "given"), ("h1", "beta"), optional=("sides",)),
     )
 }
 # Members that only some statistics know.
@@ -78,7 +90,10 @@ def hypotheses_of(content: Content) -> tuple[float, ...]:
 def settled_known(family: Family, content: Content) -> Mapping[str, float]:
     """What the family knows of a plan, with what follows from its hypotheses."""
     h0 = content.get("h0", math.nan)
-    return family.settled(known_of(content), h0, content.get("h1", h0))
+    known = known_of(content)
+    if family.is_invariant:
+        known = {**known, "sides": float(content.get("sides", 1))}
+    return family.settled(known, h0, content.get("h1", h0))
 
 
 def faults_of_statistic(family: Family, content: Content) -> list[Fault]:
@@ -90,11 +105,13 @@ def faults_of_statistic(family: Family, content: Content) -> list[Fault]:
     required = [name for name in statistic.required if family.has_model or name != "h1"]
     faults = [Fault(f"/{name}", "is required") for name in required if name not in content]
     faults += [
-        Fault(f"/{name}", f"means nothing for a {statistic.name} plan")
+        Fault(f"/{name}", f"means nothing for {statistic.title}")
         for name in SPECIAL
         if name in content and name not in allowed
     ]
-    if not statistic.is_simple:
+    if statistic.name == "invariant":
+        faults += _faults_of_sides(statistic, content) + _faults_of_invariant(family, statistic, content)
+    elif not statistic.is_simple:
         faults += _faults_of_sides(statistic, content)
         faults += _faults_of_composite(family, statistic, content)
     return faults
@@ -108,7 +125,7 @@ def evidence_of(family: Family, content: Content) -> LikelihoodRatio | Evidence:
         OutOfRange: Floating point cannot tell the hypotheses apart.
     """
     known, hypotheses = settled_known(family, content), hypotheses_of(content)
-    if content["statistic"] == "simple":
+    if STATISTICS[content["statistic"]].weighs_points:
         # A family without a model does not look at hypotheses, and its plans have none.
         return family.likelihood_ratio(content.get("h0", math.nan), content.get("h1", math.nan), known)
     direction = direction_of(family, content)
@@ -133,7 +150,7 @@ def direction_of(family: Family, content: Content) -> int:
 
 def accepts_early(content: Content) -> bool:
     """Whether the plan may accept before it is truncated."""
-    if content["statistic"] == "simple":
+    if STATISTICS[content["statistic"]].weighs_points:
         return True
     if content["boundaries"] != "given":
         return "beta" in content
@@ -150,6 +167,20 @@ def _faults_of_sides(statistic: Statistic, content: Content) -> list[Fault]:
     if sides == 2:  # noqa: PLR2004
         names = (name for name in statistic.one_sided if name in content)
         faults += [Fault(f"/{name}", "means nothing for a two-sided plan: H0 is h0 alone") for name in names]
+    return faults
+
+
+def _faults_of_invariant(family: Family, statistic: Statistic, content: Content) -> list[Fault]:
+    """What unknown standard deviations ask of the rest of the plan."""
+    if not family.is_invariant:
+        return [Fault("/statistic", f"invariant is served for {', '.join(INVARIANT)}, not for {family.name}")]
+    faults = _faults_of_prior(family, statistic, content)
+    if content.get("sides") != 2:  # noqa: PLR2004
+        return faults
+    if content.get("h0", 0.0) != 0.0:
+        faults.append(Fault("/h0", f"must be 0 in a two-sided plan; received {content['h0']!r}"))
+    if content.get("h1", 1.0) <= 0.0:
+        faults.append(Fault("/h1", f"must be above 0 in a two-sided plan: both signs are; received {content['h1']!r}"))
     return faults
 
 
@@ -182,6 +213,8 @@ def _faults_of_prior(family: Family, statistic: Statistic, content: Content) -> 
     wanted = ", ".join(f'"{name}"' for name in family.prior)
     if prior is None:
         return [Fault("/known/prior", f"is required for {family.name}, with {wanted}")]
+    if not isinstance(prior, Mapping):
+        return [Fault("/known/prior", f"must be an object with {wanted}; received {prior!r}")]
     faults = [
         Fault(f"/known/prior/{name}", f"is required for {family.name}") for name in family.prior if name not in prior
     ]

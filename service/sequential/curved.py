@@ -4,7 +4,8 @@ The region of any evidence between constant thresholds: limits that need not be 
 Quantity: the limits of the total at each progress, as for straight lines.
 Method: whether a point lies at or beyond the lower or the upper limit is asked of the evidence itself; both answers
 change once as the total moves, and once as the progress does. Near what H0 leads to expect the evidence of whole totals
-is tabulated once for all thresholds; everything else is found by halving, and moments by a bracketed secant.
+is tabulated once for all thresholds; other whole limits are found by halving, real ones and moments by a bracketed
+secant.
 Accuracy: whole-number limits are exact, ties resolved at 1e-12; real ones to the last few digits. Deciding does not use
 them: it compares the evidence with the thresholds.
 Cost: a comparison for each tabulated total; some tens of evaluations of the evidence for each limit beyond.
@@ -22,18 +23,18 @@ from service.sequential.decision import Decision
 from service.sequential.double import BoolArray, Double, FloatArray
 from service.sequential.evidence import Evidence
 from service.sequential.region import ABOVE, BELOW, FEW_UNITS, INSIDE, TIE, Limits, SideArray, Span, Wall
+from service.sequential.roots import SMALLEST, Rise, real_root, rising_root
 
-# Totals and progress are looked for between these.
-SMALLEST, FURTHEST = 1e-300, 2.0**53
-# Halvings that bring a real limit to its last digits, and steps of the secant that do so for a moment.
-HALVINGS, STEPS = 110, 60
+# No total and no progress is looked for beyond.
+FURTHEST = 2.0**53
+# More halvings than the largest distance of two totals takes.
+HALVINGS = 60
 # A table has totals as far as so many standard deviations and so many units from what H0 leads to expect; so many
 # numbers at most, for so many progress values.
 REACH, UNITS = 12.0, 30.0
-LARGEST_TABLE, MOST_PROGRESS, MOST_TABLES = 400_000, 4_096, 24
+LARGEST_TABLE, FEWEST_PROGRESS, MOST_PROGRESS, MOST_TABLES = 400_000, 8, 4_096, 24
 
 Holds = Callable[[FloatArray], BoolArray]
-Rise = Callable[[FloatArray], FloatArray]
 # From progress, total and evidence to whether the point lies on one side.
 Judgement = Callable[[FloatArray, FloatArray, FloatArray], BoolArray]
 
@@ -184,13 +185,41 @@ class CurvedRegion:
         if not begun.size:
             return lower, upper
         at = progress[begun]
-        is_tabulated = self.span.is_integer and len(at) <= MOST_PROGRESS
+        if not self.span.is_integer:
+            ends = is_below == self._ends_below
+            lower[begun], upper[begun] = (self._crossing(at, side, at_wall=ends) for side in (BELOW, ABOVE))
+            return lower, upper
+        # For single points the search is quicker than a table.
+        is_tabulated = FEWEST_PROGRESS <= len(at) <= MOST_PROGRESS
         table = _table(self.evidence, self.span, at.tobytes()) if is_tabulated else None
         if is_below is not None:
             lower[begun], _ = self._change(at, table, is_below, turned=True)
         if is_above is not None:
             _, upper[begun] = self._change(at, table, is_above, turned=False)
         return lower, upper
+
+    def _crossing(self, progress: FloatArray, side: int, *, at_wall: bool) -> FloatArray:
+        """The real total at which the evidence comes to the threshold of a side, infinite where it has none."""
+        decision = self.below if side == BELOW else self.above
+        threshold = self.thresholds.reject if decision is Decision.REJECT else self.thresholds.accept
+        if at_wall and not self.evidence.is_two_sided:
+            threshold = 0.0 if self._has_accept else self.thresholds.reject
+        if np.isinf(threshold):
+            return np.full_like(progress, side * np.inf)
+        falls = side == BELOW if self.evidence.is_two_sided else not self.evidence.is_upward
+        sign = -1.0 if falls else 1.0
+
+        def rise(total: FloatArray) -> FloatArray:
+            return sign * (self._log(progress, total) - threshold)
+
+        low = high = self.evidence.expected(progress)
+        width = self.evidence.deviation(progress)
+        while np.any(short := (rise(high) < 0.0) & np.isfinite(width)):
+            high, width = np.where(short, high + width, high), np.where(short, 2.0 * width, width)
+        width = self.evidence.deviation(progress)
+        while np.any(long := (rise(low) >= 0.0) & np.isfinite(width)):
+            low, width = np.where(long, low - width, low), np.where(long, 2.0 * width, width)
+        return real_root(rise, low, high)
 
     def _change(
         self, progress: FloatArray, table: "_Table | None", judge: Judgement, *, turned: bool
@@ -219,7 +248,7 @@ class CurvedRegion:
         high = np.minimum(np.maximum(high, 2.0 * low), far)
         while np.any(short := (rise(high) < 0.0) & (high < np.minimum(far, FURTHEST))):
             low, high = np.where(short, high, low), np.where(short, np.minimum(4.0 * high, far), high)
-        return _root(rise, low, high)
+        return rising_root(rise, low, high)
 
 
 @dataclass(frozen=True)
@@ -273,14 +302,12 @@ def _table(evidence: Evidence, span: Span, packed: bytes) -> _Table | None:
 
 
 class _Search:
-    """Looks for totals at some progress values, from what H0 leads to expect outwards."""
+    """Looks for whole totals at some progress values, from what H0 leads to expect outwards."""
 
     def __init__(self, span: Span, evidence: Evidence, progress: FloatArray) -> None:
-        step, begin = evidence.deviation(progress), evidence.expected(progress)
-        self._is_integer, self._floor = span.is_integer, span.floor
-        self._largest = np.minimum(span.per_progress * progress, FURTHEST if span.is_integer else np.inf)
-        self._step = np.maximum(1.0, np.ceil(step)) if span.is_integer else step
-        self._begin = np.clip(np.floor(begin) if span.is_integer else begin, self._floor, self._largest)
+        self._floor, self._largest = span.floor, np.minimum(np.floor(span.per_progress * progress), FURTHEST)
+        self._step = np.maximum(1.0, np.ceil(evidence.deviation(progress)))
+        self._begin = np.clip(np.floor(evidence.expected(progress)), self._floor, self._largest)
 
     def change(self, holds: Holds) -> tuple[FloatArray, FloatArray]:
         """
@@ -290,9 +317,7 @@ class _Search:
         low, high = self._around(holds)
         none_fails, none_holds = holds(low), ~holds(high)
         for _ in range(HALVINGS):
-            middle = 0.5 * (low + high)
-            if self._is_integer:
-                middle = np.floor(middle)
+            middle = np.floor(0.5 * (low + high))
             if np.all((middle <= low) | (middle >= high)):
                 break
             at = holds(middle)
@@ -310,29 +335,6 @@ class _Search:
             high = np.where(up, np.minimum(high + width, self._largest), high)
             low = np.where(down, np.maximum(low - width, self._floor), low)
             width = np.where(up | down, 2.0 * width, width)
-
-
-def _root(rise: Rise, low: FloatArray, high: FloatArray) -> FloatArray:
-    """
-    The zero of a rising function between two arrays of positive numbers, element by element; NaN where it has none.
-
-    Regula falsi in the logarithm whose kept end is weakened (Illinois), with halvings where it is slow.
-    """
-    left, right = np.log(low), np.log(np.maximum(high, SMALLEST))
-    below, above = rise(low), rise(high)
-    has_none = (above < 0.0) | ~np.isfinite(high)
-    is_at_start = below >= 0.0
-    below, above = np.where(is_at_start, -1.0, below), np.where(has_none, 1.0, above)
-    for step in range(STEPS):
-        if np.all(right - left <= 4e-16 * np.maximum(1.0, np.abs(right))):
-            break
-        share = np.full_like(left, 0.5) if step % 4 == 3 else below / (below - above)
-        middle = left + (right - left) * np.clip(share, 1e-12, 1.0 - 1e-12)
-        found = rise(np.exp(middle))
-        holds = found >= 0.0
-        above, below = np.where(holds, found, 0.5 * above), np.where(holds, 0.5 * below, found)
-        left, right = np.where(holds, left, middle), np.where(holds, middle, right)
-    return np.where(has_none, np.nan, np.where(is_at_start, low, np.exp(right)))
 
 
 def _plain(values: FloatArray) -> Double:

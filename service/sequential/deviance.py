@@ -15,6 +15,7 @@ from typing import Protocol
 import numpy as np
 
 from service.sequential.double import Double, FloatArray, two_product, two_sum
+from service.sequential.roots import SMALLEST, rising_root
 
 # Below this relative distance the series is used; so many terms then reach rounding.
 NEAR, TERMS = 0.1, 10
@@ -31,6 +32,13 @@ class Deviance(Protocol):
         """The variance of the total in one unit of progress."""
         ...
 
+    def at_distance(self, progress: Double, total: Double, distance: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """
+        The parameters on either side of the estimate whose half deviance is `distance`, the ends of the range where it
+        is nowhere so large; arrays of shape (points,).
+        """
+        ...
+
 
 @dataclass(frozen=True)
 class Bernoulli:
@@ -45,6 +53,21 @@ class Bernoulli:
         """See `Deviance`."""
         return parameter * (1.0 - parameter)
 
+    def at_distance(self, progress: Double, total: Double, distance: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """See `Deviance`."""
+        n, count = progress.value, total.value
+        return self._below(n, count, distance), 1.0 - self._below(n, n - count, distance)
+
+    @staticmethod
+    def _below(n: FloatArray, count: FloatArray, distance: FloatArray) -> FloatArray:
+        """The lower one."""
+        share = np.divide(count, n, out=np.zeros_like(count), where=n > 0.0)
+
+        def rise(at: FloatArray) -> FloatArray:
+            return distance - _gap(count, n * at) - _gap(n - count, n * (1.0 - at))
+
+        return _positive(share, rising_root(rise, _lowest(share, count, distance), np.maximum(share, SMALLEST)))
+
 
 @dataclass(frozen=True)
 class Poisson:
@@ -57,6 +80,19 @@ class Poisson:
     def variance(self, parameter: float) -> float:
         """See `Deviance`."""
         return parameter
+
+    def at_distance(self, progress: Double, total: Double, distance: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """See `Deviance`."""
+        exposure, count = progress.value, total.value
+        has_begun = exposure > 0.0
+        # In expected counts; a count of c lies further than d from all beyond c + d + sqrt(2 c d) + d.
+        furthest = count + 2.0 * distance + np.sqrt(2.0 * count * distance) + 1.0
+        lowest = _lowest(count, count, distance)
+        found = rising_root(lambda at: distance - _gap(count, at), lowest, np.maximum(count, SMALLEST))
+        below = _positive(count, found)
+        above = rising_root(lambda at: _gap(count, at) - distance, np.maximum(count, SMALLEST), furthest)
+        unit = np.where(has_begun, exposure, 1.0)
+        return np.where(has_begun, below / unit, 0.0), np.where(has_begun, above / unit, np.inf)
 
 
 @dataclass(frozen=True)
@@ -77,6 +113,24 @@ class Normal:
         """See `Deviance`."""
         return self.sigma * self.sigma
 
+    def at_distance(self, progress: Double, total: Double, distance: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """See `Deviance`."""
+        n = progress.value
+        unit = np.where(n > 0.0, n, 1.0)
+        mean, half = total.value / unit, self.sigma * np.sqrt(2.0 * distance / unit)
+        return np.where(n > 0.0, mean - half, -np.inf), np.where(n > 0.0, mean + half, np.inf)
+
+
+def _lowest(estimate: FloatArray, count: FloatArray, distance: FloatArray) -> FloatArray:
+    """Below this every parameter lies further than `distance`, because count * ln(estimate/parameter) - count does."""
+    exponent = -1.0 - distance / np.where(count > 0.0, count, 1.0)
+    return np.maximum(estimate * np.exp(exponent), SMALLEST)
+
+
+def _positive(estimate: FloatArray, found: FloatArray) -> FloatArray:
+    """Zero where nothing was counted, or where the parameter is too small to hold."""
+    return np.where((estimate > 0.0) & (found > SMALLEST), found, 0.0)
+
 
 def _gap(count: FloatArray, expected: FloatArray) -> FloatArray:
     """
@@ -87,12 +141,14 @@ def _gap(count: FloatArray, expected: FloatArray) -> FloatArray:
     """
     sum_, difference = count + expected, count - expected
     v = np.divide(difference, sum_, out=np.zeros_like(sum_), where=sum_ > 0.0)
-    square = v * v
-    series = np.zeros_like(v)
-    for term in range(TERMS, 0, -1):
-        series = (series + 1.0 / (2 * term + 1)) * square
-    near = difference * v + 2.0 * count * v * series
-    with np.errstate(divide="ignore", invalid="ignore"):
-        logarithm = np.where(count > 0.0, count * np.log(np.where(count > 0.0, count, 1.0) / expected), 0.0)
-    far = logarithm - difference
-    return np.where(np.abs(v) < NEAR, near, np.where(sum_ > 0.0, far, 0.0))
+    is_near = np.abs(v) < NEAR
+    near = far = np.zeros_like(v)
+    if np.any(is_near):
+        square, series = v * v, np.zeros_like(v)
+        for term in range(TERMS, 0, -1):
+            series = (series + 1.0 / (2 * term + 1)) * square
+        near = difference * v + 2.0 * count * v * series
+    if not np.all(is_near):
+        with np.errstate(divide="ignore", invalid="ignore"):
+            far = np.where(count > 0.0, count * np.log(np.where(count > 0.0, count, 1.0) / expected), 0.0) - difference
+    return np.where(is_near, near, np.where(sum_ > 0.0, far, 0.0))

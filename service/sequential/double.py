@@ -61,6 +61,24 @@ def two_product(a: FloatArray, b: FloatArray) -> Double:
     return Double(high, low)
 
 
+def plus(a: Double, b: Double) -> Double:
+    """The sum of two such numbers. Source: Dekker (1971), with all of the rounding errors kept."""
+    high, low = two_sum(a.high, b.high), two_sum(a.low, b.low)
+    first = two_sum(high.high, high.low + low.high)
+    return two_sum(first.high, first.low + low.low)
+
+
+def minus(a: Double, b: Double) -> Double:
+    """Their difference."""
+    return plus(a, Double(-b.high, -b.low))
+
+
+def times(a: Double, b: Double) -> Double:
+    """Their product. Source: Dekker (1971)."""
+    product = two_product(a.high, b.high)
+    return two_sum(product.high, product.low + (a.high * b.low + a.low * b.high))
+
+
 def running_sum(start: Double, terms: FloatArray) -> Double:
     """
     All partial sums of `start` and then `terms`, one after the other.

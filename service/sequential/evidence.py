@@ -23,6 +23,14 @@ class Evidence(Protocol):
         """Large totals speak for H1; of no meaning where both sides do."""
         ...
 
+    @property
+    def is_test_martingale(self) -> bool:
+        """
+        Under H0 the mean of its exponential never exceeds one, at whatever moment it is looked at; then its inverse is
+        a p-value at all times (Ville 1939).
+        """
+        ...
+
     def __hash__(self) -> int:
         """By value, for what is kept for an evidence once computed."""
         ...

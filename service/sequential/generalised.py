@@ -21,18 +21,42 @@ from service.sequential.likelihood import LikelihoodRatio
 
 
 @dataclass(frozen=True)
-class OneSided:
+class Generalised:
     """
-    H0 on one side of `edge0`, H1 on the other side of `edge1`. See `Evidence`.
+    What both forms share. See `Evidence`.
 
     Attributes:
-        edge0, edge1: In terms of the mean of one unit of progress; equal where nothing lies between the hypotheses.
-        ratio: The simple one of the two edges; None where they are equal.
-        is_upward: H1 lies above H0.
+        edge0: H0's edge, or its only value, as a mean of one unit of progress.
     """
 
     deviance: Deviance
     edge0: float
+
+    @property
+    def is_test_martingale(self) -> bool:
+        """See `Evidence`; suprema know what came."""
+        return False
+
+    def expected(self, progress: FloatArray) -> FloatArray:
+        """See `Evidence`."""
+        return self.edge0 * progress
+
+    def deviation(self, progress: FloatArray) -> FloatArray:
+        """See `Evidence`."""
+        return np.sqrt(self.deviance.variance(self.edge0) * np.maximum(progress, 1e-300))
+
+
+@dataclass(frozen=True)
+class OneSided(Generalised):
+    """
+    H0 on one side of `edge0`, H1 on the other side of `edge1`.
+
+    Attributes:
+        edge1: As `edge0`; equal to it where nothing lies between the hypotheses.
+        ratio: The simple one of the two edges; None where they are equal.
+        is_upward: H1 lies above H0.
+    """
+
     edge1: float
     ratio: LikelihoodRatio | None
     is_upward: bool
@@ -55,21 +79,10 @@ class OneSided:
             return apart
         return np.where(beyond0 & before1, self.ratio.log(progress, total), apart)
 
-    def expected(self, progress: FloatArray) -> FloatArray:
-        """See `Evidence`."""
-        return self.edge0 * progress
-
-    def deviation(self, progress: FloatArray) -> FloatArray:
-        """See `Evidence`."""
-        return np.sqrt(self.deviance.variance(self.edge0) * np.maximum(progress, 1e-300))
-
 
 @dataclass(frozen=True)
-class TwoSided:
-    """H0 is the single value `edge0`, H1 the whole range. See `Evidence`."""
-
-    deviance: Deviance
-    edge0: float
+class TwoSided(Generalised):
+    """H0 is the single value `edge0`, H1 the whole range."""
 
     @property
     def is_two_sided(self) -> bool:
@@ -84,11 +97,3 @@ class TwoSided:
     def log(self, progress: Double, total: Double) -> FloatArray:
         """See `Evidence`."""
         return self.deviance.against(progress, total, self.edge0)
-
-    def expected(self, progress: FloatArray) -> FloatArray:
-        """See `Evidence`."""
-        return self.edge0 * progress
-
-    def deviation(self, progress: FloatArray) -> FloatArray:
-        """See `Evidence`."""
-        return np.sqrt(self.deviance.variance(self.edge0) * np.maximum(progress, 1e-300))

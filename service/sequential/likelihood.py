@@ -43,6 +43,11 @@ class LikelihoodRatio:
         """True where large totals speak for H1."""
         return self.gain > 0.0
 
+    @property
+    def is_test_martingale(self) -> bool:
+        """See `Evidence`."""
+        return True
+
     def deviation(self, progress: Double, total: Double) -> FloatArray:
         """The total minus slope * progress, without the cancellation of the plain difference; same shape as given."""
         line = two_product(progress.high, Double.of(self.slope).high)

@@ -12,11 +12,12 @@ Source: Ville (1939) and Wald (1947), Sequential Analysis, section 4.1.4 (weight
 Mathematical Statistics 41, 1397-1409 (normal mixtures, power-one tests).
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.special import betainc, betaincc, betaln, gammainc, gammaincc, gammaln, log_ndtr, xlogy
 
+from service.sequential.deviance import Bernoulli, Deviance, Poisson
 from service.sequential.double import Double, FloatArray, two_product, two_sum
 
 # Shares smaller than this are computed in logarithms.
@@ -26,9 +27,9 @@ MOST_TERMS, SETTLED = 100_000, 1e-16
 
 
 @dataclass(frozen=True)
-class _Mixture:
+class Mixture:
     """
-    What the mixtures share.
+    What the mixtures share. See `Evidence`.
 
     Attributes:
         edge: H0's value, in terms of the mean of one unit of progress.
@@ -37,6 +38,11 @@ class _Mixture:
 
     edge: float
     direction: int
+
+    @property
+    def is_test_martingale(self) -> bool:
+        """See `Evidence`."""
+        return True
 
     @property
     def is_two_sided(self) -> bool:
@@ -52,13 +58,46 @@ class _Mixture:
         """See `Evidence`."""
         return self.edge * progress
 
+    def log(self, progress: Double, total: Double) -> FloatArray:
+        """See `Evidence`."""
+        raise NotImplementedError
+
+    def confidence(self, progress: Double, total: Double, alpha: float) -> tuple[FloatArray, FloatArray]:
+        """
+        The means that the two-sided mixture does not speak against: those under which it is below 1/alpha.
+
+        By Ville's inequality the true one is among them at all moments together with probability 1 - alpha at least.
+
+        Args:
+            progress, total: Arrays of shape (points,).
+            alpha: In (0, 1).
+
+        Source: Robbins (1970).
+        """
+        deviance = self._deviance
+        at_edge = deviance.against(progress, total, self.edge) - replace(self, direction=0).log(progress, total)
+        return deviance.at_distance(progress, total, np.maximum(at_edge - np.log(alpha), 0.0))
+
+    @property
+    def _deviance(self) -> Deviance:
+        raise NotImplementedError
+
 
 @dataclass(frozen=True)
-class NormalMixture(_Mixture):
+class NormalMixture(Mixture):
     """Total = sum of measurements with standard deviation `sigma`; the mean has the prior N(edge, tau**2)."""
 
     sigma: float
     tau: float
+
+    def confidence(self, progress: Double, total: Double, alpha: float) -> tuple[FloatArray, FloatArray]:
+        """See `Mixture`; the prior lies around each mean in turn, so that the width depends on progress alone."""
+        n = progress.value
+        unit = np.where(n > 0.0, n, 1.0)
+        share = (self.tau / self.sigma) ** 2
+        half = np.sqrt((1.0 + n * share) / share * (np.log1p(n * share) - 2.0 * np.log(alpha))) * self.sigma / unit
+        mean = total.value / unit
+        return np.where(n > 0.0, mean - half, -np.inf), np.where(n > 0.0, mean + half, np.inf)
 
     def log(self, progress: Double, total: Double) -> FloatArray:
         """See `Evidence`. Source: Robbins (1970)."""
@@ -81,11 +120,15 @@ class NormalMixture(_Mixture):
 
 
 @dataclass(frozen=True)
-class BetaMixture(_Mixture):
+class BetaMixture(Mixture):
     """Total = units with the attribute among `progress` units; the proportion has the prior Beta(a, b)."""
 
     a: float
     b: float
+
+    @property
+    def _deviance(self) -> Deviance:
+        return Bernoulli()
 
     def log(self, progress: Double, total: Double) -> FloatArray:
         """See `Evidence`."""
@@ -111,11 +154,15 @@ class BetaMixture(_Mixture):
 
 
 @dataclass(frozen=True)
-class GammaMixture(_Mixture):
+class GammaMixture(Mixture):
     """Total = count over the exposure `progress`; the rate has the prior Gamma(shape, rate)."""
 
     shape: float
     rate: float
+
+    @property
+    def _deviance(self) -> Deviance:
+        return Poisson()
 
     def log(self, progress: Double, total: Double) -> FloatArray:
         """See `Evidence`."""

@@ -16,7 +16,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from service.sequential.double import BoolArray, Double, FloatArray, IndexArray, two_product, two_sum
+from service.sequential.double import BoolArray, Double, FloatArray, IndexArray, minus, plus, times
 
 # Squares about the mean below this share of all squares, for each measurement, are rounding of the sums.
 ROUNDING = 2.0**-96
@@ -58,7 +58,7 @@ def one_sample(sums: Sums) -> Studentised:
     """The t of measurements, or of differences within pairs, against their reference."""
     n, unit = sums.count, _unit(sums.squares.high)
     total, squares = _scaled(sums.total, -unit), _scaled(sums.squares, -2 * unit)
-    about_mean = _minus(_times(squares, _whole(n)), _times(total, total))
+    about_mean = minus(times(squares, _whole(n)), times(total, total))
     is_defined = (n >= 2.0) & (about_mean.value > n * ROUNDING * n * squares.value)
     return _studentised(total.value, about_mean.value, n * squares.value, n - 1.0, is_defined)
 
@@ -70,16 +70,25 @@ def two_samples(sums_a: Sums, sums_b: Sums) -> Studentised:
     total_a, total_b = _scaled(sums_a.total, -unit), _scaled(sums_b.total, -unit)
     squares_a, squares_b = _scaled(sums_a.squares, -2 * unit), _scaled(sums_b.squares, -2 * unit)
     # All multiplied by a * b: the squares about the means, and the difference of the means.
-    within = _plus(
-        _times(_minus(_times(squares_a, _whole(a)), _times(total_a, total_a)), _whole(b)),
-        _times(_minus(_times(squares_b, _whole(b)), _times(total_b, total_b)), _whole(a)),
+    within = plus(
+        times(minus(times(squares_a, _whole(a)), times(total_a, total_a)), _whole(b)),
+        times(minus(times(squares_b, _whole(b)), times(total_b, total_b)), _whole(a)),
     )
-    difference = _minus(_times(total_b, _whole(a)), _times(total_a, _whole(b))).value
+    difference = minus(times(total_b, _whole(a)), times(total_a, _whole(b))).value
     all_squares = a * b * (squares_a.value + squares_b.value)
     is_defined = (a >= 1.0) & (b >= 1.0) & (a + b >= 3.0) & (within.value > (a + b) * ROUNDING * all_squares)
     # In these units the squares between the samples are difference**2/(a + b).
     between = difference / np.sqrt(np.maximum(a + b, 1.0))
     return _studentised(between, within.value, within.value + between * between, a + b - 2.0, is_defined)
+
+
+def squares_about_mean(sums: Sums) -> FloatArray:
+    """The sum of the squared differences from their own mean; zero for one measurement, and while all are equal."""
+    n, unit = sums.count, _unit(sums.squares.high)
+    total, squares = _scaled(sums.total, -unit), _scaled(sums.squares, -2 * unit)
+    about_mean = minus(times(squares, _whole(n)), times(total, total)).value
+    is_defined = (n >= 2.0) & (about_mean > n * ROUNDING * n * squares.value)
+    return np.where(is_defined, np.ldexp(about_mean / np.maximum(n, 1.0), 2 * unit), 0.0)
 
 
 def _studentised(
@@ -102,18 +111,3 @@ def _scaled(a: Double, power: IndexArray) -> Double:
 
 def _whole(number: FloatArray) -> Double:
     return Double(number, np.zeros_like(number))
-
-
-def _plus(a: Double, b: Double) -> Double:
-    high, low = two_sum(a.high, b.high), two_sum(a.low, b.low)
-    first = two_sum(high.high, high.low + low.high)
-    return two_sum(first.high, first.low + low.low)
-
-
-def _minus(a: Double, b: Double) -> Double:
-    return _plus(a, Double(-b.high, -b.low))
-
-
-def _times(a: Double, b: Double) -> Double:
-    product = two_product(a.high, b.high)
-    return two_sum(product.high, product.low + (a.high * b.low + a.low * b.high))

@@ -15,13 +15,15 @@ from collections.abc import Callable
 import numpy as np
 
 from service.sequential.double import BoolArray, Double, FloatArray
-from service.sequential.region import ABOVE, BELOW, Limits, Region, looks_to_wall
+from service.sequential.region import ABOVE, BELOW, INSIDE, Region, SideArray, looks_to_wall
 from service.sequential.tables import UnitTable
 
 # No test goes so far; whole numbers up to here are exact in a double.
 FURTHEST = 2**53
 # Looks that are tried at once before halving, and where a wall is near.
 BLOCK, LARGEST_BLOCK = 256, 32_768
+# Increases that are tried at once.
+FEW = 32
 
 
 def looks_to_lower(region: Region, progress: float, total: float, step: float) -> tuple[int, float] | None:
@@ -62,18 +64,21 @@ def jump_to_upper(region: Region, progress: float, total: float) -> tuple[int, f
     wall = math.inf if region.wall is None else region.wall.progress
     cap = math.inf if region.wall is None or region.wall.cap is None else region.wall.cap
 
-    def until(increase: int) -> float:
-        """The progress until which a total so much larger is beyond the upper limit; grows with the increase."""
-        if total + increase >= cap:
-            return wall
-        return min(float(region.upper_left_at(np.array([total + increase]))[0]), wall)
+    def until(increases: FloatArray) -> FloatArray:
+        """The progress until which totals so much larger are beyond the upper limit; grows with the increase."""
+        moments = np.minimum(region.upper_left_at(total + increases), wall)
+        return np.where(total + increases >= cap, wall, moments)
 
-    fewest = _first_true(lambda increase: until(increase) > progress)
+    def is_beyond(increase: int) -> bool:
+        return bool(until(np.array([float(increase)]))[0] > progress)
+
+    few = np.flatnonzero(until(np.arange(1.0, FEW + 1.0)) > progress)
+    fewest = int(few[0]) + 1 if few.size else _first_true(is_beyond, begin=FEW)
     if region.wall is not None:
         at_wall = max(0, math.ceil(float(region.limits(np.array([wall])).upper[0]) - total))
         if at_wall < fewest:
             return at_wall, wall - progress
-    return fewest, until(fewest) - progress
+    return fewest, float(until(np.array([float(fewest)]))[0]) - progress
 
 
 def _looks(region: Region, progress: float, total: float, step: float, rise: float) -> tuple[int, float] | None:
@@ -81,24 +86,26 @@ def _looks(region: Region, progress: float, total: float, step: float, rise: flo
     last = None if region.wall is None else looks_to_wall(region.wall, step, progress)
     wanted = BELOW if rise == 0.0 else ABOVE
 
-    def at(looks: FloatArray) -> tuple[BoolArray, BoolArray, Limits]:
-        limits, totals = region.limits(progress + step * looks), total + rise * looks
-        return totals <= limits.lower, totals >= limits.upper, limits
+    def sides(looks: FloatArray) -> SideArray:
+        where, height = (Double(at, np.zeros_like(at)) for at in (progress + step * looks, total + rise * looks))
+        found = region.sides(where, height)
+        if region.wall is None:
+            return found
+        found = np.where(region.wall.is_reached(where.value), region.sides_at_wall(where, height), found)
+        return found if region.wall.cap is None else np.where(height.value >= region.wall.cap, ABOVE, found)
 
     def ends(look: int) -> bool:
-        below, above, _ = at(np.array([float(look)]))
-        return bool(below[0] or above[0])
+        return bool(sides(np.array([float(look)]))[0] != INSIDE)
 
-    first = _first_in_block(lambda looks: np.logical_or(*at(looks)[:2]), last)
+    first = _first_in_block(lambda looks: sides(looks) != INSIDE, last)
     if first is None and isinstance(region, UnitTable):
         return None
     if first is None:  # outside the limits of a likelihood ratio a ray that has left stays, so halving finds the moment
         first = last if last is not None and not ends(last) else _first_true(ends, begin=BLOCK)
-    if first is None:
+    look = np.array([float(first)])
+    if sides(look)[0] != wanted:
         return None
-    below, above, limits = at(np.array([float(first)]))
-    if not (below if wanted == BELOW else above)[0]:
-        return None
+    limits = region.limits(progress + step * look)
     return first, float((limits.lower if wanted == BELOW else limits.upper)[0])
 
 

@@ -19,6 +19,8 @@ LEAST_ROLE = {
     ("GET", "/v1/plans/{name}"): "viewer",
     ("GET", "/v1/plans/{name}/characteristics"): "viewer",
     ("POST", "/v1/characteristics"): "viewer",
+    ("GET", "/v1/simulations/{name}"): "viewer",
+    ("DELETE", "/v1/simulations/{name}"): "viewer",
     ("POST", "/v1/plans/{name}/rehearsal"): "viewer",
     ("POST", "/v1/rehearsal"): "viewer",
     ("GET", "/v1/standard-plans"): "viewer",

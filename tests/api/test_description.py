@@ -13,11 +13,25 @@ from service.api.schemas import (
     observations,
     outlook,
     plans,
+    simulations,
     tests,
 )
 from service.api.schemas.common import Answer
 from service.domain import errors
 from service.domain.errors import DomainError
+
+MODULES = (
+    administration,
+    assumptions,
+    characteristics,
+    events,
+    inference,
+    observations,
+    outlook,
+    plans,
+    simulations,
+    tests,
+)
 
 
 @pytest.fixture(scope="module")
@@ -75,17 +89,7 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
     schemas = description["components"]["schemas"]
     models = {
         model.__name__: model
-        for module in (
-            administration,
-            assumptions,
-            characteristics,
-            events,
-            inference,
-            observations,
-            outlook,
-            plans,
-            tests,
-        )
+        for module in MODULES
         for model in vars(module).values()
         if isinstance(model, type) and issubclass(model, Answer)
     }

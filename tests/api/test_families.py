@@ -38,7 +38,7 @@ ACCEPTED: list[tuple[dict[str, Any], dict[str, Any], int, float]] = [
 BAD_PLANS: list[tuple[dict[str, Any], dict[str, Any], str]] = [
     (BORE, {"h0": 0.0}, "/h0"),
     (BORE, {"h1": -2.0}, "/h1"),
-    (BORE, {"known": {}}, "/known/mean"),
+    (BORE, {"known": {"sigma": 1.0}}, "/known/sigma"),
     (BORE, {"known": {"mean": 1e101}}, "/known/mean"),
     (BORE, {"known": {"mean": 0.0, "sigma": 1.0}}, "/known/sigma"),
     (BORE, {"h1": 1.0000000000000002, "h0": 1.0, "truncation": {"exposure": 3.0}}, "/truncation/exposure"),

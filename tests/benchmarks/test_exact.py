@@ -22,6 +22,24 @@ from tests.domain.test_observing import NOW
 
 NORMAL = {"family": "normal", "h0": 0.0, "h1": 0.25, "alpha": 0.01, "beta": 0.05, "known": {"sigma": 1.0}}
 BERNOULLI = {"family": "bernoulli", "h0": 0.005, "h1": 0.02, "alpha": 0.05, "beta": 0.10}
+GENERALISED = {
+    "family": "bernoulli",
+    "statistic": "generalised",
+    "h0": 0.01,
+    "h1": 0.05,
+    "alpha": 0.05,
+    "beta": 0.10,
+    "boundaries": "calibrated",
+}
+TWO_SIDED = {
+    "family": "normal",
+    "statistic": "generalised",
+    "sides": 2,
+    "h0": 0.0,
+    "alpha": 0.05,
+    "known": {"sigma": 1.0},
+    "boundaries": "calibrated",
+}
 STANDARD_ERROR = 1e-3
 ROUNDS = 5
 
@@ -94,6 +112,9 @@ USUAL: list[tuple[dict[str, Any], dict[str, Any]]] = [
     ({"standard": "MIL-HDBK-781A/III-D", "scale": 100.0}, {"values": [130.0, 170.0]}),
     (NORMAL, {"values": [0.1, 0.2, -0.1]}),
     ({**NORMAL, "h1": 1.0, "truncation": {"sample_number": 30}}, {"values": [0.1, 0.8]}),
+    ({**GENERALISED, "truncation": {"sample_number": 500}}, {"values": [0] * 30 + [1]}),
+    ({**GENERALISED, "h1": None, "beta": None, "truncation": {"sample_number": 500}}, {"values": [0] * 30 + [1]}),
+    ({**TWO_SIDED, "truncation": {"sample_number": 100}}, {"values": [0.1, 0.8]}),
 ]
 
 
@@ -119,5 +140,6 @@ def test_an_outlook_costs_a_few_milliseconds(content: dict[str, Any], submission
 def test_a_calibration_takes_under_two_seconds(content: dict[str, Any], submission: dict[str, Any]) -> None:
     assert submission
     start = time.perf_counter()
-    calibrated({"statistic": "simple", **content, "boundaries": "calibrated"})
+    stated = {name: value for name, value in content.items() if value is not None}
+    calibrated({"statistic": "simple", **stated, "boundaries": "calibrated"})
     print(f"\ncalibration of {content}: {time.perf_counter() - start:.2f} s")

@@ -102,6 +102,7 @@ def test_lognormal_has_the_exact_figures_of_its_logarithm() -> None:
     assert promise.points[0].probability_of_acceptance == pytest.approx(0.97135781, abs=5e-9)
     means = [point.sample_number.mean for point in promise.points if point.sample_number]
     assert means == pytest.approx([6.92007795, 12.69065621], abs=5e-9)
+    assert promise.error_bound is not None
     assert promise.error_bound < 1e-10
     assert promise.points[0].siegmund is not None
     assert promise.fixed_sample is not None

@@ -4,10 +4,10 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, FailFast, Field
 
-from service.api.schemas.common import Answer, Form, Name, Number, optional, shown_as
+from service.api.schemas.common import Answer, Form, Name, Number, Whole, optional, shown_as
 from service.api.schemas.plans import EXAMPLE as PLAN
 from service.api.schemas.plans import AttainedOut, LinesOut, PlanContentForm, ThresholdsOut, TruncationForm
-from service.domain.characteristics import Point, Promise, Spread
+from service.domain.characteristics import Point, Promise, Simulation, Spread
 from service.domain.designing import Suggestion
 from service.domain.procedure import lines_of, procedure_of_document
 
@@ -45,6 +45,38 @@ PROMISE: dict[str, Any] = {
 }
 
 
+SIMULATED: dict[str, Any] = {
+    **PROMISE,
+    "method": "simulation",
+    "error_bound": None,
+    "attained": {
+        "alpha": 0.0444,
+        "beta": 0.0906,
+        "alpha_standard_error": 0.00013,
+        "beta_standard_error": 0.00025,
+        "seed": 1,
+    },
+    "points": [
+        {
+            **PROMISE["points"][0],
+            "parameter": 0.5,
+            "probability_of_acceptance": 0.0906,
+            "probability_standard_error": 0.00025,
+            "average_sample_number": 22.1,
+            "average_standard_error": 0.06,
+            "wald": None,
+        }
+    ],
+    "fixed_sample": None,
+    "lines": None,
+    "simulation": {
+        "seed": 1,
+        "courses": 57344,
+        "least_average_sample_number": {"h0": 15.9, "h1": 19.0},
+    },
+}
+
+
 class TruncationQuestionForm(Form):
     """How much longer than without truncation sampling may become on average, as a share."""
 
@@ -74,6 +106,7 @@ class CharacteristicsForm(PlanContentForm):
     suggest_truncation: TruncationQuestionForm | None = Field(
         None, description="Ask for a truncation, as small as the search finds."
     )
+    seed: Whole | None = Field(None, description="Of an invariant plan: the seed of the simulation, 1 when left out.")
     candidates: Annotated[list[CandidateForm], Field(min_length=1, max_length=8)] | None = None
 
 
@@ -110,6 +143,8 @@ class PointOut(Answer):
     average_failures: float | None
     wald: ApproximateOut | None
     siegmund: ApproximateOut | None
+    probability_standard_error: float | None = Field(None, description="Where the figures are simulated.")
+    average_standard_error: float | None = None
 
     @classmethod
     def of(cls, point: Point) -> "PointOut":
@@ -127,6 +162,8 @@ class PointOut(Answer):
             average_failures=point.failures,
             wald=None if point.wald is None else ApproximateOut.model_validate(point.wald),
             siegmund=None if point.siegmund is None else ApproximateOut.model_validate(point.siegmund),
+            probability_standard_error=point.probability_error,
+            average_standard_error=point.average_error,
         )
 
 
@@ -154,19 +191,41 @@ class SuggestionOut(Answer):
         )
 
 
+class LeastOut(Answer):
+    """What no test that keeps the stated risks can have a smaller average sample number than."""
+
+    h0: float
+    h1: float
+
+
+class SimulatedOut(Answer):
+    """How figures were simulated; the same seed gives the same ones."""
+
+    seed: int
+    courses: int
+    least_average_sample_number: LeastOut
+
+    @classmethod
+    def of(cls, simulation: Simulation) -> "SimulatedOut":
+        """From the domain's account of it."""
+        least = LeastOut(h0=simulation.least_at_h0, h1=simulation.least_at_h1)
+        return cls(seed=simulation.seed, courses=simulation.courses, least_average_sample_number=least)
+
+
 class CharacteristicsOut(Answer):
     """What a plan promises."""
 
     model_config = shown_as(PROMISE)
 
     method: str
-    error_bound: float
+    error_bound: float | None = Field(description="Null where the figures are simulated.")
     attained: AttainedOut
     points: list[PointOut]
     fixed_sample: FixedSampleOut | None
     thresholds: ThresholdsOut | None
     lines: LinesOut | None
     suggested_truncation: SuggestionOut | None = Field(None, description="Where it was asked for.")
+    simulation: SimulatedOut | None = Field(None, description="Null where the figures are exact.")
 
     @classmethod
     def of(cls, promise: Promise, document: str, suggestion: Suggestion | None = None) -> "CharacteristicsOut":
@@ -178,9 +237,10 @@ class CharacteristicsOut(Answer):
             suggested_truncation=None if suggestion is None else SuggestionOut.of(suggestion),
             method=promise.method,
             error_bound=promise.error_bound,
-            attained=AttainedOut(alpha=promise.alpha, beta=promise.beta, alpha_at=None, beta_at=None),
+            attained=_attained(promise),
             points=[PointOut.of(point) for point in promise.points],
             fixed_sample=None if promise.fixed_sample is None else FixedSampleOut.model_validate(promise.fixed_sample),
+            simulation=None if promise.simulation is None else SimulatedOut.of(promise.simulation),
         )
 
 
@@ -196,6 +256,19 @@ class ComparisonOut(Answer):
     model_config = shown_as({"candidates": [{"name": "seal-leak", **PROMISE}]})
 
     candidates: list[CandidateOut]
+
+
+def _attained(promise: Promise) -> AttainedOut:
+    simulation = promise.simulation
+    if simulation is None:
+        return AttainedOut(alpha=promise.alpha, beta=promise.beta, alpha_at=None, beta_at=None)
+    return AttainedOut(
+        alpha=promise.alpha,
+        beta=promise.beta,
+        alpha_standard_error=simulation.alpha_error,
+        beta_standard_error=simulation.beta_error,
+        seed=simulation.seed,
+    )
 
 
 def _members(spread: Spread | None) -> tuple[float | None, float | None, dict[str, float] | None]:

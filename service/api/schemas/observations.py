@@ -9,7 +9,8 @@ from pydantic import ConfigDict, FailFast, Field, StrictBool, StringConstraints,
 from service.api.schemas.common import Answer, Form, Moment, Number, Text, optional, shown_as
 from service.api.schemas.plans import CONTENT as PLAN
 from service.api.schemas.plans import PlanContentForm, ThresholdsOut
-from service.api.schemas.tests import total_of
+from service.api.schemas.tests import ConfidenceOut, total_of
+from service.domain.anytime import ConfidenceSequence, always_valid_p_value, confidence_sequence
 from service.domain.families import Family
 from service.domain.log import LoggedObservation
 from service.domain.path import Path, RegionPoint, path_of, region_points
@@ -37,14 +38,23 @@ LOGGED: dict[str, Any] = {
     "counted": True,
 }
 
+ANYTIME = {"always_valid_p_value": 1.0, "confidence_sequence": None}
+
 PATH: dict[str, Any] = {
     "key": "lot-2041",
     "decision": "continue",
     "axis": "sample_number",
     "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
     "points": [
-        {"sequence": 0, "sample_number": 0, "exposure": None, "total": 0, "log_likelihood_ratio": 0.0},
-        {"sequence": 1, "sample_number": 1, "exposure": None, "total": 0, "log_likelihood_ratio": -0.0953101798043249},
+        {"sequence": 0, "sample_number": 0, "exposure": None, "total": 0, "log_likelihood_ratio": 0.0, **ANYTIME},
+        {
+            "sequence": 1,
+            "sample_number": 1,
+            "exposure": None,
+            "total": 0,
+            "log_likelihood_ratio": -0.0953101798043249,
+            **ANYTIME,
+        },
     ],
     "region": [
         {"sample_number": 1, "exposure": None, "accept": None, "reject": None, "reject_below": None},
@@ -176,6 +186,8 @@ class PathPointOut(Answer):
     exposure: float | None
     total: int | float
     log_likelihood_ratio: float
+    always_valid_p_value: float | None
+    confidence_sequence: ConfidenceOut | None
 
 
 class RegionPointOut(Answer):
@@ -237,10 +249,11 @@ def drawn(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: 
     """The members of an answer that draw a walk: its points, and the region around them."""
     path = path_of(procedure, documents, points)
     region = region_points(procedure, float(path.progress[-1]))
+    sequence = confidence_sequence(procedure, path.progress, path.total)
     return {
         "axis": "exposure" if procedure.family.has_exposure else "sample_number",
         "thresholds": optional(ThresholdsOut, procedure.thresholds),
-        "points": [_path_point(procedure, path, i) for i in range(len(path.sequence))],
+        "points": [_path_point(procedure, path, sequence, i) for i in range(len(path.sequence))],
         "region": [_region_point(procedure, point) for point in region],
     }
 
@@ -250,13 +263,15 @@ def csv_columns(family: Family) -> list[str]:
     return ["sequence", *family.fields, "unit", "observed_at", "received_at", "submitted_by", "counted"]
 
 
-def _path_point(procedure: Procedure, path: Path, index: int) -> PathPointOut:
+def _path_point(procedure: Procedure, path: Path, sequence: ConfidenceSequence | None, index: int) -> PathPointOut:
     return PathPointOut(
         sequence=int(path.sequence[index]),
         sample_number=int(path.sample_number[index]),
         exposure=float(path.progress[index]) if procedure.family.has_exposure else None,
         total=total_of(procedure.family, float(path.total[index])),
         log_likelihood_ratio=float(path.log_likelihood_ratio[index]),
+        always_valid_p_value=always_valid_p_value(procedure, float(path.log_likelihood_ratio[index])),
+        confidence_sequence=ConfidenceOut.of(sequence, index),
     )
 
 

@@ -31,6 +31,7 @@ OUTLOOK: dict[str, Any] = {
         }
     ],
     "error_bound": 1e-12,
+    "reason": None,
 }
 
 
@@ -102,6 +103,7 @@ class OutlookOut(Answer):
     estimate: float | None = Field(description="Maximum likelihood, from the observations so far.")
     expected: list[ExpectedOut]
     error_bound: float
+    reason: str | None = Field(description="Why nothing is expected of a test that goes on; null for others.")
 
     @classmethod
     def of(cls, outlook: Outlook, state: State) -> "OutlookOut":
@@ -115,4 +117,5 @@ class OutlookOut(Answer):
             estimate=outlook.estimate,
             expected=[ExpectedOut.of(expected) for expected in outlook.expected],
             error_bound=outlook.error_bound,
+            reason=outlook.reason,
         )

@@ -37,6 +37,16 @@ EXAMPLES: list[dict[str, Any]] = [
         **RISKS,
         "known": {"exposure_ratio": 2.0},
     },
+    {
+        "name": "shim-any-spread",
+        "family": "normal",
+        "statistic": "invariant",
+        "h0": 0.0,
+        "h1": 0.5,
+        **RISKS,
+        "known": {"reference": 10.0},
+    },
+    {"name": "bore-spread", "family": "normal_variance", "h0": 0.01, "h1": 0.02, **RISKS},
     {"name": "own-model", "family": "score", **RISKS, "boundaries": "strict"},
 ]
 
@@ -112,12 +122,12 @@ class PlanContentForm(Form):
     boundaries: str | None = Field(
         None,
         description="wald, strict, calibrated, given or table; when left out wald, for generalised plans calibrated, "
-        "for mixture plans strict.",
+        "for mixture plans strict. Those of invariant plans are calibrated by simulation.",
     )
     table: Annotated[list[RowForm], Field(max_length=2000)] | None = Field(None, description='With "table" boundaries.')
     standard: Text | None = Field(None, description="The name of a standard plan; see GET /v1/standard-plans.")
     scale: Number | None = Field(None, description="With a reliability standard: the lower test mean life.")
-    statistic: str | None = Field(None, description="simple (when left out), generalised or mixture.")
+    statistic: str | None = Field(None, description="simple (when left out), generalised, mixture or invariant.")
     sides: Whole | None = Field(None, description="2: H0 is h0 alone, against both sides of it. 1 when left out.")
     direction: str | None = Field(None, description="above (when left out) or below: where H1 lies without an h1.")
     thresholds: ThresholdsForm | None = Field(None, description='With "given" boundaries.')
@@ -165,12 +175,18 @@ Row = dict[str, int | float]
 
 
 class AttainedOut(Answer):
-    """The exact risks: P(reject) at h0 and P(accept) at h1; of composite hypotheses the largest, and where."""
+    """P(reject) at h0 and P(accept) at h1, exact or simulated; of composite hypotheses the largest, and where."""
 
     alpha: float
-    beta: float | None = Field(description="Null where the plan states no h1 apart from h0.")
+    beta: float | None = Field(None, description="Null where the plan states no h1 apart from h0.")
     alpha_at: float | None = Field(None, description="Of composite hypotheses: the parameter of H0 with this alpha.")
     beta_at: float | None = Field(None, description="Of composite hypotheses: the parameter of H1 with this beta.")
+    alpha_standard_error: float | None = Field(None, description="Of simulated risks: the standard error of alpha.")
+    beta_standard_error: float | None = None
+    alpha_limit: float | None = Field(None, description="Of calibrated invariant plans: alpha's upper limit.")
+    beta_limit: float | None = None
+    confidence: float | None = Field(None, description="One-sided, of each of the two limits.")
+    seed: int | None = Field(None, description="Of the simulation that found them.")
 
 
 class PlanOut(Answer):
@@ -198,7 +214,8 @@ class PlanOut(Answer):
     scale: float | None
     source: str | None = Field(description="Where the standard stands.")
     attained: AttainedOut | None = Field(
-        description="Exact risks, for calibrated boundaries and tables; for score the bounds that hold for every model."
+        description="Exact risks, for calibrated boundaries and tables; simulated ones for calibrated invariant plans; "
+        "for score the bounds that hold for every model."
     )
     fingerprint: str
     created_at: datetime

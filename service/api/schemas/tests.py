@@ -1,5 +1,6 @@
 """Tests and their state."""
 
+import math
 from datetime import datetime
 from typing import Annotated, Any
 
@@ -7,6 +8,7 @@ from pydantic import ConfigDict, Field
 
 from service.api.schemas.common import Answer, Form, Name, Text, optional, shown_as
 from service.api.schemas.plans import ThresholdsOut
+from service.domain.anytime import ConfidenceSequence, always_valid_p_value, confidence_at
 from service.domain.families import Family
 from service.domain.families.base import Way
 from service.domain.observing import direction_of_rejection
@@ -30,6 +32,8 @@ STATE: dict[str, Any] = {
     "decision": "accept",
     "log_likelihood_ratio": -2.2874443153037967,
     "thresholds": {"accept": -2.251291798606495, "reject": 2.8903717578961645},
+    "always_valid_p_value": 1.0,
+    "confidence_sequence": None,
     "sample_number": 24,
     "observations": 24,
     "exposure": None,
@@ -90,6 +94,23 @@ class DecidedOut(Answer):
     direction: str | None = Field(description="Of a two-sided plan's rejection: above or below h0; null for others.")
 
 
+class ConfidenceOut(Answer):
+    """Limits of the parameter at this moment; null where they are those of its range at infinity."""
+
+    level: float
+    lower: float | None
+    upper: float | None
+
+    @classmethod
+    def of(cls, sequence: ConfidenceSequence | None, index: int) -> "ConfidenceOut | None":
+        """From one point of the domain's confidence sequence."""
+        if sequence is None:
+            return None
+        lower, upper = float(sequence.lower[index]), float(sequence.upper[index])
+        ends = (end if math.isfinite(end) else None for end in (lower, upper))
+        return cls(**dict(zip(("lower", "upper"), ends, strict=True)), level=sequence.level)
+
+
 class WaysOut(Answer):
     """The shortest way to each decision in words; null where there is none."""
 
@@ -116,6 +137,13 @@ class TestOut(Answer):
     decision: str
     log_likelihood_ratio: float
     thresholds: ThresholdsOut | None
+    always_valid_p_value: float | None = Field(
+        description="For any moment: under H0 it is ever at or below a with probability at most a. Null for "
+        "generalised plans."
+    )
+    confidence_sequence: ConfidenceOut | None = Field(
+        description="Limits that hold at all moments together; null for plans without a prior."
+    )
     sample_number: int
     observations: int = Field(description="Observations counted so far, whatever each of them adds.")
     exposure: float | None
@@ -177,6 +205,8 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "decision": state.decision,
         "log_likelihood_ratio": state.log_likelihood_ratio,
         "thresholds": optional(ThresholdsOut, procedure.thresholds),
+        "always_valid_p_value": always_valid_p_value(procedure, state.log_likelihood_ratio),
+        "confidence_sequence": ConfidenceOut.of(confidence_at(procedure, state), 0),
         "sample_number": state.sample_number,
         "observations": state.sequence - state.overrun,
         "exposure": state.exposure.value if procedure.family.has_exposure else None,

@@ -20,7 +20,7 @@ from service.sequential.exact.characteristics import Characteristics
 from service.sequential.fixed_sample import FixedSample
 from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import Region, Span
+from service.sequential.region import Limits, Region, Span
 
 # Magnitudes beyond these say that a field was misread; they also keep every product far from overflow.
 LARGEST_REAL = 1e100
@@ -36,11 +36,18 @@ Document = Mapping[str, Any]
 
 @dataclass(frozen=True)
 class Start:
-    """A point of the region from which sampling goes on, with the sums that a family carries."""
+    """
+    A point of the region from which sampling goes on.
+
+    Attributes:
+        carried: The sums that a family carries, each rounded to a double.
+        rest: What the rounding of each left out.
+    """
 
     progress: float = 0.0
     total: float = 0.0
     carried: tuple[float, ...] = ()
+    rest: tuple[float, ...] = ()
 
 
 ORIGIN = Start()
@@ -144,6 +151,9 @@ class Family(ABC):
         no_unbiased_estimate: Why the parameter has no unbiased estimate, where it has none.
         no_inference: Why nothing is said after the decision, where the family does not follow outcomes.
         no_bias: Why the bias of the maximum-likelihood estimate is not given, where it is not.
+        may_know: Names of what a plan may state in `known` beside that.
+        is_invariant: The region runs over the log-likelihood ratio itself, and figures are simulated.
+        fewest_units: The smallest sample number at which a plan may be truncated.
     """
 
     name: ClassVar[str]
@@ -166,6 +176,9 @@ class Family(ABC):
     no_unbiased_estimate: ClassVar[str | None] = None
     no_inference: ClassVar[str] = "Inference after the decision is not served for this family."
     no_bias: ClassVar[str | None] = None
+    may_know: ClassVar[tuple[str, ...]] = ()
+    is_invariant: ClassVar[bool] = False
+    fewest_units: ClassVar[int] = 1
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -199,6 +212,23 @@ class Family(ABC):
         """
         raise TypeError(f"{self.name} adds up progress and total themselves")
 
+    def displayed(self, sums: Sequence[Double], total: Double, known: Mapping[str, float]) -> Double:
+        """The total as people know it, where the region runs over something else; arguments as for `place`."""
+        return total
+
+    def drawn(self, region: Region, progress: FloatArray, known: Mapping[str, float]) -> Limits:
+        """The region's limits of what is shown, where no total lies beyond them infinite; array of shape (points,)."""
+        return region.limits(progress)
+
+    def idle_units(self, start: Start) -> int:
+        """Units still to come of which the region sees nothing; a truncation counts them."""
+        return 0
+
+    def truncation_rule(self, sample_number: float) -> str | None:
+        """The rule that a truncation by sample number breaks."""
+        few = self.fewest_units
+        return f"must be at least {few}: no earlier sample could decide" if sample_number < few else None
+
     def deviance(self, known: Mapping[str, float]) -> Deviance:
         """How far observations lie from a parameter, for families with composite hypotheses."""
         raise TypeError(f"{self.name} has no composite hypotheses")
@@ -219,7 +249,7 @@ class Family(ABC):
         return parameter
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
-        """The parameter with this mean of the total in one unit of progress."""
+        """The parameter with this mean of the total in one unit of progress; either may lie at infinity."""
         return mean
 
     def known_rule(self, name: str, value: float) -> str | None:

@@ -150,6 +150,8 @@ def _with_at_most(units: int, nonconforming: float) -> str:
     """Units to come of which few enough are nonconforming."""
     if nonconforming == 0:
         return plural(units, "conforming unit")
+    if nonconforming >= units:
+        return f"{plural(units, 'unit')}, whatever they show"
     return f"{plural(units, 'unit')} with at most {nonconforming:.0f} nonconforming"
 
 

@@ -7,6 +7,7 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.families.base import (
+    LARGEST_EXPONENT,
     LARGEST_REAL,
     ORIGIN,
     Column,
@@ -50,7 +51,7 @@ class Lognormal(Normal):
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
-        return math.exp(min(max(mean, -math.log(LARGEST_REAL)), math.log(LARGEST_REAL)))
+        return math.exp(mean) if mean < LARGEST_EXPONENT else math.inf
 
     def exact(
         self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN

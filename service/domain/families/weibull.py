@@ -8,6 +8,7 @@ from typing import ClassVar
 import numpy as np
 
 from service.domain.families.base import (
+    LARGEST_EXPONENT,
     LARGEST_REAL,
     ORIGIN,
     Column,
@@ -70,10 +71,10 @@ class Weibull(Exponential):
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
-        if mean == 0.0 or math.isinf(mean):
-            return 0.0 if mean else math.inf
-        logarithm = math.log(known["life"]) - math.log(max(mean, 1.0 / LARGEST_REAL)) / known["shape"]
-        return math.exp(min(max(logarithm, -math.log(LARGEST_REAL)), math.log(LARGEST_REAL)))
+        if mean == 0.0:
+            return math.inf
+        logarithm = math.log(known["life"]) - math.log(mean) / known["shape"]
+        return math.exp(logarithm) if logarithm < LARGEST_EXPONENT else math.inf
 
     def exact(
         self, region: Region, parameters: FloatArray, known: Mapping[str, float], start: Start = ORIGIN

@@ -1,11 +1,12 @@
 """
 Whether values have the shape, or the spread, that the family supposes.
 
-Quantity: the standard deviation against the known one; Shapiro and Wilk's W for normal measurements; the cumulative
-total time on test for lives without ageing; the centre of the failures along the unit-time.
-Method: the chi-squared distribution of the sum of squares; scipy.stats.shapiro, of at most 5,000 values evenly spaced
-through the stream; for the other two the mean of independent uniform numbers (Bates), in fractions for up to 100 of
-them and by the normal distribution for more.
+Quantity: the standard deviation against the known one, or of two arms against each other; Shapiro and Wilk's W for
+normal measurements; the cumulative total time on test for lives without ageing; the centre of the failures along the
+unit-time.
+Method: the chi-squared distribution of the sum of squares, the F distribution of the ratio of two; scipy.stats.shapiro,
+of at most 5,000 values evenly spaced through the stream; for the other two the mean of independent uniform numbers
+(Bates), in fractions for up to 100 of them and by the normal distribution for more.
 Accuracy: spread and uniform means to rounding, beyond 100 numbers to 3e-4; the total time on test is exact while
 nothing is suspended and close to it otherwise, which the tests simulate.
 Cost: O(n log n) time.
@@ -19,7 +20,7 @@ import math
 from fractions import Fraction
 
 import numpy as np
-from scipy.special import chdtr, chdtrc, ndtr
+from scipy.special import chdtr, chdtrc, fdtr, fdtrc, ndtr
 
 from service.sequential.checks.finding import Finding, Lacking, too_few, two_sided
 from service.sequential.checks.order import standardised
@@ -51,6 +52,24 @@ def spread(values: FloatArray, sigma: float, noun: str, averages: int = 1) -> Fi
     squares = freedom * float(np.square(np.float64(min(ratio, 1e150))))
     p_value = two_sided(float(chdtr(freedom, squares)), float(chdtrc(freedom, squares)))
     return Finding(ratio, 1.0, p_value)
+
+
+def equal_spread(a: FloatArray, b: FloatArray) -> Finding | Lacking:
+    """
+    The standard deviation of b divided by that of a; 1 is expected.
+
+    Args:
+        a, b: Arrays of shape (n,), each with a length of its own.
+    """
+    fewest = min(len(a), len(b))
+    if fewest < LEAST_FOR_SPREAD:
+        return too_few(LEAST_FOR_SPREAD, "measurements in each arm", fewest)
+    of_a, of_b = standard_deviation(a), standard_deviation(b)
+    if of_a == 0.0:
+        return Lacking("all measurements in a are the same")
+    ratio = min(of_b / of_a, 1e150)
+    freedom = len(b) - 1.0, len(a) - 1.0
+    return Finding(ratio, 1.0, two_sided(float(fdtr(*freedom, ratio**2)), float(fdtrc(*freedom, ratio**2))))
 
 
 def standard_deviation(values: FloatArray) -> float:
