@@ -204,7 +204,7 @@ def test_one_measurement(admin: httpx.Client, new_name: Namer) -> None:
         (SCRATCH, {"values": [0, 3, 2, 4]}),
         (RATCHET, {"values": [10.3, 9.6, 10.4, 9.2, 9.4, 9.9, 10.4, 9.8]}),
         ({**WELD, **BELOW, "truncation": {"exposure": 6.0}}, {"values": [0, 1, 0, 0, 0, 0]}),
-        ({**PUMP, **BELOW, "direction": "above", "truncation": {"exposure": 5000.0}}, {"values": [300.0, 700.0, 1400.0]}),
+        ({**PUMP, **BELOW, "direction": "above", "truncation": {"exposure": 5000.0}}, {"values": [900.0, 2500.0]}),
         ({"standard": "40-CFR-1068/A-2-AA"}, {"values": [0, 1, 0, 0, 1, 0, 0]}),
     ],
 )
@@ -276,14 +276,25 @@ def test_every_family_speaks_of_its_own_parameter(
         assert (figure is None) <= (name in found["reasons"]), name
 
 
-def test_evidence_without_a_model_has_no_inference(admin: httpx.Client, new_name: Namer) -> None:
-    key = with_test(admin, new_name, {"family": "score", "alpha": 0.05, "beta": 0.1, "boundaries": "strict"})
+@pytest.mark.parametrize(
+    ("plan", "words"),
+    [
+        ({"family": "score", "boundaries": "strict"}, "no model of the observations"),
+        ({"family": "normal_variance", "h0": 1.0, "h1": 2.0, "known": {"mean": 0.0}}, "Squares are not followed"),
+        ({"family": "normal", "statistic": "invariant", "h0": 0.0, "h1": 1.0}, "invariant statistic"),
+    ],
+)
+def test_where_nothing_can_be_said_the_reason_is(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], words: str
+) -> None:
+    key = with_test(admin, new_name, {**plan, "alpha": 0.05, "beta": 0.1})
     assert admin.get(f"/v1/tests/{key}/inference").status_code == 409
-    admin.post(f"/v1/tests/{key}/observations", json={"values": [9.0]}).raise_for_status()
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [9.0, 9.1, 8.9, 9.0] * 4}).raise_for_status()
     answer = admin.get(f"/v1/tests/{key}/inference")
     assert (answer.status_code, pointers(answer)) == (422, [])
     assert answer.json()["type"].endswith(":invalid-question")
-    assert "no model of the observations" in answer.json()["detail"]
+    assert words in answer.json()["detail"]
+    assert "the plan's risks" in answer.json()["detail"]
 
 
 def test_a_long_log_of_uneven_exposures_is_read_to_its_end(admin: httpx.Client, new_name: Namer) -> None:
