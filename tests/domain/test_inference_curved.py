@@ -14,6 +14,7 @@ from scipy.integrate import simpson
 from scipy.stats import norm
 
 from service.domain.checking import checked_content
+from service.domain.errors import InvalidPlan
 from service.domain.families import base
 from service.domain.inference import Inference, Looks, inference_at, inference_of, meanings_of
 from service.domain.observing import observe
@@ -417,3 +418,14 @@ def test_the_words_say_what_the_figures_of_such_plans_mean() -> None:
     furthest = of_units("two-sided").ordered[0].inference
     assert "towards a larger proportion nonconforming" in furthest.reasons["upper"]
     assert "H1" not in str(furthest.reasons)
+
+
+@pytest.mark.parametrize("statistic", ["generalised", "mixture"])
+def test_two_sides_cannot_be_truncated_by_failures(statistic: str) -> None:
+    """Reaching the exposure with fewer failures would reject, however well they fit H0."""
+    plan = {**LIVES["two-sided"], "truncation": {"exposure": 600.0, "failures": 20}, "statistic": statistic}
+    if statistic == "mixture":
+        plan["known"] = {"prior": {"shape": 1.0, "rate": 100.0}}
+    with pytest.raises(InvalidPlan) as refused:
+        checked_content(plan)
+    assert [fault.pointer for fault in refused.value.faults] == ["/truncation/failures"]
