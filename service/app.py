@@ -20,6 +20,7 @@ from service.api.routes import (
     characteristics,
     events,
     health,
+    history,
     inference,
     observations,
     plans,
@@ -133,7 +134,18 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, characteristics, simulations, tests, observations, inference, events, administration, health):
+    for module in (
+        plans,
+        characteristics,
+        simulations,
+        tests,
+        observations,
+        inference,
+        history,
+        events,
+        administration,
+        health,
+    ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]

@@ -19,9 +19,9 @@ Cursor = Annotated[
 ]
 
 
-def encoded(after: str | int) -> str:
+def encoded(*after: str | int) -> str:
     """A cursor that stands for the last row of a page."""
-    return base64.urlsafe_b64encode(json.dumps([after]).encode()).decode().rstrip("=")
+    return base64.urlsafe_b64encode(json.dumps(after).encode()).decode().rstrip("=")
 
 
 def text_after(cursor: str | None) -> str | None:
@@ -31,7 +31,7 @@ def text_after(cursor: str | None) -> str | None:
     Raises:
         RequestProblem: The cursor is none of ours.
     """
-    after = _decoded(cursor) if cursor is not None else None
+    (after,) = _decoded(cursor, 1) if cursor is not None else (None,)
     if after is not None and not (isinstance(after, str) and is_name(after)):
         raise _bad(cursor)
     return after
@@ -44,10 +44,19 @@ def number_after(cursor: str | None) -> int:
     Raises:
         RequestProblem: The cursor is none of ours.
     """
-    after = _decoded(cursor) if cursor is not None else 0
-    if not isinstance(after, int) or isinstance(after, bool) or not 0 <= after < 2**63:
-        raise _bad(cursor)
+    (after,) = _numbers(cursor, 1)
     return after
+
+
+def numbers_after(cursor: str | None) -> tuple[int, int]:
+    """
+    The two numbers after which the page begins; zeros without a cursor.
+
+    Raises:
+        RequestProblem: The cursor is none of ours.
+    """
+    first, second = _numbers(cursor, 2)
+    return first, second
 
 
 def link_next(request: Request, response: Response, next_cursor: str | None) -> None:
@@ -58,12 +67,24 @@ def link_next(request: Request, response: Response, next_cursor: str | None) -> 
     response.headers["Link"] = f'<{quote(str(url), safe=":/?&=%+,;@!$()*~-._[]")}>; rel="next"'
 
 
-def _decoded(cursor: str) -> object:
+def _numbers(cursor: str | None, count: int) -> list[int]:
+    if cursor is None:
+        return [0] * count
+    numbers = [each for each in _decoded(cursor, count) if isinstance(each, int) and not isinstance(each, bool)]
+    if len(numbers) != count or not all(0 <= number < 2**63 for number in numbers):
+        raise _bad(cursor)
+    return numbers
+
+
+def _decoded(cursor: str, count: int) -> list[object]:
+    """The parts of a cursor, of which there are so many."""
     try:
         padded = cursor.encode("ascii") + b"=" * (-len(cursor) % 4)
-        (after,) = json.loads(base64.b64decode(padded, altchars=b"-_", validate=True))
+        after = json.loads(base64.b64decode(padded, altchars=b"-_", validate=True))
     except (ValueError, TypeError, binascii.Error, UnicodeError, RecursionError):
         raise _bad(cursor) from None
+    if not isinstance(after, list) or len(after) != count:
+        raise _bad(cursor)
     return after
 
 

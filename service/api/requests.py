@@ -6,14 +6,20 @@ It stands outside of everything else, so that the answer to an unexpected error 
 
 import logging
 import uuid
+from typing import cast
 
 from starlette.datastructures import MutableHeaders
-from starlette.requests import ClientDisconnect
+from starlette.requests import ClientDisconnect, Request
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service.api.problems import response
 
 logger = logging.getLogger(__name__)
+
+
+def request_id_of(request: Request) -> str:
+    """The id that the answer to this request will carry."""
+    return cast("str", request.state.request_id)
 
 
 class RequestId:

@@ -6,7 +6,7 @@ from typing import Annotated
 
 import typer
 
-from service.cli import copying, demo, design, keys, load, migrate, serve
+from service.cli import copying, demo, design, keys, load, migrate, serve, verify
 
 app = typer.Typer(
     name="sprt-monitor",
@@ -39,6 +39,7 @@ app.command("migrate")(migrate.migrate)
 app.command("backup")(copying.backup)
 app.command("copy")(copying.copy)
 app.command("load")(load.load)
+app.command("verify")(verify.verify)
 app.add_typer(keys.app, name="keys")
 
 

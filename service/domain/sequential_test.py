@@ -5,6 +5,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from enum import StrEnum
 
+from service.domain.chain import EMPTY, Head
 from service.domain.state import State
 
 
@@ -35,7 +36,7 @@ class SequentialTest:
     """
     A registered test and where it stands. `version` counts the writes to it, registration being the first.
 
-    The plan is named, not held: plans are immutable and shared.
+    The plan is named, not held: plans are immutable and shared. `history` is the end of the test's chain of acts.
     """
 
     key: str
@@ -48,6 +49,7 @@ class SequentialTest:
     registered_by: str
     updated_at: datetime
     state: State
+    history: Head = EMPTY
 
 
 @dataclass(frozen=True)
@@ -59,6 +61,8 @@ class Submission:
         body: The JSON text as posted.
         body_digest: SHA-256 of the posted bytes, hexadecimal.
         version: The version of the test after this submission.
+        request_id: Of the HTTP request that brought it.
+        number, link: Its place in the history of the test (see `chain`).
     """
 
     test: str
@@ -71,3 +75,11 @@ class Submission:
     idempotency_key: str | None
     version: int
     state: State
+    request_id: str | None = None
+    number: int = 0
+    link: str = ""
+
+    @property
+    def head(self) -> Head:
+        """The end of the test's history while this is its last act."""
+        return Head(self.number, self.link)

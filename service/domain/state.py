@@ -48,6 +48,7 @@ class State:
         decision: The answer; accept and reject are final.
         decided: The moment of the decision, once there is one.
         overrun: Observations received after the decision: kept, never counted.
+        voided: Observations that a correction took out, before or after the decision: kept, never counted.
     """
 
     sequence: int = 0
@@ -59,6 +60,12 @@ class State:
     decided: Decided | None = None
     overrun: int = 0
     carried: tuple[Sum, ...] = ()
+    voided: int = 0
+
+    @property
+    def counted(self) -> int:
+        """Observations that the evidence stands on."""
+        return self.sequence - self.overrun - self.voided
 
     @property
     def is_decided(self) -> bool:

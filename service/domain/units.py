@@ -36,6 +36,11 @@ def new_units(document: Mapping[str, Any], first_sequence: int, find_known: Find
     return {unit: first_sequence + position for unit, position in positions}
 
 
+def units_of(document: Mapping[str, Any], first_sequence: int) -> dict[str, int]:
+    """The units of a submission with their sequences, as they were counted."""
+    return {unit: first_sequence + position for unit, position in _positions_of_units(document)}
+
+
 def _positions_of_units(document: Mapping[str, Any]) -> list[tuple[str, int]]:
     observations = document.get("observations", ())
     return [(observation["unit"].strip(), i) for i, observation in enumerate(observations) if "unit" in observation]

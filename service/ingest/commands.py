@@ -1,4 +1,8 @@
-"""What may be asked to be written, and what comes back once it is."""
+"""
+What may be asked to be written, and what comes back once it is.
+
+`actor` and `request_id` go into the history: whose access key it was, and which HTTP request, None without one.
+"""
 
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -21,6 +25,7 @@ class CreatePlan:
     name: str
     document: str
     actor: str
+    request_id: str | None = None
 
 
 @dataclass(frozen=True)
@@ -38,6 +43,7 @@ class RegisterTest:
     labels: Mapping[str, str]
     actor: str
     expected_versions: frozenset[str] | None = None
+    request_id: str | None = None
 
 
 @dataclass(frozen=True)
@@ -58,6 +64,11 @@ class PostObservations:
     actor: str
     idempotency_key: str | None = None
     expected_versions: frozenset[str] | None = None
+    request_id: str | None = None
+
+
+# Who acts on the command line, where no access key says it; no key can be named so.
+COMMAND_LINE = "command line"
 
 
 @dataclass(frozen=True)
@@ -67,6 +78,8 @@ class CreateKey:
     name: str
     role: Role
     expires_at: datetime | None = None
+    actor: str = COMMAND_LINE
+    request_id: str | None = None
 
 
 @dataclass(frozen=True)
@@ -74,6 +87,8 @@ class RevokeKey:
     """End a valid access key, by name."""
 
     name: str
+    actor: str = COMMAND_LINE
+    request_id: str | None = None
 
 
 @dataclass(frozen=True)

@@ -10,6 +10,7 @@ from datetime import datetime
 from functools import partial, singledispatch
 
 from service.domain.access import AccessKey, check_new_key, digest_of
+from service.domain.chain import Act, Entry, bound
 from service.domain.errors import (
     Fault,
     IdempotencyKeyReused,
@@ -22,6 +23,15 @@ from service.domain.errors import (
     UnknownPlan,
     UnknownTest,
     VersionMoved,
+)
+from service.domain.history import (
+    bound_submission,
+    decided,
+    key_created,
+    key_revoked,
+    plan_created,
+    registered,
+    test_registered,
 )
 from service.domain.observing import observe
 from service.domain.plan import Plan, fingerprint_of, stated
@@ -69,6 +79,7 @@ def _(command: CreatePlan, writer: Writer, now: datetime) -> Outcome:
         return StoredPlan(stored, is_new=False)
     plan = Plan(command.name, command.document, fingerprint_of(command.document), now, command.actor)
     writer.add_plan(plan)
+    writer.record(plan_created(plan, command.request_id))
     return StoredPlan(plan, is_new=True)
 
 
@@ -95,7 +106,9 @@ def _(command: RegisterTest, writer: Writer, now: datetime) -> Outcome:
         updated_at=now,
         state=State(),
     )
+    test = _recorded(writer, test, registered(test, plan, command.request_id))
     writer.add_test(test)
+    writer.record(test_registered(test, command.request_id))
     return RegisteredTest(test, plan, is_new=True)
 
 
@@ -116,7 +129,11 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
     first_sequence = test.state.sequence + 1
     units = new_units(command.document, first_sequence, partial(writer.known_units, command.test))
     moved = replace(test, version=test.version + 1, updated_at=now, state=state)
-    writer.append(_submission(command, moved, first_sequence), units)
+    submission = bound_submission(test.history, _submission(command, moved, first_sequence))
+    moved = replace(moved, history=submission.head)
+    writer.append(submission, units)
+    if state.decision is not test.state.decision:
+        moved = _recorded(writer, moved, decided(moved, test.state, command.actor, command.request_id, Act.SUBMITTED))
     writer.save(moved)
     return Posted(moved, plan, first_sequence, state.sequence, is_replay=False)
 
@@ -130,6 +147,7 @@ def _(command: CreateKey, writer: Writer, now: datetime) -> Outcome:
     secret = secrets.token_urlsafe(SECRET_BYTES)
     key = AccessKey(secrets.token_hex(8), command.name, command.role, digest_of(secret), now, command.expires_at)
     writer.add_key(key)
+    writer.record(key_created(key, command.actor, command.request_id))
     return IssuedKey(key, secret)
 
 
@@ -139,6 +157,7 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
     if key is None:
         raise UnknownKey(command.name)
     writer.revoke_key(key.id, now)
+    writer.record(key_revoked(key, now, command.actor, command.request_id))
     return replace(key, revoked_at=now)
 
 
@@ -146,6 +165,13 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
 def _(command: Probe, writer: Writer, now: datetime) -> Outcome:  # noqa: ARG001 - a probe has no content and no time
     writer.touch()
     return Written()
+
+
+def _recorded(writer: Writer, test: SequentialTest, entry: Entry) -> SequentialTest:
+    """The test with this act at the end of its history."""
+    placed = bound(test.history, entry)
+    writer.record(placed)
+    return replace(test, history=placed.head)
 
 
 def _check_version(expected: frozenset[str] | None, test: SequentialTest | None) -> None:
@@ -193,4 +219,5 @@ def _submission(command: PostObservations, test: SequentialTest, first_sequence:
         idempotency_key=command.idempotency_key,
         version=test.version,
         state=test.state,
+        request_id=command.request_id,
     )

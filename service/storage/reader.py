@@ -1,6 +1,5 @@
 """Reads, each in a transaction of its own; single rows through `lookups`."""
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, NamedTuple
@@ -9,15 +8,12 @@ from sqlalchemy import Engine, RowMapping, Select, bindparam, func, select
 
 from service.domain.access import AccessKey
 from service.domain.plan import Plan
-from service.domain.sequential_test import SequentialTest, SubjectKind, Submission
+from service.domain.sequential_test import SequentialTest, SubjectKind
 from service.domain.state import Decision
 from service.storage import rows, tables
 from service.storage.engine import answering
+from service.storage.logs import Log
 from service.storage.lookups import Lookups
-
-# A page of the log ends with whichever comes first; a single submission may be larger.
-PAGE_SUBMISSIONS = 200
-PAGE_CHARACTERS = 4_000_000
 
 # Plans that are kept at most.
 MOST_PLANS = 1024
@@ -27,9 +23,6 @@ _PLAN = select(tables.plans).where(tables.plans.c.name == bindparam("name"))
 _TEST = select(tables.tests).where(tables.tests.c.key == bindparam("key"))
 _VERSION = select(tables.tests.c.version).where(tables.tests.c.key == bindparam("key"))
 _LAST_CHANGE = select(func.max(tables.tests.c.change).label("last"))
-
-# No test comes so far.
-NO_END = 2**62
 
 
 @dataclass(frozen=True)
@@ -68,12 +61,13 @@ class Count(NamedTuple):
 
 
 class Reader:
-    """Typed answers from the database; None says that there is no such row."""
+    """Typed answers from the database; None says that there is no such row. `log` reads what a test's log holds."""
 
     def __init__(self, engine: Engine) -> None:
         self._engine = engine
         self._lookups = Lookups(engine)
         self._plans: dict[str, Plan] = {}
+        self.log = Log(self._all)
 
     @property
     def looks_up_at_once(self) -> bool:
@@ -140,59 +134,11 @@ class Reader:
         found = found.where(column.change > after).order_by(column.change).limit(limit)
         return [Change(*row.values()) for row in self._all(found)]
 
-    def submissions(self, test: str, after: int = 0, through: int = NO_END) -> Iterator[Submission]:
-        """
-        The log of a test in order: the submissions that hold its observations after `after` and up to `through`.
-
-        Give as `through` the sequence of a test that was read before, for more may have been posted since.
-        """
-        for row in self._log(select(tables.submissions), test, after, through):
-            yield rows.submission_of(row)
-
-    def bodies(self, test: str, after: int = 0, through: int = NO_END) -> Iterator[tuple[int, str]]:
-        """The first sequence and the body of the same submissions, for work that needs no more of them."""
-        log = tables.submissions.c
-        for row in self._log(select(log.first_sequence, log.last_sequence, log.body), test, after, through):
-            yield row["first_sequence"], row["body"]
-
-    def _log(self, found: Select[Any], test: str, after: int, through: int) -> Iterator[RowMapping]:
-        log = tables.submissions.c
-        first = self._first_around(test, after)
-        while (last := self._last_of_page(test, first, through)) is not None:
-            page = found.where(log.test == test, log.first_sequence.between(first, last))
-            yield from (row for row in self._all(page.order_by(log.first_sequence)) if row["last_sequence"] > after)
-            first = last + 1
-
-    def _first_around(self, test: str, after: int) -> int:
-        """The first sequence of the submission that holds the observation after `after`, found by the index alone."""
-        log = tables.submissions.c
-        row = self._first(
-            select(func.max(log.first_sequence).label("first")).where(log.test == test, log.first_sequence <= after + 1)
-        )
-        return (row["first"] if row is not None else None) or 1
-
-    def _last_of_page(self, test: str, first: int, through: int) -> int | None:
-        """The last sequence of the next submissions that are together small enough to hold; None without any."""
-        log = tables.submissions.c
-        weighed = select(log.last_sequence, func.length(log.body).label("weight"))
-        within = weighed.where(log.test == test, log.first_sequence.between(first, through))
-        last, total = None, 0
-        for row in self._all(within.order_by(log.first_sequence).limit(PAGE_SUBMISSIONS)):
-            total += row["weight"]
-            if last is not None and total > PAGE_CHARACTERS:
-                break
-            last = row["last_sequence"]
-        return last
-
     def counts(self) -> list[Count]:
         """How many tests there are of each kind, status and decision."""
         by = (tables.tests.c.subject_kind, tables.tests.c.status, tables.tests.c.decision)
         with answering(), self._engine.connect() as connection:
             return [Count(*row) for row in connection.execute(select(*by, func.count()).group_by(*by))]
-
-    def _first(self, found: Select[Any]) -> RowMapping | None:
-        with answering(), self._engine.connect() as connection:
-            return connection.execute(found).mappings().first()
 
     def _all(self, found: Select[Any]) -> list[RowMapping]:
         with answering(), self._engine.connect() as connection:

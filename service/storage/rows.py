@@ -6,6 +6,7 @@ from typing import Any
 from sqlalchemy import RowMapping
 
 from service.domain.access import AccessKey, Role
+from service.domain.chain import Act, Entry, Head, json_of
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
@@ -31,6 +32,7 @@ def row_of_state(state: State) -> Row:
         "decided_at": decided.at if decided else None,
         "decided_cause": decided.cause.value if decided else None,
         "overrun": state.overrun,
+        "voided": state.voided,
         "carried": json.dumps([[number.high, number.low] for number in state.carried]) if state.carried else None,
     }
 
@@ -47,6 +49,7 @@ def state_of(row: RowMapping) -> State:
         decided=_decided_of(row),
         overrun=row["overrun"],
         carried=tuple(Sum(high, low) for high, low in json.loads(row["carried"] or "[]")),
+        voided=row["voided"],
     )
 
 
@@ -63,6 +66,7 @@ def row_of_test(test: SequentialTest) -> Row:
         "registered_at": test.registered_at,
         "registered_by": test.registered_by,
         "updated_at": test.updated_at,
+        **row_of_head(test.history),
         **row_of_state(test.state),
     }
 
@@ -80,6 +84,7 @@ def test_of(row: RowMapping) -> SequentialTest:
         registered_by=row["registered_by"],
         updated_at=row["updated_at"],
         state=state_of(row),
+        history=head_of(row),
     )
 
 
@@ -95,6 +100,9 @@ def row_of_submission(submission: Submission) -> Row:
         "actor": submission.actor,
         "idempotency_key": submission.idempotency_key,
         "version": submission.version,
+        "request_id": submission.request_id,
+        "number": submission.number,
+        "link": submission.link,
         **row_of_state(submission.state),
     }
 
@@ -112,7 +120,39 @@ def submission_of(row: RowMapping) -> Submission:
         idempotency_key=row["idempotency_key"],
         version=row["version"],
         state=state_of(row),
+        request_id=row["request_id"],
+        number=row["number"],
+        link=row["link"],
     )
+
+
+def row_of_head(head: Head) -> Row:
+    """The columns of the end of a chain."""
+    return {"history_length": head.length, "history_link": head.link}
+
+
+def head_of(row: RowMapping) -> Head:
+    """The end of the chain in a row."""
+    return Head(row["history_length"], row["history_link"])
+
+
+def row_of_entry(entry: Entry) -> Row:
+    """A row of history."""
+    return {
+        "chain": entry.chain,
+        "number": entry.number,
+        "link": entry.link,
+        "act": entry.act.value,
+        "at": entry.at,
+        "actor": entry.actor,
+        "request_id": entry.request_id,
+        "details": json_of(entry.details),
+    }
+
+
+def entry_of(row: RowMapping) -> Entry:
+    """The act in a row of history."""
+    return Entry(**{**row, "act": Act(row["act"]), "details": json.loads(row["details"])})
 
 
 def row_of_plan(plan: Plan) -> Row:

@@ -86,8 +86,25 @@ def _state_columns() -> list[Column[Any] | CheckConstraint]:
         Column("decided_cause", String(10)),
         Column("overrun", BigInteger, nullable=False),
         Column("carried", Text),
+        Column("voided", BigInteger, nullable=False, server_default="0"),
         CheckConstraint("decision IN ('continue', 'accept', 'reject')", name="decision"),
         CheckConstraint("decided_cause IN ('boundary', 'truncation')", name="decided_cause"),
+    ]
+
+
+def _head_columns() -> list[Column[Any]]:
+    """The end of a chain of acts."""
+    return [
+        Column("history_length", BigInteger, nullable=False, server_default="0"),
+        Column("history_link", String(64), nullable=False, server_default=""),
+    ]
+
+
+def _place_columns() -> list[Column[Any]]:
+    """The place of an act in its chain."""
+    return [
+        Column("number", BigInteger, nullable=False, server_default="0"),
+        Column("link", String(64), nullable=False, server_default=""),
     ]
 
 
@@ -140,6 +157,7 @@ tests = Table(
     *_state_columns(),
     # Of the last write to the test; in the order in which writes became visible. Zero until the writer numbers it.
     Column("change", BigInteger, nullable=False, server_default="0"),
+    *_head_columns(),
     PrimaryKeyConstraint("key"),
     ForeignKeyConstraint(["plan"], ["plans.name"]),
     CheckConstraint("subject_kind IN ('lot', 'experiment')", name="subject_kind"),
@@ -177,6 +195,9 @@ submissions = Table(
     Column("idempotency_key", String(255)),
     Column("version", BigInteger, nullable=False),
     *_state_columns(),
+    Column("request_id", String(64)),
+    # Its place in the history of its test.
+    *_place_columns(),
     PrimaryKeyConstraint("test", "first_sequence"),
     ForeignKeyConstraint(["test"], ["tests.key"]),
     UniqueConstraint("test", "idempotency_key"),
@@ -193,4 +214,28 @@ units = Table(
     PrimaryKeyConstraint("test", "unit"),
     ForeignKeyConstraint(["test"], ["tests.key"]),
     sqlite_with_rowid=False,
+)
+
+# The acts that have no table of their own. The chain is the key of a test, or empty for what belongs to none.
+history = Table(
+    "history",
+    metadata,
+    Column("chain", KEY, nullable=False),
+    *_place_columns(),
+    Column("act", String(20), nullable=False),
+    Column("at", UtcTime, nullable=False),
+    Column("actor", String(100), nullable=False),
+    Column("request_id", String(64)),
+    Column("details", Text, nullable=False),
+    PrimaryKeyConstraint("chain", "number"),
+    sqlite_with_rowid=False,
+)
+
+# The ends of the chains that belong to no test.
+chains = Table(
+    "chains",
+    metadata,
+    Column("chain", KEY, nullable=False),
+    *_head_columns(),
+    PrimaryKeyConstraint("chain"),
 )

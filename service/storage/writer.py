@@ -30,6 +30,7 @@ from sqlalchemy import (
 )
 
 from service.domain.access import AccessKey
+from service.domain.chain import EMPTY, SERVICE, Entry, bound
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Submission
 from service.storage import rows, tables
@@ -57,6 +58,7 @@ _REPEATED = select(tables.submissions).where(
 _UNITS = select(tables.units.c.unit, tables.units.c.sequence).where(
     tables.units.c.test == bindparam("test"), tables.units.c.unit.in_(bindparam("units", expanding=True))
 )
+_SERVICE_HEAD = select(tables.chains).where(tables.chains.c.chain == SERVICE).with_for_update()
 _LAST_CHANGE = select(func.max(tables.tests.c.change))
 _SAVE = update(tables.tests).where(tables.tests.c.key == bindparam("which"))
 
@@ -75,6 +77,8 @@ class Writer:
         self._repeated: dict[Pair, Submission | None] = {}
         self._appended: list[Submission] = []
         self._units: dict[str, dict[str, int]] = {}
+        self._recorded: list[Entry] = []
+        self._recorded_of_service: list[Entry] = []
 
     def expect(self, tests: Iterable[str], idempotency_keys: Iterable[Pair]) -> None:
         """
@@ -150,6 +154,10 @@ class Writer:
         if units:
             self._units.setdefault(submission.test, {}).update(units)
 
+    def record(self, entry: Entry) -> None:
+        """An act: one of a test in its place already; one of the service gets its place when all is written."""
+        (self._recorded if entry.chain else self._recorded_of_service).append(entry)
+
     def save(self, test: SequentialTest) -> None:
         """The test's status, version, time and state, as they are now."""
         self._tests[test.key] = test
@@ -168,6 +176,8 @@ class Writer:
             for unit, at in known.items()
         ]
         self._many(insert(tables.units), units)
+        self._many(insert(tables.history), [rows.row_of_entry(entry) for entry in self._recorded])
+        self._extend_history_of_service()
         moved = [self._tests[key] for key in sorted(self._saved)]
         added = sorted(self._added - self._saved)
         first = self._next_change() if moved or added else 0
@@ -181,12 +191,30 @@ class Writer:
                     "status": test.status.value,
                     "version": test.version,
                     "updated_at": test.updated_at,
+                    **rows.row_of_head(test.history),
                     **rows.row_of_state(test.state),
                 }
                 for number, test in enumerate(moved, first + len(added))
             ],
         )
-        self._appended, self._saved, self._added, self._units = [], set(), set(), {}
+        self._appended, self._saved, self._added, self._units, self._recorded = [], set(), set(), {}, []
+
+    def _extend_history_of_service(self) -> None:
+        """Bind the acts that belong to no test; the end of their chain is locked until the transaction ends."""
+        if not self._recorded_of_service:
+            return
+        row = self._connection.execute(_SERVICE_HEAD).mappings().first()
+        head = EMPTY if row is None else rows.head_of(row)
+        entries = []
+        for entry in self._recorded_of_service:
+            entries.append(bound(head, entry))
+            head = entries[-1].head
+        self._many(insert(tables.history), [rows.row_of_entry(entry) for entry in entries])
+        changed = (
+            insert(tables.chains) if row is None else update(tables.chains).where(tables.chains.c.chain == SERVICE)
+        )
+        self._connection.execute(changed.values(chain=SERVICE, **rows.row_of_head(head)))
+        self._recorded_of_service = []
 
     def _next_change(self) -> int:
         """The next number; PostgreSQL tells those who listen once the transaction is committed."""

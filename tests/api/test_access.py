@@ -32,6 +32,7 @@ LEAST_ROLE = {
     ("GET", "/v1/tests/{key}/path"): "viewer",
     ("GET", "/v1/tests/{key}/outlook"): "viewer",
     ("GET", "/v1/tests/{key}/assumptions"): "viewer",
+    ("GET", "/v1/tests/{key}/history"): "viewer",
     ("GET", "/v1/events"): "viewer",
     ("GET", "/v1/tests/{key}/inference"): "viewer",
     ("GET", "/v1/summary"): "viewer",

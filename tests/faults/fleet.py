@@ -116,7 +116,7 @@ class Fleet:
                 for name, where in station.acknowledged.items()
             }
             state, last, seen = State(), 0, set()
-            for submission in reader.submissions(key):
+            for submission in reader.log.submissions(key):
                 name = submission.idempotency_key
                 assert name is not None
                 assert name not in seen

@@ -79,7 +79,7 @@ def test_a_clock_that_goes_backwards_disturbs_no_order(tmp_path: Path) -> None:
         command = PostObservations("lot", body, json.loads(body), hashlib.sha256(body.encode()).hexdigest(), "me")
         posted = perform_now(engine, command, lambda: next(moments))
         assert isinstance(posted, Posted)
-    log = list(Reader(engine).submissions("lot"))
+    log = list(Reader(engine).log.submissions("lot"))
     assert [entry.first_sequence for entry in log] == list(range(1, 27, 2))
     assert [entry.received_at for entry in log] == sorted((entry.received_at for entry in log), reverse=True)
     state = log[-1].state

@@ -19,7 +19,7 @@ from sqlalchemy.engine import URL
 from service.domain.access import Role
 from tests.faults.fleet import Fleet
 from tests.postgres import fresh_database, own_server
-from tests.running import free_port, prepared, wait_until_ready
+from tests.running import command, free_port, prepared, wait_until_ready
 
 Kills = Callable[[int, int], int]
 
@@ -94,6 +94,8 @@ def killed_again_and_again(database_url: str, times: int) -> None:
                 thread.join()
         fleet.finish(service.url, service.key)
         stored = fleet.check(service.database_url)
+        verified = command("verify", database_url=service.database_url)
+        assert verified.returncode == 0, verified.stderr
     acknowledged = sum(len(station.acknowledged) for station in fleet.stations)
     print(f"\n{times} kills, {acknowledged} submissions acknowledged, {stored} stored once each")
     assert acknowledged > 10 * times

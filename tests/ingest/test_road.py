@@ -127,7 +127,7 @@ def test_a_refusal_disturbs_no_other(engine: Engine) -> None:
         assert all(isinstance(results[i], Posted) for i in (0, 2))
 
     run(engine, work)
-    assert [s.last_sequence for s in Reader(engine).submissions("a")] == [1, 2]
+    assert [s.last_sequence for s in Reader(engine).log.submissions("a")] == [1, 2]
 
 
 def test_an_error_of_the_database_fails_only_its_own_command(engine: Engine) -> None:
@@ -145,8 +145,8 @@ def test_an_error_of_the_database_fails_only_its_own_command(engine: Engine) -> 
         assert [type(result) for result in results] == [Posted, Posted, StorageFailed, Posted]
 
     run(engine, work)
-    assert [s.last_sequence for s in Reader(engine).submissions("a")] == [1, 2, 3]
-    assert list(Reader(engine).submissions("b")) == []
+    assert [s.last_sequence for s in Reader(engine).log.submissions("a")] == [1, 2, 3]
+    assert list(Reader(engine).log.submissions("b")) == []
 
 
 def refusing_after(engine: Engine, count: int) -> list[int]:
@@ -246,7 +246,7 @@ def test_stopping_finishes_what_was_accepted_and_refuses_the_rest(engine: Engine
         assert all(isinstance(outcome, Posted) for outcome in await asyncio.gather(*accepted))
 
     asyncio.run(main())
-    assert len(list(Reader(engine).submissions("a"))) == 5
+    assert len(list(Reader(engine).log.submissions("a"))) == 5
 
 
 def test_a_caller_that_left_is_no_error(engine: Engine) -> None:
@@ -269,7 +269,7 @@ def test_a_closed_test_takes_nothing(engine: Engine) -> None:
         connection.execute(text("UPDATE tests SET status = 'closed' WHERE key = 'a'"))
     with pytest.raises(TestIsClosed):
         perform_now(engine, post("a"))
-    assert list(Reader(engine).submissions("a")) == []
+    assert list(Reader(engine).log.submissions("a")) == []
 
 
 def test_every_refusal_is_an_error_of_the_domain() -> None:
@@ -296,4 +296,4 @@ def test_a_commit_that_is_not_confirmed_is_never_tried_again(engine: Engine) -> 
         assert again.is_replay
 
     run(engine, work)
-    assert [s.last_sequence for s in Reader(engine).submissions("a")] == [1]
+    assert [s.last_sequence for s in Reader(engine).log.submissions("a")] == [1]

@@ -14,7 +14,8 @@ from service.domain.access import AccessKey, Role
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
-from service.storage.reader import PAGE_CHARACTERS, Reader, TestFilters
+from service.storage.logs import PAGE_CHARACTERS
+from service.storage.reader import Reader, TestFilters
 from service.storage.writer import writing
 
 NOW = datetime(2031, 5, 4, 9, 30, 0, 123456, tzinfo=UTC)
@@ -62,7 +63,7 @@ def test_everything_comes_back_to_the_last_bit(engine: Engine) -> None:
     reader = Reader(engine)
     assert reader.test("lot-1") == test
     assert reader.plan("seal") == PLAN
-    assert list(reader.submissions("lot-1")) == [submission]
+    assert list(reader.log.submissions("lot-1")) == [submission]
     assert reader.test("nowhere") is None
     assert reader.plan("nowhere") is None
 
@@ -89,7 +90,7 @@ def test_an_error_leaves_nothing_behind(engine: Engine) -> None:
     with pytest.raises(IntegrityError), writing(engine) as writer:
         writer.append(a_submission("lot-1", 1, 1, '{"values": [0]}'), {"u1": 1})
         writer.append(a_submission("lot-1", 1, 1, '{"values": [0]}'), {})
-    assert list(Reader(engine).submissions("lot-1")) == []
+    assert list(Reader(engine).log.submissions("lot-1")) == []
     with writing(engine) as writer:
         assert writer.known_units("lot-1", ["u1"]) == {}
 
@@ -157,11 +158,11 @@ def test_a_long_log_comes_in_order_from_any_place(engine: Engine) -> None:
         for i in range(450):
             writer.append(a_submission("lot-1", 2 * i + 1, 2 * i + 2, "{}"), {})
     reader = Reader(engine)
-    assert [s.first_sequence for s in reader.submissions("lot-1")] == list(range(1, 900, 2))
-    assert [s.first_sequence for s in reader.submissions("lot-1", 501)] == list(range(501, 900, 2))
-    assert [s.first_sequence for s in reader.submissions("lot-1", 501, 510)] == [501, 503, 505, 507, 509]
-    assert list(reader.submissions("lot-1", 0, 0)) == []
-    assert list(reader.bodies("lot-1", 501, 510)) == [(first, "{}") for first in (501, 503, 505, 507, 509)]
+    assert [s.first_sequence for s in reader.log.submissions("lot-1")] == list(range(1, 900, 2))
+    assert [s.first_sequence for s in reader.log.submissions("lot-1", 501)] == list(range(501, 900, 2))
+    assert [s.first_sequence for s in reader.log.submissions("lot-1", 501, 510)] == [501, 503, 505, 507, 509]
+    assert list(reader.log.submissions("lot-1", 0, 0)) == []
+    assert list(reader.log.bodies("lot-1", 501, 510)) == [(first, "{}") for first in (501, 503, 505, 507, 509)]
 
 
 def test_few_heavy_submissions_are_held_at_once(engine: Engine) -> None:
@@ -176,7 +177,7 @@ def test_few_heavy_submissions_are_held_at_once(engine: Engine) -> None:
             held.append(1)
 
     event.listen(engine, "after_cursor_execute", count)
-    assert [s.first_sequence for s in Reader(engine).submissions("lot-1")] == list(range(1, 13))
+    assert [s.first_sequence for s in Reader(engine).log.submissions("lot-1")] == list(range(1, 13))
     assert len(held) >= 4
 
 

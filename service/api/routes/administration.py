@@ -1,14 +1,15 @@
 """Access keys, for administrators, and the summary, for dashboards."""
 
 from collections import Counter, defaultdict
-from typing import cast
+from typing import Annotated, cast
 
-from fastapi import APIRouter, Response
+from fastapi import APIRouter, Request, Response
 
 from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.description import answers_with
 from service.api.parts import PartsOf, reading
+from service.api.requests import request_id_of
 from service.api.schemas.administration import IssuedKeyOut, KeyForm, KeyOut, KeysOut, SummaryOut
 from service.domain.access import AccessKey, Role
 from service.domain.state import Decision
@@ -47,11 +48,17 @@ async def list_keys(parts: PartsOf) -> KeysOut:
     status_code=201,
     responses=answers_with("key-name-taken", "invalid-key", has_body=True),
     summary="Make a key",
-    dependencies=[requires(Role.ADMINISTRATOR)],
 )
-async def create_key(form: KeyForm, response: Response, parts: PartsOf) -> IssuedKeyOut:
+async def create_key(
+    form: KeyForm,
+    request: Request,
+    response: Response,
+    parts: PartsOf,
+    key: Annotated[AccessKey, requires(Role.ADMINISTRATOR)],
+) -> IssuedKeyOut:
     """The secret is in this answer and nowhere else."""
-    issued = cast("IssuedKey", await parts.road.submit(CreateKey(form.name, form.role, form.expires_at)))
+    command = CreateKey(form.name, form.role, form.expires_at, key.name, request_id_of(request))
+    issued = cast("IssuedKey", await parts.road.submit(command))
     response.headers["Cache-Control"] = "no-store"
     return IssuedKeyOut(**KeyOut.model_validate(issued.key).model_dump(), secret=issued.secret)
 
@@ -60,8 +67,10 @@ async def create_key(form: KeyForm, response: Response, parts: PartsOf) -> Issue
     "/keys/{name}",
     responses=answers_with("not-found"),
     summary="Revoke a key",
-    dependencies=[requires(Role.ADMINISTRATOR)],
 )
-async def revoke_key(name: str, parts: PartsOf) -> KeyOut:
+async def revoke_key(
+    name: str, request: Request, parts: PartsOf, key: Annotated[AccessKey, requires(Role.ADMINISTRATOR)]
+) -> KeyOut:
     """The key of this name ends at once; the record of it stays."""
-    return KeyOut.model_validate(cast("AccessKey", await parts.road.submit(RevokeKey(name))))
+    command = RevokeKey(name, key.name, request_id_of(request))
+    return KeyOut.model_validate(cast("AccessKey", await parts.road.submit(command)))

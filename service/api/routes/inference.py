@@ -54,5 +54,5 @@ async def show_inference(
 
 
 def _inference(parts: Parts, test: SequentialTest, plan: Plan, level: float) -> InferenceOut:
-    documents = (document_of(entry) for entry in parts.reader.submissions(test.key, through=test.state.sequence))
+    documents = (document_of(entry) for entry in parts.reader.log.submissions(test.key, 0, test.state.sequence))
     return InferenceOut.of(inference_of(plan.document, test.state, documents, level), plan, test.state)

@@ -18,6 +18,7 @@ from service.api.description import answers_with
 from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, number_after
 from service.api.parts import Parts, PartsOf, reading
+from service.api.requests import request_id_of
 from service.api.schemas.observations import (
     LoggedOut,
     LogOut,
@@ -155,6 +156,7 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
         actor=access_key.name,
         idempotency_key=idempotency_key,
         expected_versions=expected_versions(request),
+        request_id=request_id_of(request),
     )
 
 
@@ -165,7 +167,7 @@ def _log_page(parts: Parts, test: SequentialTest, plan: Plan, after: int, limit:
 
 def _submissions(parts: Parts, test: SequentialTest, after: int = 0) -> Iterator[Submission]:
     """The log as far as this test had come when it was read: what was posted since may have decided it."""
-    return parts.reader.submissions(test.key, after, test.state.sequence)
+    return parts.reader.log.submissions(test.key, after, test.state.sequence)
 
 
 def _csv(parts: Parts, test: SequentialTest, plan: Plan) -> Iterator[str]:

@@ -12,6 +12,7 @@ from service.api.description import answers_with
 from service.api.lookup import known_plan
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import PartsOf, computing, reading
+from service.api.requests import request_id_of
 from service.api.schemas.plans import PlanForm, PlanOut, PlansOut, StandardOut, StandardsOut
 from service.domain.access import AccessKey, Role
 from service.domain.checking import attained_by, checked_content
@@ -39,13 +40,16 @@ class PlansQuery(BaseModel):
 )
 async def create_plan(
     form: PlanForm,
+    request: Request,
     response: Response,
     parts: PartsOf,
     key: Annotated[AccessKey, requires(Role.ENGINEER)],
 ) -> PlanOut:
     """The same name with the same content answers 200 with the stored plan; with other content, 409."""
     document = await computing(parts, lambda: checked_content(form.content()))
-    outcome = cast("StoredPlan", await parts.road.submit(CreatePlan(form.name, document, key.name)))
+    outcome = cast(
+        "StoredPlan", await parts.road.submit(CreatePlan(form.name, document, key.name, request_id_of(request)))
+    )
     response.status_code = 201 if outcome.is_new else 200
     response.headers["Location"] = f"/v1/plans/{outcome.plan.name}"
     response.headers["ETag"] = etag(outcome.plan.fingerprint)

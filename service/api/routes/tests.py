@@ -13,6 +13,7 @@ from service.api.filters import FiltersQuery
 from service.api.lookup import known_test, unchanged_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.parts import Parts, PartsOf, computing, reading
+from service.api.requests import request_id_of
 from service.api.schemas.assumptions import AssumptionsOut
 from service.api.schemas.common import Moment
 from service.api.schemas.outlook import OutlookOut
@@ -57,7 +58,13 @@ async def register_test(
 ) -> TestOut:
     """The same key with the same content answers 200 with the test as it stands; with other content, 409."""
     command = RegisterTest(
-        form.key, form.plan, form.subject.subject(), form.labels, key.name, expected_versions(request)
+        key=form.key,
+        plan=form.plan,
+        subject=form.subject.subject(),
+        labels=form.labels,
+        actor=key.name,
+        expected_versions=expected_versions(request),
+        request_id=request_id_of(request),
     )
     outcome = cast("RegisteredTest", await parts.road.submit(command))
     response.status_code = 201 if outcome.is_new else 200
@@ -127,7 +134,7 @@ async def show_assumptions(key: str, request: Request, response: Response, parts
 def _assumptions(parts: Parts, test: SequentialTest, plan: Plan) -> AssumptionsOut:
     procedure = procedure_of(plan)
     stretch = stretch_of(test.state)
-    bodies = parts.reader.bodies(test.key, stretch.first - 1, stretch.last)
+    bodies = parts.reader.log.bodies(test.key, stretch.first - 1, stretch.last)
     return AssumptionsOut.of(assumptions_of(procedure, test.state, bodies), procedure.family.name, test)
 
 

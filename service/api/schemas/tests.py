@@ -208,7 +208,7 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "always_valid_p_value": always_valid_p_value(procedure, state.log_likelihood_ratio),
         "confidence_sequence": ConfidenceOut.of(confidence_at(procedure, state), 0),
         "sample_number": state.sample_number,
-        "observations": state.sequence - state.overrun,
+        "observations": state.counted,
         "exposure": state.exposure.value if procedure.family.has_exposure else None,
         "total": total_of(procedure.family, state.total.value),
         "decided": _decided(procedure, state),

@@ -1,0 +1,236 @@
+"""
+Is what is stored still what was recorded, and does the log still say what the tests say? Pure.
+
+A test is run again from its log by the same function that ran it live, and its history is bound again link by link; the
+first place that differs is named. Nothing is kept but the present state and the last link, however long the log is.
+"""
+
+import hashlib
+import json
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, replace
+from datetime import datetime
+from typing import Any
+
+from service.domain.access import AccessKey
+from service.domain.chain import EMPTY, Act, Entry, Head, link_of
+from service.domain.errors import InvalidObservations
+from service.domain.history import decision_of, key_created, key_revoked, plan_created, registered, submitted
+from service.domain.observing import observe
+from service.domain.plan import Plan, fingerprint_of
+from service.domain.procedure import Procedure, procedure_of
+from service.domain.sequential_test import SequentialTest, Status, Submission
+from service.domain.state import State
+
+Record = Submission | Entry
+
+
+class Differs(Exception):
+    """Something is not as it was recorded; the text names the place."""
+
+
+START = State()
+
+
+@dataclass(frozen=True)
+class Walked:
+    """How far a history was followed: its end, and what the test must be after it."""
+
+    head: Head = EMPTY
+    state: State = START
+    version: int = 0
+    updated_at: datetime | None = None
+    status: Status = Status.OPEN
+    undeclared: Mapping[str, Any] | None = None
+
+
+class TestAudit:
+    """The audit of one test, one record after another; then `finish`."""
+
+    __test__ = False
+
+    def __init__(self, test: SequentialTest, plan: Plan | None) -> None:
+        if plan is None or fingerprint_of(plan.document) != plan.fingerprint:
+            raise Differs(f"test {test.key}: its plan {test.plan} is missing or not the one that was checked")
+        self._test, self._plan = test, plan
+        self._procedure: Procedure = procedure_of(plan)
+        self.walked = Walked()
+
+    def follow(self, record: Record) -> None:
+        """
+        Take the next record of the test's history.
+
+        Raises:
+            Differs: It does not follow from those before it.
+        """
+        entry = record if isinstance(record, Entry) else submitted(record)
+        head = next_head(self._test.key, self.walked.head, entry)
+        where = place(self._test.key, entry)
+        if (self.walked.undeclared is not None) != (entry.act is Act.DECIDED):
+            raise Differs(f"{where}: a decision is recorded where none fell, or is not recorded where one did")
+        if isinstance(record, Submission):
+            self._take_submission(where, record)
+        elif entry.act is Act.DECIDED:
+            if entry.details != self.walked.undeclared:
+                raise Differs(f"{where}: the log decides otherwise")
+            self.walked = replace(self.walked, undeclared=None)
+        elif entry.act is Act.REGISTERED:
+            self._take_registration(where, entry)
+        else:
+            raise Differs(f"{where}: it is no act of a test")
+        self.walked = replace(self.walked, head=head)
+
+    def finish(self, labels: Mapping[str, str]) -> None:
+        """
+        Compare the row of the test, and its labels as lists find them, with what its history comes to.
+
+        Raises:
+            Differs: They are not the same.
+        """
+        test, walked = self._test, self.walked
+        if walked.head != test.history:
+            raise Differs(
+                f"test {test.key}: its history ends with act {walked.head.length}, "
+                f"and its row says {test.history.length} acts, or another last link"
+            )
+        if walked.undeclared is not None:
+            raise Differs(f"test {test.key}: its decision is not recorded")
+        held = {
+            "state": (test.state, walked.state),
+            "version": (test.version, walked.version),
+            "updated_at": (test.updated_at, walked.updated_at),
+            "status": (test.status, walked.status),
+            "labels": (dict(test.labels), dict(labels)),
+        }
+        for name, (stored, found) in held.items():
+            if stored != found:
+                raise Differs(f"test {test.key}: its {name} is not what the log gives")
+
+    def _take_registration(self, where: str, entry: Entry) -> None:
+        expected = registered(self._test, self._plan, entry.request_id)
+        if (entry.details, entry.at, entry.actor) != (expected.details, expected.at, expected.actor):
+            raise Differs(f"{where}: the test or its plan is not what was registered")
+        self.walked = replace(self.walked, version=1, updated_at=entry.at)
+
+    def _take_submission(self, where: str, submission: Submission) -> None:
+        before = self.walked.state
+        if hashlib.sha256(submission.body.encode()).hexdigest() != submission.body_digest:
+            raise Differs(f"{where}: what was posted is not what its digest says")
+        if submission.first_sequence != before.sequence + 1:
+            raise Differs(f"{where}: observation {before.sequence + 1} was to come, not {submission.first_sequence}")
+        try:
+            state = observe(self._procedure, before, json.loads(submission.body), submission.received_at)
+        except InvalidObservations as error:
+            raise Differs(f"{where}: it cannot be run again: {error} {error.faults}") from error
+        if submission.last_sequence != state.sequence:
+            raise Differs(f"{where}: it holds observations to {state.sequence}, not {submission.last_sequence}")
+        self._move(where, submission.version, submission.received_at, state, submission.state, Act.SUBMITTED)
+
+    def _move(self, where: str, version: int, at: datetime, state: State, stored: State, cause: Act) -> None:  # noqa: PLR0913 - what a log entry says
+        """The test after an entry of its log."""
+        if state != stored:
+            raise Differs(f"{where}: run again, the log gives {difference(stored, state)}")
+        if version != self.walked.version + 1:
+            raise Differs(f"{where}: version {self.walked.version + 1} was to come, not {version}")
+        before = self.walked.state
+        decision = None if state.decision is before.decision else decision_of(before, state, cause)
+        self.walked = replace(self.walked, state=state, version=version, updated_at=at, undeclared=decision)
+
+
+@dataclass(frozen=True)
+class Found:
+    """What is stored of the things that the history of the service tells of."""
+
+    plans: Mapping[str, Plan]
+    keys: Mapping[str, AccessKey]
+    tests: frozenset[str]
+
+
+class ServiceAudit:
+    """The audit of what belongs to no test: some entries at a time, with what is stored of their things."""
+
+    def __init__(self) -> None:
+        self.head = EMPTY
+        self._counts = dict.fromkeys(("plans", "api_keys", "tests"), 0)
+        self._revoked: set[str] = set()
+
+    def follow(self, entries: Iterable[Entry], found: Found) -> None:
+        """
+        Take the next entries.
+
+        Raises:
+            Differs: One does not follow from those before it, or what it tells of is gone or another.
+        """
+        for entry in entries:
+            self.head = next_head("", self.head, entry)
+            if not self._fits(entry, found):
+                raise Differs(f"{place('', entry)}: what it tells of is missing or not what was recorded")
+
+    def finish(self, head: Head, counts: Mapping[str, int], revoked: int) -> None:
+        """
+        Compare the stored end of the chain, and how many things there are, with what was followed.
+
+        Raises:
+            Differs: They are not the same.
+        """
+        if self.head != head:
+            raise Differs(f"the service's history ends with act {self.head.length}, and {head.length} are on record")
+        for table, count in counts.items():
+            if count != self._counts[table]:
+                raise Differs(f"{table}: {count} rows, and {self._counts[table]} are on record")
+        if revoked != len(self._revoked):
+            raise Differs(f"api_keys: {revoked} are revoked, and {len(self._revoked)} such acts are on record")
+
+    def _fits(self, entry: Entry, found: Found) -> bool:
+        about = entry.details
+        if entry.act is Act.PLAN_CREATED:
+            self._counts["plans"] += 1
+            plan = found.plans.get(about["plan"])
+            is_sound = plan is not None and fingerprint_of(plan.document) == plan.fingerprint
+            return is_sound and _same(entry, plan_created(plan, None))  # type: ignore[arg-type]
+        if entry.act is Act.TEST_REGISTERED:
+            self._counts["tests"] += 1
+            return about["test"] in found.tests
+        key = found.keys.get(about["id"])
+        if key is None:
+            return False
+        if entry.act is Act.KEY_CREATED:
+            self._counts["api_keys"] += 1
+            return _same(entry, key_created(key, entry.actor, None))
+        self._revoked.add(key.id)
+        return key.revoked_at is not None and _same(entry, key_revoked(key, key.revoked_at, entry.actor, None))
+
+
+def next_head(chain: str, head: Head, entry: Entry) -> Head:
+    """
+    The end of a chain after its next entry.
+
+    Raises:
+        Differs: The entry is not the next one, or its link is not that of what it says.
+    """
+    where = place(chain, entry)
+    if entry.number != head.length + 1:
+        raise Differs(
+            f"{where}: act {head.length + 1} was to come; it is missing, or this one stands twice or elsewhere"
+        )
+    if entry.link != link_of(head.link, entry):
+        raise Differs(f"{where}: its link is not that of what it says and of the act before")
+    return entry.head
+
+
+def place(chain: str, entry: Entry) -> str:
+    """Where an entry stands, for people."""
+    extent = ""
+    if entry.act is Act.SUBMITTED:
+        extent = f" of observations {entry.details['first_sequence']} to {entry.details['last_sequence']}"
+    return f"{f'test {chain}' if chain else 'service'}, act {entry.number} ({entry.act}{extent})"
+
+
+def difference(stored: State, found: State) -> str:
+    """The first member in which two states differ."""
+    name = next(name for name in vars(stored) if getattr(stored, name) != getattr(found, name))
+    return f"{name} {getattr(found, name)}, and {getattr(stored, name)} is stored"
+
+
+def _same(entry: Entry, expected: Entry) -> bool:
+    return (entry.details, entry.at, entry.actor) == (expected.details, expected.at, expected.actor)
