@@ -167,6 +167,9 @@ def _faults_of_sides(statistic: Statistic, content: Content) -> list[Fault]:
     if sides == 2:  # noqa: PLR2004
         names = (name for name in statistic.one_sided if name in content)
         faults += [Fault(f"/{name}", "means nothing for a two-sided plan: H0 is h0 alone") for name in names]
+        if "failures" in (content.get("truncation") or {}):
+            rule = "means nothing for a two-sided plan: neither so many failures nor the exposure without them rejects"
+            faults.append(Fault("/truncation/failures", rule))
     return faults
 
 

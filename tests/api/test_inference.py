@@ -29,8 +29,39 @@ TIMED = {
 }
 
 
+SCRATCH = {
+    "family": "negative_binomial",
+    "h0": 0.5,
+    "h1": 1.5,
+    "alpha": 0.05,
+    "beta": 0.10,
+    "known": {"dispersion": 2.0},
+}
+# A torque that may be off on either side, watched for as long as the line runs.
+RATCHET = {
+    "family": "normal",
+    "statistic": "mixture",
+    "sides": 2,
+    "h0": 10.5,
+    "h1": None,
+    "alpha": 0.2,
+    "beta": None,
+    "known": {"sigma": 0.5, "prior": {"tau": 0.5}},
+}
+# Evidence for better than stated, and none of acceptance.
+BELOW = {
+    "statistic": "generalised",
+    "h1": None,
+    "beta": None,
+    "alpha": 0.1,
+    "boundaries": "given",
+    "thresholds": {"accept": None, "reject": 1.0},
+    "direction": "below",
+}
+
+
 def inferred(client: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any], **query: Any) -> Any:
-    key = with_test(client, new_name, plan)
+    key = with_test(client, new_name, {name: value for name, value in plan.items() if value is not None})
     client.post(f"/v1/tests/{key}/observations", json=body).raise_for_status()
     answer = client.get(f"/v1/tests/{key}/inference", params=query)
     assert answer.status_code == 200, answer.text
@@ -170,6 +201,10 @@ def test_one_measurement(admin: httpx.Client, new_name: Namer) -> None:
         ({**SHAFT, "truncation": {"sample_number": 3}}, {"values": [10.2, 10.3, 10.3]}),
         ({**SHAFT, "h0": 10.5, "h1": 10.0, "boundaries": "calibrated"}, {"values": [9.5, 9.8, 9.9, 10.0, 9.9]}),
         ({"standard": "MIL-HDBK-781A/III-D", "scale": 100.0}, {"values": [30.0, 30.0, 40.0, 40.0, 30.0]}),
+        (SCRATCH, {"values": [0, 3, 2, 4]}),
+        (RATCHET, {"values": [10.3, 9.6, 10.4, 9.2, 9.4, 9.9, 10.4, 9.8]}),
+        ({**WELD, **BELOW, "truncation": {"exposure": 6.0}}, {"values": [0, 1, 0, 0, 0, 0]}),
+        ({**PUMP, **BELOW, "direction": "above", "truncation": {"exposure": 5000.0}}, {"values": [900.0, 2500.0]}),
         ({"standard": "40-CFR-1068/A-2-AA"}, {"values": [0, 1, 0, 0, 1, 0, 0]}),
     ],
 )
@@ -182,6 +217,84 @@ def test_every_kind_of_plan_has_its_figures_in_order(
     assert wide["interval"]["lower"] < narrow["lower"] < middle < narrow["upper"] < wide["interval"]["upper"]
     assert 0.0 < found["p_value"] < 1.0
     assert abs(found["bias_of_maximum_likelihood"]) < narrow["upper"] - narrow["lower"]
+
+
+def test_a_plan_of_two_sides_says_how_its_p_value_is_made(admin: httpx.Client, new_name: Namer) -> None:
+    """Reject from |z| = 2 on: one measurement 3 deviations below has twice the lower tail."""
+    plan = {**SHAFT, **BELOW, "direction": None, "sides": 2, "thresholds": {"accept": None, "reject": 2.0}}
+    found = inferred(admin, new_name, {**plan, "truncation": {"sample_number": 5}}, {"values": [8.5, 10.0]})
+    assert (found["decision"], found["overrun"]) == ("reject", 1)
+    assert found["p_value"] == pytest.approx(2.0 * norm.sf(3.0), rel=1e-10)
+    assert found["meanings"]["p_value"].startswith("Twice the smaller of two probabilities")
+    assert "rejections below, the latest first" in found["meanings"]["ordering"]
+    endless = inferred(admin, new_name, {**RATCHET, "h0": 10.0}, {"values": [20.0]})
+    assert "for ever" in endless["meanings"]["unbiased"]
+    assert "at most 5 %" in endless["meanings"]["interval"]
+
+
+@pytest.mark.parametrize(
+    ("plan", "body", "words"),
+    [
+        (
+            {"family": "paired", "h0": 1.0, "h1": 3.0, "alpha": 0.05, "beta": 0.1},
+            {"observations": [{"a": 0, "b": 1}] * 8},
+            ["odds ratio of success", "share of b", "no bound"],
+        ),
+        (
+            {**SHAFT, "family": "lognormal", "h0": 10.0, "h1": 15.0},
+            {"values": [40.0, 30.0, 50.0]},
+            ["The median", "median's logarithm"],
+        ),
+        (
+            {**PUMP, "family": "weibull", "known": {"shape": 2.0}},
+            {"values": [100.0] * 9},
+            ["characteristic life", "root"],
+        ),
+        (
+            {**SHAFT, "family": "normal_difference", "h0": 0.0, "h1": 1.0, "known": {"sigma_a": 0.6, "sigma_b": 0.8}},
+            {"observations": [{"a": 1.0, "b": 6.0}]},
+            ["difference of the means"],
+        ),
+        (
+            {**SHAFT, "family": "normal_two_sample", "h0": 0.0, "h1": 1.0, "known": {"sigma_a": 0.6, "sigma_b": 0.8}},
+            {"observations": [{"arm": "a", "value": 1.0}, {"arm": "b", "value": 9.0}]},
+            ["in which arms they came", "difference of the means"],
+        ),
+    ],
+)
+def test_every_family_speaks_of_its_own_parameter(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any], words: list[str]
+) -> None:
+    found = inferred(admin, new_name, plan, body)
+    assert found["decision"] == "reject"
+    text = str(found)
+    assert [word for word in words if word not in text] == []
+    for name, figure in {
+        **found["estimates"],
+        "bias_of_maximum_likelihood": found["bias_of_maximum_likelihood"],
+    }.items():
+        assert (figure is None) <= (name in found["reasons"]), name
+
+
+@pytest.mark.parametrize(
+    ("plan", "words"),
+    [
+        ({"family": "score", "boundaries": "strict"}, "no model of the observations"),
+        ({"family": "normal_variance", "h0": 1.0, "h1": 2.0, "known": {"mean": 0.0}}, "Squares are not followed"),
+        ({"family": "normal", "statistic": "invariant", "h0": 0.0, "h1": 1.0}, "invariant statistic"),
+    ],
+)
+def test_where_nothing_can_be_said_the_reason_is(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], words: str
+) -> None:
+    key = with_test(admin, new_name, {**plan, "alpha": 0.05, "beta": 0.1})
+    assert admin.get(f"/v1/tests/{key}/inference").status_code == 409
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [9.0, 9.1, 8.9, 9.0] * 4}).raise_for_status()
+    answer = admin.get(f"/v1/tests/{key}/inference")
+    assert (answer.status_code, pointers(answer)) == (422, [])
+    assert answer.json()["type"].endswith(":invalid-question")
+    assert words in answer.json()["detail"]
+    assert "the plan's risks" in answer.json()["detail"]
 
 
 def test_a_long_log_of_uneven_exposures_is_read_to_its_end(admin: httpx.Client, new_name: Namer) -> None:
@@ -200,11 +313,14 @@ def test_a_long_log_of_uneven_exposures_is_read_to_its_end(admin: httpx.Client, 
 
 def test_before_the_decision_there_is_only_an_outlook(admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, SEAL)
-    admin.post(f"/v1/tests/{key}/observations", json={"values": [0, 0]}).raise_for_status()
-    answer = admin.get(f"/v1/tests/{key}/inference", headers={"If-None-Match": "*"})
+    tag = admin.post(f"/v1/tests/{key}/observations", json={"values": [0, 0]}).headers["ETag"]
+    answer = admin.get(f"/v1/tests/{key}/inference", headers={"If-None-Match": '"0"'})
     assert answer.status_code == 409
     assert answer.json()["type"].endswith(":not-decided")
     assert "outlook" in answer.json()["detail"]
+    # Who has this version of the test knows that already; all addresses of a test answer alike.
+    for address in ("", "/outlook", "/assumptions", "/inference"):
+        assert admin.get(f"/v1/tests/{key}{address}", headers={"If-None-Match": tag}).status_code == 304
 
 
 @pytest.mark.parametrize(

@@ -36,6 +36,10 @@ class NormalVariance(Family):
     parameter: ClassVar[str] = "standard deviation"
     known: ClassVar[tuple[str, ...]] = ("mean",)
     span: ClassVar[Span] = POSITIVE
+    no_inference: ClassVar[str] = (
+        "Squares are not followed from look to look under every standard deviation, so there is no p-value and no "
+        "interval after the decision; what holds are the plan's risks."
+    )
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""

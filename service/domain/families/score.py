@@ -29,7 +29,8 @@ class Score(Family):
     has_model: ClassVar[bool] = False
     no_inference: ClassVar[str] = (
         "The family score brings its own evidence and no model of the observations: there is no parameter to estimate, "
-        "and no probability of other outcomes for a p-value. What holds are the plan's risks."
+        "and no probability of other outcomes for a p-value; what holds are "
+        "the plan's risks."
     )
 
     def hypothesis_rule(self, value: float) -> str | None:

@@ -60,7 +60,7 @@ class _Pass:
     One pass through the schedule under the reference.
 
     Attributes:
-        leaving: The totals at the beginning of each stage.
+        leaving: The totals at the beginning of each stage that may leave above in it.
         duration_index, needed: For each of those its stage's duration, as an index of `durations`, and the increase
             that ends it above.
         cut: What ended below, where and when.
@@ -204,7 +204,9 @@ class _Walk:
             if i == 0:  # the first increase has used up a part of it, or made it longer
                 begin, duration = self.begin, duration - self.begin
             if stage.room < math.inf and math.isinf(self._most):
-                self.leaving.add(self._alive, self._lowest, begin, self._log_scale)
+                # Only totals from which one increase leads over the room.
+                skipped = int(min(max(0.0, stage.room - self._law.largest(duration) - self._lowest), len(self._alive)))
+                self.leaving.add(self._alive[skipped:], self._lowest + skipped, begin, self._log_scale)
                 self._rooms.append(stage.room)
                 self._indices.append(self._durations.setdefault(duration, len(self._durations)))
             self._advance(stage, duration)

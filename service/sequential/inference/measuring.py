@@ -150,7 +150,7 @@ class MeasuredOutcome:
         # The height has its factor apart from the looks, so that neither leaves the range of a double.
         rise = drift * nodes
         largest = rise.max(axis=1)
-        steps = np.diff(self.looks)[chosen if len(nodes) > 1 else slice(0, 1), np.newaxis]
+        steps = np.diff(self.looks)[chosen if len(passed.nodes) > 1 else slice(0, 1), np.newaxis]
         missing = (nodes + natural * steps - limits[:, np.newaxis]) / np.sqrt(steps)
         worth = np.exp(rise - largest[:, np.newaxis]) * ndtr(sign * missing)
         masses = passed.masses[chosen]
