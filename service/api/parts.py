@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Annotated, TypeVar, cast
 
 from fastapi import Depends, Request
 
+from service.api.metrics import Metrics
 from service.domain.errors import TooManyQuestions
 from service.ingest.road import Clock, Road
 from service.settings import Settings
@@ -30,6 +31,7 @@ class Parts:
     check_ready: Callable[[], None]
     computers: "Computers"
     streams: "Streams"
+    metrics: Metrics
 
 
 async def _parts(request: Request) -> Parts:

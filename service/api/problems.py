@@ -64,6 +64,7 @@ _TYPES = (
     ),
     ProblemType("not-found", 404, "There is no such thing", "There is no test 'lot-7'."),
     ProblemType("method-not-allowed", 405, "The address does not take this method", "This address does not take PUT."),
+    ProblemType("body-too-slow", 408, "The body took too long", "The body did not arrive within 30 seconds."),
     ProblemType(
         "plan-differs", 409, "The plan exists with other content", "The plan 'seal-leak' exists with other content."
     ),
@@ -130,6 +131,9 @@ _TYPES = (
         422,
         "The idempotency key was used for something else",
         "The idempotency key 'a1' came before with another body.",
+    ),
+    ProblemType(
+        "too-many-requests", 429, "The access key asks too often", "The key 'line-3' may ask 20 times a second."
     ),
     ProblemType(
         "internal-error", 500, "The service failed", "The log of the service has the reason, under this request id."

@@ -16,7 +16,7 @@ from service.api.problems import response_to
 from service.domain.errors import DomainError
 from service.domain.names import is_name
 
-TESTS = "/v1/tests/"
+TESTS, TEMPLATE = "/v1/tests/", "/v1/tests/{key}"
 
 
 class UnchangedTests:
@@ -41,4 +41,6 @@ class UnchangedTests:
             await response_to(error)(scope, receive, send)
             return
         unchanged = None if version is None else not_modified(request, etag(version))
+        if unchanged is not None:
+            scope["state"]["template"] = TEMPLATE
         await (unchanged or self._app)(scope, receive, send)

@@ -32,6 +32,7 @@ LEAST_ROLE = {
     ("GET", "/v1/tests/{key}/assumptions"): "viewer",
     ("GET", "/v1/events"): "viewer",
     ("GET", "/v1/summary"): "viewer",
+    ("GET", "/metrics"): "viewer",
     ("GET", "/v1/keys"): "administrator",
     ("POST", "/v1/keys"): "administrator",
     ("DELETE", "/v1/keys/{name}"): "administrator",
