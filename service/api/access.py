@@ -79,13 +79,18 @@ def requires_metrics() -> Any:  # noqa: ANN401
     A dependency for the figures: a viewer's key, or none where the settings show them to all.
 
     Raises:
-        RequestProblem: role-required.
+        RequestProblem: role-required, or key-limited.
     """
     check = requires(Role.VIEWER).dependency
 
     async def check_unless_open(request: Request) -> None:
-        if not request.app.state.parts.settings.metrics_open:
-            await check(request)
+        if request.app.state.parts.settings.metrics_open:
+            return
+        key = await check(request)
+        if key.limits.is_limited:
+            raise RequestProblem(
+                "key-limited", f"The figures count all tests; the key {key.name!r} is limited to some."
+            )
 
     return Depends(check_unless_open)
 

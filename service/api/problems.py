@@ -62,6 +62,12 @@ _TYPES = (
     ProblemType(
         "role-required", 403, "The access key may not do this", "This needs the role engineer; the key has viewer."
     ),
+    ProblemType(
+        "key-limited",
+        403,
+        "The access key is for other tests",
+        "The key 'line-3' is limited to other subjects or labels.",
+    ),
     ProblemType("not-found", 404, "There is no such thing", "There is no test 'lot-7'."),
     ProblemType("method-not-allowed", 405, "The address does not take this method", "This address does not take PUT."),
     ProblemType("body-too-slow", 408, "The body took too long", "The body did not arrive within 30 seconds."),
@@ -166,6 +172,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.RepeatedUnits: "unit-repeated",
     errors.TestIsClosed: "test-closed",
     errors.SubmissionInProgress: "in-progress",
+    errors.OutsideLimits: "key-limited",
     errors.VersionMoved: "version-moved",
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",

@@ -15,6 +15,7 @@ What can go wrong, without a word of HTTP.
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
+    ├── OutsideLimits            the access key is for other tests
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway
@@ -170,6 +171,13 @@ class SubmissionInProgress(Conflict):
 
     def __init__(self, key: str) -> None:
         super().__init__(f"A submission with the idempotency key {key!r} is still in progress; try again shortly.")
+
+
+class OutsideLimits(DomainError):
+    """The access key is limited to other tests."""
+
+    def __init__(self, name: str) -> None:
+        super().__init__(f"The key {name!r} is limited to subjects or labels that this test does not have.")
 
 
 class VersionMoved(DomainError):

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
-from service.domain.access import AccessKey, Role
+from service.domain.access import UNLIMITED, AccessKey, Limits, Role
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Subject
 
@@ -30,6 +30,7 @@ class RegisterTest:
 
     Attributes:
         expected_versions: What If-Match allows, `*` for any, if the caller sent one.
+        limits: Of the access key.
     """
 
     key: str
@@ -38,6 +39,7 @@ class RegisterTest:
     labels: Mapping[str, str]
     actor: str
     expected_versions: frozenset[str] | None = None
+    limits: Limits = UNLIMITED
 
 
 @dataclass(frozen=True)
@@ -49,6 +51,7 @@ class PostObservations:
         body: The JSON text as received; `document` is the same, decoded and of sound form.
         body_digest: SHA-256 of the received bytes, hexadecimal.
         expected_versions: What If-Match allows, `*` for any, if the caller sent one.
+        limits: Of the access key.
     """
 
     test: str
@@ -58,6 +61,7 @@ class PostObservations:
     actor: str
     idempotency_key: str | None = None
     expected_versions: frozenset[str] | None = None
+    limits: Limits = UNLIMITED
 
 
 @dataclass(frozen=True)
@@ -67,6 +71,7 @@ class CreateKey:
     name: str
     role: Role
     expires_at: datetime | None = None
+    limits: Limits = UNLIMITED
 
 
 @dataclass(frozen=True)

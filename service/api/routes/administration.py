@@ -39,7 +39,7 @@ async def show_summary(parts: PartsOf) -> SummaryOut:
 async def list_keys(parts: PartsOf) -> KeysOut:
     """Every key that was ever made; never a secret."""
     keys = await reading(parts.reader.keys)
-    return KeysOut(items=[KeyOut.model_validate(key) for key in keys])
+    return KeysOut(items=[KeyOut.of(key) for key in keys])
 
 
 @router.post(
@@ -50,10 +50,15 @@ async def list_keys(parts: PartsOf) -> KeysOut:
     dependencies=[requires(Role.ADMINISTRATOR)],
 )
 async def create_key(form: KeyForm, response: Response, parts: PartsOf) -> IssuedKeyOut:
-    """The secret is in this answer and nowhere else."""
-    issued = cast("IssuedKey", await parts.road.submit(CreateKey(form.name, form.role, form.expires_at)))
+    """
+    The secret is in this answer and nowhere else.
+
+    With `subjects` or `labels` the key is for tests of one of the subjects, and with one of the values of each label:
+    others do not exist for it, and it cannot register any.
+    """
+    issued = cast("IssuedKey", await parts.road.submit(CreateKey(form.name, form.role, form.expires_at, form.limits())))
     response.headers["Cache-Control"] = "no-store"
-    return IssuedKeyOut(**KeyOut.model_validate(issued.key).model_dump(), secret=issued.secret)
+    return IssuedKeyOut(**dict(KeyOut.of(issued.key)), secret=issued.secret)
 
 
 @router.delete(
@@ -64,4 +69,4 @@ async def create_key(form: KeyForm, response: Response, parts: PartsOf) -> Issue
 )
 async def revoke_key(name: str, parts: PartsOf) -> KeyOut:
     """The key of this name ends at once; the record of it stays."""
-    return KeyOut.model_validate(cast("AccessKey", await parts.road.submit(RevokeKey(name))))
+    return KeyOut.of(cast("AccessKey", await parts.road.submit(RevokeKey(name))))

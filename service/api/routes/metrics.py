@@ -21,7 +21,7 @@ FIGURES: dict[int | str, dict[str, Any]] = {
 
 @router.get(
     "/metrics",
-    responses={**answers_with(), **FIGURES},
+    responses={**answers_with("key-limited"), **FIGURES},
     response_class=Response,
     summary="Figures for monitoring",
     dependencies=[requires_metrics()],

@@ -155,6 +155,7 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
         actor=access_key.name,
         idempotency_key=idempotency_key,
         expected_versions=expected_versions(request),
+        limits=access_key.limits,
     )
 
 

@@ -45,7 +45,7 @@ class TestsQuery(FiltersQuery):
 @router.post(
     "",
     status_code=201,
-    responses=answers_with("invalid-test", "test-differs", "version-moved", has_body=True),
+    responses=answers_with("invalid-test", "key-limited", "test-differs", "version-moved", has_body=True),
     summary="Register a test",
 )
 async def register_test(
@@ -57,7 +57,7 @@ async def register_test(
 ) -> TestOut:
     """The same key with the same content answers 200 with the test as it stands; with other content, 409."""
     command = RegisterTest(
-        form.key, form.plan, form.subject.subject(), form.labels, key.name, expected_versions(request)
+        form.key, form.plan, form.subject.subject(), form.labels, key.name, expected_versions(request), key.limits
     )
     outcome = cast("RegisteredTest", await parts.road.submit(command))
     response.status_code = 201 if outcome.is_new else 200
