@@ -45,7 +45,10 @@ class TestsQuery(FiltersQuery):
 @router.post(
     "",
     status_code=201,
-    responses=answers_with("invalid-test", "key-limited", "test-differs", "version-moved", has_body=True),
+    responses={
+        **answers_with("invalid-test", "key-limited", "test-differs", "version-moved", has_body=True),
+        200: {"description": "The test exists already with this content", "model": TestOut},
+    },
     summary="Register a test",
 )
 async def register_test(
