@@ -114,6 +114,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         description=DESCRIPTION,
         docs_url=None,
         redoc_url=None,
+        redirect_slashes=False,  # behind a proxy that ends TLS it would send callers, and their keys, to plain HTTP
         lifespan=lifespan,
         separate_input_output_schemas=False,
     )

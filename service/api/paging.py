@@ -51,11 +51,12 @@ def number_after(cursor: str | None) -> int:
 
 
 def link_next(request: Request, response: Response, next_cursor: str | None) -> None:
-    """Add the Link header of the next page."""
+    """Add the Link header of the next page, relative: how a caller reached the service is the caller's to know."""
     if next_cursor is None:
         return
     url = request.url.include_query_params(cursor=next_cursor)
-    response.headers["Link"] = f'<{quote(str(url), safe=":/?&=%+,;@!$()*~-._[]")}>; rel="next"'
+    reference = f"{url.path}?{url.query}"
+    response.headers["Link"] = f'<{quote(reference, safe=":/?&=%+,;@!$()*~-._[]")}>; rel="next"'
 
 
 def _decoded(cursor: str) -> object:
