@@ -9,12 +9,16 @@ from contextlib import asynccontextmanager, contextmanager
 from types import FrameType
 
 from fastapi import FastAPI
+from starlette.middleware.cors import CORSMiddleware
 
 from service.api import problems
 from service.api.access import AccessGuard
 from service.api.description import describe
+from service.api.hardening import CORS_ASKED, CORS_METHODS, CORS_SHOWN
+from service.api.metrics import Metrics
 from service.api.parts import Computers, Parts
-from service.api.requests import RequestId
+from service.api.rates import Rates
+from service.api.requests import RequestId, accounts
 from service.api.routes import (
     administration,
     characteristics,
@@ -22,6 +26,7 @@ from service.api.routes import (
     health,
     history,
     inference,
+    metrics,
     observations,
     plans,
     simulations,
@@ -31,6 +36,7 @@ from service.api.simulations import Simulations
 from service.api.streams import Streams
 from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
+from service.logs import set_up_log
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
@@ -53,12 +59,6 @@ def create_served_app() -> FastAPI:
     settings = read_settings()
     set_up_log(settings)
     return create_app(settings)
-
-
-def set_up_log(settings: Settings) -> None:
-    """One line for each entry on standard error."""
-    logging.basicConfig(level=settings.log_level, format="%(asctime)s %(levelname)s %(name)s %(message)s")
-    logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
 
 
 @contextmanager
@@ -95,18 +95,19 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     Raises:
         SchemaMismatch: At start, when the database has another schema than this version knows.
     """
+    figures = Metrics()
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
         engine = create_engine_for(settings.database_url)
         check_schema(engine)
         computers = Computers(COMPUTERS, MOST_WAITING)
-        road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes)
-        streams, loop = Streams(settings.stream_limit), asyncio.get_running_loop()
+        road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes, figures)
+        streams, loop = Streams(settings.stream_limit, figures.streaming), asyncio.get_running_loop()
         watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
         simulating = Simulations(computers)
         reader, check = Reader(engine), lambda: check_schema(engine)
-        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating)
+        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures)
         road.start()
         watcher.start()
         try:
@@ -127,13 +128,22 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         description=DESCRIPTION,
         docs_url=None,
         redoc_url=None,
+        redirect_slashes=False,  # behind a proxy that ends TLS it would send callers, and their keys, to plain HTTP
         lifespan=lifespan,
         separate_input_output_schemas=False,
     )
     problems.install(app)
     app.add_middleware(UnchangedTests)
-    app.add_middleware(AccessGuard)
-    app.add_middleware(RequestId)
+    app.add_middleware(AccessGuard, rates=Rates(settings.rate_limit, settings.rate_burst))
+    if settings.origins:
+        app.add_middleware(
+            CORSMiddleware,
+            allow_origins=settings.origins,
+            allow_methods=CORS_METHODS,
+            allow_headers=CORS_ASKED,
+            expose_headers=CORS_SHOWN,
+        )
+    app.add_middleware(RequestId, account=accounts(figures, writes_lines=settings.access_log))
     for module in (
         plans,
         characteristics,
@@ -145,6 +155,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         events,
         administration,
         health,
+        metrics,
     ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)

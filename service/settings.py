@@ -1,9 +1,17 @@
 """Settings: the environment, read into one frozen value."""
 
+import re
 from typing import Literal
 
-from pydantic import Field, ValidationError
+from pydantic import Field, ValidationError, field_validator
 from pydantic_settings import BaseSettings, SettingsConfigDict
+
+_ORIGIN = re.compile(r"https?://[a-z0-9.-]+(:[0-9]{1,5})?|https?://\[[0-9a-f:]+\](:[0-9]{1,5})?")
+
+
+def origins_in(text: str) -> list[str]:
+    """What stands between commas."""
+    return [part.strip() for part in text.split(",") if part.strip()]
 
 
 class Settings(BaseSettings):
@@ -18,8 +26,30 @@ class Settings(BaseSettings):
     queue_bytes: int = Field(256 * 1024 * 1024, ge=1024, description="Bytes of submissions that may wait.")
     group_limit: int = Field(256, ge=1, description="Submissions committed together.")
     stream_limit: int = Field(100, ge=1, description="Streams of events that may be open in one process.")
+    body_seconds: float = Field(30.0, gt=0.0, le=3600.0, description="Longest time for a body to arrive.")
+    connection_limit: int = Field(1000, ge=2, description="Connections that one process holds at once.")
+    rate_limit: float = Field(0.0, ge=0.0, le=1e6, description="Requests a second of one key; 0 for any number.")
+    rate_burst: int = Field(100, ge=1, le=10**6, description="Requests of one key at once, before the rate counts.")
+    cors_origins: str = Field("", description="Origins, with commas between, whose pages may ask.")
     heartbeat_seconds: float = Field(15.0, ge=1.0, le=30.0, description="Between signs of life on a quiet stream.")
+    log_format: Literal["plain", "json"] = Field("plain", description="Form of the log.")
+    access_log: bool = Field(default=True, description="One line for each request.")
+    metrics_open: bool = Field(default=False, description="Show /metrics without a key.")
     log_level: Literal["DEBUG", "INFO", "WARNING", "ERROR"] = Field("INFO", description="Level of the log.")
+
+    @field_validator("cors_origins")
+    @classmethod
+    def _are_origins(cls, text: str) -> str:
+        """Each is a scheme, a host and perhaps a port, as a browser sends it."""
+        for origin in origins_in(text):
+            if not _ORIGIN.fullmatch(origin):
+                raise ValueError(f"an origin is http(s)://host or http(s)://host:port, never *; {origin!r} is none")
+        return text
+
+    @property
+    def origins(self) -> list[str]:
+        """The origins, one by one."""
+        return origins_in(self.cors_origins)
 
 
 class BadSettings(Exception):

@@ -24,6 +24,21 @@ def service(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Running]:
 
 
 @pytest.fixture(scope="session")
+def guarded(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Running]:
+    """Another one, with every limit and permission that is off or wide by default."""
+    settings = {
+        "SPRT_BODY_SECONDS": "0.5",
+        "SPRT_CONNECTION_LIMIT": "8",
+        "SPRT_CORS_ORIGINS": "https://board.example, http://10.0.0.7:3000",
+        "SPRT_METRICS_OPEN": "true",
+        "SPRT_RATE_BURST": "30",
+        "SPRT_RATE_LIMIT": "0.2",
+    }
+    with running(tmp_path_factory.mktemp("guarded"), **settings) as started:  # type: ignore[arg-type]
+        yield started
+
+
+@pytest.fixture(scope="session")
 def admin(service: Running) -> Iterator[httpx.Client]:
     """A client that may do everything."""
     with service.client() as client:

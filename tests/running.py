@@ -86,19 +86,25 @@ def running(
     key_names: str = "the-{}",
     database_url: str | None = None,
     arguments: tuple[str, ...] = (),
+    log: Path | None = None,
     **settings: str,
 ) -> Iterator[Running]:
-    """Start the service on a new SQLite file in `folder`, or on an empty database; stop it at the end."""
+    """
+    Start the service on a new SQLite file in `folder`, or on an empty database; stop it at the end.
+
+    Its log goes to the file `log`, if one is given.
+    """
     database_url = database_url or f"sqlite:///{folder / 'tests.sqlite3'}"
     roles = tuple(Role) if "{}" in key_names else (Role.ENGINEER,)
     keys = prepared(database_url, {role: key_names.format(role) for role in roles})
     port = free_port()
-    process = subprocess.Popen(
-        [sys.executable, "-m", "service", "serve", "--port", str(port), *arguments],
-        env={**os.environ, "SPRT_DATABASE_URL": database_url, **settings},
-        stdout=subprocess.DEVNULL,
-        stderr=subprocess.DEVNULL,
-    )
+    with (log or Path(os.devnull)).open("ab") as written:
+        process = subprocess.Popen(
+            [sys.executable, "-m", "service", "serve", "--port", str(port), *arguments],
+            env={**os.environ, "SPRT_DATABASE_URL": database_url, **settings},
+            stdout=subprocess.DEVNULL,
+            stderr=written,
+        )
     try:
         url = f"http://127.0.0.1:{port}"
         wait_until_ready(url, process)

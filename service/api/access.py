@@ -4,6 +4,7 @@ Access: every call under /v1 needs a key, and each route says which role.
 The key is looked up before the body is read, and afresh for each request, so that a revoked key ends at once.
 """
 
+import time
 from typing import Any, cast
 
 from fastapi import Depends, Request
@@ -12,25 +13,30 @@ from starlette.types import ASGIApp, Receive, Scope, Send
 
 from service.api.parts import Parts, looking_up
 from service.api.problems import RequestProblem, response, response_to
+from service.api.rates import Rates
 from service.domain.access import AccessKey, Role, digest_of
 from service.domain.errors import DomainError
+from service.settings import Settings
 
-GUARDED = "/v1"
+GUARDED, METRICS = "/v1", "/metrics"
 LONGEST_SECRET = 200
 
 
 class AccessGuard:
-    """Middleware: finds the access key of a request, or answers 401."""
+    """Middleware: finds the access key of a request, or answers 401; answers 429 to one that asks too often."""
 
-    def __init__(self, app: ASGIApp) -> None:
-        self._app = app
+    def __init__(self, app: ASGIApp, rates: Rates) -> None:
+        self._app, self._rates = app, rates
 
     async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
         """Let through what carries a valid key, and what lies outside the guarded part."""
-        if scope["type"] != "http" or not _is_guarded(scope["path"]):
+        if scope["type"] != "http":
             await self._app(scope, receive, send)
             return
         parts = cast("Parts", scope["app"].state.parts)
+        if not _is_guarded(scope["path"], parts.settings):
+            await self._app(scope, receive, send)
+            return
         try:
             key = await _key_of(Request(scope), parts)
         except DomainError as error:  # here, outside of the routes, nothing else answers it
@@ -42,6 +48,11 @@ class AccessGuard:
             await refusal(scope, receive, send)
             return
         scope.setdefault("state", {})["access_key"] = key
+        wait = self._rates.seconds_to_wait(key.id, time.monotonic())
+        if wait:
+            detail = f"The key {key.name!r} may ask {parts.settings.rate_limit:g} times a second; try again later."
+            await response("too-many-requests", detail, headers={"Retry-After": str(wait)})(scope, receive, send)
+            return
         await self._app(scope, receive, send)
 
 
@@ -63,7 +74,30 @@ def requires(role: Role) -> Any:  # noqa: ANN401 - what Depends returns is opaqu
     return Depends(check)
 
 
-def _is_guarded(path: str) -> bool:
+def requires_metrics() -> Any:  # noqa: ANN401
+    """
+    A dependency for the figures: a viewer's key, or none where the settings show them to all.
+
+    Raises:
+        RequestProblem: role-required, or key-limited.
+    """
+    check = requires(Role.VIEWER).dependency
+
+    async def check_unless_open(request: Request) -> None:
+        if request.app.state.parts.settings.metrics_open:
+            return
+        key = await check(request)
+        if key.limits.is_limited:
+            raise RequestProblem(
+                "key-limited", f"The figures count all tests; the key {key.name!r} is limited to some."
+            )
+
+    return Depends(check_unless_open)
+
+
+def _is_guarded(path: str, settings: Settings) -> bool:
+    if path == METRICS:
+        return not settings.metrics_open
     return path == GUARDED or path.startswith(GUARDED + "/")
 
 

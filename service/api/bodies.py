@@ -39,7 +39,7 @@ class StrictRequest(Request):
             RequestProblem: The body is too large, of another media type, or not sound JSON.
             RequestValidationError: A large body does not have the form asked for.
         """
-        self._body = await self._read(settings.max_body_bytes)
+        self._body = await self._read_in_time(settings)
         media_type = self.headers.get("content-type", "")
         if media_type.partition(";")[0].strip().lower() != "application/json":
             raise RequestProblem("media-type", f"Send Content-Type: application/json; received {media_type!r}.")
@@ -50,6 +50,20 @@ class StrictRequest(Request):
                 raise RequestValidationError(faults)
         else:
             self.document = decoded(self._body, settings.max_batch)
+
+    async def _read_in_time(self, settings: Settings) -> bytes:
+        """
+        The whole body.
+
+        Raises:
+            RequestProblem: It is too large, or takes too long.
+        """
+        try:
+            async with asyncio.timeout(settings.body_seconds):
+                return await self._read(settings.max_body_bytes)
+        except TimeoutError:
+            detail = f"The body did not arrive within {settings.body_seconds:g} seconds; nothing was stored."
+            raise RequestProblem("body-too-slow", detail, headers={"Connection": "close"}) from None
 
     async def _read(self, limit: int) -> bytes:
         detail = f"A body may have at most {limit} bytes."

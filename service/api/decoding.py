@@ -45,6 +45,11 @@ class UnfitNumber:
         return f"{self.text}, which a double cannot hold"
 
 
+# The framework validates "from attributes": an object of any class but the built-in ones would pass for a form without
+# a single field. A number is no object.
+UnfitNumber.__module__ = "builtins"
+
+
 class _DoubledKey(dict[str, Any]):
     """An object in which a key stands twice."""
 

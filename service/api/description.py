@@ -10,8 +10,15 @@ from service.api import problems
 from service.api.schemas.common import Answer, FaultOut, ProblemOut
 from service.domain.errors import Fault
 
-EVERYWHERE = ("key-required", "role-required", "internal-error", "overloaded", "invalid-parameter")
-WITH_BODY = ("outcome-unknown", "malformed-body", "body-too-large", "media-type", "invalid-body")
+EVERYWHERE = (
+    "key-required",
+    "role-required",
+    "too-many-requests",
+    "internal-error",
+    "overloaded",
+    "invalid-parameter",
+)
+WITH_BODY = ("outcome-unknown", "malformed-body", "body-too-slow", "body-too-large", "media-type", "invalid-body")
 
 
 def answers_with(*names: str, has_body: bool = False) -> dict[int | str, dict[str, Any]]:
@@ -64,7 +71,7 @@ def describe(app: FastAPI) -> Callable[[], dict[str, Any]]:
             components["securitySchemes"] = {"key": {"type": "http", "scheme": "bearer"}}
             for path, operations in description["paths"].items():
                 for operation in operations.values():
-                    operation["security"] = [{"key": []}] if path.startswith("/v1") else []
+                    operation["security"] = [{"key": []}] if path.startswith(("/v1", "/metrics")) else []
             app.openapi_schema = description
         return app.openapi_schema
 

@@ -60,11 +60,12 @@ def numbers_after(cursor: str | None) -> tuple[int, int]:
 
 
 def link_next(request: Request, response: Response, next_cursor: str | None) -> None:
-    """Add the Link header of the next page."""
+    """Add the Link header of the next page, relative: how a caller reached the service is the caller's to know."""
     if next_cursor is None:
         return
     url = request.url.include_query_params(cursor=next_cursor)
-    response.headers["Link"] = f'<{quote(str(url), safe=":/?&=%+,;@!$()*~-._[]")}>; rel="next"'
+    reference = f"{url.path}?{url.query}"
+    response.headers["Link"] = f'<{quote(reference, safe=":/?&=%+,;@!$()*~-._[]")}>; rel="next"'
 
 
 def _numbers(cursor: str | None, count: int) -> list[int]:

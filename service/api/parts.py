@@ -3,11 +3,14 @@
 import asyncio
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Annotated, TypeVar, cast
 
 from fastapi import Depends, Request
+from starlette.types import Scope
 
+from service.api.metrics import Metrics
+from service.domain.access import AccessKey
 from service.domain.errors import TooManyQuestions
 from service.ingest.road import Clock, Road
 from service.settings import Settings
@@ -32,10 +35,20 @@ class Parts:
     computers: "Computers"
     streams: "Streams"
     simulations: "Simulations"
+    metrics: Metrics
+
+
+def parts_for(scope: Scope) -> Parts:
+    """The parts as the access key of a request may use them: it reads the tests inside its limits alone."""
+    parts = cast("Parts", scope["app"].state.parts)
+    key = cast("AccessKey | None", scope["state"].get("access_key"))
+    if key is None or not key.limits.is_limited:
+        return parts
+    return replace(parts, reader=parts.reader.within(key.limits))
 
 
 async def _parts(request: Request) -> Parts:
-    return cast("Parts", request.app.state.parts)
+    return parts_for(request.scope)
 
 
 PartsOf = Annotated[Parts, Depends(_parts)]

@@ -62,8 +62,15 @@ _TYPES = (
     ProblemType(
         "role-required", 403, "The access key may not do this", "This needs the role engineer; the key has viewer."
     ),
+    ProblemType(
+        "key-limited",
+        403,
+        "The access key is for other tests",
+        "The key 'line-3' is limited to other subjects or labels.",
+    ),
     ProblemType("not-found", 404, "There is no such thing", "There is no test 'lot-7'."),
     ProblemType("method-not-allowed", 405, "The address does not take this method", "This address does not take PUT."),
+    ProblemType("body-too-slow", 408, "The body took too long", "The body did not arrive within 30 seconds."),
     ProblemType(
         "plan-differs", 409, "The plan exists with other content", "The plan 'seal-leak' exists with other content."
     ),
@@ -138,6 +145,9 @@ _TYPES = (
         "The idempotency key 'a1' came before with another body.",
     ),
     ProblemType(
+        "too-many-requests", 429, "The access key asks too often", "The key 'line-3' may ask 20 times a second."
+    ),
+    ProblemType(
         "internal-error", 500, "The service failed", "The log of the service has the reason, under this request id."
     ),
     ProblemType(
@@ -170,6 +180,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.TestIsClosed: "test-closed",
     errors.SubmissionInProgress: "in-progress",
     errors.NotDecided: "not-decided",
+    errors.OutsideLimits: "key-limited",
     errors.VersionMoved: "version-moved",
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",

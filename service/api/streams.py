@@ -35,8 +35,8 @@ HEADERS = {"Cache-Control": "no-store", "X-Accel-Buffering": "no"}
 class Streams:
     """The open streams of this process. Belongs to one event loop."""
 
-    def __init__(self, limit: int) -> None:
-        self._limit, self._open = limit, 0
+    def __init__(self, limit: int, told: Callable[[int], None] = lambda _: None) -> None:
+        self._limit, self._open, self._told = limit, 0, told
         self._word = asyncio.Event()
         self.is_stopped = False
 
@@ -53,10 +53,12 @@ class Streams:
         if self._open >= self._limit:
             raise TooManyStreams(self._limit)
         self._open += 1
+        self._told(1)
         return self._leave
 
     def _leave(self) -> None:
         self._open -= 1
+        self._told(-1)
 
     @property
     def word(self) -> asyncio.Event:

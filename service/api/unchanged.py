@@ -1,22 +1,21 @@
 """
 Middleware: answers 304 to who asks for a test and has its present version already.
 
-That is what dashboards and stations ask most, and it needs no route: any valid key may read, and the version alone
-decides. It stands inside of the access guard; whatever it does not answer goes on to the routes.
+That is what dashboards and stations ask most, and it needs no route: any valid key may read what lies inside its
+limits, and the version alone decides. It stands inside of the access guard; whatever it does not answer goes on to
+the routes.
 """
-
-from typing import cast
 
 from fastapi import Request
 from starlette.types import ASGIApp, Receive, Scope, Send
 
 from service.api.conditional import etag, not_modified
-from service.api.parts import Parts, looking_up
+from service.api.parts import looking_up, parts_for
 from service.api.problems import response_to
 from service.domain.errors import DomainError
 from service.domain.names import is_name
 
-TESTS = "/v1/tests/"
+TESTS, TEMPLATE = "/v1/tests/", "/v1/tests/{key}"
 
 
 class UnchangedTests:
@@ -34,11 +33,13 @@ class UnchangedTests:
         if "if-none-match" not in request.headers or not is_name(key):
             await self._app(scope, receive, send)
             return
-        parts = cast("Parts", scope["app"].state.parts)
+        parts = parts_for(scope)
         try:
             version = await looking_up(parts, lambda: parts.reader.version(key))
         except DomainError as error:  # here, outside of the routes, nothing else answers it
             await response_to(error)(scope, receive, send)
             return
         unchanged = None if version is None else not_modified(request, etag(version))
+        if unchanged is not None:
+            scope["state"]["template"] = TEMPLATE
         await (unchanged or self._app)(scope, receive, send)

@@ -1,5 +1,7 @@
 """Serve over HTTP."""
 
+import os
+from tempfile import TemporaryDirectory
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
@@ -20,7 +22,9 @@ def serve(
     """Start the service. A new SQLite file sets itself up; a schema that this version does not know is refused."""
     import uvicorn
 
-    from service.app import create_app, set_up_log
+    from service.api.metrics import FOLDER_VARIABLE
+    from service.app import create_app
+    from service.logs import set_up_log
     from service.settings import read_settings
     from service.storage.engine import is_sqlite
 
@@ -39,19 +43,33 @@ def serve(
         "host": host,
         "port": port,
         "access_log": False,
+        "log_config": None,  # its entries go the way of all others
         "log_level": "warning",
         "timeout_graceful_shutdown": SHUTDOWN_SECONDS,
         "server_header": False,
+        "limit_concurrency": settings.connection_limit,
+        **bounded_connections(),
     }
     said = f"Serving on http://{host}:{port} (description: /openapi.json). Stop with Ctrl-C."
     if workers > 1:
         typer.echo(said, err=True)
-        uvicorn.run("service.app:create_served_app", factory=True, workers=workers, **options)
+        with TemporaryDirectory(prefix="sprt-metrics-") as folder:  # where the processes add up what they count
+            os.environ[FOLDER_VARIABLE] = folder
+            uvicorn.run("service.app:create_served_app", factory=True, workers=workers, **options)
         return
     config = uvicorn.Config(create_app(settings), **options)
     listening = config.bind_socket()  # ends here where the port is taken
     typer.echo(said, err=True)
     uvicorn.Server(config).run([listening])
+
+
+def bounded_connections() -> dict[str, Any]:
+    """The server's option for connections with limits; none where its fast parser is not installed."""
+    try:
+        from service.cli.connections import BoundedConnection
+    except ImportError:  # on Windows
+        return {}
+    return {"http": BoundedConnection}
 
 
 def prepared_engine(database_url: str) -> "Engine":

@@ -15,6 +15,7 @@ What can go wrong, without a word of HTTP.
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, NotDecided
+    ├── OutsideLimits            the access key is for other tests
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway
@@ -190,6 +191,13 @@ class NotDecided(Conflict):
             f"The test {key!r} is not decided yet, and inference follows the decision. "
             "Until then ask for its outlook: what is still needed and what is to be expected."
         )
+
+
+class OutsideLimits(DomainError):
+    """The access key is limited to other tests."""
+
+    def __init__(self, name: str) -> None:
+        super().__init__(f"The key {name!r} is limited to subjects or labels that this test does not have.")
 
 
 class VersionMoved(DomainError):

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
-from service.domain.access import AccessKey, Role
+from service.domain.access import UNLIMITED, AccessKey, Limits, Role
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Subject
 
@@ -35,6 +35,7 @@ class RegisterTest:
 
     Attributes:
         expected_versions: What If-Match allows, `*` for any, if the caller sent one.
+        limits: Of the access key.
     """
 
     key: str
@@ -44,6 +45,7 @@ class RegisterTest:
     actor: str
     expected_versions: frozenset[str] | None = None
     request_id: str | None = None
+    limits: Limits = UNLIMITED
 
 
 @dataclass(frozen=True)
@@ -55,6 +57,7 @@ class PostObservations:
         body: The JSON text as received; `document` is the same, decoded and of sound form.
         body_digest: SHA-256 of the received bytes, hexadecimal.
         expected_versions: What If-Match allows, `*` for any, if the caller sent one.
+        limits: Of the access key.
     """
 
     test: str
@@ -65,6 +68,7 @@ class PostObservations:
     idempotency_key: str | None = None
     expected_versions: frozenset[str] | None = None
     request_id: str | None = None
+    limits: Limits = UNLIMITED
 
 
 # Who acts on the command line, where no access key says it; no key can be named so.
@@ -78,6 +82,7 @@ class CreateKey:
     name: str
     role: Role
     expires_at: datetime | None = None
+    limits: Limits = UNLIMITED
     actor: str = COMMAND_LINE
     request_id: str | None = None
 

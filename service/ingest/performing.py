@@ -9,13 +9,14 @@ from dataclasses import replace
 from datetime import datetime
 from functools import partial, singledispatch
 
-from service.domain.access import AccessKey, check_new_key, digest_of
+from service.domain.access import AccessKey, Limits, check_new_key, digest_of
 from service.domain.chain import Act, Entry, bound
 from service.domain.errors import (
     Fault,
     IdempotencyKeyReused,
     InvalidTest,
     KeyNameTaken,
+    OutsideLimits,
     PlanDiffers,
     TestDiffers,
     TestIsClosed,
@@ -85,6 +86,8 @@ def _(command: CreatePlan, writer: Writer, now: datetime) -> Outcome:
 
 @perform.register
 def _(command: RegisterTest, writer: Writer, now: datetime) -> Outcome:
+    if not command.limits.allow(command.subject, command.labels):
+        raise OutsideLimits(command.actor)
     stored = writer.test(command.key)
     _check_version(command.expected_versions, stored)
     if stored is not None:
@@ -114,9 +117,7 @@ def _(command: RegisterTest, writer: Writer, now: datetime) -> Outcome:
 
 @perform.register
 def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
-    test = writer.test(command.test)
-    if test is None:
-        raise UnknownTest(command.test)
+    test = _visible_test(writer, command.test, command.limits)
     plan = _plan(writer, test.plan)
     first = _first_answer(command, writer)
     if first is not None:
@@ -140,12 +141,20 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
 
 @perform.register
 def _(command: CreateKey, writer: Writer, now: datetime) -> Outcome:
-    check_new_key(command.name, command.expires_at, now)
+    check_new_key(command.name, command.expires_at, now, command.role, command.limits)
     taken = writer.key_named(command.name)
     if taken is not None:
         raise KeyNameTaken(command.name)
     secret = secrets.token_urlsafe(SECRET_BYTES)
-    key = AccessKey(secrets.token_hex(8), command.name, command.role, digest_of(secret), now, command.expires_at)
+    key = AccessKey(
+        id=secrets.token_hex(8),
+        name=command.name,
+        role=command.role,
+        digest=digest_of(secret),
+        created_at=now,
+        expires_at=command.expires_at,
+        limits=command.limits,
+    )
     writer.add_key(key)
     writer.record(key_created(key, command.actor, command.request_id))
     return IssuedKey(key, secret)
@@ -179,6 +188,14 @@ def _check_version(expected: frozenset[str] | None, test: SequentialTest | None)
     if expected is None or (test is not None and not expected.isdisjoint({"*", str(test.version)})):
         return
     raise VersionMoved(expected, None if test is None else test.version)
+
+
+def _visible_test(writer: Writer, key: str, limits: Limits) -> SequentialTest:
+    """The test of this key, where it lies inside the limits; what does not is as if it were not there."""
+    test = writer.test(key)
+    if test is None or not limits.allow(test.subject, test.labels):
+        raise UnknownTest(key)
+    return test
 
 
 def _plan(writer: Writer, name: str) -> Plan:

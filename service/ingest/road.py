@@ -13,6 +13,7 @@ import asyncio
 import logging
 import queue
 import threading
+import time
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
@@ -29,6 +30,7 @@ from service.domain.errors import (
     SubmissionInProgress,
 )
 from service.ingest.commands import Command, Outcome, PostObservations
+from service.ingest.measures import Measures, Unmeasured
 from service.ingest.performing import perform
 from service.storage.engine import is_passing
 from service.storage.writer import writing
@@ -82,11 +84,18 @@ Answer = tuple[_Waiting, Outcome | BaseException]
 class Road:
     """A bounded queue, one writer thread, one commit for a group. Start it in a running event loop; then submit."""
 
-    def __init__(
-        self, engine: Engine, clock: Clock, queue_limit: int, group_limit: int, queue_bytes: int = 2**28
+    def __init__(  # noqa: PLR0913 - limits are numbers
+        self,
+        engine: Engine,
+        clock: Clock,
+        queue_limit: int,
+        group_limit: int,
+        queue_bytes: int = 2**28,
+        measures: Measures | None = None,
     ) -> None:
         self._engine = engine
         self._clock = clock
+        self._measures = measures or Unmeasured()
         self._group_limit = group_limit
         self._queue_bytes, self._waiting_bytes = queue_bytes, 0
         self._waiting: queue.Queue[_Waiting | None] = queue.Queue(queue_limit)
@@ -130,6 +139,7 @@ class Road:
         if mark is not None:
             self._in_progress.add(mark)
         self._waiting_bytes += weight
+        self._measures.queued()
         try:
             answer: asyncio.Future[Outcome] = asyncio.get_running_loop().create_future()
             self._waiting.put_nowait(_Waiting(command, answer))
@@ -137,6 +147,7 @@ class Road:
         except queue.Full:
             raise QueueFull from None
         finally:
+            self._measures.answered()
             self._waiting_bytes -= weight
             if mark is not None:
                 self._in_progress.discard(mark)
@@ -171,16 +182,21 @@ class Road:
 
         False where no transaction could be begun, so that there is no use in trying more now.
         """
+        begin = time.perf_counter()
         try:
             answers = self._in_one_transaction(group)
+            self._measures.grouped([outcome for _, outcome in answers], time.perf_counter() - begin)
         except _NotBegun:
+            self._measures.failed()
             logger.exception("no transaction could be begun")
             self._answer([(waiting, StorageFailed()) for waiting in group])
             return False
         except _CommitFailed:
+            self._measures.failed()
             logger.exception("a commit was not confirmed")
             answers = [(waiting, OutcomeUnknown()) for waiting in group]
         except Exception as error:
+            self._measures.failed()
             if len(group) > 1:
                 return self._carry_out_one_by_one(group)
             if is_passing(error) and tries > 1:

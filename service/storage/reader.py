@@ -1,12 +1,13 @@
 """Reads, each in a transaction of its own; single rows through `lookups`."""
 
+import copy
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, NamedTuple
 
-from sqlalchemy import Engine, RowMapping, Select, bindparam, func, select
+from sqlalchemy import Engine, RowMapping, Select, and_, bindparam, func, or_, select
 
-from service.domain.access import AccessKey
+from service.domain.access import UNLIMITED, AccessKey, Limits
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, SubjectKind
 from service.domain.state import Decision
@@ -68,6 +69,15 @@ class Reader:
         self._lookups = Lookups(engine)
         self._plans: dict[str, Plan] = {}
         self.log = Log(self._all)
+        self._limits = UNLIMITED
+
+    def within(self, limits: Limits) -> "Reader":
+        """The same reader, for which the tests outside of these limits do not exist."""
+        if not limits.is_limited:
+            return self
+        limited = copy.copy(self)
+        limited._limits = limits  # noqa: SLF001 - its own class
+        return limited
 
     @property
     def looks_up_at_once(self) -> bool:
@@ -107,16 +117,22 @@ class Reader:
     def test(self, key: str) -> SequentialTest | None:
         """The test of this key."""
         row = self._lookups.first(_TEST, key=key)
-        return rows.test_of(row) if row is not None else None
+        test = rows.test_of(row) if row is not None else None
+        return test if test is not None and self._limits.allow(test.subject, test.labels) else None
 
     def version(self, key: str) -> int | None:
         """The version of the test of this key."""
+        if self._limits.is_limited:
+            test = self.test(key)
+            return None if test is None else test.version
         row = self._lookups.first(_VERSION, key=key)
         return None if row is None else int(row["version"])
 
     def tests(self, filters: TestFilters, after: str | None, limit: int) -> list[SequentialTest]:
         """Tests by key that match the filters, those after `after`."""
-        found = _filtered(select(tables.tests), filters).order_by(tables.tests.c.key).limit(limit)
+        found = (
+            _within(_filtered(select(tables.tests), filters), self._limits).order_by(tables.tests.c.key).limit(limit)
+        )
         if after is not None:
             found = found.where(tables.tests.c.key > after)
         return [rows.test_of(row) for row in self._all(found)]
@@ -130,7 +146,7 @@ class Reader:
         """Tests that match the filters and have changed since the change `after`, in the order of the changes."""
         column = tables.tests.c
         shown = (column.change, column.key, column.version, column.decision, column.status, column.updated_at)
-        found = _filtered_each(select(*shown), filters)
+        found = _within(_filtered_each(select(*shown), filters), self._limits)
         found = found.where(column.change > after).order_by(column.change).limit(limit)
         return [Change(*row.values()) for row in self._all(found)]
 
@@ -138,7 +154,8 @@ class Reader:
         """How many tests there are of each kind, status and decision."""
         by = (tables.tests.c.subject_kind, tables.tests.c.status, tables.tests.c.decision)
         with answering(), self._engine.connect() as connection:
-            return [Count(*row) for row in connection.execute(select(*by, func.count()).group_by(*by))]
+            counted = _within(select(*by, func.count()), self._limits).group_by(*by)
+            return [Count(*row) for row in connection.execute(counted)]
 
     def _all(self, found: Select[Any]) -> list[RowMapping]:
         with answering(), self._engine.connect() as connection:
@@ -162,6 +179,21 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
         found = found.where(column.key.in_(labelled))
     if filters.updated_after is not None:
         found = found.where(column.updated_at > filters.updated_after)
+    return found
+
+
+def _within(found: Select[Any], limits: Limits) -> Select[Any]:
+    """Only tests inside the limits; labels are looked up for each test by itself."""
+    column, labels = tables.tests.c, tables.test_labels.c
+    if limits.subjects:
+        of_one = [
+            and_(column.subject_kind == subject.kind.value, column.subject_name == subject.name)
+            for subject in limits.subjects
+        ]
+        found = found.where(or_(*of_one))
+    for name, values in limits.labels.items():
+        own = select(labels.test).where(labels.test == column.key, labels.name == name, labels.value.in_(values))
+        found = found.where(own.exists())
     return found
 
 

@@ -5,7 +5,7 @@ from typing import Any
 
 from sqlalchemy import RowMapping
 
-from service.domain.access import AccessKey, Role
+from service.domain.access import UNLIMITED, AccessKey, Limits, Role
 from service.domain.chain import Act, Entry, Head, json_of
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
@@ -181,12 +181,31 @@ def row_of_key(key: AccessKey) -> Row:
         "created_at": key.created_at,
         "expires_at": key.expires_at,
         "revoked_at": key.revoked_at,
+        **_row_of_limits(key.limits),
     }
 
 
 def key_of(row: RowMapping) -> AccessKey:
     """The key in a row."""
-    return AccessKey(**{**row, "role": Role(row["role"])})
+    values = {**row, "role": Role(row["role"]), "limits": _limits_of(row)}
+    del values["subjects"], values["labels"]
+    return AccessKey(**values)
+
+
+def _row_of_limits(limits: Limits) -> Row:
+    subjects = [[subject.kind.value, subject.name] for subject in limits.subjects]
+    return {
+        "subjects": json.dumps(subjects, ensure_ascii=False) if subjects else None,
+        "labels": json.dumps(dict(limits.labels), ensure_ascii=False, sort_keys=True) if limits.labels else None,
+    }
+
+
+def _limits_of(row: RowMapping) -> Limits:
+    if row["subjects"] is None and row["labels"] is None:
+        return UNLIMITED
+    subjects = tuple(Subject(SubjectKind(kind), name) for kind, name in json.loads(row["subjects"] or "[]"))
+    labels = {name: tuple(values) for name, values in json.loads(row["labels"] or "{}").items()}
+    return Limits(subjects, labels)
 
 
 def _decided_of(row: RowMapping) -> Decided | None:

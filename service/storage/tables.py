@@ -118,6 +118,8 @@ api_keys = Table(
     Column("created_at", UtcTime, nullable=False),
     Column("expires_at", UtcTime),
     Column("revoked_at", UtcTime),
+    Column("subjects", Text),
+    Column("labels", Text),
     PrimaryKeyConstraint("id"),
     UniqueConstraint("digest"),
     CheckConstraint("role IN ('viewer', 'collector', 'engineer', 'administrator')", name="role"),

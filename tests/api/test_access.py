@@ -1,9 +1,11 @@
 """Who may do what, asked of every route the service has."""
 
+import time
 from datetime import UTC, datetime, timedelta
 
 import httpx
 import pytest
+from fastapi.routing import iter_route_contexts
 
 from service.app import create_app
 from service.domain.access import Role
@@ -36,6 +38,7 @@ LEAST_ROLE = {
     ("GET", "/v1/events"): "viewer",
     ("GET", "/v1/tests/{key}/inference"): "viewer",
     ("GET", "/v1/summary"): "viewer",
+    ("GET", "/metrics"): "viewer",
     ("GET", "/v1/keys"): "administrator",
     ("POST", "/v1/keys"): "administrator",
     ("DELETE", "/v1/keys/{name}"): "administrator",
@@ -44,14 +47,18 @@ OPEN = {("GET", "/healthz"), ("GET", "/readyz"), ("GET", "/openapi.json")}
 
 
 def routes() -> set[tuple[str, str]]:
-    """Every route of the service itself."""
+    """Every route of the service itself, described or not."""
+    found = set()
+    for context in iter_route_contexts(create_app(Settings()).routes):
+        found |= {(method, context.path or "") for method in (context.methods or {"ANY"}) - {"HEAD"}}
+    return found
+
+
+def test_every_route_has_a_rule_and_is_described() -> None:
+    assert routes() == LEAST_ROLE.keys() | OPEN
     paths = create_app(Settings()).openapi()["paths"]
     described = {(method.upper(), path) for path, operations in paths.items() for method in operations}
-    return described | {("GET", "/openapi.json")}
-
-
-def test_every_route_has_a_rule() -> None:
-    assert routes() == LEAST_ROLE.keys() | OPEN
+    assert described | {("GET", "/openapi.json")} == routes()
 
 
 def request(client: httpx.Client, method: str, path: str) -> int:
@@ -61,7 +68,9 @@ def request(client: httpx.Client, method: str, path: str) -> int:
 
 
 @pytest.mark.parametrize(("method", "path"), sorted(LEAST_ROLE))
-def test_each_role_reaches_what_it_may_and_nothing_else(service: Running, method: str, path: str) -> None:
+def test_each_role_reaches_what_it_may_and_nothing_else(
+    service: Running, ended: list[str], method: str, path: str
+) -> None:
     least = Role(LEAST_ROLE[method, path])
     for role in ROLES:
         with service.client(role) as client:
@@ -70,6 +79,25 @@ def test_each_role_reaches_what_it_may_and_nothing_else(service: Running, method
             assert status != 401
     with service.client(None) as nobody:
         assert request(nobody, method, path) == 401
+        for secret in ended:
+            nobody.headers["Authorization"] = f"Bearer {secret}"
+            assert request(nobody, method, path) == 401
+
+
+@pytest.fixture(scope="module")
+def ended(admin: httpx.Client, new_name: Namer) -> list[str]:
+    """The secrets of an administrator's key that has expired and of one that was revoked."""
+    soon = datetime.now(UTC) + timedelta(seconds=0.5)
+    secrets = []
+    for expires_at in (soon.isoformat(), None):
+        body = {"name": new_name("ended"), "role": "administrator", "expires_at": expires_at}
+        made = admin.post("/v1/keys", json=body)
+        assert made.status_code == 201, made.text
+        secrets.append(made.json()["secret"])
+    admin.delete(f"/v1/keys/{body['name']}").raise_for_status()
+    while datetime.now(UTC) <= soon:
+        time.sleep(0.01)
+    return secrets
 
 
 @pytest.mark.parametrize(("method", "path"), sorted(OPEN))

@@ -85,6 +85,23 @@ def test_a_fault_of_a_large_body_is_named_as_in_a_small_one(admin: httpx.Client,
     assert (accepted.status_code, accepted.json()["last_sequence"]) == (201, 2000)
 
 
+@pytest.mark.parametrize("number", ["1e999", "1e-999", "0." + "0" * 500 + "1"])
+def test_a_number_that_no_double_holds_is_no_object(admin: httpx.Client, new_name: Namer, number: str) -> None:
+    key = with_test(admin, new_name, SEAL)
+    refused = {
+        f"/v1/tests/{key}/observations": [f'{{"observations": [{number}]}}', f'{{"observations": {number}}}', number],
+        "/v1/characteristics": [f'{{"truncation": {number}}}', f'{{"candidates": [{number}, {number}]}}', number],
+        "/v1/rehearsal": [f'{{"plan": {number}, "submission": {number}}}'],
+        "/v1/tests": [f'{{"key": "k", "plan": "p", "subject": {number}}}'],
+        "/v1/keys": [f'{{"name": "k", "role": "viewer", "subjects": [{number}]}}'],
+    }
+    for path, bodies in refused.items():
+        for body in bodies:
+            answer = admin.post(path, content=body, headers={"Content-Type": JSON})
+            assert (answer.status_code, answer.json()["type"]) == (422, "urn:sprt-monitor:problem:invalid-body"), body
+            assert "must be an" in answer.text, body
+
+
 def test_unknown_addresses_and_methods_are_problems(admin: httpx.Client) -> None:
     assert admin.get("/v1/nothing").json()["type"].endswith(":not-found")
     answer = admin.put("/v1/plans", json={})

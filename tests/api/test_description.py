@@ -101,6 +101,8 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
                 told = response["content"]["text/event-stream"]["example"]
                 (data,) = (line.removeprefix("data: ") for line in told.splitlines() if line.startswith("data: "))
                 events.TestEventOut.model_validate_json(data)
+            elif "text/plain" in response["content"]:
+                assert response["content"]["text/plain"]["example"].endswith("\n")
             elif int(status) < 300:
                 schema = response["content"]["application/json"]["schema"]
                 for choice in schema.get("anyOf", [schema]):

@@ -7,6 +7,9 @@ from alembic.autogenerate import compare_metadata
 from alembic.runtime.migration import MigrationContext
 from sqlalchemy import Engine, inspect, text
 
+from service.domain.access import UNLIMITED, Role, limits_of
+from service.ingest.commands import CreateKey
+from service.ingest.road import perform_now
 from service.storage.migrate import (
     SchemaMismatch,
     check_known,
@@ -106,3 +109,15 @@ def test_every_constraint_has_a_name(engine: Engine) -> None:
         assert inspector.get_pk_constraint(table)["name"], table
         assert all(key["name"] for key in inspector.get_foreign_keys(table)), table
         assert all(check["name"] for check in inspector.get_check_constraints(table)), table
+
+
+def test_a_limited_key_does_not_outlive_its_limits(engine: Engine) -> None:
+    limits = limits_of([], [("line", "3")])
+    for name, given in (("limited", limits), ("free", UNLIMITED)):
+        perform_now(engine, CreateKey(name, Role.VIEWER, limits=given))
+    downgrade(engine, "0004")
+    upgrade(engine)
+    found = Reader(engine).keys()
+    keys = {key.name: key for key in found}
+    assert keys["limited"].revoked_at is not None
+    assert keys["free"].revoked_at is None

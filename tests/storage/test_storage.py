@@ -10,10 +10,12 @@ from sqlalchemy import Engine, event, text
 from sqlalchemy.exc import IntegrityError
 
 from service.api.decoding import UnfitNumber, decoded
-from service.domain.access import AccessKey, Role
+from service.domain.access import UNLIMITED, AccessKey, Role, limits_of
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
+from service.ingest.commands import CreateKey, IssuedKey
+from service.ingest.road import perform_now
 from service.storage.logs import PAGE_CHARACTERS
 from service.storage.reader import Reader, TestFilters
 from service.storage.writer import writing
@@ -237,3 +239,41 @@ def test_only_one_valid_key_bears_a_name(engine: Engine) -> None:
     assert reader.key_with_digest("1" * 64) == replace(first, revoked_at=NOW)
     assert reader.key_with_digest("3" * 64) is None
     assert reader.keys() == [replace(first, revoked_at=NOW), second]
+
+
+def test_a_reader_within_limits_knows_no_other_test(engine: Engine) -> None:
+    subject = Subject(SubjectKind.LOT, "2041/B")
+    add(
+        engine,
+        a_test("in", subject=subject, labels={"line": "3", "shift": "a"}),
+        a_test("line", subject=Subject(SubjectKind.LOT, "other"), labels={"line": "3"}),
+        a_test("kind", subject=Subject(SubjectKind.EXPERIMENT, "2041/B"), labels={"line": "4"}),
+        a_test("bare", subject=subject, labels={}),
+    )
+    reader = Reader(engine)
+    assert reader.within(UNLIMITED) is reader
+    for limits, keys in (
+        (limits_of([], [("line", "3")]), ["in", "line"]),
+        (limits_of([], [("line", "3"), ("line", "4")]), ["in", "kind", "line"]),
+        (limits_of([], [("line", "3"), ("shift", "a")]), ["in"]),
+        (limits_of([subject], []), ["bare", "in"]),
+        (limits_of([subject], [("line", "3")]), ["in"]),
+        (limits_of([Subject(SubjectKind.LOT, "none")], []), []),
+    ):
+        limited = reader.within(limits)
+        assert [test.key for test in limited.tests(TestFilters(), None, 10)] == keys
+        assert sorted(change.key for change in limited.changes(TestFilters(), 0, 10)) == keys
+        assert sum(count.tests for count in limited.counts()) == len(keys)
+        for key in ("in", "line", "kind", "bare"):
+            assert (limited.test(key) is not None) == (limited.version(key) is not None) == (key in keys)
+    assert len(reader.tests(TestFilters(), None, 10)) == 4
+
+
+def test_a_key_comes_back_with_its_limits(engine: Engine) -> None:
+    limits = limits_of([Subject(SubjectKind.LOT, "ü/7 <b>")], [("line", "3"), ("line", "4"), ("shift", "a")])
+    for name, given in (("limited", limits), ("free", UNLIMITED)):
+        issued = perform_now(engine, CreateKey(name, Role.VIEWER, limits=given))
+        assert isinstance(issued, IssuedKey)
+        stored = Reader(engine).key_with_digest(issued.key.digest)
+        assert stored is not None
+        assert stored.limits == given

@@ -40,7 +40,7 @@ async def show_summary(parts: PartsOf) -> SummaryOut:
 async def list_keys(parts: PartsOf) -> KeysOut:
     """Every key that was ever made; never a secret."""
     keys = await reading(parts.reader.keys)
-    return KeysOut(items=[KeyOut.model_validate(key) for key in keys])
+    return KeysOut(items=[KeyOut.of(key) for key in keys])
 
 
 @router.post(
@@ -56,11 +56,16 @@ async def create_key(
     parts: PartsOf,
     key: Annotated[AccessKey, requires(Role.ADMINISTRATOR)],
 ) -> IssuedKeyOut:
-    """The secret is in this answer and nowhere else."""
-    command = CreateKey(form.name, form.role, form.expires_at, key.name, request_id_of(request))
+    """
+    The secret is in this answer and nowhere else.
+
+    With `subjects` or `labels` the key is for tests of one of the subjects, and with one of the values of each label:
+    others do not exist for it, and it cannot register any.
+    """
+    command = CreateKey(form.name, form.role, form.expires_at, form.limits(), key.name, request_id_of(request))
     issued = cast("IssuedKey", await parts.road.submit(command))
     response.headers["Cache-Control"] = "no-store"
-    return IssuedKeyOut(**KeyOut.model_validate(issued.key).model_dump(), secret=issued.secret)
+    return IssuedKeyOut(**dict(KeyOut.of(issued.key)), secret=issued.secret)
 
 
 @router.delete(
@@ -73,4 +78,4 @@ async def revoke_key(
 ) -> KeyOut:
     """The key of this name ends at once; the record of it stays."""
     command = RevokeKey(name, key.name, request_id_of(request))
-    return KeyOut.model_validate(cast("AccessKey", await parts.road.submit(command)))
+    return KeyOut.of(cast("AccessKey", await parts.road.submit(command)))

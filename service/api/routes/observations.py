@@ -157,6 +157,7 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
         idempotency_key=idempotency_key,
         expected_versions=expected_versions(request),
         request_id=request_id_of(request),
+        limits=access_key.limits,
     )
 
 

@@ -35,7 +35,10 @@ class PlansQuery(BaseModel):
 @router.post(
     "",
     status_code=201,
-    responses=answers_with("invalid-plan", "computation-too-large", "plan-differs", has_body=True),
+    responses={
+        **answers_with("invalid-plan", "computation-too-large", "plan-differs", has_body=True),
+        200: {"description": "The plan exists already with this content", "model": PlanOut},
+    },
     summary="Create a plan",
 )
 async def create_plan(

@@ -46,7 +46,10 @@ class TestsQuery(FiltersQuery):
 @router.post(
     "",
     status_code=201,
-    responses=answers_with("invalid-test", "test-differs", "version-moved", has_body=True),
+    responses={
+        **answers_with("invalid-test", "key-limited", "test-differs", "version-moved", has_body=True),
+        200: {"description": "The test exists already with this content", "model": TestOut},
+    },
     summary="Register a test",
 )
 async def register_test(
@@ -65,6 +68,7 @@ async def register_test(
         actor=key.name,
         expected_versions=expected_versions(request),
         request_id=request_id_of(request),
+        limits=key.limits,
     )
     outcome = cast("RegisteredTest", await parts.road.submit(command))
     response.status_code = 201 if outcome.is_new else 200

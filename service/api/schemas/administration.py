@@ -5,10 +5,17 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Moment, Name, shown_as
-from service.domain.access import Role
+from service.api.schemas.common import Answer, Form, Moment, Name, Text, shown_as
+from service.api.schemas.tests import SubjectForm, SubjectOut
+from service.domain.access import AccessKey, Limits, Role, limits_of
 
-EXAMPLE: dict[str, Any] = {"name": "line-2-tester", "role": "collector", "expires_at": "2031-12-31T00:00:00Z"}
+EXAMPLE: dict[str, Any] = {
+    "name": "line-2-tester",
+    "role": "collector",
+    "expires_at": "2031-12-31T00:00:00Z",
+    "subjects": [],
+    "labels": {"line": ["2"]},
+}
 
 
 STORED: dict[str, Any] = {
@@ -34,6 +41,15 @@ class KeyForm(Form):
     name: Name
     role: Role
     expires_at: Moment | None = None
+    subjects: Annotated[list[SubjectForm], Field(max_length=100)] = Field(default_factory=list)
+    labels: Annotated[dict[Name, Annotated[list[Text], Field(min_length=1, max_length=100)]], Field(max_length=20)] = (
+        Field(default_factory=dict)
+    )
+
+    def limits(self) -> Limits:
+        """The domain's value."""
+        labels = [(name, value) for name, values in self.labels.items() for value in values]
+        return limits_of([subject.subject() for subject in self.subjects], labels)
 
 
 class KeyOut(Answer):
@@ -47,6 +63,22 @@ class KeyOut(Answer):
     created_at: datetime
     expires_at: datetime | None
     revoked_at: datetime | None
+    subjects: list[SubjectOut]
+    labels: dict[str, list[str]]
+
+    @classmethod
+    def of(cls, key: AccessKey) -> "KeyOut":
+        """From the domain's key."""
+        return cls(
+            id=key.id,
+            name=key.name,
+            role=key.role,
+            created_at=key.created_at,
+            expires_at=key.expires_at,
+            revoked_at=key.revoked_at,
+            subjects=[SubjectOut.model_validate(subject) for subject in key.limits.subjects],
+            labels={name: list(values) for name, values in key.limits.labels.items()},
+        )
 
 
 class IssuedKeyOut(KeyOut):

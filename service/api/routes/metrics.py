@@ -1,0 +1,31 @@
+"""Figures for monitoring."""
+
+from typing import Any
+
+from fastapi import APIRouter, Response
+
+from service.api.access import requires_metrics
+from service.api.description import answers_with
+from service.api.metrics import MEDIA_TYPE
+from service.api.parts import PartsOf, reading
+
+router = APIRouter(tags=["health"])
+
+FIGURES: dict[int | str, dict[str, Any]] = {
+    200: {
+        "description": "The text format of Prometheus",
+        "content": {"text/plain": {"schema": {"type": "string"}, "example": "sprt_event_streams 2.0\n"}},
+    }
+}
+
+
+@router.get(
+    "/metrics",
+    responses={**answers_with("key-limited"), **FIGURES},
+    response_class=Response,
+    summary="Figures for monitoring",
+    dependencies=[requires_metrics()],
+)
+async def show_metrics(parts: PartsOf) -> Response:
+    """Requests, latencies, what waits, groups, commits, decisions and streams, added up over all processes."""
+    return Response(await reading(parts.metrics.text), media_type=MEDIA_TYPE)
