@@ -15,7 +15,17 @@ from service.api.access import AccessGuard
 from service.api.description import describe
 from service.api.parts import Computers, Parts
 from service.api.requests import RequestId
-from service.api.routes import administration, characteristics, events, health, history, observations, plans, tests
+from service.api.routes import (
+    acts,
+    administration,
+    characteristics,
+    events,
+    health,
+    history,
+    observations,
+    plans,
+    tests,
+)
 from service.api.streams import Streams
 from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
@@ -119,7 +129,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, characteristics, tests, observations, history, events, administration, health):
+    for module in (plans, characteristics, tests, observations, acts, history, events, administration, health):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]

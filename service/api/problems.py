@@ -87,6 +87,12 @@ _TYPES = (
         "The first submission is still in progress",
         "A submission with the key 'a1' is in progress.",
     ),
+    ProblemType(
+        "changes-nothing",
+        409,
+        "The correction would change nothing",
+        "Observation 7 is already what this correction would make it.",
+    ),
     ProblemType("version-moved", 412, "The state has moved on", "If-Match gave 3, its version is now 4."),
     ProblemType("body-too-large", 413, "The body is too large", "A body may have at most 8388608 bytes."),
     ProblemType(
@@ -110,6 +116,16 @@ _TYPES = (
         "An observation cannot be right",
         "The submission is refused as a whole.",
         "/values/17",
+    ),
+    ProblemType(
+        "invalid-correction", 422, "The correction cannot be right", "The correction is refused.", "/observation/value"
+    ),
+    ProblemType(
+        "invalid-disposition",
+        422,
+        "The disposition does not say what it must",
+        "The disposition is refused and the test stays open; see errors.",
+        "/deviation_reason",
     ),
     ProblemType("invalid-key", 422, "The access key cannot be made", "The expiry must lie in the future."),
     ProblemType(
@@ -149,6 +165,8 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.InvalidPlan: "invalid-plan",
     errors.InvalidTest: "invalid-test",
     errors.InvalidObservations: "invalid-observations",
+    errors.InvalidCorrection: "invalid-correction",
+    errors.InvalidDisposition: "invalid-disposition",
     errors.InvalidKey: "invalid-key",
     errors.InvalidQuestion: "invalid-question",
     errors.ComputationTooLarge: "computation-too-large",
@@ -162,6 +180,8 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.RepeatedUnits: "unit-repeated",
     errors.TestIsClosed: "test-closed",
     errors.SubmissionInProgress: "in-progress",
+    errors.ChangesNothing: "changes-nothing",
+    errors.RoleTooNarrow: "role-required",
     errors.VersionMoved: "version-moved",
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",

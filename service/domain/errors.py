@@ -6,6 +6,7 @@ What can go wrong, without a word of HTTP.
     │   ├── InvalidPlan
     │   ├── InvalidTest
     │   ├── InvalidObservations
+    │   ├── InvalidCorrection, InvalidDisposition
     │   ├── InvalidKey
     │   ├── InvalidQuestion
     │   ├── ComputationTooLarge
@@ -14,7 +15,8 @@ What can go wrong, without a word of HTTP.
     │   ├── UnknownPlan, UnknownTest, UnknownKey
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
-    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress
+    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, ChangesNothing
+    ├── RoleTooNarrow            the access key may not do this as things stand
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway
@@ -62,6 +64,20 @@ class InvalidObservations(Invalid):
 
     def __init__(self, faults: Sequence[Fault]) -> None:
         super().__init__("The submission is refused as a whole and nothing of it is stored; see errors.", faults)
+
+
+class InvalidCorrection(Invalid):
+    """A correction cannot be right; nothing is changed."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The correction is refused and nothing is changed; see errors.", faults)
+
+
+class InvalidDisposition(Invalid):
+    """A disposition does not say what it must."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The disposition is refused and the test stays open; see errors.", faults)
 
 
 class InvalidKey(Invalid):
@@ -162,7 +178,7 @@ class TestIsClosed(Conflict):
     __test__ = False
 
     def __init__(self, key: str) -> None:
-        super().__init__(f"The test {key!r} is closed and takes no further observations.")
+        super().__init__(f"The test {key!r} is closed and takes no further observations, corrections or disposition.")
 
 
 class SubmissionInProgress(Conflict):
@@ -170,6 +186,17 @@ class SubmissionInProgress(Conflict):
 
     def __init__(self, key: str) -> None:
         super().__init__(f"A submission with the idempotency key {key!r} is still in progress; try again shortly.")
+
+
+class ChangesNothing(Conflict):
+    """The observation is already what the correction would make it."""
+
+    def __init__(self, observation: int) -> None:
+        super().__init__(f"Observation {observation} is already what this correction would make it.")
+
+
+class RoleTooNarrow(DomainError):
+    """The access key may not do this as things stand."""
 
 
 class VersionMoved(DomainError):

@@ -7,6 +7,7 @@ from typing import Any, NamedTuple
 from sqlalchemy import Engine, RowMapping, Select, bindparam, func, select
 
 from service.domain.access import AccessKey
+from service.domain.disposing import Verdict
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, SubjectKind
 from service.domain.state import Decision
@@ -38,6 +39,7 @@ class TestFilters:
     plan: str | None = None
     labels: tuple[tuple[str, str], ...] = ()
     updated_after: datetime | None = None
+    disposition: Verdict | None = None
 
 
 class Change(NamedTuple):
@@ -153,6 +155,7 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
         column.subject_kind: filters.kind,
         column.subject_name: filters.subject,
         column.plan: filters.plan,
+        column.disposition: filters.disposition,
     }
     for which, value in equal.items():
         if value is not None:
@@ -167,7 +170,8 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
 
 def _filtered_each(found: Select[Any], filters: TestFilters) -> Select[Any]:
     """
-    The same filters, but for the time, asked of each test by itself: to find a few among the few that have changed.
+    The same filters, but for time and disposition, asked of each test by itself: to find a few among the few that have
+    changed.
 
     Appending nothing to a column keeps a planner from reading all tests that share its value; labels are looked up.
     """

@@ -30,6 +30,8 @@ LEAST_ROLE = {
     ("GET", "/v1/tests/{key}/path"): "viewer",
     ("GET", "/v1/tests/{key}/outlook"): "viewer",
     ("GET", "/v1/tests/{key}/assumptions"): "viewer",
+    ("POST", "/v1/tests/{key}/corrections"): "collector",
+    ("POST", "/v1/tests/{key}/disposition"): "engineer",
     ("GET", "/v1/tests/{key}/history"): "viewer",
     ("GET", "/v1/events"): "viewer",
     ("GET", "/v1/summary"): "viewer",

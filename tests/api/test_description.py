@@ -5,6 +5,7 @@ import pytest
 
 from service.api import problems
 from service.api.schemas import (
+    acts,
     administration,
     assumptions,
     characteristics,
@@ -76,6 +77,7 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
     models = {
         model.__name__: model
         for module in (
+            acts,
             administration,
             assumptions,
             characteristics,
