@@ -24,6 +24,7 @@ from service.api.routes import (
     history,
     observations,
     plans,
+    subjects,
     tests,
 )
 from service.api.streams import Streams
@@ -129,7 +130,18 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard)
     app.add_middleware(RequestId)
-    for module in (plans, characteristics, tests, observations, acts, history, events, administration, health):
+    for module in (
+        plans,
+        characteristics,
+        tests,
+        observations,
+        acts,
+        history,
+        subjects,
+        events,
+        administration,
+        health,
+    ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
     app.openapi = describe(app)  # type: ignore[method-assign]

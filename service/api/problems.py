@@ -174,6 +174,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.UnknownPlan: "not-found",
     errors.UnknownTest: "not-found",
     errors.UnknownKey: "not-found",
+    errors.UnknownSubject: "not-found",
     errors.PlanDiffers: "plan-differs",
     errors.TestDiffers: "test-differs",
     errors.KeyNameTaken: "key-name-taken",

@@ -12,7 +12,7 @@ What can go wrong, without a word of HTTP.
     │   ├── ComputationTooLarge
     │   └── IdempotencyKeyReused
     ├── Unknown                  there is no such thing
-    │   ├── UnknownPlan, UnknownTest, UnknownKey
+    │   ├── UnknownPlan, UnknownTest, UnknownKey, UnknownSubject
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, ChangesNothing
@@ -135,6 +135,12 @@ class UnknownKey(Unknown):
     """No valid access key of this name."""
 
     thing = "access key"
+
+
+class UnknownSubject(Unknown):
+    """No test of this subject."""
+
+    thing = "subject"
 
 
 class Conflict(DomainError):

@@ -33,6 +33,7 @@ LEAST_ROLE = {
     ("POST", "/v1/tests/{key}/corrections"): "collector",
     ("POST", "/v1/tests/{key}/disposition"): "engineer",
     ("GET", "/v1/tests/{key}/history"): "viewer",
+    ("GET", "/v1/subjects/{kind}/{name}"): "viewer",
     ("GET", "/v1/events"): "viewer",
     ("GET", "/v1/summary"): "viewer",
     ("GET", "/v1/keys"): "administrator",
@@ -55,7 +56,7 @@ def test_every_route_has_a_rule() -> None:
 
 def request(client: httpx.Client, method: str, path: str) -> int:
     body: dict[str, str] | None = {} if method == "POST" else None
-    with client.stream(method, path.format(name="none", key="none"), json=body) as answer:
+    with client.stream(method, path.format(name="none", key="none", kind="lot"), json=body) as answer:
         return answer.status_code
 
 

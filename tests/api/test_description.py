@@ -14,6 +14,7 @@ from service.api.schemas import (
     observations,
     outlook,
     plans,
+    subjects,
     tests,
 )
 from service.api.schemas.common import Answer
@@ -86,6 +87,7 @@ def test_every_answer_has_an_example_that_fits_it(description: dict) -> None:  #
             observations,
             outlook,
             plans,
+            subjects,
             tests,
         )
         for model in vars(module).values()
