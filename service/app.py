@@ -20,6 +20,7 @@ from service.api.parts import Computers, Parts
 from service.api.rates import Rates
 from service.api.requests import RequestId, accounts
 from service.api.routes import (
+    acts,
     administration,
     characteristics,
     events,
@@ -30,6 +31,7 @@ from service.api.routes import (
     observations,
     plans,
     simulations,
+    subjects,
     tests,
 )
 from service.api.simulations import Simulations
@@ -150,8 +152,10 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         simulations,
         tests,
         observations,
+        acts,
         inference,
         history,
+        subjects,
         events,
         administration,
         health,

@@ -100,6 +100,12 @@ _TYPES = (
         "The test is not decided yet",
         "The test 'lot-7' is not decided yet; until then ask for its outlook.",
     ),
+    ProblemType(
+        "changes-nothing",
+        409,
+        "The correction would change nothing",
+        "Observation 7 is already what this correction would make it.",
+    ),
     ProblemType("version-moved", 412, "The state has moved on", "If-Match gave 3, its version is now 4."),
     ProblemType("body-too-large", 413, "The body is too large", "A body may have at most 8388608 bytes."),
     ProblemType(
@@ -123,6 +129,16 @@ _TYPES = (
         "An observation cannot be right",
         "The submission is refused as a whole.",
         "/values/17",
+    ),
+    ProblemType(
+        "invalid-correction", 422, "The correction cannot be right", "The correction is refused.", "/observation/value"
+    ),
+    ProblemType(
+        "invalid-disposition",
+        422,
+        "The disposition does not say what it must",
+        "The disposition is refused and the test stays open; see errors.",
+        "/deviation_reason",
     ),
     ProblemType("invalid-key", 422, "The access key cannot be made", "The expiry must lie in the future."),
     ProblemType(
@@ -165,6 +181,8 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.InvalidPlan: "invalid-plan",
     errors.InvalidTest: "invalid-test",
     errors.InvalidObservations: "invalid-observations",
+    errors.InvalidCorrection: "invalid-correction",
+    errors.InvalidDisposition: "invalid-disposition",
     errors.InvalidKey: "invalid-key",
     errors.InvalidQuestion: "invalid-question",
     errors.ComputationTooLarge: "computation-too-large",
@@ -173,6 +191,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.UnknownTest: "not-found",
     errors.UnknownKey: "not-found",
     errors.UnknownSimulation: "not-found",
+    errors.UnknownSubject: "not-found",
     errors.PlanDiffers: "plan-differs",
     errors.TestDiffers: "test-differs",
     errors.KeyNameTaken: "key-name-taken",
@@ -181,6 +200,8 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.SubmissionInProgress: "in-progress",
     errors.NotDecided: "not-decided",
     errors.OutsideLimits: "key-limited",
+    errors.ChangesNothing: "changes-nothing",
+    errors.RoleTooNarrow: "role-required",
     errors.VersionMoved: "version-moved",
     errors.QueueFull: "overloaded",
     errors.ShuttingDown: "overloaded",

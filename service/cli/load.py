@@ -93,6 +93,8 @@ def _post_all(client: "ServiceClient", test: str, chunks: "Iterator[Chunk]", sou
                 raise fail(_with_lines(refusal, piece)) from None
             if client.was_replay:
                 known += len(piece.rows)
+                # What was answered then may not hold any more: a correction can put a decision off.
+                state = client.get(f"/v1/tests/{test}") if state["decision"] != "continue" else state
             else:
                 posted += len(piece.rows)
             progress.update(task, completed=source.position(), posted=posted)

@@ -12,6 +12,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from service.domain.checks import UNUSUAL, Check, Supposition
 from service.domain.families import Increments
@@ -48,20 +49,19 @@ class Stretch:
     last: int
     last_counted: int
 
+
+@dataclass(frozen=True)
+class Seen:
+    """What was found in a stretch, voided observations left out: those up to the decision, and those after it."""
+
+    stretch: Stretch
+    counted: int
+    overrun: int
+
     @property
     def count(self) -> int:
         """All of them."""
-        return self.last - self.first + 1
-
-    @property
-    def counted(self) -> int:
-        """Those that came up to the decision."""
-        return self.last_counted - self.first + 1
-
-    @property
-    def overrun(self) -> int:
-        """Those that came after it."""
-        return self.count - self.counted
+        return self.counted + self.overrun
 
 
 @dataclass(frozen=True)
@@ -69,6 +69,7 @@ class Assumptions:
     """
     Attributes:
         first_sequence, last_sequence: The observations looked at, None without any.
+        observations: How many they are.
         overrun: How many of them came after the decision.
         checks: In a fixed order, with those that could not be made.
         adjusted: Holm's p-value for each check, None where it was not made.
@@ -78,18 +79,12 @@ class Assumptions:
 
     first_sequence: int | None
     last_sequence: int | None
+    observations: int
     overrun: int
     checks: tuple[Check, ...]
     adjusted: tuple[float | None, ...]
     summary: str
     notes: tuple[str, ...]
-
-    @property
-    def observations(self) -> int:
-        """How many were looked at."""
-        if self.first_sequence is None or self.last_sequence is None:
-            return 0
-        return self.last_sequence - self.first_sequence + 1
 
     @property
     def made(self) -> int:
@@ -116,18 +111,21 @@ def assumptions_of(procedure: Procedure, state: State, bodies: Iterable[tuple[in
     Args:
         procedure: The plan, compiled.
         state: Where the test stands.
-        bodies: The submissions that hold the observations of the stretch to look at, as posted and in order, each
-            with its first sequence.
+        bodies: What holds the observations of the stretch to look at, as they count now and in order, each with its
+            first sequence; voided ones are gaps.
     """
-    stretch = stretch_of(state)
-    seen = _gathered(procedure, stretch, bodies)
+    reach = stretch_of(state)
+    seen, sequences = _gathered(procedure, reach, bodies)
+    counted = int(np.count_nonzero(sequences <= reach.last_counted))
+    stretch = Seen(reach, counted, len(sequences) - counted)
     checks = procedure.family.checks(seen, procedure.known)
     if state.is_decided and stretch.overrun < stretch.counted:
         checks = tuple(_with_stopping(check) for check in checks)
     adjusted = _adjusted(checks)
     return Assumptions(
-        first_sequence=stretch.first if stretch.count else None,
-        last_sequence=stretch.last if stretch.count else None,
+        first_sequence=reach.first if stretch.count else None,
+        last_sequence=reach.last if stretch.count else None,
+        observations=stretch.count,
         overrun=stretch.overrun,
         checks=checks,
         adjusted=adjusted,
@@ -151,39 +149,44 @@ def holm(p_values: list[float]) -> list[float]:
     return adjusted
 
 
-def _gathered(procedure: Procedure, stretch: Stretch, bodies: Iterable[tuple[int, str]]) -> Increments:
-    """The observations of the stretch as one submission."""
-    read, before = list[Increments](), 0
-    for first_of_piece, document in _in_pieces(bodies):
-        if not read:
-            before = max(0, stretch.first - first_of_piece)
+def _gathered(
+    procedure: Procedure, stretch: Stretch, bodies: Iterable[tuple[int, str]]
+) -> tuple[Increments, NDArray[np.int64]]:
+    """The observations of the stretch as one submission, and their sequences."""
+    read, numbers = list[Increments](), list[NDArray[np.int64]]()
+    for piece_numbers, document in _in_pieces(bodies):
         read.append(procedure.family.read(document, procedure.known))
+        numbers.append(piece_numbers)
     if not read:
         empty = np.zeros(0)
-        return Increments(np.zeros(0, np.int64), empty, empty)
-    kept = slice(before, before + stretch.count)
-    return Increments(
+        return Increments(np.zeros(0, np.int64), empty, empty), np.zeros(0, np.int64)
+    sequences = np.concatenate(numbers)
+    kept = slice(*np.searchsorted(sequences, [stretch.first, stretch.last + 1]))
+    seen = Increments(
         units=np.concatenate([piece.units for piece in read])[kept],
         progress=np.concatenate([piece.progress for piece in read])[kept],
         total=np.concatenate([piece.total for piece in read])[kept],
         carried=tuple(np.concatenate(sums)[kept] for sums in zip(*(piece.carried for piece in read), strict=True)),
     )
+    return seen, sequences[kept]
 
 
-def _in_pieces(bodies: Iterable[tuple[int, str]]) -> Iterator[tuple[int, Document]]:
+def _in_pieces(bodies: Iterable[tuple[int, str]]) -> Iterator[tuple[NDArray[np.int64], Document]]:
     """Decoded, with small submissions of one form put together: reading each alone costs far more than reading many."""
-    form, gathered, begins = "", list[Any](), 1
+    form, gathered, numbers = "", list[Any](), list[NDArray[np.int64]]()
     for first, body in bodies:
         document = json.loads(body)
         its_form = "values" if "values" in document else "observations"
         if its_form == form and len(gathered) < PIECE:
             gathered.extend(document[form])
+            numbers.append(np.arange(first, first + len(document[form])))
             continue
         if gathered:
-            yield begins, {form: gathered}
-        form, gathered, begins = its_form, document[its_form], first
+            yield np.concatenate(numbers), {form: gathered}
+        form, gathered = its_form, document[its_form]
+        numbers = [np.arange(first, first + len(gathered))]
     if gathered:
-        yield begins, {form: gathered}
+        yield np.concatenate(numbers), {form: gathered}
 
 
 def _with_stopping(check: Check) -> Check:
@@ -212,16 +215,17 @@ def _summary(checks: tuple[Check, ...], adjusted: tuple[float | None, ...]) -> s
     )
 
 
-def _notes(state: State, stretch: Stretch) -> tuple[str, ...]:
+def _notes(state: State, stretch: Seen) -> tuple[str, ...]:
     notes = [NO_EFFECT]
     if stretch.overrun:
         notes.append(
             f"The {stretch.overrun} observations after the decision are looked at as well: they come from the same "
             "stream, and without them it would be more selected by the stopping."
         )
-    if stretch.count < state.sequence:
+    reach = stretch.stretch
+    if reach.last - reach.first + 1 < state.sequence:
         notes.append(
-            f"Observations {stretch.first} to {stretch.last} of {state.sequence} are looked at, "
+            f"Observations {reach.first} to {reach.last} of {state.sequence} are looked at, "
             f"for there are more than {MOST_OBSERVATIONS}."
         )
     if stretch.count:

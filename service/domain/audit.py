@@ -7,22 +7,36 @@ first place that differs is named. Nothing is kept but the present state and the
 
 import hashlib
 import json
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any
 
 from service.domain.access import AccessKey
 from service.domain.chain import EMPTY, Act, Entry, Head, link_of
-from service.domain.errors import InvalidObservations
-from service.domain.history import decision_of, key_created, key_revoked, plan_created, registered, submitted
+from service.domain.correcting import Correction, Piece, replayed, settled
+from service.domain.disposing import Disposition
+from service.domain.errors import InvalidCorrection, InvalidObservations
+from service.domain.history import (
+    corrected,
+    decision_of,
+    disposed,
+    key_created,
+    key_revoked,
+    plan_created,
+    registered,
+    submitted,
+)
 from service.domain.observing import observe
 from service.domain.plan import Plan, fingerprint_of
 from service.domain.procedure import Procedure, procedure_of
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
 
-Record = Submission | Entry
+Record = Submission | Correction | Entry
+
+# The observations after one and up to another as they counted before an act of this number, and with it.
+ReadAgain = Callable[[int, int, int], Iterable[Piece]]
 
 
 class Differs(Exception):
@@ -41,6 +55,10 @@ class Walked:
     version: int = 0
     updated_at: datetime | None = None
     status: Status = Status.OPEN
+    corrections: int = 0
+    decision_changed: bool = False
+    corrected_after_decision: bool = False
+    disposition: Disposition | None = None
     undeclared: Mapping[str, Any] | None = None
 
 
@@ -49,7 +67,19 @@ class TestAudit:
 
     __test__ = False
 
-    def __init__(self, test: SequentialTest, plan: Plan | None) -> None:
+    def __init__(
+        self, test: SequentialTest, plan: Plan | None, read_again: ReadAgain, first_corrected: int | None
+    ) -> None:
+        """
+        Begin.
+
+        Args:
+            test: As stored.
+            plan: As stored, None where there is none.
+            read_again: Reads a part of the log as it counted after an act of the history.
+            first_corrected: The first observation that was ever corrected; the log is run again from before it.
+        """
+        self._read_again, self._first_corrected, self._uncorrected = read_again, first_corrected, START
         if plan is None or fingerprint_of(plan.document) != plan.fingerprint:
             raise Differs(f"test {test.key}: its plan {test.plan} is missing or not the one that was checked")
         self._test, self._plan = test, plan
@@ -63,19 +93,23 @@ class TestAudit:
         Raises:
             Differs: It does not follow from those before it.
         """
-        entry = record if isinstance(record, Entry) else submitted(record)
+        entry = entry_of(record)
         head = next_head(self._test.key, self.walked.head, entry)
         where = place(self._test.key, entry)
         if (self.walked.undeclared is not None) != (entry.act is Act.DECIDED):
             raise Differs(f"{where}: a decision is recorded where none fell, or is not recorded where one did")
         if isinstance(record, Submission):
             self._take_submission(where, record)
+        elif isinstance(record, Correction):
+            self._take_correction(where, record)
         elif entry.act is Act.DECIDED:
             if entry.details != self.walked.undeclared:
                 raise Differs(f"{where}: the log decides otherwise")
             self.walked = replace(self.walked, undeclared=None)
         elif entry.act is Act.REGISTERED:
             self._take_registration(where, entry)
+        elif entry.act is Act.DISPOSED:
+            self._take_disposition(where, entry)
         else:
             raise Differs(f"{where}: it is no act of a test")
         self.walked = replace(self.walked, head=head)
@@ -100,6 +134,10 @@ class TestAudit:
             "version": (test.version, walked.version),
             "updated_at": (test.updated_at, walked.updated_at),
             "status": (test.status, walked.status),
+            "corrections": (test.corrections, walked.corrections),
+            "decision_changed": (test.decision_changed, walked.decision_changed),
+            "corrected_after_decision": (test.corrected_after_decision, walked.corrected_after_decision),
+            "disposition": (test.disposition, walked.disposition),
             "labels": (dict(test.labels), dict(labels)),
         }
         for name, (stored, found) in held.items():
@@ -124,7 +162,40 @@ class TestAudit:
             raise Differs(f"{where}: it cannot be run again: {error} {error.faults}") from error
         if submission.last_sequence != state.sequence:
             raise Differs(f"{where}: it holds observations to {state.sequence}, not {submission.last_sequence}")
+        if self._first_corrected is not None and submission.last_sequence < self._first_corrected:
+            self._uncorrected = state
         self._move(where, submission.version, submission.received_at, state, submission.state, Act.SUBMITTED)
+
+    def _take_correction(self, where: str, correction: Correction) -> None:
+        before, at = self.walked.state, correction.received_at
+
+        def read(after: int, through: int) -> Iterable[Piece]:
+            return self._read_again(after, through, correction.number)
+
+        if correction.before is not before.decision or not 1 <= correction.observation <= before.sequence:
+            raise Differs(f"{where}: there was no such observation, or the decision before it was another")
+        try:
+            state = settled(before, replayed(self._procedure, self._uncorrected, read, before.sequence), at)
+        except InvalidCorrection as error:
+            raise Differs(f"{where}: {error} {error.faults}") from error
+        self._move(where, correction.version, at, state, correction.state, Act.CORRECTED)
+        self.walked = replace(
+            self.walked,
+            corrections=self.walked.corrections + 1,
+            decision_changed=self.walked.decision_changed or state.decision is not before.decision,
+            corrected_after_decision=self.walked.corrected_after_decision or before.is_decided,
+        )
+
+    def _take_disposition(self, where: str, entry: Entry) -> None:
+        told, version = self._test.disposition, self.walked.version + 1
+        if told is None or entry.details != disposed(replace(self._test, version=version), told, None).details:
+            raise Differs(f"{where}: the test's row says otherwise")
+        if self.walked.status is Status.CLOSED:
+            raise Differs(f"{where}: the test was closed before")
+        disposition = replace(told, by=entry.actor, at=entry.at)
+        self.walked = replace(
+            self.walked, version=version, updated_at=entry.at, status=Status.CLOSED, disposition=disposition
+        )
 
     def _move(self, where: str, version: int, at: datetime, state: State, stored: State, cause: Act) -> None:  # noqa: PLR0913 - what a log entry says
         """The test after an entry of its log."""
@@ -201,6 +272,13 @@ class ServiceAudit:
         return key.revoked_at is not None and _same(entry, key_revoked(key, key.revoked_at, entry.actor, None))
 
 
+def entry_of(record: Record) -> Entry:
+    """What the history says of a record."""
+    if isinstance(record, Submission):
+        return submitted(record)
+    return corrected(record) if isinstance(record, Correction) else record
+
+
 def next_head(chain: str, head: Head, entry: Entry) -> Head:
     """
     The end of a chain after its next entry.
@@ -223,6 +301,8 @@ def place(chain: str, entry: Entry) -> str:
     extent = ""
     if entry.act is Act.SUBMITTED:
         extent = f" of observations {entry.details['first_sequence']} to {entry.details['last_sequence']}"
+    elif entry.act is Act.CORRECTED:
+        extent = f" observation {entry.details['sequence']}"
     return f"{f'test {chain}' if chain else 'service'}, act {entry.number} ({entry.act}{extent})"
 
 

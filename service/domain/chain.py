@@ -27,6 +27,8 @@ class Act(StrEnum):
     REGISTERED = "registered"
     SUBMITTED = "submitted"
     DECIDED = "decided"
+    CORRECTED = "corrected"
+    DISPOSED = "disposed"
     PLAN_CREATED = "plan-created"
     TEST_REGISTERED = "test-registered"
     KEY_CREATED = "key-created"

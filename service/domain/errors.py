@@ -6,16 +6,18 @@ What can go wrong, without a word of HTTP.
     │   ├── InvalidPlan
     │   ├── InvalidTest
     │   ├── InvalidObservations
+    │   ├── InvalidCorrection, InvalidDisposition
     │   ├── InvalidKey
     │   ├── InvalidQuestion
     │   ├── ComputationTooLarge
     │   └── IdempotencyKeyReused
     ├── Unknown                  there is no such thing
-    │   ├── UnknownPlan, UnknownTest, UnknownKey, UnknownSimulation
+    │   ├── UnknownPlan, UnknownTest, UnknownKey, UnknownSimulation, UnknownSubject
     ├── Conflict                 not now, or not again
     │   ├── PlanDiffers, TestDiffers, KeyNameTaken
-    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, NotDecided
+    │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, NotDecided, ChangesNothing
     ├── OutsideLimits            the access key is for other tests
+    ├── RoleTooNarrow            the access key may not do this as things stand
     ├── VersionMoved             the state is no longer the one the caller saw
     └── Unavailable              try again later: carries when
         ├── QueueFull, ShuttingDown, StorageFailed, OutcomeUnknown, DatabaseAway
@@ -63,6 +65,20 @@ class InvalidObservations(Invalid):
 
     def __init__(self, faults: Sequence[Fault]) -> None:
         super().__init__("The submission is refused as a whole and nothing of it is stored; see errors.", faults)
+
+
+class InvalidCorrection(Invalid):
+    """A correction cannot be right; nothing is changed."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The correction is refused and nothing is changed; see errors.", faults)
+
+
+class InvalidDisposition(Invalid):
+    """A disposition does not say what it must."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The disposition is refused and the test stays open; see errors.", faults)
 
 
 class InvalidKey(Invalid):
@@ -132,6 +148,12 @@ class UnknownSimulation(Unknown):
         self.args = (f"This process has no simulation {name!r}; ask the question again, which gives the same figures.",)
 
 
+class UnknownSubject(Unknown):
+    """No test of this subject."""
+
+    thing = "subject"
+
+
 class Conflict(DomainError):
     """The request collides with what is stored."""
 
@@ -173,7 +195,7 @@ class TestIsClosed(Conflict):
     __test__ = False
 
     def __init__(self, key: str) -> None:
-        super().__init__(f"The test {key!r} is closed and takes no further observations.")
+        super().__init__(f"The test {key!r} is closed and takes no further observations, corrections or disposition.")
 
 
 class SubmissionInProgress(Conflict):
@@ -198,6 +220,17 @@ class OutsideLimits(DomainError):
 
     def __init__(self, name: str) -> None:
         super().__init__(f"The key {name!r} is limited to subjects or labels that this test does not have.")
+
+
+class ChangesNothing(Conflict):
+    """The observation is already what the correction would make it."""
+
+    def __init__(self, observation: int) -> None:
+        super().__init__(f"Observation {observation} is already what this correction would make it.")
+
+
+class RoleTooNarrow(DomainError):
+    """The access key may not do this as things stand."""
 
 
 class VersionMoved(DomainError):

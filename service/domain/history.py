@@ -1,5 +1,6 @@
 """What each act says of itself in the history of its test, or of the service. Pure."""
 
+import json
 from collections.abc import Mapping
 from dataclasses import replace
 from datetime import datetime
@@ -7,6 +8,8 @@ from typing import Any
 
 from service.domain.access import AccessKey, digest_of
 from service.domain.chain import SERVICE, Act, Entry, Head, bound, shown
+from service.domain.correcting import Correction
+from service.domain.disposing import Disposition
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Submission
 from service.domain.state import State
@@ -87,6 +90,50 @@ def submitted(submission: Submission) -> Entry:
         number=submission.number,
         link=submission.link,
     )
+
+
+def corrected(correction: Correction) -> Entry:
+    """A correction is its own entry: which observation, what counts in its place, why, and the state after it."""
+    details = {
+        "sequence": correction.observation,
+        "action": correction.action.value,
+        "observation": None if correction.replacement is None else json.loads(correction.replacement),
+        "reason": correction.reason,
+        "body_digest": correction.body_digest,
+        "idempotency_key": correction.idempotency_key,
+        "version": correction.version,
+        "decision_before": correction.before.value,
+        "state": facts_of(correction.state),
+    }
+    return Entry(
+        chain=correction.test,
+        act=Act.CORRECTED,
+        at=correction.received_at,
+        actor=correction.actor,
+        request_id=correction.request_id,
+        details=details,
+        number=correction.number,
+        link=correction.link,
+    )
+
+
+def disposed(test: SequentialTest, disposition: Disposition, request_id: str | None) -> Entry:
+    """What was finally done with the subject, and what the test had decided by then."""
+    details = {
+        "disposition": disposition.verdict.value,
+        "decision": test.state.decision.value,
+        "deviates": disposition.deviates,
+        "reason": disposition.reason,
+        "deviation_reason": disposition.deviation_reason,
+        "version": test.version,
+    }
+    return Entry(test.key, Act.DISPOSED, disposition.at, disposition.by, request_id, details)
+
+
+def bound_correction(head: Head, correction: Correction) -> Correction:
+    """The correction in its place in the history of its test."""
+    entry = bound(head, corrected(correction))
+    return replace(correction, number=entry.number, link=entry.link)
 
 
 def bound_submission(head: Head, submission: Submission) -> Submission:

@@ -3,7 +3,7 @@
 import hashlib
 import math
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import lru_cache
 from typing import Any
 
@@ -22,7 +22,8 @@ from service.sequential.inference.ordering import Outcome, lower_limit, median_u
 from service.sequential.region import INSIDE
 from service.sequential.tables import UnitTable
 
-Documents = Iterable[Mapping[str, Any]]
+# What counts of each submission, with the sequence of its first observation.
+Documents = Iterable[tuple[int, Mapping[str, Any]]]
 
 
 @dataclass(frozen=True)
@@ -164,9 +165,10 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
 def _reported(procedure: Procedure, last: int, documents: Documents) -> tuple[FloatArray, FloatArray]:
     """Progress after each observation up to the deciding one, and what each added: arrays of shape (observations,)."""
     state, progress, steps, reached = State(), [], [], 0.0
-    for document in documents:
+    for first, document in documents:
         increments = procedure.family.read(document, procedure.known)
         walk = walk_from(procedure, state, increments)
+        state = replace(state, sequence=first - 1)
         count = min(len(increments.total), last - state.sequence)
         progress.append(walk.progress.value[:count])
         # Where progress does not add up by itself, what was gained is the difference.

@@ -47,7 +47,7 @@ class RegionPoint:
     reject_below: float | None
 
 
-def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: int) -> Path:
+def path_of(procedure: Procedure, documents: Iterable[tuple[int, Mapping[str, Any]]], points: int) -> Path:
     """
     Walk the log once more and keep at most `points` of its points.
 
@@ -55,11 +55,11 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
 
     Args:
         procedure: The plan, compiled.
-        documents: The submissions of the test in order.
+        documents: The observations of the test that count, some at a time and in order, with the first sequence.
         points: At least 4.
     """
     state, pieces = State(), [_origin(procedure)]
-    for document in documents:
+    for first, document in documents:
         increments = procedure.family.read(document, procedure.known)
         walk = walk_from(procedure, state, increments)
         exit_ = first_exit(procedure, walk, increments)
@@ -68,7 +68,7 @@ def path_of(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points
         if exit_ is not None:
             progress, total = _ending_in(progress, exit_.progress), _ending_in(total, exit_.total)
         units = state.sample_number + np.cumsum(increments.units[:count])
-        sequence = state.sequence + np.arange(1, count + 1)
+        sequence = first + np.arange(count)
         evidence = procedure.evidence.log(progress, total)
         shown = procedure.family.displayed([_cut(sums, count) for sums in walk.carried], total, procedure.known)
         pieces.append(Path(sequence, units, progress.value, shown.value, evidence))

@@ -6,6 +6,7 @@ from datetime import datetime
 from enum import StrEnum
 
 from service.domain.chain import EMPTY, Head
+from service.domain.disposing import Disposition
 from service.domain.state import State
 
 
@@ -36,7 +37,14 @@ class SequentialTest:
     """
     A registered test and where it stands. `version` counts the writes to it, registration being the first.
 
-    The plan is named, not held: plans are immutable and shared. `history` is the end of the test's chain of acts.
+    The plan is named, not held: plans are immutable and shared.
+
+    Attributes:
+        history: The end of the test's chain of acts.
+        corrections: How many were made.
+        decision_changed: True once a correction has made the decision another.
+        corrected_after_decision: True once a decided test was corrected.
+        disposition: What was finally done with the subject, once somebody did; it closes the test.
     """
 
     key: str
@@ -50,6 +58,10 @@ class SequentialTest:
     updated_at: datetime
     state: State
     history: Head = EMPTY
+    corrections: int = 0
+    decision_changed: bool = False
+    corrected_after_decision: bool = False
+    disposition: Disposition | None = None
 
 
 @dataclass(frozen=True)

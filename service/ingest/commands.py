@@ -10,6 +10,8 @@ from datetime import datetime
 from typing import Any
 
 from service.domain.access import UNLIMITED, AccessKey, Limits, Role
+from service.domain.correcting import Correction
+from service.domain.disposing import Verdict
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Subject
 
@@ -66,6 +68,44 @@ class PostObservations:
     body_digest: str
     actor: str
     idempotency_key: str | None = None
+    expected_versions: frozenset[str] | None = None
+    request_id: str | None = None
+    limits: Limits = UNLIMITED
+
+
+@dataclass(frozen=True)
+class PostCorrection:
+    """
+    Void or replace one observation of a test.
+
+    Attributes:
+        observation: Its sequence.
+        replacement: What is to count in its place, one observation of sound form; None to void it.
+        may_correct_decided: Whether the actor may correct a test that has decided.
+    """
+
+    test: str
+    observation: int
+    replacement: Mapping[str, Any] | None
+    reason: str
+    body_digest: str
+    actor: str
+    may_correct_decided: bool
+    idempotency_key: str | None = None
+    expected_versions: frozenset[str] | None = None
+    request_id: str | None = None
+    limits: Limits = UNLIMITED
+
+
+@dataclass(frozen=True)
+class Dispose:
+    """Say what was finally done with the subject of a test, and close it."""
+
+    test: str
+    verdict: Verdict
+    reason: str
+    deviation_reason: str | None
+    actor: str
     expected_versions: frozenset[str] | None = None
     request_id: str | None = None
     limits: Limits = UNLIMITED
@@ -135,6 +175,25 @@ class Posted:
 
 
 @dataclass(frozen=True)
+class Corrected:
+    """The test right after a correction; `is_replay` where an earlier answer was given again."""
+
+    test: SequentialTest
+    plan: Plan
+    correction: Correction
+    is_replay: bool
+
+
+@dataclass(frozen=True)
+class Disposed:
+    """The test as it was closed, and whether this command did it."""
+
+    test: SequentialTest
+    plan: Plan
+    is_new: bool
+
+
+@dataclass(frozen=True)
 class IssuedKey:
     """A new access key with its secret, which is shown this once and kept nowhere."""
 
@@ -142,5 +201,5 @@ class IssuedKey:
     secret: str
 
 
-Command = CreatePlan | RegisterTest | PostObservations | CreateKey | RevokeKey | Probe
-Outcome = StoredPlan | RegisteredTest | Posted | IssuedKey | AccessKey | Written
+Command = CreatePlan | RegisterTest | PostObservations | PostCorrection | Dispose | CreateKey | RevokeKey | Probe
+Outcome = StoredPlan | RegisteredTest | Posted | Corrected | Disposed | IssuedKey | AccessKey | Written

@@ -5,19 +5,27 @@ A refusal is raised before anything is written, so that it disturbs no other com
 """
 
 import secrets
+from collections.abc import Iterable
 from dataclasses import replace
 from datetime import datetime
 from functools import partial, singledispatch
+from typing import TypeVar
 
 from service.domain.access import AccessKey, Limits, check_new_key, digest_of
-from service.domain.chain import Act, Entry, bound
+from service.domain.chain import Act, Entry, bound, json_of
+from service.domain.correcting import Action, Correction, Piece, replacement_of, replayed, settled, unit_in
+from service.domain.disposing import Disposition, check_deviation
 from service.domain.errors import (
+    ChangesNothing,
     Fault,
     IdempotencyKeyReused,
+    InvalidCorrection,
     InvalidTest,
     KeyNameTaken,
     OutsideLimits,
     PlanDiffers,
+    RepeatedUnits,
+    RoleTooNarrow,
     TestDiffers,
     TestIsClosed,
     UnknownKey,
@@ -26,8 +34,10 @@ from service.domain.errors import (
     VersionMoved,
 )
 from service.domain.history import (
+    bound_correction,
     bound_submission,
     decided,
+    disposed,
     key_created,
     key_revoked,
     plan_created,
@@ -36,16 +46,20 @@ from service.domain.history import (
 )
 from service.domain.observing import observe
 from service.domain.plan import Plan, fingerprint_of, stated
-from service.domain.procedure import procedure_of
+from service.domain.procedure import Procedure, procedure_of
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
 from service.domain.units import new_units
 from service.ingest.commands import (
     Command,
+    Corrected,
     CreateKey,
     CreatePlan,
+    Dispose,
+    Disposed,
     IssuedKey,
     Outcome,
+    PostCorrection,
     Posted,
     PostObservations,
     Probe,
@@ -55,9 +69,12 @@ from service.ingest.commands import (
     StoredPlan,
     Written,
 )
+from service.storage.logs import Log
 from service.storage.writer import Writer
 
 SECRET_BYTES = 32
+
+S = TypeVar("S", Submission, Correction)
 
 
 @singledispatch
@@ -140,6 +157,58 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
 
 
 @perform.register
+def _(command: PostCorrection, writer: Writer, now: datetime) -> Outcome:
+    test = _visible_test(writer, command.test, command.limits)
+    plan = _plan(writer, test.plan)
+    first = _first_correction(command, writer)
+    if first is not None:
+        then = replace(test, version=first.version, updated_at=first.received_at, state=first.state)
+        return Corrected(then, plan, first, is_replay=True)
+    _check_version(command.expected_versions, test)
+    if test.status is Status.CLOSED:
+        raise TestIsClosed(test.key)
+    if test.state.is_decided and not command.may_correct_decided:
+        raise RoleTooNarrow(f"The test {test.key!r} has decided; from then on corrections need the role engineer.")
+    correction, freed, taken = _correction(command, test, procedure_of(plan), writer.log(), now)
+    if taken is not None and (known := writer.known_units(test.key, [taken])):
+        fault = Fault("/observation/unit", f"unit {taken!r} was reported as observation {known[taken]}")
+        raise RepeatedUnits([fault])
+    correction = bound_correction(test.history, correction)
+    moved = replace(
+        test,
+        version=correction.version,
+        updated_at=now,
+        state=correction.state,
+        history=correction.head,
+        corrections=test.corrections + 1,
+        decision_changed=test.decision_changed or correction.state.decision is not test.state.decision,
+        corrected_after_decision=test.corrected_after_decision or test.state.is_decided,
+    )
+    writer.correct(correction, freed, taken)
+    if moved.state.decision is not test.state.decision:
+        moved = _recorded(writer, moved, decided(moved, test.state, command.actor, command.request_id, Act.CORRECTED))
+    writer.save(moved)
+    return Corrected(moved, plan, correction, is_replay=False)
+
+
+@perform.register
+def _(command: Dispose, writer: Writer, now: datetime) -> Outcome:
+    test = _visible_test(writer, command.test, command.limits)
+    plan = _plan(writer, test.plan)
+    disposition = Disposition(command.verdict, command.reason, command.deviation_reason, command.actor, now)
+    if test.disposition is not None and replace(disposition, at=test.disposition.at) == test.disposition:
+        return Disposed(test, plan, is_new=False)
+    _check_version(command.expected_versions, test)
+    if test.status is Status.CLOSED:
+        raise TestIsClosed(test.key)
+    check_deviation(command.verdict, command.deviation_reason, test.state.decision)
+    closed = replace(test, status=Status.CLOSED, disposition=disposition, version=test.version + 1, updated_at=now)
+    closed = _recorded(writer, closed, disposed(closed, disposition, command.request_id))
+    writer.save(closed)
+    return Disposed(closed, plan, is_new=True)
+
+
+@perform.register
 def _(command: CreateKey, writer: Writer, now: datetime) -> Outcome:
     check_new_key(command.name, command.expires_at, now, command.role, command.limits)
     taken = writer.key_named(command.name)
@@ -213,15 +282,69 @@ def _first_answer(command: PostObservations, writer: Writer) -> Submission | Non
     """The submission that this one repeats, if its idempotency key has been used before."""
     if command.idempotency_key is None:
         return None
-    first = writer.submission_with_idempotency_key(command.test, command.idempotency_key)
-    if first is None:
+    return _same_again(writer.submission_with_idempotency_key(command.test, command.idempotency_key), command)
+
+
+def _first_correction(command: PostCorrection, writer: Writer) -> Correction | None:
+    """The correction that this one repeats, if its idempotency key has been used before."""
+    if command.idempotency_key is None:
+        return None
+    return _same_again(writer.correction_with_idempotency_key(command.test, command.idempotency_key), command)
+
+
+def _same_again(first: S | None, command: PostObservations | PostCorrection) -> S | None:
+    """What an idempotency key was used for first, if that was the same."""
+    key = command.idempotency_key
+    if first is None or key is None:
         return None
     if first.body_digest != command.body_digest:
-        raise IdempotencyKeyReused(command.idempotency_key, "came before with another body")
+        raise IdempotencyKeyReused(key, "came before with another body")
     if first.actor != command.actor:
         # Two stations that number their submissions alike must not silently swallow each other's results.
-        raise IdempotencyKeyReused(command.idempotency_key, "was used by another access key")
+        raise IdempotencyKeyReused(key, "was used by another access key")
     return first
+
+
+def _correction(
+    command: PostCorrection, test: SequentialTest, procedure: Procedure, log: Log, now: datetime
+) -> tuple[Correction, str | None, str | None]:
+    """
+    The correction with the state after it, and the units that it frees and takes.
+
+    The log is run again from the first observation that was ever corrected, a page at a time.
+    """
+    at = command.observation
+    if at > test.state.sequence:
+        rule = f"must be an observation of this test, 1 to {test.state.sequence}; received {at}"
+        raise InvalidCorrection([Fault("/sequence", rule)])
+    posted, present = log.observation(test, procedure.family, at)
+    new = None if command.replacement is None else replacement_of(procedure, posted, present, command.replacement)
+    if new == present:
+        raise ChangesNothing(at)
+    correction = Correction(
+        test=test.key,
+        observation=at,
+        action=Action.VOID if new is None else Action.REPLACE,
+        replacement=None if new is None else json_of(new),
+        reason=command.reason,
+        body_digest=command.body_digest,
+        received_at=now,
+        actor=command.actor,
+        idempotency_key=command.idempotency_key,
+        version=test.version + 1,
+        before=test.state.decision,
+        state=test.state,
+        request_id=command.request_id,
+    )
+    start = log.state_before(test.key, min(at, log.first_corrected(test.key) or at))
+
+    def read(after: int, through: int) -> Iterable[Piece]:
+        return log.pieces(test, after, through, {at: correction})
+
+    state = settled(test.state, replayed(procedure, start, read, test.state.sequence), now)
+    freed, taken = unit_in(present), unit_in(new)
+    unit_stays = freed == taken
+    return replace(correction, state=state), None if unit_stays else freed, None if unit_stays else taken
 
 
 def _submission(command: PostObservations, test: SequentialTest, first_sequence: int) -> Submission:

@@ -29,7 +29,7 @@ from service.domain.errors import (
     StorageFailed,
     SubmissionInProgress,
 )
-from service.ingest.commands import Command, Outcome, PostObservations
+from service.ingest.commands import Command, Dispose, Outcome, PostCorrection, PostObservations
 from service.ingest.measures import Measures, Unmeasured
 from service.ingest.performing import perform
 from service.storage.engine import is_passing
@@ -260,14 +260,15 @@ def _weight(command: Command) -> int:
 
 def _reads(commands: Iterable[Command]) -> tuple[list[str], list[tuple[str, str]]]:
     """The tests and idempotency keys that a group will ask for."""
-    posts = [command for command in commands if isinstance(command, PostObservations)]
+    of_tests = [command for command in commands if isinstance(command, PostObservations | PostCorrection | Dispose)]
+    posts = [command for command in of_tests if isinstance(command, PostObservations)]
     keys = [(post.test, post.idempotency_key) for post in posts if post.idempotency_key is not None]
-    return [post.test for post in posts], keys
+    return [command.test for command in of_tests], keys
 
 
 def _mark(command: Command) -> tuple[str, str] | None:
     """What no two commands in progress may share."""
-    if isinstance(command, PostObservations) and command.idempotency_key is not None:
+    if isinstance(command, PostObservations | PostCorrection) and command.idempotency_key is not None:
         return command.test, command.idempotency_key
     return None
 

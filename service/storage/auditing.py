@@ -11,8 +11,9 @@ from sqlalchemy import Connection, Engine, RowMapping, Select, func, select
 from service.domain.access import AccessKey
 from service.domain.audit import Differs, Found, ServiceAudit, TestAudit
 from service.domain.chain import EMPTY, SERVICE, Act, Entry, Head
+from service.domain.correcting import Piece
 from service.domain.plan import Plan
-from service.domain.sequential_test import SequentialTest, Submission
+from service.domain.sequential_test import SequentialTest
 from service.domain.units import units_of
 from service.storage import rows, tables
 from service.storage.engine import is_sqlite
@@ -179,18 +180,28 @@ def _audit_test(found: Snapshot, key: str) -> Audited:
     test = found.test(key)
     if test is None:
         raise Differs(f"test {key}: there is none")
-    audit, units = TestAudit(test, found.plan(test.plan)), 0
+
+    def read_again(after: int, through: int, number: int) -> Iterator[Piece]:
+        return found.log.pieces(test, after, through, before=number + 1)
+
+    audit = TestAudit(test, found.plan(test.plan), read_again, found.log.first_corrected(key))
     for record in found.log.records(test):
         audit.follow(record)
-        if isinstance(record, Submission):
-            expected = units_of(json.loads(record.body), record.first_sequence)
-            if found.units(key, expected) != expected:
-                raise Differs(f"test {key}: the units of observations {record.first_sequence} and on are not as posted")
-            units += len(expected)
     audit.finish(found.labels(key))
-    if found.unit_count(key) != units:
-        raise Differs(f"test {key}: {found.unit_count(key)} units are kept, and {units} were posted")
+    _check_units(found, test)
     return Audited(None, is_of_test=True, acts=test.history.length, observations=test.state.sequence)
+
+
+def _check_units(found: Snapshot, test: SequentialTest) -> None:
+    """Each unit of an observation that counts now stands in the table of units with it, and none beside them."""
+    count = 0
+    for piece in found.log.pieces(test, 0, test.state.sequence):
+        expected = units_of(json.loads(piece.body), piece.first_sequence)
+        if found.units(test.key, expected) != expected:
+            raise Differs(f"test {test.key}: the units of observations {piece.first_sequence} and on are not as posted")
+        count += len(expected)
+    if found.unit_count(test.key) != count:
+        raise Differs(f"test {test.key}: {found.unit_count(test.key)} units are kept, and {count} were posted")
 
 
 def _keys(opened: Snapshots) -> Iterator[str]:

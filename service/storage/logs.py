@@ -5,14 +5,20 @@ Give as end what a test had when it was read before, for more may have been writ
 """
 
 import heapq
-from collections.abc import Callable, Iterator
+import json
+from bisect import bisect_left, bisect_right
+from collections.abc import Callable, Iterator, Mapping
+from itertools import islice
 from typing import Any
 
 from sqlalchemy import RowMapping, Select, func, literal, select
 
 from service.domain.chain import Entry
-from service.domain.history import submitted
+from service.domain.correcting import Correction, Corrections, Piece, in_force, objects_of, pieces
+from service.domain.families import Family
+from service.domain.history import corrected, submitted
 from service.domain.sequential_test import SequentialTest, Submission
+from service.domain.state import State
 from service.storage import rows, tables
 
 # A page of the log ends with whichever comes first; a single submission may be larger.
@@ -30,6 +36,18 @@ Ask = Callable[[Select[Any]], list[RowMapping]]
 _WITHOUT_BODY = select(*(column for column in tables.submissions.c if column.name != "body"), literal("").label("body"))
 
 
+class InForce:
+    """Corrections by the observation that they correct, to be asked for those of one submission."""
+
+    def __init__(self, corrections: Corrections) -> None:
+        self._corrections, self._observations = corrections, sorted(corrections)
+
+    def within(self, first: int, last: int) -> Corrections:
+        """Those of the observations from `first` to `last`."""
+        some = self._observations[bisect_left(self._observations, first) : bisect_right(self._observations, last)]
+        return {observation: self._corrections[observation] for observation in some}
+
+
 class Log:
     """
     Reads through `ask`, which answers one question with all its rows.
@@ -45,11 +63,62 @@ class Log:
         for row in self._pages(select(tables.submissions), test, after, through):
             yield rows.submission_of(row)
 
-    def bodies(self, test: str, after: int = 0, through: int = NO_END) -> Iterator[tuple[int, str]]:
-        """The first sequence and the body of the same submissions, for work that needs no more of them."""
+    def corrected(self, test: SequentialTest, after: int = 0) -> Iterator[tuple[Submission, Corrections]]:
+        """What was posted after the observation `after`, each submission with the corrections in force within it."""
+        made = self._in_force(test, after, test.state.sequence, test.history.length)
+        for submission in self.submissions(test.key, after, test.state.sequence):
+            yield submission, made.within(submission.first_sequence, submission.last_sequence)
+
+    def pieces(
+        self, test: SequentialTest, after: int, through: int, new: Corrections | None = None, before: int | None = None
+    ) -> Iterator[Piece]:
+        """
+        The observations after `after` and up to `through` as they count now; voided ones are gaps.
+
+        A piece may begin before, where a submission does.
+
+        Args:
+            test: As it was read.
+            after, through: Sequences.
+            new: A correction that is about to be made.
+            before: Leave out corrections from this number in the history on; None for none.
+        """
         log = tables.submissions.c
-        for row in self._pages(select(log.first_sequence, log.last_sequence, log.body), test, after, through):
-            yield row["first_sequence"], row["body"]
+        limit = test.history.length if before is None else before - 1
+        found = select(log.first_sequence, log.last_sequence, log.body, log.received_at)
+        made = self._in_force(test, after, through, limit, new)
+        for row in self._pages(found, test.key, after, through):
+            within = made.within(row["first_sequence"], row["last_sequence"])
+            yield from pieces(row["first_sequence"], row["body"], row["received_at"], within)
+
+    def bodies(self, test: SequentialTest, after: int, through: int) -> Iterator[tuple[int, str]]:
+        """The same with the first sequences alone."""
+        for piece in self.pieces(test, after, through):
+            yield piece.first_sequence, piece.body
+
+    def first_corrected(self, test: str) -> int | None:
+        """The first observation that was ever corrected."""
+        made = tables.corrections.c
+        (row,) = self._ask(select(func.min(made.observation).label("first")).where(made.test == test))
+        return row["first"]  # type: ignore[no-any-return]
+
+    def observation(
+        self, test: SequentialTest, family: Family, sequence: int
+    ) -> tuple[Mapping[str, Any], Mapping[str, Any] | None]:
+        """One observation of the test as it was posted, and as it counts now; None where it is voided."""
+        submission, corrections = next(self.corrected(test, sequence - 1))
+        objects = objects_of(family, json.loads(submission.body))
+        posted = next(islice(objects, sequence - submission.first_sequence, None))
+        return posted, in_force(posted, corrections.get(sequence))
+
+    def state_before(self, test: str, observation: int) -> State:
+        """The state after the last submission that ends before an observation; no earlier one may be corrected."""
+        log = tables.submissions.c
+        found = select(tables.submissions).where(log.test == test, log.first_sequence < observation)
+        for row in self._ask(found.order_by(log.first_sequence.desc()).limit(2)):
+            if row["last_sequence"] < observation:
+                return rows.state_of(row)
+        return State()
 
     def acts(self, chain: str, after: int = 0, sequence: int = 0, through: int = NO_END) -> Iterator[Entry]:
         """
@@ -64,15 +133,20 @@ class Log:
         sources = [self._other_acts(chain, after)]
         if chain:
             sources.append(submitted(entry) for entry in self._submissions_without_bodies(chain, sequence))
+            sources.append(corrected(correction) for correction in self._all_corrections(chain, after))
         for entry in heapq.merge(*sources, key=lambda entry: entry.number):
             if entry.number > through:
                 return
             yield entry
 
-    def records(self, test: SequentialTest) -> Iterator[Submission | Entry]:
+    def records(self, test: SequentialTest) -> Iterator[Submission | Correction | Entry]:
         """The whole history of a test as it was read, submissions with what was posted."""
-        submissions: Iterator[Submission | Entry] = self.submissions(test.key, 0, test.state.sequence)
-        for record in heapq.merge(submissions, self._other_acts(test.key, 0), key=lambda record: record.number):
+        sources: list[Iterator[Submission | Correction | Entry]] = [
+            self.submissions(test.key, 0, test.state.sequence),
+            self._all_corrections(test.key, 0),
+            self._other_acts(test.key, 0),
+        ]
+        for record in heapq.merge(*sources, key=lambda record: record.number):
             if record.number > test.history.length:
                 return
             yield record
@@ -86,6 +160,34 @@ class Log:
             if len(page) < PAGE_ACTS:
                 return
             after = page[-1]["first_sequence"]
+
+    def _in_force(
+        self, test: SequentialTest, after: int, through: int, limit: int, new: Corrections | None = None
+    ) -> "InForce":
+        """
+        The corrections in force of the submissions that hold these observations, up to this number in the history.
+
+        They are read at once: people make them one by one.
+        """
+        made, found = tables.corrections.c, dict(new or {})
+        if test.corrections:
+            first = self._first_around(test.key, after)
+            asked = select(tables.corrections).where(
+                made.test == test.key, made.observation.between(first, through), made.number <= limit
+            )
+            rows_found = self._ask(asked.order_by(made.number))
+            found = {row["observation"]: rows.correction_of(row) for row in rows_found} | found
+        return InForce(found)
+
+    def _all_corrections(self, test: str, after: int) -> Iterator[Correction]:
+        made = tables.corrections.c
+        while True:
+            found = select(tables.corrections).where(made.test == test, made.number > after)
+            page = self._ask(found.order_by(made.number).limit(PAGE_ACTS))
+            yield from map(rows.correction_of, page)
+            if len(page) < PAGE_ACTS:
+                return
+            after = page[-1]["number"]
 
     def _other_acts(self, chain: str, after: int) -> Iterator[Entry]:
         history = tables.history.c

@@ -8,6 +8,7 @@ from typing import Any, NamedTuple
 from sqlalchemy import Engine, RowMapping, Select, and_, bindparam, func, or_, select
 
 from service.domain.access import UNLIMITED, AccessKey, Limits
+from service.domain.disposing import Verdict
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, SubjectKind
 from service.domain.state import Decision
@@ -39,6 +40,7 @@ class TestFilters:
     plan: str | None = None
     labels: tuple[tuple[str, str], ...] = ()
     updated_after: datetime | None = None
+    disposition: Verdict | None = None
 
 
 class Change(NamedTuple):
@@ -170,6 +172,7 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
         column.subject_kind: filters.kind,
         column.subject_name: filters.subject,
         column.plan: filters.plan,
+        column.disposition: filters.disposition,
     }
     for which, value in equal.items():
         if value is not None:
@@ -199,7 +202,8 @@ def _within(found: Select[Any], limits: Limits) -> Select[Any]:
 
 def _filtered_each(found: Select[Any], filters: TestFilters) -> Select[Any]:
     """
-    The same filters, but for the time, asked of each test by itself: to find a few among the few that have changed.
+    The same filters, but for time and disposition, asked of each test by itself: to find a few among the few that have
+    changed.
 
     Appending nothing to a column keeps a planner from reading all tests that share its value; labels are looked up.
     """

@@ -7,6 +7,8 @@ from sqlalchemy import RowMapping
 
 from service.domain.access import UNLIMITED, AccessKey, Limits, Role
 from service.domain.chain import Act, Entry, Head, json_of
+from service.domain.correcting import Action, Correction
+from service.domain.disposing import Disposition, Verdict
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
@@ -61,11 +63,27 @@ def row_of_test(test: SequentialTest) -> Row:
         "subject_kind": test.subject.kind.value,
         "subject_name": test.subject.name,
         "labels": json.dumps(dict(test.labels), ensure_ascii=False, sort_keys=True),
-        "status": test.status.value,
-        "version": test.version,
         "registered_at": test.registered_at,
         "registered_by": test.registered_by,
+        **row_of_what_moves(test),
+    }
+
+
+def row_of_what_moves(test: SequentialTest) -> Row:
+    """The columns of tests that change with what happens to it."""
+    disposition = test.disposition
+    return {
+        "status": test.status.value,
+        "version": test.version,
         "updated_at": test.updated_at,
+        "corrections": test.corrections,
+        "decision_changed": test.decision_changed,
+        "corrected_after_decision": test.corrected_after_decision,
+        "disposition": disposition.verdict.value if disposition else None,
+        "disposition_reason": disposition.reason if disposition else None,
+        "deviation_reason": disposition.deviation_reason if disposition else None,
+        "disposed_by": disposition.by if disposition else None,
+        "disposed_at": disposition.at if disposition else None,
         **row_of_head(test.history),
         **row_of_state(test.state),
     }
@@ -85,6 +103,64 @@ def test_of(row: RowMapping) -> SequentialTest:
         updated_at=row["updated_at"],
         state=state_of(row),
         history=head_of(row),
+        corrections=row["corrections"],
+        decision_changed=row["decision_changed"],
+        corrected_after_decision=row["corrected_after_decision"],
+        disposition=_disposition_of(row),
+    )
+
+
+def _disposition_of(row: RowMapping) -> Disposition | None:
+    if row["disposition"] is None:
+        return None
+    return Disposition(
+        verdict=Verdict(row["disposition"]),
+        reason=row["disposition_reason"],
+        deviation_reason=row["deviation_reason"],
+        by=row["disposed_by"],
+        at=row["disposed_at"],
+    )
+
+
+def row_of_correction(correction: Correction) -> Row:
+    """A row of corrections."""
+    return {
+        "test": correction.test,
+        "observation": correction.observation,
+        "action": correction.action.value,
+        "replacement": correction.replacement,
+        "reason": correction.reason,
+        "body_digest": correction.body_digest,
+        "received_at": correction.received_at,
+        "actor": correction.actor,
+        "idempotency_key": correction.idempotency_key,
+        "version": correction.version,
+        "decision_before": correction.before.value,
+        "request_id": correction.request_id,
+        "number": correction.number,
+        "link": correction.link,
+        **row_of_state(correction.state),
+    }
+
+
+def correction_of(row: RowMapping) -> Correction:
+    """The correction in a row."""
+    return Correction(
+        test=row["test"],
+        observation=row["observation"],
+        action=Action(row["action"]),
+        replacement=row["replacement"],
+        reason=row["reason"],
+        body_digest=row["body_digest"],
+        received_at=row["received_at"],
+        actor=row["actor"],
+        idempotency_key=row["idempotency_key"],
+        version=row["version"],
+        before=Decision(row["decision_before"]),
+        state=state_of(row),
+        request_id=row["request_id"],
+        number=row["number"],
+        link=row["link"],
     )
 
 

@@ -9,6 +9,7 @@ from typing import Any
 
 from sqlalchemy import (
     BigInteger,
+    Boolean,
     CheckConstraint,
     Column,
     DateTime,
@@ -23,6 +24,7 @@ from sqlalchemy import (
     Text,
     TypeDecorator,
     UniqueConstraint,
+    false,
     text,
 )
 from sqlalchemy.types import TypeEngine
@@ -160,6 +162,14 @@ tests = Table(
     # Of the last write to the test; in the order in which writes became visible. Zero until the writer numbers it.
     Column("change", BigInteger, nullable=False, server_default="0"),
     *_head_columns(),
+    Column("corrections", BigInteger, nullable=False, server_default="0"),
+    Column("decision_changed", Boolean, nullable=False, server_default=false()),
+    Column("corrected_after_decision", Boolean, nullable=False, server_default=false()),
+    Column("disposition", String(10)),
+    Column("disposition_reason", Text),
+    Column("deviation_reason", Text),
+    Column("disposed_by", String(100)),
+    Column("disposed_at", UtcTime),
     PrimaryKeyConstraint("key"),
     ForeignKeyConstraint(["plan"], ["plans.name"]),
     CheckConstraint("subject_kind IN ('lot', 'experiment')", name="subject_kind"),
@@ -168,6 +178,7 @@ tests = Table(
     Index(None, "plan", "key"),
     Index(None, "subject_name", "key"),
     Index(None, "updated_at"),
+    Index(None, "disposition", "key"),
     Index(None, "change"),
     Index(None, "subject_kind", "status", "decision"),
 )
@@ -204,6 +215,32 @@ submissions = Table(
     ForeignKeyConstraint(["test"], ["tests.key"]),
     UniqueConstraint("test", "idempotency_key"),
     CheckConstraint("first_sequence BETWEEN 1 AND last_sequence", name="sequence_order"),
+    sqlite_with_rowid=False,
+)
+
+# What was posted stays in submissions; the last correction of an observation is in force.
+corrections = Table(
+    "corrections",
+    metadata,
+    Column("test", KEY, nullable=False),
+    Column("observation", BigInteger, nullable=False),
+    Column("action", String(7), nullable=False),
+    Column("replacement", Text),
+    Column("reason", Text, nullable=False),
+    Column("body_digest", String(64), nullable=False),
+    Column("received_at", UtcTime, nullable=False),
+    Column("actor", String(100), nullable=False),
+    Column("idempotency_key", String(255)),
+    Column("version", BigInteger, nullable=False),
+    Column("decision_before", String(8), nullable=False),
+    *_state_columns(),
+    Column("request_id", String(64)),
+    *_place_columns(),
+    PrimaryKeyConstraint("test", "number"),
+    ForeignKeyConstraint(["test"], ["tests.key"]),
+    UniqueConstraint("test", "idempotency_key"),
+    CheckConstraint("action IN ('void', 'replace')", name="action"),
+    Index(None, "test", "observation", "number"),
     sqlite_with_rowid=False,
 )
 

@@ -21,6 +21,7 @@ from sqlalchemy import (
     RowMapping,
     Select,
     bindparam,
+    delete,
     func,
     insert,
     select,
@@ -31,10 +32,12 @@ from sqlalchemy import (
 
 from service.domain.access import AccessKey
 from service.domain.chain import EMPTY, SERVICE, Entry, bound
+from service.domain.correcting import Correction
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Submission
 from service.storage import rows, tables
 from service.storage.engine import CHANNEL, WRITES, is_sqlite
+from service.storage.logs import Log
 
 # Any number that no other program on the same server locks by, and not that of the migrations.
 NUMBERING_LOCK = 5_397_204_187
@@ -54,6 +57,9 @@ _TESTS = (
 )
 _REPEATED = select(tables.submissions).where(
     tuple_(tables.submissions.c.test, tables.submissions.c.idempotency_key).in_(bindparam("pairs", expanding=True))
+)
+_CORRECTION = select(tables.corrections).where(
+    tables.corrections.c.test == bindparam("test"), tables.corrections.c.idempotency_key == bindparam("idempotency_key")
 )
 _UNITS = select(tables.units.c.unit, tables.units.c.sequence).where(
     tables.units.c.test == bindparam("test"), tables.units.c.unit.in_(bindparam("units", expanding=True))
@@ -77,6 +83,7 @@ class Writer:
         self._repeated: dict[Pair, Submission | None] = {}
         self._appended: list[Submission] = []
         self._units: dict[str, dict[str, int]] = {}
+        self._corrections: list[Correction] = []
         self._recorded: list[Entry] = []
         self._recorded_of_service: list[Entry] = []
 
@@ -154,6 +161,29 @@ class Writer:
         if units:
             self._units.setdefault(submission.test, {}).update(units)
 
+    def log(self) -> Log:
+        """What the log holds, with what the group has appended so far."""
+        self._flush_log()
+        return Log(lambda found: list(self._connection.execute(found).mappings()))
+
+    def correction_with_idempotency_key(self, test: str, idempotency_key: str) -> Correction | None:
+        """The correction that used this idempotency key."""
+        self._flush_log()
+        row = self._first(_CORRECTION, test=test, idempotency_key=idempotency_key)
+        return None if row is None else rows.correction_of(row)
+
+    def correct(self, correction: Correction, freed: str | None, taken: str | None) -> None:
+        """A new correction, which may free a unit for another observation, or take one."""
+        self._flush_log()
+        self._corrections.append(correction)
+        units = tables.units.c
+        if freed is not None:
+            freeing = delete(tables.units).where(units.test == correction.test, units.unit == freed)
+            self._connection.execute(freeing)
+        if taken is not None:
+            values = {"test": correction.test, "unit": taken, "sequence": correction.observation}
+            self._connection.execute(insert(tables.units), values)
+
     def record(self, entry: Entry) -> None:
         """An act: one of a test in its place already; one of the service gets its place when all is written."""
         (self._recorded if entry.chain else self._recorded_of_service).append(entry)
@@ -167,8 +197,8 @@ class Writer:
         """Write a row as it is: only a database that takes writes can."""
         self._connection.execute(text("UPDATE alembic_version SET version_num = version_num"))
 
-    def flush(self) -> None:
-        """Write what was appended and saved."""
+    def _flush_log(self) -> None:
+        """Write what was appended, so that it can be read; the tests are saved and numbered when all is done."""
         self._many(insert(tables.submissions), [rows.row_of_submission(entry) for entry in self._appended])
         units = [
             {"test": test, "unit": unit, "sequence": at}
@@ -176,7 +206,13 @@ class Writer:
             for unit, at in known.items()
         ]
         self._many(insert(tables.units), units)
+        self._many(insert(tables.corrections), [rows.row_of_correction(entry) for entry in self._corrections])
         self._many(insert(tables.history), [rows.row_of_entry(entry) for entry in self._recorded])
+        self._appended, self._units, self._corrections, self._recorded = [], {}, [], []
+
+    def flush(self) -> None:
+        """Write what was appended and saved."""
+        self._flush_log()
         self._extend_history_of_service()
         moved = [self._tests[key] for key in sorted(self._saved)]
         added = sorted(self._added - self._saved)
@@ -188,16 +224,12 @@ class Writer:
                 {
                     "which": test.key,
                     "change": number,
-                    "status": test.status.value,
-                    "version": test.version,
-                    "updated_at": test.updated_at,
-                    **rows.row_of_head(test.history),
-                    **rows.row_of_state(test.state),
+                    **rows.row_of_what_moves(test),
                 }
                 for number, test in enumerate(moved, first + len(added))
             ],
         )
-        self._appended, self._saved, self._added, self._units, self._recorded = [], set(), set(), {}, []
+        self._saved, self._added = set(), set()
 
     def _extend_history_of_service(self) -> None:
         """Bind the acts that belong to no test; the end of their chain is locked until the transaction ends."""

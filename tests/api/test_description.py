@@ -5,6 +5,7 @@ import pytest
 
 from service.api import problems
 from service.api.schemas import (
+    acts,
     administration,
     assumptions,
     characteristics,
@@ -15,6 +16,7 @@ from service.api.schemas import (
     outlook,
     plans,
     simulations,
+    subjects,
     tests,
 )
 from service.api.schemas.common import Answer
@@ -22,6 +24,7 @@ from service.domain import errors
 from service.domain.errors import DomainError
 
 MODULES = (
+    acts,
     administration,
     assumptions,
     characteristics,
@@ -32,6 +35,7 @@ MODULES = (
     outlook,
     plans,
     simulations,
+    subjects,
     tests,
 )
 

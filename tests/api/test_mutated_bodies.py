@@ -19,7 +19,6 @@ from fastapi import FastAPI
 
 from service.app import create_app
 from service.domain.access import Role
-from service.domain.log import document_of
 from service.domain.observing import observe
 from service.domain.procedure import procedure_of
 from service.domain.state import State
@@ -160,7 +159,7 @@ def state_of_log(reader: Reader, key: str) -> tuple[State, int]:
     state, count = State(), 0
     for count, submission in enumerate(reader.log.submissions(key), start=1):  # noqa: B007 - the last one counts
         assert submission.first_sequence == state.sequence + 1
-        state = observe(procedure_of(plan), state, document_of(submission), submission.received_at)
+        state = observe(procedure_of(plan), state, json.loads(submission.body), submission.received_at)
         assert submission.last_sequence == state.sequence
         assert submission.state == state
     return state, count

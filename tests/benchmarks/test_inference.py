@@ -13,6 +13,7 @@ from service.domain.observing import observe
 from service.domain.outlook import _outlook, outlook_of
 from service.domain.procedure import procedure_of_document
 from service.domain.state import State
+from tests.domain.submissions import numbered
 from tests.domain.test_observing import NOW
 
 ROUNDS = 5
@@ -50,7 +51,7 @@ def test_inference_after_long_tests(content: dict[str, Any], parameter: float) -
     for _ in range(ROUNDS):
         _inference.cache_clear()
         start = time.perf_counter()
-        found = inference_of(document, state, submissions, 0.95)
+        found = inference_of(document, state, numbered(submissions), 0.95)
         spent.append(1000 * (time.perf_counter() - start))
     _outlook.cache_clear()
     start = time.perf_counter()

@@ -54,6 +54,21 @@ def test_a_file_is_loaded_until_the_decision(
     assert admin.get(f"/v1/tests/{key}").json()["overrun"] == 76
 
 
+def test_a_load_goes_on_after_a_correction_that_put_the_decision_off(
+    load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path
+) -> None:
+    key = with_test(admin, new_name, SEAL)
+    file = tmp_path / "again.csv"
+    file.write_text("value\n" + "0\n" * 50)
+    assert "Stopped after posting 24." in load(str(file), "--test", key, "--chunk", "12").stdout
+    body = {"sequence": 5, "action": "void", "reason": "dropped"}
+    admin.post(f"/v1/tests/{key}/corrections", json=body).raise_for_status()
+    again = load(str(file), "--test", key, "--chunk", "12")
+    assert "Stopped after posting 12." in again.stdout, again.stdout + again.stderr
+    state = admin.get(f"/v1/tests/{key}").json()
+    assert (state["decision"], state["sample_number"], state["overrun"]) == ("accept", 24, 11)
+
+
 def test_a_bad_line_is_named_and_its_chunk_not_stored(
     load: Loader, admin: httpx.Client, new_name: Namer, tmp_path: Path
 ) -> None:

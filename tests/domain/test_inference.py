@@ -15,6 +15,7 @@ from service.domain.observing import observe
 from service.domain.procedure import procedure_of_document
 from service.domain.state import Decision, State, Sum
 from service.sequential.tables import UnitTable
+from tests.domain.submissions import numbered
 from tests.domain.test_observing import NOW
 
 SEAL = {"family": "bernoulli", "h0": 0.01, "h1": 0.10, "alpha": 0.05, "beta": 0.10}
@@ -26,7 +27,7 @@ def after(content: dict[str, Any], *submissions: dict[str, Any]) -> Inference:
     document, state = checked_content(content), State()
     for submission in submissions:
         state = observe(procedure_of_document(document), state, submission, NOW)
-    return inference_of(document, state, submissions, 0.95)
+    return inference_of(document, state, numbered(submissions), 0.95)
 
 
 def test_units_posted_one_by_one_need_no_log() -> None:

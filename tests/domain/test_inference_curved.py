@@ -22,6 +22,7 @@ from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import Decision, State, Sum
 from service.sequential.double import Double
 from service.sequential.inference.ordering import Outcome
+from tests.domain.submissions import numbered
 from tests.domain.test_observing import NOW
 from tests.sequential.inference.test_counting import limits_of
 from tests.sequential.inference.test_measuring import passes
@@ -327,7 +328,7 @@ def test_the_p_value_of_failures_in_time_is_that_of_the_null() -> None:
 def measured(content: dict[str, Any], values: list[float]) -> tuple[State, Inference]:
     document, state = checked_content(content), State()
     state = observe(procedure_of_document(document), state, {"values": values}, NOW)
-    return state, inference_of(document, state, [{"values": values}], LEVEL)
+    return state, inference_of(document, state, numbered([{"values": values}]), LEVEL)
 
 
 def repeated(mean: float, sigma: float, **change: Any) -> dict[str, Any]:

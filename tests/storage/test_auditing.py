@@ -7,19 +7,33 @@ import re
 from collections.abc import Iterator
 from contextlib import contextmanager, nullcontext
 from functools import partial
+from typing import Any
 
 from sqlalchemy import Connection, Engine, text
 
 from service.domain.access import Role
 from service.domain.checking import checked_content
+from service.domain.disposing import Verdict
 from service.domain.sequential_test import Subject, SubjectKind
-from service.ingest.commands import CreateKey, CreatePlan, PostObservations, RegisterTest, RevokeKey
+from service.ingest.commands import (
+    CreateKey,
+    CreatePlan,
+    Dispose,
+    PostCorrection,
+    PostObservations,
+    RegisterTest,
+    RevokeKey,
+)
+from service.ingest.performing import perform
 from service.ingest.road import perform_now
 from service.storage import tables
 from service.storage.auditing import Audited, Snapshot, audited, snapshot
 from service.storage.engine import is_sqlite
+from service.storage.reader import Reader
+from service.storage.writer import writing
 from tests.api.examples import SEAL, SHAFT
 from tests.storage.test_history import GUARDED, post
+from tests.storage.test_storage import NOW
 
 UNITS = '{"observations": [{"value": 10.1, "unit": "u1"}, {"value": 10.2, "unit": "u2"}]}'
 
@@ -36,11 +50,24 @@ def filled(engine: Engine) -> None:
     for name in ("one", "two"):
         perform_now(engine, CreateKey(name, Role.VIEWER))
     perform_now(engine, RevokeKey("one"))
+    perform_now(engine, RegisterTest("lot-4", "seal", Subject(SubjectKind.LOT, "x"), {}, "me"))
+    for act in (post("lot-4", *[0] * 30), void("lot-4", 7), void("lot-4", 9, {"value": 1})):
+        perform_now(engine, act)
+    perform_now(engine, Dispose("lot-4", Verdict.ACCEPT, "sheet 12", "the customer asked", "me"))
 
 
-def with_units() -> PostObservations:
-    digest = hashlib.sha256(UNITS.encode()).hexdigest()
-    return PostObservations("lot-2", UNITS, json.loads(UNITS), digest, "line-2", request_id="r2")
+def void(test: str, at: int, replacement: dict[str, Any] | None = None) -> PostCorrection:
+    """A correction that voids, or replaces."""
+    return PostCorrection(test, at, replacement, "typo", "d" * 64, "me", may_correct_decided=True, request_id="r3")
+
+
+def with_units(*units: str) -> PostObservations:
+    """Two units, those of `UNITS` or others."""
+    body = UNITS
+    for old, new in zip(("u1", "u2"), units, strict=False):
+        body = body.replace(old, new)
+    digest = hashlib.sha256(body.encode()).hexdigest()
+    return PostObservations("lot-2", body, json.loads(body), digest, "line-2", request_id="r2")
 
 
 @contextmanager
@@ -70,10 +97,11 @@ def differences(connection: Connection) -> list[str]:
 def test_what_was_not_touched_is_as_it_was_recorded(engine: Engine) -> None:
     filled(engine)
     assert list(audited(partial(snapshot, engine))) == [
-        Audited(None, is_of_test=False, acts=9),
+        Audited(None, is_of_test=False, acts=10),
         Audited(None, is_of_test=True, acts=5, observations=41),
         Audited(None, is_of_test=True, acts=3, observations=3),
         Audited(None, is_of_test=True, acts=1),
+        Audited(None, is_of_test=True, acts=7, observations=30),
     ]
     named, unknown = audited(partial(snapshot, engine), ["lot-2", "nowhere"])
     assert (named.acts, named.difference) == (3, None)
@@ -89,6 +117,11 @@ SWAP_HISTORY = """
 UPDATE history SET number = 100 WHERE chain = '' AND number = 1;
 UPDATE history SET number = 1 WHERE chain = '' AND number = 2;
 UPDATE history SET number = 2 WHERE chain = '' AND number = 100
+"""
+SWAP_CORRECTIONS = """
+UPDATE corrections SET number = 100 WHERE number = 4;
+UPDATE corrections SET number = 4 WHERE number = 5;
+UPDATE corrections SET number = 5 WHERE number = 100
 """
 CUT_SHORT = """
 DELETE FROM submissions WHERE test = 'lot-2' AND first_sequence = 3;
@@ -114,9 +147,9 @@ CHANGES = [
     ("history", "UPDATE history SET details = '{\"plan\": \"seal\"}' WHERE number = 1 AND chain = ''", "service, act 1 .*link"),
     ("history", "UPDATE history SET details = 'none' WHERE number = 1 AND chain = 'lot-3'", "test lot-3: a row cannot be read"),
     ("history", SWAP_HISTORY, "service, act 1 .*link"),
-    ("history", "DELETE FROM history WHERE chain = '' AND number = 9", "service's history ends with act 8, and 9"),
+    ("history", "DELETE FROM history WHERE chain = '' AND number = 10", "service's history ends with act 9, and 10"),
     ("chains", "UPDATE chains SET history_link = 'x'", "service's history ends"),
-    ("chains", "DELETE FROM chains", "service's history ends with act 9, and 0"),
+    ("chains", "DELETE FROM chains", "service's history ends with act 10, and 0"),
     ("tests", "UPDATE tests SET decision = 'reject' WHERE key = 'lot-1'", "test lot-1: its state"),
     ("tests", "UPDATE tests SET log_likelihood_ratio = 0.125 WHERE key = 'lot-2'", "test lot-2: its state"),
     ("tests", "UPDATE tests SET status = 'closed' WHERE key = 'lot-3'", "test lot-3: its status"),
@@ -125,6 +158,18 @@ CHANGES = [
     ("tests", "UPDATE tests SET subject_name = 'y' WHERE key = 'lot-2'", "test lot-2, act 1 .*registered"),
     ("tests", "UPDATE tests SET history_length = 2 WHERE key = 'lot-2'", "test lot-2: its history ends"),
     ("tests", VANISHED, "service, act 6 .test-registered.: what it tells of is missing"),
+    ("tests", "UPDATE tests SET disposition = 'scrap' WHERE key = 'lot-4'", "test lot-4, act 7 .disposed.*row says"),
+    ("tests", "UPDATE tests SET disposed_by = 'x' WHERE key = 'lot-4'", "test lot-4: its disposition"),
+    ("tests", "UPDATE tests SET status = 'open', disposition = NULL WHERE key = 'lot-4'", "test lot-4, act 7 .disposed.*row says"),
+    ("tests", "UPDATE tests SET decision_changed = (1 = 0) WHERE key = 'lot-4'", "test lot-4: its decision_changed"),
+    ("tests", "UPDATE tests SET corrected_after_decision = (1 = 0) WHERE key = 'lot-4'", "test lot-4: its corrected_after"),
+    ("tests", "UPDATE tests SET corrections = 3 WHERE key = 'lot-4'", "test lot-4: its corrections"),
+    ("corrections", "UPDATE corrections SET reason = 'x' WHERE observation = 7", "test lot-4, act 4 .corrected observation 7.*link"),
+    ("corrections", "UPDATE corrections SET replacement = '{\"value\": 0}' WHERE observation = 9", "test lot-4, act 5 .*link"),
+    ("corrections", "UPDATE corrections SET observation = 8 WHERE observation = 7", "test lot-4, act 4 .*link"),
+    ("corrections", "UPDATE corrections SET total = 5 WHERE observation = 7", "test lot-4, act 4 .*link"),
+    ("corrections", "DELETE FROM corrections WHERE observation = 7", "test lot-4, act 5 .*act 4 was to come"),
+    ("corrections", SWAP_CORRECTIONS, "test lot-4, act 4 .*link"),
     ("test_labels", "UPDATE test_labels SET value = '4' WHERE test = 'lot-2' AND name = 'line'", "test lot-2: its labels"),
     ("test_labels", "DELETE FROM test_labels WHERE test = 'lot-2' AND name = 'line'", "test lot-2: its labels"),
     ("units", "UPDATE units SET sequence = 3 - sequence", "test lot-2: the units of observations 1"),
@@ -141,6 +186,23 @@ CHANGES = [
     ("api_keys", "DELETE FROM api_keys WHERE name = 'two'", "service, act 8"),
     ("api_keys", "INSERT INTO api_keys SELECT 'x', 'x', role, 'x', created_at, NULL, NULL FROM api_keys WHERE name = 'two'", "api_keys: 3 rows"),
 ]  # fmt: skip
+
+
+def test_a_group_of_posts_and_corrections_sees_its_own_acts(engine: Engine) -> None:
+    filled(engine)
+    with writing(engine) as writer:
+        writer.expect(["lot-2", "lot-3"], [])
+        for act in (post("lot-2", 10.4), void("lot-2", 4), post("lot-3", 0), void("lot-2", 1), with_units("u1", "u3")):
+            perform(act, writer, NOW)
+    test = Reader(engine).test("lot-2")
+    assert test is not None
+    assert (test.state.sequence, test.state.voided) == (6, 2)
+    assert differences_of(engine) == []
+
+
+def differences_of(engine: Engine) -> list[str]:
+    found = audited(partial(snapshot, engine))
+    return [audit.difference for audit in found if audit.difference is not None]
 
 
 def test_every_table_is_tried() -> None:

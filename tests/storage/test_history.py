@@ -12,7 +12,7 @@ from service.domain.access import Role
 from service.domain.chain import SERVICE, Entry, Head, shown
 from service.domain.checking import checked_content
 from service.domain.sequential_test import Subject, SubjectKind
-from service.ingest.commands import CreateKey, CreatePlan, PostObservations, RegisterTest, RevokeKey
+from service.ingest.commands import CreateKey, CreatePlan, PostCorrection, PostObservations, RegisterTest, RevokeKey
 from service.ingest.performing import perform
 from service.ingest.road import perform_now
 from service.storage.migrate import downgrade, upgrade
@@ -21,7 +21,7 @@ from service.storage.writer import writing
 from tests.api.examples import SEAL, SHAFT
 from tests.storage.test_storage import NOW
 
-GUARDED = ["submissions", "history"]
+GUARDED = ["submissions", "history", "corrections"]
 
 
 def post(test: str, *values: float, key: str | None = None) -> PostObservations:
@@ -30,7 +30,7 @@ def post(test: str, *values: float, key: str | None = None) -> PostObservations:
     return PostObservations(test, body, json.loads(body), digest, "line-2", key, request_id="r1")
 
 
-def filled(engine: Engine) -> None:
+def filled(engine: Engine, *, is_corrected: bool = True) -> None:
     """Two tests, one of them decided and past it, and keys of which one is revoked."""
     for name, plan in (("seal", SEAL), ("shaft", SHAFT)):
         perform_now(engine, CreatePlan(name, checked_content(plan), "me"))
@@ -43,6 +43,9 @@ def filled(engine: Engine) -> None:
         post("lot-seal", 1),
     ):
         perform_now(engine, command)
+    correction = PostCorrection("lot-shaft", 1, None, "typo", "d" * 64, "me", may_correct_decided=False)
+    if is_corrected:
+        perform_now(engine, correction)
     for name in ("one", "two"):
         perform_now(engine, CreateKey(name, Role.VIEWER))
     perform_now(engine, RevokeKey("one"))
@@ -71,7 +74,7 @@ def test_every_act_is_chained_and_the_end_is_kept(engine: Engine) -> None:
         return [entry.act for entry in acts[chain]]
 
     assert acts_of("lot-seal") == ["registered", "submitted", "submitted", "decided", "submitted"]
-    assert acts_of("lot-shaft") == ["registered", "submitted"]
+    assert acts_of("lot-shaft") == ["registered", "submitted", "corrected"]
     assert acts_of(SERVICE) == [*["plan-created", "test-registered"] * 2, *["key-created"] * 2, "key-revoked"]
     for key in ("lot-seal", "lot-shaft"):
         assert getattr(Reader(engine).test(key), "history", None) == linked(acts[key])
@@ -84,7 +87,7 @@ def test_every_act_is_chained_and_the_end_is_kept(engine: Engine) -> None:
 
 
 def test_what_was_there_before_gets_its_history(engine: Engine) -> None:
-    filled(engine)
+    filled(engine, is_corrected=False)
     before = {key: history(engine, key) for key in ("lot-seal", "lot-shaft")}
     tests = {key: Reader(engine).test(key) for key in before}
     downgrade(engine, "0004")

@@ -115,7 +115,7 @@ def test_a_limited_key_does_not_outlive_its_limits(engine: Engine) -> None:
     limits = limits_of([], [("line", "3")])
     for name, given in (("limited", limits), ("free", UNLIMITED)):
         perform_now(engine, CreateKey(name, Role.VIEWER, limits=given))
-    downgrade(engine, "0004")
+    downgrade(engine, "0006")
     upgrade(engine)
     found = Reader(engine).keys()
     keys = {key.name: key for key in found}

@@ -7,6 +7,7 @@ from typing import Any
 import pytest
 from sqlalchemy import Engine, event
 
+from service.domain.disposing import Verdict
 from service.domain.sequential_test import SubjectKind
 from service.domain.state import Decision
 from service.storage.engine import create_engine_for, is_sqlite
@@ -36,6 +37,7 @@ FILTERS = [
     TestFilters(kind=SubjectKind.EXPERIMENT, decision=Decision.CONTINUE),
     TestFilters(labels=(("line", "3"),), decision=Decision.CONTINUE),
     TestFilters(decision=Decision.REJECT, updated_after=RECENT),
+    TestFilters(disposition=Verdict.SCRAP),
 ]
 
 
@@ -88,7 +90,9 @@ def test_no_page_of_a_list_reads_the_whole_table(filled: Engine, filters: TestFi
     assert all(map(is_through_an_index, found)), found
 
 
-@pytest.mark.parametrize("filters", [each for each in FILTERS if each.updated_after is None], ids=str)
+@pytest.mark.parametrize(
+    "filters", [each for each in FILTERS if each.updated_after is None and each.disposition is None], ids=str
+)
 def test_changes_are_read_from_the_last_one_on(filled: Engine, filters: TestFilters) -> None:
     found = steps(filled, lambda reader: reader.changes(filters, TESTS - 30, 200))
     assert all(map(is_through_an_index, found)), found

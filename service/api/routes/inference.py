@@ -1,5 +1,6 @@
 """Inference: what may be said once a test is decided."""
 
+import json
 from typing import Annotated
 
 from fastapi import APIRouter, Query, Request, Response
@@ -15,7 +16,6 @@ from service.api.schemas.inference import InferenceOut
 from service.domain.access import Role
 from service.domain.errors import NotDecided
 from service.domain.inference import inference_of
-from service.domain.log import document_of
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest
 
@@ -54,5 +54,6 @@ async def show_inference(
 
 
 def _inference(parts: Parts, test: SequentialTest, plan: Plan, level: float) -> InferenceOut:
-    documents = (document_of(entry) for entry in parts.reader.log.submissions(test.key, 0, test.state.sequence))
+    bodies = parts.reader.log.bodies(test, 0, test.state.sequence)
+    documents = ((first, json.loads(body)) for first, body in bodies)
     return InferenceOut.of(inference_of(plan.document, test.state, documents, level), plan, test.state)

@@ -3,6 +3,7 @@
 import csv
 import hashlib
 import io
+import json
 from collections.abc import Iterator
 from itertools import islice
 from typing import Annotated, Any, cast
@@ -25,14 +26,15 @@ from service.api.schemas.observations import (
     ObservationsForm,
     PathOut,
     csv_columns,
+    csv_row,
     drawn,
 )
 from service.api.schemas.tests import PostedOut
 from service.domain.access import AccessKey, Role
-from service.domain.log import document_of, expanded
+from service.domain.log import expanded
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
-from service.domain.sequential_test import SequentialTest, Submission
+from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import Posted, PostObservations
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["observations"], route_class=StrictRoute)
@@ -162,22 +164,17 @@ async def _command(key: str, request: Request, access_key: AccessKey, idempotenc
 
 
 def _log_page(parts: Parts, test: SequentialTest, plan: Plan, after: int, limit: int) -> list[LoggedOut]:
-    entries = expanded(procedure_of(plan).family, test, _submissions(parts, test, after))
+    entries = expanded(procedure_of(plan).family, test, parts.reader.log.corrected(test, after))
     return [LoggedOut.of(entry) for entry in islice((e for e in entries if e.sequence > after), limit)]
-
-
-def _submissions(parts: Parts, test: SequentialTest, after: int = 0) -> Iterator[Submission]:
-    """The log as far as this test had come when it was read: what was posted since may have decided it."""
-    return parts.reader.log.submissions(test.key, after, test.state.sequence)
 
 
 def _csv(parts: Parts, test: SequentialTest, plan: Plan) -> Iterator[str]:
     family = procedure_of(plan).family
     columns = csv_columns(family)
     yield _csv_line(columns)
-    for entry in expanded(family, test, _submissions(parts, test)):
-        row = LoggedOut.of(entry).model_dump(mode="json", by_alias=True)
-        yield _csv_line([_cell(row[column]) for column in columns])
+    for entry in expanded(family, test, parts.reader.log.corrected(test)):
+        row = csv_row(family, entry)
+        yield _csv_line([_cell(row.get(column)) for column in columns])
 
 
 def _csv_line(cells: list[str]) -> str:
@@ -194,5 +191,6 @@ def _cell(value: object) -> str:
 
 def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOut:
     procedure = procedure_of(plan)
-    documents = (document_of(submission) for submission in _submissions(parts, test))
+    bodies = parts.reader.log.bodies(test, 0, test.state.sequence)
+    documents = ((first, json.loads(body)) for first, body in bodies)
     return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, documents, points))

@@ -20,6 +20,7 @@ from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.domain.access import AccessKey, Role
 from service.domain.assumptions import assumptions_of, stretch_of
+from service.domain.disposing import Verdict
 from service.domain.outlook import outlook_of
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
@@ -35,12 +36,13 @@ class TestsQuery(FiltersQuery):
 
     __test__ = False
     updated_after: Moment | None = None
+    disposition: Verdict | None = None
     limit: Limit = 100
     cursor: Cursor = None
 
     def filters(self) -> TestFilters:
         """For the reader."""
-        return replace(super().filters(), updated_after=self.updated_after)
+        return replace(super().filters(), updated_after=self.updated_after, disposition=self.disposition)
 
 
 @router.post(
@@ -138,7 +140,7 @@ async def show_assumptions(key: str, request: Request, response: Response, parts
 def _assumptions(parts: Parts, test: SequentialTest, plan: Plan) -> AssumptionsOut:
     procedure = procedure_of(plan)
     stretch = stretch_of(test.state)
-    bodies = parts.reader.log.bodies(test.key, stretch.first - 1, stretch.last)
+    bodies = parts.reader.log.bodies(test, stretch.first - 1, stretch.last)
     return AssumptionsOut.of(assumptions_of(procedure, test.state, bodies), procedure.family.name, test)
 
 

@@ -15,6 +15,10 @@ Name = Annotated[str, StringConstraints(strict=True, pattern=NAME_PATTERN)]
 # Free text without control characters, which no log, table or page could show.
 _SHOWN = r"^[^\x00-\x1f\x7f]+$"
 Text = Annotated[str, StringConstraints(strict=True, min_length=1, max_length=200, pattern=_SHOWN)]
+# Why somebody did something.
+Reason = Annotated[
+    str, StringConstraints(strict=True, strip_whitespace=True, min_length=1, max_length=1000, pattern=_SHOWN)
+]
 # A label's name, a colon and its value.
 Label = Annotated[str, StringConstraints(strict=True, max_length=301, pattern=_SHOWN)]
 

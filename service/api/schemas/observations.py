@@ -1,5 +1,6 @@
 """Observations: as posted, as logged, and as a path to draw."""
 
+import json
 from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
 from typing import Annotated, Any, Literal, Self
@@ -11,8 +12,9 @@ from service.api.schemas.plans import CONTENT as PLAN
 from service.api.schemas.plans import PlanContentForm, ThresholdsOut
 from service.api.schemas.tests import ConfidenceOut, total_of
 from service.domain.anytime import ConfidenceSequence, always_valid_p_value, confidence_sequence
+from service.domain.correcting import Correction
 from service.domain.families import Family
-from service.domain.log import LoggedObservation
+from service.domain.log import LoggedObservation, fields_of
 from service.domain.path import Path, RegionPoint, path_of, region_points
 from service.domain.procedure import Procedure
 from service.domain.state import State
@@ -36,6 +38,7 @@ LOGGED: dict[str, Any] = {
     "received_at": "2031-05-04T09:30:00Z",
     "submitted_by": "line-2-tester",
     "counted": True,
+    "correction": None,
 }
 
 ANYTIME = {"always_valid_p_value": 1.0, "confidence_sequence": None}
@@ -134,6 +137,29 @@ class RehearsalForm(Form):
     submission: ObservationsForm
 
 
+class CorrectionOut(Answer):
+    """A correction of an observation, beside what was posted."""
+
+    number: int = Field(description="Its place in the history of the test.")
+    action: str = Field(description="void or replace.")
+    observation: dict[str, Any] | None = Field(description="What counts in its place; null where it is voided.")
+    reason: str
+    by: str
+    at: datetime
+
+    @classmethod
+    def of(cls, correction: Correction) -> "CorrectionOut":
+        """From the domain's correction."""
+        return cls(
+            number=correction.number,
+            action=correction.action,
+            observation=None if correction.replacement is None else json.loads(correction.replacement),
+            reason=correction.reason,
+            by=correction.actor,
+            at=correction.received_at,
+        )
+
+
 class LoggedOut(Answer):
     """One observation of the log."""
 
@@ -154,6 +180,7 @@ class LoggedOut(Answer):
     received_at: datetime
     submitted_by: str
     counted: bool
+    correction: CorrectionOut | None = Field(description="The correction in force; null for what counts as posted.")
 
     @classmethod
     def of(cls, entry: LoggedObservation) -> "LoggedOut":
@@ -165,6 +192,7 @@ class LoggedOut(Answer):
             received_at=entry.received_at,
             submitted_by=entry.actor,
             counted=entry.is_counted,
+            correction=None if entry.correction is None else CorrectionOut.of(entry.correction),
             **entry.fields,
         )
 
@@ -241,11 +269,11 @@ class RehearsalOut(Answer):
             total=total_of(procedure.family, state.total.value),
             cause=state.decided.cause if state.decided else None,
             overrun=state.overrun,
-            **drawn(procedure, [document], points),
+            **drawn(procedure, [(1, document)], points),
         )
 
 
-def drawn(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: int) -> dict[str, Any]:
+def drawn(procedure: Procedure, documents: Iterable[tuple[int, Mapping[str, Any]]], points: int) -> dict[str, Any]:
     """The members of an answer that draw a walk: its points, and the region around them."""
     path = path_of(procedure, documents, points)
     region = region_points(procedure, float(path.progress[-1]))
@@ -260,7 +288,22 @@ def drawn(procedure: Procedure, documents: Iterable[Mapping[str, Any]], points: 
 
 def csv_columns(family: Family) -> list[str]:
     """The header of the log as CSV."""
-    return ["sequence", *family.fields, "unit", "observed_at", "received_at", "submitted_by", "counted"]
+    as_posted = ["sequence", *family.fields, "unit", "observed_at", "received_at", "submitted_by", "counted"]
+    in_place = [f"corrected_{name}" for name in (*family.fields, "unit", "observed_at")]
+    return [*as_posted, "correction", *in_place, "correction_reason", "corrected_by", "corrected_at"]
+
+
+def csv_row(family: Family, entry: LoggedObservation) -> dict[str, Any]:
+    """The cells of one observation by column: as posted, and what counts in its place if it was corrected."""
+    row = LoggedOut.of(entry).model_dump(mode="json", by_alias=True)
+    note = row.pop("correction")
+    if note is None:
+        return row
+    observation = note["observation"]
+    fields = {} if observation is None else {**observation, **fields_of(family, observation)}
+    told = {"correction": note["action"], "correction_reason": note["reason"]}
+    told |= {"corrected_by": note["by"], "corrected_at": note["at"]}
+    return {**row, **told, **{f"corrected_{name}": value for name, value in fields.items()}}
 
 
 def _path_point(procedure: Procedure, path: Path, sequence: ConfidenceSequence | None, index: int) -> PathPointOut:

@@ -9,6 +9,7 @@ from pydantic import ConfigDict, Field
 from service.api.schemas.common import Answer, Form, Name, Text, optional, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.anytime import ConfidenceSequence, always_valid_p_value, confidence_at
+from service.domain.disposing import Disposition
 from service.domain.families import Family
 from service.domain.families.base import Way
 from service.domain.observing import direction_of_rejection
@@ -47,6 +48,11 @@ STATE: dict[str, Any] = {
     },
     "outlook": None,
     "overrun": 1,
+    "corrections": 0,
+    "voided": 0,
+    "decision_changed": False,
+    "corrected_after_decision": False,
+    "disposition": None,
     "status": "open",
     "version": 2,
     "registered_at": "2031-05-04T09:00:00Z",
@@ -124,6 +130,29 @@ class WaysOut(Answer):
         return cls(accept=_words(ways.accept), reject=_words(ways.reject), reject_below=_words(ways.reject_below))
 
 
+class DispositionOut(Answer):
+    """What was finally done with the subject."""
+
+    disposition: str
+    reason: str
+    deviates: bool = Field(description="True where it does not follow from the decision.")
+    deviation_reason: str | None
+    by: str
+    at: datetime
+
+    @classmethod
+    def of(cls, disposition: Disposition) -> "DispositionOut":
+        """From the domain's disposition."""
+        return cls(
+            disposition=disposition.verdict,
+            reason=disposition.reason,
+            deviates=disposition.deviates,
+            deviation_reason=disposition.deviation_reason,
+            by=disposition.by,
+            at=disposition.at,
+        )
+
+
 class TestOut(Answer):
     """A test and where it stands."""
 
@@ -151,6 +180,11 @@ class TestOut(Answer):
     decided: DecidedOut | None
     outlook: WaysOut | None = Field(description="The least that is still needed; null once decided.")
     overrun: int
+    corrections: int = Field(description="How many were made.")
+    voided: int = Field(description="Observations that corrections took out.")
+    decision_changed: bool = Field(description="True once a correction has made the decision another.")
+    corrected_after_decision: bool = Field(description="True once a decided test was corrected.")
+    disposition: DispositionOut | None
     status: str
     version: int
     registered_at: datetime
@@ -159,7 +193,7 @@ class TestOut(Answer):
     @classmethod
     def of(cls, test: SequentialTest, plan: Plan) -> "TestOut":
         """From the domain's test and its plan."""
-        return cls(**_members(test, plan))
+        return cls(**members(test, plan))
 
 
 class PostedOut(TestOut):
@@ -174,7 +208,7 @@ class PostedOut(TestOut):
     def after(cls, posted: Posted) -> "PostedOut":
         """From the outcome of a submission."""
         return cls(
-            **_members(posted.test, posted.plan),
+            **members(posted.test, posted.plan),
             first_sequence=posted.first_sequence,
             last_sequence=posted.last_sequence,
         )
@@ -195,7 +229,8 @@ def total_of(family: Family, value: float) -> int | float:
     return int(value) if family.span.is_integer else value
 
 
-def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
+def members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
+    """The members of a test and where it stands."""
     procedure, state = procedure_of(plan), test.state
     return {
         "key": test.key,
@@ -214,6 +249,11 @@ def _members(test: SequentialTest, plan: Plan) -> dict[str, Any]:
         "decided": _decided(procedure, state),
         "outlook": None if state.is_decided else WaysOut.of(ways_of(procedure, state)),
         "overrun": state.overrun,
+        "corrections": test.corrections,
+        "voided": state.voided,
+        "decision_changed": test.decision_changed,
+        "corrected_after_decision": test.corrected_after_decision,
+        "disposition": None if test.disposition is None else DispositionOut.of(test.disposition),
         "status": test.status,
         "version": test.version,
         "registered_at": test.registered_at,

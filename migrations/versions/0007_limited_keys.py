@@ -4,8 +4,8 @@ import sqlalchemy as sa
 from alembic import op
 
 # Services that know only 0004 would let a limited key see everything, so they must not run on this.
-revision = "0006"
-down_revision = "0005"
+revision = "0007"
+down_revision = "0006"
 branch_labels = None
 depends_on = None
 
