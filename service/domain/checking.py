@@ -51,7 +51,10 @@ def checked_content(given: Content) -> str:
         document = canonical(_completed(content))
         compiled = procedure_of_document(document)
     except OutOfRange as error:
-        raise InvalidPlan([Fault("/h1", f"{error.rule}; h0 is {content['h0']!r}, h1 {content.get('h1')!r}")]) from error
+        detail = f"{error.rule}; received {error.received!r}"
+        if error.argument == "h1":
+            detail = f"{error.rule}; h0 is {content['h0']!r}, h1 {content.get('h1')!r}"
+        raise InvalidPlan([Fault(f"/{error.argument}", detail)]) from error
     _check_truncation_leaves_a_choice(compiled)
     return document
 

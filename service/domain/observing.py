@@ -18,6 +18,7 @@ from service.domain.families.base import Start
 from service.domain.procedure import Procedure
 from service.domain.state import Decided, Decision, State, Sum
 from service.domain.statistics import ABOVE, BELOW
+from service.sequential.curved import CurvedRegion
 from service.sequential.double import Double, FloatArray, running_sum, two_sum
 from service.sequential.tables import UnitTable
 from service.sequential.walk import Exit, first_exit_at_reports, first_exit_in_time
@@ -142,8 +143,12 @@ def direction_of_rejection(procedure: Procedure, state: State) -> str | None:
     """Of a two-sided plan's rejection: on which side of h0 the parameter lies; None for others."""
     if not procedure.has_two_directions or state.decision is not Decision.REJECT:
         return None
-    h0, estimate = procedure.hypotheses[0], procedure.family.estimate(standing_of(procedure, state), procedure.known)
-    return ABOVE if estimate is None or estimate > h0 else BELOW
+    standing, region = standing_of(procedure, state), procedure.region
+    if isinstance(region, CurvedRegion):
+        is_above = standing.total > float(region.evidence.expected(np.array([standing.progress]))[0])
+        return ABOVE if is_above != procedure.family.parameter_lowers_total else BELOW
+    estimate = procedure.family.estimate(standing, procedure.known)
+    return ABOVE if estimate is None or estimate > procedure.hypotheses[0] else BELOW
 
 
 def first_exit(procedure: Procedure, walk: Walk, increments: Increments) -> Exit | None:

@@ -151,10 +151,13 @@ def _way_between(procedure: Procedure, standing: Start) -> Way | None:
         return None
     limits = procedure.region.limits(np.array([procedure.region.wall.progress]))
     low, high = float(limits.lower[0]), float(limits.upper[0])
-    ends = f"a total between {low:.6g} and {high:.6g}" if math.isfinite(low) else f"a total below {high:.6g}"
+    ends = f"above {low:.6g} and below {high:.6g}"
+    if procedure.family.span.is_integer:
+        low, high = max(low + 1.0, procedure.family.span.floor), high - 1.0
+        ends = f"from {low:.0f} to {high:.0f}" if math.isfinite(high) else f"of at least {low:.0f}"
     units = room.sample_number
     more = f"an exposure of {room.exposure:.6g}" if units is None else plural(units, "unit")
-    return Way(room.sample_number, room.exposure, high - standing.total, f"{more} more that end with {ends}")
+    return Way(room.sample_number, room.exposure, high - standing.total, f"{more} more that end with a total {ends}")
 
 
 def _room(procedure: Procedure, standing: Start) -> Room | None:

@@ -17,7 +17,9 @@ from service.sequential import generalised
 from service.sequential.evidence import Evidence
 from service.sequential.likelihood import LikelihoodRatio
 
-ABOVE, BELOW = "above", "below"
+ABOVE, BELOW = DIRECTIONS = "above", "below"
+# Parameters of a prior beyond these leave too few digits of what the observations add to it.
+SMALLEST_PRIOR, LARGEST_PRIOR = 1e-6, 1e6
 
 
 @dataclass(frozen=True)
@@ -139,9 +141,14 @@ def evidence_of(family: Family, content: Content) -> LikelihoodRatio | Evidence:
     return generalised.OneSided(deviance, edge, family.mean_of(hypotheses[-1], known), ratio, direction > 0)
 
 
+def is_two_sided(content: Content) -> bool:
+    """H0 is h0 alone, against both sides of it."""
+    return bool(content.get("sides") == len(DIRECTIONS))
+
+
 def direction_of(family: Family, content: Content) -> int:
     """On which side of H0's edge totals speak for H1: 1 above, -1 below, 0 on both."""
-    if content.get("sides") == 2:  # noqa: PLR2004
+    if is_two_sided(content):
         return 0
     hypotheses = hypotheses_of(content)
     is_above = hypotheses[-1] > hypotheses[0] if len(hypotheses) > 1 else content.get("direction", ABOVE) == ABOVE
@@ -164,7 +171,7 @@ def _faults_of_sides(statistic: Statistic, content: Content) -> list[Fault]:
         faults.append(Fault("/sides", f"must be 1 or 2; received {sides!r}"))
     if direction not in (None, ABOVE, BELOW):
         faults.append(Fault("/direction", f"must be {ABOVE} or {BELOW}; received {direction!r}"))
-    if sides == 2:  # noqa: PLR2004
+    if is_two_sided(content):
         names = (name for name in statistic.one_sided if name in content)
         faults += [Fault(f"/{name}", "means nothing for a two-sided plan: H0 is h0 alone") for name in names]
         if "failures" in (content.get("truncation") or {}):
@@ -198,6 +205,9 @@ def _faults_of_composite(family: Family, statistic: Statistic, content: Content)
         faults.append(Fault("/beta", rule))
     if is_apart and "direction" in content:
         faults.append(Fault("/direction", "is said by h1 already; leave it out"))
+    if statistic.name == "mixture" and "failures" in (content.get("truncation") or {}):
+        rule = "means nothing for a mixture plan: it accepts by the exposure and rejects by its evidence alone"
+        faults.append(Fault("/truncation/failures", rule))
     if content.get("truncation") is None and not accepts_early(content) and not _may_go_on_for_ever(content):
         rule = "is required: nothing accepts before it"
         faults.append(Fault("/truncation", f"{rule}, and no threshold holds the level without it"))
@@ -224,6 +234,14 @@ def _faults_of_prior(family: Family, statistic: Statistic, content: Content) -> 
     for name, value in prior.items():
         if name not in family.prior:
             faults.append(Fault(f"/known/prior/{name}", f"means nothing for {family.name}; its prior has {wanted}"))
-        elif (rule := positive_rule(value)) is not None or not math.isfinite(value):
+        elif (rule := _prior_rule(name, value)) is not None:
             faults.append(Fault(f"/known/prior/{name}", f"{rule}; received {value!r}"))
     return faults
+
+
+def _prior_rule(name: str, value: float) -> str | None:
+    """The rule that a parameter of a prior breaks; `rate` and `tau` have a unit, so that any size may be right."""
+    if name in ("rate", "tau"):
+        return positive_rule(value)
+    within = SMALLEST_PRIOR <= value <= LARGEST_PRIOR
+    return None if within else f"must be from {SMALLEST_PRIOR:g} to {LARGEST_PRIOR:g}"

@@ -55,11 +55,11 @@ def time_to_lower(region: Region, progress: float, total: float) -> float | None
     return wall - progress if side[0] == BELOW else None
 
 
-def jump_to_upper(region: Region, progress: float, total: float) -> tuple[int, float]:
+def jump_to_upper(region: Region, progress: float, total: float) -> tuple[int, float] | None:
     """
     The fewest increases of one that end above, and how much progress the last of them has at most.
 
-    They end above at once, or, where that takes fewer, by the wall, which parts the totals.
+    They end above at once, or, where that takes fewer, by the wall, which parts the totals. None where no number does.
     """
     wall = math.inf if region.wall is None else region.wall.progress
     cap = math.inf if region.wall is None or region.wall.cap is None else region.wall.cap
@@ -74,10 +74,11 @@ def jump_to_upper(region: Region, progress: float, total: float) -> tuple[int, f
 
     few = np.flatnonzero(until(np.arange(1.0, FEW + 1.0)) > progress)
     fewest = int(few[0]) + 1 if few.size else _first_true(is_beyond, begin=FEW)
-    if region.wall is not None:
-        at_wall = max(0, math.ceil(float(region.limits(np.array([wall])).upper[0]) - total))
-        if at_wall < fewest:
-            return at_wall, wall - progress
+    upper = math.inf if region.wall is None else float(region.limits(np.array([wall])).upper[0])
+    if math.isfinite(upper) and (at_wall := max(0, math.ceil(upper - total))) < fewest:
+        return at_wall, wall - progress
+    if fewest >= FURTHEST:
+        return None
     return fewest, float(until(np.array([float(fewest)]))[0]) - progress
 
 

@@ -12,7 +12,6 @@ from collections.abc import Callable
 
 import psycopg
 from sqlalchemy import Engine
-from sqlalchemy.exc import SQLAlchemyError
 
 from service.storage.engine import CHANNEL, is_sqlite
 
@@ -47,7 +46,7 @@ class Watcher:
         while not self._is_stopped.is_set():
             try:
                 watch()
-            except (SQLAlchemyError, psycopg.Error) as error:
+            except Exception as error:  # noqa: BLE001 - whatever it is, the streams must not fall silent for ever
                 if not self._is_away:
                     logger.warning("changes are not watched until the database answers: %s", error)
                 self._is_away = True

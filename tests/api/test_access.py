@@ -53,7 +53,9 @@ def routes() -> set[tuple[str, str]]:
     """Every route of the service itself, described or not."""
     found = set()
     for context in iter_route_contexts(create_app(Settings()).routes):
-        found |= {(method, (context.path or "").replace(":path", "")) for method in (context.methods or {"ANY"}) - {"HEAD"}}
+        found |= {
+            (method, (context.path or "").replace(":path", "")) for method in (context.methods or {"ANY"}) - {"HEAD"}
+        }
     return found
 
 

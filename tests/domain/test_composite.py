@@ -166,7 +166,7 @@ def test_the_wall_of_a_two_sided_plan_accepts_what_lies_between() -> None:
     assert (last.reject_below, last.reject) == (0.0, 8.0)
     ways = ways_of(compiled, State())
     assert ways.accept is not None
-    assert ways.accept.words == "10 units more that end with a total between 0 and 8"
+    assert ways.accept.words == "10 units more that end with a total from 1 to 7"
     assert ways.reject_below is not None
     assert ways.reject_below.words.endswith("conforming units")
 

@@ -72,9 +72,7 @@ class Conditional(Family):
         """See `Family`."""
         odds0, odds1 = h0 * self.odds_at_one(known), h1 * self.odds_at_one(known)
         for odds in (odds0, odds1):
-            if not SMALLEST_ODDS <= odds <= LARGEST_ODDS:
-                rule = f"must, like h0, leave odds of b against a from {SMALLEST_ODDS:g} to {LARGEST_ODDS:g}"
-                raise OutOfRange("h1", rule, odds)
+            self._check_odds(odds)
         return likelihood.odds(odds0, odds1)
 
     def deviance(self, known: Mapping[str, float]) -> Deviance:
@@ -91,6 +89,7 @@ class Conditional(Family):
 
     def mean_of(self, parameter: float, known: Mapping[str, float]) -> float:
         """See `Family`."""
+        self._check_odds(parameter * self.odds_at_one(known))
         return self._share(parameter, known)
 
     def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
@@ -138,6 +137,12 @@ class Conditional(Family):
             checks[1:1] = [autocorrelation_check(proportion_residuals(in_b, shown), "reports")]
             checks.append(proportion_dispersion_check(in_b, shown, f"{several} {self.in_b}"))
         return tuple(checks)
+
+    @staticmethod
+    def _check_odds(odds: float) -> None:
+        if not SMALLEST_ODDS <= odds <= LARGEST_ODDS:
+            rule = f"must, like h0, leave odds of b against a from {SMALLEST_ODDS:g} to {LARGEST_ODDS:g}"
+            raise OutOfRange("h1", rule, odds)
 
     def _share(self, parameter: float, known: Mapping[str, float]) -> float:
         odds = parameter * self.odds_at_one(known)

@@ -105,10 +105,10 @@ class Exponential(Family):
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """See `Family`."""
         time = time_to_lower(region, start.progress, start.total)
-        failures, within = jump_to_upper(region, start.progress, start.total)
+        up = jump_to_upper(region, start.progress, start.total)
         return (
             None if time is None else Way(None, time, 0.0, f"a unit-time of {time:.6g} without failure"),
-            Way(failures or None, within, float(failures), _failures_within(failures, within)),
+            None if up is None else Way(up[0] or None, up[1], float(up[0]), _failures_within(*up)),
         )
 
     def estimate(self, start: Start, known: Mapping[str, float]) -> float | None:

@@ -61,7 +61,7 @@ class Lognormal(Normal):
 
     def grid(self, low: float, high: float, points: int) -> tuple[float, ...]:
         """Evenly in proportion: one distance of the hypotheses beyond each of them, as for their logarithms."""
-        ends = math.log(low), math.log(high)
+        ends = math.log(max(low, 1.0 / LARGEST_REAL)), math.log(min(high, LARGEST_REAL))
         return tuple(math.exp(value) for value in super().grid(*ends, points) if abs(value) <= math.log(LARGEST_REAL))
 
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:

@@ -23,6 +23,7 @@ from service.sequential import deviance, fixed_sample, likelihood
 from service.sequential.approximations import Motion
 from service.sequential.deviance import Deviance
 from service.sequential.double import FloatArray
+from service.sequential.errors import OutOfRange
 from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
@@ -34,6 +35,9 @@ from service.sequential.inference.ordering import Outcome
 from service.sequential.likelihood import LikelihoodRatio
 from service.sequential.mixture import NormalMixture
 from service.sequential.region import REALS, Region, Span, StraightRegion
+
+# A prior narrower or wider than these, in standard deviations, leaves no digits of the evidence.
+SMALLEST_RATIO, LARGEST_RATIO = 1e-6, 1e6
 
 
 class Normal(Family):
@@ -60,6 +64,10 @@ class Normal(Family):
 
     def mixture(self, edge: float, direction: int, known: Mapping[str, float], prior: Mapping[str, float]) -> Evidence:
         """See `Family`."""
+        ratio = prior["tau"] / known["sigma"]
+        if not SMALLEST_RATIO <= ratio <= LARGEST_RATIO:
+            rule = f"must be from {SMALLEST_RATIO:g} to {LARGEST_RATIO:g} times the standard deviation"
+            raise OutOfRange("known/prior/tau", rule, ratio)
         return NormalMixture(edge, direction, known["sigma"], prior["tau"])
 
     def exact(

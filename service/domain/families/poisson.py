@@ -88,10 +88,10 @@ class Poisson(Family):
     def ways(self, region: Region, start: Start, known: Mapping[str, float]) -> tuple[Way | None, Way | None]:
         """See `Family`."""
         time = time_to_lower(region, start.progress, start.total)
-        count, within = jump_to_upper(region, start.progress, start.total)
+        up = jump_to_upper(region, start.progress, start.total)
         return (
             None if time is None else Way(1, time, 0.0, f"an exposure of {time:.6g} without a count"),
-            Way(1, within, float(count), _counts_within(count, within)),
+            None if up is None else Way(1, up[1], float(up[0]), _counts_within(*up)),
         )
 
     def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:

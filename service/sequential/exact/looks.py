@@ -6,7 +6,7 @@ Method: the density of the totals that go on is carried from look to look at Gau
 of that look, or as far as the totals are likely to come. It is carried under one drift; the likelihood ratio gives the
 figures under the others near it, whose sums have positive terms only.
 Accuracy: the difference to a computation with fewer points, reported as the error bound.
-Cost: points squared for each look, once for each group of drifts.
+Cost: the points times those within a step of each, for each look and each group of drifts.
 Source: Armitage, McPherson and Rowe (1969), Journal of the Royal Statistical Society A 132, 235-244 (the recursion).
 """
 
@@ -30,10 +30,12 @@ FURTHEST = 37.0
 REACH = 16.0
 # Without a last look as many are supposed; nearly all is over by then.
 OPEN_LOOKS = 100
-MOST_POINTS, MOST_WORK = 2_500, 1_500_000_000
+MOST_POINTS, MOST_WORK = 2_500, 600_000_000
 # One exponential and one multiplication for each pair of points.
 PAIR_WORK = 4
 BLOCK = 256
+# Points that take a step together.
+AT_ONCE = 64
 # Numbers of points rise by this share, for finding the points of a new number costs more than using a few more.
 RISE = 1.06
 
@@ -74,10 +76,13 @@ def characteristics_by_looks(
     drifts = means / sigma
     looks = None if region.wall is None else looks_to_wall(region.wall, 1.0, progress)
     groups = _groups(drifts, looks)
-    fine, coarse = (
-        _joined([_followed(region, drifts[group], sigma, (progress, total), fineness) for group in groups], groups)
-        for fineness in (1.2, 1.0)
-    )
+    parts: dict[float, list[_Ends]] = {fineness: [] for fineness in (1.2, 1.0)}
+    left = MOST_WORK
+    for fineness, found in parts.items():
+        for group in groups:
+            found.append(_followed(region, drifts[group], sigma, (progress, total), fineness, left))
+            left -= found[-1].work
+    fine, coarse = (_joined(found, groups) for found in parts.values())
     mean, second = _moments(fine.survival)
     bound = float(np.max(np.abs(fine.below - coarse.below))) + float(np.max(np.abs(fine.above - coarse.above)))
     bound += float(np.max(np.abs(mean / _moments(coarse.survival)[0] - 1.0))) + 1e-13
@@ -128,8 +133,10 @@ def _looks(region: Region, sigma: float, start: tuple[float, float]) -> Iterator
         begin += len(looks)
 
 
-def _followed(region: Region, drifts: FloatArray, sigma: float, start: tuple[float, float], fineness: float) -> _Ends:
-    """One group of drifts to the end."""
+def _followed(  # noqa: PLR0913 - what is followed, from where, how finely, and what it may cost
+    region: Region, drifts: FloatArray, sigma: float, start: tuple[float, float], fineness: float, most: int
+) -> _Ends:
+    """One group of drifts to the end, with at most so many multiplications."""
     base = 0.5 * float(drifts.min() + drifts.max())
     zero = np.zeros(len(drifts))
     below, between, above = zero, zero, zero
@@ -149,12 +156,23 @@ def _followed(region: Region, drifts: FloatArray, sigma: float, start: tuple[flo
             break
         survival.append(rest)
         nodes, weights = _nodes(look, drifts, k + 1, fineness)
-        work += PAIR_WORK * len(x) * len(nodes)
-        if work > MOST_WORK:
+        mass, pairs = _stepped(x, mass, nodes, base, FAR + float(np.max(np.abs(drifts - base))))
+        mass, x, work = mass * weights, nodes, work + PAIR_WORK * pairs
+        if work > most:
             raise TooMuchWork(MOST_WORK, "multiplications")
-        mass = mass @ density(np.clip(nodes - x[:, np.newaxis] - base, -FURTHEST, FURTHEST)) * weights
-        x = nodes
     return _Ends(below, between, above, np.array(survival).reshape(-1, len(drifts)), work)
+
+
+def _stepped(x: FloatArray, mass: FloatArray, nodes: FloatArray, drift: float, reach: float) -> tuple[FloatArray, int]:
+    """The density at the nodes one step after these points; steps of more than `reach` from the drift are left out."""
+    moved, pairs = np.empty_like(nodes), 0
+    for begin in range(0, len(nodes), AT_ONCE):
+        some = nodes[begin : begin + AT_ONCE]
+        near = slice(*np.searchsorted(x, (some[0] - drift - reach, some[-1] - drift + reach)))
+        distance = np.clip(some - x[near, np.newaxis] - drift, -FURTHEST, FURTHEST)
+        moved[begin : begin + AT_ONCE] = mass[near] @ density(distance)
+        pairs += distance.size
+    return moved, pairs
 
 
 def _nodes(look: _Look, drifts: FloatArray, k: int, fineness: float) -> tuple[FloatArray, FloatArray]:

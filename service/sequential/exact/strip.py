@@ -13,6 +13,7 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
+from scipy.special import roots_legendre
 
 from service.sequential.double import FloatArray
 
@@ -51,5 +52,5 @@ def density(z: FloatArray) -> FloatArray:
 
 @lru_cache(maxsize=256)
 def _legendre(nodes: int) -> tuple[FloatArray, FloatArray]:
-    x, weights = np.polynomial.legendre.leggauss(nodes)
+    x, weights = roots_legendre(nodes)
     return x, weights
