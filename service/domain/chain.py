@@ -94,7 +94,7 @@ def link_of(previous: str, entry: Entry) -> str:
         shown(entry.at),
         entry.actor,
         entry.request_id,
-        _plain(entry.details),
+        entry.details,
     )
     return hashlib.sha256(json_of([previous, *parts]).encode()).hexdigest()
 
@@ -107,12 +107,3 @@ def shown(moment: datetime) -> str:
 def json_of(content: object) -> str:
     """The one JSON text of this content."""
     return json.dumps(content, sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
-
-
-def _plain(value: Any) -> Any:  # noqa: ANN401 - JSON is anything
-    """A negative zero is a zero, for not every database keeps its sign."""
-    if isinstance(value, Mapping):
-        return {name: _plain(member) for name, member in value.items()}
-    if isinstance(value, list | tuple):
-        return [_plain(member) for member in value]
-    return value + 0.0 if isinstance(value, float) else value

@@ -12,7 +12,7 @@ from service.domain.correcting import Correction
 from service.domain.disposing import Disposition
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest, Submission
-from service.domain.state import State
+from service.domain.state import State, Sum
 
 
 def registered(test: SequentialTest, plan: Plan, request_id: str | None) -> Entry:
@@ -143,15 +143,15 @@ def bound_submission(head: Head, submission: Submission) -> Submission:
 
 
 def facts_of(state: State) -> Mapping[str, Any]:
-    """A state as JSON, to the last bit."""
+    """A state as JSON, to the last bit, but for the sign of a zero, which not every database keeps."""
     decided = state.decided
     return {
         "sequence": state.sequence,
         "sample_number": state.sample_number,
-        "exposure": [state.exposure.high, state.exposure.low],
-        "total": [state.total.high, state.total.low],
-        "carried": [[number.high, number.low] for number in state.carried],
-        "log_likelihood_ratio": state.log_likelihood_ratio,
+        "exposure": _pair(state.exposure),
+        "total": _pair(state.total),
+        "carried": [_pair(number) for number in state.carried],
+        "log_likelihood_ratio": state.log_likelihood_ratio + 0.0,
         "decision": state.decision.value,
         "decided": None
         if decided is None
@@ -165,3 +165,7 @@ def facts_of(state: State) -> Mapping[str, Any]:
         "overrun": state.overrun,
         "voided": state.voided,
     }
+
+
+def _pair(number: Sum) -> list[float]:
+    return [number.high + 0.0, number.low + 0.0]

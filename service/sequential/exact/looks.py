@@ -32,7 +32,7 @@ REACH = 16.0
 OPEN_LOOKS = 100
 MOST_POINTS, MOST_WORK = 2_500, 600_000_000
 # One exponential and one multiplication for each pair of points.
-PAIR_WORK = 4
+PAIR_WORK = 2
 BLOCK = 256
 # Points that take a step together.
 AT_ONCE = 64
