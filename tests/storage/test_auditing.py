@@ -184,7 +184,7 @@ CHANGES = [
     ("api_keys", "UPDATE api_keys SET revoked_at = NULL WHERE name = 'one'", "service, act 9"),
     ("api_keys", "UPDATE api_keys SET revoked_at = created_at WHERE name = 'two'", "api_keys: 2 are revoked"),
     ("api_keys", "DELETE FROM api_keys WHERE name = 'two'", "service, act 8"),
-    ("api_keys", "INSERT INTO api_keys SELECT 'x', 'x', role, 'x', created_at, NULL, NULL FROM api_keys WHERE name = 'two'", "api_keys: 3 rows"),
+    ("api_keys", "INSERT INTO api_keys SELECT 'x', 'x', role, 'x', created_at, NULL, NULL, NULL, NULL FROM api_keys WHERE name = 'two'", "api_keys: 3 rows"),
 ]  # fmt: skip
 
 

@@ -81,8 +81,9 @@ class _Resolution:
     sharp: int
 
 
-# The two computations that are compared.
-FINE, COARSE = _Resolution(points=16, sharp=14), _Resolution(points=12, sharp=12)
+# Computations from coarse to fine; each is compared with the one before, until two are this close.
+RESOLUTIONS = tuple(_Resolution(*numbers) for numbers in ((12, 12), (16, 14), (24, 20), (36, 28)))
+CLOSE = 1e-9
 
 
 @dataclass(frozen=True)
@@ -156,8 +157,12 @@ def _compared(walk: _Walk) -> tuple[_Row, float]:
     if simple is not None:
         return simple, 4.0 * NEGLIGIBLE
     near = _Walk(walk.low, min(walk.high, walk.start + _rise(walk.fall)), walk.fall, walk.start, walk.last)
-    fine, coarse = _figures(near, FINE), _figures(near, COARSE)
-    error = abs(fine.below - coarse.below) + abs(fine.above - coarse.above) + abs(fine.mean / coarse.mean - 1.0)
+    fine, error = _figures(near, RESOLUTIONS[0]), math.inf
+    for resolution in RESOLUTIONS[1:]:
+        if error <= CLOSE:
+            break
+        coarse, fine = fine, _figures(near, resolution)
+        error = abs(fine.below - coarse.below) + abs(fine.above - coarse.above) + abs(fine.mean / coarse.mean - 1.0)
     return fine, error + 1e-13 * max(1.0, 0.01 * fine.mean)
 
 
@@ -209,7 +214,7 @@ def _figures(walk: _Walk, resolution: _Resolution) -> _Row:
     solved = lu_solve(lu, np.stack([down, up, np.ones_like(down)], axis=1), check_finite=False)
     lasting = solved[:, 2]
     squared = lu_solve(lu, 1.0 + 2.0 * (onward @ lasting), check_finite=False)
-    quantiles, steps = _quantiles(kernel) if resolution == FINE else ([], 0)
+    quantiles, steps = _quantiles(kernel) if resolution is not RESOLUTIONS[0] else ([], 0)
     return _Row(
         below=down_now + float(begin @ solved[:, 0]),
         above=up_now + float(begin @ solved[:, 1]),
