@@ -205,7 +205,8 @@ def _faults_of_composite(family: Family, statistic: Statistic, content: Content)
         faults.append(Fault("/beta", rule))
     if is_apart and "direction" in content:
         faults.append(Fault("/direction", "is said by h1 already; leave it out"))
-    if statistic.name == "mixture" and "failures" in (content.get("truncation") or {}):
+    has_cap = "failures" in (content.get("truncation") or {})
+    if statistic.name == "mixture" and has_cap and not is_two_sided(content):
         rule = "means nothing for a mixture plan: it accepts by the exposure and rejects by its evidence alone"
         faults.append(Fault("/truncation/failures", rule))
     if content.get("truncation") is None and not accepts_early(content) and not _may_go_on_for_ever(content):

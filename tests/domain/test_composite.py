@@ -252,3 +252,38 @@ def test_what_cannot_be_right_is_named(plan: dict[str, Any], pointer: str) -> No
     with pytest.raises(InvalidPlan) as refused:
         checked_content(plan)
     assert pointer in [fault.pointer for fault in refused.value.faults]
+
+
+def test_a_mixture_is_not_ended_by_a_number_of_failures() -> None:
+    """It would reject whatever the evidence: with one failure allowed, in 86 of a hundred good lots."""
+    plan = {"family": "exponential", "h0": 1.0, "alpha": 0.05, "statistic": "mixture", "direction": "below"}
+    known = {"prior": {"shape": 1.0, "rate": 1.0}}
+    with pytest.raises(InvalidPlan) as refused:
+        checked_content({**plan, "known": known, "truncation": {"exposure": 2.0, "failures": 1}})
+    assert [fault.pointer for fault in refused.value.faults] == ["/truncation/failures"]
+
+
+@pytest.mark.parametrize(
+    ("family", "known", "pointer"),
+    [
+        ("bernoulli", {"prior": {"a": 3e14, "b": 7e14}}, "/known/prior/a"),
+        ("normal", {"sigma": 1e-100, "prior": {"tau": 1e100}}, "/known/prior/tau"),
+        ("poisson_ratio", {"exposure_ratio": 1e90, "prior": {"a": 1.0, "b": 1.0}}, "/h1"),
+    ],
+)
+def test_what_leaves_no_digits_is_refused(family: str, known: dict[str, Any], pointer: str) -> None:
+    with pytest.raises(InvalidPlan) as refused:
+        checked_content(
+            {"family": family, "h0": 0.3, "alpha": 0.05, "statistic": "mixture", "sides": 2, "known": known}
+        )
+    assert pointer in [fault.pointer for fault in refused.value.faults]
+
+
+def test_failures_at_once_reject_below_in_life() -> None:
+    """Four failures before any time has passed: there is no estimate, but the direction is plain."""
+    known = {"prior": {"shape": 1.0, "rate": 1.0}}
+    plan = {"family": "exponential", "h0": 1.0, "alpha": 0.05, "statistic": "mixture", "sides": 2, "known": known}
+    compiled = procedure(plan)
+    state = observe(compiled, State(), {"values": [0.0] * 4}, NOW)
+    assert state.decision is Decision.REJECT
+    assert direction_of_rejection(compiled, state) == "below"
