@@ -73,13 +73,11 @@ class CurvedRegion:
 
     def limits(self, progress: FloatArray) -> Limits:
         """See `Region`."""
-        below = self._is_below if self.below is Decision.REJECT or self._has_accept else None
-        above = self._is_above if self.above is Decision.REJECT or self._has_accept else None
-        lower, upper = self._limits(progress, below, above)
+        lower, upper = self._limits(progress, at_wall=False)
         if self.wall is not None:
             ended = self.wall.is_reached(progress)
             if np.any(ended):
-                lower[ended], upper[ended] = self._limits(progress[ended], self._ends_below, self._ends_above)
+                lower[ended], upper[ended] = self._limits(progress[ended], at_wall=True)
             if self.wall.cap is not None:
                 upper = np.minimum(upper, self.wall.cap)
         return Limits(lower, upper)
@@ -176,9 +174,7 @@ class CurvedRegion:
     def _tie(self, threshold: float) -> float:
         return TIE * max(1.0, abs(threshold)) if self.span.is_integer and np.isfinite(threshold) else 0.0
 
-    def _limits(
-        self, progress: FloatArray, is_below: Judgement | None, is_above: Judgement | None
-    ) -> tuple[FloatArray, FloatArray]:
+    def _limits(self, progress: FloatArray, *, at_wall: bool) -> tuple[FloatArray, FloatArray]:
         """The largest total below and the smallest above at each progress, infinite where there is none."""
         lower, upper = np.full_like(progress, -np.inf), np.full_like(progress, np.inf)
         begun = np.flatnonzero(progress > 0.0)
@@ -186,15 +182,15 @@ class CurvedRegion:
             return lower, upper
         at = progress[begun]
         if not self.span.is_integer:
-            ends = is_below == self._ends_below
-            lower[begun], upper[begun] = (self._crossing(at, side, at_wall=ends) for side in (BELOW, ABOVE))
+            lower[begun], upper[begun] = (self._crossing(at, side, at_wall=at_wall) for side in (BELOW, ABOVE))
             return lower, upper
         # For single points the search is quicker than a table.
         is_tabulated = FEWEST_PROGRESS <= len(at) <= MOST_PROGRESS
         table = _table(self.evidence, self.span, at.tobytes()) if is_tabulated else None
-        if is_below is not None:
+        is_below, is_above = (self._ends_below, self._ends_above) if at_wall else (self._is_below, self._is_above)
+        if at_wall or self.below is Decision.REJECT or self._has_accept:
             lower[begun], _ = self._change(at, table, is_below, turned=True)
-        if is_above is not None:
+        if at_wall or self.above is Decision.REJECT or self._has_accept:
             _, upper[begun] = self._change(at, table, is_above, turned=False)
         return lower, upper
 

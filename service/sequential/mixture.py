@@ -12,12 +12,13 @@ Source: Ville (1939) and Wald (1947), Sequential Analysis, section 4.1.4 (weight
 Mathematical Statistics 41, 1397-1409 (normal mixtures, power-one tests).
 """
 
+from abc import ABC, abstractmethod
 from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.special import betainc, betaincc, betaln, gammainc, gammaincc, gammaln, log_ndtr, xlogy
 
-from service.sequential.deviance import Bernoulli, Deviance, Poisson
+from service.sequential.deviance import Bernoulli, Deviance, Normal, Poisson
 from service.sequential.double import Double, FloatArray, two_product, two_sum
 
 # Shares smaller than this are computed in logarithms.
@@ -27,7 +28,7 @@ MOST_TERMS, SETTLED = 100_000, 1e-16
 
 
 @dataclass(frozen=True)
-class Mixture:
+class Mixture(ABC):
     """
     What the mixtures share. See `Evidence`.
 
@@ -58,9 +59,9 @@ class Mixture:
         """See `Evidence`."""
         return self.edge * progress
 
+    @abstractmethod
     def log(self, progress: Double, total: Double) -> FloatArray:
         """See `Evidence`."""
-        raise NotImplementedError
 
     def confidence(self, progress: Double, total: Double, alpha: float) -> tuple[FloatArray, FloatArray]:
         """
@@ -79,8 +80,9 @@ class Mixture:
         return deviance.at_distance(progress, total, np.maximum(at_edge - np.log(alpha), 0.0))
 
     @property
+    @abstractmethod
     def _deviance(self) -> Deviance:
-        raise NotImplementedError
+        """How far observations lie from a mean."""
 
 
 @dataclass(frozen=True)
@@ -89,6 +91,10 @@ class NormalMixture(Mixture):
 
     sigma: float
     tau: float
+
+    @property
+    def _deviance(self) -> Deviance:
+        return Normal(self.sigma)
 
     def confidence(self, progress: Double, total: Double, alpha: float) -> tuple[FloatArray, FloatArray]:
         """See `Mixture`; the prior lies around each mean in turn, so that the width depends on progress alone."""

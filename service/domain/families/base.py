@@ -312,7 +312,7 @@ class Family(ABC):
         Raises:
             TooMuchWork: The test may go on for too long.
         """
-        raise NotImplementedError
+        raise TypeError(f"{self.name} has no inference")
 
     @property
     def has_stepwise_risks(self) -> bool:
