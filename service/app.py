@@ -14,11 +14,6 @@ from starlette.middleware.cors import CORSMiddleware
 from service.api import problems
 from service.api.access import AccessGuard
 from service.api.description import describe
-from service.api.hardening import CORS_ASKED, CORS_METHODS, CORS_SHOWN
-from service.api.metrics import Metrics
-from service.api.parts import Computers, Parts
-from service.api.rates import Rates
-from service.api.requests import RequestId, accounts
 from service.api.routes import (
     acts,
     administration,
@@ -34,8 +29,6 @@ from service.api.routes import (
     subjects,
     tests,
 )
-from service.api.simulations import Simulations
-from service.api.streams import Streams
 from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
 from service.logs import set_up_log
@@ -44,6 +37,13 @@ from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
 from service.storage.reader import Reader
 from service.storage.watching import Watcher
+from service.web.hardening import CORS_ASKED, CORS_METHODS, CORS_SHOWN
+from service.web.metrics import Metrics
+from service.web.parts import Computers, Parts
+from service.web.rates import Rates
+from service.web.requests import RequestId, accounts
+from service.web.simulations import Simulations
+from service.web.streams import Streams
 
 # Exact computations that run at once; more wait.
 COMPUTERS, MOST_WAITING = 2, 8
@@ -145,7 +145,9 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
             allow_headers=CORS_ASKED,
             expose_headers=CORS_SHOWN,
         )
-    app.add_middleware(RequestId, account=accounts(figures, writes_lines=settings.access_log))
+    app.add_middleware(
+        RequestId, failed=problems.internal_error, account=accounts(figures, writes_lines=settings.access_log)
+    )
     for module in (
         plans,
         characteristics,

@@ -254,6 +254,12 @@ def pointer_to(location: Sequence[str | int]) -> str:
     return "".join("/" + str(part).replace("~", "~0").replace("/", "~1") for part in location)
 
 
+def internal_error(request_id: str) -> JSONResponse:
+    """What is said of an unexpected error."""
+    detail = f"The log of the service has the reason, under the request id {request_id}."
+    return response("internal-error", detail)
+
+
 def install(app: FastAPI) -> None:
     """Have every refusal answered by a problem document."""
     app.add_exception_handler(DomainError, _on_domain_error)

@@ -10,7 +10,7 @@ from pathlib import Path
 import httpx
 from sqlalchemy.engine import URL
 
-from service.api.metrics import Metrics
+from service.web.metrics import Metrics
 from tests.api.examples import SEAL, Namer, with_test
 from tests.postgres import fresh_database
 from tests.running import Running, running

@@ -6,8 +6,8 @@ from fastapi import APIRouter, Response
 
 from service.api.access import requires_metrics
 from service.api.description import answers_with
-from service.api.metrics import MEDIA_TYPE
-from service.api.parts import PartsOf, reading
+from service.web.metrics import MEDIA_TYPE
+from service.web.parts import PartsOf, reading
 
 router = APIRouter(tags=["health"])
 

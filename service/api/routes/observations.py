@@ -16,10 +16,7 @@ from service.api.access import requires
 from service.api.bodies import StrictRequest, StrictRoute
 from service.api.conditional import etag, expected_versions, not_modified
 from service.api.description import answers_with
-from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, number_after
-from service.api.parts import Parts, PartsOf, reading
-from service.api.requests import request_id_of
 from service.api.schemas.observations import (
     LoggedOut,
     LogOut,
@@ -36,6 +33,9 @@ from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import Posted, PostObservations
+from service.web.lookup import known_test
+from service.web.parts import Parts, PartsOf, reading
+from service.web.requests import request_id_of
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["observations"], route_class=StrictRoute)
 

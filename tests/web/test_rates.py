@@ -3,7 +3,7 @@
 from hypothesis import given
 from hypothesis import strategies as st
 
-from service.api.rates import Rates
+from service.web.rates import Rates
 from tests.running import Running
 
 

@@ -16,11 +16,10 @@ from functools import partial
 from starlette.responses import StreamingResponse
 from starlette.types import Message, Receive, Scope, Send
 
-from service.api.parts import Parts, looking_up, reading
-from service.api.schemas.events import TestEventOut
 from service.domain.access import AccessKey
 from service.domain.errors import DatabaseAway, ShuttingDown, TooManyStreams
 from service.storage.reader import Change, Reader, TestFilters
+from service.web.parts import Parts, looking_up, reading
 
 # A caller who takes nothing for so long has gone.
 PATIENCE_SECONDS = 60.0
@@ -101,12 +100,17 @@ async def _within_patience(send: Callable[[Message], Awaitable[None]], message: 
 
 @dataclass
 class Stream:
-    """One caller's stream: what is asked for, and the number of the last change told or passed over."""
+    """
+    One caller's stream: what is asked for, and the number of the last change told or passed over.
+
+    `event` is what is told of a change, in the format of the stream.
+    """
 
     parts: Parts
     access_key: AccessKey
     filters: TestFilters
     position: int
+    event: Callable[[Change], str]
     _seen_alive: float = field(default_factory=time.monotonic)
 
     async def told(self) -> AsyncIterator[str]:
@@ -117,7 +121,7 @@ class Stream:
             word = streams.word
             changes, is_all = await self._next()
             if changes:
-                yield "".join(map(_event, changes))
+                yield "".join(map(self.event, changes))
             if self._is_time():
                 if not await self._is_allowed():
                     return
@@ -167,7 +171,3 @@ def _changes(reader: Reader, filters: TestFilters, after: int) -> tuple[list[Cha
     changes = reader.changes(filters, after, PAGE)
     last = changes[-1].number if changes else after
     return (changes, last, False) if len(changes) == PAGE else (changes, max(newest, last), True)
-
-
-def _event(change: Change) -> str:
-    return f"id: {change.number}\nevent: test\ndata: {TestEventOut.model_validate(change).model_dump_json()}\n\n"

@@ -9,16 +9,16 @@ from typing import TYPE_CHECKING, Annotated, TypeVar, cast
 from fastapi import Depends, Request
 from starlette.types import Scope
 
-from service.api.metrics import Metrics
 from service.domain.access import AccessKey
 from service.domain.errors import TooManyQuestions
 from service.ingest.road import Clock, Road
 from service.settings import Settings
 from service.storage.reader import Reader
+from service.web.metrics import Metrics
 
 if TYPE_CHECKING:
-    from service.api.simulations import Simulations
-    from service.api.streams import Streams
+    from service.web.simulations import Simulations
+    from service.web.streams import Streams
 
 T = TypeVar("T")
 

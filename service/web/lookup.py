@@ -1,12 +1,9 @@
 """Reads that several routes share."""
 
-from fastapi import Request, Response
-
-from service.api.conditional import etag, not_modified
-from service.api.parts import Parts, looking_up
 from service.domain.errors import UnknownPlan, UnknownTest
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest
+from service.web.parts import Parts, looking_up
 
 
 async def known_test(parts: Parts, key: str) -> tuple[SequentialTest, Plan]:
@@ -17,14 +14,6 @@ async def known_test(parts: Parts, key: str) -> tuple[SequentialTest, Plan]:
         UnknownTest: There is none of this key.
     """
     return await looking_up(parts, lambda: _test_with_plan(parts, key))
-
-
-async def unchanged_test(parts: Parts, key: str, request: Request) -> Response | None:
-    """The 304 answer where the caller has this version of the test already, from one look-up; else None."""
-    if "if-none-match" not in request.headers:
-        return None
-    version = await looking_up(parts, lambda: parts.reader.version(key))
-    return None if version is None else not_modified(request, etag(version))
 
 
 async def known_plan(parts: Parts, name: str) -> Plan:

@@ -14,10 +14,10 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from enum import StrEnum
 
-from service.api.parts import Computers
 from service.domain.characteristics import Promise
 from service.domain.errors import DomainError, TooManyQuestions, UnknownSimulation
 from service.domain.simulating import Progress, Question, simulated_promise
+from service.web.parts import Computers
 
 log = logging.getLogger(__name__)
 

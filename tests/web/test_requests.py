@@ -8,7 +8,8 @@ import pytest
 from starlette.requests import ClientDisconnect
 from starlette.types import Message, Receive, Scope, Send
 
-from service.api.requests import RequestId
+from service.api.problems import internal_error
+from service.web.requests import RequestId
 
 
 def answered(error: Exception, *, has_started: bool = False) -> list[Message]:
@@ -26,7 +27,7 @@ def answered(error: Exception, *, has_started: bool = False) -> list[Message]:
     async def send(message: Message) -> None:
         sent.append(message)
 
-    asyncio.run(RequestId(failing)({"type": "http"}, receive, send))
+    asyncio.run(RequestId(failing, internal_error)({"type": "http"}, receive, send))
     return sent
 
 

@@ -13,13 +13,13 @@ from dataclasses import asdict, dataclass
 from typing import cast
 
 from starlette.requests import ClientDisconnect, Request
+from starlette.responses import Response
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
-from service.api.hardening import hardened
-from service.api.metrics import Metrics
-from service.api.problems import response
 from service.domain.access import AccessKey
 from service.logs import REQUEST_ID
+from service.web.hardening import hardened
+from service.web.metrics import Metrics
 
 logger = logging.getLogger(__name__)
 access = logging.getLogger("service.access")
@@ -39,6 +39,8 @@ class Answered:
 
 
 Account = Callable[[Answered], None]
+# The answer to an unexpected error, from the id of its request.
+Failed = Callable[[str], Response]
 
 
 def accounts(metrics: Metrics, *, writes_lines: bool) -> Account:
@@ -68,8 +70,9 @@ def request_id_of(request: Request) -> str:
 class RequestId:
     """Adds `X-Request-Id` to every answer, and answers what nothing else did."""
 
-    def __init__(self, app: ASGIApp, account: Account | None = None) -> None:
+    def __init__(self, app: ASGIApp, failed: Failed, account: Account | None = None) -> None:
         self._app = app
+        self._failed = failed
         self._account = account
 
     async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
@@ -97,8 +100,7 @@ class RequestId:
             if has_started:
                 raise  # half an answer can only be broken off, which is the server's part
             logger.exception("request %s failed", request_id)
-            detail = f"The log of the service has the reason, under the request id {request_id}."
-            await response("internal-error", detail)(scope, receive, send_with_id)
+            await self._failed(request_id)(scope, receive, send_with_id)
         finally:
             if self._account is not None:
                 self._account(_answered(scope, status, time.perf_counter() - begin))
