@@ -10,6 +10,7 @@ from types import FrameType
 
 from fastapi import FastAPI
 from starlette.middleware.cors import CORSMiddleware
+from starlette.staticfiles import StaticFiles
 
 from service.api import problems
 from service.api.access import AccessGuard
@@ -32,6 +33,9 @@ from service.api.routes import (
 from service.api.unchanged import UnchangedTests
 from service.ingest.road import Clock, Road, utc_now
 from service.logs import set_up_log
+from service.pages.rendering import STATIC
+from service.pages.routes import live, one_test, signing
+from service.pages.routes import tests as all_tests
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
@@ -97,7 +101,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     Raises:
         SchemaMismatch: At start, when the database has another schema than this version knows.
     """
-    figures = Metrics()
+    figures, rates = Metrics(), Rates(settings.rate_limit, settings.rate_burst)
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
@@ -109,7 +113,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
         simulating = Simulations(computers)
         reader, check = Reader(engine), lambda: check_schema(engine)
-        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures)
+        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures, rates)
         road.start()
         watcher.start()
         try:
@@ -136,7 +140,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     )
     problems.install(app)
     app.add_middleware(UnchangedTests)
-    app.add_middleware(AccessGuard, rates=Rates(settings.rate_limit, settings.rate_burst))
+    app.add_middleware(AccessGuard, rates=rates)
     if settings.origins:
         app.add_middleware(
             CORSMiddleware,
@@ -165,5 +169,8 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
+    for pages in (signing, all_tests, one_test, live):
+        app.include_router(pages.router)
+    app.mount("/static", StaticFiles(directory=STATIC), name="static")
     app.openapi = describe(app)  # type: ignore[method-assign]
     return app

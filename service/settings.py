@@ -31,6 +31,7 @@ class Settings(BaseSettings):
     rate_limit: float = Field(0.0, ge=0.0, le=1e6, description="Requests a second of one key; 0 for any number.")
     rate_burst: int = Field(100, ge=1, le=10**6, description="Requests of one key at once, before the rate counts.")
     cors_origins: str = Field("", description="Origins, with commas between, whose pages may ask.")
+    session_hours: float = Field(10.0, gt=0.0, le=168.0, description="How long somebody stays signed in on the pages.")
     heartbeat_seconds: float = Field(15.0, ge=1.0, le=30.0, description="Between signs of life on a quiet stream.")
     log_format: Literal["plain", "json"] = Field("plain", description="Form of the log.")
     access_log: bool = Field(default=True, description="One line for each request.")

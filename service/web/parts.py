@@ -15,6 +15,7 @@ from service.ingest.road import Clock, Road
 from service.settings import Settings
 from service.storage.reader import Reader
 from service.web.metrics import Metrics
+from service.web.rates import Rates
 
 if TYPE_CHECKING:
     from service.web.simulations import Simulations
@@ -36,6 +37,7 @@ class Parts:
     streams: "Streams"
     simulations: "Simulations"
     metrics: Metrics
+    rates: Rates
 
 
 def parts_for(scope: Scope) -> Parts:

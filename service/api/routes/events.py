@@ -10,10 +10,10 @@ from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.description import answers_with
 from service.api.filters import FiltersQuery
-from service.api.schemas.common import Name
 from service.api.schemas.events import EXAMPLE, TestEventOut
 from service.domain.access import AccessKey, Role
 from service.storage.reader import Change, TestFilters
+from service.web.fields import Name
 from service.web.parts import PartsOf, reading
 from service.web.streams import EventStream, Stream
 

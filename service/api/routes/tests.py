@@ -12,7 +12,6 @@ from service.api.description import answers_with
 from service.api.filters import FiltersQuery
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
 from service.api.schemas.assumptions import AssumptionsOut
-from service.api.schemas.common import Moment
 from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.api.unchanged import unchanged_test
@@ -25,6 +24,7 @@ from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import RegisteredTest, RegisterTest
 from service.storage.reader import TestFilters
+from service.web.fields import Moment
 from service.web.lookup import known_test
 from service.web.parts import Parts, PartsOf, computing, reading
 from service.web.requests import request_id_of

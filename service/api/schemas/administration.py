@@ -5,9 +5,10 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Moment, Name, Text, shown_as
+from service.api.schemas.common import Answer, Form, shown_as
 from service.api.schemas.tests import SubjectForm, SubjectOut
 from service.domain.access import AccessKey, Limits, Role, limits_of
+from service.web.fields import Moment, Name, Text
 
 EXAMPLE: dict[str, Any] = {
     "name": "line-2-tester",

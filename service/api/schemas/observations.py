@@ -7,7 +7,7 @@ from typing import Annotated, Any, Literal, Self
 
 from pydantic import ConfigDict, FailFast, Field, StrictBool, StringConstraints, model_validator
 
-from service.api.schemas.common import Answer, Form, Moment, Number, Text, optional, shown_as
+from service.api.schemas.common import Answer, Form, optional, shown_as
 from service.api.schemas.plans import CONTENT as PLAN
 from service.api.schemas.plans import PlanContentForm, ThresholdsOut
 from service.api.schemas.tests import ConfidenceOut, total_of
@@ -18,6 +18,7 @@ from service.domain.log import LoggedObservation, fields_of
 from service.domain.path import Path, RegionPoint, path_of, region_points
 from service.domain.procedure import Procedure
 from service.domain.state import State
+from service.web.fields import Moment, Number, Text
 
 EXAMPLES: list[dict[str, Any]] = [
     {"values": [0, 0, 1]},

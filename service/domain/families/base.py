@@ -133,6 +133,8 @@ class Family(ABC):
     Attributes:
         name: As a plan names it.
         parameter: What h0 and h1 are.
+        counted: What the total is, for people; `displayed` where it shows something else.
+        axis: What the region runs over, for people.
         value_field: The field of an observation that carries its result.
         optional: Fields that an observation may carry beside it, with the value taken where one is absent.
         required: Fields that an observation object must carry beside it.
@@ -158,6 +160,8 @@ class Family(ABC):
 
     name: ClassVar[str]
     parameter: ClassVar[str]
+    counted: ClassVar[str]
+    axis: ClassVar[str] = "units"
     value_field: ClassVar[str] = "value"
     optional: ClassVar[Mapping[str, float]] = {}
     required: ClassVar[tuple[str, ...]] = ()

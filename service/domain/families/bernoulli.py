@@ -53,6 +53,7 @@ class Bernoulli(Family):
 
     name: ClassVar[str] = "bernoulli"
     parameter: ClassVar[str] = "proportion nonconforming"
+    counted: ClassVar[str] = "nonconforming units"
     optional: ClassVar[Mapping[str, float]] = {"size": 1.0}
     span: ClassVar[Span] = PASS_FAIL
     prior: ClassVar[tuple[str, ...]] = ("a", "b")

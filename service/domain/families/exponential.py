@@ -58,6 +58,8 @@ class Exponential(Family):
 
     name: ClassVar[str] = "exponential"
     parameter: ClassVar[str] = "mean life"
+    counted: ClassVar[str] = "failures"
+    axis: ClassVar[str] = "unit-time"
     value_field: ClassVar[str] = "time"
     required: ClassVar[tuple[str, ...]] = ("failed",)
     in_values: ClassVar[Mapping[str, float]] = {"failed": 1.0}

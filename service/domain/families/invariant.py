@@ -61,6 +61,8 @@ class Invariant(Family):
         samples: 1, or 2 where t compares two.
     """
 
+    counted: ClassVar[str] = "Student's t"
+    axis: ClassVar[str] = "measurements"
     span: ClassVar[Span] = REALS
     is_invariant: ClassVar[bool] = True
     no_inference: ClassVar[str] = (

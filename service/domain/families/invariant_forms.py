@@ -73,6 +73,7 @@ class InvariantDifference(InvariantNormal):
 
     name: ClassVar[str] = "normal_difference"
     parameter: ClassVar[str] = "standardised mean of the differences b less a, (mean - reference)/sigma"
+    axis: ClassVar[str] = "pairs"
     value_field: ClassVar[str] = "a"
     required: ClassVar[tuple[str, ...]] = ("b",)
     noun: ClassVar[str] = "a pair whose b less a is a value"

@@ -44,6 +44,7 @@ class NegativeBinomial(Family):
 
     name: ClassVar[str] = "negative_binomial"
     parameter: ClassVar[str] = "mean count per unit"
+    counted: ClassVar[str] = "counts"
     known: ClassVar[tuple[str, ...]] = ("dispersion",)
     span: ClassVar[Span] = UNIT_COUNTS
 

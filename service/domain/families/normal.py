@@ -45,6 +45,7 @@ class Normal(Family):
 
     name: ClassVar[str] = "normal"
     parameter: ClassVar[str] = "mean"
+    counted: ClassVar[str] = "sum of the measurements"
     known: ClassVar[tuple[str, ...]] = ("sigma",)
     span: ClassVar[Span] = REALS
     prior: ClassVar[tuple[str, ...]] = ("tau",)

@@ -31,6 +31,8 @@ class NormalDifference(Normal):
 
     name: ClassVar[str] = "normal_difference"
     parameter: ClassVar[str] = "difference of the means, b less a"
+    counted: ClassVar[str] = "sum of the differences b less a"
+    axis: ClassVar[str] = "pairs"
     value_field: ClassVar[str] = "a"
     required: ClassVar[tuple[str, ...]] = ("b",)
     known: ClassVar[tuple[str, ...]] = ("sigma_a", "sigma_b")

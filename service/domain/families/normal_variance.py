@@ -34,6 +34,8 @@ class NormalVariance(Family):
 
     name: ClassVar[str] = "normal_variance"
     parameter: ClassVar[str] = "standard deviation"
+    counted: ClassVar[str] = "sum of squared deviations"
+    axis: ClassVar[str] = "measurements"
     known: ClassVar[tuple[str, ...]] = ("mean",)
     span: ClassVar[Span] = POSITIVE
     no_inference: ClassVar[str] = (

@@ -53,6 +53,8 @@ class Poisson(Family):
 
     name: ClassVar[str] = "poisson"
     parameter: ClassVar[str] = "rate per unit of exposure"
+    counted: ClassVar[str] = "counts"
+    axis: ClassVar[str] = "exposure"
     optional: ClassVar[Mapping[str, float]] = {"exposure": 1.0}
     span: ClassVar[Span] = COUNTS
     prior: ClassVar[tuple[str, ...]] = ("shape", "rate")

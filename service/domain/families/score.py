@@ -25,6 +25,8 @@ class Score(Family):
 
     name: ClassVar[str] = "score"
     parameter: ClassVar[str] = "none: the increments hold both hypotheses"
+    counted: ClassVar[str] = "sum of the increments"
+    axis: ClassVar[str] = "observations"
     span: ClassVar[Span] = REALS
     has_model: ClassVar[bool] = False
     no_inference: ClassVar[str] = (
