@@ -72,7 +72,10 @@ async def correct(request: Request, key: Key, session: SignedIn, parts: PartsOf,
     form, reason = _with_reason(form)
     if reason is None:
         return _correction_page(request, test, plan, sequence, form, status=422)
-    command = _correction_command(request, session, test, plan, sequence, form, reason)
+    try:
+        command = _correction_command(request, session, test, plan, sequence, form, reason)
+    except InvalidCorrection as error:
+        return _correction_page(request, test, plan, sequence, _told(form, error), status=422)
     if form["step"] != "do" or form["version"] != str(test.version):
         return await _looked_at(request, parts, test, plan, form, command)
     try:

@@ -15,7 +15,7 @@ from service.pages.charts.walk import walk_drawing
 from service.pages.rendering import page
 from service.pages.routing import page_router
 from service.pages.session import SignedIn
-from service.pages.views.one_test import expectation_of, facts_of, paths_of, promises_of
+from service.pages.views.one_test import expectation_of, facts_of, others_of, paths_of, promises_of
 from service.pages.views.picture import View, picture_of, views_of
 from service.pages.views.results import results_of
 from service.pages.views.saying import saying_of
@@ -54,6 +54,7 @@ async def show_test(
         drawing=markup(drawing),
         views=views,
         view=chosen,
+        others=await reading(lambda: others_of(parts.reader, test)),
         facts=facts_of(test, plan),
         promises=promises_of(plan),
         expectation=await computing(parts, lambda: expectation_of(test, plan)),

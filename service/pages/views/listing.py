@@ -92,7 +92,7 @@ def _row(test: SequentialTest, plan: Plan) -> Row:
 
 def _needed(test: SequentialTest, plan: Plan) -> str:
     """The shortest way to acceptance, or else to rejection."""
-    if test.state.is_decided:
+    if test.stage is not Stage.RUNNING:
         return ""
     ways = ways_of(procedure_of(plan), test.state)
     if ways.accept is not None:

@@ -6,13 +6,17 @@ from dataclasses import dataclass
 
 from service.domain.anytime import always_valid_p_value, confidence_at
 from service.domain.errors import ComputationTooLarge
+from service.domain.joint import Joint, joint_of
 from service.domain.outlook import Outlook, outlook_of
 from service.domain.path import Path, path_of
 from service.domain.plan import Plan, known_of, prior_of
 from service.domain.procedure import Procedure, procedure_of
-from service.domain.sequential_test import SequentialTest
+from service.domain.sequential_test import SequentialTest, Stage
 from service.pages.words import figure, percent, signed
-from service.storage.reader import Reader
+from service.storage.reader import Reader, TestFilters
+
+# Characteristics of one subject that are shown beside each other.
+MOST_OTHERS = 100
 
 Facts = tuple[tuple[str, str], ...]
 
@@ -25,10 +29,27 @@ class Expectation:
     reason: str | None
 
 
+@dataclass(frozen=True)
+class Others:
+    """All tests of one subject, this one included, and what they come to together."""
+
+    tests: tuple[SequentialTest, ...]
+    joint: Joint
+
+
 def paths_of(reader: Reader, test: SequentialTest, plan: Plan, points: int) -> Path:
     """The walk of a test out of its log, thinned."""
     bodies = reader.log.bodies(test, 0, test.state.sequence)
     return path_of(procedure_of(plan), ((first, json.loads(body)) for first, body in bodies), points)
+
+
+def others_of(reader: Reader, test: SequentialTest) -> Others | None:
+    """The tests of the same subject and their joint decision; None where this is the only one."""
+    found = reader.tests(TestFilters(kind=test.subject.kind, subject=test.subject.name), None, MOST_OTHERS)
+    if len(found) < 2:
+        return None
+    tests = [(each, plan) for each in found if (plan := reader.plan(each.plan)) is not None]
+    return Others(tuple(each for each, _ in tests), joint_of(tests))
 
 
 def facts_of(test: SequentialTest, plan: Plan) -> Facts:
@@ -87,7 +108,7 @@ def promises_of(plan: Plan) -> Facts:
 
 def expectation_of(test: SequentialTest, plan: Plan) -> Expectation:
     """The exact figures of the rest, or why there are none."""
-    if test.state.is_decided:
+    if test.stage is not Stage.RUNNING:
         return Expectation(None, None)
     try:
         outlook = outlook_of(plan.document, test.state)

@@ -11,7 +11,7 @@ from service.domain.outlook import ways_of
 from service.domain.path import Path, RegionPoint, region_points
 from service.domain.plan import Plan
 from service.domain.procedure import Procedure, procedure_of
-from service.domain.sequential_test import SequentialTest
+from service.domain.sequential_test import SequentialTest, Stage
 from service.domain.state import Decision
 from service.pages.charts.frame import Axis
 from service.pages.charts.walk import MARGIN, Curve, Limit, Reach, WalkPicture
@@ -117,7 +117,7 @@ def _pieces(points: Sequence[tuple[float, float | None]]) -> tuple[Curve, ...]:
 
 def _reaches(test: SequentialTest, procedure: Procedure, view: View) -> tuple[Reach, ...]:
     """The shortest ways that lead somewhere on the picture."""
-    if test.state.is_decided:
+    if test.stage is not Stage.RUNNING:
         return ()
     ways = ways_of(procedure, test.state)
     standing = standing_of(procedure, test.state)

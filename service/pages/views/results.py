@@ -6,6 +6,7 @@ from itertools import islice
 from typing import Any
 
 from service.domain.correcting import in_force
+from service.domain.errors import Fault, InvalidCorrection
 from service.domain.families import Family
 from service.domain.log import LoggedObservation, expanded
 from service.domain.plan import Plan
@@ -20,6 +21,8 @@ ROWS = 100
 FLAGS = frozenset({"failed"})
 YES, NO = "yes", "no"
 UNIT = "unit"
+# Whole numbers with fewer characters are exact.
+LONGEST_WHOLE = 17
 
 
 @dataclass(frozen=True)
@@ -82,25 +85,33 @@ def as_typed(observation: Mapping[str, Any] | None) -> Mapping[str, str]:
 
 
 def as_observation(family: Family, form: Typed) -> dict[str, Any]:
-    """What a form says of an observation; numbers that are none stay words, which the domain refuses."""
+    """
+    What a form says of an observation.
+
+    Raises:
+        InvalidCorrection: Something that must be a number is none.
+    """
     found: dict[str, Any] = {}
+    faults = []
     for name, choices in fields_to_type(family):
         text = form[name]
         if not text:
             continue
         found[name] = text == YES if name in FLAGS else text if choices else number_in(text)
-    if form[UNIT]:
-        found[UNIT] = form[UNIT]
-    return found
+        if found[name] is None:
+            faults.append(Fault(f"/observation/{name}", f"must be a number; received {text!r}"))
+    if faults:
+        raise InvalidCorrection(faults)
+    return {**found, UNIT: form[UNIT]} if form[UNIT] else found
 
 
-def number_in(text: str) -> float | int | str:
-    """The number that somebody typed, with a comma or a point; the text where it is none."""
+def number_in(text: str) -> float | int | None:
+    """The number that somebody typed, with a comma or a point; None where it is none."""
     plain = text.replace("−", "-").replace(",", ".").replace(" ", "")
     try:
-        return int(plain) if plain.lstrip("+-").isdigit() and len(plain) < 17 else float(plain)
+        return int(plain) if plain.lstrip("+-").isdigit() and len(plain) < LONGEST_WHOLE else float(plain)
     except ValueError:
-        return text
+        return None
 
 
 def _result(family: Family, logged: LoggedObservation) -> Result:
@@ -118,7 +129,6 @@ def _word(value: object, *, exactly: bool = False) -> str:
     if isinstance(value, bool):
         return YES if value else NO
     if isinstance(value, float | int):
-        return (
-            f"{value:g}" if exactly and float(f"{value:g}") == value else repr(value) if exactly else figure(value, 9)
-        )
+        short = f"{value:g}"
+        return figure(value, 9) if not exactly else short if float(short) == value else repr(value)
     return "" if value is None else str(value)

@@ -3,7 +3,6 @@
 import re
 from dataclasses import dataclass
 
-from service.domain.disposing import Disposition
 from service.domain.observing import direction_of_rejection
 from service.domain.outlook import Ways, ways_of
 from service.domain.plan import Plan
@@ -35,6 +34,8 @@ def saying_of(test: SequentialTest, plan: Plan) -> Saying:
     """What the page says first."""
     procedure, state = procedure_of(plan), test.state
     what = test.subject.kind.value
+    if test.disposition is not None:
+        return Saying(state.decision, f"{DONE[test.disposition.verdict].capitalize()}", _closed(test), _notes(test))
     if not state.is_decided:
         sentence = still_needed(ways_of(procedure, state), what)
         return Saying(state.decision, SAID[state.decision], sentence, _notes(test))
@@ -77,8 +78,8 @@ def _decided(procedure: Procedure, test: SequentialTest, verb: str) -> str:
 
 def _notes(test: SequentialTest) -> tuple[str, ...]:
     notes = []
-    if test.disposition is not None:
-        notes.append(disposed(test.disposition))
+    if test.disposition is not None and test.disposition.deviation_reason is not None:
+        notes.append(f"Not what the test decided, because: {test.disposition.deviation_reason}")
     if test.decision_changed:
         notes.append("A correction has changed the decision.")
     if test.corrected_after_decision:
@@ -88,7 +89,11 @@ def _notes(test: SequentialTest) -> tuple[str, ...]:
     return tuple(notes)
 
 
-def disposed(disposition: Disposition) -> str:
-    """What was done with the subject, and by whom."""
-    against = " This is not what the test decided." if disposition.deviates else ""
-    return f"It was {DONE[disposition.verdict]} by {disposition.by}.{against}"
+def _closed(test: SequentialTest) -> str:
+    """What was done with the subject, by whom and why, and what the test had decided."""
+    disposition, decision = test.disposition, test.state.decision
+    if disposition is None:  # not reached: the caller asks only of closed tests
+        raise ValueError(test.key)
+    by = f"The {test.subject.kind.value} was {DONE[disposition.verdict]} by {disposition.by}: {disposition.reason}"
+    decided = "The test had not decided." if decision is Decision.CONTINUE else f"The test had decided: {decision}."
+    return f"{by if by.endswith('.') else by + '.'} {decided}"
