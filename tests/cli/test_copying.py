@@ -112,7 +112,7 @@ def test_a_row_that_arrives_changed_undoes_the_copy(tmp_path: Path) -> None:
 
 
 def test_every_table_is_copied() -> None:
-    assert len(tables.metadata.sorted_tables) == 9
+    assert len(tables.metadata.sorted_tables) == 11
 
 
 def test_several_processes_serve_one_postgresql_database(server: URL, tmp_path: Path) -> None:
