@@ -10,6 +10,7 @@ shared between receivers; of an answer the status counts, and of its body little
 import asyncio
 import functools
 import ssl
+from collections.abc import Callable
 from contextlib import suppress
 from datetime import datetime
 
@@ -29,11 +30,28 @@ GONE = 410
 USER_AGENT = "sprt-monitor"
 
 
+@functools.cache
+def trusted() -> ssl.SSLContext:
+    """Certificates are checked against those that the machine trusts, or SSL_CERT_FILE; reading them takes a while."""
+    return ssl.create_default_context()
+
+
 class Courier:
     """Carries notices; safe to use for many at once."""
 
-    def __init__(self, allowed: Allowed, timeout_seconds: float, resolve: Resolve) -> None:
-        self._allowed, self._timeout_seconds, self._resolve = allowed, timeout_seconds, resolve
+    def __init__(
+        self, allowed: Allowed, timeout_seconds: float, resolve: Resolve, tls: Callable[[], ssl.SSLContext] = trusted
+    ) -> None:
+        """
+        Build it.
+
+        Args:
+            allowed: Where notices may go.
+            timeout_seconds: For one attempt, from the resolving of the name to the answer.
+            resolve: Tells the addresses of a name.
+            tls: How certificates are checked.
+        """
+        self._allowed, self._timeout_seconds, self._resolve, self._tls = allowed, timeout_seconds, resolve, tls
 
     async def carry(self, delivery: Delivery, now: datetime) -> Attempt:
         """Try once, within the time there is; whatever happens is an outcome."""
@@ -82,8 +100,9 @@ class Courier:
         timeout = httpx.Timeout(self._timeout_seconds, connect=self._timeout_seconds / 2)
         # A connection is never used twice: one to the same address may have been checked for another name.
         limits = httpx.Limits(max_keepalive_connections=0)
+        tls = await asyncio.to_thread(self._tls)
         async with (
-            httpx.AsyncClient(verify=_tls(), trust_env=False, follow_redirects=False, limits=limits) as client,
+            httpx.AsyncClient(verify=tls, trust_env=False, follow_redirects=False, limits=limits) as client,
             client.stream(
                 "POST",
                 url,
@@ -130,9 +149,3 @@ def _judged(status: int) -> Attempt:
 def _words(error: Exception) -> str:
     """What went wrong, short: the words of this machine's own libraries, for no connection means no words of others."""
     return (str(error) or type(error).__name__)[:200]
-
-
-@functools.cache
-def _tls() -> ssl.SSLContext:
-    """Certificates are checked against those that the machine trusts, or SSL_CERT_FILE; reading them takes a while."""
-    return ssl.create_default_context()
