@@ -6,6 +6,7 @@ import signal
 import threading
 from collections.abc import AsyncIterator, Callable, Iterator
 from contextlib import asynccontextmanager, contextmanager
+from datetime import timedelta
 from types import FrameType
 
 from fastapi import FastAPI
@@ -24,6 +25,7 @@ from service.api.routes import (
     history,
     inference,
     metrics,
+    notices,
     observations,
     plans,
     simulations,
@@ -31,8 +33,12 @@ from service.api.routes import (
     tests,
 )
 from service.api.unchanged import UnchangedTests
+from service.domain.notices import Schedule
 from service.ingest.road import Clock, Road, utc_now
 from service.logs import set_up_log
+from service.notices.courier import Courier
+from service.notices.resolving import Resolve, Resolver
+from service.notices.sender import Sender
 from service.pages.rendering import STATIC
 from service.pages.routes import acts as page_acts
 from service.pages.routes import live, one_test, signing
@@ -95,6 +101,19 @@ def at_a_signal_to_end(act: Callable[[], object]) -> Iterator[None]:
             signal.signal(number, handler)
 
 
+def sender_for(settings: Settings, road: Road, reader: Reader, resolve: Resolve, clock: Clock) -> Sender:
+    """The sender of notices as the settings want it."""
+    return Sender(
+        road,
+        reader.notices,
+        Courier(settings.notices_allowed, settings.notice_timeout_seconds, resolve),
+        clock,
+        Schedule(settings.notice_attempts, settings.notice_wait_seconds),
+        timeout_seconds=settings.notice_timeout_seconds,
+        keep=timedelta(days=settings.notice_keep_days),
+    )
+
+
 def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     """
     The service as an ASGI application; it opens its database when it starts.
@@ -108,15 +127,25 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
         engine = create_engine_for(settings.database_url)
         check_schema(engine)
-        computers = Computers(COMPUTERS, MOST_WAITING)
-        road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes, figures)
+        computers, resolver = Computers(COMPUTERS, MOST_WAITING), Resolver()
         streams, loop = Streams(settings.stream_limit, figures.streaming), asyncio.get_running_loop()
+        road = Road(
+            engine,
+            clock,
+            settings.queue_limit,
+            settings.group_limit,
+            settings.queue_bytes,
+            figures,
+            on_notices=lambda: loop.call_soon_threadsafe(sender.wake),
+        )
         watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
         simulating = Simulations(computers)
         reader, check = Reader(engine), lambda: check_schema(engine)
+        sender = sender_for(settings, road, reader, resolver, clock)
         app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures, rates)
         road.start()
         watcher.start()
+        sender.start()
         try:
             with at_a_signal_to_end(lambda: loop.call_soon_threadsafe(streams.stop)):
                 yield
@@ -124,6 +153,8 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
             streams.stop()
             simulating.stop()
             await asyncio.to_thread(watcher.stop)
+            await sender.stop()
+            resolver.stop()
             await road.stop()
             computers.stop()
             engine.dispose()
@@ -165,6 +196,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         subjects,
         events,
         administration,
+        notices,
         health,
         metrics,
     ):

@@ -41,6 +41,7 @@ from service.domain.history import (
     registered,
     test_registered,
 )
+from service.domain.notices import NoticeKind
 from service.domain.observing import observe
 from service.domain.plan import Plan, fingerprint_of, stated
 from service.domain.procedure import procedure_of
@@ -67,6 +68,16 @@ from service.ingest.commands import (
     Written,
 )
 from service.ingest.correcting import worked_out
+from service.ingest.noticing import (
+    create_receiver,
+    drop_notices,
+    remove_receiver,
+    send_again,
+    send_trial,
+    settle_notice,
+    take_notices,
+    tell,
+)
 from service.storage.writer import Writer
 
 SECRET_BYTES = 32
@@ -149,6 +160,7 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
     writer.append(submission, units)
     if state.decision is not test.state.decision:
         moved = _recorded(writer, moved, decided(moved, test.state, command.actor, command.request_id, Act.SUBMITTED))
+        tell(writer, NoticeKind.DECIDED, moved, plan, test.state.decision)
     writer.save(moved)
     return Posted(moved, plan, first_sequence, state.sequence, is_replay=False)
 
@@ -184,6 +196,7 @@ def _(command: PostCorrection, writer: Writer, now: datetime) -> Outcome:
     writer.correct(correction, freed, taken)
     if moved.state.decision is not test.state.decision:
         moved = _recorded(writer, moved, decided(moved, test.state, command.actor, command.request_id, Act.CORRECTED))
+        tell(writer, NoticeKind.DECISION_CHANGED, moved, plan, test.state.decision)
     writer.save(moved)
     return Corrected(moved, plan, correction, is_replay=False)
 
@@ -201,6 +214,7 @@ def _(command: Dispose, writer: Writer, now: datetime) -> Outcome:
     check_deviation(command.verdict, command.deviation_reason, test.state.decision)
     closed = replace(test, status=Status.CLOSED, disposition=disposition, version=test.version + 1, updated_at=now)
     closed = _recorded(writer, closed, disposed(closed, disposition, command.request_id))
+    tell(writer, NoticeKind.DISPOSED, closed, plan, test.state.decision)
     writer.save(closed)
     return Disposed(closed, plan, is_new=True)
 
@@ -234,6 +248,18 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
     writer.revoke_key(key.id, now)
     writer.record(key_revoked(key, now, command.actor, command.request_id))
     return replace(key, revoked_at=now)
+
+
+for carry_out in (
+    create_receiver,
+    remove_receiver,
+    send_trial,
+    send_again,
+    take_notices,
+    settle_notice,
+    drop_notices,
+):
+    perform.register(carry_out)
 
 
 @perform.register

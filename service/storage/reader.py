@@ -16,6 +16,7 @@ from service.storage import rows, tables
 from service.storage.engine import answering
 from service.storage.logs import Log
 from service.storage.lookups import Lookups
+from service.storage.notices import Notices
 
 # Plans that are kept at most.
 MOST_PLANS = 1024
@@ -77,13 +78,18 @@ class Count(NamedTuple):
 
 
 class Reader:
-    """Typed answers from the database; None says that there is no such row. `log` reads what a test's log holds."""
+    """
+    Typed answers from the database; None says that there is no such row.
+
+    `log` reads what a test's log holds, `notices` the outbox.
+    """
 
     def __init__(self, engine: Engine) -> None:
         self._engine = engine
         self._lookups = Lookups(engine)
         self._plans: dict[str, Plan] = {}
         self.log = Log(self._all)
+        self.notices = Notices(self._all)
         self._limits = UNLIMITED
 
     def within(self, limits: Limits) -> "Reader":

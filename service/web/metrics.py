@@ -7,20 +7,25 @@ that ended stay in the sums, as counters must; what is open or waiting ends with
 """
 
 import os
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from contextlib import suppress
+from datetime import datetime
 from pathlib import Path
 
 from prometheus_client import CONTENT_TYPE_LATEST, CollectorRegistry, Counter, Gauge, Histogram, generate_latest
+from prometheus_client.metrics_core import GaugeMetricFamily, Metric
 from prometheus_client.multiprocess import MultiProcessCollector, mark_process_dead
 
-from service.ingest.commands import Outcome, Posted
+from service.domain.notices import NoticeState
+from service.ingest.commands import Outcome, Posted, Settled
+from service.storage.notices import OutboxFigures
 
 MEDIA_TYPE = CONTENT_TYPE_LATEST
 FOLDER_VARIABLE = "PROMETHEUS_MULTIPROC_DIR"
 
 SECONDS = (0.001, 0.0025, 0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1.0, 2.5, 5.0, 10.0)
 GROUP_SIZES = tuple(2.0**power for power in range(11))
+DELIVERY_OUTCOMES = {NoticeState.DELIVERED: "delivered", NoticeState.WAITING: "failed", NoticeState.DEAD: "dead"}
 METHODS = {"GET", "HEAD", "POST", "PUT", "PATCH", "DELETE", "OPTIONS"}
 
 
@@ -54,6 +59,12 @@ class Metrics:
         self._failures = Counter("sprt_commit_failures", "Transactions that did not go through.", registry=own)
         self._observations = Counter("sprt_observations", "Observations stored, overrun included.", registry=own)
         self._decisions = Counter("sprt_decisions", "Decisions by kind of subject.", ["kind", "decision"], registry=own)
+        self._deliveries = Counter(
+            "sprt_notice_deliveries",
+            "Attempts to deliver a notice: delivered, failed and tried again, or failed for the last time.",
+            ["outcome"],
+            registry=own,
+        )
         self._streams = Gauge(
             "sprt_event_streams", "Open streams of events.", registry=own, multiprocess_mode="livesum"
         )
@@ -79,6 +90,8 @@ class Metrics:
         for outcome in outcomes:
             if isinstance(outcome, Posted) and not outcome.is_replay:
                 self._posted(outcome)
+            elif isinstance(outcome, Settled) and outcome.is_recorded:
+                self._deliveries.labels(DELIVERY_OUTCOMES[outcome.notice.state]).inc()
 
     def failed(self) -> None:
         """A group was not."""
@@ -103,6 +116,30 @@ class Metrics:
         decided = posted.test.state.decided
         if decided is not None and posted.first_sequence <= decided.sequence <= posted.last_sequence:
             self._decisions.labels(posted.test.subject.kind.value, posted.test.state.decision.value).inc()
+
+
+class _OutboxCollector:
+    """Figures that all processes share, for they are those of the database at the moment of the question."""
+
+    def __init__(self, outbox: OutboxFigures, now: datetime) -> None:
+        self._outbox, self._now = outbox, now
+
+    def collect(self) -> Iterable[Metric]:
+        """Each figure."""
+        since = self._outbox.oldest_waiting_at
+        age = 0.0 if since is None else max(0.0, (self._now - since).total_seconds())
+        yield GaugeMetricFamily(
+            "sprt_oldest_notice_seconds", "Age of the oldest notice that waits; 0 without any.", value=age
+        )
+        yield GaugeMetricFamily("sprt_notices_waiting", "Notices that wait.", value=self._outbox.waiting)
+        yield GaugeMetricFamily("sprt_notices_dead", "Notices that were given up.", value=self._outbox.dead)
+
+
+def outbox_text(outbox: OutboxFigures, now: datetime) -> bytes:
+    """The figures of the outbox, to stand beside those of the processes."""
+    registry = CollectorRegistry()
+    registry.register(_OutboxCollector(outbox, now))
+    return generate_latest(registry)
 
 
 def _forget_dead(folder: Path) -> None:

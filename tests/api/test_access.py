@@ -47,6 +47,12 @@ LEAST_ROLE = {
     ("GET", "/v1/keys"): "administrator",
     ("POST", "/v1/keys"): "administrator",
     ("DELETE", "/v1/keys/{name}"): "administrator",
+    ("POST", "/v1/receivers"): "administrator",
+    ("GET", "/v1/receivers"): "administrator",
+    ("DELETE", "/v1/receivers/{name}"): "administrator",
+    ("POST", "/v1/receivers/{name}/trial"): "administrator",
+    ("GET", "/v1/receivers/{name}/notices"): "administrator",
+    ("POST", "/v1/notices/{id}/again"): "administrator",
 }
 OPEN = {("GET", "/healthz"), ("GET", "/readyz"), ("GET", "/openapi.json")}
 
@@ -87,7 +93,7 @@ def test_every_route_has_a_rule_and_is_described() -> None:
 
 def request(client: httpx.Client, method: str, path: str) -> int:
     body: dict[str, str] | None = {} if method == "POST" else None
-    with client.stream(method, path.format(name="none", key="none", kind="lot"), json=body) as answer:
+    with client.stream(method, path.format(name="none", key="none", kind="lot", id="none"), json=body) as answer:
         return answer.status_code
 
 

@@ -34,14 +34,9 @@ SUMMARY: dict[str, Any] = {
 }
 
 
-class KeyForm(Form):
-    """A key to make."""
+class LimitedForm(Form):
+    """What may be limited to some tests: of one of the subjects, and with one of the values of each label."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
-
-    name: Name
-    role: Role
-    expires_at: Moment | None = None
     subjects: Annotated[list[SubjectForm], Field(max_length=100)] = Field(default_factory=list)
     labels: Annotated[dict[Name, Annotated[list[Text], Field(min_length=1, max_length=100)]], Field(max_length=20)] = (
         Field(default_factory=dict)
@@ -51,6 +46,16 @@ class KeyForm(Form):
         """The domain's value."""
         labels = [(name, value) for name, values in self.labels.items() for value in values]
         return limits_of([subject.subject() for subject in self.subjects], labels)
+
+
+class KeyForm(LimitedForm):
+    """A key to make."""
+
+    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+
+    name: Name
+    role: Role
+    expires_at: Moment | None = None
 
 
 class KeyOut(Answer):
