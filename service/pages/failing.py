@@ -5,11 +5,11 @@ from fastapi import Request, Response
 from service.domain import errors
 from service.domain.errors import DomainError
 from service.pages.rendering import failure
-from service.pages.session import NotYours
 from service.web.requests import request_id_of
 
 BAD_ADDRESS = ("This address cannot be right", "A part of it is missing, or has a value that it cannot have.")
 NOTHING_HERE = ("There is nothing here", "The address leads nowhere.")
+NOT_YOURS = "Your key may not do this"
 TOO_OFTEN = ("Too many requests", "This key has asked more often than the service allows; wait a moment.")
 
 # The first that fits; a title says what it is for people.
@@ -22,9 +22,8 @@ OF_ERRORS: tuple[tuple[type[DomainError], int, str], ...] = (
     (errors.NotDecided, 409, "Not before the decision"),
     (errors.Conflict, 409, "This cannot be done now"),
     (errors.VersionMoved, 412, "The test has changed meanwhile"),
-    (NotYours, 403, "Your key may not do this"),
     (errors.OutsideLimits, 403, "Your key is for other tests"),
-    (errors.RoleTooNarrow, 403, "Your key may not do this"),
+    (errors.RoleTooNarrow, 403, NOT_YOURS),
     (errors.Unavailable, 503, "Not just now"),
 )
 

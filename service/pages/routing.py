@@ -16,13 +16,14 @@ from starlette.requests import ClientDisconnect
 from service.domain.errors import DomainError
 from service.pages.failing import (
     BAD_ADDRESS,
+    NOT_YOURS,
     NOTHING_HERE,
     TOO_OFTEN,
     page_of_error,
     unexpected_page,
 )
 from service.pages.rendering import failure
-from service.pages.session import NEEDS_SIGN_IN, SignInNeeded, session_of
+from service.pages.session import NEEDS_SIGN_IN, NotYours, SignInNeeded, session_of
 from service.web.parts import Parts
 
 logger = logging.getLogger(__name__)
@@ -45,6 +46,8 @@ class PageRoute(APIRoute):
                 return _to_sign_in(request)
             except (ClientDisconnect, TimeoutError):
                 raise
+            except NotYours as error:
+                return failure(request, 403, NOT_YOURS, str(error))
             except DomainError as error:
                 return page_of_error(request, error)
             except RequestValidationError:

@@ -15,7 +15,6 @@ from typing import Annotated, cast
 from fastapi import Depends, Request, Response
 
 from service.domain.access import AccessKey, Role
-from service.domain.errors import DomainError
 from service.settings import Settings
 from service.web.keys import valid_key
 from service.web.parts import Parts
@@ -44,7 +43,7 @@ class SignInNeeded(Exception):
     """Nobody is signed in, or not any more."""
 
 
-class NotYours(DomainError):
+class NotYours(Exception):
     """The key that is signed in may not do this."""
 
 
