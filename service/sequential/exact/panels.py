@@ -9,7 +9,9 @@ the end, and is kept by its values at Gauss-Legendre points of that root (produc
 fall; after some of them wider panels do.
 Accuracy: that of the number of points.
 Cost: the points, times the panels that one step reaches from each, times the points of a panel squared.
-Source: Atkinson, The Numerical Solution of Integral Equations of the Second Kind, chapter 4 (product integration).
+Source: Atkinson, The Numerical Solution of Integral Equations of the Second Kind, chapter 4 (product integration);
+Asmussen and Albrecher, Ruin Probabilities, chapter IV (Lundberg's inequality, which bounds how far a walk that falls
+ever rises).
 """
 
 import math
@@ -34,6 +36,10 @@ SAME = 1e-9
 # So many corners above a line are felt on their other side, where panels are no wider than so many times the distance.
 ACUTE = 6
 GROWTH = 2.0
+# Above a root each panel ends so many times as far from it as it begins, but for those nearest to it.
+NEXT, NEAREST = 4.0, 1e-7
+# Probability that a walk ever rises beyond where it is followed.
+NEVER = 1e-16
 # Pairs of an origin and a panel that are worked on at once: their numbers stay near the processor.
 BLOCK = 300
 
@@ -46,12 +52,15 @@ class Room:
     Attributes:
         low, high: Below and above these heights nothing is kept.
         lines: Heights at which something may end, from which corners rise.
+        root: A height at or below `low` at which what is asked has a root, and so has it at each fall above; minus
+            infinity where none is.
     """
 
     low: float
     high: float
     fall: float
     lines: tuple[float, ...]
+    root: float = -math.inf
 
 
 @dataclass(frozen=True)
@@ -225,21 +234,39 @@ def _panels_of(room: Room, most: int) -> _Panels:
     sharp = math.floor(min(most + fall * fall / 4.0, width / fall))
     if sharp > MOST_NODES:
         raise TooMuchWork(MOST_NODES, "quadrature points")
-    falls = np.arange(1.0, sharp + 2.0)
-    corners = np.concatenate([np.zeros(0), *(line + fall * falls for line in room.lines)])
+    falls, lines = np.arange(1.0, sharp + 2.0), room.lines if math.isinf(room.root) else (*room.lines, room.root)
+    corners = np.concatenate([np.zeros(0), *(line + fall * falls for line in lines)])
     inner = np.unique(corners[(corners > low) & (corners < high)])
     # Corners of two kinds that fall together are one.
     inner = inner[np.diff(inner, prepend=low) > SAME * width]
     inner = inner[high - inner > SAME * width]
     ends = np.array([low, *inner, high])
-    acute = np.unique(np.concatenate([np.full(1, high + fall), *(line + fall * falls[:ACUTE] for line in room.lines)]))
+    acute = np.unique(np.concatenate([np.full(1, high + fall), *(line + fall * falls[:ACUTE] for line in lines)]))
     beyond = acute[np.searchsorted(acute, ends[1:] + SAME * width)] - ends[1:]
     cells = [
         _cut(left, right, fall, gap)
         for (left, right), gap in zip(pairwise(ends.tolist()), beyond.tolist(), strict=True)
     ]
-    edges = np.array([low, *(edge for cell in cells for edge in cell)])
-    return _Panels(edges[:-1], edges[1:], np.isin(edges[1:], inner))
+    edges = [low, *(edge for cell in cells for edge in cell)]
+    if math.isfinite(room.root):
+        for i in range(ACUTE):
+            edges = _cut_above(edges, room.root + fall * i, max(low - room.root, NEAREST))
+    ends = np.array(edges)
+    has_corner = np.isin(ends[1:], inner)
+    has_corner[-1] = bool(np.any(np.abs(corners - high) <= SAME * width))
+    return _Panels(ends[:-1], ends[1:], has_corner)
+
+
+def _cut_above(edges: list[float], root: float, nearest: float) -> list[float]:
+    """The ends of all panels, with more of them above a root, but for its nearest neighbourhood."""
+    found = edges[:1]
+    for left, right in pairwise(edges):
+        between, at = [], (right - root) / NEXT
+        while root + at > left and at > nearest:
+            between.append(root + at)
+            at /= NEXT
+        found += [*between[::-1], right]
+    return found
 
 
 def _cut(left: float, right: float, fall: float, gap: float) -> list[float]:
@@ -262,6 +289,16 @@ def _cut(left: float, right: float, fall: float, gap: float) -> list[float]:
         if len(edges) > MOST_NODES:
             raise TooMuchWork(MOST_NODES, "quadrature points")
         edges.append(right - distance)
+
+
+def highest_rise(fall: float) -> float:
+    """A height above its start that the walk never comes to, where it clearly falls: Lundberg's inequality."""
+    if fall < 1.1:
+        return math.inf
+    root = 0.5
+    for _ in range(200):  # the root of -ln(1 - 2 root) / 2 = fall * root, from above; each turn is .91 nearer at least
+        root = -0.5 * math.expm1(-2.0 * fall * root)
+    return -math.log(NEVER) / root
 
 
 @lru_cache(maxsize=16)

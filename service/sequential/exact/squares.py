@@ -9,8 +9,7 @@ integral equation, kept on the panels of `panels.py`. It has corners above the l
 there is a wall.
 Accuracy: the difference to a computation with fewer points, reported as the error bound.
 Cost: points cubed for each variance, and points squared for each step to the quantiles or to the wall.
-Source: Page (1954), Biometrika 41, 100-115 (integral equations); Asmussen and Albrecher, Ruin Probabilities, chapter IV
-(Lundberg's inequality, which bounds how far a walk that falls ever rises).
+Source: Page (1954), Biometrika 41, 100-115 (integral equations).
 """
 
 import math
@@ -22,14 +21,12 @@ from scipy.special import erf, erfc, gammainc, gammaincc
 
 from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork, spread
-from service.sequential.exact.panels import Kernel, Law, Resolution, Room, kernel_of
+from service.sequential.exact.panels import Kernel, Law, Resolution, Room, highest_rise, kernel_of
 from service.sequential.region import Region, StraightRegion, looks_to_wall
 
 MOST_WORK = 1_500_000_000
 # Variances beyond these multiples of the slope are as these.
 SMALLEST, LARGEST = 1e-100, 1e100
-# Probability that a walk ever rises beyond where it is followed.
-NEVER = 1e-16
 NEGLIGIBLE = 1e-15
 # The quotient of two successive probabilities of still sampling no longer moves.
 SETTLED = 1e-11
@@ -128,7 +125,7 @@ def _compared(walk: _Walk) -> tuple[_Row, float]:
     simple = _falling(walk) or _leaping(walk)
     if simple is not None:
         return simple, 4.0 * NEGLIGIBLE
-    near = _Walk(walk.low, min(walk.high, walk.start + _rise(walk.fall)), walk.fall, walk.start, walk.last)
+    near = _Walk(walk.low, min(walk.high, walk.start + highest_rise(walk.fall)), walk.fall, walk.start, walk.last)
     fine, error = _figures(near, RESOLUTIONS[0]), math.inf
     for resolution in RESOLUTIONS[1:]:
         if error <= CLOSE:
@@ -161,16 +158,6 @@ def _leaping(walk: _Walk) -> _Row | None:
         return None
     below, above = float(_below(first, walk.low, walk.fall)[0]), float(_above(first, walk.high, walk.fall)[0])
     return _Row(below, above, 1.0, 1.0, [1.0] * len(QUANTILES))
-
-
-def _rise(fall: float) -> float:
-    """A height above its start that the walk never comes to, where it clearly falls: Lundberg's inequality."""
-    if fall < 1.1:
-        return math.inf
-    root = 0.5
-    for _ in range(200):  # the root of -ln(1 - 2 root) / 2 = fall * root, from above; each turn is .91 nearer at least
-        root = -0.5 * math.expm1(-2.0 * fall * root)
-    return -math.log(NEVER) / root
 
 
 def _figures(walk: _Walk, resolution: Resolution) -> _Row:

@@ -8,6 +8,7 @@ piece. A few looks only.
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,13 +19,18 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Squares:
-    """Sampling goes on while slope * looks - low < total < slope * looks + high; `points` for each piece."""
+    """
+    Sampling goes on while slope * looks - low < total < slope * looks + high; `points` for each piece.
+
+    Where `sized`, each walk is weighed by the size of its first measurement.
+    """
 
     slope: float
     low: float
     high: float
     variance: float
     points: int = 40
+    sized: bool = False
 
     def lower(self, look: int) -> float:
         """The limit below after a look; totals are never below 0."""
@@ -39,7 +45,7 @@ class Squares:
         spread = math.sqrt(self.variance)
         if look == 1:
             size = np.sqrt(np.where(total > 0.0, total, math.inf))
-            return self._normal(size / spread) / (spread * size)
+            return self._normal(size / spread) / (spread * (1.0 if self.sized else size))
         low, high = self.lower(look - 1), np.minimum(total, self.upper(look - 1))
         # The size of the last measurement, from the one that came to this total from the upper end before it.
         smallest, largest = (np.sqrt(np.maximum(total - end, 0.0)) for end in (high, low))
@@ -88,7 +94,7 @@ def pieces(low: Array, high: Array, cuts: list[Array], points: int) -> tuple[Arr
     angle = (math.pi / 4 * (x + 1)).reshape(-1, *(1,) * low.ndim)
     weight = (math.pi / 4 * share).reshape(angle.shape) * np.sin(2 * angle)
     nodes, weights, rest = [], [], []
-    for from_, to in zip(edges[:-1], edges[1:], strict=True):
+    for from_, to in pairwise(edges):
         nodes.append(from_ + (to - from_) * np.sin(angle) ** 2)
         weights.append((to - from_) * weight)
         rest.append((edges[-1] - to) + (to - from_) * np.cos(angle) ** 2)
