@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from service.domain.errors import ComputationTooLarge, InvalidQuestion
-from service.domain.families.base import End, Start
+from service.domain.families.base import ORIGIN, End, Start
 from service.domain.observing import walk_from
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import State, Sum
@@ -152,7 +152,8 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
     if not family.has_exposure and decided.sequence == decided.sample_number:
         if decided.sample_number > MOST_LOOKS:
             raise ComputationTooLarge(f"{MOST_LOOKS} looks")
-        return _looks(np.arange(1.0, decided.sample_number + 1.0), 1.0, EACH)
+        # A look that the region does not see, such as one at a single measurement about its own mean, is none.
+        return _looks(np.arange(1.0, decided.sample_number - family.idle_units(ORIGIN) + 1.0), 1.0, EACH)
     progress, steps = _reported(procedure, decided.sequence, documents)
     # What adds nothing to the progress, such as a pair that agrees, is no look.
     progress, steps = progress[steps > 0.0], steps[steps > 0.0]

@@ -10,6 +10,7 @@ from service.domain.families.base import (
     LARGEST_REAL,
     ORIGIN,
     Column,
+    End,
     Family,
     Increments,
     Start,
@@ -20,12 +21,15 @@ from service.domain.families.base import (
 )
 from service.sequential import fixed_sample, likelihood
 from service.sequential.approximations import Motion
-from service.sequential.double import FloatArray
+from service.sequential.double import Double, FloatArray
 from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.squares import squares_characteristics
 from service.sequential.fixed_sample import FixedSample
+from service.sequential.inference.ordering import Outcome
+from service.sequential.inference.spread_bias import bias_of_spread
+from service.sequential.inference.squares import SquaresOutcome
 from service.sequential.likelihood import LikelihoodRatio
-from service.sequential.region import POSITIVE, Region, Span
+from service.sequential.region import POSITIVE, Region, Span, StraightRegion
 from service.sequential.ways import looks_to_lower
 
 
@@ -38,10 +42,6 @@ class NormalVariance(Family):
     axis: ClassVar[str] = "measurements"
     known: ClassVar[tuple[str, ...]] = ("mean",)
     span: ClassVar[Span] = POSITIVE
-    no_inference: ClassVar[str] = (
-        "Squares are not followed from look to look under every standard deviation, so there is no p-value and no "
-        "interval after the decision; what holds are the plan's risks."
-    )
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""
@@ -76,6 +76,24 @@ class NormalVariance(Family):
         estimate = math.sqrt(start.total / start.progress) if start.progress > 0.0 else 0.0
         return estimate if positive_rule(estimate) is None else None
 
+    def mean_of(self, parameter: float, known: Mapping[str, float]) -> float:
+        """See `Family`: the variance."""
+        return parameter**2
+
+    def parameter_of(self, mean: float, known: Mapping[str, float]) -> float:
+        """See `Family`."""
+        return math.sqrt(mean)
+
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+        """See `Family`."""
+        region, looks = _straight(region), len(end.looks)
+        deviation = float(region.ratio.deviation(Double.of(float(looks)), end.total))
+        return SquaresOutcome(region, looks, float(end.total.value), deviation)
+
+    def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
+        """See `Family`; a look follows each measurement."""
+        return bias_of_spread(_straight(region), parameter)
+
     def motion(self, parameter: float, known: Mapping[str, float]) -> Motion:
         """See `Family`."""
         variance = parameter**2
@@ -97,6 +115,13 @@ class NormalVariance(Family):
         refuse(reals(value, "must be a number", np.isfinite(value.values)))
         count = len(value.values)
         return Increments(np.ones(count, np.int64), np.ones(count), (value.values - known["mean"]) ** 2)
+
+
+def _straight(region: Region) -> StraightRegion:
+    """This family has neither tables nor composite hypotheses, so its regions lie between lines."""
+    if not isinstance(region, StraightRegion):
+        raise TypeError("squares are followed between parallel lines only")
+    return region
 
 
 def _near(measurements: int, squares: float, mean: float) -> str:

@@ -5,44 +5,28 @@ Quantity: probabilities of both decisions, mean, standard deviation and quantile
 variance by itself.
 Method: in units of the variance each step of the total is the square of a standard normal number, and seen from the
 lines it falls by a constant first. Whatever is asked of the rest of the walk is a function of its height that solves an
-integral equation. The density of a square is infinite at zero, so the integral runs over the number that is squared,
-where it is smooth. The solution has a corner of half-integer order at each whole number of falls above the lower line,
-and above the middle where there is a wall, and no other: on panels that end there it is a smooth function of the root
-of the distance to the end, and is kept by its values at Gauss-Legendre points of that root (product integration).
-Corners soften with each fall; after some of them wider panels do.
+integral equation, kept on the panels of `panels.py`. It has corners above the lower line, and above the middle where
+there is a wall.
 Accuracy: the difference to a computation with fewer points, reported as the error bound.
 Cost: points cubed for each variance, and points squared for each step to the quantiles or to the wall.
-Source: Page (1954), Biometrika 41, 100-115 (integral equations); Atkinson, The Numerical Solution of Integral Equations
-of the Second Kind, chapter 4 (product integration); Asmussen and Albrecher, Ruin Probabilities, chapter IV (Lundberg's
-inequality, which bounds how far a walk that falls ever rises).
+Source: Page (1954), Biometrika 41, 100-115 (integral equations).
 """
 
 import math
 from dataclasses import dataclass
-from functools import lru_cache
-from itertools import pairwise
 
 import numpy as np
 from scipy.linalg import lu_factor, lu_solve
 from scipy.special import erf, erfc, gammainc, gammaincc
 
-from service.sequential.double import BoolArray, FloatArray
+from service.sequential.double import FloatArray
 from service.sequential.exact.characteristics import QUANTILES, Characteristics, TooMuchWork, spread
+from service.sequential.exact.panels import Kernel, Law, Resolution, Room, highest_rise, kernel_of
 from service.sequential.region import Region, StraightRegion, looks_to_wall
 
-MOST_NODES = 2_400
 MOST_WORK = 1_500_000_000
-# More points than those for the integral over a panel.
-MORE_POINTS = 12
-# A normal number beyond this has no probability that matters.
-FARTHEST = 9.0
-WIDEST_PANEL = 6.0
 # Variances beyond these multiples of the slope are as these.
 SMALLEST, LARGEST = 1e-100, 1e100
-# Pairs of an origin and a panel that are worked on at once: their numbers stay near the processor.
-BLOCK = 300
-# Probability that a walk ever rises beyond where it is followed.
-NEVER = 1e-16
 NEGLIGIBLE = 1e-15
 # The quotient of two successive probabilities of still sampling no longer moves.
 SETTLED = 1e-11
@@ -66,23 +50,8 @@ class _Walk:
     last: int | None
 
 
-@dataclass(frozen=True)
-class _Resolution:
-    """
-    How closely a computation looks.
-
-    Attributes:
-        points: Gauss-Legendre points of a panel.
-        sharp: Corners that are ends of panels; later ones are so soft that a panel may run across. A long fall keeps
-            more of them sharp.
-    """
-
-    points: int
-    sharp: int
-
-
 # Computations from coarse to fine; each is compared with the one before, until two are this close.
-RESOLUTIONS = tuple(_Resolution(*numbers) for numbers in ((12, 12), (16, 14), (24, 20), (36, 28)))
+RESOLUTIONS = tuple(Resolution(*numbers) for numbers in ((12, 12), (16, 14), (24, 20), (36, 28)))
 CLOSE = 1e-9
 
 
@@ -156,7 +125,7 @@ def _compared(walk: _Walk) -> tuple[_Row, float]:
     simple = _falling(walk) or _leaping(walk)
     if simple is not None:
         return simple, 4.0 * NEGLIGIBLE
-    near = _Walk(walk.low, min(walk.high, walk.start + _rise(walk.fall)), walk.fall, walk.start, walk.last)
+    near = _Walk(walk.low, min(walk.high, walk.start + highest_rise(walk.fall)), walk.fall, walk.start, walk.last)
     fine, error = _figures(near, RESOLUTIONS[0]), math.inf
     for resolution in RESOLUTIONS[1:]:
         if error <= CLOSE:
@@ -191,19 +160,10 @@ def _leaping(walk: _Walk) -> _Row | None:
     return _Row(below, above, 1.0, 1.0, [1.0] * len(QUANTILES))
 
 
-def _rise(fall: float) -> float:
-    """A height above its start that the walk never comes to, where it clearly falls: Lundberg's inequality."""
-    if fall < 1.1:
-        return math.inf
-    root = 0.5
-    for _ in range(200):  # the root of -ln(1 - 2 root) / 2 = fall * root, from above; each turn is .91 nearer at least
-        root = -0.5 * math.expm1(-2.0 * fall * root)
-    return -math.log(NEVER) / root
-
-
-def _figures(walk: _Walk, resolution: _Resolution) -> _Row:
-    kernel = _kernel_of(walk, resolution)
-    onward, begin = kernel.onward, kernel.begin
+def _figures(walk: _Walk, resolution: Resolution) -> _Row:
+    lines = (walk.low,) if walk.last is None else (walk.low, 0.0)
+    kernel = kernel_of(Room(walk.low, walk.high, walk.fall, lines), [Law(walk.start - walk.fall)], resolution)
+    onward, begin = kernel.onward, kernel.begin[0]
     here = np.array([walk.start])
     down, up = _below(kernel.heights, walk.low, walk.fall), _above(kernel.heights, walk.high, walk.fall)
     down_now, up_now = (float(f(here, at, walk.fall)[0]) for f, at in ((_below, walk.low), (_above, walk.high)))
@@ -237,144 +197,10 @@ def _above(heights: FloatArray, line: float, fall: float) -> FloatArray:
     return reached
 
 
-@dataclass(frozen=True)
-class _Kernel:
-    """
-    One step of the walk between the lines, on functions of the height kept by their values.
-
-    Attributes:
-        heights: Array of shape (nodes,).
-        onward: Array of shape (nodes, nodes): the mean of a function after a step from each node.
-        begin: Array of shape (nodes,): the same from the start.
-    """
-
-    heights: FloatArray
-    onward: FloatArray
-    begin: FloatArray
-    work: int
-
-
-def _kernel_of(walk: _Walk, resolution: _Resolution) -> _Kernel:
-    points, panels = resolution.points, _panels_of(walk, resolution.sharp)
-    count = len(panels.left)
-    if count * points > MOST_NODES:
-        raise TooMuchWork(MOST_NODES, "quadrature points")
-    places, _ = _legendre(points)
-    shares = np.where(panels.has_corner[:, np.newaxis], places**2, places)
-    heights = (panels.right[:, np.newaxis] - panels.width[:, np.newaxis] * shares).ravel()
-    means = _means(np.append(heights, walk.start) - walk.fall, panels, points)
-    onward = means.reshape(len(heights) + 1, count * points)
-    work = len(heights) * count * (points + MORE_POINTS) * points // 2
-    return _Kernel(heights, onward[:-1], onward[-1], work)
-
-
-@dataclass(frozen=True)
-class _Panels:
-    """
-    Pieces of the strip, ascending; arrays of shape (panels,).
-
-    Attributes:
-        left, right: Their ends.
-        has_corner: Whether what is asked has a corner at the right end; it is then smooth in the root of the distance.
-    """
-
-    left: FloatArray
-    right: FloatArray
-    has_corner: BoolArray
-
-    @property
-    def width(self) -> FloatArray:
-        """The length of each."""
-        return self.right - self.left
-
-
-def _means(origins: FloatArray, panels: _Panels, points: int) -> FloatArray:
-    """
-    Weights of the values at the points of each panel in the mean of a function at origin + square, the function being
-    zero outside the panel; array of shape (origins, panels, points).
-    """
-    to_left, to_right = panels.left - origins[:, np.newaxis], panels.right - origins[:, np.newaxis]
-    origin, panel = np.nonzero((to_right > 0.0) & (to_left < FARTHEST**2))
-    means = np.zeros((len(origins), len(panels.left), points))
-    for begin in range(0, len(origin), BLOCK):
-        some = origin[begin : begin + BLOCK], panel[begin : begin + BLOCK]
-        means[some] = _weights(to_left[some], to_right[some], panels.has_corner[some[1]], points)
-    return means
-
-
-def _weights(to_left: FloatArray, to_right: FloatArray, has_corner: BoolArray, points: int) -> FloatArray:
-    """
-    The same for pairs of an origin and a panel.
-
-    Args:
-        to_left, to_right: Arrays of shape (pairs,): from the origin to the ends of the panel; not all of it lies below.
-        has_corner: Array of shape (pairs,).
-        points: Of the panel.
-
-    Returns:
-        Array of shape (pairs, points).
-    """
-    tau, weights = _legendre(points + MORE_POINTS)
-    reach, near = np.sqrt(to_right)[:, np.newaxis], np.sqrt(np.maximum(to_left, 0.0))[:, np.newaxis]
-    far = np.minimum(reach, FARTHEST)
-    # The number that is squared, thicker towards the right end, where the function may have its corner.
-    back = (far - near) * tau**2
-    number = far - back
-    chance = np.exp(-0.5 * number**2) * (far - near) * (tau * weights) * (4.0 / math.sqrt(2.0 * math.pi))
-    distance = np.maximum((reach - far + back) * (reach + number), 0.0)
-    share = distance / (to_right - to_left)[:, np.newaxis]
-    place = 2.0 * np.where(has_corner[:, np.newaxis], np.sqrt(share), share) - 1.0
-    # Legendre coefficients of the function from its values: exact up to the degree that the points carry.
-    before, now = np.ones_like(place), place
-    moments = [np.einsum("nq,nq->n", chance, before), np.einsum("nq,nq->n", chance, now)]
-    for degree in range(1, points - 1):
-        before, now = now, ((2 * degree + 1) * place * now - degree * before) / (degree + 1)
-        moments.append(np.einsum("nq,nq->n", chance, now))
-    found: FloatArray = np.stack(moments, axis=1) @ _coefficients(points)
-    return found
-
-
-def _panels_of(walk: _Walk, most: int) -> _Panels:
-    """Between corners, and narrower where a panel would be too wide for the squares."""
-    low, high, fall = walk.low, walk.high, walk.fall
-    width = high - low
-    sharp = math.floor(min(most + fall * fall / 4.0, width / fall))
-    if sharp > MOST_NODES:
-        raise TooMuchWork(MOST_NODES, "quadrature points")
-    corners = low + fall * np.arange(sharp + 1.0)
-    if walk.last is not None:
-        first = math.ceil(low / fall)
-        corners = np.append(corners, fall * np.arange(max(1, first), max(1, first) + sharp + 1.0))
-    inner = np.unique(corners[(corners > low) & (corners < high)])
-    # Corners of two kinds that fall together are one.
-    inner = inner[np.diff(inner, prepend=low) > 1e-9 * width]
-    inner = inner[high - inner > 1e-9 * width]
-    ends = [low, *inner.tolist(), high]
-    cells = [_cut(left, right, fall, is_open=right == high) for left, right in pairwise(ends)]
-    edges = np.array([low, *(edge for cell in cells for edge in cell)])
-    return _Panels(edges[:-1], edges[1:], np.isin(edges[1:], inner))
-
-
-def _cut(left: float, right: float, fall: float, *, is_open: bool) -> list[float]:
-    """The ends of the panels between two corners, ascending, the first left out: narrow at the right end."""
-    edges, distance = [right], 0.0
-    while True:
-        step = 2.0 + 2.0 * math.sqrt(distance)
-        step = min(step, WIDEST_PANEL) if fall < WIDEST_PANEL else step
-        # Above the upper line, one fall away, the function would go on with a corner of its own.
-        step = min(step, max(fall, distance)) if is_open else step
-        distance += step
-        if right - distance <= left + 0.25 * step:
-            return edges[::-1]
-        if len(edges) > MOST_NODES:
-            raise TooMuchWork(MOST_NODES, "quadrature points")
-        edges.append(right - distance)
-
-
-def _quantiles(kernel: _Kernel) -> tuple[list[float], int]:
+def _quantiles(kernel: Kernel) -> tuple[list[float], int]:
     """The first step after which sampling goes on with at most 1 - q, and the steps that it took."""
     levels = [1.0 - q for q in QUANTILES]
-    alive, survival, quotient = kernel.begin, [1.0, float(kernel.begin.sum())], 0.0
+    alive, survival, quotient = kernel.begin[0], [1.0, float(kernel.begin[0].sum())], 0.0
     most = max(1, MOST_WORK // len(alive) ** 2)
     while survival[-1] > levels[-1]:
         alive = alive @ kernel.onward
@@ -398,7 +224,7 @@ def _is_settled(before: float, quotient: float, alive: float) -> bool:
     return alive < 0.5 and quotient < 1.0 and abs(quotient - before) < SETTLED * (1.0 - quotient)
 
 
-def _to_the_wall(kernel: _Kernel, now: tuple[float, float], ends: FloatArray, last: int) -> _Row:
+def _to_the_wall(kernel: Kernel, now: tuple[float, float], ends: FloatArray, last: int) -> _Row:
     """
     Step by step to the wall.
 
@@ -409,7 +235,7 @@ def _to_the_wall(kernel: _Kernel, now: tuple[float, float], ends: FloatArray, la
         last: Steps to the wall, at least 2.
     """
     below, above = now
-    alive, survival, step, rest = kernel.begin, [1.0], 1, 1.0
+    alive, survival, step, rest = kernel.begin[0], [1.0], 1, 1.0
     most = max(1, MOST_WORK // len(alive) ** 2)
     while step < last and (rest := float(alive.sum())) > NEGLIGIBLE * 1e-1:
         survival.append(rest)
@@ -425,20 +251,3 @@ def _to_the_wall(kernel: _Kernel, now: tuple[float, float], ends: FloatArray, la
     quantiles = [float(np.argmax(reached <= 1.0 - q)) for q in QUANTILES]
     mean, second = float(np.sum(survival)), float(np.sum(weigh * np.array(survival)))
     return _Row(below, above, mean, second, quantiles, kernel.work + step * len(alive) ** 2 // 2)
-
-
-@lru_cache(maxsize=16)
-def _legendre(points: int) -> tuple[FloatArray, FloatArray]:
-    """Gauss-Legendre points and weights between 0 and 1."""
-    x, weights = np.polynomial.legendre.leggauss(points)
-    return 0.5 * (x + 1.0), 0.5 * weights
-
-
-@lru_cache(maxsize=16)
-def _coefficients(points: int) -> FloatArray:
-    """Legendre coefficients of each of the functions that are 1 at one point; array of shape (degrees, points)."""
-    x, weights = np.polynomial.legendre.leggauss(points)
-    degrees = np.arange(points)[:, np.newaxis]
-    values = np.polynomial.legendre.legvander(x, points - 1).T
-    coefficients: FloatArray = (degrees + 0.5) * values * weights
-    return coefficients

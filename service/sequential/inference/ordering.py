@@ -76,7 +76,7 @@ class Outcome(Protocol):
         ...
 
     def first_step_mean(self) -> float:
-        """The mean of one unit of progress at the beginning, given the outcome: unbiased whatever the parameter."""
+        """The mean, given the outcome, of what the first unit alone says of the parameter: unbiased whatever it is."""
         ...
 
 
