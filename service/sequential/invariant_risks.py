@@ -27,13 +27,14 @@ from scipy.special import ndtri
 
 from service.sequential.double import BoolArray, FloatArray, IndexArray
 from service.sequential.exact.characteristics import QUANTILES, spread
-from service.sequential.invariant import log_density
+from service.sequential.invariant import Looks, log_density
 from service.sequential.invariant_walks import BATCH, Endings, InvariantTest, Walker
 
 # Parts of the mixture at the most.
 MOST_PARTS = 7
-# A logarithm of a density is interpolated by this many terms, for standardised means up to the largest.
-TERMS, LARGEST_INTERPOLATED = 24, 3.0
+# A logarithm of a density is interpolated by this many terms, for standardised means up to the largest; beyond it by
+# more, for it has a singularity near the imaginary alignment 2/mean, so that the error falls by asinh(2/mean) a term.
+TERMS, LARGEST_INTERPOLATED, FALL = 24, 3.0, 15.0
 
 
 @dataclass(frozen=True)
@@ -280,15 +281,31 @@ def ending_log_density(test: InvariantTest, delta: float, looks: IndexArray, ali
 
 def _interpolated(test: InvariantTest, delta: float, looks: IndexArray, alignment: FloatArray) -> FloatArray:
     distinct, place = np.unique(looks, return_inverse=True)
-    if abs(delta) > LARGEST_INTERPOLATED or distinct.size * TERMS > looks.size:
-        return log_density(test.looks(looks.astype(float)), alignment, delta)
-    terms = polynomials(test, delta, distinct.astype(float))
+    return log_density_at(test.looks(distinct.astype(float)), delta, place, alignment)
+
+
+def log_density_at(looks: Looks, delta: float, place: IndexArray, alignment: FloatArray) -> FloatArray:
+    """The one-sided `log_density` at very many points, `place` naming the look of each; 1e-7 where interpolated."""
+    if looks.size.size * _terms(delta) > place.size:
+        return log_density(Looks(looks.freedom[place], looks.size[place]), alignment, delta)
+    terms = _series(looks, delta)
     return np.asarray(chebyshev.chebval(alignment, terms[:, place], tensor=False))
 
 
 def polynomials(test: InvariantTest, delta: float, number: FloatArray) -> FloatArray:
     """Chebyshev series in the alignment of the one-sided `log_density` at these looks; shape (terms, looks)."""
-    nodes = np.cos(math.pi * (np.arange(TERMS) + 0.5) / TERMS)
-    values = log_density(test.looks(number[:, np.newaxis]), nodes, delta)
-    terms: FloatArray = np.linalg.inv(chebyshev.chebvander(nodes, TERMS - 1)) @ values.T
+    return _series(test.looks(number), delta)
+
+
+def _series(looks: Looks, delta: float) -> FloatArray:
+    number = _terms(delta)
+    nodes = np.cos(math.pi * (np.arange(number) + 0.5) / number)
+    at = Looks(looks.freedom[:, np.newaxis], looks.size[:, np.newaxis])
+    # The polynomials are orthogonal over these nodes.
+    terms: FloatArray = (2.0 / number) * (chebyshev.chebvander(nodes, number - 1).T @ log_density(at, nodes, delta).T)
+    terms[0] *= 0.5
     return terms
+
+
+def _terms(delta: float) -> int:
+    return TERMS if abs(delta) <= LARGEST_INTERPOLATED else math.ceil(FALL / math.asinh(2.0 / abs(delta)))
