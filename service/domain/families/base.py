@@ -154,6 +154,7 @@ class Family(ABC):
         may_know: Names of what a plan may state in `known` beside that.
         is_invariant: The region runs over the log-likelihood ratio itself, and figures are simulated.
         fewest_units: The smallest sample number at which a plan may be truncated.
+        looks_at_arms: What a look knows depends on the arms of all measurements so far.
     """
 
     name: ClassVar[str]
@@ -179,6 +180,7 @@ class Family(ABC):
     may_know: ClassVar[tuple[str, ...]] = ()
     is_invariant: ClassVar[bool] = False
     fewest_units: ClassVar[int] = 1
+    looks_at_arms: ClassVar[bool] = False
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
