@@ -37,7 +37,7 @@ from service.sequential.noncentral import upper_tail
 
 # Looks of a course at the most, looks of all courses together, about, and courses; fewer where weights are dear.
 MOST_LOOKS = 20_000
-WORK, FEWEST, MOST, MOST_FAR = 4_000_000, 1_000, 20_000, 4_000
+WORK, FEWEST, MOST, MOST_FAR = 10_000_000, 1_000, 20_000, 4_000
 # Courses that look for the middle, how far from it their share above may be, and how often they look.
 PILOTS, MIDDLE, MOST_PILOTS = 400, 0.2, 60
 # Limits lie about so many units from the middle; weights beyond this mean are dear.
