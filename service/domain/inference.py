@@ -138,7 +138,7 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
     progress, steps = _reported(procedure, decided.sequence, documents)
     # What adds nothing to the progress, such as a pair that agrees, is no look.
     progress, steps = progress[steps > 0.0], steps[steps > 0.0]
-    if family.carries:
+    if family.carries and family.has_exposure:
         return _looks(progress, None, IN_ARMS)
     is_even = bool(np.all(steps == steps[0]))
     return _looks(progress, float(steps[0]) if is_even else None, EACH if is_even and steps[0] == 1.0 else TAKEN)

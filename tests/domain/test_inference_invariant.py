@@ -150,6 +150,19 @@ def test_the_order_of_the_arms_matters_only_as_far_as_it_was_looked_at() -> None
     assert inference_of(document, state, numbered([{"observations": others}]), 0.95) == found
 
 
+def test_a_voided_measurement_leaves_no_trace() -> None:
+    """The looks are those of the measurements that count."""
+    plan, body = SIMULATED[0]
+    document, values = checked_content(plan), body["values"]
+    procedure = procedure_of_document(document)
+    head = observe(procedure, State(), of_values(values[:4]), NOW)
+    state = observe(
+        procedure, State(**{**vars(head), "sequence": head.sequence + 1, "voided": 1}), of_values(values[4:]), NOW
+    )
+    log = [(1, of_values(values[:4])), (6, of_values(values[4:]))]
+    assert inference_of(document, state, log, 0.95) == after(plan, body)
+
+
 @pytest.mark.parametrize(
     ("plan", "body"),
     [
