@@ -38,7 +38,7 @@ class PageRoute(APIRoute):
         """Find the session, answer, and turn errors into pages."""
         handle = super().get_route_handler()
 
-        async def handler(request: Request) -> Response:
+        async def handler(request: Request) -> Response:  # noqa: PLR0911 - each kind of error has its page
             request.state.session = None
             try:
                 return await _answered(request, handle)

@@ -36,7 +36,7 @@ class InferenceQuery(BaseModel):
 
 @router.get(
     "/inference",
-    responses=answers_with("not-found", "not-decided", "computation-too-large", "invalid-question"),
+    responses=answers_with("not-found", "not-decided", "computation-too-large"),
     response_model=InferenceOut,
     summary="What may be said after the decision",
     dependencies=[requires(Role.VIEWER)],

@@ -117,7 +117,7 @@ class Exponential(Family):
         """See `Family`."""
         return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         return CountedOutcome(
             RateLaw(), schedule_of_time(region, float(end.looks[-1])), int(end.total.value), end.is_above

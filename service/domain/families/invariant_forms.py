@@ -102,6 +102,7 @@ class InvariantTwoSample(Invariant):
     )
     samples: ClassVar[int] = 2
     fewest_units: ClassVar[int] = 4
+    looks_at_arms: ClassVar[bool] = True
 
     def studied(self, sums: Sequence[Double]) -> tuple[Looks, Studentised]:
         """See `Invariant`."""

@@ -49,7 +49,7 @@ class NormalDifference(Normal):
         """See `Family`."""
         return super().mixture(edge, direction, _of_difference(known), prior)
 
-    def outcome(self, region: Region, end: End, known: Known) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Known) -> Outcome:
         """See `Family`."""
         return super().outcome(region, end, _of_difference(known))
 

@@ -84,7 +84,7 @@ class NormalVariance(Family):
         """See `Family`."""
         return math.sqrt(mean)
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         region, looks = _straight(region), len(end.looks)
         deviation = float(region.ratio.deviation(Double.of(float(looks)), end.total))

@@ -6,7 +6,7 @@ from fastapi import Path, Query, Request, Response
 
 from service.domain.access import Role
 from service.domain.anytime import confidence_at
-from service.domain.errors import ComputationTooLarge, InvalidQuestion
+from service.domain.errors import ComputationTooLarge
 from service.domain.names import NAME_PATTERN
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import Status
@@ -92,7 +92,7 @@ async def show_estimates(
     if test.state.is_decided:
         try:
             found = await computing(parts, lambda: inference_for(parts.reader, test, plan, level))
-        except (ComputationTooLarge, InvalidQuestion) as error:
+        except ComputationTooLarge as error:
             reason = str(error)
     return page(
         request,

@@ -10,7 +10,8 @@ from typing import Any
 from service.domain.assumptions import Assumptions, assumptions_of, stretch_of
 from service.domain.chain import Act, Entry
 from service.domain.disposing import Verdict
-from service.domain.inference import Inference, inference_of, meanings_of
+from service.domain.inference import inference_of, meanings_of
+from service.domain.inferred import Inference, Kind
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
@@ -20,6 +21,7 @@ from service.storage.reader import Reader
 
 ACTS = 100
 
+P_VALUES = {Kind.EXACT: "p-value", Kind.SIMULATED: "p-value, simulated", Kind.BOUND: "p-value, at most"}
 NAMES = {
     Act.REGISTERED: "Registered",
     Act.SUBMITTED: "Results received",
@@ -31,12 +33,20 @@ NAMES = {
 
 @dataclass(frozen=True)
 class Figure:
-    """One figure: its name, its value, what it means, and why it is what it is where that needs saying."""
+    """
+    One figure.
+
+    Attributes:
+        meaning: What it says, in a sentence.
+        reason: Why it is what it is, where that needs saying.
+        error: Its standard error, where it was simulated.
+    """
 
     name: str
     value: str
     meaning: str
     reason: str
+    error: float | None
 
 
 @dataclass(frozen=True)
@@ -57,7 +67,7 @@ def inference_for(reader: Reader, test: SequentialTest, plan: Plan, level: float
     The inference of a decided test.
 
     Raises:
-        ComputationTooLarge, InvalidQuestion: As `domain.inference.inference_of`.
+        ComputationTooLarge: As `domain.inference.inference_of`.
     """
     bodies = reader.log.bodies(test, 0, test.state.sequence)
     return inference_of(plan.document, test.state, ((first, json.loads(body)) for first, body in bodies), level)
@@ -73,18 +83,19 @@ def assumptions_for(reader: Reader, test: SequentialTest, plan: Plan) -> Assumpt
 def figures_of(found: Inference, plan: Plan) -> tuple[Figure, ...]:
     """The figures of an inference, each in a sentence."""
     meanings, reasons = meanings_of(plan.document, found.level), dict(found.reasons)
-    interval = f"{figure(found.lower)} to {figure(found.upper)}"
+    errors = {} if found.simulated is None else found.simulated.errors
+    interval = "–" if found.lower is None and found.upper is None else f"{figure(found.lower)} to {figure(found.upper)}"
     ends = " ".join(reasons[end] for end in ("lower", "upper") if end in reasons)
     rows = (
         ("Median-unbiased estimate", figure(found.median_unbiased), "median_unbiased"),
         (f"{percent(found.level, 7)} confidence interval", interval, "interval"),
-        ("p-value", figure(found.p_value), "p_value"),
+        (P_VALUES[found.kind], figure(found.p_value), "p_value"),
         ("Maximum-likelihood estimate", figure(found.maximum_likelihood), "maximum_likelihood"),
         ("Its bias", figure(found.bias), "bias_of_maximum_likelihood"),
         ("Unbiased estimate", figure(found.unbiased), "unbiased"),
     )
     return tuple(
-        Figure(name, value, meanings.get(key, ""), ends if key == "interval" else reasons.get(key, ""))
+        Figure(name, value, meanings.get(key, ""), ends if key == "interval" else reasons.get(key, ""), errors.get(key))
         for name, value, key in rows
     )
 
