@@ -1,18 +1,20 @@
 """The walk of a test for drawing: evidence and totals against progress, thinned, with the region around it."""
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from service.domain.families import Increments
 from service.domain.families.base import ORIGIN
 from service.domain.observing import first_exit, walk_from
 from service.domain.procedure import Procedure
 from service.domain.state import State, Sum
 from service.sequential.double import Double, FloatArray
 from service.sequential.tables import UnitTable
+from service.sequential.walk import Exit
 
 REGION_POINTS = 201
 
@@ -58,9 +60,23 @@ def path_of(procedure: Procedure, documents: Iterable[tuple[int, Mapping[str, An
         documents: The observations of the test that count, some at a time and in order, with the first sequence.
         points: At least 4.
     """
-    state, pieces = State(), [_origin(procedure)]
-    for first, document in documents:
-        increments = procedure.family.read(document, procedure.known)
+    read = ((first, procedure.family.read(document, procedure.known)) for first, document in documents)
+    return thinned(joined([piece for piece, _ in pieces_of(procedure, read)]), points)
+
+
+def pieces_of(
+    procedure: Procedure, submissions: Iterable[tuple[int, Increments]]
+) -> Iterator[tuple[Path, Exit | None]]:
+    """
+    The walk piece by piece, the origin first, until it leaves the region; the last piece then comes with its exit.
+
+    Args:
+        procedure: The plan, compiled.
+        submissions: Increments in order, with the first sequence of each; no more are taken after the exit.
+    """
+    state = State()
+    yield _origin(procedure), None
+    for first, increments in submissions:
         walk = walk_from(procedure, state, increments)
         exit_ = first_exit(procedure, walk, increments)
         count = len(increments.total) if exit_ is None else exit_.index + 1
@@ -71,9 +87,9 @@ def path_of(procedure: Procedure, documents: Iterable[tuple[int, Mapping[str, An
         sequence = first + np.arange(count)
         evidence = procedure.evidence.log(progress, total)
         shown = procedure.family.displayed([_cut(sums, count) for sums in walk.carried], total, procedure.known)
-        pieces.append(Path(sequence, units, progress.value, shown.value, evidence))
+        yield Path(sequence, units, progress.value, shown.value, evidence), exit_
         if exit_ is not None:
-            break
+            return
         state = State(
             sequence=int(sequence[-1]),
             sample_number=int(units[-1]),
@@ -81,7 +97,6 @@ def path_of(procedure: Procedure, documents: Iterable[tuple[int, Mapping[str, An
             total=_last(total),
             carried=tuple(_last(sums) for sums in walk.carried),
         )
-    return _thinned(_joined(pieces), points)
 
 
 def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
@@ -117,13 +132,14 @@ def _origin(procedure: Procedure) -> Path:
     return Path(np.zeros(1, np.int64), np.zeros(1, np.int64), zero, zero, evidence)
 
 
-def _joined(pieces: list[Path]) -> Path:
+def joined(pieces: Sequence[Path]) -> Path:
+    """Pieces of one walk in order, as one."""
     columns = ("sequence", "sample_number", "progress", "total", "log_likelihood_ratio")
     return Path(**{name: np.concatenate([getattr(piece, name) for piece in pieces]) for name in columns})
 
 
-def _thinned(path: Path, points: int) -> Path:
-    """Keep the first and last point and each stretch's extremes of the evidence."""
+def thinned(path: Path, points: int) -> Path:
+    """Keep at most so many points: the first and last point and each stretch's extremes of the evidence."""
     count = len(path.sequence)
     if count <= points:
         return path
