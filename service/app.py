@@ -41,7 +41,9 @@ from service.notices.resolving import Resolve, Resolver
 from service.notices.sender import Sender
 from service.pages.rendering import STATIC
 from service.pages.routes import acts as page_acts
-from service.pages.routes import live, one_test, signing
+from service.pages.routes import design as page_design
+from service.pages.routes import live, one_test, registering, signing
+from service.pages.routes import plans as page_plans
 from service.pages.routes import tests as all_tests
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
@@ -202,7 +204,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
-    for pages in (signing, all_tests, one_test, page_acts, live):
+    for pages in (signing, all_tests, one_test, page_acts, page_plans, page_design, registering, live):
         app.include_router(pages.router)
     app.mount("/static", StaticFiles(directory=STATIC), name="static")
     app.openapi = describe(app)  # type: ignore[method-assign]

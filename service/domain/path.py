@@ -99,10 +99,10 @@ def pieces_of(
         )
 
 
-def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
-    """The region from the origin to its wall, or a little past what was reached where it has none."""
+def region_points(procedure: Procedure, reached: float, *, to_wall: bool = True) -> list[RegionPoint]:
+    """The region from the origin to its wall, or a little past what was reached where it has none or is not wanted."""
     region = procedure.region
-    horizon = region.wall.progress if region.wall is not None else region.open_horizon(reached)
+    horizon = region.wall.progress if region.wall is not None and to_wall else region.open_horizon(reached)
     progress = np.linspace(0.0, max(horizon, reached), REGION_POINTS)
     if isinstance(region, UnitTable):
         progress = np.array([0.0, *region.sample_numbers])

@@ -179,11 +179,11 @@ class Reader:
         found = found.where(column.change > after).order_by(column.change).limit(limit)
         return [Change(*row.values()) for row in self._all(found)]
 
-    def counts(self) -> list[Count]:
-        """How many tests there are of each kind, status and decision."""
+    def counts(self, filters: TestFilters = TestFilters()) -> list[Count]:
+        """How many tests there are of each kind, status and decision, among those that match."""
         by = (tables.tests.c.subject_kind, tables.tests.c.status, tables.tests.c.decision)
         with answering(), self._engine.connect() as connection:
-            counted = _within(select(*by, func.count()), self._limits).group_by(*by)
+            counted = _within(_filtered(select(*by, func.count()), filters), self._limits).group_by(*by)
             return [Count(*row) for row in connection.execute(counted)]
 
     def _all(self, found: Select[Any]) -> list[RowMapping]:

@@ -101,6 +101,11 @@ class Simulations:
         task.add_done_callback(self._tasks.discard)
         return begun
 
+    def found(self, question: Question) -> Simulation | None:
+        """The simulation that answers a question, None where nobody has asked it."""
+        self._forget()
+        return self._all.get(_name_of(question))
+
     def known(self, name: str) -> Simulation:
         """
         A simulation of this process.

@@ -70,6 +70,16 @@ PAGES = {
     ("POST", "/tests/{key}/correct"): "collector",
     ("GET", "/tests/{key}/dispose"): "engineer",
     ("POST", "/tests/{key}/dispose"): "engineer",
+    ("GET", "/plans"): "viewer",
+    ("GET", "/plans/{name}"): "viewer",
+    ("GET", "/plans/{name}/curves.csv"): "viewer",
+    ("GET", "/plans/{name}/register"): "engineer",
+    ("POST", "/plans/{name}/register"): "engineer",
+    ("GET", "/design"): "viewer",
+    ("GET", "/design/curves.csv"): "viewer",
+    ("GET", "/design/standards"): "viewer",
+    ("GET", "/design/save"): "engineer",
+    ("POST", "/design/save"): "engineer",
 }
 OPEN_PAGES = {("GET", "/sign-in"), ("POST", "/sign-in"), ("ANY", "/static")}
 

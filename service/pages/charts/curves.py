@@ -63,5 +63,6 @@ def _key(frame: Frame, series: tuple[Series, ...]) -> None:
         x = max(LEFT + 60.0, frame.x.end - 150.0)
         stroke = SERIES[each.number % len(SERIES)]
         dash = DASHES[each.number % len(DASHES)] or "none"
-        line(frame.root, x, y - 4.0, x + 28.0, y - 4.0, stroke=stroke, stroke_width=2, stroke_dasharray=dash)
+        width = 1.0 if each.is_light else 2.0
+        line(frame.root, x, y - 4.0, x + 28.0, y - 4.0, stroke=stroke, stroke_width=width, stroke_dasharray=dash)
         add(frame.root, "text", each.name, x=x + 34.0, y=y, fill=INK)

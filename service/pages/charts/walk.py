@@ -67,15 +67,20 @@ class WalkPicture:
 def walk_drawing(picture: WalkPicture, name: str = "walk") -> Element:
     """The drawing; `name` tells it from others on its page."""
     frame = framed(SIZE, picture.across, picture.up, picture.title, picture.description, name)
-    _patterns(frame.root, name)
-    for limit in picture.limits:
-        _limit(frame, limit, name)
-    if picture.wall is not None:
-        _wall(frame, picture.wall)
+    draw_region(frame, picture.limits, picture.wall, name)
     for reach in picture.reaches:
         _reach(frame, picture.walk[-1], reach)
     _walk(frame, picture)
     return frame.root
+
+
+def draw_region(frame: Frame, limits: tuple[Limit, ...], wall: float | None, name: str) -> None:
+    """The limits with what lies beyond them hatched, and the wall."""
+    _patterns(frame.root, name)
+    for limit in limits:
+        _limit(frame, limit, name)
+    if wall is not None:
+        _wall(frame, wall)
 
 
 def _patterns(root: Element, name: str) -> None:

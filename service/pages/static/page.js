@@ -31,6 +31,16 @@ function exchange(fresh) {
   }
 }
 
+// Fields that stay say whether what they hold is right.
+function markFields(form, fresh) {
+  for (const field of form.elements) {
+    const next = field.id && fresh.getElementById(field.id);
+    if (!next) continue;
+    if (next.hasAttribute("aria-invalid")) field.setAttribute("aria-invalid", "true");
+    else field.removeAttribute("aria-invalid");
+  }
+}
+
 let running = null;
 
 async function fetched(address) {
@@ -89,6 +99,7 @@ function answerWhileTyping(form) {
     fetched(address).then((fresh) => {
       if (!fresh) return;
       exchange(fresh);
+      markFields(form, fresh);
       history.replaceState(null, "", address);
     }, () => {});
   };

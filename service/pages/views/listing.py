@@ -82,7 +82,7 @@ def listing_of(reader: Reader, filters: Filters, before: int | None) -> Listing:
     plans = {name: reader.plan(name) for name in {recent.test.plan for recent in shown}}
     rows = tuple(_row(recent.test, plan) for recent in shown if (plan := plans[recent.test.plan]) is not None)
     further = filters.address(before=shown[-1].number) if len(found) > ROWS else None
-    return Listing(rows, further, _stages(reader.counts()))
+    return Listing(rows, further, stages(reader.counts()))
 
 
 def _row(test: SequentialTest, plan: Plan) -> Row:
@@ -100,7 +100,8 @@ def _needed(test: SequentialTest, plan: Plan) -> str:
     return f"{ways.reject.words} to reject" if ways.reject is not None else ""
 
 
-def _stages(counts: list[Count]) -> dict[str, int]:
+def stages(counts: list[Count]) -> dict[str, int]:
+    """How many tests are at each stage."""
     found = dict.fromkeys((stage.value for stage in Stage), 0)
     for count in counts:
         goes_on = Stage.RUNNING if count.decision == Decision.CONTINUE else Stage.WAITING

@@ -50,8 +50,7 @@ def picture_of(test: SequentialTest, plan: Plan, path: Path, view: View) -> Walk
     walk = tuple((float(x), float(y)) for x, y in zip(path.progress, heights, strict=True))
     reaches = _reaches(test, procedure, view)
     end = _end(procedure, walk, reaches)
-    region = region_points(procedure, end)
-    limits = _constant(procedure, end) if view is View.EVIDENCE else _lines(procedure, region, end)
+    limits = limits_of(procedure, view, end)
     saying = saying_of(test, plan)
     family = procedure.family
     counts = family.span.is_integer and view is View.COUNT
@@ -63,22 +62,31 @@ def picture_of(test: SequentialTest, plan: Plan, path: Path, view: View) -> Walk
         walk=walk,
         limits=limits,
         reaches=reaches,
-        wall=None if procedure.region.wall is None else _wall(procedure),
+        wall=wall_of(procedure),
         decision=test.state.decision,
     )
 
 
 def _end(procedure: Procedure, walk: Curve, reaches: tuple[Reach, ...]) -> float:
     """The right end: the wall, or a good way past the test and the ends of its shortest ways."""
-    if procedure.region.wall is not None:
-        return max(_wall(procedure), walk[-1][0]) * 1.02
+    wall = wall_of(procedure)
+    if wall is not None:
+        return max(wall, walk[-1][0]) * 1.02
     return max([walk[-1][0] * AHEAD, *(reach.end[0] * 1.1 for reach in reaches)]) or FIRST
 
 
-def _wall(procedure: Procedure) -> float:
+def wall_of(procedure: Procedure) -> float | None:
     """The truncation as people count it."""
     wall = procedure.region.wall
-    return 0.0 if wall is None else wall.progress + procedure.family.idle_units(ORIGIN)
+    return None if wall is None else wall.progress + procedure.family.idle_units(ORIGIN)
+
+
+def limits_of(procedure: Procedure, view: View, end: float) -> tuple[Limit, ...]:
+    """The limits of a plan from the origin to this progress."""
+    if view is View.EVIDENCE:
+        return _constant(procedure, end)
+    wall = wall_of(procedure)
+    return _lines(procedure, region_points(procedure, end, to_wall=wall is None or wall <= end), end)
 
 
 def _constant(procedure: Procedure, end: float) -> tuple[Limit, ...]:
