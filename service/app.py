@@ -49,6 +49,7 @@ from service.web.rates import Rates
 from service.web.requests import RequestId, accounts
 from service.web.simulations import Simulations
 from service.web.streams import Streams
+from service.web.walks import Walks
 
 # Exact computations that run at once; more wait.
 COMPUTERS, MOST_WAITING = 2, 8
@@ -114,7 +115,9 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
         simulating = Simulations(computers)
         reader, check = Reader(engine), lambda: check_schema(engine)
-        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures, rates)
+        app.state.parts = Parts(
+            settings, reader, road, clock, check, computers, streams, simulating, figures, rates, Walks()
+        )
         road.start()
         watcher.start()
         try:
