@@ -35,7 +35,7 @@ from service.ingest.road import Clock, Road, utc_now
 from service.logs import set_up_log
 from service.pages.rendering import STATIC
 from service.pages.routes import acts as page_acts
-from service.pages.routes import live, one_test, signing
+from service.pages.routes import drawings, live, one_test, record, signing
 from service.pages.routes import tests as all_tests
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
@@ -173,7 +173,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
-    for pages in (signing, all_tests, one_test, page_acts, live):
+    for pages in (signing, all_tests, one_test, page_acts, drawings, record, live):
         app.include_router(pages.router)
     app.mount("/static", StaticFiles(directory=STATIC), name="static")
     app.openapi = describe(app)  # type: ignore[method-assign]

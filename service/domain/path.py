@@ -145,8 +145,13 @@ def region_points(procedure: Procedure, reached: float) -> list[RegionPoint]:
         progress = np.array([0.0, *region.sample_numbers])
     elif not procedure.family.has_exposure:
         progress = np.unique(np.ceil(progress))
+    return region_at(procedure, progress)
+
+
+def region_at(procedure: Procedure, progress: FloatArray) -> list[RegionPoint]:
+    """The limits at each of these places of a path; array of shape (points,)."""
     idle = procedure.family.idle_units(ORIGIN)
-    limits = procedure.family.drawn(region, progress, procedure.known)
+    limits = procedure.family.drawn(procedure.region, progress, procedure.known)
     return [
         _region_point(procedure, float(at) + idle, _finite(low), _finite(high))
         for at, low, high in zip(progress, limits.lower, limits.upper, strict=True)

@@ -115,6 +115,11 @@ class Log:
         posted = next(islice(objects, sequence - submission.first_sequence, None))
         return posted, in_force(posted, corrections.get(sequence))
 
+    def corrections(self, test: SequentialTest) -> list[Correction]:
+        """Every correction ever made of a test as it was read, in order."""
+        made = self._all_corrections(test.key, 0) if test.corrections else iter(())
+        return [each for each in made if each.number <= test.history.length]
+
     def state_before(self, test: str, observation: int) -> State:
         """The state after the last submission that ends before an observation; no earlier one may be corrected."""
         log = tables.submissions.c
