@@ -42,7 +42,7 @@ from service.notices.sender import Sender
 from service.pages.rendering import STATIC
 from service.pages.routes import acts as page_acts
 from service.pages.routes import design as page_design
-from service.pages.routes import live, one_test, registering, signing
+from service.pages.routes import drawings, live, one_test, record, registering, signing
 from service.pages.routes import plans as page_plans
 from service.pages.routes import tests as all_tests
 from service.settings import Settings, read_settings
@@ -57,6 +57,7 @@ from service.web.rates import Rates
 from service.web.requests import RequestId, accounts
 from service.web.simulations import Simulations
 from service.web.streams import Streams
+from service.web.walks import Walks
 
 # Exact computations that run at once; more wait.
 COMPUTERS, MOST_WAITING = 2, 8
@@ -144,7 +145,9 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         simulating = Simulations(computers)
         reader, check = Reader(engine), lambda: check_schema(engine)
         sender = sender_for(settings, road, reader, resolver, clock)
-        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures, rates)
+        app.state.parts = Parts(
+            settings, reader, road, clock, check, computers, streams, simulating, figures, rates, Walks()
+        )
         road.start()
         watcher.start()
         sender.start()
@@ -204,7 +207,18 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
-    for pages in (signing, all_tests, one_test, page_acts, page_plans, page_design, registering, live):
+    for pages in (
+        signing,
+        all_tests,
+        one_test,
+        page_acts,
+        drawings,
+        record,
+        page_plans,
+        page_design,
+        registering,
+        live,
+    ):
         app.include_router(pages.router)
     app.mount("/static", StaticFiles(directory=STATIC), name="static")
     app.openapi = describe(app)  # type: ignore[method-assign]

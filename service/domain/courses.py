@@ -4,9 +4,10 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from service.domain.families import Increments
-from service.domain.path import Path, joined, pieces_of, thinned
+from service.domain.path import Path, begun, followed
 from service.domain.procedure import Procedure
 from service.domain.sampling import sampled
 from service.domain.state import Decision
@@ -46,18 +47,16 @@ def courses_of(procedure: Procedure, parameter: float, source: np.random.Generat
 
 
 def _course(procedure: Procedure, parameter: float, source: np.random.Generator) -> Course:
-    decision, found = Decision.CONTINUE, []
-    for piece, exit_ in pieces_of(procedure, _drawn(procedure, parameter, source)):
-        found.append(piece)
-        if exit_ is not None:
-            decision = exit_.decision
-    return Course(parameter, thinned(joined(found), POINTS), decision)
+    walked = followed(procedure, begun(procedure), _drawn(procedure, parameter, source), POINTS)
+    return Course(parameter, walked.path, walked.state.decision)
 
 
-def _drawn(procedure: Procedure, parameter: float, source: np.random.Generator) -> Iterator[tuple[int, Increments]]:
-    """Observations with their first sequence, as many again each time, while they are asked for."""
+def _drawn(
+    procedure: Procedure, parameter: float, source: np.random.Generator
+) -> Iterator[tuple[NDArray[np.int64], Increments]]:
+    """Observations with their sequences, as many again each time, while they are asked for."""
     drawn, count = 0, FIRST_PIECE
     while drawn < MOST_OBSERVATIONS:
-        yield drawn + 1, sampled(procedure, parameter, source, count)
+        yield np.arange(drawn + 1, drawn + count + 1), sampled(procedure, parameter, source, count)
         drawn += count
         count = drawn

@@ -16,6 +16,7 @@ from service.settings import Settings
 from service.storage.reader import Reader
 from service.web.metrics import Metrics
 from service.web.rates import Rates
+from service.web.walks import Walks
 
 if TYPE_CHECKING:
     from service.web.simulations import Simulations
@@ -38,6 +39,7 @@ class Parts:
     simulations: "Simulations"
     metrics: Metrics
     rates: Rates
+    walks: Walks
 
 
 def parts_for(scope: Scope) -> Parts:

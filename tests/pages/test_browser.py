@@ -162,7 +162,7 @@ def test_everything_can_be_done_by_keyboard_alone(
 
 ADDRESSES = ["/", "/tests/{key}", "/tests/{key}?view=count", "/tests/{key}/results", "/tests/{key}/assumptions",
              "/tests/{key}/estimates", "/tests/{key}/history", "/tests/{key}/correct?sequence=1",
-             "/tests/{key}/dispose", "/tests/none"]  # fmt: skip
+             "/tests/{key}/dispose", "/tests/{key}/record", "/tests/none"]  # fmt: skip
 
 
 def test_no_page_has_a_serious_finding_nor_is_wider_than_a_phone(

@@ -3,7 +3,6 @@
 import csv
 import hashlib
 import io
-import json
 from collections.abc import Iterator
 from itertools import islice
 from typing import Annotated, Any, cast
@@ -191,6 +190,5 @@ def _cell(value: object) -> str:
 
 def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOut:
     procedure = procedure_of(plan)
-    bodies = parts.reader.log.bodies(test, 0, test.state.sequence)
-    documents = ((first, json.loads(body)) for first, body in bodies)
-    return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, documents, points))
+    path = parts.walks.path_of(parts.reader, test, plan, points)
+    return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, path))

@@ -15,7 +15,7 @@ from service.pages.charts.walk import walk_drawing
 from service.pages.rendering import page
 from service.pages.routing import page_router
 from service.pages.session import SignedIn
-from service.pages.views.one_test import expectation_of, facts_of, others_of, paths_of, promises_of
+from service.pages.views.one_test import expectation_of, facts_of, others_of, promises_of
 from service.pages.views.picture import View, picture_of, views_of
 from service.pages.views.results import results_of
 from service.pages.views.saying import saying_of
@@ -43,7 +43,7 @@ async def show_test(
     test, plan = await known_test(parts, key)
     views = views_of(procedure_of(plan))
     chosen = View(view) if view in views else views[0]
-    path = await computing(parts, lambda: paths_of(parts.reader, test, plan, POINTS))
+    path = await computing(parts, lambda: parts.walks.path_of(parts.reader, test, plan, POINTS))
     drawing = walk_drawing(picture_of(test, plan, path, chosen))
     return page(
         request,

@@ -1,6 +1,5 @@
 """What the page of one test shows beside its picture."""
 
-import json
 from collections.abc import Mapping
 from dataclasses import dataclass
 
@@ -8,7 +7,6 @@ from service.domain.anytime import always_valid_p_value, confidence_at
 from service.domain.errors import ComputationTooLarge
 from service.domain.joint import Joint, joint_of
 from service.domain.outlook import Outlook, outlook_of
-from service.domain.path import Path, path_of
 from service.domain.plan import Plan, known_of, prior_of
 from service.domain.procedure import Procedure, procedure_of
 from service.domain.sequential_test import SequentialTest, Stage
@@ -35,12 +33,6 @@ class Others:
 
     tests: tuple[SequentialTest, ...]
     joint: Joint
-
-
-def paths_of(reader: Reader, test: SequentialTest, plan: Plan, points: int) -> Path:
-    """The walk of a test out of its log, thinned."""
-    bodies = reader.log.bodies(test, 0, test.state.sequence)
-    return path_of(procedure_of(plan), ((first, json.loads(body)) for first, body in bodies), points)
 
 
 def others_of(reader: Reader, test: SequentialTest) -> Others | None:

@@ -63,7 +63,7 @@ def results_of(reader: Reader, test: SequentialTest, plan: Plan, after: int | No
     last = max(0, count - ROWS)
     begin = last if after is None else min(after, last) if after >= count else after
     entries = expanded(family, test, reader.log.corrected(test, begin))
-    rows = tuple(_result(family, each) for each in islice((e for e in entries if e.sequence > begin), ROWS))
+    rows = tuple(result_of(family, each) for each in islice((e for e in entries if e.sequence > begin), ROWS))
     later = begin + ROWS if begin + ROWS < count else None
     return Results(columns_of(family), rows, max(0, begin - ROWS) if begin > 0 else None, later, last)
 
@@ -105,6 +105,14 @@ def as_observation(family: Family, form: Typed) -> dict[str, Any]:
     return {**found, UNIT: form[UNIT]} if form[UNIT] else found
 
 
+def said(family: Family, observation: Mapping[str, Any]) -> str:
+    """An observation in a line, with the names of its fields where there are several."""
+    named = {name: observation[name] for name in (*family.fields, UNIT) if name in observation}
+    if len(named) == 1:
+        return _word(*named.values())
+    return ", ".join(f"{name} {_word(value)}" for name, value in named.items())
+
+
 def number_in(text: str) -> float | int | None:
     """The number that somebody typed, with a comma or a point; None where it is none."""
     plain = text.replace("−", "-").replace(",", ".").replace(" ", "")
@@ -114,7 +122,8 @@ def number_in(text: str) -> float | int | None:
         return None
 
 
-def _result(family: Family, logged: LoggedObservation) -> Result:
+def result_of(family: Family, logged: LoggedObservation) -> Result:
+    """An observation of the log for people."""
     posted = {name: logged.fields[name] for name in family.fields}
     now = in_force(posted, logged.correction)
     counted = None if now is None else {**{name: family.optional.get(name) for name in family.fields}, **now}

@@ -85,7 +85,9 @@ def _notes(test: SequentialTest) -> tuple[str, ...]:
     if test.corrected_after_decision:
         notes.append("The test was corrected after it had decided.")
     if test.state.overrun:
-        notes.append(f"{figure(test.state.overrun)} observations came after the decision and do not count.")
+        overrun = test.state.overrun
+        came = "1 observation came after the decision and does" if overrun == 1 else None
+        notes.append(f"{came or f'{figure(overrun)} observations came after the decision and do'} not count.")
     return tuple(notes)
 
 
