@@ -159,7 +159,6 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
             simulating.stop()
             await asyncio.to_thread(watcher.stop)
             await sender.stop()
-            resolver.stop()
             await road.stop()
             computers.stop()
             engine.dispose()

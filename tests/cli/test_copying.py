@@ -83,7 +83,7 @@ def test_a_move_to_postgresql_and_back_loses_no_row(server: URL, tmp_path: Path)
         assert moved.returncode == 0, moved.stderr
         assert "submissions: 2 rows" in moved.stderr
         assert "receivers: 1 rows" in moved.stderr
-        assert "notices: 1 rows" in moved.stderr
+        assert "notices: 2 rows" in moved.stderr
         assert "the same" in moved.stderr
         again = command("copy", service.database_url, url, database_url="unused://")
         assert again.returncode == 1

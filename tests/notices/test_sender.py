@@ -107,7 +107,6 @@ async def sending(engine: Engine, seconds: float = 20.0, schedule: Schedule = QU
     finally:
         await own.stop()
         await road.stop()
-        resolver.stop()
 
 
 async def until(holds: Callable[[], bool], seconds: float = 30.0) -> None:
