@@ -25,6 +25,7 @@ LONG: list[tuple[dict[str, Any], float]] = [
     ({"family": "poisson", "h0": 0.50, "h1": 0.55, "alpha": 0.01, "beta": 0.01}, 0.5246),
     ({"family": "exponential", "h0": 110.0, "h1": 100.0, "alpha": 0.01, "beta": 0.01}, 104.9),
     ({"family": "normal", "h0": 0.0, "h1": 0.1, "alpha": 0.01, "beta": 0.01, "known": {"sigma": 1.0}}, 0.05),
+    ({"family": "normal_variance", "h0": 1.0, "h1": 1.1, "alpha": 0.01, "beta": 0.01, "known": {"mean": 0.0}}, 1.048),
 ]
 
 
@@ -33,6 +34,8 @@ def drawn(family: str, parameter: float, source: np.random.Generator, count: int
         return [float(failed) for failed in source.random(count) < parameter]
     if family == "poisson":
         return [float(value) for value in source.poisson(parameter, count)]
+    if family == "normal_variance":
+        return [float(value) for value in source.normal(0.0, parameter, count)]
     draws = source.exponential(parameter, count) if family == "exponential" else source.normal(parameter, 1.0, count)
     return [float(value) for value in draws]
 

@@ -7,7 +7,7 @@ which those below the first upper limit come from squares that no limit has met.
 estimate on average by a closed form of where the walk stands, and the bias is the sum of that over all looks taken.
 The estimate is a root of the total, which by then is above zero; panels are narrow near where it would not be.
 Accuracy: 1e-9 of sigma.
-Cost: points squared for each look.
+Cost: points squared for each look, until the walks that go on no longer change their distribution.
 Source: as for `bias.py`; Abramowitz and Stegun, section 9.6 (the mean root of a constant plus a square, in modified
 Bessel functions).
 """
@@ -23,11 +23,13 @@ from service.sequential.exact.characteristics import TooMuchWork
 from service.sequential.exact.panels import Law, Resolution, Room, highest_rise, kernel_of
 from service.sequential.region import StraightRegion, looks_to_wall
 
-MOST_WORK = 6_000_000_000
-RESOLUTION = Resolution(points=20, sharp=16)
+MOST_WORK = 12_000_000_000
+RESOLUTION = Resolution(points=16, sharp=14)
 # Sampling is followed until what is still to come moves the bias by less than this share of sigma.
 NEGLIGIBLE = 1e-9
 UNLIKELY = 1e-12
+# Walks whose distribution changes by less than this no longer change.
+SETTLED = 1e-10
 # Points of the integral over a normal number, and how far it goes.
 POINTS, FAR = 40, 9.0
 # Work for the closed forms at a point.
@@ -79,11 +81,19 @@ def bias_of_spread(region: StraightRegion, sigma: float) -> float:
         row = row @ kernel.onward
     if strip.first > 1:
         mean += _root_of_free(strip.first, strip.high + strip.fall)
-    look, work = strip.first, 0
-    while look < strip.last and float(row.sum()) * (top - bottom) >= NEGLIGIBLE * look:
+    look, work, quotient = strip.first, 0, 0.0
+    while look < strip.last and (alive := float(row.sum())) * (top - bottom) >= NEGLIGIBLE * look:
         total = np.maximum(heights + strip.fall * look, 0.0)
         mean += float(row @ (_next_root(total) / math.sqrt(look + 1.0) - np.sqrt(total / look)))
-        row, look, work = row @ kernel.onward, look + 1, work + len(heights) * (len(heights) + POINT_WORK)
+        look, work = look + 1, work + POINT_WORK * len(heights)
+        if quotient:
+            row = row * quotient
+        else:
+            after, work = row @ kernel.onward, work + len(heights) ** 2
+            share = float(after.sum()) / alive
+            # Once its shape no longer changes, a walk goes on with the same probability each time.
+            quotient = share if float(np.abs(after - share * row).sum()) < SETTLED * alive else 0.0
+            row = after
         if work > MOST_WORK:
             raise TooMuchWork(MOST_WORK, "multiplications")
     return sigma * (mean - 1.0)
