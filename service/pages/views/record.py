@@ -2,7 +2,7 @@
 
 import json
 from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from datetime import datetime
 from itertools import groupby, islice
 from xml.etree.ElementTree import Element
@@ -22,7 +22,7 @@ from service.pages.charts.walk import walk_drawing
 from service.pages.views.one_test import Facts, facts_of, promises_of
 from service.pages.views.picture import picture_of, views_of
 from service.pages.views.results import Result, columns_of, result_of, said
-from service.pages.views.saying import saying_of
+from service.pages.views.saying import decision_said
 from service.pages.views.telling import Figure, assumptions_for, figures_of, inference_for
 from service.pages.words import DONE, figure, percent
 from service.storage.reader import Reader
@@ -113,7 +113,7 @@ class Record:
 
 def record_of(reader: Reader, walks: Walks, test: SequentialTest, plan: Plan, now: datetime) -> Record:
     """Everything about a test as it was read."""
-    decided = saying_of(replace(test, disposition=None), plan)
+    decided = decision_said(test, plan)
     results = _results(reader, test, plan)
     estimates, estimates_note = _estimates(reader, test, plan)
     checks = assumptions_for(reader, test, plan)

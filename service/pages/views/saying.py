@@ -1,7 +1,7 @@
 """Where a test stands, in a sentence that needs no statistics to be understood."""
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from service.domain.observing import direction_of_rejection
 from service.domain.outlook import Ways, ways_of
@@ -41,6 +41,13 @@ def saying_of(test: SequentialTest, plan: Plan) -> Saying:
         return Saying(state.decision, SAID[state.decision], sentence, _notes(test))
     verb = "accepted" if state.decision is Decision.ACCEPT else "rejected"
     return Saying(state.decision, f"{SAID[state.decision]} the {what}", _decided(procedure, test, verb), _notes(test))
+
+
+def decision_said(test: SequentialTest, plan: Plan) -> Saying:
+    """The same of the decision alone, whatever was done with the subject since."""
+    if test.disposition is not None and not test.state.is_decided:
+        return Saying(test.state.decision, "No decision", "The test was closed before it had decided.", _notes(test))
+    return saying_of(replace(test, disposition=None), plan)
 
 
 def still_needed(ways: Ways, what: str) -> str:
