@@ -6,19 +6,16 @@ import signal
 import threading
 from collections.abc import AsyncIterator, Callable, Iterator
 from contextlib import asynccontextmanager, contextmanager
+from datetime import timedelta
 from types import FrameType
 
 from fastapi import FastAPI
 from starlette.middleware.cors import CORSMiddleware
+from starlette.staticfiles import StaticFiles
 
 from service.api import problems
 from service.api.access import AccessGuard
 from service.api.description import describe
-from service.api.hardening import CORS_ASKED, CORS_METHODS, CORS_SHOWN
-from service.api.metrics import Metrics
-from service.api.parts import Computers, Parts
-from service.api.rates import Rates
-from service.api.requests import RequestId, accounts
 from service.api.routes import (
     acts,
     administration,
@@ -28,22 +25,39 @@ from service.api.routes import (
     history,
     inference,
     metrics,
+    notices,
     observations,
     plans,
     simulations,
     subjects,
     tests,
 )
-from service.api.simulations import Simulations
-from service.api.streams import Streams
 from service.api.unchanged import UnchangedTests
+from service.domain.notices import Schedule
 from service.ingest.road import Clock, Road, utc_now
 from service.logs import set_up_log
+from service.notices.courier import Courier
+from service.notices.resolving import Resolve, Resolver
+from service.notices.sender import Sender
+from service.pages.rendering import STATIC
+from service.pages.routes import acts as page_acts
+from service.pages.routes import design as page_design
+from service.pages.routes import drawings, live, one_test, record, registering, signing
+from service.pages.routes import plans as page_plans
+from service.pages.routes import tests as all_tests
 from service.settings import Settings, read_settings
 from service.storage.engine import create_engine_for
 from service.storage.migrate import check_schema
 from service.storage.reader import Reader
 from service.storage.watching import Watcher
+from service.web.hardening import CORS_ASKED, CORS_METHODS, CORS_SHOWN
+from service.web.metrics import Metrics
+from service.web.parts import Computers, Parts
+from service.web.rates import Rates
+from service.web.requests import RequestId, accounts
+from service.web.simulations import Simulations
+from service.web.streams import Streams
+from service.web.walks import Walks
 
 # Exact computations that run at once; more wait.
 COMPUTERS, MOST_WAITING = 2, 8
@@ -90,6 +104,19 @@ def at_a_signal_to_end(act: Callable[[], object]) -> Iterator[None]:
             signal.signal(number, handler)
 
 
+def sender_for(settings: Settings, road: Road, reader: Reader, resolve: Resolve, clock: Clock) -> Sender:
+    """The sender of notices as the settings want it."""
+    return Sender(
+        road,
+        reader.notices,
+        Courier(settings.notices_allowed, settings.notice_timeout_seconds, resolve),
+        clock,
+        Schedule(settings.notice_attempts, settings.notice_wait_seconds),
+        timeout_seconds=settings.notice_timeout_seconds,
+        keep=timedelta(days=settings.notice_keep_days),
+    )
+
+
 def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     """
     The service as an ASGI application; it opens its database when it starts.
@@ -97,21 +124,33 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     Raises:
         SchemaMismatch: At start, when the database has another schema than this version knows.
     """
-    figures = Metrics()
+    figures, rates = Metrics(), Rates(settings.rate_limit, settings.rate_burst)
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
         engine = create_engine_for(settings.database_url)
         check_schema(engine)
-        computers = Computers(COMPUTERS, MOST_WAITING)
-        road = Road(engine, clock, settings.queue_limit, settings.group_limit, settings.queue_bytes, figures)
+        computers, resolver = Computers(COMPUTERS, MOST_WAITING), Resolver()
         streams, loop = Streams(settings.stream_limit, figures.streaming), asyncio.get_running_loop()
+        road = Road(
+            engine,
+            clock,
+            settings.queue_limit,
+            settings.group_limit,
+            settings.queue_bytes,
+            figures,
+            on_notices=lambda: loop.call_soon_threadsafe(sender.wake),
+        )
         watcher = Watcher(engine, lambda: loop.call_soon_threadsafe(streams.wake))
         simulating = Simulations(computers)
         reader, check = Reader(engine), lambda: check_schema(engine)
-        app.state.parts = Parts(settings, reader, road, clock, check, computers, streams, simulating, figures)
+        sender = sender_for(settings, road, reader, resolver, clock)
+        app.state.parts = Parts(
+            settings, reader, road, clock, check, computers, streams, simulating, figures, rates, Walks()
+        )
         road.start()
         watcher.start()
+        sender.start()
         try:
             with at_a_signal_to_end(lambda: loop.call_soon_threadsafe(streams.stop)):
                 yield
@@ -119,6 +158,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
             streams.stop()
             simulating.stop()
             await asyncio.to_thread(watcher.stop)
+            await sender.stop()
             await road.stop()
             computers.stop()
             engine.dispose()
@@ -136,7 +176,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     )
     problems.install(app)
     app.add_middleware(UnchangedTests)
-    app.add_middleware(AccessGuard, rates=Rates(settings.rate_limit, settings.rate_burst))
+    app.add_middleware(AccessGuard, rates=rates)
     if settings.origins:
         app.add_middleware(
             CORSMiddleware,
@@ -145,7 +185,9 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
             allow_headers=CORS_ASKED,
             expose_headers=CORS_SHOWN,
         )
-    app.add_middleware(RequestId, account=accounts(figures, writes_lines=settings.access_log))
+    app.add_middleware(
+        RequestId, failed=problems.internal_error, account=accounts(figures, writes_lines=settings.access_log)
+    )
     for module in (
         plans,
         characteristics,
@@ -158,10 +200,25 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         subjects,
         events,
         administration,
+        notices,
         health,
         metrics,
     ):
         app.include_router(module.router)
     app.include_router(plans.standards_router)
+    for pages in (
+        signing,
+        all_tests,
+        one_test,
+        page_acts,
+        drawings,
+        record,
+        page_plans,
+        page_design,
+        registering,
+        live,
+    ):
+        app.include_router(pages.router)
+    app.mount("/static", StaticFiles(directory=STATIC), name="static")
     app.openapi = describe(app)  # type: ignore[method-assign]
     return app

@@ -60,6 +60,7 @@ def set_up_log(settings: Settings) -> None:
     handler.setFormatter(FORMATTERS[settings.log_format]())
     logging.basicConfig(level=settings.log_level, handlers=[handler])
     logging.getLogger("alembic").setLevel(logging.WARNING)  # it would speak at every look at the schema
+    logging.getLogger("httpx").setLevel(logging.WARNING)  # it would write down where each notice goes
 
 
 def _moment(record: logging.LogRecord) -> str:

@@ -6,6 +6,8 @@ from typing import Literal
 from pydantic import Field, ValidationError, field_validator
 from pydantic_settings import BaseSettings, SettingsConfigDict
 
+from service.domain.addresses import Allowed
+
 _ORIGIN = re.compile(r"https?://[a-z0-9.-]+(:[0-9]{1,5})?|https?://\[[0-9a-f:]+\](:[0-9]{1,5})?")
 
 
@@ -31,7 +33,14 @@ class Settings(BaseSettings):
     rate_limit: float = Field(0.0, ge=0.0, le=1e6, description="Requests a second of one key; 0 for any number.")
     rate_burst: int = Field(100, ge=1, le=10**6, description="Requests of one key at once, before the rate counts.")
     cors_origins: str = Field("", description="Origins, with commas between, whose pages may ask.")
+    session_hours: float = Field(10.0, gt=0.0, le=168.0, description="How long somebody stays signed in on the pages.")
     heartbeat_seconds: float = Field(15.0, ge=1.0, le=30.0, description="Between signs of life on a quiet stream.")
+    notice_plain_http: bool = Field(default=False, description="Receivers of notices may be addressed by plain HTTP.")
+    notice_private_targets: bool = Field(default=False, description="Notices may go to private addresses.")
+    notice_timeout_seconds: float = Field(10.0, ge=0.1, le=300.0, description="Longest time for one attempt.")
+    notice_attempts: int = Field(12, ge=1, le=1000, description="Attempts before a notice is dead.")
+    notice_wait_seconds: float = Field(5.0, ge=0.01, le=3600.0, description="Wait after a notice's first attempt.")
+    notice_keep_days: float = Field(30.0, gt=0.0, le=36500.0, description="How long a delivered notice is kept.")
     log_format: Literal["plain", "json"] = Field("plain", description="Form of the log.")
     access_log: bool = Field(default=True, description="One line for each request.")
     metrics_open: bool = Field(default=False, description="Show /metrics without a key.")
@@ -50,6 +59,11 @@ class Settings(BaseSettings):
     def origins(self) -> list[str]:
         """The origins, one by one."""
         return origins_in(self.cors_origins)
+
+    @property
+    def notices_allowed(self) -> Allowed:
+        """Where notices may go, beyond HTTPS to public addresses."""
+        return Allowed(self.notice_plain_http, self.notice_private_targets)
 
 
 class BadSettings(Exception):

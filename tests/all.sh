@@ -9,6 +9,12 @@ rm -rf .venv-tests
 python3 -m venv .venv-tests
 .venv-tests/bin/python -m pip install --quiet --disable-pip-version-check -c .ci/constraints.txt --editable '.[test]'
 export PATH="$PWD/.venv-tests/bin:$PATH"
+# The pages are tried in a real browser.
+if [ -z "${SPRT_TEST_BROWSER:-}" ] && ! command -v chromium chromium-browser google-chrome >/dev/null; then
+  [ "$(id -u)" = 0 ] && command -v apt-get >/dev/null || { echo "Install Chromium, or name a browser: SPRT_TEST_BROWSER" >&2; exit 1; }
+  echo "== installing Chromium"
+  { apt-get update -qq && DEBIAN_FRONTEND=noninteractive apt-get install -y -qq --no-install-recommends chromium; } >/dev/null
+fi
 unset PYTHONDONTWRITEBYTECODE # the tests start the program some hundred times
 
 echo "== style"

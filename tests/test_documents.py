@@ -4,6 +4,7 @@ import json
 import os
 import shutil
 import subprocess
+import time
 import tomllib
 from pathlib import Path
 from typing import Any
@@ -13,12 +14,14 @@ import yaml
 from typer.main import get_command
 
 from service.cli import app as command_line
+from service.domain.notices import signature_of
+from service.domain.receivers import secret_of
 from service.settings import Settings
 from tests.documents import DEVELOPERS, README, TOP, blocks
 from tests.running import command, running
 
 # These differ from run to run; the README shows those of one run.
-PASSING = {"created_at", "registered_at", "updated_at", "at"}
+PASSING = {"created_at", "registered_at", "updated_at", "at", "id", "secret"}
 
 
 def stable(document: Any) -> Any:
@@ -34,17 +37,40 @@ def test_the_requests_have_the_answers_that_the_readme_shows(tmp_path: Path) -> 
     assert shutil.which("curl"), "curl is needed to run the README's requests"
     requests = [block for block in blocks(README, "sh") if block.startswith("curl")]
     shown = [json.loads(block) for block in blocks(README, "json")]
-    assert len(requests) == len(shown) == 4
+    assert len(requests) == len(shown) == 5
     with running(tmp_path, key_names="me") as service:
+        made = command(
+            *("keys", "create", "--role", "administrator", "--name", "plant-it"), database_url=service.database_url
+        )
+        keys = {"SPRT_KEY": service.keys["engineer"], "SPRT_ADMIN_KEY": made.stdout.strip()}
         for request, answer in zip(requests, shown, strict=True):
             done = subprocess.run(
                 ["bash", "-c", request.replace("localhost:8000", service.url)],
-                env={**os.environ, "SPRT_KEY": service.keys["engineer"]},
+                env={**os.environ, **keys},
                 capture_output=True,
                 text=True,
                 check=True,
             )
             assert stable(json.loads(done.stdout)) == stable(answer)
+
+
+def test_the_readme_shows_how_to_verify_a_notice() -> None:
+    """Its own lines are run; `tests/notices` signs and verifies apart from each other."""
+    (lines,) = blocks(README, "python")
+    shown: dict[str, Any] = {}
+    exec(lines, shown)
+    secret, body, now = secret_of(b"x" * 32), '{"é": 1}', int(time.time())
+    signature = signature_of(secret, "n1", now, body)
+    headers = {"webhook-id": "n1", "webhook-timestamp": str(now), "webhook-signature": f"v1,other {signature}"}
+    is_genuine = shown["is_genuine"]
+    assert is_genuine(secret, headers, body.encode())
+    assert not is_genuine(secret_of(b"y" * 32), headers, body.encode())
+    assert not is_genuine(secret, headers, body.encode() + b" ")
+    for name, other in (("webhook-id", "n2"), ("webhook-timestamp", str(now + 1)), ("webhook-signature", "v1,")):
+        assert not is_genuine(secret, {**headers, name: other}, body.encode()), name
+    old = {**headers, "webhook-timestamp": "1614265330"}
+    old["webhook-signature"] = signature_of(secret, "n1", 1614265330, body)
+    assert not is_genuine(secret, old, body.encode())
 
 
 def test_the_design_that_the_readme_shows_is_what_the_command_prints(tmp_path: Path) -> None:

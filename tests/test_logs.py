@@ -9,9 +9,9 @@ from pathlib import Path
 
 import httpx
 
-from service.api.metrics import Metrics
-from service.api.requests import Answered, accounts
 from service.logs import REQUEST_ID, JsonFormatter, PlainFormatter, shown
+from service.web.metrics import Metrics
+from service.web.requests import Answered, accounts
 from tests.api.examples import SEAL, Namer, with_test
 from tests.running import running
 

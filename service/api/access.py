@@ -11,15 +11,15 @@ from fastapi import Depends, Request
 from fastapi.security.utils import get_authorization_scheme_param
 from starlette.types import ASGIApp, Receive, Scope, Send
 
-from service.api.parts import Parts, looking_up
 from service.api.problems import RequestProblem, response, response_to
-from service.api.rates import Rates
-from service.domain.access import AccessKey, Role, digest_of
+from service.domain.access import AccessKey, Role
 from service.domain.errors import DomainError
 from service.settings import Settings
+from service.web.keys import valid_key
+from service.web.parts import Parts
+from service.web.rates import Rates
 
 GUARDED, METRICS = "/v1", "/metrics"
-LONGEST_SECRET = 200
 
 
 class AccessGuard:
@@ -103,7 +103,4 @@ def _is_guarded(path: str, settings: Settings) -> bool:
 
 async def _key_of(request: Request, parts: Parts) -> AccessKey | None:
     scheme, secret = get_authorization_scheme_param(request.headers.get("authorization"))
-    if scheme.lower() != "bearer" or not secret or len(secret) > LONGEST_SECRET:
-        return None
-    key = await looking_up(parts, lambda: parts.reader.key_with_digest(digest_of(secret)))
-    return key if key is not None and key.is_valid(parts.clock()) else None
+    return await valid_key(parts, secret) if scheme.lower() == "bearer" else None

@@ -13,6 +13,7 @@ from service.api.decoding import decoded
 from service.api.problems import RequestProblem
 from service.domain.names import is_name
 from service.settings import Settings
+from service.web.bodies import BodyTooLarge, BodyTooSlow, body_within
 
 # What decodes within a millisecond is not worth a thread.
 LARGE_BODY_BYTES = 65_536
@@ -59,24 +60,13 @@ class StrictRequest(Request):
             RequestProblem: It is too large, or takes too long.
         """
         try:
-            async with asyncio.timeout(settings.body_seconds):
-                return await self._read(settings.max_body_bytes)
-        except TimeoutError:
+            return await body_within(self, settings.max_body_bytes, settings.body_seconds)
+        except BodyTooSlow:
             detail = f"The body did not arrive within {settings.body_seconds:g} seconds; nothing was stored."
             raise RequestProblem("body-too-slow", detail, headers={"Connection": "close"}) from None
-
-    async def _read(self, limit: int) -> bytes:
-        detail = f"A body may have at most {limit} bytes."
-        announced = self.headers.get("content-length", "0")
-        if announced.isdigit() and int(announced) > limit:
-            raise RequestProblem("body-too-large", detail, headers={"Connection": "close"})
-        chunks, size = [], 0
-        async for chunk in self.stream():
-            size += len(chunk)
-            if size > limit:
-                raise RequestProblem("body-too-large", detail, headers={"Connection": "close"})
-            chunks.append(chunk)
-        return b"".join(chunks)
+        except BodyTooLarge:
+            detail = f"A body may have at most {settings.max_body_bytes} bytes."
+            raise RequestProblem("body-too-large", detail, headers={"Connection": "close"}) from None
 
 
 class StrictRoute(APIRoute):

@@ -5,11 +5,11 @@ from typing import Annotated
 from pydantic import BaseModel, ConfigDict, Field
 
 from service.api.problems import RequestProblem
-from service.api.schemas.common import Label, Name, Text
 from service.domain.errors import Fault
 from service.domain.sequential_test import SubjectKind
 from service.domain.state import Decision
 from service.storage.reader import TestFilters
+from service.web.fields import Label, Name, Text
 
 
 class FiltersQuery(BaseModel):

@@ -79,6 +79,13 @@ _TYPES = (
     ),
     ProblemType("key-name-taken", 409, "The name of the access key is taken", "A valid access key is named 'line-2'."),
     ProblemType(
+        "receiver-name-taken", 409, "The name of the receiver is taken", "A receiver is already named 'line-2'."
+    ),
+    ProblemType(
+        "too-many-receivers", 409, "There are as many receivers as there may be", "There are 50 receivers; remove one."
+    ),
+    ProblemType("notice-waiting", 409, "The notice waits to be sent", "The notice waits to be sent, or is being sent."),
+    ProblemType(
         "unit-repeated",
         409,
         "A unit was counted already",
@@ -142,6 +149,9 @@ _TYPES = (
     ),
     ProblemType("invalid-key", 422, "The access key cannot be made", "The expiry must lie in the future."),
     ProblemType(
+        "invalid-receiver", 422, "The receiver cannot be registered", "The receiver is refused; see errors.", "/address"
+    ),
+    ProblemType(
         "invalid-question",
         422,
         "The plan cannot answer this",
@@ -184,6 +194,7 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.InvalidCorrection: "invalid-correction",
     errors.InvalidDisposition: "invalid-disposition",
     errors.InvalidKey: "invalid-key",
+    errors.InvalidReceiver: "invalid-receiver",
     errors.InvalidQuestion: "invalid-question",
     errors.ComputationTooLarge: "computation-too-large",
     errors.IdempotencyKeyReused: "idempotency-key-reused",
@@ -192,9 +203,14 @@ OF_ERRORS: Mapping[type[DomainError], str] = {
     errors.UnknownKey: "not-found",
     errors.UnknownSimulation: "not-found",
     errors.UnknownSubject: "not-found",
+    errors.UnknownReceiver: "not-found",
+    errors.UnknownNotice: "not-found",
     errors.PlanDiffers: "plan-differs",
     errors.TestDiffers: "test-differs",
     errors.KeyNameTaken: "key-name-taken",
+    errors.ReceiverNameTaken: "receiver-name-taken",
+    errors.TooManyReceivers: "too-many-receivers",
+    errors.NoticeWaiting: "notice-waiting",
     errors.RepeatedUnits: "unit-repeated",
     errors.TestIsClosed: "test-closed",
     errors.SubmissionInProgress: "in-progress",
@@ -252,6 +268,12 @@ def response(
 def pointer_to(location: Sequence[str | int]) -> str:
     """A JSON pointer (RFC 6901) to an element of a body."""
     return "".join("/" + str(part).replace("~", "~0").replace("/", "~1") for part in location)
+
+
+def internal_error(request_id: str) -> JSONResponse:
+    """What is said of an unexpected error."""
+    detail = f"The log of the service has the reason, under the request id {request_id}."
+    return response("internal-error", detail)
 
 
 def install(app: FastAPI) -> None:

@@ -6,14 +6,14 @@ limits, and the version alone decides. It stands inside of the access guard; wha
 the routes.
 """
 
-from fastapi import Request
+from fastapi import Request, Response
 from starlette.types import ASGIApp, Receive, Scope, Send
 
 from service.api.conditional import etag, not_modified
-from service.api.parts import looking_up, parts_for
 from service.api.problems import response_to
 from service.domain.errors import DomainError
 from service.domain.names import is_name
+from service.web.parts import Parts, looking_up, parts_for
 
 TESTS, TEMPLATE = "/v1/tests/", "/v1/tests/{key}"
 
@@ -43,3 +43,11 @@ class UnchangedTests:
         if unchanged is not None:
             scope["state"]["template"] = TEMPLATE
         await (unchanged or self._app)(scope, receive, send)
+
+
+async def unchanged_test(parts: Parts, key: str, request: Request) -> Response | None:
+    """The 304 answer where the caller has this version of the test already, from one look-up; else None."""
+    if "if-none-match" not in request.headers:
+        return None
+    version = await looking_up(parts, lambda: parts.reader.version(key))
+    return None if version is None else not_modified(request, etag(version))

@@ -1,8 +1,8 @@
 """
 A factory of its own: the Brackwater pump works, one morning.
 
-Four questions of four families are asked at once; their results are invented with a fixed seed and posted one small
-submission after another, as testers would.
+Six questions of four families are asked at once; their results are invented with a fixed seed and posted one small
+submission after another, as testers would. Four are decided; one lot waits for more units, and one lathe goes on.
 """
 
 import itertools
@@ -30,11 +30,18 @@ if TYPE_CHECKING:
 
 SEED = 20_413
 START_LIMIT_SECONDS = 30.0
+# Between two results of what goes on while people look.
+PACE_SECONDS = 4.0
 
 
 @dataclass(frozen=True)
 class Story:
-    """One question of the factory: its plan, its subject, and where its results come from."""
+    """
+    One question of the factory: its plan, its subject, and where its results come from.
+
+    Attributes:
+        pause_after: Results after which it is left as it stands, for people to look at; None to go on to the decision.
+    """
 
     plan: dict[str, Any]
     key: str
@@ -43,6 +50,7 @@ class Story:
     question: str
     unit: str
     results: Iterator[list[dict[str, Any]]]
+    pause_after: int | None = None
 
 
 def demo(
@@ -63,33 +71,38 @@ def demo(
         with _serving(port, database_url) as process:
             _wait(url, process)
             client = ServiceClient(url, key)
-            _play(console, client, pause_seconds=0.0 if quick else 0.04)
+            lathe = _play(console, client, pause_seconds=0.0 if quick else 0.04)
             if not quick:
-                _leave_up(console, url, key, process)
+                _leave_up(console, client, (url, key), process, lathe)
 
 
-def _play(console: "Console", client: "ServiceClient", pause_seconds: float) -> None:
-    """Register everything, then post in turn until all is decided."""
+def _play(console: "Console", client: "ServiceClient", pause_seconds: float) -> Story:
+    """Register everything, then post in turn until all is decided but what stays open; the story that goes on."""
     console.print(
-        "[bold]The Brackwater pump works, one morning.[/bold] Four questions, agreed risks, results as they come.\n"
+        "[bold]The Brackwater pump works, one morning.[/bold] Six questions, agreed risks, results as they come.\n"
     )
     running = _stories(random.Random(SEED))
+    *_, lathe = running
     for story in running:
         client.post("/v1/plans", story.plan)
         registration = {"key": story.key, "plan": story.plan["name"], "subject": story.subject, "labels": story.labels}
         client.post("/v1/tests", registration)
         console.print(f"  [cyan]{story.key:<12}[/cyan] {story.question}")
     console.print()
-    for turn in itertools.count(1):
+    turns = itertools.count(1)
+    while running:
+        turn = next(turns)
         for story in list(running):
             body = {"observations": next(story.results)}
             state = client.post(f"/v1/tests/{story.key}/observations", body, idempotency_key=f"turn-{turn}")
             if state["decision"] != "continue":
                 running.remove(story)
                 _tell(console, story, state)
-        if not running:
-            return
+            elif turn == story.pause_after:
+                running.remove(story)
+                console.print(f"[bold]{'open':>9}[/bold]  {story.key}  after {turn} {story.unit}, still to be decided")
         time.sleep(pause_seconds)
+    return lathe
 
 
 def _tell(console: "Console", story: Story, state: dict[str, Any]) -> None:
@@ -154,6 +167,33 @@ def _stories(source: random.Random) -> list[Story]:
             question="Lathe 5: still at 240.00 mm, or drifted to 240.15 mm?",
             unit="shafts",
             results=_one_by_one({"value": round(source.gauss(240.13, 0.2), 3)} for _ in _for_ever()),
+        ),
+        Story(
+            plan={"name": "bearing-noise", "family": "bernoulli", "h0": 0.01, "h1": 0.08, **risks},
+            key="bearings-12",
+            subject={"kind": "lot", "name": "Bearings 12"},
+            labels={"cell": "assembly"},
+            question="Bearings 12: 1 % noisy is good, 8 % bad.",
+            unit="bearings",
+            results=_one_by_one({"value": 0} for _ in _for_ever()),
+            pause_after=11,
+        ),
+        Story(
+            plan={
+                "name": "shaft-roundness",
+                "family": "normal",
+                "h0": 2.0,
+                "h1": 2.4,
+                "known": {"sigma": 1.6},
+                **risks,
+            },
+            key="lathe-6",
+            subject={"kind": "experiment", "name": "Lathe 6, roundness in µm"},
+            labels={"cell": "turning"},
+            question="Lathe 6: still at 2.0 µm out of round, or worn to 2.4 µm?",
+            unit="shafts",
+            results=_one_by_one({"value": round(source.gauss(2.2, 1.6), 2)} for _ in _for_ever()),
+            pause_after=30,
         ),
     ]
 
@@ -233,13 +273,33 @@ def _wait(url: str, process: "subprocess.Popen[bytes]") -> None:
     raise fail("The service did not start; is the port free?")
 
 
-def _leave_up(console: "Console", url: str, key: str, process: "subprocess.Popen[bytes]") -> None:
-    console.print("\nThe service stays up until Ctrl-C, with the key of an engineer. Look at:\n")
+def _leave_up(
+    console: "Console", client: "ServiceClient", door: tuple[str, str], process: "subprocess.Popen[bytes]", lathe: Story
+) -> None:
+    """Until Ctrl-C; the lathe goes on, so that there is something to watch. The door is an address and a key."""
+    url, key = door
+    console.print(
+        "\nThe service stays up until Ctrl-C. Look at it in a browser and sign in with this engineer's key:\n"
+    )
+    console.print(f"  {url}/", soft_wrap=True, highlight=False)
+    console.print(f"  {key}", soft_wrap=True, highlight=False)
+    console.print("\nBearings 12 is not decided: may it be accepted, and how many more does it take? Lathe 6 goes on.")
+    console.print("\nOr ask it as a program would:\n")
     header = f'-H "Authorization: Bearer {key}"'
-    for path in ("/v1/tests", "/v1/tests/motor-mk4", "/v1/tests/glands-0713/path?points=20", "/v1/summary"):
+    for path in ("/v1/tests/bearings-12", "/v1/tests/glands-0713/path?points=20", "/v1/summary"):
         console.print(f"  curl -s {header} '{url}{path}'", soft_wrap=True, highlight=False)
     console.print(f"\nThe whole interface is described at {url}/openapi.json", highlight=False)
     try:
+        _go_on(client, process, lathe)
         process.wait()
     except KeyboardInterrupt:
         console.print("\nStopped; the temporary database is gone.")
+
+
+def _go_on(client: "ServiceClient", process: "subprocess.Popen[bytes]", story: Story) -> None:
+    """One more result every few seconds, until the decision or the end of the service."""
+    while process.poll() is None:
+        state = client.post(f"/v1/tests/{story.key}/observations", {"observations": next(story.results)})
+        if state["decision"] != "continue":
+            return
+        time.sleep(PACE_SECONDS)

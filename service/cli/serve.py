@@ -22,11 +22,11 @@ def serve(
     """Start the service. A new SQLite file sets itself up; a schema that this version does not know is refused."""
     import uvicorn
 
-    from service.api.metrics import FOLDER_VARIABLE
     from service.app import create_app
     from service.logs import set_up_log
     from service.settings import read_settings
     from service.storage.engine import is_sqlite
+    from service.web.metrics import FOLDER_VARIABLE
 
     with clear_failures():
         settings = read_settings()

@@ -6,25 +6,21 @@ stream that goes on past the decision is less selected by it. Of very long strea
 that counted, and then the first that came after them.
 """
 
-import json
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from service.domain.checks import UNUSUAL, Check, Supposition
 from service.domain.families import Increments
-from service.domain.families.base import Document, plural
+from service.domain.families.base import plural
+from service.domain.gathering import gathered
 from service.domain.procedure import Procedure
 from service.domain.state import State
 
 # Observations looked at: some 24 MB of numbers, and some seconds to decode and check.
 MOST_OBSERVATIONS = 1_000_000
-
-# Observations decoded together.
-PIECE = 1000
 
 NO_EFFECT = (
     "These checks have no effect on the decision, on the evidence or on the test; they are for people who judge "
@@ -154,9 +150,9 @@ def _gathered(
 ) -> tuple[Increments, NDArray[np.int64]]:
     """The observations of the stretch as one submission, and their sequences."""
     read, numbers = list[Increments](), list[NDArray[np.int64]]()
-    for piece_numbers, document in _in_pieces(bodies):
+    for sequences, document in gathered(bodies):
         read.append(procedure.family.read(document, procedure.known))
-        numbers.append(piece_numbers)
+        numbers.append(sequences)
     if not read:
         empty = np.zeros(0)
         return Increments(np.zeros(0, np.int64), empty, empty), np.zeros(0, np.int64)
@@ -169,24 +165,6 @@ def _gathered(
         carried=tuple(np.concatenate(sums)[kept] for sums in zip(*(piece.carried for piece in read), strict=True)),
     )
     return seen, sequences[kept]
-
-
-def _in_pieces(bodies: Iterable[tuple[int, str]]) -> Iterator[tuple[NDArray[np.int64], Document]]:
-    """Decoded, with small submissions of one form put together: reading each alone costs far more than reading many."""
-    form, gathered, numbers = "", list[Any](), list[NDArray[np.int64]]()
-    for first, body in bodies:
-        document = json.loads(body)
-        its_form = "values" if "values" in document else "observations"
-        if its_form == form and len(gathered) < PIECE:
-            gathered.extend(document[form])
-            numbers.append(np.arange(first, first + len(document[form])))
-            continue
-        if gathered:
-            yield np.concatenate(numbers), {form: gathered}
-        form, gathered = its_form, document[its_form]
-        numbers = [np.arange(first, first + len(gathered))]
-    if gathered:
-        yield np.concatenate(numbers), {form: gathered}
 
 
 def _with_stopping(check: Check) -> Check:

@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any
 
-from service.domain.access import AccessKey
+from service.domain.access import AccessKey, digest_of
 from service.domain.chain import EMPTY, Act, Entry, Head, link_of
 from service.domain.correcting import Correction, Piece, replayed, settled
 from service.domain.disposing import Disposition
@@ -24,12 +24,15 @@ from service.domain.history import (
     key_created,
     key_revoked,
     plan_created,
+    receiver_created,
+    receiver_removed,
     registered,
     submitted,
 )
 from service.domain.observing import observe
 from service.domain.plan import Plan, fingerprint_of
 from service.domain.procedure import Procedure, procedure_of
+from service.domain.receivers import Receiver
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
 
@@ -215,6 +218,7 @@ class Found:
     plans: Mapping[str, Plan]
     keys: Mapping[str, AccessKey]
     tests: frozenset[str]
+    receivers: Mapping[str, Receiver]
 
 
 class ServiceAudit:
@@ -222,8 +226,8 @@ class ServiceAudit:
 
     def __init__(self) -> None:
         self.head = EMPTY
-        self._counts = dict.fromkeys(("plans", "api_keys", "tests"), 0)
-        self._revoked: set[str] = set()
+        self._counts = dict.fromkeys(("plans", "api_keys", "tests", "receivers"), 0)
+        self._ended: dict[str, set[str]] = {"api_keys": set(), "receivers": set()}
 
     def follow(self, entries: Iterable[Entry], found: Found) -> None:
         """
@@ -237,7 +241,7 @@ class ServiceAudit:
             if not self._fits(entry, found):
                 raise Differs(f"{place('', entry)}: what it tells of is missing or not what was recorded")
 
-    def finish(self, head: Head, counts: Mapping[str, int], revoked: int) -> None:
+    def finish(self, head: Head, counts: Mapping[str, int], ended: Mapping[str, int]) -> None:
         """
         Compare the stored end of the chain, and how many things there are, with what was followed.
 
@@ -249,8 +253,10 @@ class ServiceAudit:
         for table, count in counts.items():
             if count != self._counts[table]:
                 raise Differs(f"{table}: {count} rows, and {self._counts[table]} are on record")
-        if revoked != len(self._revoked):
-            raise Differs(f"api_keys: {revoked} are revoked, and {len(self._revoked)} such acts are on record")
+        for table, count in ended.items():
+            if count != len(self._ended[table]):
+                word = "revoked" if table == "api_keys" else "removed"
+                raise Differs(f"{table}: {count} are {word}, and {len(self._ended[table])} such acts are on record")
 
     def _fits(self, entry: Entry, found: Found) -> bool:
         about = entry.details
@@ -262,14 +268,27 @@ class ServiceAudit:
         if entry.act is Act.TEST_REGISTERED:
             self._counts["tests"] += 1
             return about["test"] in found.tests
+        if entry.act in (Act.RECEIVER_CREATED, Act.RECEIVER_REMOVED):
+            receiver = found.receivers.get(about["id"])
+            return receiver is not None and self._fits_receiver(entry, receiver)
         key = found.keys.get(about["id"])
         if key is None:
             return False
         if entry.act is Act.KEY_CREATED:
             self._counts["api_keys"] += 1
             return _same(entry, key_created(key, entry.actor, None))
-        self._revoked.add(key.id)
+        self._ended["api_keys"].add(key.id)
         return key.revoked_at is not None and _same(entry, key_revoked(key, key.revoked_at, entry.actor, None))
+
+    def _fits_receiver(self, entry: Entry, receiver: Receiver) -> bool:
+        if entry.act is Act.RECEIVER_CREATED:
+            self._counts["receivers"] += 1
+            is_its_secret = receiver.secret is None or digest_of(receiver.secret) == receiver.fingerprint
+            has_one = (receiver.secret is None) == (receiver.removed_at is not None)
+            return has_one and is_its_secret and _same(entry, receiver_created(receiver, None))
+        self._ended["receivers"].add(receiver.id)
+        at = receiver.removed_at
+        return at is not None and _same(entry, receiver_removed(receiver, at, entry.actor, None))
 
 
 def entry_of(record: Record) -> Entry:

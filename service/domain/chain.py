@@ -33,6 +33,8 @@ class Act(StrEnum):
     TEST_REGISTERED = "test-registered"
     KEY_CREATED = "key-created"
     KEY_REVOKED = "key-revoked"
+    RECEIVER_CREATED = "receiver-created"
+    RECEIVER_REMOVED = "receiver-removed"
 
 
 @dataclass(frozen=True)

@@ -7,14 +7,15 @@ What can go wrong, without a word of HTTP.
     │   ├── InvalidTest
     │   ├── InvalidObservations
     │   ├── InvalidCorrection, InvalidDisposition
-    │   ├── InvalidKey
+    │   ├── InvalidKey, InvalidReceiver
     │   ├── InvalidQuestion
     │   ├── ComputationTooLarge
     │   └── IdempotencyKeyReused
     ├── Unknown                  there is no such thing
     │   ├── UnknownPlan, UnknownTest, UnknownKey, UnknownSimulation, UnknownSubject
+    │   ├── UnknownReceiver, UnknownNotice
     ├── Conflict                 not now, or not again
-    │   ├── PlanDiffers, TestDiffers, KeyNameTaken
+    │   ├── PlanDiffers, TestDiffers, KeyNameTaken, ReceiverNameTaken, TooManyReceivers, NoticeWaiting
     │   ├── RepeatedUnits, TestIsClosed, SubmissionInProgress, NotDecided, ChangesNothing
     ├── OutsideLimits            the access key is for other tests
     ├── RoleTooNarrow            the access key may not do this as things stand
@@ -89,6 +90,13 @@ class InvalidKey(Invalid):
         super().__init__(f"The key cannot be made: {rules}.", faults)
 
 
+class InvalidReceiver(Invalid):
+    """A receiver cannot be registered as asked."""
+
+    def __init__(self, faults: Sequence[Fault]) -> None:
+        super().__init__("The receiver is refused; see errors.", faults)
+
+
 class InvalidQuestion(Invalid):
     """What is asked about a plan lies outside what it can answer."""
 
@@ -154,6 +162,18 @@ class UnknownSubject(Unknown):
     thing = "subject"
 
 
+class UnknownReceiver(Unknown):
+    """No receiver of this name that is not removed."""
+
+    thing = "receiver"
+
+
+class UnknownNotice(Unknown):
+    """No notice of this id."""
+
+    thing = "notice"
+
+
 class Conflict(DomainError):
     """The request collides with what is stored."""
 
@@ -179,6 +199,27 @@ class KeyNameTaken(Conflict):
 
     def __init__(self, name: str) -> None:
         super().__init__(f"A valid access key is already named {name!r}; revoke it first or choose another name.")
+
+
+class ReceiverNameTaken(Conflict):
+    """A receiver carries this name."""
+
+    def __init__(self, name: str) -> None:
+        super().__init__(f"A receiver is already named {name!r}; remove it first or choose another name.")
+
+
+class TooManyReceivers(Conflict):
+    """There are as many receivers as the service tells."""
+
+    def __init__(self, limit: int) -> None:
+        super().__init__(f"There are {limit} receivers, and no more are told; remove one first.")
+
+
+class NoticeWaiting(Conflict):
+    """The notice waits to be sent already."""
+
+    def __init__(self, notice: str) -> None:
+        super().__init__(f"The notice {notice!r} waits to be sent, or is being sent; it needs no sending again.")
 
 
 class RepeatedUnits(Conflict):

@@ -11,6 +11,7 @@ from service.domain.chain import SERVICE, Act, Entry, Head, bound, shown
 from service.domain.correcting import Correction
 from service.domain.disposing import Disposition
 from service.domain.plan import Plan
+from service.domain.receivers import Receiver
 from service.domain.sequential_test import SequentialTest, Submission
 from service.domain.state import State, Sum
 
@@ -52,6 +53,25 @@ def key_created(key: AccessKey, actor: str, request_id: str | None) -> Entry:
 def key_revoked(key: AccessKey, at: datetime, actor: str, request_id: str | None) -> Entry:
     """The end of an access key."""
     return Entry(SERVICE, Act.KEY_REVOKED, at, actor, request_id, {"id": key.id, "name": key.name})
+
+
+def receiver_created(receiver: Receiver, request_id: str | None) -> Entry:
+    """A new receiver: where its notices go, and of which tests it is told; its secret is told by a digest alone."""
+    limits = receiver.limits
+    details = {
+        "id": receiver.id,
+        "name": receiver.name,
+        "address": receiver.address,
+        "fingerprint": receiver.fingerprint,
+        "subjects": [{"kind": subject.kind.value, "name": subject.name} for subject in limits.subjects],
+        "labels": {name: list(values) for name, values in limits.labels.items()},
+    }
+    return Entry(SERVICE, Act.RECEIVER_CREATED, receiver.created_at, receiver.created_by, request_id, details)
+
+
+def receiver_removed(receiver: Receiver, at: datetime, actor: str, request_id: str | None) -> Entry:
+    """The end of a receiver."""
+    return Entry(SERVICE, Act.RECEIVER_REMOVED, at, actor, request_id, {"id": receiver.id, "name": receiver.name})
 
 
 def decided(test: SequentialTest, before: State, actor: str, request_id: str | None, cause: Act) -> Entry:

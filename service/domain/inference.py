@@ -3,17 +3,19 @@
 import hashlib
 import math
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Any
 
 import numpy as np
 
-from service.domain.errors import ComputationTooLarge, InvalidQuestion
+from service.domain.errors import ComputationTooLarge
 from service.domain.families.base import ORIGIN, End, Start
+from service.domain.inferred import Inference, Kind, Looks
 from service.domain.observing import walk_from
 from service.domain.procedure import Procedure, procedure_of_document
 from service.domain.state import State, Sum
+from service.domain.studying import MEANINGS_OF_T, MEANINGS_OF_TWO_SIDES_OF_T, studied_inference
 from service.sequential.decision import Decision
 from service.sequential.double import Double, FloatArray
 from service.sequential.exact.characteristics import TooMuchWork
@@ -26,45 +28,6 @@ from service.sequential.tables import UnitTable
 Documents = Iterable[tuple[int, Mapping[str, Any]]]
 
 
-@dataclass(frozen=True)
-class Looks:
-    """
-    The looks that were taken up to the decision.
-
-    Attributes:
-        progress: Array of shape (looks,): units or exposure at each; compared by its digest.
-        step: How far apart they were, None where that differed; None for families watched in time too.
-        words: The rule for people.
-    """
-
-    progress: FloatArray = field(compare=False)
-    digest: str
-    step: float | None
-    words: str
-
-
-@dataclass(frozen=True)
-class Inference:
-    """
-    The figures after a decision; None where there is none, with the reason under the figure's name in `reasons`.
-
-    Attributes:
-        bias: Of the maximum-likelihood estimate, were its value the true parameter.
-        looks: Which looks the probabilities are over.
-    """
-
-    p_value: float
-    maximum_likelihood: float | None
-    median_unbiased: float | None
-    unbiased: float | None
-    level: float
-    lower: float | None
-    upper: float | None
-    bias: float | None
-    reasons: Mapping[str, str]
-    looks: str
-
-
 IN_TIME = "The test was watched in continuous time, so nothing depends on how it was reported."
 ROWS = "The rows of the table up to the decision; how observations were grouped between them does not matter."
 EACH = "The test was looked at after each observation, as it was reported."
@@ -73,6 +36,10 @@ IN_ARMS = (
     "The test was looked at after each measurement; in which arms they came, and in what order, is taken as given."
 )
 
+NO_MODEL = (
+    "The family score brings its own evidence and no model of the observations: there is no parameter to estimate, and "
+    "no probability of other outcomes."
+)
 NO_ESTIMATE = "There is no maximum-likelihood estimate after this outcome."
 UNEVEN = "Depends on the groups or exposures that would have come later, and those so far were not alike."
 OPEN_END = "No outcome lies further {way} than this one, so this end is that of the parameter's range{beyond}."
@@ -113,6 +80,13 @@ ENDLESS_TWO_SIDED = {
     "ordering": "From large totals to small ones: rejections above, the earliest first; then tests that go on for "
     "ever; then rejections below, the latest first.",
 }
+# Plans that bring their own evidence.
+BOUNDED = {
+    "p_value": "A bound: if H0 were true, the sum would ever come to what it is with at most this probability (Ville "
+    "1939). It holds as far as the exponential of each increment has a conditional mean of at most 1 under H0, as that "
+    "of a likelihood ratio has.",
+    "overrun": MEANINGS["overrun"],
+}
 WITHOUT_FAILURE = " Tests that end without a failure have no such estimate and are left out."
 AT_ONCE = "The test was decided before any exposure had passed; that has probability zero whatever the parameter."
 
@@ -129,9 +103,13 @@ def inference_of(document: str, state: State, documents: Documents, level: float
 
     Raises:
         ComputationTooLarge: The computation needs more steps than are allowed.
-        InvalidQuestion: The family has no inference.
     """
-    looks = looks_of(procedure_of_document(document), state, documents)
+    procedure = procedure_of_document(document)
+    if not procedure.family.has_model:
+        return _bounded(state, level)
+    looks = looks_of(procedure, state, documents)
+    if procedure.family.is_invariant:
+        return _studied(document, looks, state.carried, state.decision, level)
     return _inference(document, looks, state.total, state.decision, level)
 
 
@@ -144,6 +122,9 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
     """
     decided, family = state.decided, procedure.family
     assert decided is not None
+    if family.looks_at_arms:
+        in_b = _arms_reported(procedure, decided.sequence, documents)
+        return replace(_looks(np.arange(1.0, len(in_b) + 1.0), None, IN_ARMS), in_b=in_b)
     if family.is_watched_in_time:
         return _looks(np.array([state.exposure.value]), None, IN_TIME)
     if isinstance(procedure.region, UnitTable):
@@ -157,7 +138,7 @@ def looks_of(procedure: Procedure, state: State, documents: Documents) -> Looks:
     progress, steps = _reported(procedure, decided.sequence, documents)
     # What adds nothing to the progress, such as a pair that agrees, is no look.
     progress, steps = progress[steps > 0.0], steps[steps > 0.0]
-    if family.carries:
+    if family.carries and family.has_exposure:
         return _looks(progress, None, IN_ARMS)
     is_even = bool(np.all(steps == steps[0]))
     return _looks(progress, float(steps[0]) if is_even else None, EACH if is_even and steps[0] == 1.0 else TAKEN)
@@ -189,6 +170,17 @@ def _reported(procedure: Procedure, last: int, documents: Documents) -> tuple[Fl
     return np.concatenate(progress), np.concatenate(steps)
 
 
+def _arms_reported(procedure: Procedure, last: int, documents: Documents) -> tuple[float, ...]:
+    """For each measurement up to the deciding one 1 where it came in b, else 0."""
+    in_b: list[float] = []
+    for first, document in documents:
+        if first > last:
+            break
+        count_of_b = procedure.family.read(document, procedure.known).carried[procedure.family.carries.index("count_b")]
+        in_b.extend(count_of_b[: last + 1 - first].tolist())
+    return tuple(in_b)
+
+
 def _looks(progress: FloatArray, step: float | None, words: str) -> Looks:
     return Looks(progress, hashlib.sha256(progress.tobytes()).hexdigest(), step, words)
 
@@ -198,13 +190,24 @@ def _inference(document: str, looks: Looks, total: Sum, decision: Decision, leve
     return inference_at(procedure_of_document(document), looks, total, decision, level)
 
 
+@lru_cache(maxsize=256)
+def _studied(document: str, looks: Looks, carried: tuple[Sum, ...], decision: Decision, level: float) -> Inference:
+    return studied_inference(procedure_of_document(document), looks, carried, decision, level)
+
+
+def _bounded(state: State, level: float) -> Inference:
+    """What Ville's inequality says of evidence whose law nobody knows: a bound of the p-value."""
+    names = ("maximum_likelihood", "median_unbiased", "unbiased", "lower", "upper", "bias_of_maximum_likelihood")
+    bound, reasons = math.exp(-max(0.0, state.log_likelihood_ratio)), dict.fromkeys(names, NO_MODEL)
+    return Inference(bound, None, None, None, level, None, None, None, reasons, EACH, Kind.BOUND)
+
+
 def inference_at(procedure: Procedure, looks: Looks, total: Sum, decision: Decision, level: float) -> Inference:
     """
     The figures for a test that ended at the last of these looks, at this total and with this decision.
 
     Raises:
         ComputationTooLarge: The computation needs more steps than are allowed.
-        InvalidQuestion: The family has no inference.
     """
     standing = Start(float(looks.progress[-1]), total.value)
     if standing.progress == 0.0:
@@ -234,10 +237,7 @@ def _outcome(procedure: Procedure, looks: Looks, total: Sum, decision: Decision)
     if procedure.is_two_sided:
         where = Double(looks.progress[-1:], np.zeros(1)), Double(np.array([total.high]), np.array([total.low]))
         is_above = bool(region.sides(*where)[0] >= INSIDE)
-    outcome = procedure.family.outcome(region, End(looks.progress, height, is_above), procedure.known)
-    if outcome is None:
-        raise InvalidQuestion(procedure.family.no_inference)
-    return outcome
+    return procedure.family.outcome(region, End(looks.progress, height, is_above), procedure.known)
 
 
 @dataclass(frozen=True)
@@ -328,8 +328,12 @@ def meanings_of(document: str, level: float) -> dict[str, str]:
     """What each figure means, in a sentence."""
     procedure = procedure_of_document(document)
     family, texts = procedure.family, dict(MEANINGS)
-    if procedure.is_two_sided:
+    if not family.has_model:
+        return dict(BOUNDED)
+    if procedure.has_two_directions:
         texts |= TWO_SIDED
+    if family.is_invariant:
+        texts |= MEANINGS_OF_T | (MEANINGS_OF_TWO_SIDES_OF_T if procedure.has_two_directions else {})
     if procedure.may_go_on_for_ever:
         texts |= ENDLESS | (ENDLESS_TWO_SIDED if procedure.is_two_sided else {})
     words = {"parameter": family.parameter, "level": f"{100.0 * level:g} %", "rest": f"{100.0 - 100.0 * level:g} %"}

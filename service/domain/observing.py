@@ -67,21 +67,23 @@ def observe(procedure: Procedure, state: State, document: Mapping[str, Any], at:
         InvalidObservations: An observation cannot be right; the fault names it.
     """
     increments = procedure.family.read(document, procedure.known)
-    for piece in _pieces(procedure, increments):
-        state = _after(procedure, state, piece, at)
+    for _, part in parts_of(procedure, increments):
+        state = _after(procedure, state, part, at)
     return state
 
 
-def _pieces(procedure: Procedure, increments: Increments) -> Iterator[Increments]:
-    """A long submission in parts where each look is dear: what comes after the decision need not be looked at."""
+def parts_of(procedure: Procedure, increments: Increments, begin: int = 0) -> Iterator[tuple[int, Increments]]:
+    """
+    Increments from `begin` on, in parts where each look is dear: what comes after the decision need not be looked at.
+
+    Each comes with the place of its first observation.
+    """
     count = len(increments.total)
-    if not procedure.family.is_invariant or count <= PIECE:
-        yield increments
-        return
-    for begin in range(0, count, PIECE):
-        part = slice(begin, begin + PIECE)
+    step = PIECE if procedure.family.is_invariant else max(1, count)
+    for start in range(begin, count, step):
+        part = slice(start, start + step)
         carried = tuple(terms[part] for terms in increments.carried)
-        yield Increments(increments.units[part], increments.progress[part], increments.total[part], carried)
+        yield start, Increments(increments.units[part], increments.progress[part], increments.total[part], carried)
 
 
 def _after(procedure: Procedure, state: State, increments: Increments, at: datetime) -> State:

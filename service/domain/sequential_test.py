@@ -24,6 +24,14 @@ class Status(StrEnum):
     CLOSED = "closed"
 
 
+class Stage(StrEnum):
+    """Where a test is on its way: sampling goes on, somebody must dispose of the subject, or that is done."""
+
+    RUNNING = "running"
+    WAITING = "waiting"
+    CLOSED = "closed"
+
+
 @dataclass(frozen=True)
 class Subject:
     """A lot or an experiment, by name."""
@@ -62,6 +70,13 @@ class SequentialTest:
     decision_changed: bool = False
     corrected_after_decision: bool = False
     disposition: Disposition | None = None
+
+    @property
+    def stage(self) -> Stage:
+        """What the test waits for."""
+        if self.status is Status.CLOSED:
+            return Stage.CLOSED
+        return Stage.WAITING if self.state.is_decided else Stage.RUNNING
 
 
 @dataclass(frozen=True)

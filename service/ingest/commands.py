@@ -10,9 +10,12 @@ from datetime import datetime
 from typing import Any
 
 from service.domain.access import UNLIMITED, AccessKey, Limits, Role
+from service.domain.addresses import Allowed
 from service.domain.correcting import Correction
 from service.domain.disposing import Verdict
+from service.domain.notices import Attempt, Delivery, Notice, Schedule
 from service.domain.plan import Plan
+from service.domain.receivers import Receiver
 from service.domain.sequential_test import SequentialTest, Subject
 
 
@@ -137,6 +140,76 @@ class RevokeKey:
 
 
 @dataclass(frozen=True)
+class CreateReceiver:
+    """Register a receiver of notices, for tests inside its limits."""
+
+    name: str
+    address: str
+    limits: Limits
+    allowed: Allowed
+    actor: str
+    request_id: str | None = None
+
+
+@dataclass(frozen=True)
+class RemoveReceiver:
+    """End a receiver, by name; what waits for it is not sent."""
+
+    name: str
+    actor: str
+    request_id: str | None = None
+
+
+@dataclass(frozen=True)
+class SendTrial:
+    """Send a receiver a notice that tells nothing."""
+
+    receiver: str
+
+
+@dataclass(frozen=True)
+class SendAgain:
+    """Send a notice again that is dead or was delivered."""
+
+    notice: str
+
+
+@dataclass(frozen=True)
+class TakeNotices:
+    """
+    Take what is due, to be sent by whoever asks within the time of the lease.
+
+    Attributes:
+        room: How many notices to each receiver, by its id.
+    """
+
+    room: Mapping[str, int]
+    lease_seconds: float
+
+
+@dataclass(frozen=True)
+class SettleNotice:
+    """
+    Say how the attempt to send a taken notice ended.
+
+    Attributes:
+        jitter: From 0 to 1, for the wait before the next attempt.
+    """
+
+    notice: Notice
+    attempt: Attempt
+    schedule: Schedule
+    jitter: float
+
+
+@dataclass(frozen=True)
+class DropNotices:
+    """Drop some of the notices that were made before a time and delivered."""
+
+    before: datetime
+
+
+@dataclass(frozen=True)
 class StoredPlan:
     """A plan as stored, and whether this command made it."""
 
@@ -201,5 +274,73 @@ class IssuedKey:
     secret: str
 
 
-Command = CreatePlan | RegisterTest | PostObservations | PostCorrection | Dispose | CreateKey | RevokeKey | Probe
-Outcome = StoredPlan | RegisteredTest | Posted | Corrected | Disposed | IssuedKey | AccessKey | Written
+@dataclass(frozen=True)
+class IssuedReceiver:
+    """A new receiver, whose secret is shown this once."""
+
+    receiver: Receiver
+
+
+@dataclass(frozen=True)
+class Addressed:
+    """A notice that waits, and the receiver that it is for."""
+
+    notice: Notice
+    receiver: str
+
+
+@dataclass(frozen=True)
+class Taken:
+    """Notices to be sent now."""
+
+    deliveries: tuple[Delivery, ...]
+
+
+@dataclass(frozen=True)
+class Settled:
+    """A notice after an attempt; it is not recorded where the lease was lost or the receiver removed."""
+
+    notice: Notice
+    is_recorded: bool
+
+
+@dataclass(frozen=True)
+class Dropped:
+    """How many notices were dropped."""
+
+    count: int
+
+
+Command = (
+    CreatePlan
+    | RegisterTest
+    | PostObservations
+    | PostCorrection
+    | Dispose
+    | CreateKey
+    | RevokeKey
+    | CreateReceiver
+    | RemoveReceiver
+    | SendTrial
+    | SendAgain
+    | TakeNotices
+    | SettleNotice
+    | DropNotices
+    | Probe
+)
+Outcome = (
+    StoredPlan
+    | RegisteredTest
+    | Posted
+    | Corrected
+    | Disposed
+    | IssuedKey
+    | AccessKey
+    | IssuedReceiver
+    | Receiver
+    | Addressed
+    | Taken
+    | Settled
+    | Dropped
+    | Written
+)

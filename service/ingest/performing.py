@@ -5,21 +5,18 @@ A refusal is raised before anything is written, so that it disturbs no other com
 """
 
 import secrets
-from collections.abc import Iterable
 from dataclasses import replace
 from datetime import datetime
 from functools import partial, singledispatch
 from typing import TypeVar
 
 from service.domain.access import AccessKey, Limits, check_new_key, digest_of
-from service.domain.chain import Act, Entry, bound, json_of
-from service.domain.correcting import Action, Correction, Piece, replacement_of, replayed, settled, unit_in
+from service.domain.chain import Act, Entry, bound
+from service.domain.correcting import Correction
 from service.domain.disposing import Disposition, check_deviation
 from service.domain.errors import (
-    ChangesNothing,
     Fault,
     IdempotencyKeyReused,
-    InvalidCorrection,
     InvalidTest,
     KeyNameTaken,
     OutsideLimits,
@@ -44,9 +41,10 @@ from service.domain.history import (
     registered,
     test_registered,
 )
+from service.domain.notices import NoticeKind
 from service.domain.observing import observe
 from service.domain.plan import Plan, fingerprint_of, stated
-from service.domain.procedure import Procedure, procedure_of
+from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest, Status, Submission
 from service.domain.state import State
 from service.domain.units import new_units
@@ -69,7 +67,17 @@ from service.ingest.commands import (
     StoredPlan,
     Written,
 )
-from service.storage.logs import Log
+from service.ingest.correcting import worked_out
+from service.ingest.noticing import (
+    create_receiver,
+    drop_notices,
+    remove_receiver,
+    send_again,
+    send_trial,
+    settle_notice,
+    take_notices,
+    tell,
+)
 from service.storage.writer import Writer
 
 SECRET_BYTES = 32
@@ -152,6 +160,7 @@ def _(command: PostObservations, writer: Writer, now: datetime) -> Outcome:
     writer.append(submission, units)
     if state.decision is not test.state.decision:
         moved = _recorded(writer, moved, decided(moved, test.state, command.actor, command.request_id, Act.SUBMITTED))
+        tell(writer, NoticeKind.DECIDED, moved, plan, test.state.decision)
     writer.save(moved)
     return Posted(moved, plan, first_sequence, state.sequence, is_replay=False)
 
@@ -169,7 +178,7 @@ def _(command: PostCorrection, writer: Writer, now: datetime) -> Outcome:
         raise TestIsClosed(test.key)
     if test.state.is_decided and not command.may_correct_decided:
         raise RoleTooNarrow(f"The test {test.key!r} has decided; from then on corrections need the role engineer.")
-    correction, freed, taken = _correction(command, test, procedure_of(plan), writer.log(), now)
+    correction, freed, taken = worked_out(command, test, procedure_of(plan), writer.log(), now)
     if taken is not None and (known := writer.known_units(test.key, [taken])):
         fault = Fault("/observation/unit", f"unit {taken!r} was reported as observation {known[taken]}")
         raise RepeatedUnits([fault])
@@ -187,6 +196,7 @@ def _(command: PostCorrection, writer: Writer, now: datetime) -> Outcome:
     writer.correct(correction, freed, taken)
     if moved.state.decision is not test.state.decision:
         moved = _recorded(writer, moved, decided(moved, test.state, command.actor, command.request_id, Act.CORRECTED))
+        tell(writer, NoticeKind.DECISION_CHANGED, moved, plan, test.state.decision)
     writer.save(moved)
     return Corrected(moved, plan, correction, is_replay=False)
 
@@ -204,6 +214,7 @@ def _(command: Dispose, writer: Writer, now: datetime) -> Outcome:
     check_deviation(command.verdict, command.deviation_reason, test.state.decision)
     closed = replace(test, status=Status.CLOSED, disposition=disposition, version=test.version + 1, updated_at=now)
     closed = _recorded(writer, closed, disposed(closed, disposition, command.request_id))
+    tell(writer, NoticeKind.DISPOSED, closed, plan, test.state.decision)
     writer.save(closed)
     return Disposed(closed, plan, is_new=True)
 
@@ -237,6 +248,18 @@ def _(command: RevokeKey, writer: Writer, now: datetime) -> Outcome:
     writer.revoke_key(key.id, now)
     writer.record(key_revoked(key, now, command.actor, command.request_id))
     return replace(key, revoked_at=now)
+
+
+for carry_out in (
+    create_receiver,
+    remove_receiver,
+    send_trial,
+    send_again,
+    take_notices,
+    settle_notice,
+    drop_notices,
+):
+    perform.register(carry_out)
 
 
 @perform.register
@@ -303,48 +326,6 @@ def _same_again(first: S | None, command: PostObservations | PostCorrection) -> 
         # Two stations that number their submissions alike must not silently swallow each other's results.
         raise IdempotencyKeyReused(key, "was used by another access key")
     return first
-
-
-def _correction(
-    command: PostCorrection, test: SequentialTest, procedure: Procedure, log: Log, now: datetime
-) -> tuple[Correction, str | None, str | None]:
-    """
-    The correction with the state after it, and the units that it frees and takes.
-
-    The log is run again from the first observation that was ever corrected, a page at a time.
-    """
-    at = command.observation
-    if at > test.state.sequence:
-        rule = f"must be an observation of this test, 1 to {test.state.sequence}; received {at}"
-        raise InvalidCorrection([Fault("/sequence", rule)])
-    posted, present = log.observation(test, procedure.family, at)
-    new = None if command.replacement is None else replacement_of(procedure, posted, present, command.replacement)
-    if new == present:
-        raise ChangesNothing(at)
-    correction = Correction(
-        test=test.key,
-        observation=at,
-        action=Action.VOID if new is None else Action.REPLACE,
-        replacement=None if new is None else json_of(new),
-        reason=command.reason,
-        body_digest=command.body_digest,
-        received_at=now,
-        actor=command.actor,
-        idempotency_key=command.idempotency_key,
-        version=test.version + 1,
-        before=test.state.decision,
-        state=test.state,
-        request_id=command.request_id,
-    )
-    start = log.state_before(test.key, min(at, log.first_corrected(test.key) or at))
-
-    def read(after: int, through: int) -> Iterable[Piece]:
-        return log.pieces(test, after, through, {at: correction})
-
-    state = settled(test.state, replayed(procedure, start, read, test.state.sequence), now)
-    freed, taken = unit_in(present), unit_in(new)
-    unit_stays = freed == taken
-    return replace(correction, state=state), None if unit_stays else freed, None if unit_stays else taken
 
 
 def _submission(command: PostObservations, test: SequentialTest, first_sequence: int) -> Submission:

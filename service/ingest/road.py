@@ -92,8 +92,21 @@ class Road:
         group_limit: int,
         queue_bytes: int = 2**28,
         measures: Measures | None = None,
+        on_notices: Callable[[], object] = lambda: None,
     ) -> None:
+        """
+        Build it.
+
+        Args:
+            engine: The database.
+            clock: Tells when a command is performed.
+            queue_limit, queue_bytes: Commands that may wait, and the bytes of their bodies.
+            group_limit: Commands committed together.
+            measures: Told of what happens.
+            on_notices: Called in the writer thread once notices are committed that wait to be sent.
+        """
         self._engine = engine
+        self._on_notices = on_notices
         self._clock = clock
         self._measures = measures or Unmeasured()
         self._group_limit = group_limit
@@ -221,7 +234,7 @@ class Road:
 
     def _in_one_transaction(self, group: Sequence[_Waiting]) -> list[Answer]:
         answers: list[Answer] = []
-        is_begun = is_performed = False
+        is_begun = is_performed = has_news = False
         try:
             with writing(self._engine) as writer:
                 is_begun = True
@@ -232,13 +245,15 @@ class Road:
                     except DomainError as refusal:
                         answers.append((waiting, refusal))
                 writer.flush()
-                is_performed = True
+                is_performed, has_news = True, writer.outbox.has_news
         except SQLAlchemyError as error:
             if not is_begun:
                 raise _NotBegun from error
             if is_performed:
                 raise _CommitFailed from error
             raise
+        if has_news:
+            self._on_notices()
         return answers
 
 

@@ -1,1 +1,1 @@
-"""People look here: server-rendered pages. Nothing yet; the house keeps the room."""
+"""People look here: pages made on the server, complete without script."""

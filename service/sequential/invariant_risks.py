@@ -19,7 +19,7 @@ Journal of the American Statistical Association 95, 135-143 (mixtures with contr
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.polynomial import chebyshev
@@ -27,13 +27,15 @@ from scipy.special import ndtri
 
 from service.sequential.double import BoolArray, FloatArray, IndexArray
 from service.sequential.exact.characteristics import QUANTILES, spread
-from service.sequential.invariant import log_density
+from service.sequential.invariant import Looks, log_density
+from service.sequential.invariant_shapes import Shapes
 from service.sequential.invariant_walks import BATCH, Endings, InvariantTest, Walker
 
 # Parts of the mixture at the most.
 MOST_PARTS = 7
-# A logarithm of a density is interpolated by this many terms, for standardised means up to the largest.
-TERMS, LARGEST_INTERPOLATED = 24, 3.0
+# A logarithm of a density is interpolated by this many terms, for standardised means up to the largest; beyond it by
+# more, for it has a singularity near the imaginary alignment 2/mean, so that the error falls by asinh(2/mean) a term.
+TERMS, LARGEST_INTERPOLATED, FALL = 24, 3.0, 15.0
 
 
 @dataclass(frozen=True)
@@ -184,7 +186,15 @@ class Run:
 
 
 def _joined(endings: list[Endings]) -> Endings:
-    return Endings(*(np.concatenate([getattr(e, field.name) for e in endings]) for field in fields(Endings)))
+    found = [e.shapes for e in endings if e.shapes is not None]
+    shapes = Shapes(np.hstack([s.looks for s in found]), np.hstack([s.places for s in found])) if found else None
+    return Endings(
+        looks=np.concatenate([e.looks for e in endings]),
+        total=np.concatenate([e.total for e in endings]),
+        squares=np.concatenate([e.squares for e in endings]),
+        is_rejected=np.concatenate([e.is_rejected for e in endings]),
+        shapes=shapes,
+    )
 
 
 class _Mixture:
@@ -197,6 +207,7 @@ class _Mixture:
         self.courses = everything.looks.size
         self._looks, self._alignment = everything.looks, everything.alignment
         self._is_rejected: BoolArray = everything.is_rejected
+        self._shapes = everything.shapes
         logs = np.array([self._log_density(delta) for delta in parts])
         self._log_mixture = np.logaddexp.reduce(logs, axis=0) - math.log(len(parts))
         # One is a combination of the others.
@@ -204,15 +215,13 @@ class _Mixture:
         self._zeros = [
             _martingales(test.drift(delta), test.samples, e) for delta, e in zip(parts, endings, strict=True)
         ]
-        self._free = [
-            np.array([_cleared(row, zeros) for row, zeros in zip(control, self._zeros, strict=True)])
-            for control in self._controls
-        ]
+        self._free = [self._without_zeros(control) for control in self._controls]
 
     def point(self, delta: float) -> Point:
         """The figures at one mean."""
         weights = np.exp(self._log_density(delta) - self._log_mixture)
-        rejection = self._estimate(weights * self._is_rejected)
+        rejected = weights * self._is_rejected
+        rejection = self._estimate(rejected, self._of_shapes(delta, rejected))
         number = self._looks * self._test.samples
         mean = self._estimate(weights * number)
         share = np.bincount(self._looks, weights) / weights.sum()
@@ -229,16 +238,32 @@ class _Mixture:
         heaviest = [float(np.max(weights, where=side, initial=0.0)) for side in (self._is_rejected, ~self._is_rejected)]
         return (min(heaviest) or 1.0) / self.courses
 
-    def _estimate(self, values: FloatArray) -> Estimate:
+    def _of_shapes(self, delta: float, rejected: FloatArray) -> list[FloatArray]:
+        """What courses add to the probability of rejection, given their shapes, less what they add by themselves."""
+        if self._shapes is None:
+            return []
+        number = np.arange(1.0, float(self._test.last or 1) + 1.0)
+        above = self._shapes.probability_above(self._test.looks(number), delta)
+        # Too far out for the noncentral t the courses speak for themselves.
+        if not np.all(np.isfinite(above)):
+            return []
+        given_shape = above if self._test.ratio.is_upward else 1.0 - above
+        return [self._without_zeros(self._shaped(given_shape - rejected))]
+
+    def _estimate(self, values: FloatArray, more: Sequence[FloatArray] = ()) -> Estimate:
         """The mean of the mixture, cleared of what the controls explain, and its standard error."""
-        rows = np.array([_cleared(row, zeros) for row, zeros in zip(self._shaped(values), self._zeros, strict=True)])
+        rows, free = self._without_zeros(self._shaped(values)), np.array([*self._free, *more])
         centred = rows - rows.mean(axis=1, keepdims=True)
-        if self._free:
-            design = np.array([(free - free.mean(axis=1, keepdims=True)).ravel() for free in self._free]).T
+        if free.size:
+            design = (free - free.mean(axis=2, keepdims=True)).reshape(len(free), -1).T
             shares = np.linalg.lstsq(design, centred.ravel())[0]
-            rows = rows - np.tensordot(shares, np.array(self._free), axes=1)
+            rows = rows - np.tensordot(shares, free, axes=1)
         variance = float(rows.var(axis=1).mean())
         return Estimate(float(rows.mean()), math.sqrt(variance / self.courses))
+
+    def _without_zeros(self, rows: FloatArray) -> FloatArray:
+        """Each row less what the sums with mean zero explain of it."""
+        return np.array([_cleared(row, zeros) for row, zeros in zip(rows, self._zeros, strict=True)])
 
     def _shaped(self, values: FloatArray) -> FloatArray:
         return values.reshape(self._shape)
@@ -280,15 +305,31 @@ def ending_log_density(test: InvariantTest, delta: float, looks: IndexArray, ali
 
 def _interpolated(test: InvariantTest, delta: float, looks: IndexArray, alignment: FloatArray) -> FloatArray:
     distinct, place = np.unique(looks, return_inverse=True)
-    if abs(delta) > LARGEST_INTERPOLATED or distinct.size * TERMS > looks.size:
-        return log_density(test.looks(looks.astype(float)), alignment, delta)
-    terms = polynomials(test, delta, distinct.astype(float))
+    return log_density_at(test.looks(distinct.astype(float)), delta, place, alignment)
+
+
+def log_density_at(looks: Looks, delta: float, place: IndexArray, alignment: FloatArray) -> FloatArray:
+    """The one-sided `log_density` at very many points, `place` naming the look of each; 1e-7 where interpolated."""
+    if looks.size.size * _terms(delta) > place.size:
+        return log_density(Looks(looks.freedom[place], looks.size[place]), alignment, delta)
+    terms = _series(looks, delta)
     return np.asarray(chebyshev.chebval(alignment, terms[:, place], tensor=False))
 
 
 def polynomials(test: InvariantTest, delta: float, number: FloatArray) -> FloatArray:
     """Chebyshev series in the alignment of the one-sided `log_density` at these looks; shape (terms, looks)."""
-    nodes = np.cos(math.pi * (np.arange(TERMS) + 0.5) / TERMS)
-    values = log_density(test.looks(number[:, np.newaxis]), nodes, delta)
-    terms: FloatArray = np.linalg.inv(chebyshev.chebvander(nodes, TERMS - 1)) @ values.T
+    return _series(test.looks(number), delta)
+
+
+def _series(looks: Looks, delta: float) -> FloatArray:
+    number = _terms(delta)
+    nodes = np.cos(math.pi * (np.arange(number) + 0.5) / number)
+    at = Looks(looks.freedom[:, np.newaxis], looks.size[:, np.newaxis])
+    # The polynomials are orthogonal over these nodes.
+    terms: FloatArray = (2.0 / number) * (chebyshev.chebvander(nodes, number - 1).T @ log_density(at, nodes, delta).T)
+    terms[0] *= 0.5
     return terms
+
+
+def _terms(delta: float) -> int:
+    return TERMS if abs(delta) <= LARGEST_INTERPOLATED else math.ceil(FALL / math.asinh(2.0 / abs(delta)))

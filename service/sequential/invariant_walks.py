@@ -24,12 +24,16 @@ from service.sequential.boundaries import Thresholds
 from service.sequential.double import BoolArray, FloatArray, IndexArray
 from service.sequential.errors import OutOfRange
 from service.sequential.exact.characteristics import TooMuchWork
-from service.sequential.invariant import InvariantRatio, Looks, one_sample, two_samples
+from service.sequential.invariant import InvariantRatio, Looks, one_sample, t_of, two_samples
+from service.sequential.invariant_bounds import information
+from service.sequential.invariant_shapes import Outline, Shapes
 
 # Courses of one batch.
 BATCH = 4096
 # A course that sees more looks is not followed.
 MOST_LOOKS = 1_000_000
+# Shapes are followed to a wall within so many times the looks that a course is expected to take without it.
+NEAR_WALL = 3.0
 # Looks taken at once: a quarter of those seen, within these.
 FEWEST_AT_ONCE, MOST_AT_ONCE = 4, 64
 
@@ -60,6 +64,16 @@ class InvariantTest:
     def between(self, thresholds: Thresholds) -> "InvariantTest":
         """The same test between other thresholds."""
         return InvariantTest(self.ratio, thresholds, self.samples, self.last)
+
+    @property
+    def has_near_wall(self) -> bool:
+        """Many courses come to the wall, and with one side their shapes say much of how they end."""
+        ratio = self.ratio
+        if self.last is None or ratio.sides != 1:
+            return False
+        under0 = -self.thresholds.accept / information(ratio.delta0, ratio.delta1, self.samples)
+        under1 = self.thresholds.reject / information(ratio.delta1, ratio.delta0, self.samples)
+        return self.last <= NEAR_WALL * max(under0, under1)
 
 
 def invariant_test(
@@ -94,12 +108,14 @@ class Endings:
         looks: The number of the deciding look.
         total, squares: The sums there, sigma being 1; `squares` about the common mean of the pairs for two samples.
         is_rejected: The decision.
+        shapes: Of the courses, where these were followed.
     """
 
     looks: IndexArray
     total: FloatArray
     squares: FloatArray
     is_rejected: BoolArray
+    shapes: Shapes | None = None
 
     @property
     def alignment(self) -> FloatArray:
@@ -108,10 +124,16 @@ class Endings:
 
 
 class Walker:
-    """Makes batches of courses of one test; keeps the limits of the looks seen so far."""
+    """
+    Makes batches of courses of one test; keeps the limits of the looks seen so far.
 
-    def __init__(self, test: InvariantTest) -> None:
+    Where the wall is near, courses are followed beyond their decisions, until their shapes have no choice left, unless
+    that is not asked for.
+    """
+
+    def __init__(self, test: InvariantTest, *, follows_shapes: bool = True) -> None:
         self.test = test
+        self._follows_shapes = follows_shapes and test.has_near_wall
         self._lower, self._upper = np.zeros(0), np.zeros(0)
 
     def batch(self, delta: float, seed: int, place: int, number: int) -> Endings:
@@ -129,6 +151,7 @@ class Walker:
         drift, is_magnitude = self.test.drift(delta), self.test.ratio.sides == 2
         ends = np.zeros(BATCH, np.intp), np.zeros(BATCH), np.zeros(BATCH), np.zeros(BATCH, np.bool_)
         going, total, squares, seen = np.arange(BATCH), np.zeros(BATCH), np.zeros(BATCH), 0
+        is_decided, outline = np.zeros(BATCH, np.bool_), Outline(BATCH) if self._follows_shapes else None
         while going.size:
             count = self._count(seen)
             terms = source.standard_normal((going.size, count)) + drift
@@ -146,16 +169,33 @@ class Walker:
             is_out = is_above | (place_of <= self._lower[seen : seen + count])
             first = is_out.argmax(axis=1)
             row = np.arange(going.size)
-            is_over = is_out[row, first]
+            is_over = is_out[row, first] & ~is_decided[going]
             over, at = going[is_over], (row[is_over], first[is_over])
             for kept, found in zip(
                 ends, (seen + 1 + first[is_over], totals[at], all_squares[at], is_above[at]), strict=True
             ):
                 kept[over] = found
-            going, total, squares = going[~is_over], totals[~is_over, -1], all_squares[~is_over, -1]
+            is_decided[over] = True
+            goes_on = ~is_decided[going]
+            if outline is not None:
+                self._outline(outline, going, seen, totals, all_squares)
+                goes_on |= outline.is_open(going)
+            going, total, squares = going[goes_on], totals[goes_on, -1], all_squares[goes_on, -1]
             seen += count
         looks, end_total, end_squares, above = ends
-        return Endings(looks, end_total, end_squares, above if self.test.ratio.is_upward else ~above)
+        shapes = None if outline is None else outline.shapes
+        return Endings(looks, end_total, end_squares, above if self.test.ratio.is_upward else ~above, shapes)
+
+    def _outline(
+        self, outline: Outline, going: IndexArray, seen: int, totals: FloatArray, all_squares: FloatArray
+    ) -> None:
+        """Follow the shapes over the same looks."""
+        number = np.arange(seen + 1.0, seen + totals.shape[1] + 1.0)
+        means = np.ascontiguousarray(totals.T) / number[:, np.newaxis]
+        about = np.maximum(all_squares.T - number[:, np.newaxis] * means * means, 0.0)
+        part, ones = slice(seen, seen + len(number)), Looks(np.ones(len(number)), number)
+        limits = [t_of(ones, limit[part] / np.sqrt(number)) for limit in (self._lower, self._upper)]
+        outline.extend(going, number, means, about, (limits[0], limits[1]))
 
     def _count(self, seen: int) -> int:
         """How many looks to take at once; makes sure that their limits are there."""
@@ -175,7 +215,8 @@ class Walker:
         lower, upper = self._limits(number, self.test.thresholds)
         if last is not None and number[-1] == last:
             # Where the ratio is zero at the wall it accepts; that has no probability.
-            lower[-1:], upper[-1:] = self._limits(number[-1:], Thresholds(0.0, 0.0))
+            lower[-1:], _ = self._limits(number[-1:], Thresholds(0.0, 0.0))
+            upper[-1] = lower[-1]
         self._lower, self._upper = np.concatenate([self._lower, lower]), np.concatenate([self._upper, upper])
 
     def _limits(self, number: FloatArray, thresholds: Thresholds) -> tuple[FloatArray, FloatArray]:

@@ -27,10 +27,10 @@ AT_ONCE = 400
 
 @dataclass(frozen=True)
 class Counts:
-    """Rows of the tables that the history of the service tells of."""
+    """Rows of the tables that the history of the service tells of, and how many of their things were ended."""
 
     by_table: dict[str, int]
-    revoked: int
+    ended: dict[str, int]
 
 
 class Snapshot:
@@ -89,23 +89,30 @@ class Snapshot:
         """How many there are of what that history tells of."""
         by_table = {
             table.name: self._count(select(func.count().label("n")).select_from(table))
-            for table in (tables.plans, tables.api_keys, tables.tests)
+            for table in (tables.plans, tables.api_keys, tables.tests, tables.receivers)
         }
-        revoked = select(func.count().label("n")).where(tables.api_keys.c.revoked_at.is_not(None))
-        return Counts(by_table, self._count(revoked))
+        ended = {
+            column.table.name: self._count(select(func.count().label("n")).where(column.is_not(None)))
+            for column in (tables.api_keys.c.revoked_at, tables.receivers.c.removed_at)
+        }
+        return Counts(by_table, ended)
 
     def _found(self, entries: Sequence[Entry]) -> Found:
         plans = {entry.details["plan"] for entry in entries if entry.act is Act.PLAN_CREATED}
         tests = {entry.details["test"] for entry in entries if entry.act is Act.TEST_REGISTERED}
         keys = {entry.details["id"] for entry in entries if entry.act in (Act.KEY_CREATED, Act.KEY_REVOKED)}
+        of_receivers = (Act.RECEIVER_CREATED, Act.RECEIVER_REMOVED)
+        receivers = {entry.details["id"] for entry in entries if entry.act in of_receivers}
         key = tables.tests.c.key
         of_plans = self._ask(select(tables.plans).where(tables.plans.c.name.in_(plans)))
         of_keys = self._ask(select(tables.api_keys).where(tables.api_keys.c.id.in_(keys)))
         found_keys: list[AccessKey] = [rows.key_of(row) for row in of_keys]
+        told = self._ask(select(tables.receivers).where(tables.receivers.c.id.in_(receivers)))
         return Found(
             plans={row["name"]: rows.plan_of(row) for row in of_plans},
             keys={each.id: each for each in found_keys},
             tests=frozenset(row["key"] for row in self._ask(select(key).where(key.in_(tests)))),
+            receivers={row["id"]: rows.receiver_of(row) for row in told},
         )
 
     def _count(self, found: Select[Any]) -> int:
@@ -172,7 +179,7 @@ def _audit_service(found: Snapshot) -> Audited:
     for entries, things in found.service_acts():
         audit.follow(entries, things)
     counts = found.counts()
-    audit.finish(found.service_head(), counts.by_table, counts.revoked)
+    audit.finish(found.service_head(), counts.by_table, counts.ended)
     return Audited(None, is_of_test=False, acts=audit.head.length)
 
 

@@ -5,17 +5,18 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, NamedTuple
 
-from sqlalchemy import Engine, RowMapping, Select, and_, bindparam, func, or_, select
+from sqlalchemy import ColumnElement, Engine, RowMapping, Select, and_, bindparam, func, or_, select
 
 from service.domain.access import UNLIMITED, AccessKey, Limits
 from service.domain.disposing import Verdict
 from service.domain.plan import Plan
-from service.domain.sequential_test import SequentialTest, SubjectKind
+from service.domain.sequential_test import SequentialTest, Stage, Status, SubjectKind
 from service.domain.state import Decision
 from service.storage import rows, tables
 from service.storage.engine import answering
 from service.storage.logs import Log
 from service.storage.lookups import Lookups
+from service.storage.notices import Notices
 
 # Plans that are kept at most.
 MOST_PLANS = 1024
@@ -29,7 +30,11 @@ _LAST_CHANGE = select(func.max(tables.tests.c.change).label("last"))
 
 @dataclass(frozen=True)
 class TestFilters:
-    """What a list of tests may be narrowed by; all that is given must match."""
+    """
+    What a list of tests may be narrowed by; all that is given must match.
+
+    `words` is a part of the key or of the subject's name, in capitals or not.
+    """
 
     __test__ = False
 
@@ -41,6 +46,15 @@ class TestFilters:
     labels: tuple[tuple[str, str], ...] = ()
     updated_after: datetime | None = None
     disposition: Verdict | None = None
+    stage: Stage | None = None
+    words: str | None = None
+
+
+class Recent(NamedTuple):
+    """A test and the number of its last change."""
+
+    number: int
+    test: SequentialTest
 
 
 class Change(NamedTuple):
@@ -64,13 +78,18 @@ class Count(NamedTuple):
 
 
 class Reader:
-    """Typed answers from the database; None says that there is no such row. `log` reads what a test's log holds."""
+    """
+    Typed answers from the database; None says that there is no such row.
+
+    `log` reads what a test's log holds, `notices` the outbox.
+    """
 
     def __init__(self, engine: Engine) -> None:
         self._engine = engine
         self._lookups = Lookups(engine)
         self._plans: dict[str, Plan] = {}
         self.log = Log(self._all)
+        self.notices = Notices(self._all)
         self._limits = UNLIMITED
 
     def within(self, limits: Limits) -> "Reader":
@@ -139,6 +158,14 @@ class Reader:
             found = found.where(tables.tests.c.key > after)
         return [rows.test_of(row) for row in self._all(found)]
 
+    def recent(self, filters: TestFilters, before: int | None, limit: int) -> list[Recent]:
+        """Tests that match the filters, the last to have changed first; those that changed before `before`."""
+        change = tables.tests.c.change
+        found = _within(_filtered(select(tables.tests), filters), self._limits).order_by(change.desc()).limit(limit)
+        if before is not None:
+            found = found.where(change < before)
+        return [Recent(row["change"], rows.test_of(row)) for row in self._all(found)]
+
     def last_change(self) -> int:
         """The number of the newest change; 0 without any."""
         row = self._lookups.first(_LAST_CHANGE)
@@ -152,11 +179,11 @@ class Reader:
         found = found.where(column.change > after).order_by(column.change).limit(limit)
         return [Change(*row.values()) for row in self._all(found)]
 
-    def counts(self) -> list[Count]:
-        """How many tests there are of each kind, status and decision."""
+    def counts(self, filters: TestFilters = TestFilters()) -> list[Count]:
+        """How many tests there are of each kind, status and decision, among those that match."""
         by = (tables.tests.c.subject_kind, tables.tests.c.status, tables.tests.c.decision)
         with answering(), self._engine.connect() as connection:
-            counted = _within(select(*by, func.count()), self._limits).group_by(*by)
+            counted = _within(_filtered(select(*by, func.count()), filters), self._limits).group_by(*by)
             return [Count(*row) for row in connection.execute(counted)]
 
     def _all(self, found: Select[Any]) -> list[RowMapping]:
@@ -180,9 +207,22 @@ def _filtered(found: Select[Any], filters: TestFilters) -> Select[Any]:
     for name, value in filters.labels:
         labelled = select(labels.c.test).where(labels.c.name == name, labels.c.value == value)
         found = found.where(column.key.in_(labelled))
+    if filters.stage is not None:
+        found = found.where(*_of_stage(filters.stage))
+    if filters.words is not None:
+        texts = (column.key, column.subject_name)
+        found = found.where(or_(*(text.icontains(filters.words, autoescape=True) for text in texts)))
     if filters.updated_after is not None:
         found = found.where(column.updated_at > filters.updated_after)
     return found
+
+
+def _of_stage(stage: Stage) -> list[ColumnElement[bool]]:
+    status, decision = tables.tests.c.status, tables.tests.c.decision
+    if stage is Stage.CLOSED:
+        return [status == Status.CLOSED.value]
+    goes_on = decision == Decision.CONTINUE.value
+    return [status == Status.OPEN.value, goes_on if stage is Stage.RUNNING else ~goes_on]
 
 
 def _within(found: Select[Any], limits: Limits) -> Select[Any]:

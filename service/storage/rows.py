@@ -9,7 +9,9 @@ from service.domain.access import UNLIMITED, AccessKey, Limits, Role
 from service.domain.chain import Act, Entry, Head, json_of
 from service.domain.correcting import Action, Correction
 from service.domain.disposing import Disposition, Verdict
+from service.domain.notices import Notice, NoticeKind, NoticeState
 from service.domain.plan import Plan
+from service.domain.receivers import Receiver
 from service.domain.sequential_test import SequentialTest, Status, Subject, SubjectKind, Submission
 from service.domain.state import Cause, Decided, Decision, State, Sum
 
@@ -266,6 +268,38 @@ def key_of(row: RowMapping) -> AccessKey:
     values = {**row, "role": Role(row["role"]), "limits": _limits_of(row)}
     del values["subjects"], values["labels"]
     return AccessKey(**values)
+
+
+def row_of_receiver(receiver: Receiver) -> Row:
+    """A row of receivers."""
+    return {
+        "id": receiver.id,
+        "name": receiver.name,
+        "address": receiver.address,
+        "secret": receiver.secret,
+        "fingerprint": receiver.fingerprint,
+        "created_at": receiver.created_at,
+        "created_by": receiver.created_by,
+        "removed_at": receiver.removed_at,
+        **_row_of_limits(receiver.limits),
+    }
+
+
+def receiver_of(row: RowMapping) -> Receiver:
+    """The receiver in a row."""
+    values = {**row, "limits": _limits_of(row)}
+    del values["subjects"], values["labels"]
+    return Receiver(**values)
+
+
+def row_of_notice(notice: Notice) -> Row:
+    """A row of notices."""
+    return {**vars(notice), "kind": notice.kind.value, "state": notice.state.value}
+
+
+def notice_of(row: RowMapping) -> Notice:
+    """The notice in a row."""
+    return Notice(**{**row, "kind": NoticeKind(row["kind"]), "state": NoticeState(row["state"])})
 
 
 def _row_of_limits(limits: Limits) -> Row:

@@ -278,3 +278,54 @@ chains = Table(
     *_head_columns(),
     PrimaryKeyConstraint("chain"),
 )
+
+# What has been told, and what is still to be told; no part of the record.
+receivers = Table(
+    "receivers",
+    metadata,
+    Column("id", String(32), nullable=False),
+    Column("name", KEY, nullable=False),
+    Column("address", Text, nullable=False),
+    # Readable, for notices are signed with it; forgotten when the receiver is removed.
+    Column("secret", String(100)),
+    Column("fingerprint", String(64), nullable=False),
+    Column("created_at", UtcTime, nullable=False),
+    Column("created_by", String(100), nullable=False),
+    Column("removed_at", UtcTime),
+    Column("subjects", Text),
+    Column("labels", Text),
+    PrimaryKeyConstraint("id"),
+    Index(
+        "uq_receivers_present_name",
+        "name",
+        unique=True,
+        sqlite_where=text("removed_at IS NULL"),
+        postgresql_where=text("removed_at IS NULL"),
+    ),
+)
+
+notices = Table(
+    "notices",
+    metadata,
+    Column("id", KEY, nullable=False),
+    Column("receiver", String(32), nullable=False),
+    Column("test", KEY),
+    Column("version", BigInteger, nullable=False),
+    Column("kind", String(30), nullable=False),
+    Column("body", Text, nullable=False),
+    Column("created_at", UtcTime, nullable=False),
+    Column("due_at", UtcTime, nullable=False),
+    Column("state", String(9), nullable=False),
+    Column("attempts", BigInteger, nullable=False),
+    Column("lease", String(32)),
+    Column("outcome", Text),
+    PrimaryKeyConstraint("id"),
+    ForeignKeyConstraint(["receiver"], ["receivers.id"]),
+    ForeignKeyConstraint(["test"], ["tests.key"]),
+    CheckConstraint("state IN ('waiting', 'delivered', 'dead')", name="state"),
+    # Each version of a test tells a receiver one thing at most, in the order of the versions.
+    UniqueConstraint("receiver", "test", "version"),
+    Index(None, "state", "receiver", "due_at"),
+    Index(None, "receiver", "id"),
+    Index(None, "receiver", "state", "id"),
+)

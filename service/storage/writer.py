@@ -38,6 +38,7 @@ from service.domain.sequential_test import SequentialTest, Submission
 from service.storage import rows, tables
 from service.storage.engine import CHANNEL, WRITES, is_sqlite
 from service.storage.logs import Log
+from service.storage.outbox import Outbox
 
 # Any number that no other program on the same server locks by, and not that of the migrations.
 NUMBERING_LOCK = 5_397_204_187
@@ -73,10 +74,11 @@ T = TypeVar("T")
 
 
 class Writer:
-    """Reads that lock and writes that append, on one connection in one transaction."""
+    """Reads that lock and writes that append, on one connection in one transaction; `outbox` holds the notices."""
 
     def __init__(self, connection: Connection) -> None:
         self._connection = connection
+        self.outbox = Outbox(connection)
         self._tests: dict[str, SequentialTest] = {}
         self._saved: set[str] = set()
         self._added: set[str] = set()
@@ -213,6 +215,7 @@ class Writer:
     def flush(self) -> None:
         """Write what was appended and saved."""
         self._flush_log()
+        self.outbox.flush()
         self._extend_history_of_service()
         moved = [self._tests[key] for key in sorted(self._saved)]
         added = sorted(self._added - self._saved)

@@ -9,8 +9,10 @@ from fastapi.routing import iter_route_contexts
 
 from service.app import create_app
 from service.domain.access import Role
+from service.pages.session import COOKIE
 from service.settings import Settings
-from tests.api.examples import Namer, pointers
+from tests.api.examples import SEAL, Namer, pointers, with_test
+from tests.pages.people import form_token, signed_in
 from tests.running import Running, command
 
 ROLES = ["viewer", "collector", "engineer", "administrator"]
@@ -45,8 +47,48 @@ LEAST_ROLE = {
     ("GET", "/v1/keys"): "administrator",
     ("POST", "/v1/keys"): "administrator",
     ("DELETE", "/v1/keys/{name}"): "administrator",
+    ("POST", "/v1/receivers"): "administrator",
+    ("GET", "/v1/receivers"): "administrator",
+    ("DELETE", "/v1/receivers/{name}"): "administrator",
+    ("POST", "/v1/receivers/{name}/trial"): "administrator",
+    ("GET", "/v1/receivers/{name}/notices"): "administrator",
+    ("POST", "/v1/notices/{id}/again"): "administrator",
 }
 OPEN = {("GET", "/healthz"), ("GET", "/readyz"), ("GET", "/openapi.json")}
+
+# What people look at, signed in with a key of at least this role.
+PAGES = {
+    ("GET", "/"): "viewer",
+    ("GET", "/live"): "viewer",
+    ("POST", "/sign-out"): "viewer",
+    ("GET", "/tests/{key}"): "viewer",
+    ("GET", "/tests/{key}/results"): "viewer",
+    ("GET", "/tests/{key}/assumptions"): "viewer",
+    ("GET", "/tests/{key}/estimates"): "viewer",
+    ("GET", "/tests/{key}/history"): "viewer",
+    ("GET", "/tests/{key}/drawing.svg"): "viewer",
+    ("GET", "/tests/{key}/drawing.png"): "viewer",
+    ("GET", "/tests/{key}/path.csv"): "viewer",
+    ("GET", "/tests/{key}/record"): "viewer",
+    ("GET", "/tests/{key}/record.pdf"): "viewer",
+    ("GET", "/plans/{name}/curves.svg"): "viewer",
+    ("GET", "/plans/{name}/curves.png"): "viewer",
+    ("GET", "/tests/{key}/correct"): "collector",
+    ("POST", "/tests/{key}/correct"): "collector",
+    ("GET", "/tests/{key}/dispose"): "engineer",
+    ("POST", "/tests/{key}/dispose"): "engineer",
+    ("GET", "/plans"): "viewer",
+    ("GET", "/plans/{name}"): "viewer",
+    ("GET", "/plans/{name}/curves.csv"): "viewer",
+    ("GET", "/plans/{name}/register"): "engineer",
+    ("POST", "/plans/{name}/register"): "engineer",
+    ("GET", "/design"): "viewer",
+    ("GET", "/design/curves.csv"): "viewer",
+    ("GET", "/design/standards"): "viewer",
+    ("GET", "/design/save"): "engineer",
+    ("POST", "/design/save"): "engineer",
+}
+OPEN_PAGES = {("GET", "/sign-in"), ("POST", "/sign-in"), ("ANY", "/static")}
 
 
 def routes() -> set[tuple[str, str]]:
@@ -60,15 +102,15 @@ def routes() -> set[tuple[str, str]]:
 
 
 def test_every_route_has_a_rule_and_is_described() -> None:
-    assert routes() == LEAST_ROLE.keys() | OPEN
+    assert routes() == LEAST_ROLE.keys() | OPEN | PAGES.keys() | OPEN_PAGES
     paths = create_app(Settings()).openapi()["paths"]
     described = {(method.upper(), path) for path, operations in paths.items() for method in operations}
-    assert described | {("GET", "/openapi.json")} == routes()
+    assert described | {("GET", "/openapi.json")} == routes() - PAGES.keys() - OPEN_PAGES
 
 
 def request(client: httpx.Client, method: str, path: str) -> int:
     body: dict[str, str] | None = {} if method == "POST" else None
-    with client.stream(method, path.format(name="none", key="none", kind="lot"), json=body) as answer:
+    with client.stream(method, path.format(name="none", key="none", kind="lot", id="none"), json=body) as answer:
         return answer.status_code
 
 
@@ -87,6 +129,31 @@ def test_each_role_reaches_what_it_may_and_nothing_else(
         for secret in ended:
             nobody.headers["Authorization"] = f"Bearer {secret}"
             assert request(nobody, method, path) == 401
+
+
+@pytest.fixture(scope="module")
+def test_key(admin: httpx.Client, new_name: Namer) -> str:
+    """A test with one result."""
+    key = with_test(admin, new_name, SEAL)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [0]}).raise_for_status()
+    return key
+
+
+@pytest.mark.parametrize(("method", "path"), sorted(PAGES))
+def test_each_role_sees_the_pages_that_it_may(
+    service: Running, ended: list[str], test_key: str, method: str, path: str
+) -> None:
+    address = path.format(key=test_key, name="none")
+    for role in ROLES:
+        with signed_in(service, role) as person:
+            body = {"token": form_token(person.get("/").text)} if method == "POST" else None
+            with person.stream(method, address, params={"sequence": "1"}, data=body) as answer:
+                assert (answer.status_code != 403) == Role(role).includes(Role(PAGES[method, path])), role
+                assert answer.headers.get("Location", "") in {"", "/sign-in"}
+    for secret in (None, *ended):
+        cookies = {} if secret is None else {COOKIE: f"1.2.{secret}"}
+        nobody = httpx.request(method, service.url + address, cookies=cookies)
+        assert (nobody.status_code, nobody.headers["Location"].partition("?")[0]) == (303, "/sign-in")
 
 
 @pytest.fixture(scope="module")

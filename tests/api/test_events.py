@@ -17,7 +17,7 @@ import httpx
 import pytest
 from sqlalchemy.engine import URL
 
-from service.api import streams
+from service.web import streams
 from tests.api.examples import SEAL, Namer, pointers, with_plan
 from tests.documents import README, blocks
 from tests.postgres import fresh_database, own_server

@@ -286,24 +286,57 @@ def test_every_family_speaks_of_its_own_parameter(
         assert (figure is None) <= (name in found["reasons"]), name
 
 
+T_TEST = {"statistic": "invariant", "h0": 0.0, "h1": 1.0, "alpha": 0.05, "beta": 0.1}
+GAUGE = [9.0, 9.6, 8.4, 9.1, 9.9, 8.8, 10.2, 9.3]
+
+
 @pytest.mark.parametrize(
-    ("plan", "words"),
+    ("plan", "body"),
     [
-        ({"family": "score", "boundaries": "strict"}, "no model of the observations"),
-        ({"family": "normal", "statistic": "invariant", "h0": 0.0, "h1": 1.0}, "invariant statistic"),
+        ({**T_TEST, "family": "normal", "known": {"reference": 8.0}}, {"values": GAUGE * 4}),
+        ({**T_TEST, "family": "normal_difference"}, {"observations": [{"a": 8.0, "b": value} for value in GAUGE * 4]}),
+        (
+            {**T_TEST, "family": "normal_two_sample"},
+            {"observations": [{"arm": "ab"[i % 3 > 0], "value": v - (i % 3 == 0)} for i, v in enumerate(GAUGE * 4)]},
+        ),
+        ({**T_TEST, "family": "normal", "sides": 2, "known": {"reference": 10.5}}, {"values": GAUGE * 4}),
     ],
 )
-def test_where_nothing_can_be_said_the_reason_is(
-    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], words: str
+def test_a_sequential_t_test_has_simulated_figures(
+    admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any]
 ) -> None:
-    key = with_test(admin, new_name, {**plan, "alpha": 0.05, "beta": 0.1})
-    assert admin.get(f"/v1/tests/{key}/inference").status_code == 409
-    admin.post(f"/v1/tests/{key}/observations", json={"values": [9.0, 9.1, 8.9, 9.0] * 4}).raise_for_status()
-    answer = admin.get(f"/v1/tests/{key}/inference")
-    assert (answer.status_code, pointers(answer)) == (422, [])
-    assert answer.json()["type"].endswith(":invalid-question")
-    assert words in answer.json()["detail"]
-    assert "the plan's risks" in answer.json()["detail"]
+    found = inferred(admin, new_name, plan, body)
+    assert (found["decision"], found["p_value_kind"], found["ordering"]) == ("reject", "simulated", "stage-wise")
+    simulation, interval = found["simulation"], found["interval"]
+    assert (simulation["seed"], simulation["courses"] >= 1000) == (1, True)
+    assert simulation["standard_errors"].keys() == {"p_value", "median_unbiased", "lower", "upper"}
+    assert all(error > 0.0 for error in simulation["standard_errors"].values())
+    assert interval["lower"] < found["estimates"]["median_unbiased"] < interval["upper"]
+    assert found["p_value"] < 0.05 + 4.0 * simulation["standard_errors"]["p_value"]
+    assert found["reasons"].keys() == {"unbiased", "bias_of_maximum_likelihood"}
+    assert inferred(admin, new_name, plan, body) == found
+
+
+def test_evidence_of_ones_own_has_a_bound_and_no_estimate(admin: httpx.Client, new_name: Namer) -> None:
+    plan = {"family": "score", "boundaries": "strict", "alpha": 0.05, "beta": 0.1}
+    found = inferred(admin, new_name, plan, {"values": [2.0, 2.0, 0.5]})
+    assert (found["decision"], found["p_value_kind"], found["overrun"]) == ("reject", "bound", 1)
+    assert found["p_value"] == pytest.approx(math.exp(-4.0), rel=1e-14)
+    assert found["estimates"] == {"maximum_likelihood": None, "median_unbiased": None, "unbiased": None}
+    assert found["interval"] == {"level": 0.95, "lower": None, "upper": None}
+    assert (found["ordering"], found["simulation"], found["bias_of_maximum_likelihood"]) == (None, None, None)
+    assert found["reasons"].keys() == {
+        "maximum_likelihood",
+        "median_unbiased",
+        "unbiased",
+        "lower",
+        "upper",
+        "bias_of_maximum_likelihood",
+    }
+    assert all("no model" in reason for reason in found["reasons"].values())
+    assert "likelihood ratio" in found["meanings"]["p_value"]
+    accepted = inferred(admin, new_name, plan, {"values": [-3.0]})
+    assert (accepted["decision"], accepted["p_value"]) == ("accept", 1.0)
 
 
 def test_a_long_log_of_uneven_exposures_is_read_to_its_end(admin: httpx.Client, new_name: Namer) -> None:

@@ -1,5 +1,6 @@
 """The figures for monitoring: right in one process, and added up over several."""
 
+import itertools
 import os
 import re
 import signal
@@ -10,12 +11,15 @@ from pathlib import Path
 import httpx
 from sqlalchemy.engine import URL
 
-from service.api.metrics import Metrics
+from service.web.metrics import Metrics
 from tests.api.examples import SEAL, Namer, with_test
+from tests.notices.receiving import Receiver, listening
 from tests.postgres import fresh_database
 from tests.running import Running, running
 
 Figures = dict[str, float]
+
+TELLING = {"SPRT_NOTICE_PLAIN_HTTP": "true", "SPRT_NOTICE_PRIVATE_TARGETS": "true"}
 
 
 def figures(client: httpx.Client) -> Figures:
@@ -102,7 +106,7 @@ def test_whichever_process_is_asked_answers_for_all(server: URL, tmp_path: Path)
     """Two real processes on one port, and one of them killed while it holds a stream."""
     with (
         fresh_database(server) as url,
-        running(tmp_path, database_url=url, arguments=("--workers", "2")) as service,
+        running(tmp_path, database_url=url, arguments=("--workers", "2"), **TELLING) as service,  # type: ignore[arg-type]
     ):
         asked, served = 0, 0
         headers = {"Authorization": f"Bearer {service.keys['viewer']}", "Connection": "close"}
@@ -117,6 +121,8 @@ def test_whichever_process_is_asked_answers_for_all(server: URL, tmp_path: Path)
             for _ in range(3):
                 last = figures(client)
             assert requests(last, "GET", "/metrics", 200) == 12
+            with listening() as receiver:
+                notices_are_counted_together(service, receiver, client)
             with client.stream("GET", "/v1/events") as stream:
                 lines = stream.iter_lines()
                 assert next(lines).startswith("retry")
@@ -127,6 +133,23 @@ def test_whichever_process_is_asked_answers_for_all(server: URL, tmp_path: Path)
             found = figures(client)
             assert found["sprt_event_streams"] == 0
             assert requests(found, "GET", "/v1/summary", 200) == asked
+
+
+def notices_are_counted_together(service: Running, receiver: Receiver, viewer: httpx.Client) -> None:
+    """Whichever process sends them, and each sent once."""
+    headers = {"Authorization": f"Bearer {service.keys['administrator']}", "Connection": "close"}
+    with httpx.Client(base_url=service.url, headers=headers) as client:
+        client.post("/v1/receivers", json={"name": "bench", "address": receiver.url}).raise_for_status()
+        numbers = itertools.count(1)
+        keys = [with_test(client, lambda prefix: f"{prefix}-{next(numbers)}", SEAL) for _ in range(8)]
+        for key in keys:
+            client.post(f"/v1/tests/{key}/observations", json={"values": [0] * 24}).raise_for_status()
+    eventually(lambda: figures(viewer).get('sprt_notice_deliveries_total{outcome="delivered"}') == 8, 30.0)
+    assert sorted(receiver.told) == sorted((key, 2) for key in keys)
+    for _ in range(6):
+        found = figures(viewer)
+        assert found['sprt_notice_deliveries_total{outcome="delivered"}'] == 8
+        assert (found["sprt_notices_waiting"], found["sprt_oldest_notice_seconds"]) == (0, 0)
 
 
 def ready(client: httpx.Client) -> bool:

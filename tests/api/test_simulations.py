@@ -6,11 +6,11 @@ from typing import Any
 
 import pytest
 
-from service.api.parts import Computers
-from service.api.simulations import MOST_UNFINISHED, Simulation, Simulations, Status
 from service.domain.checking import checked_content
 from service.domain.errors import TooManyQuestions, UnknownSimulation
 from service.domain.simulating import question_of
+from service.web.parts import Computers
+from service.web.simulations import MOST_UNFINISHED, Simulation, Simulations, Status
 
 PLAN = checked_content(
     {"family": "normal", "statistic": "invariant", "h0": 0.0, "h1": 0.8, "alpha": 0.05, "beta": 0.10}

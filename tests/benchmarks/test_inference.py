@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from service.domain.checking import checked_content
-from service.domain.inference import Inference, _inference, inference_of
+from service.domain.inference import Inference, _inference, _studied, inference_of
 from service.domain.observing import observe
 from service.domain.outlook import _outlook, outlook_of
 from service.domain.procedure import procedure_of_document
@@ -63,3 +63,40 @@ def test_inference_after_long_tests(content: dict[str, Any], parameter: float) -
     assert found is not None
     print(f"\ninference of {content['family']} after {state.sample_number}: {statistics.median(spent):.0f} ms")
     print(f"of that the bias: {'left out' if found.bias is None else 'computed'}; outlook of the plan: {beside:.0f} ms")
+
+
+# Plans of unknown spread, and the standardised mean that the measurements really have.
+STUDIED: list[tuple[dict[str, Any], float]] = [
+    ({"family": "normal", "h1": 0.5, "alpha": 0.05, "beta": 0.10}, 0.5),
+    ({"family": "normal", "h1": 0.5, "alpha": 0.05, "beta": 0.10}, 0.0),
+    ({"family": "normal", "h1": 0.5, "alpha": 0.05, "beta": 0.10, "sides": 2}, 0.0),
+    ({"family": "normal", "h1": 1.5, "alpha": 0.001, "beta": 0.001}, 1.5),
+    ({"family": "normal", "h1": 0.1, "alpha": 0.01, "beta": 0.01}, 0.05),
+    ({"family": "normal", "h1": 0.03, "alpha": 0.01, "beta": 0.01}, 0.03),
+]
+
+
+@pytest.mark.benchmark
+@pytest.mark.parametrize(("content", "delta"), STUDIED)
+def test_inference_of_sequential_t_tests(content: dict[str, Any], delta: float) -> None:
+    document = checked_content({**content, "statistic": "invariant", "h0": 0.0})
+    source = np.random.default_rng(4)
+    submission = {"values": [float(value) for value in source.normal(delta, 1.0, 40_000)]}
+    state = observe(procedure_of_document(document), State(), submission, NOW)
+    spent: list[float] = []
+    found: Inference | None = None
+    for _ in range(ROUNDS):
+        _studied.cache_clear()
+        start = time.process_time()
+        found = inference_of(document, state, numbered([submission]), 0.95)
+        spent.append(time.process_time() - start)
+    assert found is not None
+    assert found.simulated is not None
+    width = (found.upper or 0.0) - (found.lower or 0.0)
+    errors = found.simulated.errors
+    print(
+        f"\nh1 {content['h1']}, {content.get('sides', 1)} sides, {state.decision} after {state.sample_number}: "
+        f"{statistics.median(spent):.2f} s of processor time, {found.simulated.courses} courses; errors of limits "
+        f"{100 * errors['lower'] / width:.2f} and {100 * errors['upper'] / width:.2f} % of the width, "
+        f"of p = {found.p_value:.2g} {100 * errors['p_value'] / found.p_value:.1f} %"
+    )

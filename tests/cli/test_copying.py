@@ -19,6 +19,9 @@ from tests.running import command, running
 
 
 def filled(client: httpx.Client) -> None:
+    """Two tests of which one decides, and a receiver that nobody reaches."""
+    receiver = {"name": "bench", "address": "https://bench.invalid/"}
+    client.post("/v1/receivers", json=receiver).raise_for_status()
     for name, content in (("seal", SEAL), ("shaft", SHAFT)):
         client.post("/v1/plans", json={"name": name, **content}).raise_for_status()
         registration = {
@@ -79,6 +82,8 @@ def test_a_move_to_postgresql_and_back_loses_no_row(server: URL, tmp_path: Path)
         moved = command("copy", service.database_url, url, database_url="unused://")
         assert moved.returncode == 0, moved.stderr
         assert "submissions: 2 rows" in moved.stderr
+        assert "receivers: 1 rows" in moved.stderr
+        assert "notices: 2 rows" in moved.stderr
         assert "the same" in moved.stderr
         again = command("copy", service.database_url, url, database_url="unused://")
         assert again.returncode == 1
@@ -112,7 +117,7 @@ def test_a_row_that_arrives_changed_undoes_the_copy(tmp_path: Path) -> None:
 
 
 def test_every_table_is_copied() -> None:
-    assert len(tables.metadata.sorted_tables) == 9
+    assert len(tables.metadata.sorted_tables) == 11
 
 
 def test_several_processes_serve_one_postgresql_database(server: URL, tmp_path: Path) -> None:

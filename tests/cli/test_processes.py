@@ -221,12 +221,13 @@ def test_a_bad_database_address_is_one_clear_line(tmp_path: Path) -> None:
         assert "Traceback" not in done.stderr
 
 
-def test_the_demo_decides_all_four_and_cleans_up() -> None:
+def test_the_demo_decides_four_leaves_two_open_and_cleans_up() -> None:
     done = command("demo", "--quick", database_url="sqlite:///never-used.sqlite3")
     assert done.returncode == 0, done.stderr
     assert done.stdout.count("accepted") >= 1
     assert done.stdout.count("rejected") >= 1
     assert done.stdout.count("accepted") + done.stdout.count("rejected") == 4
+    assert done.stdout.count("still to be decided") == 2
     assert not Path("never-used.sqlite3").exists()
 
 

@@ -12,7 +12,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.stats import binom
 
-from service.domain import assumptions
+from service.domain import assumptions, gathering
 from service.domain.assumptions import NO_EFFECT, Assumptions, assumptions_of, holm
 from service.domain.checking import checked_content
 from service.domain.checks import Check
@@ -265,7 +265,7 @@ def test_how_the_stream_was_split_does_not_matter(monkeypatch: pytest.MonkeyPatc
     assert posted("exponential", *parts).checks == whole.checks
     singles = [values(stream[i : i + 1]) for i in range(60)]
     assert posted("exponential", *singles).checks == whole.checks
-    monkeypatch.setattr(assumptions, "PIECE", 7)
+    monkeypatch.setattr(gathering, "MOST_CHARACTERS", 150)
     assert posted("exponential", *singles).checks == whole.checks
 
 

@@ -8,8 +8,7 @@ import pytest
 from scipy.stats import norm
 
 from service.domain.checking import checked_content
-from service.domain.errors import ComputationTooLarge, InvalidQuestion
-from service.domain.families.base import End, Family
+from service.domain.errors import ComputationTooLarge
 from service.domain.inference import Inference, inference_at, inference_of, looks_of
 from service.domain.observing import observe
 from service.domain.procedure import procedure_of_document
@@ -78,17 +77,6 @@ def test_a_region_that_rejects_on_both_sides_doubles_the_smaller_tail(total: flo
     found = inference_at(two_sided, looks, Sum(total), decision, 0.95)
     exact = {9.0: 11 / 1024, 0.0: 1 / 1024}[total]
     assert found.p_value == pytest.approx(2 * exact, rel=1e-12)
-
-
-def test_a_family_without_inference_says_so() -> None:
-    class Silent(type(procedure_of_document(checked_content(SEAL)).family)):  # type: ignore[misc]
-        def outcome(self, region: Any, end: End, known: Any) -> None:
-            return Family.outcome(self, region, end, known)  # type: ignore[return-value]
-
-    procedure = replace(procedure_of_document(checked_content(SEAL)), family=Silent())
-    state = observe(procedure, State(), {"values": [1, 1]}, NOW)
-    with pytest.raises(InvalidQuestion):
-        inference_at(procedure, looks_of(procedure, state, []), state.total, state.decision, 0.95)
 
 
 def test_measurements_too_far_between_their_limits_are_too_much() -> None:

@@ -17,6 +17,7 @@ from service.domain.characteristics import promise_of
 from service.domain.checking import checked_content
 from service.domain.errors import ComputationTooLarge, InvalidObservations, InvalidPlan, InvalidQuestion
 from service.domain.families.base import Way
+from service.domain.gathering import alone
 from service.domain.observing import direction_of_rejection, observe
 from service.domain.outlook import outlook_of, ways_of
 from service.domain.path import path_of, region_points
@@ -158,7 +159,7 @@ def test_decisions_are_those_of_the_noncentral_t(
     assert whole.total.value == pytest.approx(float(t), rel=1e-12, abs=1e-12)
     if decision == "reject" and change.get("sides") == 2:
         assert direction_of_rejection(procedure, whole) == ("above" if t > 0 else "below")
-    path = path_of(procedure, [(1, {"observations": rows})], 500)
+    path = path_of(procedure, [alone({"observations": rows})], 500)
     assert path.log_likelihood_ratio[-1] == whole.log_likelihood_ratio
     assert path.total[-1] == whole.total.value
     assert len(path.sequence) == used + 1

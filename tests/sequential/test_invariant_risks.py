@@ -101,6 +101,8 @@ def plainly(test: InvariantTest, delta: float, courses: int, seed: int) -> tuple
         usual(1.0),
         usual(1.0, samples=2),
         usual(1.0, last=8),
+        usual(1.0, samples=2, last=9),
+        invariant_test(invariant_ratio(0.7, -0.5), wald(0.05, 0.1), last=9),
         invariant_test(invariant_ratio(0.0, 1.0, sides=2), wald(0.1, 0.1)),
         invariant_test(invariant_ratio(1.2, 0.2), wald(0.1, 0.1)),
     ],

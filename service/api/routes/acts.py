@@ -9,12 +9,12 @@ from service.api.access import requires
 from service.api.bodies import StrictRequest, StrictRoute
 from service.api.conditional import etag, expected_versions
 from service.api.description import answers_with
-from service.api.parts import PartsOf
-from service.api.requests import request_id_of
 from service.api.schemas.acts import CorrectedOut, CorrectionForm, DispositionForm
 from service.api.schemas.tests import TestOut
 from service.domain.access import AccessKey, Role
 from service.ingest.commands import Corrected, Dispose, Disposed, PostCorrection
+from service.web.parts import PartsOf
+from service.web.requests import request_id_of
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["tests"], route_class=StrictRoute)
 

@@ -8,12 +8,12 @@ from fastapi import APIRouter, Request, Response
 from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.description import answers_with
-from service.api.parts import PartsOf, reading
-from service.api.requests import request_id_of
 from service.api.schemas.administration import IssuedKeyOut, KeyForm, KeyOut, KeysOut, SummaryOut
 from service.domain.access import AccessKey, Role
 from service.domain.state import Decision
 from service.ingest.commands import CreateKey, IssuedKey, RevokeKey
+from service.web.parts import PartsOf, reading
+from service.web.requests import request_id_of
 
 router = APIRouter(prefix="/v1", tags=["administration"], route_class=StrictRoute)
 

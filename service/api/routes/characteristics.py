@@ -10,8 +10,6 @@ from pydantic import BaseModel, ConfigDict, Field
 from service.api.access import requires
 from service.api.bodies import StrictRequest, StrictRoute
 from service.api.description import answers_with
-from service.api.lookup import known_plan
-from service.api.parts import Parts, PartsOf, computing
 from service.api.routes.observations import PathQuery
 from service.api.schemas.characteristics import CandidateOut, CharacteristicsForm, CharacteristicsOut, ComparisonOut
 from service.api.schemas.observations import ObservationsForm, RehearsalForm, RehearsalOut
@@ -26,6 +24,8 @@ from service.domain.procedure import Procedure, procedure_of, procedure_of_docum
 from service.domain.simulating import Question, question_of
 from service.domain.state import State
 from service.domain.units import new_units
+from service.web.lookup import known_plan
+from service.web.parts import Parts, PartsOf, computing
 
 router = APIRouter(prefix="/v1", tags=["characteristics"], route_class=StrictRoute)
 

@@ -10,12 +10,12 @@ from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.description import answers_with
 from service.api.filters import FiltersQuery
-from service.api.parts import PartsOf, reading
-from service.api.schemas.common import Name
-from service.api.schemas.events import EXAMPLE
-from service.api.streams import EventStream, Stream
+from service.api.schemas.events import EXAMPLE, TestEventOut
 from service.domain.access import AccessKey, Role
-from service.storage.reader import TestFilters
+from service.storage.reader import Change, TestFilters
+from service.web.fields import Name
+from service.web.parts import PartsOf, reading
+from service.web.streams import EventStream, Stream
 
 router = APIRouter(prefix="/v1", tags=["events"], route_class=StrictRoute)
 
@@ -74,4 +74,8 @@ async def stream_events(
         raise
     after = query.after if last_event_id is None else last_event_id
     position = newest if after is None else after if after <= newest else 0
-    return EventStream(Stream(parts, access_key, filters, position).told(), leave)
+    return EventStream(Stream(parts, access_key, filters, position, _event).told(), leave)
+
+
+def _event(change: Change) -> str:
+    return f"id: {change.number}\nevent: test\ndata: {TestEventOut.model_validate(change).model_dump_json()}\n\n"

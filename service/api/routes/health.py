@@ -5,10 +5,10 @@ from typing import Any
 
 from fastapi import APIRouter
 
-from service.api.parts import PartsOf, reading
 from service.api.problems import RequestProblem
 from service.api.schemas.administration import HealthOut
 from service.ingest.commands import Probe
+from service.web.parts import PartsOf, reading
 
 logger = logging.getLogger(__name__)
 

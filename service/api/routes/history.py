@@ -10,13 +10,13 @@ from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.conditional import etag, not_modified
 from service.api.description import answers_with
-from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, numbers_after
-from service.api.parts import Parts, PartsOf, reading
 from service.api.schemas.history import ActOut, HistoryOut
 from service.domain.access import Role
 from service.domain.chain import Entry
 from service.domain.sequential_test import SequentialTest
+from service.web.lookup import known_test
+from service.web.parts import Parts, PartsOf, reading
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["tests"], route_class=StrictRoute)
 

@@ -10,14 +10,15 @@ from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.conditional import etag
 from service.api.description import answers_with
-from service.api.lookup import known_test, unchanged_test
-from service.api.parts import Parts, PartsOf, computing
 from service.api.schemas.inference import InferenceOut
+from service.api.unchanged import unchanged_test
 from service.domain.access import Role
 from service.domain.errors import NotDecided
 from service.domain.inference import inference_of
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest
+from service.web.lookup import known_test
+from service.web.parts import Parts, PartsOf, computing
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["tests"], route_class=StrictRoute)
 
@@ -35,7 +36,7 @@ class InferenceQuery(BaseModel):
 
 @router.get(
     "/inference",
-    responses=answers_with("not-found", "not-decided", "computation-too-large", "invalid-question"),
+    responses=answers_with("not-found", "not-decided", "computation-too-large"),
     response_model=InferenceOut,
     summary="What may be said after the decision",
     dependencies=[requires(Role.VIEWER)],

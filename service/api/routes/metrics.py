@@ -6,8 +6,9 @@ from fastapi import APIRouter, Response
 
 from service.api.access import requires_metrics
 from service.api.description import answers_with
-from service.api.metrics import MEDIA_TYPE
-from service.api.parts import PartsOf, reading
+from service.domain.errors import DatabaseAway
+from service.web.metrics import MEDIA_TYPE, outbox_text
+from service.web.parts import Parts, PartsOf, reading
 
 router = APIRouter(tags=["health"])
 
@@ -27,5 +28,14 @@ FIGURES: dict[int | str, dict[str, Any]] = {
     dependencies=[requires_metrics()],
 )
 async def show_metrics(parts: PartsOf) -> Response:
-    """Requests, latencies, what waits, groups, commits, decisions and streams, added up over all processes."""
-    return Response(await reading(parts.metrics.text), media_type=MEDIA_TYPE)
+    """Requests, latencies, what waits, groups, commits, decisions, notices and streams, added up over all processes."""
+    return Response(await reading(lambda: _figures(parts)), media_type=MEDIA_TYPE)
+
+
+def _figures(parts: Parts) -> bytes:
+    """All figures; those of the outbox are left out while the database is away, which the others show."""
+    own = parts.metrics.text()
+    try:
+        return own + outbox_text(parts.reader.notices.figures(), parts.clock())
+    except DatabaseAway:
+        return own

@@ -3,7 +3,6 @@
 import csv
 import hashlib
 import io
-import json
 from collections.abc import Iterator
 from itertools import islice
 from typing import Annotated, Any, cast
@@ -16,10 +15,7 @@ from service.api.access import requires
 from service.api.bodies import StrictRequest, StrictRoute
 from service.api.conditional import etag, expected_versions, not_modified
 from service.api.description import answers_with
-from service.api.lookup import known_test
 from service.api.paging import Cursor, Limit, encoded, link_next, number_after
-from service.api.parts import Parts, PartsOf, reading
-from service.api.requests import request_id_of
 from service.api.schemas.observations import (
     LoggedOut,
     LogOut,
@@ -36,6 +32,9 @@ from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import Posted, PostObservations
+from service.web.lookup import known_test
+from service.web.parts import Parts, PartsOf, reading
+from service.web.requests import request_id_of
 
 router = APIRouter(prefix="/v1/tests/{key}", tags=["observations"], route_class=StrictRoute)
 
@@ -191,6 +190,5 @@ def _cell(value: object) -> str:
 
 def _path(parts: Parts, test: SequentialTest, plan: Plan, points: int) -> PathOut:
     procedure = procedure_of(plan)
-    bodies = parts.reader.log.bodies(test, 0, test.state.sequence)
-    documents = ((first, json.loads(body)) for first, body in bodies)
-    return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, documents, points))
+    path = parts.walks.path_of(parts.reader, test, plan, points)
+    return PathOut(key=test.key, decision=test.state.decision, **drawn(procedure, path))

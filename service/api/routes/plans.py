@@ -9,15 +9,15 @@ from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.conditional import etag, not_modified
 from service.api.description import answers_with
-from service.api.lookup import known_plan
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
-from service.api.parts import PartsOf, computing, reading
-from service.api.requests import request_id_of
 from service.api.schemas.plans import PlanForm, PlanOut, PlansOut, StandardOut, StandardsOut
 from service.domain.access import AccessKey, Role
 from service.domain.checking import attained_by, checked_content
 from service.domain.standards import catalogue
 from service.ingest.commands import CreatePlan, StoredPlan
+from service.web.lookup import known_plan
+from service.web.parts import PartsOf, computing, reading
+from service.web.requests import request_id_of
 
 router = APIRouter(prefix="/v1/plans", tags=["plans"], route_class=StrictRoute)
 standards_router = APIRouter(prefix="/v1/standard-plans", tags=["plans"], route_class=StrictRoute)

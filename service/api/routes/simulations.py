@@ -5,9 +5,9 @@ from fastapi import APIRouter
 from service.api.access import requires
 from service.api.bodies import StrictRoute
 from service.api.description import answers_with
-from service.api.parts import PartsOf
 from service.api.schemas.simulations import SimulationOut
 from service.domain.access import Role
+from service.web.parts import PartsOf
 
 router = APIRouter(prefix="/v1/simulations", tags=["characteristics"], route_class=StrictRoute)
 

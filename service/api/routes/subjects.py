@@ -6,14 +6,14 @@ from fastapi import APIRouter, Path
 
 from service.api.access import requires
 from service.api.description import answers_with
-from service.api.parts import Parts, PartsOf, reading
-from service.api.schemas.common import Text
 from service.api.schemas.subjects import SubjectStateOut
 from service.domain.access import Role
 from service.domain.errors import InvalidQuestion, UnknownSubject
 from service.domain.joint import joint_of
 from service.domain.sequential_test import SubjectKind
 from service.storage.reader import TestFilters
+from service.web.fields import Text
+from service.web.parts import Parts, PartsOf, reading
 
 # The name of a subject is free text, slashes included, so that this is no strict route.
 router = APIRouter(prefix="/v1/subjects", tags=["tests"])

@@ -10,14 +10,11 @@ from service.api.bodies import StrictRoute
 from service.api.conditional import etag, expected_versions
 from service.api.description import answers_with
 from service.api.filters import FiltersQuery
-from service.api.lookup import known_test, unchanged_test
 from service.api.paging import Cursor, Limit, encoded, link_next, text_after
-from service.api.parts import Parts, PartsOf, computing, reading
-from service.api.requests import request_id_of
 from service.api.schemas.assumptions import AssumptionsOut
-from service.api.schemas.common import Moment
 from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
+from service.api.unchanged import unchanged_test
 from service.domain.access import AccessKey, Role
 from service.domain.assumptions import assumptions_of, stretch_of
 from service.domain.disposing import Verdict
@@ -27,6 +24,10 @@ from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import RegisteredTest, RegisterTest
 from service.storage.reader import TestFilters
+from service.web.fields import Moment
+from service.web.lookup import known_test
+from service.web.parts import Parts, PartsOf, computing, reading
+from service.web.requests import request_id_of
 
 router = APIRouter(prefix="/v1/tests", tags=["tests"], route_class=StrictRoute)
 

@@ -4,12 +4,13 @@ from typing import Any, Self
 
 from pydantic import ConfigDict, Field, model_validator
 
-from service.api.schemas.common import Form, Reason, shown_as
+from service.api.schemas.common import Form, shown_as
 from service.api.schemas.observations import CorrectionOut, ObservationForm
 from service.api.schemas.tests import STATE, TestOut, members
 from service.domain.correcting import Action
 from service.domain.disposing import Verdict
 from service.ingest.commands import Corrected
+from service.web.fields import Reason
 
 CORRECTIONS: list[dict[str, Any]] = [
     {"sequence": 7, "action": "void", "reason": "Seal 7 was tested without its ring."},

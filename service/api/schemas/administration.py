@@ -5,9 +5,10 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Moment, Name, Text, shown_as
+from service.api.schemas.common import Answer, Form, shown_as
 from service.api.schemas.tests import SubjectForm, SubjectOut
 from service.domain.access import AccessKey, Limits, Role, limits_of
+from service.web.fields import Moment, Name, Text
 
 EXAMPLE: dict[str, Any] = {
     "name": "line-2-tester",
@@ -33,14 +34,9 @@ SUMMARY: dict[str, Any] = {
 }
 
 
-class KeyForm(Form):
-    """A key to make."""
+class LimitedForm(Form):
+    """What may be limited to some tests: of one of the subjects, and with one of the values of each label."""
 
-    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
-
-    name: Name
-    role: Role
-    expires_at: Moment | None = None
     subjects: Annotated[list[SubjectForm], Field(max_length=100)] = Field(default_factory=list)
     labels: Annotated[dict[Name, Annotated[list[Text], Field(min_length=1, max_length=100)]], Field(max_length=20)] = (
         Field(default_factory=dict)
@@ -50,6 +46,16 @@ class KeyForm(Form):
         """The domain's value."""
         labels = [(name, value) for name, values in self.labels.items() for value in values]
         return limits_of([subject.subject() for subject in self.subjects], labels)
+
+
+class KeyForm(LimitedForm):
+    """A key to make."""
+
+    model_config = ConfigDict(json_schema_extra={"examples": [EXAMPLE]})
+
+    name: Name
+    role: Role
+    expires_at: Moment | None = None
 
 
 class KeyOut(Answer):

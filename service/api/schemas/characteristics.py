@@ -4,12 +4,13 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, FailFast, Field
 
-from service.api.schemas.common import Answer, Form, Name, Number, Whole, optional, shown_as
+from service.api.schemas.common import Answer, Form, optional, shown_as
 from service.api.schemas.plans import EXAMPLE as PLAN
 from service.api.schemas.plans import AttainedOut, LinesOut, PlanContentForm, ThresholdsOut, TruncationForm
 from service.domain.characteristics import Point, Promise, Simulation, Spread
 from service.domain.designing import Suggestion
 from service.domain.procedure import lines_of, procedure_of_document
+from service.web.fields import Name, Number, Whole
 
 PROMISE: dict[str, Any] = {
     "method": "recursion",

@@ -1,23 +1,25 @@
 """Observations: as posted, as logged, and as a path to draw."""
 
 import json
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from datetime import UTC, datetime
 from typing import Annotated, Any, Literal, Self
 
 from pydantic import ConfigDict, FailFast, Field, StrictBool, StringConstraints, model_validator
 
-from service.api.schemas.common import Answer, Form, Moment, Number, Text, optional, shown_as
+from service.api.schemas.common import Answer, Form, optional, shown_as
 from service.api.schemas.plans import CONTENT as PLAN
 from service.api.schemas.plans import PlanContentForm, ThresholdsOut
 from service.api.schemas.tests import ConfidenceOut, total_of
 from service.domain.anytime import ConfidenceSequence, always_valid_p_value, confidence_sequence
 from service.domain.correcting import Correction
 from service.domain.families import Family
+from service.domain.gathering import alone
 from service.domain.log import LoggedObservation, fields_of
 from service.domain.path import Path, RegionPoint, path_of, region_points
 from service.domain.procedure import Procedure
 from service.domain.state import State
+from service.web.fields import Moment, Number, Text
 
 EXAMPLES: list[dict[str, Any]] = [
     {"values": [0, 0, 1]},
@@ -269,13 +271,12 @@ class RehearsalOut(Answer):
             total=total_of(procedure.family, state.total.value),
             cause=state.decided.cause if state.decided else None,
             overrun=state.overrun,
-            **drawn(procedure, [(1, document)], points),
+            **drawn(procedure, path_of(procedure, [alone(document)], points)),
         )
 
 
-def drawn(procedure: Procedure, documents: Iterable[tuple[int, Mapping[str, Any]]], points: int) -> dict[str, Any]:
+def drawn(procedure: Procedure, path: Path) -> dict[str, Any]:
     """The members of an answer that draw a walk: its points, and the region around them."""
-    path = path_of(procedure, documents, points)
     region = region_points(procedure, float(path.progress[-1]))
     sequence = confidence_sequence(procedure, path.progress, path.total)
     return {

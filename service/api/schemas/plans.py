@@ -6,12 +6,13 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field, field_validator
 
-from service.api.schemas.common import Answer, Form, Name, Number, Text, Whole, optional, shown_as
+from service.api.schemas.common import Answer, Form, optional, shown_as
 from service.domain.calibrating import Attained
 from service.domain.families import FAMILIES
 from service.domain.plan import Plan
 from service.domain.procedure import lines_of, procedure_of
 from service.domain.standards import Standard, source_of
+from service.web.fields import Name, Number, Text, Whole
 
 CONTENT: dict[str, Any] = {
     "family": "bernoulli",

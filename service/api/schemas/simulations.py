@@ -7,7 +7,7 @@ from pydantic import Field
 from service.api.problems import document, document_of
 from service.api.schemas.characteristics import SIMULATED, CharacteristicsOut
 from service.api.schemas.common import Answer, ProblemOut, shown_as
-from service.api.simulations import Simulation
+from service.web.simulations import Simulation
 
 RUNNING: dict[str, Any] = {
     "id": "5f0c1a2b3c4d5e6f708192a3b4c5d6e7",

@@ -6,7 +6,7 @@ from typing import Annotated, Any
 
 from pydantic import ConfigDict, Field
 
-from service.api.schemas.common import Answer, Form, Name, Text, optional, shown_as
+from service.api.schemas.common import Answer, Form, optional, shown_as
 from service.api.schemas.plans import ThresholdsOut
 from service.domain.anytime import ConfidenceSequence, always_valid_p_value, confidence_at
 from service.domain.disposing import Disposition
@@ -19,6 +19,7 @@ from service.domain.procedure import Procedure, procedure_of
 from service.domain.sequential_test import SequentialTest, Subject, SubjectKind
 from service.domain.state import State
 from service.ingest.commands import Posted
+from service.web.fields import Name, Text
 
 EXAMPLE: dict[str, Any] = {
     "key": "lot-2041",

@@ -133,6 +133,8 @@ class Family(ABC):
     Attributes:
         name: As a plan names it.
         parameter: What h0 and h1 are.
+        counted: What the total is, for people; `displayed` where it shows something else.
+        axis: What the region runs over, for people.
         value_field: The field of an observation that carries its result.
         optional: Fields that an observation may carry beside it, with the value taken where one is absent.
         required: Fields that an observation object must carry beside it.
@@ -149,15 +151,17 @@ class Family(ABC):
         has_model: A plan states h0 and h1, and what they say of the observations gives exact figures.
         has_normal_steps: The total moves by normal amounts, so that Siegmund's overshoot is theirs.
         no_unbiased_estimate: Why the parameter has no unbiased estimate, where it has none.
-        no_inference: Why nothing is said after the decision, where the family does not follow outcomes.
         no_bias: Why the bias of the maximum-likelihood estimate is not given, where it is not.
         may_know: Names of what a plan may state in `known` beside that.
         is_invariant: The region runs over the log-likelihood ratio itself, and figures are simulated.
         fewest_units: The smallest sample number at which a plan may be truncated.
+        looks_at_arms: What a look knows depends on the arms of all measurements so far.
     """
 
     name: ClassVar[str]
     parameter: ClassVar[str]
+    counted: ClassVar[str]
+    axis: ClassVar[str] = "units"
     value_field: ClassVar[str] = "value"
     optional: ClassVar[Mapping[str, float]] = {}
     required: ClassVar[tuple[str, ...]] = ()
@@ -174,11 +178,11 @@ class Family(ABC):
     has_model: ClassVar[bool] = True
     has_normal_steps: ClassVar[bool] = False
     no_unbiased_estimate: ClassVar[str | None] = None
-    no_inference: ClassVar[str] = "Inference after the decision is not served for this family."
     no_bias: ClassVar[str | None] = None
     may_know: ClassVar[tuple[str, ...]] = ()
     is_invariant: ClassVar[bool] = False
     fewest_units: ClassVar[int] = 1
+    looks_at_arms: ClassVar[bool] = False
 
     @abstractmethod
     def hypothesis_rule(self, value: float) -> str | None:
@@ -301,9 +305,9 @@ class Family(ABC):
         """Whether a stream looks as supposed: here, that what each observation adds to the total is in no order."""
         return order_checks(seen.total, "observations")
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
-        """An end among all that could have come, None where the family does not follow them."""
-        return None
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
+        """An end among all that could have come, for families whose outcomes are followed exactly."""
+        raise TypeError(f"{self.name} does not follow outcomes")
 
     def bias(self, region: Region, parameter: float, step: float, known: Mapping[str, float]) -> float:
         """

@@ -53,6 +53,7 @@ class Bernoulli(Family):
 
     name: ClassVar[str] = "bernoulli"
     parameter: ClassVar[str] = "proportion nonconforming"
+    counted: ClassVar[str] = "nonconforming units"
     optional: ClassVar[Mapping[str, float]] = {"size": 1.0}
     span: ClassVar[Span] = PASS_FAIL
     prior: ClassVar[tuple[str, ...]] = ("a", "b")
@@ -98,7 +99,7 @@ class Bernoulli(Family):
             None if up is None else Way(up[0], None, up[1], _with_at_least(*up)),
         )
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         return CountedOutcome(UnitLaw(), schedule_of_looks(region, end.looks), int(end.total.value), end.is_above)
 

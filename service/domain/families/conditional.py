@@ -83,7 +83,7 @@ class Conditional(Family):
         """See `Family`; the prior is that of the share of b."""
         return SHARES.mixture(edge, direction, {}, prior)
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         return SHARES.outcome(region, end, {})
 

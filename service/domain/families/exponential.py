@@ -58,6 +58,8 @@ class Exponential(Family):
 
     name: ClassVar[str] = "exponential"
     parameter: ClassVar[str] = "mean life"
+    counted: ClassVar[str] = "failures"
+    axis: ClassVar[str] = "unit-time"
     value_field: ClassVar[str] = "time"
     required: ClassVar[tuple[str, ...]] = ("failed",)
     in_values: ClassVar[Mapping[str, float]] = {"failed": 1.0}
@@ -115,7 +117,7 @@ class Exponential(Family):
         """See `Family`."""
         return start.progress / start.total if start.total > 0.0 and start.progress > 0.0 else None
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         return CountedOutcome(
             RateLaw(), schedule_of_time(region, float(end.looks[-1])), int(end.total.value), end.is_above

@@ -61,12 +61,10 @@ class Invariant(Family):
         samples: 1, or 2 where t compares two.
     """
 
+    counted: ClassVar[str] = "Student's t"
+    axis: ClassVar[str] = "measurements"
     span: ClassVar[Span] = REALS
     is_invariant: ClassVar[bool] = True
-    no_inference: ClassVar[str] = (
-        "The looks of an invariant statistic depend on one another in a way that is not followed, so there is no "
-        "p-value and no interval after the decision; what holds are the plan's risks."
-    )
     samples: ClassVar[int] = 1
 
     @abstractmethod

@@ -73,6 +73,7 @@ class InvariantDifference(InvariantNormal):
 
     name: ClassVar[str] = "normal_difference"
     parameter: ClassVar[str] = "standardised mean of the differences b less a, (mean - reference)/sigma"
+    axis: ClassVar[str] = "pairs"
     value_field: ClassVar[str] = "a"
     required: ClassVar[tuple[str, ...]] = ("b",)
     noun: ClassVar[str] = "a pair whose b less a is a value"
@@ -101,6 +102,7 @@ class InvariantTwoSample(Invariant):
     )
     samples: ClassVar[int] = 2
     fewest_units: ClassVar[int] = 4
+    looks_at_arms: ClassVar[bool] = True
 
     def studied(self, sums: Sequence[Double]) -> tuple[Looks, Studentised]:
         """See `Invariant`."""

@@ -34,6 +34,7 @@ class Lognormal(Normal):
 
     name: ClassVar[str] = "lognormal"
     parameter: ClassVar[str] = "median"
+    counted: ClassVar[str] = "sum of the logarithms"
     no_unbiased_estimate: ClassVar[str | None] = "Unbiased is only the estimate of the median's logarithm."
     no_bias: ClassVar[str | None] = "Is known of the estimate of the median's logarithm only."
 

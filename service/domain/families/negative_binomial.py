@@ -44,6 +44,7 @@ class NegativeBinomial(Family):
 
     name: ClassVar[str] = "negative_binomial"
     parameter: ClassVar[str] = "mean count per unit"
+    counted: ClassVar[str] = "counts"
     known: ClassVar[tuple[str, ...]] = ("dispersion",)
     span: ClassVar[Span] = UNIT_COUNTS
 
@@ -78,7 +79,7 @@ class NegativeBinomial(Family):
         up = Way(1, None, max(0.0, high), _at_least(high)) if math.isfinite(high) else None
         return None if down is None else Way(down[0], None, down[1], _at_most(*down)), up
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         law, schedule = OverdispersedLaw(known["dispersion"]), schedule_of_looks(region, end.looks)
         return CountedOutcome(law, schedule, int(end.total.value), end.is_above)

@@ -45,6 +45,7 @@ class Normal(Family):
 
     name: ClassVar[str] = "normal"
     parameter: ClassVar[str] = "mean"
+    counted: ClassVar[str] = "sum of the measurements"
     known: ClassVar[tuple[str, ...]] = ("sigma",)
     span: ClassVar[Span] = REALS
     prior: ClassVar[tuple[str, ...]] = ("tau",)
@@ -91,7 +92,7 @@ class Normal(Family):
             Way(1, None, high, f"a measurement of at least {high:.6g}") if math.isfinite(high) else None,
         )
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         frame = frame_of(region, known["sigma"])
         height = height_of(region, frame, float(end.looks[-1]), end.total)

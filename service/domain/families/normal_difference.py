@@ -31,6 +31,8 @@ class NormalDifference(Normal):
 
     name: ClassVar[str] = "normal_difference"
     parameter: ClassVar[str] = "difference of the means, b less a"
+    counted: ClassVar[str] = "sum of the differences b less a"
+    axis: ClassVar[str] = "pairs"
     value_field: ClassVar[str] = "a"
     required: ClassVar[tuple[str, ...]] = ("b",)
     known: ClassVar[tuple[str, ...]] = ("sigma_a", "sigma_b")
@@ -47,7 +49,7 @@ class NormalDifference(Normal):
         """See `Family`."""
         return super().mixture(edge, direction, _of_difference(known), prior)
 
-    def outcome(self, region: Region, end: End, known: Known) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Known) -> Outcome:
         """See `Family`."""
         return super().outcome(region, end, _of_difference(known))
 

@@ -25,6 +25,8 @@ class NormalTwoSample(NormalDifference):
     """
 
     name: ClassVar[str] = "normal_two_sample"
+    counted: ClassVar[str] = "information times the difference of the averages"
+    axis: ClassVar[str] = "information, in pairs"
     value_field: ClassVar[str] = "value"
     required: ClassVar[tuple[str, ...]] = ("arm",)
     words: ClassVar[Mapping[str, Mapping[str, float]]] = {"arm": {"a": 0.0, "b": 1.0}}

@@ -38,6 +38,8 @@ class NormalVariance(Family):
 
     name: ClassVar[str] = "normal_variance"
     parameter: ClassVar[str] = "standard deviation"
+    counted: ClassVar[str] = "sum of squared deviations"
+    axis: ClassVar[str] = "measurements"
     known: ClassVar[tuple[str, ...]] = ("mean",)
     span: ClassVar[Span] = POSITIVE
 
@@ -82,7 +84,7 @@ class NormalVariance(Family):
         """See `Family`."""
         return math.sqrt(mean)
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         region, looks = _straight(region), len(end.looks)
         deviation = float(region.ratio.deviation(Double.of(float(looks)), end.total))

@@ -19,6 +19,8 @@ class Paired(Conditional):
 
     name: ClassVar[str] = "paired"
     parameter: ClassVar[str] = "odds ratio of success, b over a, of pairs that differ"
+    counted: ClassVar[str] = "pairs that differ in b's favour"
+    axis: ClassVar[str] = "pairs that differ"
     value_field: ClassVar[str] = "a"
     required: ClassVar[tuple[str, ...]] = ("b",)
     shown: ClassVar[tuple[str, str]] = ("pair that differs", "pairs that differ")

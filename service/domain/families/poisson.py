@@ -53,6 +53,8 @@ class Poisson(Family):
 
     name: ClassVar[str] = "poisson"
     parameter: ClassVar[str] = "rate per unit of exposure"
+    counted: ClassVar[str] = "counts"
+    axis: ClassVar[str] = "exposure"
     optional: ClassVar[Mapping[str, float]] = {"exposure": 1.0}
     span: ClassVar[Span] = COUNTS
     prior: ClassVar[tuple[str, ...]] = ("shape", "rate")
@@ -94,7 +96,7 @@ class Poisson(Family):
             None if up is None else Way(1, up[1], float(up[0]), _counts_within(*up)),
         )
 
-    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome | None:
+    def outcome(self, region: Region, end: End, known: Mapping[str, float]) -> Outcome:
         """See `Family`."""
         return CountedOutcome(RateLaw(), schedule_of_looks(region, end.looks), int(end.total.value), end.is_above)
 

@@ -19,6 +19,8 @@ class PoissonRatio(Conditional):
 
     name: ClassVar[str] = "poisson_ratio"
     parameter: ClassVar[str] = "ratio of the rates, b over a"
+    counted: ClassVar[str] = "events in b"
+    axis: ClassVar[str] = "events"
     value_field: ClassVar[str] = "a"
     required: ClassVar[tuple[str, ...]] = ("b",)
     known: ClassVar[tuple[str, ...]] = ("exposure_ratio",)

@@ -25,13 +25,10 @@ class Score(Family):
 
     name: ClassVar[str] = "score"
     parameter: ClassVar[str] = "none: the increments hold both hypotheses"
+    counted: ClassVar[str] = "sum of the increments"
+    axis: ClassVar[str] = "observations"
     span: ClassVar[Span] = REALS
     has_model: ClassVar[bool] = False
-    no_inference: ClassVar[str] = (
-        "The family score brings its own evidence and no model of the observations: there is no parameter to estimate, "
-        "and no probability of other outcomes for a p-value; what holds are "
-        "the plan's risks."
-    )
 
     def hypothesis_rule(self, value: float) -> str | None:
         """See `Family`."""

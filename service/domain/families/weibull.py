@@ -46,6 +46,8 @@ class Weibull(Exponential):
 
     name: ClassVar[str] = "weibull"
     parameter: ClassVar[str] = "characteristic life (63.2 % fail before it)"
+    counted: ClassVar[str] = "failures"
+    axis: ClassVar[str] = "exposure, unit-time transformed by the shape"
     optional: ClassVar[Mapping[str, float]] = {"from": 0.0}
     known: ClassVar[tuple[str, ...]] = ("shape",)
     table: ClassVar[TableKind | None] = None

@@ -1,0 +1,1 @@
+"""Tells receivers of decisions: takes notices from the outbox, sends them, and says how it went."""

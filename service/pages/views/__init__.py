@@ -1,0 +1,1 @@
+"""What a page shows of the domain: values for templates and drawings."""

@@ -1,0 +1,1 @@
+"""What the rooms that answer over HTTP share."""
