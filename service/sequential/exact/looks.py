@@ -17,10 +17,12 @@ from typing import NamedTuple
 import numpy as np
 from scipy.special import ndtr
 
+from service.sequential.curved import CurvedRegion
 from service.sequential.double import FloatArray, IndexArray
 from service.sequential.exact.characteristics import LEVELS, NEGLIGIBLE, Characteristics, TooMuchWork, spread
 from service.sequential.exact.strip import Strip, density, nodes_between
 from service.sequential.region import Region, looks_to_wall
+from service.sequential.shifted import line_of_h0, seen_from_h0
 
 # Standard deviations from the mean beyond which a total is not followed.
 FAR = 8.5
@@ -73,14 +75,17 @@ def characteristics_by_looks(
     Raises:
         TooMuchWork: The region is too wide for the spread, or too long.
     """
-    drifts = means / sigma
+    if isinstance(region, CurvedRegion):
+        line = line_of_h0(region)
+        region, means, total = seen_from_h0(region, sigma), means - line, total - line * progress
+    drifts, steps = means / sigma, _Steps(region, sigma, (progress, total))
     looks = None if region.wall is None else looks_to_wall(region.wall, 1.0, progress)
     groups = _groups(drifts, looks)
     parts: dict[float, list[_Ends]] = {fineness: [] for fineness in (1.2, 1.0)}
     left = MOST_WORK
     for fineness, found in parts.items():
         for group in groups:
-            found.append(_followed(region, drifts[group], sigma, (progress, total), fineness, left))
+            found.append(_followed(steps, drifts[group], fineness, left))
             left -= found[-1].work
     fine, coarse = (_joined(found, groups) for found in parts.values())
     mean, second = _moments(fine.survival)
@@ -120,29 +125,42 @@ def _moments(survival: FloatArray) -> tuple[FloatArray, FloatArray]:
     return 1.0 + survival.sum(axis=0), 1.0 + weight @ survival
 
 
-def _looks(region: Region, sigma: float, start: tuple[float, float]) -> Iterator[_Look]:
-    progress, total = start
-    last = math.inf if region.wall is None else looks_to_wall(region.wall, 1.0, progress)
-    begin = 1
-    while begin <= last:
-        looks = np.arange(begin, min(begin + BLOCK, last + 1), dtype=np.float64)
-        limits = region.limits(progress + looks)
-        lower, upper = (limits.lower - total) / sigma, (limits.upper - total) / sigma
+class _Steps:
+    """The looks of a region from one of its points on; its limits are asked for once, however often they are needed."""
+
+    def __init__(self, region: Region, sigma: float, start: tuple[float, float]) -> None:
+        self._region, self._sigma = region, sigma
+        self._progress, self._total = start
+        self._last = math.inf if region.wall is None else looks_to_wall(region.wall, 1.0, self._progress)
+        self._known: list[_Look] = []
+
+    def __iter__(self) -> Iterator[_Look]:
+        """From the first on, as far as is wanted."""
+        at = 0
+        while at < self._last:
+            if at == len(self._known):
+                self._ask()
+            yield self._known[at]
+            at += 1
+
+    def _ask(self) -> None:
+        """For some more."""
+        begin = len(self._known) + 1
+        looks = np.arange(begin, min(begin + BLOCK, self._last + 1), dtype=np.float64)
+        limits = self._region.limits(self._progress + looks)
+        lower, upper = (limits.lower - self._total) / self._sigma, (limits.upper - self._total) / self._sigma
         for look, low, high in zip(looks, lower, upper, strict=True):
-            yield _Look(float(low), float(high), bool(look == last))
-        begin += len(looks)
+            self._known.append(_Look(float(low), float(high), bool(look == self._last)))
 
 
-def _followed(  # noqa: PLR0913 - what is followed, from where, how finely, and what it may cost
-    region: Region, drifts: FloatArray, sigma: float, start: tuple[float, float], fineness: float, most: int
-) -> _Ends:
-    """One group of drifts to the end, with at most so many multiplications."""
+def _followed(steps: _Steps, drifts: FloatArray, fineness: float, most: int) -> _Ends:
+    """One group of drifts to the end, so finely, with at most so many multiplications."""
     base = 0.5 * float(drifts.min() + drifts.max())
     zero = np.zeros(len(drifts))
     below, between, above = zero, zero, zero
     survival: list[FloatArray] = []
     x, mass, work = np.zeros(1), np.ones(1), 0
-    for k, look in enumerate(_looks(region, sigma, start)):
+    for k, look in enumerate(steps):
         # Under another drift each point weighs as much more as the likelihood of having come to it.
         tilted = mass * np.exp(np.multiply.outer(drifts - base, x) - 0.5 * k * (drifts**2 - base**2)[:, np.newaxis])
         ahead = x + drifts[:, np.newaxis]

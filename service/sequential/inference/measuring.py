@@ -14,22 +14,19 @@ Siegmund (1985), Sequential Analysis, section 2.3 (factor); Rao (1945) and Black
 """
 
 import math
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 from scipy.special import ndtr
 
-from service.sequential import likelihood
 from service.sequential.curved import CurvedRegion
 from service.sequential.double import Double, FloatArray, two_product, two_sum
-from service.sequential.evidence import Evidence
 from service.sequential.exact.characteristics import TooMuchWork
 from service.sequential.exact.strip import Strip, density, nodes_between
-from service.sequential.generalised import OneSided, TwoSided
 from service.sequential.inference.ordering import Tails
-from service.sequential.mixture import NormalMixture
 from service.sequential.region import Region, StraightRegion
+from service.sequential.shifted import line_of_h0, seen_from_h0
 
 MOST_POINTS = 1_200
 MOST_WORK = 5_000_000_000
@@ -68,7 +65,7 @@ def frame_of(region: Region, sigma: float) -> Frame:
     if isinstance(region, StraightRegion):
         return Frame(region.ratio.slope + region.ratio.slope_low, sigma)
     if isinstance(region, CurvedRegion):
-        return Frame(float(region.evidence.expected(np.ones(1))[0]), sigma)
+        return Frame(line_of_h0(region), sigma)
     return Frame(0.0, sigma)
 
 
@@ -199,7 +196,7 @@ def limits_seen(region: Region, frame: Frame, looks: FloatArray, drift: float) -
         ones = np.ones(len(looks))
         return -region.lower_intercept / frame.sigma * ones, region.upper_intercept / frame.sigma * ones
     if isinstance(region, CurvedRegion):
-        limits = _seen_from_h0(region, frame.sigma).limits(looks)
+        limits = seen_from_h0(region, frame.sigma).limits(looks)
         lower, upper = limits.lower / frame.sigma, limits.upper / frame.sigma
     else:
         limits, line = region.limits(looks), looks * frame.middle
@@ -207,20 +204,6 @@ def limits_seen(region: Region, frame: Frame, looks: FloatArray, drift: float) -
     walk, far = looks * drift, FAR * np.sqrt(looks) + FAR
     lower = np.where(np.isinf(lower), np.minimum(walk, upper) - far, lower)
     return lower, np.where(np.isinf(upper), np.maximum(walk, lower) + far, upper)
-
-
-def _seen_from_h0(region: CurvedRegion, sigma: float) -> CurvedRegion:
-    """The same region as seen from H0's line: its limits keep their digits however far from zero the mean is."""
-    evidence: Evidence = region.evidence
-    if isinstance(evidence, OneSided):
-        apart = evidence.edge1 - evidence.edge0
-        ratio = None if evidence.ratio is None else likelihood.normal(0.0, apart, sigma)
-        evidence = replace(evidence, edge0=0.0, edge1=apart, ratio=ratio)
-    elif isinstance(evidence, TwoSided):
-        evidence = replace(evidence, edge0=0.0)
-    elif isinstance(evidence, NormalMixture):
-        evidence = replace(evidence, edge=0.0)
-    return replace(region, evidence=evidence)
 
 
 def points_between(lower: FloatArray, upper: FloatArray, steps: FloatArray | float = 1.0) -> int:

@@ -2,6 +2,7 @@
 
 import math
 from dataclasses import dataclass
+from typing import ClassVar
 
 import numpy as np
 import pytest
@@ -12,6 +13,7 @@ from service.sequential.boundaries import Thresholds
 from service.sequential.curved import CurvedRegion
 from service.sequential.decision import Decision
 from service.sequential.double import Double, FloatArray
+from service.sequential.exact.characteristics import Characteristics
 from service.sequential.exact.gaussian import gaussian_characteristics
 from service.sequential.exact.looks import characteristics_by_looks
 from service.sequential.region import REALS, Limits, SideArray, Wall, side_of, straight_region
@@ -114,3 +116,40 @@ def test_three_looks_against_integrals_over_a_box() -> None:
         + box,
         abs=2e-5,
     )
+
+
+@pytest.mark.parametrize("wall", [None, Wall(12.0)])
+def test_a_large_mean_with_a_small_spread_loses_nothing(wall: Wall | None) -> None:
+    """Means about 2**20 with a spread of 2**-10, and the same about zero: both, and their distances, are doubles."""
+    origin, sigma = 2.0**20, 2.0**-10
+    apart, thresholds = np.array([-0.25, 0.0, 0.25, 1.0, 1.75]) * sigma, Thresholds(-2.2, 2.9)
+
+    def found(at: float, start: tuple[float, float]) -> Characteristics:
+        spread = deviance.Normal(sigma)
+        evidence = generalised.OneSided(
+            spread, at, at + sigma, likelihood.normal(at, at + sigma, sigma), is_upward=True
+        )
+        region = CurvedRegion(evidence, thresholds, REALS, wall)
+        return characteristics_by_looks(region, at + apart, sigma, start[0], start[1] + at * start[0])
+
+    for start in ((0.0, 0.0), (2.0, sigma)):
+        far, near = found(origin, start), found(0.0, start)
+        assert far.below == pytest.approx(near.below, abs=1e-13)
+        assert far.above == pytest.approx(near.above, abs=1e-13)
+        assert far.mean == pytest.approx(near.mean, rel=1e-13)
+
+
+class _Counted(Strip):
+    """Says for how many looks its limits were asked."""
+
+    asked: ClassVar[int] = 0
+
+    def limits(self, progress: FloatArray) -> Limits:
+        type(self).asked += len(progress)
+        return super().limits(progress)
+
+
+def test_limits_are_asked_for_once_for_all_means() -> None:
+    """Means so far apart that they are followed in several groups, each with two numbers of points."""
+    characteristics_by_looks(_Counted(3.0, Wall(300.0)), np.array([-2.0, 0.0, 0.1, 2.0]), 1.0)
+    assert _Counted.asked == 300
