@@ -119,7 +119,7 @@ ENDS = [
 
 @pytest.mark.parametrize("end", ENDS)
 def test_probabilities_and_limits_agree_with_plain_simulation(end: StudiedEnd, request: pytest.FixtureRequest) -> None:
-    courses = 20_000 if request.config.getoption("--long") else 1_200
+    courses = 20_000 if request.config.getoption("--long") else 600
     found = studied(end, 0.0, TAIL, 1)
     assert found.up.value + found.down.value == pytest.approx(1.0, abs=1e-12)
     assert found.lower.value < found.median.value < found.upper.value
@@ -135,7 +135,7 @@ def test_probabilities_and_limits_agree_with_plain_simulation(end: StudiedEnd, r
 
 def test_standard_errors_are_those_of_other_seeds(request: pytest.FixtureRequest) -> None:
     """The spread of a figure over seeds is its standard error, within what so few seeds tell (chi-square, 1e-4)."""
-    ends, seeds = (ENDS, 20) if request.config.getoption("--long") else (ENDS[:1], 6)
+    ends, seeds = (ENDS, 20) if request.config.getoption("--long") else (ENDS[:1], 5)
     low, high = (math.sqrt(chi2.ppf(level, seeds - 1) / (seeds - 1)) for level in (1e-4, 1.0 - 1e-4))
     for end in ends:
         runs = [studied(end, 0.0, TAIL, seed) for seed in range(seeds)]
@@ -158,7 +158,7 @@ def third_given_two(t: float, mean: Array, squares: Array, delta: float) -> Arra
     return found
 
 
-@pytest.mark.parametrize("delta", [-0.5, 0.0, 0.8, 1.6])
+@pytest.mark.parametrize("delta", [-0.5, 0.0, 1.2])
 def test_three_looks_agree_with_quadrature(delta: float) -> None:
     """Mean and spread of the first two are independent, so both are integrated over where the test goes on."""
     end = ended((0.0, 1.5), 3, 3.0, thresholds=Thresholds(-0.8, 0.55))
@@ -235,13 +235,13 @@ def test_the_same_seed_gives_the_same_figures() -> None:
     end = ended((0.0, 0.8), 9, 3.4)
     found = studied(end, 0.0, TAIL, 1)
     assert studied(end, 0.0, TAIL, 1) == found
-    assert studied(end, 0.0, TAIL, 2) != found
+    assert studied(end, 0.0, TAIL, 2).up != found.up
 
 
 def test_nearly_equal_measurements_have_figures() -> None:
     """A t that only a misread field explains, at the first look that decides and at a later one."""
     first: Studied = studied(ended((0.0, 0.5), 2, 1e7), 0.0, TAIL, 1)
-    assert first.up.value == pytest.approx(1e-7 / math.pi, rel=1e-9)
+    assert first.up.value == pytest.approx(1e-7 / math.pi, rel=1e-9, abs=0.0)
     assert first.lower.value < first.median.value < first.upper.value
     later = studied(ended((0.0, 0.5), 9, 1e7), 0.0, TAIL, 1)
     assert later.lower.value < later.median.value < later.upper.value < 10.0
