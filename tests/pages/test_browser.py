@@ -2,11 +2,13 @@
 
 import re
 from collections.abc import Iterator
+from pathlib import Path
 from typing import Any
 
 import httpx
 import pytest
 from playwright.sync_api import Browser, expect, sync_playwright
+from pypdf import PdfReader
 
 from tests.api.examples import SEAL, Namer, with_test
 from tests.pages.browser import Watched, launched, watched
@@ -121,6 +123,64 @@ def test_a_corrected_result_changes_the_decision_and_the_lot_is_disposed_of(
     assert admin.get(f"/v1/tests/{lot}").json()["disposition"]["disposition"] == "withdrawn"
 
 
+def test_a_plan_is_designed_by_looking_then_saved_and_a_lot_registered_under_it(
+    person: Watched, admin: httpx.Client, new_name: Namer
+) -> None:
+    page, name = person.page, new_name("looked-at")
+    page.get_by_role("navigation", name="Pages").get_by_role("link", name="Design a plan").click()
+    promise = page.locator("#promise")
+    expect(promise).to_contain_text("If the proportion nonconforming is")
+    before = promise.inner_text()
+    page.get_by_label("H1").fill("0.12")
+    expect(promise).to_contain_text("If the proportion nonconforming is 0.12 (H1)")
+    assert promise.inner_text() != before
+    assert "h1=0.12" in page.url
+    body = {"family": "bernoulli", "h0": 0.02, "h1": 0.12, "alpha": 0.05, "beta": 0.10, "at": [0.02]}
+    told = admin.post("/v1/characteristics", json=body).json()["points"][0]
+    expect(promise).to_contain_text(f"after {told['average_sample_number']:.6g} units on average")
+    page.get_by_label("H1").fill("0.01x")
+    expect(page.locator("#state")).to_contain_text("Something is not right yet")
+    expect(page.get_by_label("H1")).to_have_value("0.01x")
+    page.get_by_label("H1").fill("0.12")
+    page.get_by_role("button", name="Lay another beside it").click()
+    expect(page.get_by_text("Candidate B")).to_be_visible()
+    page.get_by_role("button", name="Take B away").click()
+    page.get_by_role("button", name="Save it as a plan").click()
+    page.get_by_label("Name").fill(name)
+    page.get_by_role("button", name="Store the plan").click()
+    expect(page).to_have_url(re.compile(f"/plans/{name}"))
+    assert admin.get(f"/v1/plans/{name}").json()["h1"] == 0.12
+    page.get_by_role("link", name="Register a lot or an experiment").click()
+    page.get_by_label("Key").fill(f"{name}-1")
+    page.get_by_label("Name of the subject").fill("Seals 17")
+    page.get_by_label("Labels").fill("line: 3")
+    page.get_by_role("button", name="Register it").click()
+    expect(page).to_have_url(f"{person.url}/tests/{name}-1")
+    assert admin.get(f"/v1/tests/{name}-1").json()["labels"] == {"line": "3"}
+
+
+def test_the_record_is_printed_from_the_browser_and_taken_as_a_file(
+    person: Watched, admin: httpx.Client, lot: str, tmp_path: Path
+) -> None:
+    post(admin, lot, *[0] * 24)
+    person.go(f"/tests/{lot}")
+    person.page.get_by_role("link", name="Print the record").click()
+    expect(person.page.get_by_role("heading", name="Signatures")).to_be_visible()
+    printed = tmp_path / "printed.pdf"
+    person.page.pdf(path=printed, format="A4")
+    with person.page.expect_download() as download:
+        person.page.get_by_role("link", name="PDF, A4").click()
+    made = tmp_path / "made.pdf"
+    download.value.save_as(made)
+    state = admin.get(f"/v1/tests/{lot}").json()
+    for file in (printed, made):
+        text = " ".join(" ".join(each.extract_text() for each in PdfReader(file).pages).split())
+        assert "Accept the lot" in text
+        assert f"{lot}/A" in text
+        assert f"{state['log_likelihood_ratio']:.6g}".replace("-", "−") in text
+        assert "Approved by" in text
+
+
 def test_everything_can_be_done_by_keyboard_alone(
     browser: Browser, service: Running, admin: httpx.Client, lot: str
 ) -> None:
@@ -160,7 +220,9 @@ def test_everything_can_be_done_by_keyboard_alone(
         expect(page.locator("#result-2")).to_contain_text("voided by the-engineer")
 
 
-ADDRESSES = ["/", "/tests/{key}", "/tests/{key}?view=count", "/tests/{key}/results", "/tests/{key}/assumptions",
+ADDRESSES = ["/", "/design", "/design/standards", "/plans", "/plans/{plan}", "/plans/{plan}/register",
+             "/tests/{key}/record",
+             "/tests/{key}", "/tests/{key}?view=count", "/tests/{key}/results", "/tests/{key}/assumptions",
              "/tests/{key}/estimates", "/tests/{key}/history", "/tests/{key}/correct?sequence=1",
              "/tests/{key}/dispose", "/tests/{key}/record", "/tests/none"]  # fmt: skip
 
@@ -170,6 +232,7 @@ def test_no_page_has_a_serious_finding_nor_is_wider_than_a_phone(
 ) -> None:
     post(admin, lot, 0, 1, 0, 1)
     other = with_test(admin, lambda prefix: f"{prefix}-beside-{lot}", SEAL)
+    plan = admin.get(f"/v1/tests/{lot}").json()["plan"]
     with watched(browser, service.url, viewport=PHONE) as seen:
         seen.expected = ("404",)
         seen.go("/sign-in")
@@ -179,7 +242,7 @@ def test_no_page_has_a_serious_finding_nor_is_wider_than_a_phone(
             for key in (lot, other):
                 if key == other and ("correct" in address or "key" not in address):
                     continue
-                seen.go(address.format(key=key))
+                seen.go(address.format(key=key, plan=plan))
                 assert (address, seen.findings()) == (address, [])
                 assert (address, seen.width_beyond()) == (address, 0)
 
