@@ -85,6 +85,14 @@ async def _answered(request: Request, handle: Callable[[Request], Coroutine[Any,
 
 def _to_sign_in(request: Request) -> Response:
     """Back to the same place afterwards; what a form sent is not sent again."""
-    came = request.url.path if request.method == "GET" else urlsplit(request.headers.get("referer", "/")).path
+    came = request.url.path if request.method == "GET" else _path_of(request.headers.get("referer", "/"))
     query = f"?{request.url.query}" if request.method == "GET" and request.url.query else ""
     return RedirectResponse(f"{SIGN_IN}?next={quote(local(came + query), safe='')}", 303)
+
+
+def _path_of(address: str) -> str:
+    """The path of an address as somebody sent it; the first page where it is none."""
+    try:
+        return urlsplit(address).path
+    except ValueError:
+        return "/"

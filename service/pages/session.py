@@ -8,6 +8,7 @@ settings allow. Forms carry a token that is made of the same secret, which no ot
 
 import hashlib
 import hmac
+import re
 from dataclasses import dataclass
 from datetime import datetime, timedelta
 from typing import Annotated, cast
@@ -20,6 +21,8 @@ from service.web.keys import valid_key
 from service.web.parts import Parts
 
 COOKIE = "sprt_session"
+# When it was made in seconds since 1970, what binds that to the secret, and the secret.
+_COOKIE = re.compile(r"([0-9]{1,15})\.([0-9a-f]{64})\.(.+)")
 
 
 @dataclass(frozen=True)
@@ -69,9 +72,11 @@ def forget(response: Response, request: Request) -> None:
 async def session_of(request: Request) -> Session | None:
     """The session of a request, its key looked up afresh; None where there is none, or it has ended."""
     parts = cast("Parts", request.app.state.parts)
-    made, _, rest = request.cookies.get(COOKIE, "").partition(".")
-    bound, _, secret = rest.partition(".")
-    if not made.isascii() or not made.isdigit() or not hmac.compare_digest(bound, _bound(secret, f"session {made}")):
+    found = _COOKIE.fullmatch(request.cookies.get(COOKIE, ""))
+    if found is None:
+        return None
+    made, bound, secret = found.groups()
+    if not hmac.compare_digest(bound, _bound(secret, f"session {made}")):
         return None
     age = parts.clock().timestamp() - int(made)
     if age >= timedelta(hours=parts.settings.session_hours).total_seconds():

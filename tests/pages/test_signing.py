@@ -1,5 +1,7 @@
 """Signing in and out, sessions, and what no other site may do."""
 
+import hashlib
+import hmac
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 
@@ -29,6 +31,24 @@ ELSEWHERE = ["https://evil.example/", "//evil.example", "/\\evil.example", "java
 def test_signing_in_never_leads_to_another_site(service: Running, place: str) -> None:
     with httpx.Client(base_url=service.url) as client:
         assert sign_in(client, service.keys["viewer"], place).headers["Location"] == "/"
+
+
+def forged(made: str) -> str:
+    """A cookie that binds its time to a secret as the service does; anybody can make one."""
+    bound = hmac.new(b"guess", f"session {made}".encode(), hashlib.sha256).hexdigest()
+    return f"{COOKIE}={made}.{bound}.guess"
+
+
+@pytest.mark.parametrize("cookie", [f"{COOKIE}=1.\xe9.x", forged("9" * 400), forged("9" * 5000), forged("")])
+def test_whoever_sends_a_cookie_that_cannot_be_right_is_asked_to_sign_in(service: Running, cookie: str) -> None:
+    with httpx.Client(base_url=service.url, headers=[(b"cookie", cookie.encode("latin-1"))]) as client:
+        assert client.get("/").status_code == 303
+        assert client.get("/sign-in").status_code == 200
+
+
+def test_a_form_that_comes_from_no_address_leads_to_signing_in(service: Running) -> None:
+    answer = httpx.post(f"{service.url}/tests/lot-7/dispose", headers={"Referer": "http://[x"}, data={"a": "b"})
+    assert (answer.status_code, answer.headers["Location"]) == (303, "/sign-in?next=%2F")
 
 
 def test_the_cookie_is_kept_from_script_and_other_sites(service: Running) -> None:
