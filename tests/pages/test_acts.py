@@ -1,5 +1,7 @@
 """Correcting and disposing on the pages: first what would follow, then the deed."""
 
+import re
+from html import unescape
 from typing import Any
 
 import httpx
@@ -9,10 +11,20 @@ from tests.api.examples import PUMP, SEAL, SHAFT, Namer, with_test
 from tests.pages.people import form_token, signed_in, words
 from tests.running import Running
 
+HIDDEN = re.compile(r'type="hidden" name="([a-z]+)" value="([^"]*)"')
+
 
 def send(person: httpx.Client, address: str, **fields: str) -> httpx.Response:
     """Send the form of an address with its token."""
     return person.post(address, data={"token": form_token(person.get(address).text), **fields})
+
+
+def agreed(person: httpx.Client, address: str, **fields: str) -> httpx.Response:
+    """Look at what would follow, and send the form that shows it."""
+    looked = send(person, address, step="look", **fields)
+    hidden = {name: unescape(value) for name, value in HIDDEN.findall(looked.text) if name in ("version", "seen")}
+    assert hidden.keys() == {"version", "seen"}, words(looked.text)
+    return send(person, address, step="do", **hidden, **fields)
 
 
 def version(admin: httpx.Client, key: str) -> str:
@@ -32,7 +44,7 @@ def test_a_correction_shows_what_would_follow_and_then_changes_the_decision(
         assert "Reject the lot → continue Go on sampling" in said
         assert "This changes the decision" in said
         assert admin.get(f"/v1/tests/{key}").json()["decision"] == "reject"
-        done = send(person, address, step="do", version=version(admin, key), **asked)
+        done = agreed(person, address, **asked)
         assert done.status_code == 303
         results = words(person.get(f"/tests/{key}/results").text)
     state = admin.get(f"/v1/tests/{key}").json()
@@ -50,7 +62,7 @@ def test_a_void_takes_a_result_out(service: Running, admin: httpx.Client, new_na
         form = person.get(address).text
         assert 'value="10"' in form
         assert 'value="P-1"' in form
-        done = send(person, address, what="void", reason="Bench was off", step="do", version=version(admin, key))
+        done = agreed(person, address, what="void", reason="Bench was off")
     assert done.status_code == 303
     state = admin.get(f"/v1/tests/{key}").json()
     assert (state["total"], state["exposure"], state["voided"]) == (0, 20.5, 1)
@@ -64,6 +76,8 @@ def test_a_void_takes_a_result_out(service: Running, admin: httpx.Client, new_na
         ({"value": "ten"}, "must be a number"),
         ({"value": "1e999"}, "must be a number"),
         ({"value": "nan"}, "must be a number"),
+        ({"value": "1_0"}, "must be a number"),
+        ({"value": "\u0663"}, "must be a number"),
         ({"value": ""}, "is required"),
         ({"value": "10.1"}, "already"),
     ],
@@ -86,7 +100,7 @@ def test_a_wrong_correction_is_told_beside_its_field_and_what_was_typed_stays(
 def test_what_changed_meanwhile_is_looked_at_again(service: Running, admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, SEAL)
     admin.post(f"/v1/tests/{key}/observations", json={"values": [0, 1]}).raise_for_status()
-    asked = {"what": "void", "reason": "dropped", "step": "do", "version": version(admin, key)}
+    asked = {"what": "void", "reason": "dropped", "step": "do", "version": version(admin, key), "seen": "null"}
     admin.post(f"/v1/tests/{key}/observations", json={"values": [1]}).raise_for_status()
     with signed_in(service) as person:
         answer = send(person, f"/tests/{key}/correct?sequence=1", **asked)
@@ -107,6 +121,25 @@ def test_after_the_decision_only_an_engineer_corrects(
         assert offered == (status == 200)
 
 
+def test_what_was_not_looked_at_is_not_done(service: Running, admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SHAFT)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [10.1]}).raise_for_status()
+    asked = {"what": "replace", "unit": "", "reason": "typed wrongly"}
+    with signed_in(service) as person:
+        correct, dispose_of = f"/tests/{key}/correct?sequence=1", f"/tests/{key}/dispose"
+        looked = send(person, correct, value="1,000", step="look", **asked)
+        assert "Result 1 Decision" in words(looked.text)
+        seen = dict(HIDDEN.findall(looked.text))["seen"]
+        shown = {"step": "do", "version": "2"}
+        other = send(person, correct, value="2", seen=unescape(seen), **shown, **asked)
+        assert "What would follow" in words(other.text)
+        why = {"reason": "x", "deviation_reason": "y"}
+        assert "What would follow" in words(
+            send(person, dispose_of, verdict="scrap", seen="rework", **shown, **why).text
+        )
+    assert version(admin, key) == "2"
+
+
 def dispose(person: httpx.Client, key: str, **fields: str) -> httpx.Response:
     return send(person, f"/tests/{key}/dispose", **fields)
 
@@ -120,7 +153,7 @@ def test_a_disposition_shows_what_would_follow_and_then_closes_the_test(
         looked = dispose(person, key, verdict="accept", reason="As decided", step="look")
         assert "is accepted by the-engineer, and the test is closed for good" in words(looked.text)
         assert admin.get(f"/v1/tests/{key}").json()["status"] == "open"
-        done = dispose(person, key, verdict="accept", reason="As decided", step="do", version=version(admin, key))
+        done = agreed(person, f"/tests/{key}/dispose", verdict="accept", reason="As decided")
         assert done.status_code == 303
         said = words(person.get(f"/tests/{key}").text)
         assert "The lot was accepted by the-engineer: As decided. The test had decided: accept." in said
@@ -134,7 +167,8 @@ def test_a_disposition_against_the_decision_needs_its_own_reason_and_shows(
 ) -> None:
     key = with_test(admin, new_name, SEAL)
     admin.post(f"/v1/tests/{key}/observations", json={"values": [1, 1]}).raise_for_status()
-    asked = {"verdict": "concession", "reason": "Field trial", "step": "do", "version": version(admin, key)}
+    asked = {"verdict": "concession", "reason": "Field trial", "step": "do"}
+    asked |= {"version": version(admin, key), "seen": "concession"}
     with signed_in(service) as person:
         refused = dispose(person, key, deviation_reason="", **asked)
         assert refused.status_code == 422

@@ -10,6 +10,7 @@ from fastapi.responses import RedirectResponse
 from pydantic import TypeAdapter, ValidationError
 
 from service.domain.access import Role
+from service.domain.chain import json_of
 from service.domain.correcting import Correction
 from service.domain.disposing import FOLLOWS, Verdict
 from service.domain.errors import ChangesNothing, Conflict, Fault, Invalid, InvalidCorrection, VersionMoved
@@ -24,7 +25,7 @@ from service.pages.forms import Typed, typed
 from service.pages.rendering import page
 from service.pages.routing import page_router
 from service.pages.session import NotYours, Session, SignedIn, check_role
-from service.pages.views.results import UNIT, as_observation, as_typed, fields_to_type
+from service.pages.views.results import UNIT, as_observation, as_typed, fields_to_type, said
 from service.pages.views.saying import saying_of
 from service.web.fields import Reason
 from service.web.lookup import known_test
@@ -42,13 +43,21 @@ _REASON: TypeAdapter[str] = TypeAdapter(Reason)
 
 @dataclass(frozen=True)
 class Consequence:
-    """What a correction would come to, for people."""
+    """
+    What a correction would come to, for people.
+
+    Attributes:
+        seen: What the form says was looked at, so that nothing else is done.
+        counts: The result as it was understood.
+    """
 
     correction: Correction
     before: str
     after: str
     changes_decision: bool
     version: int
+    seen: str
+    counts: str
 
 
 @router.get("/tests/{key}/correct")
@@ -76,7 +85,7 @@ async def correct(request: Request, key: Key, session: SignedIn, parts: PartsOf,
         command = _correction_command(request, session, test, plan, sequence, form, reason)
     except InvalidCorrection as error:
         return _correction_page(request, test, plan, sequence, _told(form, error), status=422)
-    if form["step"] != "do" or form["version"] != str(test.version):
+    if not _is_agreed(form, test, _seen(command)):
         return await _looked_at(request, parts, test, plan, form, command)
     try:
         await parts.road.submit(command)
@@ -114,7 +123,7 @@ async def dispose(request: Request, key: Key, session: SignedIn, parts: PartsOf)
         faults["deviation_reason"] = "say why, in at most 1000 characters, for this is not what the test decided"
     if faults or reason is None or verdict is None:
         return _disposition_page(request, test, plan, Typed(form.values, faults), status=422)
-    if form["step"] != "do" or form["version"] != str(test.version) or (deviates and deviation is None):
+    if not _is_agreed(form, test, verdict) or (deviates and deviation is None):
         return _disposition_page(request, test, plan, form, verdict=verdict)
     command = Dispose(
         test=key,
@@ -148,7 +157,8 @@ async def _looked_at(  # noqa: PLR0913 - the parts of a request
 
 
 def _consequence(parts: Parts, test: SequentialTest, plan: Plan, command: PostCorrection) -> Consequence:
-    correction, _, _ = worked_out(command, test, procedure_of(plan), parts.reader.log, parts.clock())
+    procedure = procedure_of(plan)
+    correction, _, _ = worked_out(command, test, procedure, parts.reader.log, parts.clock())
     after = replace(test, state=correction.state)
     return Consequence(
         correction,
@@ -156,7 +166,18 @@ def _consequence(parts: Parts, test: SequentialTest, plan: Plan, command: PostCo
         saying_of(after, plan).headline,
         correction.state.decision is not test.state.decision,
         test.version,
+        _seen(command),
+        "" if correction.replacement is None else said(procedure.family, json.loads(correction.replacement)),
     )
+
+
+def _seen(command: PostCorrection) -> str:
+    return json_of(command.replacement)
+
+
+def _is_agreed(form: Typed, test: SequentialTest, seen: str) -> bool:
+    """Whether this is to be done, and is what the form has shown of the test as it is."""
+    return form["step"] == "do" and form["version"] == str(test.version) and form["seen"] == seen
 
 
 def _correction_command(  # noqa: PLR0913 - the parts of a request
@@ -169,13 +190,13 @@ def _correction_command(  # noqa: PLR0913 - the parts of a request
     reason: str,
 ) -> PostCorrection:
     replacement = None if form["what"] == VOID else as_observation(procedure_of(plan).family, form)
-    said = json.dumps({"sequence": sequence, "observation": replacement, "reason": reason})
+    asked = json.dumps({"sequence": sequence, "observation": replacement, "reason": reason})
     return PostCorrection(
         test=test.key,
         observation=sequence,
         replacement=replacement,
         reason=reason,
-        body_digest=hashlib.sha256(said.encode()).hexdigest(),
+        body_digest=hashlib.sha256(asked.encode()).hexdigest(),
         actor=session.key.name,
         may_correct_decided=session.may(Role.ENGINEER),
         expected_versions=frozenset({str(test.version)}),

@@ -1,5 +1,7 @@
 """The log of a test as a table, and one observation as a form to correct it by."""
 
+import math
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass
 from itertools import islice
@@ -23,6 +25,7 @@ YES, NO = "yes", "no"
 UNIT = "unit"
 # Whole numbers with fewer characters are exact.
 LONGEST_WHOLE = 17
+_NUMBER = re.compile(r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]+)?")
 
 
 @dataclass(frozen=True)
@@ -116,10 +119,11 @@ def said(family: Family, observation: Mapping[str, Any]) -> str:
 def number_in(text: str) -> float | int | None:
     """The number that somebody typed, with a comma or a point; None where it is none."""
     plain = text.replace("−", "-").replace(",", ".").replace(" ", "")
-    try:
-        return int(plain) if plain.lstrip("+-").isdigit() and len(plain) < LONGEST_WHOLE else float(plain)
-    except ValueError:
+    if not _NUMBER.fullmatch(plain):
         return None
+    if plain.lstrip("+-").isdigit() and len(plain) < LONGEST_WHOLE:
+        return int(plain)
+    return float(plain) if math.isfinite(float(plain)) else None
 
 
 def result_of(family: Family, logged: LoggedObservation) -> Result:
