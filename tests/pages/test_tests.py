@@ -216,3 +216,34 @@ def test_all_tests_of_one_subject_are_shown_together(service: Running, admin: ht
     assert "All 2 tests of this lot together: reject Reject" in said
     joint = admin.get(f"/v1/subjects/lot/{subject['name']}").json()
     assert f"{to_digits(joint['producers_risk']['if_independent'] * 100, 4)} % if the tests are independent" in said
+
+
+def test_tests_of_one_subject_beyond_those_shown_come_to_nothing_together(
+    service: Running, admin: httpx.Client, new_name: Namer
+) -> None:
+    subject = {"kind": "experiment", "name": new_name("Long experiment")}
+    first = with_test(admin, new_name, SEAL, subject=subject)
+    plan = admin.get(f"/v1/tests/{first}").json()["plan"]
+    for _ in range(100):
+        body = {"key": new_name("part"), "plan": plan, "subject": subject}
+        admin.post("/v1/tests", json=body).raise_for_status()
+    with signed_in(service, "viewer") as person:
+        said = words(person.get(f"/tests/{first}").text)
+    assert "The first 100 tests of this experiment" in said
+    assert "what they come to together is not said here" in said
+    assert "Joint producer's risk" not in said
+
+
+def test_bounds_that_hold_for_every_model_are_not_called_attained(
+    service: Running, admin: httpx.Client, new_name: Namer
+) -> None:
+    plan = {"family": "score", "alpha": 0.05, "beta": 0.1, "boundaries": "strict"}
+    key = with_test(admin, new_name, plan)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [2.0, 2.0]}).raise_for_status()
+    with signed_in(service, "viewer") as person:
+        for part in ("", "/record"):
+            said = words(person.get(f"/tests/{key}{part}").text)
+            assert "Producer's risk whatever the model is, at most 5 %" in said
+            assert "attained" not in said
+        estimates = words(person.get(f"/tests/{key}/estimates").text)
+    assert estimates.count("there is no parameter to estimate") == 5

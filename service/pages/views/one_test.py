@@ -29,19 +29,24 @@ class Expectation:
 
 @dataclass(frozen=True)
 class Others:
-    """All tests of one subject, this one included, and what they come to together."""
+    """
+    The tests of one subject, this one included, as far as they are shown.
+
+    Attributes:
+        joint: What they come to together; None where there are more than are shown.
+    """
 
     tests: tuple[SequentialTest, ...]
-    joint: Joint
+    joint: Joint | None
 
 
 def others_of(reader: Reader, test: SequentialTest) -> Others | None:
     """The tests of the same subject and their joint decision; None where this is the only one."""
-    found = reader.tests(TestFilters(kind=test.subject.kind, subject=test.subject.name), None, MOST_OTHERS)
+    found = reader.tests(TestFilters(kind=test.subject.kind, subject=test.subject.name), None, MOST_OTHERS + 1)
     if len(found) < 2:
         return None
-    tests = [(each, plan) for each in found if (plan := reader.plan(each.plan)) is not None]
-    return Others(tuple(each for each, _ in tests), joint_of(tests))
+    tests = [(each, plan) for each in found[:MOST_OTHERS] if (plan := reader.plan(each.plan)) is not None]
+    return Others(tuple(each for each, _ in tests), joint_of(tests) if len(found) <= MOST_OTHERS else None)
 
 
 def facts_of(test: SequentialTest, plan: Plan) -> Facts:
@@ -88,13 +93,12 @@ def promises_of(plan: Plan) -> Facts:
     prior = prior_of(content)
     if prior is not None:
         found.append(("Prior", ", ".join(f"{name} {figure(value)}" for name, value in prior.items())))
-    attained = content.get("attained")
-    if attained is not None:
-        found += [
-            (f"{whose} risk attained", percent(attained[name], 4))
-            for name, whose in (("alpha", "Producer's"), ("beta", "Consumer's"))
-            if attained.get(name) is not None
-        ]
+    attained = "attained" if family.has_model else "whatever the model is, at most"
+    found += [
+        (f"{whose} risk {attained}", percent(risk, 4))
+        for name, whose in (("alpha", "Producer's"), ("beta", "Consumer's"))
+        if (risk := content.get("attained", {}).get(name)) is not None
+    ]
     return tuple(found)
 
 

@@ -186,7 +186,7 @@ def _promises(plan: Plan) -> Facts:
     source = source_of(content.get("standard"))
     if source is not None:
         stated["Source of the table"] = source
-    return (*stated.items(), *_attained(plan, procedure, stated))
+    return (*stated.items(), *_attained(plan, procedure))
 
 
 def _lines(procedure: Procedure) -> dict[str, str]:
@@ -206,10 +206,10 @@ def _lines(procedure: Procedure) -> dict[str, str]:
     return found
 
 
-def _attained(plan: Plan, procedure: Procedure, stated: dict[str, str]) -> Iterator[tuple[str, str]]:
+def _attained(plan: Plan, procedure: Procedure) -> Iterator[tuple[str, str]]:
     """The risks that the plan really has, unless they were stated with it."""
     names = ("Producer's risk attained", "Consumer's risk attained")
-    if any(name in stated for name in names):
+    if "attained" in plan.content:
         return
     if procedure.family.is_invariant:
         yield "Risks attained", NOT_COMPUTED.format(reason=SIMULATED)

@@ -85,7 +85,7 @@ def figures_of(found: Inference, plan: Plan) -> tuple[Figure, ...]:
     meanings, reasons = meanings_of(plan.document, found.level), dict(found.reasons)
     errors = {} if found.simulated is None else found.simulated.errors
     interval = "–" if found.lower is None and found.upper is None else f"{figure(found.lower)} to {figure(found.upper)}"
-    ends = " ".join(reasons[end] for end in ("lower", "upper") if end in reasons)
+    ends = " ".join(dict.fromkeys(reasons[end] for end in ("lower", "upper") if end in reasons))
     rows = (
         ("Median-unbiased estimate", figure(found.median_unbiased), "median_unbiased"),
         (f"{percent(found.level, 7)} confidence interval", interval, "interval"),
