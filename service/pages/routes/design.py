@@ -15,7 +15,7 @@ from service.ingest.commands import CreatePlan, StoredPlan
 from service.pages.failing import status_of
 from service.pages.forms import Typed, typed
 from service.pages.rendering import page
-from service.pages.routes.plans import AGAIN_SECONDS, csv_answer
+from service.pages.routes.plans import csv_answer
 from service.pages.routing import page_router
 from service.pages.session import Session, SignedIn, check_role
 from service.pages.simulating import with_simulation
@@ -165,9 +165,7 @@ async def _answer(parts: Parts, design: Design, *, may_take_long: bool, may_simu
 
 
 def _page(request: Request, session: Session, answer: Answer) -> Response:
-    headers = {"Refresh": str(AGAIN_SECONDS)} if answer.shown.is_running else {}
-    if answer.trouble:
-        headers["Retry-After"] = str(TooManyQuestions.retry_after_seconds)
+    headers = {"Retry-After": str(TooManyQuestions.retry_after_seconds)} if answer.trouble else None
     return page(
         request,
         "design.html",

@@ -31,8 +31,6 @@ Name = Annotated[str, Path(pattern=NAME_PATTERN)]
 Seed = Annotated[int | None, Query(ge=0, le=2**53)]
 
 ROWS = 50
-# A page that waits for a simulation looks again by itself after so many seconds.
-AGAIN_SECONDS = 3
 
 
 @dataclass(frozen=True)
@@ -75,7 +73,6 @@ async def show_plan(  # noqa: PLR0913 - each argument is a part of the address
     return page(
         request,
         "plan.html",
-        headers={"Refresh": str(AGAIN_SECONDS)} if shown.is_running else None,
         plan=plan,
         family=family_words(plan.content["family"]),
         promises=promises_of(plan),
