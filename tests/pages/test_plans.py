@@ -118,7 +118,8 @@ def test_a_plan_is_a_start_for_a_design(service: Running, admin: httpx.Client, n
             (sentence,) = re.findall(r"If the mean life is [^.]+ \(H0\).*? need at most [^.]+\.", words(design))[:1]
             assert sentence in words(text)
             assert f'name="a.name" value="{name}"' in design
-        assert person.get("/design?plan=no-such-plan").status_code == 404
+        for wrong in ("no-such-plan", "%00", "a%20b", "x" * 200):
+            assert person.get(f"/design?plan={wrong}").status_code == 404
 
 
 def test_plans_are_listed_by_name_a_page_at_a_time(service: Running, admin: httpx.Client, new_name: Namer) -> None:
@@ -136,7 +137,7 @@ def test_plans_are_listed_by_name_a_page_at_a_time(service: Running, admin: http
 
 def test_an_unknown_plan_is_a_page_that_helps(service: Running) -> None:
     with signed_in(service, "viewer") as person:
-        for address in ("/plans/no-such-plan", "/plans/no-such-plan/curves.csv", "/plans/%20"):
+        for address in ("/plans/no-such-plan", "/plans/no-such-plan/curves.csv", "/plans/%20", "/plans?after=%00"):
             answer = person.get(address)
             assert answer.status_code == 404
             assert "All plans" in words(answer.text)

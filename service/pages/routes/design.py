@@ -8,8 +8,9 @@ from fastapi.responses import RedirectResponse
 
 from service.domain.access import Role
 from service.domain.checking import attained_by, checked_content
-from service.domain.errors import Fault, Invalid, InvalidPlan, PlanDiffers, TooManyQuestions
+from service.domain.errors import Fault, Invalid, InvalidPlan, PlanDiffers, TooManyQuestions, UnknownPlan
 from service.domain.names import NAME_RULE, is_name
+from service.domain.plan import Plan
 from service.domain.standards import catalogue
 from service.ingest.commands import CreatePlan, StoredPlan
 from service.pages.failing import status_of
@@ -57,8 +58,7 @@ class Answer:
 async def show_design(request: Request, session: SignedIn, parts: PartsOf) -> Response:
     """Candidates, side by side, as the address has them; buttons change the address."""
     query = dict(request.query_params)
-    plan = await known_plan(parts, query["plan"]) if query.get("plan") else None
-    design = design_in(query, plan)
+    design = design_in(query, await _start(parts, query.get("plan", "")))
     act = query.get("do", "")
     if act == ADD:
         return RedirectResponse(design.with_another().address(), 303)
@@ -124,6 +124,18 @@ async def save(request: Request, session: SignedIn, parts: PartsOf) -> Response:
     except PlanDiffers as error:
         return _saving(request, design, Typed(form.values, {"name": str(error)}), status=status_of(error)[0])
     return RedirectResponse(f"/plans/{outcome.plan.name}", 303)
+
+
+async def _start(parts: Parts, name: str) -> Plan | None:
+    """
+    The stored plan that a design starts from; None where it names none.
+
+    Raises:
+        UnknownPlan: There is none of this name.
+    """
+    if name and not is_name(name):
+        raise UnknownPlan(name)
+    return await known_plan(parts, name) if name else None
 
 
 def _one(design: Design, candidate: Candidate) -> Design:

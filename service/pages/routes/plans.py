@@ -44,7 +44,7 @@ class Row:
 
 @router.get("/plans")
 async def show_plans(
-    request: Request, parts: PartsOf, after: Annotated[str | None, Query(max_length=100)] = None
+    request: Request, parts: PartsOf, after: Annotated[str | None, Query(pattern=NAME_PATTERN)] = None
 ) -> Response:
     """Plans by name, fifty at a time."""
     found = await reading(lambda: parts.reader.plans(after, ROWS + 1))
