@@ -5,6 +5,7 @@ from datetime import UTC, datetime
 import pytest
 
 from service.domain.checking import checked_content
+from service.domain.gathering import alone
 from service.domain.observing import observe
 from service.domain.path import path_of
 from service.domain.plan import Plan, fingerprint_of
@@ -27,7 +28,7 @@ def test_a_spread_is_drawn_over_its_measurements_though_the_first_may_bring_no_f
     state = observe(procedure, State(), body, NOW)
     subject = Subject(SubjectKind.LOT, "1")
     test = SequentialTest("lot-1", "spread", subject, {}, Status.OPEN, 2, NOW, "me", NOW, state)
-    path = path_of(procedure, [(1, body)], 100)
+    path = path_of(procedure, [alone(body)], 100)
     picture = picture_of(test, plan, path, View.COUNT)
     assert [x for x, _ in picture.walk] == [0.0, 1.0, 2.0, 3.0]
     nearest = min(reach.end[0] for reach in picture.reaches)

@@ -43,6 +43,8 @@ def test_a_plan_shows_what_the_api_says_of_it(
     expected = admin.get(f"/v1/plans/{name}/characteristics", params=at).json()
     with signed_in(service, "viewer") as person:
         text = person.get(f"/plans/{name}").text
+        drawings = [person.get(unescape(link)) for link in re.findall(r'href="(/plans/[^"]+/curves\.svg[^"]*)"', text)]
+        assert len(drawings) == 2
         rows = list(csv.DictReader(io.StringIO(person.get(f"/plans/{name}/curves.csv").text)))
     said = words(text)
     for point in expected["points"]:
@@ -61,6 +63,7 @@ def test_a_plan_shows_what_the_api_says_of_it(
             assert " ".join(figure(cell) for cell in cells) in said
         assert "MIL-HDBK-781A (1996), sequential test plans" in said
     assert stored["fingerprint"] in said
+    assert {kept.status_code for kept in drawings} == {200}
     curve = admin.get(f"/v1/plans/{name}/characteristics").json()["points"]
     assert [float(row["parameter"]) for row in rows] == [point["parameter"] for point in curve]
     for row, point in zip(rows, curve, strict=True):
