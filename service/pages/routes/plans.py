@@ -31,8 +31,6 @@ Name = Annotated[str, Path(pattern=NAME_PATTERN)]
 Seed = Annotated[int | None, Query(ge=0, le=2**53)]
 
 ROWS = 50
-# A page that waits for a simulation looks again by itself after so many seconds.
-AGAIN_SECONDS = 3
 
 
 @dataclass(frozen=True)
@@ -46,7 +44,7 @@ class Row:
 
 @router.get("/plans")
 async def show_plans(
-    request: Request, parts: PartsOf, after: Annotated[str | None, Query(max_length=100)] = None
+    request: Request, parts: PartsOf, after: Annotated[str | None, Query(pattern=NAME_PATTERN)] = None
 ) -> Response:
     """Plans by name, fifty at a time."""
     found = await reading(lambda: parts.reader.plans(after, ROWS + 1))
@@ -75,7 +73,6 @@ async def show_plan(  # noqa: PLR0913 - each argument is a part of the address
     return page(
         request,
         "plan.html",
-        headers={"Refresh": str(AGAIN_SECONDS)} if shown.is_running else None,
         plan=plan,
         family=family_words(plan.content["family"]),
         promises=promises_of(plan),
