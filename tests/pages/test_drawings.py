@@ -57,6 +57,22 @@ def test_the_drawing_of_a_test_is_a_file_that_stands_alone(service: Running, lot
     assert np.allclose(size(png.content), (3.0 * wide, 3.0 * high), rtol=0.0, atol=2.0)
 
 
+def test_measurements_that_only_give_a_mean_have_their_place(
+    service: Running, admin: httpx.Client, new_name: Namer
+) -> None:
+    """Of three measurements whose mean is unknown the region sees two steps; the drawing shows all three."""
+    content = {"family": "normal_variance", "h0": 1.0, "h1": 2.0, "alpha": 0.05, "beta": 0.05}
+    key = with_test(admin, new_name, {**content, "truncation": {"sample_number": 20}})
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [10.0, 11.0, 9.5]}).raise_for_status()
+    with signed_in(service, "viewer") as person:
+        root = alone(person.get(f"/tests/{key}/drawing.svg?view=count").content)
+    marks = [float(each.get("cx", "")) for each in root.iter(f"{SVG}circle")]
+    across = [each for each in root.iter(f"{SVG}text") if each.get("text-anchor") == "middle"]
+    ticks = {int(each.text): float(each.get("x", "")) for each in across if each.text and each.text.isdigit()}
+    unit = (ticks[max(ticks)] - ticks[0]) / max(ticks)
+    assert [round((x - ticks[0]) / unit, 2) for x in sorted(marks)] == [0.0, 1.0, 2.0, 3.0]
+
+
 @pytest.mark.parametrize(("plan", "body"), [(SEAL, {"values": [0, 1, 0]}), (PUMP, {"values": [31.5, 400.0]})])
 def test_the_points_are_those_of_the_interface(
     service: Running, admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any]
