@@ -40,6 +40,8 @@ def test_a_wheel_migrates_and_makes_keys_far_from_the_checkout(tmp_path: Path) -
             check=False,
         )
 
+    for folder, pattern in (("templates", "*.html"), ("templates", "*.typ"), ("static", "*.js"), ("static", "*.css")):
+        assert list((packages / "service" / "pages" / folder).glob(pattern)), (folder, pattern)
     where = subprocess.run(
         [python, "-c", "import service; print(service.__file__)"],
         cwd=home,

@@ -54,21 +54,21 @@ class Courier:
         self._allowed, self._timeout_seconds, self._resolve, self._tls = allowed, timeout_seconds, resolve, tls
 
     async def carry(self, delivery: Delivery, now: datetime) -> Attempt:
-        """Try once, within the time there is; whatever happens is an outcome."""
+        """Try once, within the time there is; once a status is known it counts, whatever comes after it."""
         status: list[int] = []
+        failure = "no address"
         try:
             async with asyncio.timeout(self._timeout_seconds):
                 await self._send(delivery, now, status)
         except UnfitAddress as refusal:
-            return Attempt(is_delivered=False, outcome=f"not sent: the address {refusal}")
+            failure = f"not sent: the address {refusal}"
         except (TimeoutError, httpx.TimeoutException):
-            if not status:
-                return Attempt(is_delivered=False, outcome=f"no answer within {self._timeout_seconds:g} seconds")
+            failure = f"no answer within {self._timeout_seconds:g} seconds"
         except (OSError, httpx.ConnectError) as error:
-            return Attempt(is_delivered=False, outcome=f"no connection: {_words(error)}")
+            failure = f"no connection: {_words(error)}"
         except httpx.HTTPError as error:  # its text may quote the other side, which nobody is to read through us
-            return Attempt(is_delivered=False, outcome=f"no sound answer: {type(error).__name__}")
-        return _judged(status[0])
+            failure = f"no sound answer: {type(error).__name__}"
+        return _judged(status[0]) if status else Attempt(is_delivered=False, outcome=failure)
 
     async def _send(self, delivery: Delivery, now: datetime, status: list[int]) -> None:
         """

@@ -73,7 +73,8 @@ def _conjugate_root(motion: Motion, slope: float) -> float | None:
     sign = 1.0 if motion.mean < slope else -1.0
 
     def excess(t: float) -> float:
-        return motion.cumulant(sign * t) - slope * sign * t
+        cumulant = motion.cumulant(sign * t)
+        return cumulant if math.isinf(cumulant) else cumulant - slope * sign * t
 
     # Near zero the excess is about -|drift| t + variance t^2 / 2, so this is short of the root.
     near = abs(motion.mean - slope) / motion.variance

@@ -112,8 +112,11 @@ def negative_binomial(mean0: float, mean1: float, dispersion: float) -> Likeliho
     to (mean / (mean + dispersion))**x * (dispersion / (mean + dispersion))**dispersion.
     """
     # ln of the quotient of mean / (mean + dispersion), and of its complement, whose difference of means is exact.
-    natural = math.log1p((mean1 - mean0) / mean0 * (dispersion / (mean1 + dispersion)))
-    return _ratio(natural, dispersion * math.log1p((mean1 - mean0) / (mean0 + dispersion)))
+    growth = (mean1 - mean0) / mean0 * (dispersion / (mean1 + dispersion))
+    complement = math.log1p((mean1 - mean0) / (mean0 + dispersion))
+    # Far below zero the growth may round to -1; the two logarithms then lie far apart and lose nothing.
+    natural = math.log1p(growth) if growth > -0.5 else math.log(mean1 / mean0) - complement
+    return _ratio(natural, dispersion * complement)
 
 
 def exponential(mean0: float, mean1: float) -> LikelihoodRatio:

@@ -23,7 +23,7 @@ from service.settings import Settings
 from tests.api.examples import PUMP, SEAL, SHAFT
 from tests.running import Running, running
 
-CASES_OF_EACH, LONG_CASES_OF_EACH = 37, 370
+CASES_OF_EACH, LONG_CASES_OF_EACH = 33, 330
 WITHOUT_INPUT = {"/healthz", "/readyz"}
 TOO_LONG = 431
 ENDLESS = "/v1/events"  # its form is tested where it is read

@@ -62,10 +62,8 @@ def long_test(folder: Path, each: int) -> Engine:
         names = [str(row[1]) for row in connection.execute(text("PRAGMA table_info(submissions)"))]
         own = {"first_sequence": ":first", "last_sequence": ":last", "body": ":body", "idempotency_key": "NULL"}
         chosen = ", ".join(own.get(name, name) for name in names)
-        copied = (
-            f"INSERT INTO submissions ({', '.join(names)}) SELECT {chosen} FROM submissions WHERE first_sequence = 1"
-        )
-        connection.execute(text(copied), rows)
+        copied = f"INSERT INTO submissions ({', '.join(names)}) SELECT {chosen} FROM submissions"
+        connection.execute(text(f"{copied} WHERE test = 'long' AND first_sequence = 1"), rows)
         connection.execute(
             text("UPDATE tests SET sequence = :n, sample_number = :n, total = :total"),
             {"n": MILLION - each, "total": sum(map(sum, values[:-1]))},

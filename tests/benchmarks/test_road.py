@@ -109,6 +109,23 @@ def test_a_group_against_a_commit_for_each(tmp_path: Path) -> None:
         compared("POST of 1, group commit against a commit for each (asked for 4)", services[0], services[1])
 
 
+def test_a_receiver_against_none(tmp_path: Path) -> None:
+    """What it costs those who post that somebody is to be told of decisions; none falls here."""
+    with ExitStack() as stack:
+        services = []
+        for name in ("telling", "silent"):
+            folder = tmp_path / name
+            folder.mkdir()
+            service = stack.enter_context(running(folder))
+            with service.client() as client:
+                registered(client, TESTS)
+                if name == "telling":
+                    receiver = {"name": "bench", "address": "https://bench.invalid/"}
+                    client.post("/v1/receivers", json=receiver).raise_for_status()
+            services.append((service.url, service.keys["collector"], posts(1)))
+        compared("POST of 1, with a receiver registered against without", services[0], services[1])
+
+
 def test_an_unchanged_test_against_a_constant(tmp_path: Path) -> None:
     with beside_nothing(tmp_path) as (service, nothing):
         with service.client() as client:

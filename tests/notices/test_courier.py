@@ -179,7 +179,16 @@ def test_under_tls_the_certificate_must_bear_the_name_and_be_trusted(tmp_path: P
             assert "head" not in saw, "nothing is said to whom cannot be trusted"
 
 
-@pytest.mark.parametrize("said", [b"SSH-2.0-secret banner\r\n", b"", b"HTTP/1.1 200" + b"x" * 300_000, b"\x16\x03\x01"])
+@pytest.mark.parametrize(
+    "said",
+    [
+        b"SSH-2.0-secret banner\r\n\r\n",
+        b"HTTP/1.1 200 OK\r\nsecret banner\r\n\r\n",
+        b"HTTP/1.1 200" + b"x" * 300_000,
+        b"\x16\x03\x01",
+        b"",
+    ],
+)
 def test_what_is_no_answer_is_not_repeated_to_anybody(said: bytes) -> None:
     with one_connection(None, said) as (port, _):
         resolve, _ = told_by(["127.0.0.1"])

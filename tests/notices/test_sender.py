@@ -91,12 +91,13 @@ def void(engine: Engine, key: str, at: int) -> None:
 
 
 @asynccontextmanager
-async def sending(engine: Engine, seconds: float = 20.0, schedule: Schedule = QUICK) -> AsyncIterator[Road]:
+async def sending(
+    engine: Engine, seconds: float = 20.0, schedule: Schedule = QUICK, keep: timedelta = timedelta(days=30)
+) -> AsyncIterator[Road]:
     """A road and a sender; each attempt has so many seconds."""
     loop, resolver = asyncio.get_running_loop(), Resolver()
     road = Road(engine, utc_now, 100, 50, on_notices=lambda: loop.call_soon_threadsafe(own.wake))
     courier = Courier(ANYTHING, seconds, resolver)
-    keep = timedelta(days=30)
     own = Sender(
         road, Reader(engine).notices, courier, utc_now, schedule, timeout_seconds=seconds, keep=keep, draw=lambda: 0.0
     )
@@ -255,7 +256,7 @@ def test_a_slow_receiver_holds_up_nobody_else(engine: Engine) -> None:
 
         async def work(_: Road) -> None:
             await until(lambda: states(engine, "quick") == ["delivered"] * 3 * PLACES)
-            assert len(slow.heard) == PLACES
+            await until(lambda: len(slow.heard) == PLACES)
             assert states(engine, "slow") == ["waiting"] * 3 * PLACES
             let_go.set()
             await until(lambda: states(engine, "slow") == ["delivered"] * 3 * PLACES)
@@ -265,23 +266,46 @@ def test_a_slow_receiver_holds_up_nobody_else(engine: Engine) -> None:
 
 
 def test_a_removed_receiver_is_sent_nothing_more(engine: Engine) -> None:
-    with listening(lambda _: 500) as removed, listening() as other:
+    """Neither what waits, nor again what was being sent when it was removed, nor what comes later."""
+    let_go = threading.Event()
+
+    def hold(_: Heard) -> int:
+        let_go.wait(60)
+        return 500
+
+    with listening(hold) as removed, listening() as other:
         register(engine, removed, "removed")
         register(engine, other, "other")
         decide(engine, "lot-1")
+        void(engine, "lot-1", 1)
+        perform_now(engine, RegisterTest("lot-2", "seal", SUBJECT, {}, "me"))
 
         async def work(road: Road) -> None:
-            await until(lambda: len(removed.heard) == 1 and states(engine, "other") == ["delivered"])
+            await until(lambda: len(removed.heard) == 1 and states(engine, "other") == ["delivered"] * 2)
             await road.submit(RemoveReceiver("removed", "me"))
+            let_go.set()
             await road.submit(post("lot-2", *[0] * 24))
-            await until(lambda: states(engine, "other") == ["delivered"] * 2)
-            await asyncio.sleep(0.5)
+            await until(lambda: states(engine, "other") == ["delivered"] * 3)
+            await asyncio.sleep(0.3)
 
-        perform_now(engine, RegisterTest("lot-2", "seal", SUBJECT, {}, "me"))
-        run(engine, work, schedule=Schedule(attempts=50, first_wait_seconds=0.3))
-        assert len(removed.heard) == 1
+        run(engine, work)
+        assert removed.told == [("lot-1", 2)]
         (stored,) = [each for each in Reader(engine).notices.receivers() if each.name == "removed"]
         assert stored.secret is None
+
+
+def test_what_was_delivered_is_dropped_after_its_time_and_what_is_dead_is_not(engine: Engine) -> None:
+    with listening(lambda heard: 200 if heard.about[0] == "lot-1" else 410) as receiver:
+        register(engine, receiver)
+        decide(engine, "lot-1")
+        decide(engine, "lot-2")
+        run(engine, lambda _: until(lambda: sorted(states(engine)) == ["dead", "delivered"]))
+
+        async def drop() -> None:
+            async with sending(engine, keep=timedelta(0)):
+                await until(lambda: states(engine) == ["dead"])
+
+        asyncio.run(drop())
 
 
 def test_a_receiver_is_told_of_the_tests_inside_its_limits(engine: Engine) -> None:

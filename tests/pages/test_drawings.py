@@ -9,7 +9,6 @@ import httpx
 import numpy as np
 import pytest
 
-from service.domain.simulating import SEED
 from tests.api.examples import PUMP, SEAL, SHAFT, Namer, with_plan, with_test
 from tests.pages.people import signed_in
 from tests.running import Running
@@ -58,6 +57,22 @@ def test_the_drawing_of_a_test_is_a_file_that_stands_alone(service: Running, lot
     assert np.allclose(size(png.content), (3.0 * wide, 3.0 * high), rtol=0.0, atol=2.0)
 
 
+def test_measurements_that_only_give_a_mean_have_their_place(
+    service: Running, admin: httpx.Client, new_name: Namer
+) -> None:
+    """Of three measurements whose mean is unknown the region sees two steps; the drawing shows all three."""
+    content = {"family": "normal_variance", "h0": 1.0, "h1": 2.0, "alpha": 0.05, "beta": 0.05}
+    key = with_test(admin, new_name, {**content, "truncation": {"sample_number": 20}})
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [10.0, 11.0, 9.5]}).raise_for_status()
+    with signed_in(service, "viewer") as person:
+        root = alone(person.get(f"/tests/{key}/drawing.svg?view=count").content)
+    marks = [float(each.get("cx", "")) for each in root.iter(f"{SVG}circle")]
+    across = [each for each in root.iter(f"{SVG}text") if each.get("text-anchor") == "middle"]
+    ticks = {int(each.text): float(each.get("x", "")) for each in across if each.text and each.text.isdigit()}
+    unit = (ticks[max(ticks)] - ticks[0]) / max(ticks)
+    assert [round((x - ticks[0]) / unit, 2) for x in sorted(marks)] == [0.0, 1.0, 2.0, 3.0]
+
+
 @pytest.mark.parametrize(("plan", "body"), [(SEAL, {"values": [0, 1, 0]}), (PUMP, {"values": [31.5, 400.0]})])
 def test_the_points_are_those_of_the_interface(
     service: Running, admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: dict[str, Any]
@@ -93,28 +108,29 @@ def test_the_curves_of_a_plan_are_files(service: Running, admin: httpx.Client, n
     with signed_in(service, "viewer") as person:
         svg = person.get(f"/plans/{plan}/curves.svg?figure={figure}")
         png = person.get(f"/plans/{plan}/curves.png?figure={figure}")
+        page = person.get(f"/plans/{plan}").text
         wrong = person.get(f"/plans/{plan}/curves.svg?figure=other")
         unknown = person.get("/plans/none/curves.svg")
     assert svg.headers["content-disposition"] == f'attachment; filename="{plan}-{figure}.svg"'
     texts = [each.text for each in alone(svg.content).iter(f"{SVG}text")]
     assert {"H0", "H1", "mean"} <= set(texts)
+    assert f'href="/plans/{plan}/curves.svg?figure={figure}"' in page
     assert size(png.content)[0] > 1000
     assert (wrong.status_code, unknown.status_code) == (404, 404)
 
 
-def test_curves_that_are_simulated_come_when_they_are_done(
+def test_curves_that_are_not_simulated_yet_are_not_drawn(
     service: Running, admin: httpx.Client, new_name: Namer
 ) -> None:
     content = {**SHAFT, "statistic": "invariant", "h0": 0.0, "h1": 2.0, "known": {"reference": 10.0}}
     plan = with_plan(admin, new_name("plan"), content)
+    score = with_plan(admin, new_name("plan"), {"family": "score", "boundaries": "strict", "alpha": 0.05, "beta": 0.1})
     with signed_in(service, "viewer") as person:
-        answer = person.get(f"/plans/{plan}/curves.svg")
-        assert answer.status_code == 503
-        assert int(answer.headers["Retry-After"]) > 0
-        assert "being simulated" in answer.text
-    begun = admin.get(f"/v1/plans/{plan}/characteristics", params={"seed": SEED})
-    if begun.status_code == 202:
-        admin.delete(begun.headers["Location"]).raise_for_status()
+        for figure in ("oc", "asn"):
+            waiting = person.get(f"/plans/{plan}/curves.svg?figure={figure}")
+            assert waiting.status_code == 409
+            assert "Press Simulate" in waiting.text
+            assert person.get(f"/plans/{score}/curves.png?figure={figure}").status_code == 422
 
 
 def test_nobody_gets_a_file_without_signing_in(service: Running, lot: str) -> None:

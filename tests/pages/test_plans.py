@@ -43,6 +43,8 @@ def test_a_plan_shows_what_the_api_says_of_it(
     expected = admin.get(f"/v1/plans/{name}/characteristics", params=at).json()
     with signed_in(service, "viewer") as person:
         text = person.get(f"/plans/{name}").text
+        drawings = [person.get(unescape(link)) for link in re.findall(r'href="(/plans/[^"]+/curves\.svg[^"]*)"', text)]
+        assert len(drawings) == 2
         rows = list(csv.DictReader(io.StringIO(person.get(f"/plans/{name}/curves.csv").text)))
     said = words(text)
     for point in expected["points"]:
@@ -61,6 +63,7 @@ def test_a_plan_shows_what_the_api_says_of_it(
             assert " ".join(figure(cell) for cell in cells) in said
         assert "MIL-HDBK-781A (1996), sequential test plans" in said
     assert stored["fingerprint"] in said
+    assert {kept.status_code for kept in drawings} == {200}
     curve = admin.get(f"/v1/plans/{name}/characteristics").json()["points"]
     assert [float(row["parameter"]) for row in rows] == [point["parameter"] for point in curve]
     for row, point in zip(rows, curve, strict=True):
@@ -118,7 +121,8 @@ def test_a_plan_is_a_start_for_a_design(service: Running, admin: httpx.Client, n
             (sentence,) = re.findall(r"If the mean life is [^.]+ \(H0\).*? need at most [^.]+\.", words(design))[:1]
             assert sentence in words(text)
             assert f'name="a.name" value="{name}"' in design
-        assert person.get("/design?plan=no-such-plan").status_code == 404
+        for wrong in ("no-such-plan", "%00", "a%20b", "x" * 200):
+            assert person.get(f"/design?plan={wrong}").status_code == 404
 
 
 def test_plans_are_listed_by_name_a_page_at_a_time(service: Running, admin: httpx.Client, new_name: Namer) -> None:
@@ -136,7 +140,7 @@ def test_plans_are_listed_by_name_a_page_at_a_time(service: Running, admin: http
 
 def test_an_unknown_plan_is_a_page_that_helps(service: Running) -> None:
     with signed_in(service, "viewer") as person:
-        for address in ("/plans/no-such-plan", "/plans/no-such-plan/curves.csv", "/plans/%20"):
+        for address in ("/plans/no-such-plan", "/plans/no-such-plan/curves.csv", "/plans/%20", "/plans?after=%00"):
             answer = person.get(address)
             assert answer.status_code == 404
             assert "All plans" in words(answer.text)

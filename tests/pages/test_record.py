@@ -154,8 +154,8 @@ def test_a_running_test_has_its_ways_and_no_estimate(service: Running, admin: ht
     [
         (
             {**SHAFT, "statistic": "invariant", "h0": 0.0, "h1": 0.5, "known": {"reference": 10.0}},
-            {"values": [9.4, 9.6, 9.5, 9.1, 9.3, 9.2, 9.4, 9.3]},
-            ("there is no p-value and no interval", "figures of an invariant plan are simulated", "Student's t"),
+            {"values": [10.3, 9.6] * 20},
+            ("p-value, simulated", "standard error", "figures of an invariant plan are simulated", "Student's t"),
         ),
         (
             {"standard": "MIL-HDBK-781A/III-D", "scale": 100.0},
@@ -211,7 +211,7 @@ def test_the_same_record_is_the_same_file() -> None:
     lists: dict[str, Any] = {
         name: [] for name in ("identity", "notes", "standing", "promises", "disposition", "history", "estimates")
     }
-    tables = dict.fromkeys(("results", "last_results", "corrections", "checks"), nothing)
+    tables = dict.fromkeys(("results", "last_results", "corrections", "checks", "estimates"), nothing)
     more = {"title": "x", "printed": "now", "decision": "accept", "checks_summary": "", "verifying": "", "paper": "a4"}
     drawn = {"drawing": svg, "drawing_words": "x", "mark": svg, "cautions": [], "signing": ["x"]}
     data = {**texts, **lists, **tables, **more, **drawn}

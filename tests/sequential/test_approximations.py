@@ -73,3 +73,12 @@ def test_walds_table_of_savings(beta: float) -> None:
         assert found is not None
         fixed = ((NormalDist().inv_cdf(1 - alpha) + NormalDist().inv_cdf(1 - beta)) / shift) ** 2
         assert 100 * (1 - found.progress / fixed) == pytest.approx(printed, abs=0.505)
+
+
+def test_a_slope_past_the_largest_exponential_has_its_root_too() -> None:
+    """A Poisson count of rate 1 under a line so steep that its slope times a first guess at the root overflows."""
+    motion = Motion(lambda t: math.expm1(t) if t < 700 else math.inf, 1.0, 1.0)
+    found = approximate(motion, 1e177, 3.0, 3.0)
+    assert found is not None
+    assert found.below == pytest.approx(1.0, abs=1e-12)
+    assert found.progress == pytest.approx(3e-177, rel=1e-9)

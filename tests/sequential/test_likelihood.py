@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from hypothesis import assume, given
 from hypothesis import strategies as st
-from mpmath import exp, log, mpf
+from mpmath import exp, log, mp, mpf
 
 from service.sequential import likelihood
 from service.sequential.double import Double
@@ -110,3 +110,14 @@ def test_close_and_far_hypotheses_keep_their_digits(h0: float, apart: float, kno
     for ratio, (gain, slope) in found.items():
         assert ratio.gain == pytest.approx(float(gain), rel=2e-14)
         assert ratio.slope == pytest.approx(float(slope), rel=2e-13)
+
+
+@pytest.mark.parametrize("mean1", [1e-100, 1e-17, 1e-3, 0.5, 0.9, 1.1])
+def test_counts_that_all_but_vanish_under_h1_keep_their_digits(mean1: float) -> None:
+    with mp.workdps(60):
+        a, b, k = mpf(2), mpf(mean1), mpf(3)
+        gain = log(b / (b + k)) - log(a / (a + k))
+        slope = k * log((b + k) / (a + k)) / gain
+    ratio = likelihood.negative_binomial(2.0, mean1, 3.0)
+    assert ratio.gain == pytest.approx(float(gain), rel=2e-14)
+    assert ratio.slope == pytest.approx(float(slope), rel=2e-14)

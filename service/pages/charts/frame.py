@@ -1,12 +1,14 @@
 """Two axes with their marks and names, and the room between them for whatever is drawn."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from xml.etree.ElementTree import Element
 
 from service.pages.charts.scale import Scale, tick_words, ticks
 from service.pages.charts.svg import FAINT, INK, PAPER, RULE, add, drawing, line
 
 LEFT, RIGHT, TOP, BOTTOM = 64.0, 16.0, 18.0, 46.0
+# Half the width of an axis that shows a single number, as a share of it.
+NARROWEST = 0.05
 
 
 @dataclass(frozen=True)
@@ -49,6 +51,7 @@ def framed(  # noqa: PLR0913 - what every frame says
         name: Of this drawing, unique on its page.
     """
     width, height = size
+    across, up = _opened(across), _opened(up)
     root = drawing(width, height, title, description)
     add(root, "rect", x=0, y=0, width=width, height=height, fill=PAPER)
     x = Scale(across.low, across.high, LEFT, width - RIGHT)
@@ -60,6 +63,14 @@ def framed(  # noqa: PLR0913 - what every frame says
     inside = add(root, "g", clip_path=f"url(#{name}-room)")
     add(root, "path", d=f"M{LEFT} {TOP}V{height - BOTTOM}H{width - RIGHT}", fill="none", stroke=INK)
     return Frame(root, inside, x, y, width, height)
+
+
+def _opened(axis: Axis) -> Axis:
+    """With some room where its ends are one number, or too near for a double to tell apart."""
+    if axis.high > axis.low:
+        return axis
+    room = max(1.0, abs(axis.low)) * NARROWEST
+    return replace(axis, low=axis.low - room, high=axis.low + room)
 
 
 def _across(root: Element, x: Scale, axis: Axis, height: float) -> None:

@@ -8,14 +8,15 @@ from fastapi.responses import RedirectResponse
 
 from service.domain.access import Role
 from service.domain.checking import attained_by, checked_content
-from service.domain.errors import Fault, Invalid, InvalidPlan, PlanDiffers, TooManyQuestions
+from service.domain.errors import Fault, Invalid, InvalidPlan, PlanDiffers, TooManyQuestions, UnknownPlan
 from service.domain.names import NAME_RULE, is_name
+from service.domain.plan import Plan
 from service.domain.standards import catalogue
 from service.ingest.commands import CreatePlan, StoredPlan
 from service.pages.failing import status_of
 from service.pages.forms import Typed, typed
 from service.pages.rendering import page
-from service.pages.routes.plans import AGAIN_SECONDS, csv_answer
+from service.pages.routes.plans import csv_answer
 from service.pages.routing import page_router
 from service.pages.session import Session, SignedIn, check_role
 from service.pages.simulating import with_simulation
@@ -57,8 +58,7 @@ class Answer:
 async def show_design(request: Request, session: SignedIn, parts: PartsOf) -> Response:
     """Candidates, side by side, as the address has them; buttons change the address."""
     query = dict(request.query_params)
-    plan = await known_plan(parts, query["plan"]) if query.get("plan") else None
-    design = design_in(query, plan)
+    design = design_in(query, await _start(parts, query.get("plan", "")))
     act = query.get("do", "")
     if act == ADD:
         return RedirectResponse(design.with_another().address(), 303)
@@ -126,6 +126,18 @@ async def save(request: Request, session: SignedIn, parts: PartsOf) -> Response:
     return RedirectResponse(f"/plans/{outcome.plan.name}", 303)
 
 
+async def _start(parts: Parts, name: str) -> Plan | None:
+    """
+    The stored plan that a design starts from; None where it names none.
+
+    Raises:
+        UnknownPlan: There is none of this name.
+    """
+    if name and not is_name(name):
+        raise UnknownPlan(name)
+    return await known_plan(parts, name) if name else None
+
+
 def _one(design: Design, candidate: Candidate) -> Design:
     """A design of this candidate alone, as the first."""
     return replace(design, candidates=(replace(candidate, letter=LETTERS[0]),))
@@ -165,9 +177,7 @@ async def _answer(parts: Parts, design: Design, *, may_take_long: bool, may_simu
 
 
 def _page(request: Request, session: Session, answer: Answer) -> Response:
-    headers = {"Refresh": str(AGAIN_SECONDS)} if answer.shown.is_running else {}
-    if answer.trouble:
-        headers["Retry-After"] = str(TooManyQuestions.retry_after_seconds)
+    headers = {"Retry-After": str(TooManyQuestions.retry_after_seconds)} if answer.trouble else None
     return page(
         request,
         "design.html",

@@ -3,32 +3,39 @@
 import csv
 import io
 from collections.abc import Iterator
+from enum import StrEnum
 from typing import Annotated, Literal
 from xml.etree.ElementTree import Element
 
-from fastapi import Path, Query, Request, Response
+from fastapi import Path, Query, Response
 from fastapi.responses import StreamingResponse
 
-from service.domain.characteristics import Promise, promise_of
 from service.domain.names import NAME_PATTERN
 from service.domain.path import Path as Walk
 from service.domain.path import region_at
-from service.domain.plan import Plan
 from service.domain.procedure import Procedure, procedure_of
-from service.domain.simulating import question_of
 from service.pages.charts.svg import file
 from service.pages.charts.walk import walk_drawing
-from service.pages.rendering import failure
 from service.pages.routes.one_test import POINTS
 from service.pages.routing import page_router
+from service.pages.simulating import with_simulation
 from service.pages.typesetting import png_of
-from service.pages.views.curve_files import Figure, curve_of
+from service.pages.views.curves import acceptance_drawing, check_curves, sample_number_drawing
+from service.pages.views.judging import judged_plan
 from service.pages.views.picture import View, picture_of, views_of
 from service.web.lookup import known_plan, known_test
 from service.web.parts import Parts, PartsOf, computing
 from service.web.walks import MOST_POINTS
 
 router = page_router()
+
+
+class Figure(StrEnum):
+    """What is drawn over the true parameter."""
+
+    OC = "oc"
+    ASN = "asn"
+
 
 Key = Annotated[str, Path(pattern=NAME_PATTERN)]
 ViewAsked = Annotated[str, Query(max_length=20)]
@@ -59,15 +66,15 @@ async def send_path(key: Key, parts: PartsOf) -> Response:
 
 
 @router.get("/plans/{name}/curves.svg")
-async def send_curves_as_svg(request: Request, name: Key, parts: PartsOf, figure: FigureAsked = Figure.OC) -> Response:
-    """The operating characteristic of a plan, or its average sample number, as a file that stands alone."""
-    return await _curves(request, parts, name, figure, "svg")
+async def send_curves_as_svg(name: Key, parts: PartsOf, figure: FigureAsked = Figure.OC) -> Response:
+    """The operating characteristic of a plan, or its sample numbers, as a file that stands alone."""
+    return await _curves(parts, name, figure, "svg")
 
 
 @router.get("/plans/{name}/curves.png")
-async def send_curves_as_png(request: Request, name: Key, parts: PartsOf, figure: FigureAsked = Figure.OC) -> Response:
+async def send_curves_as_png(name: Key, parts: PartsOf, figure: FigureAsked = Figure.OC) -> Response:
     """The same as pixels."""
-    return await _curves(request, parts, name, figure, "png")
+    return await _curves(parts, name, figure, "png")
 
 
 async def _drawing(parts: Parts, key: str, view: str, form: Form) -> Response:
@@ -82,24 +89,13 @@ async def _drawing(parts: Parts, key: str, view: str, form: Form) -> Response:
     return Response(await computing(parts, drawn), headers=_headers(f"{key}-{chosen}", form))
 
 
-async def _curves(request: Request, parts: Parts, name: str, figure: Figure, form: Form) -> Response:
+async def _curves(parts: Parts, name: str, figure: Figure, form: Form) -> Response:
     plan = await known_plan(parts, name)
-    promise = await _promise(parts, plan)
-    if promise is None:
-        detail = "The figures of this plan are being simulated; ask again in a moment."
-        return failure(request, 503, "Not just now", detail, headers={"Retry-After": "2"})
-    drawn = await computing(parts, lambda: _file(curve_of(plan, promise, figure), form))
+    judged = with_simulation(parts, await computing(parts, lambda: judged_plan(name, plan.document)), may_begin=False)
+    check_curves([judged])
+    draw = acceptance_drawing if figure is Figure.OC else sample_number_drawing
+    drawn = await computing(parts, lambda: _file(draw([judged]), form))
     return Response(drawn, headers=_headers(f"{name}-{figure}", form))
-
-
-async def _promise(parts: Parts, plan: Plan) -> Promise | None:
-    """The figures of a plan on a grid; None while they are being simulated."""
-    if not procedure_of(plan).family.is_invariant:
-        return await computing(parts, lambda: promise_of(plan.document, ()))
-    simulation = parts.simulations.asked(question_of(plan.document, [], None))
-    if simulation.problem is not None:
-        raise simulation.problem
-    return simulation.promise
 
 
 def _file(drawing: Element, form: Form) -> bytes:

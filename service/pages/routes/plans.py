@@ -5,7 +5,6 @@ from typing import Annotated
 
 from fastapi import Path, Query, Request, Response
 
-from service.domain.errors import Conflict, Invalid
 from service.domain.names import NAME_PATTERN
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
@@ -14,6 +13,7 @@ from service.domain.standards import source_of
 from service.pages.rendering import page
 from service.pages.routing import page_router
 from service.pages.simulating import with_simulation
+from service.pages.views.curves import check_curves
 from service.pages.views.figures import csv_of, table_of
 from service.pages.views.judging import Judged, judged_plan
 from service.pages.views.listing import stages
@@ -31,8 +31,6 @@ Name = Annotated[str, Path(pattern=NAME_PATTERN)]
 Seed = Annotated[int | None, Query(ge=0, le=2**53)]
 
 ROWS = 50
-# A page that waits for a simulation looks again by itself after so many seconds.
-AGAIN_SECONDS = 3
 
 
 @dataclass(frozen=True)
@@ -46,7 +44,7 @@ class Row:
 
 @router.get("/plans")
 async def show_plans(
-    request: Request, parts: PartsOf, after: Annotated[str | None, Query(max_length=100)] = None
+    request: Request, parts: PartsOf, after: Annotated[str | None, Query(pattern=NAME_PATTERN)] = None
 ) -> Response:
     """Plans by name, fifty at a time."""
     found = await reading(lambda: parts.reader.plans(after, ROWS + 1))
@@ -75,7 +73,6 @@ async def show_plan(  # noqa: PLR0913 - each argument is a part of the address
     return page(
         request,
         "plan.html",
-        headers={"Refresh": str(AGAIN_SECONDS)} if shown.is_running else None,
         plan=plan,
         family=family_words(plan.content["family"]),
         promises=promises_of(plan),
@@ -103,12 +100,9 @@ def csv_answer(judged: list[Judged], name: str) -> Response:
     The figures as a file.
 
     Raises:
-        Conflict: They are simulated, and that is not done.
-        Invalid: There are none, for another reason.
+        Conflict, Invalid: As `check_curves`.
     """
-    troubled = next((each for each in judged if each.curve is None), None)
-    if troubled is not None:
-        raise Invalid(troubled.trouble) if troubled.question is None else Conflict(troubled.trouble)
+    check_curves(judged)
     headers = {"Content-Disposition": f'attachment; filename="{name}-curves.csv"'}
     return Response(csv_of(judged), media_type="text/csv; charset=utf-8", headers=headers)
 

@@ -63,6 +63,12 @@ async function lookAgain() {
   }
 }
 
+// A page that waits for something to be computed looks again after so many seconds, for as long as it says so.
+function waitForMore() {
+  const part = document.querySelector("[data-again]");
+  if (part) setTimeout(() => lookAgain().then(waitForMore), 1000 * part.dataset.again);
+}
+
 function say(words) {
   document.getElementById("stream").textContent = words;
 }
@@ -109,6 +115,7 @@ function answerWhileTyping(form) {
 showTimes(document);
 if (document.body.dataset.stream) follow(document.body.dataset.stream);
 for (const form of document.querySelectorAll("form[data-while-typing]")) answerWhileTyping(form);
+waitForMore();
 for (const button of document.querySelectorAll("button[data-print]")) {
   button.hidden = false;
   button.addEventListener("click", () => window.print());

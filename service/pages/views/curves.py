@@ -5,6 +5,7 @@ from collections.abc import Iterator, Sequence
 from xml.etree.ElementTree import Element
 
 from service.domain.characteristics import Point, Spread
+from service.domain.errors import Conflict, Invalid
 from service.pages.charts.curves import Series, Upright, curves_drawing
 from service.pages.charts.frame import Axis
 from service.pages.views.judging import Judged
@@ -50,6 +51,19 @@ def spread_of(point: Point) -> Spread | None:
 def has_curves(judged: Sequence[Judged]) -> bool:
     """Whether there is anything to draw."""
     return any(each.curve is not None for each in judged)
+
+
+def check_curves(judged: Sequence[Judged]) -> None:
+    """
+    Ask whether all of these have a curve.
+
+    Raises:
+        Conflict: They are simulated, and that is not done.
+        Invalid: There are none, for another reason.
+    """
+    troubled = next((each for each in judged if each.curve is None), None)
+    if troubled is not None:
+        raise Invalid(troubled.trouble) if troubled.question is None else Conflict(troubled.trouble)
 
 
 def _drawn(judged: Sequence[Judged]) -> Iterator[tuple[int, Judged]]:

@@ -13,6 +13,7 @@ from service.domain.procedure import Procedure, lines_of
 from service.domain.tables import FIELDS
 from service.pages.views.curves import QUANTILE, spread_of
 from service.pages.views.judging import Judged
+from service.pages.views.plan_words import subject_words
 from service.pages.words import figure, percent, signed
 
 # Digits of a probability on a page.
@@ -51,10 +52,11 @@ def rows_of(judged: Sequence[Judged]) -> tuple[Row, ...]:
     return tuple(Row(name, tuple(column.get(name, "") for column in columns)) for name in names)
 
 
-def words_of(judged: Judged, what: str) -> tuple[str, ...]:
-    """What a plan promises, in sentences; `what` is its subject: a lot, an experiment."""
+def words_of(judged: Judged) -> tuple[str, ...]:
+    """What a plan promises, in sentences."""
     if judged.document is None:
         return ()
+    what = subject_words(judged.procedure.family.name)
     if judged.curve is None:
         return _without_figures(judged, what)
     family = judged.procedure.family

@@ -47,7 +47,9 @@ def picture_of(test: SequentialTest, plan: Plan, path: Path, view: View) -> Walk
     """
     procedure = procedure_of(plan)
     heights = path.log_likelihood_ratio if view is View.EVIDENCE else path.total
-    walk = tuple((float(x), float(y)) for x, y in zip(path.progress, heights, strict=True))
+    # Units are shown as people count them, though the region may run over fewer.
+    along = path.progress if procedure.family.has_exposure else path.sample_number
+    walk = tuple((float(x), float(y)) for x, y in zip(along, heights, strict=True))
     reaches = _reaches(test, procedure, view)
     end = _end(procedure, walk, reaches)
     limits = limits_of(procedure, view, end)
@@ -128,7 +130,8 @@ def _reaches(test: SequentialTest, procedure: Procedure, view: View) -> tuple[Re
     if test.stage is not Stage.RUNNING:
         return ()
     ways = ways_of(procedure, test.state)
-    standing = standing_of(procedure, test.state)
+    has_exposure = procedure.family.has_exposure
+    begin = standing_of(procedure, test.state).progress if has_exposure else float(test.state.sample_number)
     shown = test.state.total.value
     named = ((ways.accept, Decision.ACCEPT), (ways.reject, Decision.REJECT), (ways.reject_below, Decision.REJECT))
     found = []
@@ -138,7 +141,7 @@ def _reaches(test: SequentialTest, procedure: Procedure, view: View) -> tuple[Re
             continue
         height = _limit_of(procedure, decision) if view is View.EVIDENCE else shown + way.total
         if height is not None and math.isfinite(height) and not (procedure.family.is_invariant and view is View.COUNT):
-            found.append(Reach(decision, (standing.progress + steps, height), way.words))
+            found.append(Reach(decision, (begin + steps, height), way.words))
     return tuple(found)
 
 

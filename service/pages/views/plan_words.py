@@ -16,6 +16,9 @@ FAMILY_WORDS = {
     "score": "A model of your own: its increments of evidence",
 }
 
+# Families that compare two ways of doing one thing.
+OF_ARMS = ("paired", "poisson_ratio", "normal_difference", "normal_two_sample")
+
 STATISTIC_WORDS = {
     "simple": "one value against another (Wald)",
     "generalised": "a range against a range, by their best values",
@@ -52,6 +55,11 @@ PRIOR_WORDS = {
     "rate": "Prior of the rate, gamma: rate",
     "tau": "Prior, normal about H0: τ",
 }
+
+
+def subject_words(name: str) -> str:
+    """What a test of a family is most often of."""
+    return "an experiment" if name in OF_ARMS else "a lot"
 
 
 def family_words(name: str) -> str:

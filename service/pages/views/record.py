@@ -100,7 +100,7 @@ class Record:
     results_note: str
     corrections: Table
     corrections_note: str
-    estimates: tuple[Figure, ...]
+    estimates: Table
     estimates_note: str
     checks: Table
     checks_summary: str
@@ -308,15 +308,21 @@ def _corrections_note(count: int) -> str:
     return f"{figure(count)} made. What was posted stays on record; the last correction of a result counts.{left_out}"
 
 
-def _estimates(reader: Reader, test: SequentialTest, plan: Plan) -> tuple[tuple[Figure, ...], str]:
+def _estimates(reader: Reader, test: SequentialTest, plan: Plan) -> tuple[Table, str]:
     if not test.state.is_decided:
-        return (), BEFORE_DECISION
+        return Table((), ()), BEFORE_DECISION
     try:
         found = inference_for(reader, test, plan, LEVEL)
     except (ComputationTooLarge, InvalidQuestion) as error:
-        return (), str(error)
+        return Table((), ()), str(error)
     overrun = " Results after the decision never count here." if test.state.overrun else ""
-    return figures_of(found, plan), f"{found.looks}{overrun}"
+    rows = tuple((each.name, _value(each), f"{each.meaning} {each.reason}".strip()) for each in figures_of(found, plan))
+    return Table(("figure", "value", "what it means"), rows, (1,)), f"{found.looks}{overrun}"
+
+
+def _value(estimate: Figure) -> str:
+    """A figure with its standard error where it was simulated."""
+    return estimate.value if estimate.error is None else f"{estimate.value}, standard error {figure(estimate.error, 2)}"
 
 
 def _checks(found: Assumptions) -> Table:

@@ -76,8 +76,10 @@ def _track(procedure: Procedure, view: View, number: int, course: Course) -> Tra
 
 
 def _end(procedure: Procedure, tracks: Sequence[Track], usual: float | None) -> float:
-    """The right end: a little past the longest course, or as far as most tests go; never far past the wall."""
+    """The right end: a little past the longest course, or as far as most tests go; a table is shown to its last row."""
     wall = wall_of(procedure)
+    if procedure.thresholds is None and wall is not None:
+        return wall * 1.02
     longest = max((track.points[-1][0] for track in tracks), default=usual or 0.0)
     if longest == 0.0:
         horizon = wall if wall is not None else procedure.region.open_horizon(0.0)

@@ -58,21 +58,20 @@ class Shown:
         return any(each.is_running for each in self.judged)
 
 
-def shown_of(judged: Sequence[Judged], view: View, seed: int | None, what: str = "a lot") -> Shown:
+def shown_of(judged: Sequence[Judged], view: View, seed: int | None) -> Shown:
     """
     Rows, curves and pictures.
 
     Args:
         view: What the height of the pictures is, where a plan can be drawn so.
         seed: Of the courses drawn in them; None draws none.
-        what: The subject, for people.
     """
     sound = [each for each in judged if each.document is not None]
     curves = has_curves(sound)
     return Shown(
         judged=tuple(judged),
         rows=rows_of(sound),
-        words=words_of(sound[0], what) if sound else (),
+        words=words_of(sound[0]) if sound else (),
         acceptance=markup(acceptance_drawing(sound)) if curves else None,
         numbers=markup(sample_number_drawing(sound)) if curves else None,
         pictures=tuple(_picture(each, view, seed) for each in sound),
