@@ -19,6 +19,8 @@ Text = Annotated[str, StringConstraints(strict=True, min_length=1, max_length=20
 Reason = Annotated[
     str, StringConstraints(strict=True, strip_whitespace=True, min_length=1, max_length=1000, pattern=_SHOWN)
 ]
+# What somebody looks for, perhaps nothing.
+Sought = Annotated[str, StringConstraints(strict=True, max_length=301, pattern=r"^[^\x00-\x1f\x7f]*$")]
 # A label's name, a colon and its value.
 Label = Annotated[str, StringConstraints(strict=True, max_length=301, pattern=_SHOWN)]
 

@@ -77,6 +77,8 @@ def test_a_void_takes_a_result_out(service: Running, admin: httpx.Client, new_na
         ({"value": "1e999"}, "must be a number"),
         ({"value": "nan"}, "must be a number"),
         ({"value": "1_0"}, "must be a number"),
+        ({"unit": "x" * 201}, "must be at most 200 characters"),
+        ({"unit": "P\x001"}, "without control characters"),
         ({"value": "\u0663"}, "must be a number"),
         ({"value": ""}, "is required"),
         ({"value": "10.1"}, "already"),

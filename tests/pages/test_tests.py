@@ -247,3 +247,22 @@ def test_bounds_that_hold_for_every_model_are_not_called_attained(
             assert "attained" not in said
         estimates = words(person.get(f"/tests/{key}/estimates").text)
     assert estimates.count("there is no parameter to estimate") == 5
+
+
+def test_a_label_without_a_colon_finds_nothing_and_says_why(
+    service: Running, admin: httpx.Client, new_name: Namer
+) -> None:
+    key = with_test(admin, new_name, SEAL, labels={"bench": "north"})
+    with signed_in(service, "viewer") as person:
+        right, wrong = (person.get("/", params={"words": key, "label": label}).text for label in ("bench:north", "x"))
+    assert "label-fault" not in right
+    assert f"/tests/{key}" in right
+    assert 'aria-describedby="label-fault"' in wrong
+    assert "No test matches." in words(wrong)
+
+
+@pytest.mark.parametrize("name", ["words", "plan", "label", "stage"])
+def test_an_address_with_control_characters_asks_nothing(service: Running, name: str) -> None:
+    """One of the databases takes no such text."""
+    with signed_in(service, "viewer") as person:
+        assert person.get("/", params={name: "a:\x00"}).status_code == 404

@@ -7,11 +7,12 @@ from fastapi import Query, Request, Response
 from service.pages.rendering import page
 from service.pages.routing import page_router
 from service.pages.views.listing import Filters, listing_of
+from service.web.fields import Sought
 from service.web.parts import PartsOf, reading
 
 router = page_router()
 
-Words = Annotated[str, Query(max_length=200)]
+Words = Annotated[Sought, Query()]
 
 
 @router.get("/")

@@ -29,14 +29,14 @@ class Filters:
 
     def narrowed(self) -> TestFilters:
         """For the reader; what cannot be is left out."""
-        name, colon, value = self.label.partition(":")
+        name, _, value = self.label.partition(":")
         return TestFilters(
             stage=Stage(self.stage) if self.stage in set(Stage) else None,
             words=self.words or None,
             decision=Decision(self.decision) if self.decision in set(Decision) else None,
             kind=SubjectKind(self.kind) if self.kind in set(SubjectKind) else None,
             plan=self.plan or None,
-            labels=((name.strip(), value.strip()),) if colon else (),
+            labels=((name.strip(), value.strip()),) if self.label else (),
         )
 
     def address(self, **changed: str | int) -> str:

@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from itertools import islice
 from typing import Any
 
+from pydantic import TypeAdapter, ValidationError
+
 from service.domain.correcting import in_force
 from service.domain.errors import Fault, InvalidCorrection
 from service.domain.families import Family
@@ -17,6 +19,7 @@ from service.domain.sequential_test import SequentialTest
 from service.pages.forms import Typed
 from service.pages.words import figure
 from service.storage.reader import Reader
+from service.web.fields import Text
 
 ROWS = 100
 # Fields that are true or false.
@@ -25,6 +28,7 @@ YES, NO = "yes", "no"
 UNIT = "unit"
 # Whole numbers with fewer characters are exact.
 LONGEST_WHOLE = 17
+_TEXT: TypeAdapter[str] = TypeAdapter(Text)
 _NUMBER = re.compile(r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]+)?")
 
 
@@ -103,9 +107,18 @@ def as_observation(family: Family, form: Typed) -> dict[str, Any]:
         found[name] = text == YES if name in FLAGS else text if choices else number_in(text)
         if found[name] is None:
             faults.append(Fault(f"/observation/{name}", f"must be a number; received {text!r}"))
+    if form[UNIT] and not _is_text(form[UNIT]):
+        faults.append(Fault(f"/observation/{UNIT}", "must be at most 200 characters, without control characters"))
     if faults:
         raise InvalidCorrection(faults)
     return {**found, UNIT: form[UNIT]} if form[UNIT] else found
+
+
+def _is_text(text: str) -> bool:
+    try:
+        return bool(_TEXT.validate_python(text))
+    except ValidationError:
+        return False
 
 
 def said(family: Family, observation: Mapping[str, Any]) -> str:
