@@ -266,3 +266,25 @@ def test_an_address_with_control_characters_asks_nothing(service: Running, name:
     """One of the databases takes no such text."""
     with signed_in(service, "viewer") as person:
         assert person.get("/", params={name: "a:\x00"}).status_code == 404
+
+
+@pytest.mark.parametrize(
+    ("plan", "body", "after", "axis"),
+    [
+        (PUMP, {"values": [1.0] * 9}, "observations and unit-time of", "unit-time"),
+        (
+            {"family": "paired", "h0": 1.0, "h1": 4.0, "alpha": 0.05, "beta": 0.1},
+            {"observations": [{"a": 0, "b": 1}] * 12},
+            "pairs that differ:",
+            "pairs that differ",
+        ),
+    ],
+)
+def test_numbers_say_what_they_count(
+    service: Running, admin: httpx.Client, new_name: Namer, plan: dict[str, Any], body: Any, after: str, axis: str
+) -> None:
+    key = with_test(admin, new_name, plan)
+    with signed_in(service, "viewer") as person:
+        assert f"further on average, {axis}" in words(person.get(f"/tests/{key}").text)
+        state = admin.post(f"/v1/tests/{key}/observations", json=body).json()
+        assert f"after {state['sample_number']} {after}" in words(person.get(f"/tests/{key}").text)

@@ -41,7 +41,8 @@ async def show_test(
 ) -> Response:
     """The decision in words, the picture and the figures."""
     test, plan = await known_test(parts, key)
-    views = views_of(procedure_of(plan))
+    procedure = procedure_of(plan)
+    views = views_of(procedure)
     chosen = View(view) if view in views else views[0]
     path = await computing(parts, lambda: parts.walks.path_of(parts.reader, test, plan, POINTS))
     drawing = walk_drawing(picture_of(test, plan, path, chosen))
@@ -57,6 +58,7 @@ async def show_test(
         others=await reading(lambda: others_of(parts.reader, test)),
         facts=facts_of(test, plan),
         promises=promises_of(plan),
+        axis=procedure.family.axis,
         expectation=await computing(parts, lambda: expectation_of(test, plan)),
     )
 

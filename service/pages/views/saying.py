@@ -3,6 +3,7 @@
 import re
 from dataclasses import dataclass, replace
 
+from service.domain.families import Family
 from service.domain.observing import direction_of_rejection
 from service.domain.outlook import Ways, ways_of
 from service.domain.plan import Plan
@@ -13,6 +14,9 @@ from service.pages.words import DONE, SAID, figure
 
 # A number of things, such as "21 conforming units".
 _THINGS = re.compile(r"\d+ [a-z]+( [a-z]+)?")
+
+# What is one of several.
+_ONE = {"pairs that differ": "pair that differs"}
 
 
 @dataclass(frozen=True)
@@ -73,7 +77,7 @@ def _decided(procedure: Procedure, test: SequentialTest, verb: str) -> str:
     decided = state.decided
     if decided is None:  # not reached: the decision says it is
         raise ValueError(test.key)
-    after = f"after {figure(decided.sample_number)} {'units' if decided.sample_number != 1 else 'unit'}"
+    after = f"after {_counted(procedure.family, decided.sample_number)}"
     if decided.exposure is not None:
         after += f" and {procedure.family.axis} of {figure(decided.exposure)}"
     limit = "the evidence came to its limit" if procedure.thresholds is not None else "the table's limit was reached"
@@ -81,6 +85,13 @@ def _decided(procedure: Procedure, test: SequentialTest, verb: str) -> str:
     direction = direction_of_rejection(procedure, state)
     side = f", the parameter lying {direction} the hypothesis" if direction else ""
     return f"{why[0].upper()}{why[1:]} {after}{side}: the {test.subject.kind.value} is {verb} and sampling may stop."
+
+
+def _counted(family: Family, number: int) -> str:
+    """A sample number with what it counts: where exposure runs beside it, a unit may be reported often."""
+    several = "observations" if family.has_exposure else family.axis
+    one = _ONE.get(several, several.removesuffix("s"))
+    return f"{figure(number)} {one if number == 1 else several}"
 
 
 def _notes(test: SequentialTest) -> tuple[str, ...]:
