@@ -9,7 +9,7 @@ from contextlib import asynccontextmanager, contextmanager
 from datetime import timedelta
 from types import FrameType
 
-from fastapi import FastAPI
+from fastapi import FastAPI, Request, Response
 from starlette.middleware.cors import CORSMiddleware
 from starlette.staticfiles import StaticFiles
 
@@ -39,6 +39,7 @@ from service.logs import set_up_log
 from service.notices.courier import Courier
 from service.notices.resolving import Resolve, Resolver
 from service.notices.sender import Sender
+from service.pages.failing import page_of_nothing
 from service.pages.rendering import STATIC
 from service.pages.routes import acts as page_acts
 from service.pages.routes import design as page_design
@@ -117,6 +118,12 @@ def sender_for(settings: Settings, road: Road, reader: Reader, resolve: Resolve,
     )
 
 
+async def nothing_here(request: Request, error: Exception) -> Response:
+    """An address that leads nowhere: a page for who looks with a browser, a problem document for all others."""
+    wants_page = "text/html" in request.headers.get("accept", "") and not request.url.path.startswith("/v1")
+    return page_of_nothing(request) if wants_page else await problems.on_http_exception(request, error)
+
+
 def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
     """
     The service as an ASGI application; it opens its database when it starts.
@@ -175,6 +182,7 @@ def create_app(settings: Settings, clock: Clock = utc_now) -> FastAPI:
         separate_input_output_schemas=False,
     )
     problems.install(app)
+    app.add_exception_handler(404, nothing_here)
     app.add_middleware(UnchangedTests)
     app.add_middleware(AccessGuard, rates=rates)
     if settings.origins:

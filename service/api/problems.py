@@ -281,7 +281,7 @@ def install(app: FastAPI) -> None:
     app.add_exception_handler(DomainError, _on_domain_error)
     app.add_exception_handler(RequestProblem, _on_request_problem)
     app.add_exception_handler(RequestValidationError, _on_validation_error)
-    app.add_exception_handler(HTTPException, _on_http_exception)
+    app.add_exception_handler(HTTPException, on_http_exception)
 
 
 async def _on_domain_error(_request: Request, error: Exception) -> JSONResponse:
@@ -318,7 +318,8 @@ async def _on_validation_error(_request: Request, error: Exception) -> JSONRespo
     return response("invalid-parameter", "A parameter cannot be right; see errors.", faults)
 
 
-async def _on_http_exception(request: Request, error: Exception) -> JSONResponse:
+async def on_http_exception(request: Request, error: Exception) -> JSONResponse:
+    """The problem document of a refusal by the framework."""
     assert isinstance(error, HTTPException)
     name = {404: "not-found", 405: "method-not-allowed"}.get(error.status_code, "malformed-body")
     details = {

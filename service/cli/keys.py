@@ -54,7 +54,7 @@ def list_keys() -> None:
     from service.storage.reader import Reader
 
     with clear_failures():
-        keys = Reader(_engine()).keys()
+        keys = Reader(_existing()).keys()
     table = Table("name", "role", "created", "expires", "state", "only for")
     for key in keys:
         row = (key.name, key.role, _minute(key.created_at), _minute(key.expires_at), _state(key, utc_now()))
@@ -69,7 +69,7 @@ def revoke(name: Annotated[str, typer.Argument(help="Name of the key.")]) -> Non
     from service.ingest.road import perform_now
 
     with clear_failures():
-        perform_now(_engine(), RevokeKey(name))
+        perform_now(_existing(), RevokeKey(name))
     typer.echo(f"The key {name!r} is revoked.", err=True)
 
 
@@ -79,6 +79,14 @@ def _engine() -> "Engine":
     from service.settings import read_settings
 
     return prepared_engine(read_settings().database_url)
+
+
+def _existing() -> "Engine":
+    """The database, which must be there."""
+    from service.cli.serve import existing_engine
+    from service.settings import read_settings
+
+    return existing_engine(read_settings().database_url)
 
 
 def _limits(subjects: list[str], labels: list[str]) -> Limits:

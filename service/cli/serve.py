@@ -72,6 +72,35 @@ def bounded_connections() -> dict[str, Any]:
     return {"http": BoundedConnection}
 
 
+def existing_engine(database_url: str) -> "Engine":
+    """
+    A database that is there, for what would mean nothing on a new one.
+
+    Raises:
+        SchemaMismatch: It has another schema than this version knows.
+        typer.Exit: There is no such file.
+    """
+    from pathlib import Path
+
+    from service.storage.engine import create_engine_for
+    from service.storage.migrate import check_schema
+
+    engine = create_engine_for(database_url)
+    file = engine.url.database if engine.dialect.name == "sqlite" else None
+    if file is not None and not Path(file).exists():
+        raise fail(f"There is no database at {Path(file).absolute()}; SPRT_DATABASE_URL says which one is meant.")
+    check_schema(engine)
+    return engine
+
+
+def named(engine: "Engine") -> str:
+    """Which database that is, for people; without its password."""
+    from pathlib import Path
+
+    is_file = engine.dialect.name == "sqlite" and engine.url.database is not None
+    return str(Path(engine.url.database or "").absolute()) if is_file else engine.url.render_as_string()
+
+
 def prepared_engine(database_url: str) -> "Engine":
     """
     The database, with a brand-new SQLite file set up.
@@ -85,5 +114,6 @@ def prepared_engine(database_url: str) -> "Engine":
     engine = create_engine_for(database_url)
     if is_sqlite(engine) and is_empty(engine):
         upgrade(engine)
+        typer.echo(f"A new database: {named(engine)}", err=True)
     check_schema(engine)
     return engine

@@ -22,16 +22,17 @@ def verify(
     from rich.console import Console
     from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
 
+    from service.cli.serve import existing_engine, named
+    from service.domain.families.base import plural
     from service.settings import read_settings
     from service.storage.auditing import audited, snapshot
-    from service.storage.engine import create_engine_for
     from service.storage.migrate import check_schema
 
     columns = (TextColumn("verify"), BarColumn(), MofNCompleteColumn(), TextColumn("tests"), TimeElapsedColumn())
     differences: list[str] = []
     tests = acts = observations = 0
     with clear_failures(), Progress(*columns, console=Console(stderr=True)) as progress:
-        engine = create_engine_for(read_settings().database_url)
+        engine = existing_engine(read_settings().database_url)
         check_schema(engine)
         with snapshot(engine) as rows:
             total = len(test) if test else rows.counts().by_table["tests"]
@@ -49,4 +50,5 @@ def verify(
     if differences:
         more = ", and maybe more" if len(differences) >= MOST_TOLD else ""
         raise fail(f"The records differ in {len(differences)} of the chains looked at{more}.")
-    typer.echo(f"{tests} tests: {acts} acts and {observations} observations are as they were recorded.")
+    found = f"{plural(tests, 'test')}: {plural(acts, 'act')} and {plural(observations, 'observation')}"
+    typer.echo(f"{found} are as they were recorded in {named(engine)}.")

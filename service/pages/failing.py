@@ -41,6 +41,11 @@ def page_of_error(request: Request, error: DomainError) -> Response:
     return failure(request, status, title, str(error), faults, headers=headers)
 
 
+def page_of_nothing(request: Request) -> Response:
+    """The page at an address that leads nowhere."""
+    return failure(request, 404, *NOTHING_HERE)
+
+
 def unexpected_page(request: Request) -> Response:
     """The page about an error that nobody foresaw."""
     detail = f"The log of the service has the reason, under the request id {request_id_of(request)}."

@@ -3,6 +3,7 @@
 import threading
 from pathlib import Path
 
+import pytest
 from sqlalchemy import text
 
 from service.storage.engine import create_engine_for
@@ -29,7 +30,7 @@ def test_the_records_are_verified_while_results_come_in_and_a_difference_ends_wi
         poster.join()
         assert done.returncode == 0, done.stderr
         assert "2 tests: " in done.stdout
-        assert "are as they were recorded." in done.stdout
+        assert "are as they were recorded in /" in done.stdout
         engine = create_engine_for(service.database_url)
         with engine.begin() as connection:
             connection.execute(text("UPDATE tests SET total = 99 WHERE key = 'lot-seal'"))
@@ -40,3 +41,14 @@ def test_the_records_are_verified_while_results_come_in_and_a_difference_ends_wi
             assert wrong.stdout == ""
             assert "test lot-seal: its state is not what the log gives" in wrong.stderr
         assert command("verify", "--test", "lot-shaft", database_url=service.database_url).returncode == 0
+
+
+@pytest.mark.parametrize("arguments", [("verify",), ("keys", "list"), ("keys", "revoke", "me")])
+def test_where_there_is_no_database_nothing_is_found_sound_and_none_is_made(
+    tmp_path: Path, arguments: tuple[str, ...]
+) -> None:
+    file = tmp_path / "elsewhere.sqlite3"
+    done = command(*arguments, database_url=f"sqlite:///{file}")
+    assert done.returncode == 1
+    assert f"There is no database at {file}" in done.stderr
+    assert not file.exists()

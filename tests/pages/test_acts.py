@@ -53,6 +53,20 @@ def test_a_correction_shows_what_would_follow_and_then_changes_the_decision(
     assert "Misread lamp" in results
 
 
+def test_a_correction_that_moves_the_decision_says_so(service: Running, admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    admin.post(f"/v1/tests/{key}/observations", json={"values": [0, 1, 0, 1, 0]}).raise_for_status()
+    asked = {"what": "replace", "value": "1", "size": "", "unit": "", "reason": "Seen twice"}
+    address = f"/tests/{key}/correct?sequence=1"
+    with signed_in(service) as person:
+        looked = words(send(person, address, step="look", **asked).text)
+        assert "The decision stays, but falls with another result" in looked
+        seen = re.search(r'name="seen" value="([^"]+)"', send(person, address, step="look", **asked).text)
+        extra = {"seen": seen[1]} if seen else {}
+        assert send(person, address, step="do", version=version(admin, key), **asked, **extra).status_code == 303
+        assert "The decision falls with result 2." in words(person.get(f"/tests/{key}/history").text)
+
+
 def test_a_void_takes_a_result_out(service: Running, admin: httpx.Client, new_name: Namer) -> None:
     key = with_test(admin, new_name, PUMP)
     body = {"observations": [{"time": 10.0, "failed": True, "unit": "P-1"}, {"time": 20.5, "failed": False}]}

@@ -437,3 +437,13 @@ def test_another_family_brings_its_own_example_and_keeps_the_risks() -> None:
     assert candidate.content["h0"] == 10.0
     (same,) = candidates_of({**typed, "a.family": "bernoulli", "a.statistic": "simple"})
     assert (same.content["h0"], same.content["h1"]) == (0.3, 0.4)
+
+
+def test_a_plan_that_does_not_keep_its_risks_says_so(service: Running) -> None:
+    stated = {"a.family": "bernoulli", "a.h0": "0.02", "a.h1": "0.08", "a.alpha": "0.05", "a.beta": "0.1"}
+    with signed_in(service, "viewer") as person:
+        asked = {**stated, "a.truncation.sample_number": "10"}
+        said = words(person.get("/design", params=asked).text)
+        assert "Mind: it does not keep its stated risks;" in said
+        assert "where 10 % is stated" in said
+        assert "does not keep" not in words(person.get("/design", params=stated).text)

@@ -168,6 +168,22 @@ def test_what_is_not_there_is_answered_by_a_page_that_helps(service: Running, ad
     assert "All tests" in words(answer.text)
 
 
+def test_an_address_that_leads_nowhere_is_a_page_in_a_browser_and_a_problem_elsewhere(service: Running) -> None:
+    browser = httpx.get(f"{service.url}/nope", headers={"Accept": "text/html,*/*;q=0.8"})
+    assert browser.status_code == 404
+    assert "There is nothing here" in words(browser.text)
+    for address, accept in (("/nope", "*/*"), ("/v1/nope", "text/html")):
+        answer = httpx.get(service.url + address, headers={"Accept": accept})
+        assert (answer.status_code, answer.headers["Content-Type"]) == (404, "application/problem+json")
+
+
+def test_the_moment_of_the_decision_is_shown(service: Running, admin: httpx.Client, new_name: Namer) -> None:
+    key = with_test(admin, new_name, SEAL)
+    decided = admin.post(f"/v1/tests/{key}/observations", json={"values": [1, 1]}).json()["decided"]["at"]
+    with signed_in(service, "viewer") as person:
+        assert f"{decided[:10]} {decided[11:19]} UTC" in facts(person.get(f"/tests/{key}").text)["Decided"]
+
+
 def test_a_limited_key_sees_its_own_tests_alone(service: Running, admin: httpx.Client, new_name: Namer) -> None:
     row = new_name("row")
     inside = with_test(admin, new_name, SEAL, labels={"row": row})

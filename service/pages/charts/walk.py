@@ -125,7 +125,20 @@ def _unbounded(frame: Frame, value: float) -> float:
 def _wall(frame: Frame, progress: float) -> None:
     x = frame.x(progress)
     line(frame.inside, x, frame.y.end, x, frame.y.begin, stroke=INK, stroke_width=2)
-    add(frame.root, "text", "truncation", x=x - 6.0, y=frame.y.end + 12.0, text_anchor="end", fill=FAINT)
+    middle = (frame.y.end + frame.y.begin) / 2.0
+    turned = f"rotate(-90 {x - 6.0:.2f} {middle:.2f})"
+    halo: dict[str, Any] = {"stroke": PAPER, "stroke_width": 4, "paint_order": "stroke"}
+    add(
+        frame.root,
+        "text",
+        "truncation",
+        x=x - 6.0,
+        y=middle,
+        text_anchor="middle",
+        fill=FAINT,
+        transform=turned,
+        **halo,
+    )
 
 
 def _reach(frame: Frame, begin: tuple[float, float], reach: Reach) -> None:

@@ -18,6 +18,7 @@ from service.domain.names import NAME_PATTERN
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest, Status
+from service.domain.state import State
 from service.ingest.commands import Dispose, PostCorrection
 from service.ingest.correcting import worked_out
 from service.pages.failing import status_of
@@ -55,6 +56,7 @@ class Consequence:
     before: str
     after: str
     changes_decision: bool
+    moves_decision: bool
     version: int
     seen: str
     counts: str
@@ -165,6 +167,7 @@ def _consequence(parts: Parts, test: SequentialTest, plan: Plan, command: PostCo
         saying_of(test, plan).headline,
         saying_of(after, plan).headline,
         correction.state.decision is not test.state.decision,
+        _place(correction.state) != _place(test.state),
         test.version,
         _seen(command),
         "" if correction.replacement is None else said(procedure.family, json.loads(correction.replacement)),
@@ -178,6 +181,11 @@ def _seen(command: PostCorrection) -> str:
 def _is_agreed(form: Typed, test: SequentialTest, seen: str) -> bool:
     """Whether this is to be done, and is what the form has shown of the test as it is."""
     return form["step"] == "do" and form["version"] == str(test.version) and form["seen"] == seen
+
+
+def _place(state: State) -> int | None:
+    """The result with which the decision fell."""
+    return None if state.decided is None else state.decided.sequence
 
 
 def _correction_command(  # noqa: PLR0913 - the parts of a request

@@ -18,6 +18,8 @@ from service.pages.words import figure, percent, signed
 
 # Digits of a probability on a page.
 RISK_DIGITS = 5
+# A risk that is larger than stated by more than a hundredth of it is worth a warning.
+NEARLY = 1.01
 CSV_COLUMNS = (
     "plan",
     "parameter",
@@ -66,9 +68,21 @@ def words_of(judged: Judged) -> tuple[str, ...]:
         for number, point in enumerate(judged.ends)
     ]
     fixed = judged.curve.fixed_sample
-    if fixed is not None:
-        said.append(_beside_fixed(judged.procedure, fixed))
+    said += [*_not_kept(judged), *(() if fixed is None else (_beside_fixed(judged.procedure, fixed),))]
     return tuple(said)
+
+
+def _not_kept(judged: Judged) -> Iterator[str]:
+    """A warning where a plan does not keep the risks that it states."""
+    curve, stated = judged.curve, judged.procedure.risks
+    attained = (None, None) if curve is None else (curve.alpha, curve.beta)
+    broken = [
+        f"{name} is {percent(found, RISK_DIGITS)} where {percent(said)} is stated"
+        for name, found, said in zip("αβ", attained, stated, strict=True)
+        if found is not None and said is not None and found > said * NEARLY
+    ]
+    if broken:
+        yield f"Mind: it does not keep its stated risks; {' and '.join(broken)}. What it saves is paid for with them."
 
 
 def table_of(procedure: Procedure, content: Content) -> tuple[tuple[str, ...], tuple[tuple[str, ...], ...]]:

@@ -17,7 +17,7 @@ from service.domain.plan import Plan
 from service.domain.procedure import Procedure, lines_of, procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.domain.standards import source_of
-from service.domain.state import Decision
+from service.domain.state import Decision, State
 from service.pages.charts.walk import walk_drawing
 from service.pages.views.one_test import Facts, facts_of, promises_of
 from service.pages.views.picture import picture_of, views_of
@@ -295,10 +295,15 @@ def _corrections(reader: Reader, test: SequentialTest, plan: Plan, made: Sequenc
                 "voided" if each.replacement is None else said(family, json.loads(each.replacement)),
                 each.reason,
                 f"{moment(each.received_at)} by {each.actor}",
-                "unchanged" if before == after else f"{before} → {after}",
+                (after if before == after else f"{before} → {after}") + _since(each.state),
             )
         )
     return Table(("Result", "posted", "counts now", "reason", "made", "decision"), tuple(rows))
+
+
+def _since(state: State) -> str:
+    """With which result a decision falls from a correction on."""
+    return "" if state.decided is None else f", with result {state.decided.sequence}"
 
 
 def _corrections_note(count: int) -> str:

@@ -138,6 +138,8 @@ def _words(entry: Entry) -> Iterator[str]:
     elif entry.act is Act.CORRECTED:
         yield f"Result {details['sequence']} {'voided' if details['observation'] is None else 'replaced'}:"
         yield _said(details["reason"])
+        if details["state"]["decided"] is not None:
+            yield f"The decision falls with result {details['state']['decided']['sequence']}."
     elif entry.act is Act.DISPOSED:
         yield f"{DONE[Verdict(details['disposition'])].capitalize()}:"
         yield _said(details["reason"])
