@@ -218,3 +218,11 @@ def test_evidence_without_a_model_has_a_bound(values: list[float], decision: str
     assert meanings_of(document, 0.95).keys() == {"p_value", "overrun"}
     assert meanings_of(document, 0.95)["p_value"].startswith("A bound")
     assert state.total != Sum()
+
+
+@pytest.mark.parametrize("sign", [1.0, -1.0])
+def test_an_end_further_out_than_means_are_looked_for_is_refused(sign: float) -> None:
+    """Measurements near 240 with a spread of 0.2 against a reference of 0, which nobody meant."""
+    plan = {**SHIM, "h0": 0.0, "h1": 0.5 * sign, "known": {"reference": 0.0}}
+    with pytest.raises(ComputationTooLarge, match="100 standard deviations from the mean to the reference"):
+        after(plan, of_values([sign * value for value in (240.1, 239.9, 240.2, 240.0, 239.8, 240.1, 240.0, 239.9)]))

@@ -40,6 +40,8 @@ MOST_LOOKS = 20_000
 WORK, FEWEST, MOST, MOST_FAR = 10_000_000, 1_000, 20_000, 4_000
 # Courses that look for the middle, how far from it their share above may be, and how often they look.
 PILOTS, MIDDLE, MOST_PILOTS = 400, 0.2, 60
+# Fewer on one side of the end, under the largest mean, say nothing of where the middle is.
+FEW = 0.05
 # Limits lie about so many units from the middle; weights beyond this mean are dear.
 REACH, FAR = 3.0, 10.0
 # Looks taken at once.
@@ -108,7 +110,8 @@ def studied(end: StudiedEnd, null: float, tail: float, seed: int) -> Studied:
         seed: Not below 0; the same gives the same figures.
 
     Raises:
-        TooMuchWork: The test, or one that goes on from where this one was accepted, sees too many looks.
+        TooMuchWork: The test, or one that goes on from where this one was accepted, sees too many looks; or its
+            middle lies further out than means are looked for.
     """
     if end.looks > MOST_LOOKS:
         raise TooMuchWork(MOST_LOOKS, "looks")
@@ -326,7 +329,12 @@ def _weighed(courses: _Courses, seed: int) -> "_Weighed":
 
 
 def _middle(courses: _Courses, seed: int) -> tuple[float, float]:
-    """A mean under which about half of the ends lie further up, and how many looks a course takes there."""
+    """
+    A mean under which about half of the ends lie further up, and how many looks a course takes there.
+
+    Raises:
+        TooMuchWork: It lies further out than means are looked for; courses would have no weight where it is.
+    """
     estimate = courses.end.place * math.sqrt(courses.freedom / courses.size)
     at = min(max(estimate, -LARGEST_DELTA), LARGEST_DELTA)
     low, high, step = -LARGEST_DELTA, LARGEST_DELTA, _unit(at, courses.size)
@@ -345,6 +353,8 @@ def _middle(courses: _Courses, seed: int) -> tuple[float, float]:
         if following == at:
             break
         at, step = following, 2.0 * step
+    if abs(at) >= LARGEST_DELTA and abs(share - 0.5) > 0.5 - FEW:
+        raise TooMuchWork(round(LARGEST_DELTA), "standard deviations from the mean to the reference")
     return at, float(np.mean(ends.looks))
 
 
