@@ -57,7 +57,12 @@ def page(
     **values: Any,  # noqa: ANN401
 ) -> Response:
     """An answer that is a page."""
-    policy = {"Content-Security-Policy": POLICY, "Referrer-Policy": "same-origin", **(headers or {})}
+    policy = {
+        "Content-Security-Policy": POLICY,
+        "Referrer-Policy": "same-origin",
+        "Cache-Control": "private, no-store",
+        **(headers or {}),
+    }
     return HTMLResponse(rendered(request, template, **values), status, policy)
 
 

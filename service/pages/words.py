@@ -50,7 +50,7 @@ def signed(value: float | None, digits: int = DIGITS) -> str:
 
 def percent(value: float | None, digits: int = 3) -> str:
     """A probability in per cent."""
-    return "–" if value is None else f"{figure(value * 100.0, digits)}\u00a0%"
+    return "–" if value is None else f"{figure(value * 100.0, digits)} %"
 
 
 def moment(at: datetime | None) -> Markup:

@@ -62,7 +62,7 @@ def test_a_correction_that_moves_the_decision_says_so(service: Running, admin: h
         looked = words(send(person, address, step="look", **asked).text)
         assert "The decision stays, but falls with another result" in looked
         seen = re.search(r'name="seen" value="([^"]+)"', send(person, address, step="look", **asked).text)
-        extra = {"seen": seen[1]} if seen else {}
+        extra = {"seen": unescape(seen[1])} if seen else {}
         assert send(person, address, step="do", version=version(admin, key), **asked, **extra).status_code == 303
         assert "The decision falls with result 2." in words(person.get(f"/tests/{key}/history").text)
 

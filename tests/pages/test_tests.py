@@ -172,9 +172,10 @@ def test_an_address_that_leads_nowhere_is_a_page_in_a_browser_and_a_problem_else
     browser = httpx.get(f"{service.url}/nope", headers={"Accept": "text/html,*/*;q=0.8"})
     assert browser.status_code == 404
     assert "There is nothing here" in words(browser.text)
-    for address, accept in (("/nope", "*/*"), ("/v1/nope", "text/html")):
-        answer = httpx.get(service.url + address, headers={"Accept": accept})
-        assert (answer.status_code, answer.headers["Content-Type"]) == (404, "application/problem+json")
+    with service.client("viewer") as program:
+        for address, accept in (("/nope", "*/*"), ("/v1/nope", "text/html")):
+            answer = program.get(address, headers={"Accept": accept})
+            assert (answer.status_code, answer.headers["Content-Type"]) == (404, "application/problem+json")
 
 
 def test_the_moment_of_the_decision_is_shown(service: Running, admin: httpx.Client, new_name: Namer) -> None:
@@ -229,7 +230,7 @@ def test_all_tests_of_one_subject_are_shown_together(service: Running, admin: ht
     admin.post(f"/v1/tests/{keys[1]}/observations", json={"values": [1, 1]}).raise_for_status()
     with signed_in(service, "viewer") as person:
         said = words(person.get(f"/tests/{keys[0]}").text)
-    assert "All 2 tests of this lot together: reject Reject" in said
+    assert "All 2 tests of this lot your key sees, together: reject Reject" in said
     joint = admin.get(f"/v1/subjects/lot/{subject['name']}").json()
     assert f"{to_digits(joint['producers_risk']['if_independent'] * 100, 4)} % if the tests are independent" in said
 

@@ -1,27 +1,29 @@
 """One test: where it stands, its picture, its results and what happened to it."""
 
+import asyncio
 from typing import Annotated
 
 from fastapi import Path, Query, Request, Response
 
 from service.domain.access import Role
 from service.domain.anytime import confidence_at
-from service.domain.errors import ComputationTooLarge
+from service.domain.errors import ComputationTooLarge, TooManyQuestions
 from service.domain.names import NAME_PATTERN
+from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
-from service.domain.sequential_test import Status
+from service.domain.sequential_test import SequentialTest, Status
 from service.pages.charts.svg import markup
 from service.pages.charts.walk import walk_drawing
 from service.pages.rendering import page
 from service.pages.routing import page_router
 from service.pages.session import SignedIn
-from service.pages.views.one_test import expectation_of, facts_of, others_of, promises_of
+from service.pages.views.one_test import Expectation, expectation_of, facts_of, others_of, promises_of
 from service.pages.views.picture import View, picture_of, views_of
 from service.pages.views.results import results_of
 from service.pages.views.saying import saying_of
 from service.pages.views.telling import acts_of, assumptions_for, figures_of, inference_for
 from service.web.lookup import known_test
-from service.web.parts import PartsOf, computing, reading
+from service.web.parts import Parts, PartsOf, computing, reading
 
 router = page_router()
 
@@ -31,6 +33,8 @@ Number = Query(ge=0, lt=2**53)
 
 # Levels of confidence to choose from.
 LEVELS = (0.8, 0.9, 0.95, 0.99)
+# How long a page waits for what it can do without.
+PATIENCE_SECONDS = 3.0
 # Points of a drawing: more than its pixels would show nothing new.
 POINTS = 1600
 
@@ -44,7 +48,7 @@ async def show_test(
     procedure = procedure_of(plan)
     views = views_of(procedure)
     chosen = View(view) if view in views else views[0]
-    path = await computing(parts, lambda: parts.walks.path_of(parts.reader, test, plan, POINTS))
+    path = await reading(lambda: parts.walks.path_of(parts.reader, test, plan, POINTS))
     drawing = walk_drawing(picture_of(test, plan, path, chosen))
     return page(
         request,
@@ -59,8 +63,17 @@ async def show_test(
         facts=facts_of(test, plan),
         promises=promises_of(plan),
         axis=procedure.family.axis,
-        expectation=await computing(parts, lambda: expectation_of(test, plan)),
+        expectation=await _expected_soon(parts, test, plan),
     )
+
+
+async def _expected_soon(parts: Parts, test: SequentialTest, plan: Plan) -> Expectation:
+    """What is to be expected, if it is known soon: the decision and the picture wait for nobody's questions."""
+    try:
+        async with asyncio.timeout(PATIENCE_SECONDS):
+            return await computing(parts, lambda: expectation_of(test, plan))
+    except (TimeoutError, TooManyQuestions):
+        return Expectation(None, "This takes longer to compute just now; load the page again in a moment.")
 
 
 @router.get("/tests/{key}/results")

@@ -20,15 +20,18 @@ function showTimes(root) {
 
 // Puts the live parts of a fresh page in the place of those shown; what somebody is typing in stays.
 function exchange(fresh) {
+  let found = false;
   for (const part of document.querySelectorAll("[data-live]")) {
     const next = fresh.getElementById(part.id);
     if (!next) continue;
+    found = true;
     showTimes(next);
     if (next.innerHTML === part.innerHTML || part.contains(document.activeElement) && part.querySelector("form :focus")) continue;
     const focused = part.contains(document.activeElement) ? document.activeElement.getAttribute("href") : null;
     part.replaceChildren(...next.childNodes);
     if (focused) part.querySelector(`a[href="${CSS.escape(focused)}"]`)?.focus();
   }
+  return found;
 }
 
 // Fields that stay say whether what they hold is right.
@@ -57,7 +60,7 @@ async function fetched(address) {
 async function lookAgain() {
   try {
     const fresh = await fetched(location.href);
-    if (fresh) exchange(fresh);
+    if (fresh && !exchange(fresh)) say(`Out of date: ${fresh.querySelector("h1")?.textContent ?? "the service gave no page"}.`);
   } catch (error) {
     if (error.name !== "AbortError") say("The service cannot be reached; this page may be out of date.");
   }

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from service.domain.characteristics import Fixed, Spread
+from service.domain.names import is_name
 from service.domain.plan import Content
 from service.domain.procedure import Procedure, lines_of
 from service.domain.tables import FIELDS
@@ -102,7 +103,14 @@ def csv_of(judged: Sequence[Judged]) -> str:
     for each in judged:
         for point in () if each.curve is None else each.curve.points:
             spreads = (*_cells(point.sample_number), *_cells(point.exposure))
-            writer.writerow((each.title, repr(point.parameter), repr(point.probability_of_acceptance), *spreads))
+            writer.writerow(
+                (
+                    each.title if is_name(each.title) else each.letter,
+                    repr(point.parameter),
+                    repr(point.probability_of_acceptance),
+                    *spreads,
+                )
+            )
     return text.getvalue()
 
 

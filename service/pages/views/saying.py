@@ -13,6 +13,8 @@ from service.domain.state import Cause, Decision
 from service.pages.words import DONE, SAID, figure
 
 # A number of things, such as "21 conforming units".
+# A hyphen before a number.
+_MINUS = re.compile(r"(?<![\w.])-(?=\d)")
 _THINGS = re.compile(r"\d+ [a-z]+( [a-z]+)?")
 
 # What is one of several.
@@ -69,7 +71,7 @@ def still_needed(ways: Ways, what: str) -> str:
 
 def _more(words: str) -> str:
     """A way as what comes on top of what there is: plain numbers of things are so many more of them."""
-    return f"{words} more" if _THINGS.fullmatch(words) else f"{words},"
+    return f"{words} more" if _THINGS.fullmatch(words) else f"{_MINUS.sub('−', words)},"
 
 
 def _decided(procedure: Procedure, test: SequentialTest, verb: str) -> str:
