@@ -35,9 +35,9 @@ def test_any_split_of_a_sum_gives_the_same_bits(terms: list[float], data: st.Dat
     assert rest.low.tolist() == whole.low[at:].tolist()
 
 
-def test_a_million_terms_that_nearly_cancel_lose_nothing() -> None:
+def test_many_terms_that_nearly_cancel_lose_nothing() -> None:
     source = random.Random(7)
-    terms = [source.uniform(-1e9, 1e9) + 1e-7 * source.random() for _ in range(500_000)]
+    terms = [source.uniform(-1e9, 1e9) + 1e-7 * source.random() for _ in range(100_000)]
     terms += [-t * (1 + 1e-15 * source.random()) for t in terms]
     source.shuffle(terms)
     exact = sum(map(Fraction, terms), Fraction(0))
