@@ -1,6 +1,5 @@
 """Inference: what may be said once a test is decided."""
 
-import json
 from typing import Annotated
 
 from fastapi import APIRouter, Query, Request, Response
@@ -14,9 +13,9 @@ from service.api.schemas.inference import InferenceOut
 from service.api.unchanged import unchanged_test
 from service.domain.access import Role
 from service.domain.errors import NotDecided
-from service.domain.inference import inference_of
 from service.domain.plan import Plan
 from service.domain.sequential_test import SequentialTest
+from service.web.asking import inference_for
 from service.web.lookup import known_test
 from service.web.parts import Parts, PartsOf, computing
 
@@ -55,6 +54,4 @@ async def show_inference(
 
 
 def _inference(parts: Parts, test: SequentialTest, plan: Plan, level: float) -> InferenceOut:
-    bodies = parts.reader.log.bodies(test, 0, test.state.sequence)
-    documents = ((first, json.loads(body)) for first, body in bodies)
-    return InferenceOut.of(inference_of(plan.document, test.state, documents, level), plan, test.state)
+    return InferenceOut.of(inference_for(parts.reader, test, plan, level), plan, test.state)

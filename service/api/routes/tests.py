@@ -16,7 +16,6 @@ from service.api.schemas.outlook import OutlookOut
 from service.api.schemas.tests import TestForm, TestOut, TestsOut
 from service.api.unchanged import unchanged_test
 from service.domain.access import AccessKey, Role
-from service.domain.assumptions import assumptions_of, stretch_of
 from service.domain.disposing import Verdict
 from service.domain.outlook import outlook_of
 from service.domain.plan import Plan
@@ -24,6 +23,7 @@ from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.ingest.commands import RegisteredTest, RegisterTest
 from service.storage.reader import TestFilters
+from service.web.asking import assumptions_for
 from service.web.fields import Moment
 from service.web.lookup import known_test
 from service.web.parts import Parts, PartsOf, computing, reading
@@ -139,10 +139,8 @@ async def show_assumptions(key: str, request: Request, response: Response, parts
 
 
 def _assumptions(parts: Parts, test: SequentialTest, plan: Plan) -> AssumptionsOut:
-    procedure = procedure_of(plan)
-    stretch = stretch_of(test.state)
-    bodies = parts.reader.log.bodies(test, stretch.first - 1, stretch.last)
-    return AssumptionsOut.of(assumptions_of(procedure, test.state, bodies), procedure.family.name, test)
+    found = assumptions_for(parts.reader, test, plan)
+    return AssumptionsOut.of(found, procedure_of(plan).family.name, test)
 
 
 def _page(parts: Parts, filters: TestFilters, after: str | None, limit: int) -> tuple[list[TestOut], str | None]:

@@ -13,7 +13,7 @@ from service.domain.access import Role
 from service.domain.chain import json_of
 from service.domain.correcting import Correction
 from service.domain.disposing import FOLLOWS, Verdict
-from service.domain.errors import ChangesNothing, Conflict, Fault, Invalid, InvalidCorrection, VersionMoved
+from service.domain.errors import Conflict, Fault, Invalid, InvalidCorrection, VersionMoved
 from service.domain.names import NAME_PATTERN
 from service.domain.plan import Plan
 from service.domain.procedure import procedure_of
@@ -85,15 +85,11 @@ async def correct(request: Request, key: Key, session: SignedIn, parts: PartsOf,
         return _correction_page(request, test, plan, sequence, form, status=422)
     try:
         command = _correction_command(request, session, test, plan, sequence, form, reason)
-    except InvalidCorrection as error:
-        return _correction_page(request, test, plan, sequence, _told(form, error), status=422)
-    if not _is_agreed(form, test, _seen(command)):
-        return await _looked_at(request, parts, test, plan, form, command)
-    try:
+        if not _is_agreed(form, test, _seen(command)):
+            consequence = await computing(parts, lambda: _consequence(parts, test, plan, command))
+            return _correction_page(request, test, plan, sequence, form, consequence=consequence)
         await parts.road.submit(command)
-    except Invalid as error:
-        return _correction_page(request, test, plan, sequence, _told(form, error), status=422)
-    except (Conflict, VersionMoved) as error:
+    except (Invalid, Conflict, VersionMoved) as error:
         return _correction_page(request, test, plan, sequence, _told(form, error), status=status_of(error)[0])
     return RedirectResponse(f"/tests/{key}/results?after={max(0, sequence - 10)}#result-{sequence}", 303)
 
@@ -142,20 +138,6 @@ async def dispose(request: Request, key: Key, session: SignedIn, parts: PartsOf)
     except (Invalid, Conflict, VersionMoved) as error:
         return _disposition_page(request, test, plan, _told(form, error), status=status_of(error)[0])
     return RedirectResponse(f"/tests/{key}", 303)
-
-
-async def _looked_at(  # noqa: PLR0913 - the parts of a request
-    request: Request, parts: Parts, test: SequentialTest, plan: Plan, form: Typed, command: PostCorrection
-) -> Response:
-    """The page that says what a correction would come to."""
-    sequence = command.observation
-    try:
-        consequence = await computing(parts, lambda: _consequence(parts, test, plan, command))
-    except InvalidCorrection as error:
-        return _correction_page(request, test, plan, sequence, _told(form, error), status=422)
-    except ChangesNothing as error:
-        return _correction_page(request, test, plan, sequence, _told(form, error), status=409)
-    return _correction_page(request, test, plan, sequence, form, consequence=consequence)
 
 
 def _consequence(parts: Parts, test: SequentialTest, plan: Plan, command: PostCorrection) -> Consequence:

@@ -21,7 +21,8 @@ from service.pages.views.one_test import Expectation, expectation_of, facts_of, 
 from service.pages.views.picture import View, picture_of, views_of
 from service.pages.views.results import results_of
 from service.pages.views.saying import saying_of
-from service.pages.views.telling import acts_of, assumptions_for, figures_of, inference_for
+from service.pages.views.telling import acts_of, figures_of
+from service.web.asking import assumptions_for, inference_for
 from service.web.lookup import known_test
 from service.web.parts import Parts, PartsOf, computing, reading
 

@@ -23,9 +23,10 @@ from service.pages.views.one_test import Facts, facts_of, promises_of
 from service.pages.views.picture import picture_of, views_of
 from service.pages.views.results import Result, columns_of, result_of, said
 from service.pages.views.saying import decision_said
-from service.pages.views.telling import Figure, assumptions_for, figures_of, inference_for
+from service.pages.views.telling import Figure, figures_of
 from service.pages.words import DONE, figure, percent
 from service.storage.reader import Reader
+from service.web.asking import assumptions_for, inference_for
 from service.web.walks import Walks
 
 # Results that are all set; of more, so many of the first and of the last.

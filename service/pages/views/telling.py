@@ -1,19 +1,16 @@
 """What may be said after the decision, and what happened, in words."""
 
-import json
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import datetime
 from itertools import islice
 from typing import Any
 
-from service.domain.assumptions import Assumptions, assumptions_of, stretch_of
 from service.domain.chain import Act, Entry
 from service.domain.disposing import Verdict
-from service.domain.inference import inference_of, meanings_of
+from service.domain.inference import meanings_of
 from service.domain.inferred import Inference, Kind
 from service.domain.plan import Plan
-from service.domain.procedure import procedure_of
 from service.domain.sequential_test import SequentialTest
 from service.domain.state import Decision
 from service.pages.words import DONE, SAID, figure, percent
@@ -60,24 +57,6 @@ class ToldAct:
     words: str
     link: str
     is_migrated: bool
-
-
-def inference_for(reader: Reader, test: SequentialTest, plan: Plan, level: float) -> Inference:
-    """
-    The inference of a decided test.
-
-    Raises:
-        ComputationTooLarge: As `domain.inference.inference_of`.
-    """
-    bodies = reader.log.bodies(test, 0, test.state.sequence)
-    return inference_of(plan.document, test.state, ((first, json.loads(body)) for first, body in bodies), level)
-
-
-def assumptions_for(reader: Reader, test: SequentialTest, plan: Plan) -> Assumptions:
-    """The checks of a test's results."""
-    stretch = stretch_of(test.state)
-    bodies = reader.log.bodies(test, stretch.first - 1, stretch.last)
-    return assumptions_of(procedure_of(plan), test.state, bodies)
 
 
 def figures_of(found: Inference, plan: Plan) -> tuple[Figure, ...]:
